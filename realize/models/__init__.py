@@ -1,0 +1,33 @@
+"""The kinds of models, one file a kind."""
+
+from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Signal, TimeBase
+from realize.models.digest import digest, mark
+from realize.models.frequency_response import FrequencyResponse
+from realize.models.pole_residue import PoleResidue
+from realize.models.sections import Sections
+from realize.models.state_space import StateSpace
+from realize.models.transfer_function import TransferFunction
+from realize.models.zero_pole_gain import ZeroPoleGain
+
+MODEL_TYPES: dict[str, type[Model]] = {
+    model.kind: model
+    for model in (TransferFunction, ZeroPoleGain, PoleResidue, Sections, StateSpace, FrequencyResponse)
+}
+
+__all__ = [
+    "CONTINUOUS",
+    "MODEL_TYPES",
+    "DeadTime",
+    "FrequencyResponse",
+    "Model",
+    "Offset",
+    "PoleResidue",
+    "Sections",
+    "Signal",
+    "StateSpace",
+    "TimeBase",
+    "TransferFunction",
+    "ZeroPoleGain",
+    "digest",
+    "mark",
+]

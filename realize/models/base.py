@@ -1,0 +1,286 @@
+"""What every model has: signals, time base, dead time, operating point, exact decimals, receipts."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from fractions import Fraction
+from typing import Any, ClassVar, Self
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from realize.errors import InputError
+from realize.models import checks
+from realize.schema import KINDS, Receipt
+
+Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+Index = tuple[int, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Signal:
+    """Name and unit of an input, output or state; both may be empty."""
+
+    name: str = ""
+    unit: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class TimeBase:
+    """Continuous time, or sampled with a period in seconds.
+
+    A period or rate given as a decimal string stays exact.
+
+    Parameters
+    ----------
+    domain : str
+        "continuous" or "sampled".
+    period : float or str, optional
+        Sampling period, s.
+    rate : float or str, optional
+        Sampling rate, Hz; instead of the period.
+    """
+
+    domain: str = "continuous"
+    period: float | str | None = None
+    rate: float | str | None = None
+
+    def __post_init__(self) -> None:
+        given = [name for name in ("period", "rate") if getattr(self, name) is not None]
+        if self.domain == "continuous":
+            if given:
+                raise InputError(f"a {given[0]} with domain continuous", "domain sampled", field=f"time.{given[0]}")
+            return
+        if self.domain != "sampled":
+            raise InputError(f"domain {self.domain!r}", '"continuous" or "sampled"', field="time.domain")
+        if len(given) != 1:
+            found = "both period and rate" if given else "neither period nor rate"
+            raise InputError(found, "one of period (seconds) and rate (Hz)", field="time")
+        name = given[0]
+        value = checks.rational(getattr(self, name), f"time.{name}")
+        if value <= 0:
+            raise InputError(f"{getattr(self, name)}", "a number greater than zero", field=f"time.{name}")
+        if checks.nearest_double(1 / value) in (0.0, float("inf")) or checks.nearest_double(value) in (0.0, float("inf")):
+            raise InputError(f"{getattr(self, name)}", "a number whose inverse is a double too", field=f"time.{name}")
+
+    @property
+    def sampled(self) -> bool:
+        """True for sampled time."""
+        return self.domain == "sampled"
+
+    @property
+    def exact_period(self) -> Fraction:
+        """Sampling period in seconds as an exact fraction."""
+        if self.period is not None:
+            return checks.rational(self.period, "time.period")
+        if self.rate is not None:
+            return 1 / checks.rational(self.rate, "time.rate")
+        raise ValueError("continuous time has no period")
+
+    @property
+    def seconds(self) -> float:
+        """Sampling period in seconds, the nearest double."""
+        return checks.nearest_double(self.exact_period)
+
+    def points(self, frequency: ArrayLike) -> ComplexArray:
+        """Return s = jw, or z = exp(jwT), for angular frequencies in rad/s."""
+        w = np.asarray(frequency, dtype=float)
+        if not self.sampled:
+            return 1j * w
+        return np.exp(1j * w * self.seconds)
+
+
+CONTINUOUS = TimeBase()
+
+
+@dataclass(frozen=True, slots=True)
+class DeadTime:
+    """Dead times in seconds: at the inputs [m], at the outputs [p], and in the channels [p][m]; they add up."""
+
+    inputs: tuple[float, ...]
+    outputs: tuple[float, ...]
+    channels: tuple[tuple[float, ...], ...]
+
+    @property
+    def total(self) -> Array:
+        """Dead time of each channel, [outputs][inputs], s."""
+        return np.array(self.channels, dtype=float).reshape(len(self.outputs), len(self.inputs)) + np.add.outer(
+            np.array(self.outputs, dtype=float), np.array(self.inputs, dtype=float)
+        )
+
+
+@dataclass(frozen=True, slots=True)
+class Offset:
+    """Operating point: values that the model's signals are deviations from; None where not given."""
+
+    inputs: tuple[float, ...] | None = None
+    outputs: tuple[float, ...] | None = None
+    states: tuple[float, ...] | None = None
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class Model:
+    """Base of every kind of model: frozen, validated, with read-only arrays.
+
+    Parameters
+    ----------
+    time : TimeBase
+    inputs, outputs : sequence of Signal
+        Names and units; empty means unnamed.
+    dead_time : DeadTime, optional
+    offset : Offset, optional
+    receipts : sequence of Receipt
+        The steps that led here, oldest first.
+    decimals : mapping of field name to {index: decimal string}
+        Numbers that are given as exact decimals; the float arrays hold their nearest doubles.
+    """
+
+    kind: ClassVar[str]
+
+    time: TimeBase = CONTINUOUS
+    inputs: tuple[Signal, ...] = ()
+    outputs: tuple[Signal, ...] = ()
+    dead_time: DeadTime | None = None
+    offset: Offset | None = None
+    receipts: tuple[Receipt, ...] = ()
+    decimals: Mapping[str, Mapping[Index, str]] = field(default_factory=dict)
+
+    def __post_init__(self) -> None:
+        self._normalise()
+        p, m = self.shape
+        put = self._put
+        put("inputs", checks.signals(self.inputs, m, "inputs", Signal))
+        put("outputs", checks.signals(self.outputs, p, "outputs", Signal))
+        put("receipts", tuple(self.receipts))
+        put("decimals", {name: dict(rows) for name, rows in self.decimals.items() if rows})
+        if self.dead_time is not None:
+            put("dead_time", self._checked_dead_time(self.dead_time, p, m))
+        if self.offset is not None:
+            sizes = {"inputs": m, "outputs": p, "states": self.state_count}
+            for name, size in sizes.items():
+                values = getattr(self.offset, name)
+                if values is not None and len(values) != size:
+                    raise InputError(f"{len(values)} values", f"{size}, one for each", field=f"offset.{name}")
+
+    def _checked_dead_time(self, dead: DeadTime, p: int, m: int) -> DeadTime | None:
+        shapes = {"inputs": (m,), "outputs": (p,), "channels": (p, m)}
+        for name, shape in shapes.items():
+            values = np.array(getattr(dead, name), dtype=float)
+            if values.shape != shape:
+                raise InputError(f"shape {list(values.shape)}", f"shape {list(shape)}", field=f"dead_time.{name}")
+            bad = np.argwhere(~(np.isfinite(values) & (values >= 0)))
+            if bad.size:
+                index = "".join(f"[{i}]" for i in bad[0])
+                raise InputError(
+                    f"{values[tuple(bad[0])]}", "a finite number of seconds, not negative", field=f"dead_time.{name}{index}"
+                )
+        if self.time.sampled:
+            ratio = dead.total / self.time.seconds
+            whole = np.rint(ratio)
+            bad = np.argwhere(np.abs(ratio - whole) > 8 * np.finfo(float).eps * np.maximum(whole, 1))
+            if bad.size:
+                i, j = bad[0]
+                raise InputError(
+                    f"{dead.total[i, j]} s from input {j} to output {i}",
+                    f"a multiple of the sampling period {self.time.seconds} s",
+                    field="dead_time",
+                )
+        return dead if np.any(dead.total) else None
+
+    def _put(self, name: str, value: Any) -> None:
+        object.__setattr__(self, name, value)
+
+    def _normalise(self) -> None:
+        """Turn the kind's own fields into checked read-only arrays."""
+        raise NotImplementedError
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        """(number of outputs, number of inputs)."""
+        raise NotImplementedError
+
+    @property
+    def order(self) -> int | None:
+        """Number of poles or states as given, infinite ones included; None for data."""
+        raise NotImplementedError
+
+    @property
+    def state_count(self) -> int:
+        """Number of states that an operating point may list."""
+        return 0
+
+    def rational_part(self, points: ComplexArray) -> ComplexArray:
+        """Return the rational part at complex points [k]: array [k][outputs][inputs], without dead time."""
+        raise NotImplementedError
+
+    def evaluate(self, s: ArrayLike) -> ComplexArray:
+        """Return the response at complex points, dead time included.
+
+        Parameters
+        ----------
+        s : array_like of complex, any shape
+            Points of the Laplace variable (rad/s); of z for a sampled model.
+
+        Returns
+        -------
+        ndarray of complex, shape of ``s`` + (outputs, inputs)
+            Infinite where a point is exactly a pole.
+        """
+        points = np.asarray(s, dtype=complex)
+        flat = points.reshape(-1)
+        values = self.rational_part(flat)
+        if self.dead_time is not None:
+            total = self.dead_time.total
+            if self.time.sampled:
+                values = values * flat[:, None, None] ** -np.rint(total / self.time.seconds)
+            else:
+                values = values * np.exp(-flat[:, None, None] * total)
+        return values.reshape(points.shape + self.shape)
+
+    def parameters(self) -> dict[str, Any]:
+        """Return the kind's own fields by name, in the order of the schema, None for those not given."""
+        return {f.name: getattr(self, f.name) for f in KINDS[self.kind].fields}
+
+    def exact(self, name: str) -> Any:
+        """Return the numbers of a field as nested lists of integer ratios (numerator, denominator).
+
+        Decimals count as typed, doubles as the binary fractions they are; a complex number is a pair of ratios.
+        """
+        return checks.exact_tree(getattr(self, name), self.decimals.get(name, {}))
+
+    @property
+    def beyond_doubles(self) -> list[str]:
+        """Places of exact decimals whose nearest double is infinite, or zero although they are not."""
+        places = []
+        for name, rows in self.decimals.items():
+            for index, text in rows.items():
+                value = checks.rational(text, name)
+                if not np.isfinite(checks.nearest_double(value)) or (value != 0 and checks.nearest_double(value) == 0.0):
+                    places.append(name + "".join(f"[{i}]" for i in index))
+        return places
+
+    def with_(self, **changes: Any) -> Self:
+        """Return a copy with some fields changed."""
+        return replace(self, **changes)
+
+    def common(self) -> dict[str, Any]:
+        """Return what travels unchanged through every step: signals, time, dead time, operating point of the signals."""
+        offset = self.offset
+        if offset is not None and offset.states is not None:
+            offset = Offset(offset.inputs, offset.outputs)
+        return {
+            "time": self.time,
+            "inputs": self.inputs,
+            "outputs": self.outputs,
+            "dead_time": self.dead_time,
+            "offset": offset,
+            "receipts": self.receipts,
+        }
+
+    def __repr__(self) -> str:
+        p, m = self.shape
+        order = "" if self.order is None else f", order {self.order}"
+        time = f", period {self.time.seconds:g} s" if self.time.sampled else ""
+        return f"<{self.kind}: {m} in, {p} out{order}{time}>"

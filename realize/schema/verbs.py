@@ -1,0 +1,155 @@
+"""Every verb, its inputs, its options and their spellings.
+
+The command line is built from this table, the Python functions take the same names, and tests compare both with it.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from realize.schema.kinds import PARAMETRIC_KINDS
+
+FORMS = ("cascade", "modal", "controllable-companion", "observable-companion")
+REDUCTION_METHODS = ("balanced-truncation", "auto")
+FIT_METHODS = ("vector-fitting", "auto")
+ARITHMETICS = ("exact", "auto", "double")
+
+
+@dataclass(frozen=True, slots=True)
+class Option:
+    """One option of a verb.
+
+    ``takes`` is what the value is: ``flag``, ``choice``, ``text``, ``number``, ``integer``, ``error`` (0.01 or 1%),
+    ``band`` (LOW,HIGH with unit suffixes), ``order`` (N, A..B or auto), ``time`` (seconds), ``columns`` (LIST),
+    ``path``, ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
+    """
+
+    name: str
+    takes: str
+    says: str
+    choices: tuple[str, ...] = ()
+    default: str | float | bool | None = None
+    metavar: str = ""
+
+    @property
+    def keyword(self) -> str:
+        """The name as a Python keyword."""
+        return self.name.replace("-", "_")
+
+
+@dataclass(frozen=True, slots=True)
+class Verb:
+    """One verb: what it does, what its arguments are called (a trailing ``...`` takes several), and its options."""
+
+    name: str
+    says: str
+    arguments: tuple[str, ...]
+    options: tuple[Option, ...]
+    #: True where the verb writes a model to ``-o OUTPUT``.
+    makes_model: bool = True
+    #: True where the verb produces a receipt, so that limits and second opinions apply.
+    makes_receipt: bool = True
+
+
+TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS, metavar="KIND")
+BAND = Option("band", "band", "use only these frequencies (120Hz, 2.4kHz, plain numbers are rad/s)", metavar="LOW,HIGH")
+COLUMNS = Option(
+    "columns",
+    "columns",
+    "names of the columns of a table without a header, such as frequency_hz,real,imaginary",
+    metavar="LIST",
+)
+
+VERBS: dict[str, Verb] = {
+    verb.name: verb
+    for verb in (
+        Verb(
+            "fit",
+            "Turn a measured frequency response into a model.",
+            ("DATA",),
+            (
+                Option("to", "choice", "kind of the result", PARAMETRIC_KINDS, "state-space", "KIND"),
+                Option("order", "order", "number of poles: N, a range A..B, or auto", default="auto", metavar="N|A..B|auto"),
+                Option("method", "choice", "method", FIT_METHODS, "auto"),
+                Option("dead-time", "time", "known dead time of every channel, seconds", metavar="X"),
+                BAND,
+                COLUMNS,
+            ),
+        ),
+        Verb(
+            "convert",
+            "Write the same model as another kind, or in other coordinates.",
+            ("MODEL",),
+            (
+                TO_KIND,
+                Option("form", "choice", "coordinates of a state-space result", FORMS),
+                Option("common-denominator", "flag", "one denominator for all channels of a transfer function"),
+                Option("explain", "flag", "print the route and why, and stop"),
+            ),
+        ),
+        Verb(
+            "reduce",
+            "Find a smaller model, with the error known.",
+            ("MODEL",),
+            (
+                Option("order", "integer", "number of states of the result", metavar="N"),
+                Option("error", "error", "largest error, relative to the largest gain (0.01 or 1%)", metavar="X"),
+                Option("absolute-error", "number", "largest error, in the units of the response", metavar="X"),
+                Option("method", "choice", "method", REDUCTION_METHODS, "auto"),
+            ),
+        ),
+        Verb("inspect", "Say what the plant is and what is wrong with it.", ("MODEL",), (COLUMNS,), False, False),
+        Verb(
+            "compare",
+            "Measure the discrepancy between models, or between models and data.",
+            ("A", "B..."),
+            (BAND, COLUMNS),
+            False,
+            False,
+        ),
+        Verb(
+            "report",
+            "Draw magnitude and phase, error, poles and Hankel singular values as PNG or SVG.",
+            ("MODEL...",),
+            (BAND, COLUMNS),
+            False,
+            False,
+        ),
+        Verb(
+            "demo",
+            "Do the whole job on an invented example, in a fresh folder.",
+            (),
+            (Option("seed", "integer", "seed of the invented measurement noise", default=1, metavar="N"),),
+            False,
+            False,
+        ),
+    )
+}
+
+#: Options that every verb takes.
+COMMON_OPTIONS: tuple[Option, ...] = (
+    Option("json", "flag", "print the record on standard output"),
+    Option("log", "path", "append the record to this file as one JSON line", metavar="FILE"),
+)
+
+#: Options of every verb that makes a receipt.
+RECEIPT_OPTIONS: tuple[Option, ...] = (
+    Option("strict", "flag", "write no output, and end with status 4, unless every limited claim holds"),
+    Option("limit", "limit", "limit of a claim; may be given several times", metavar="NAME=VALUE"),
+    Option("second-opinion", "switch", "ask an independent library for the same step", default=True),
+)
+
+EXIT_STATUSES = {
+    0: "done and verified",
+    1: "internal fault (a bug)",
+    2: "wrong usage",
+    3: "the input is not acceptable",
+    4: "done, but a claim failed its limit (output written unless --strict)",
+    5: "refused: the answer would be meaningless or cannot fit in memory",
+    130: "interrupted; nothing half-written",
+}
+
+
+def options_of(verb: Verb) -> tuple[Option, ...]:
+    """Return all options of a verb, common ones included (``-o OUTPUT`` aside)."""
+    return verb.options + (RECEIPT_OPTIONS if verb.makes_receipt else ()) + COMMON_OPTIONS
