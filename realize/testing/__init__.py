@@ -1,0 +1,1 @@
+"""Models with known answers, for tests, examples and the demo."""
