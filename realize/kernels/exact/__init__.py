@@ -1,0 +1,1 @@
+"""Exact arithmetic: rationals and balls; integer ratios in, exact numbers or correctly rounded doubles out."""
