@@ -9,8 +9,8 @@ everything above them is -V_i'V_j. For T = [T1 T12; 0 T2] the row of blocks R12 
 T2, and what is left is the same problem for T2 with C2 - V1 R12. The Gramian itself is never formed [1]_, [2]_, and the
 recursion spends its time in matrix products [3]_.
 
-.. [1] S. J. Hammarling, Numerical solution of the stable, non-negative definite Lyapunov equation, IMA J. Numer. Anal. 2
-       (1982) 303-323.
+.. [1] S. J. Hammarling, Numerical solution of the stable, non-negative definite Lyapunov equation, IMA J. Numer. Anal.
+       2 (1982) 303-323.
 .. [2] D. Kressner, Block variants of Hammarling's method for solving Lyapunov equations, ACM Trans. Math. Softw. 34
        (2008) 1.
 .. [3] I. Jonsson, B. Kagstrom, Recursive blocked algorithms for solving triangular systems, ACM Trans. Math. Softw. 28

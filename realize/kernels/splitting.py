@@ -38,7 +38,8 @@ class Split:
         Norm of the solution of the Sylvester equation: 0 if the parts were decoupled in orthonormal coordinates.
         Rounding errors of the parts grow by 1 + coupling^2 at most.
     separation : float
-        Estimated separation of the two parts relative to the norm of A: smallest singular value of the Sylvester operator.
+        Estimated separation of the two parts relative to the norm of A: smallest singular
+        value of the Sylvester operator.
     """
 
     stable: tuple[Array, Array, Array]
@@ -89,12 +90,20 @@ def singular_at(A: Array, T: Array, Q: Array, point: complex) -> bool:
 
 def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bool:
     """Say whether rounding can move this pole to `point`: all of the way between them is singular within rounding."""
-    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.5, 0.25, 0.75))
+    # golden fractions of the way: none of them falls on another pole of an evenly spaced row
+    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
 
 
 def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bool:
     """Say whether rounding can move this pole to `point`: all of the way between them is singular within rounding."""
-    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.5, 0.25, 0.75))
+    # golden fractions of the way: none of them falls on another pole of an evenly spaced row
+    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
+
+
+def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bool:
+    """Say whether rounding can move this pole to `point`: all of the way between them is singular within rounding."""
+    # golden fractions of the way: none of them falls on another pole of an evenly spaced row
+    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
 
 
 def _nearest_on_axis(pole: complex, sampled: bool) -> complex:
@@ -150,7 +159,7 @@ def _decouple(T: Array, count: int) -> Array:
 
 
 def _nilpotent(N: Array, tolerance: float) -> tuple[Array, Array] | None:
-    """Return (strictly upper triangular form, orthogonal basis) of a matrix whose eigenvalues are 0 within tolerance."""
+    """Return (strictly upper triangular form, orthogonal basis) of a matrix with eigenvalues 0 within tolerance."""
     k = N.shape[0]
     basis = np.eye(k)
     N = N.copy()
@@ -171,8 +180,8 @@ def _settle(
 ) -> tuple[Array, Array, Array]:
     """Put poles of the kept block that lie on the axis within rounding exactly there.
 
-    Returns the block with right and left transforms. Integrators become a strictly triangular block (plus or minus the identity
-    when sampled), a pair on the axis loses its real part.
+    Returns the block with right and left transforms. Integrators become a strictly triangular block (plus or minus
+    the identity when sampled), a pair on the axis loses its real part.
     """
     n = T.shape[0]
     right, left = np.eye(n), np.eye(n)
@@ -218,8 +227,8 @@ def _settle(
 def split_stable(A: Array, B: Array, C: Array, *, sampled: bool) -> Split:
     """Separate the stable part from unstable poles and poles on the axis.
 
-    Real Schur form with the stable eigenvalues first, [T1 X; 0 T2], then T1 Y - Y T2 = -X makes it block diagonal [1]_. A
-    pole counts as on the axis when a relative change of the entries of A by 4 n eps puts one there; such poles are then
+    Real Schur form with the stable eigenvalues first, [T1 X; 0 T2], then T1 Y - Y T2 = -X makes it block diagonal [1]_.
+    A pole counts as on the axis when a relative change of the entries of A by 4 n eps puts one there; such poles are then
     put exactly on it.
 
     Parameters
