@@ -94,18 +94,6 @@ def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bo
     return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
 
 
-def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bool:
-    """Say whether rounding can move this pole to `point`: all of the way between them is singular within rounding."""
-    # golden fractions of the way: none of them falls on another pole of an evenly spaced row
-    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
-
-
-def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bool:
-    """Say whether rounding can move this pole to `point`: all of the way between them is singular within rounding."""
-    # golden fractions of the way: none of them falls on another pole of an evenly spaced row
-    return all(singular_at(A, T, Q, pole + part * (point - pole)) for part in (1.0, 0.618, 0.382, 0.854))
-
-
 def _nearest_on_axis(pole: complex, sampled: bool) -> complex:
     if sampled:
         return pole / abs(pole) if pole != 0 else 1.0 + 0j
@@ -228,8 +216,8 @@ def split_stable(A: Array, B: Array, C: Array, *, sampled: bool) -> Split:
     """Separate the stable part from unstable poles and poles on the axis.
 
     Real Schur form with the stable eigenvalues first, [T1 X; 0 T2], then T1 Y - Y T2 = -X makes it block diagonal [1]_.
-    A pole counts as on the axis when a relative change of the entries of A by 4 n eps puts one there; such poles are then
-    put exactly on it.
+    A pole counts as on the axis when a relative change of the entries of A by 4 n eps puts one there; such poles are
+    then put exactly on it.
 
     Parameters
     ----------
