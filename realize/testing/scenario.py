@@ -7,8 +7,8 @@ Five inertias in a chain (kg m^2) and the springs between them (N m/rad)::
 
 The motor torque acts between base and rotor. While the sweep runs, a soft position hold keeps the table in place, which
 gives the well damped mode at the low end. Two sensors: the encoder (speed of the rotor against the base) and an
-accelerometer on the payload, 120 mm off the axis. Nothing here was measured anywhere, and nothing here knows how a model
-is fitted.
+accelerometer on the payload, 120 mm off the axis. Nothing here was measured anywhere, and nothing here knows how a
+model is fitted.
 """
 
 from __future__ import annotations
@@ -35,7 +35,7 @@ ACCELERATION = Signal("payload acceleration", "m/s^2")
 
 
 def bench_axis_truth() -> PoleResidue:
-    """Return the model behind `bench_axis`: order 10, five modes, torque (N m) to speed (rad/s) and acceleration (m/s^2).
+    """Return the model behind `bench_axis`: order 10, torque (N m) to speed (rad/s) and acceleration (m/s^2).
 
     With mass-normalised mode shapes f_k of M q'' + K q = b u, undamped frequencies w_k and damping ratios z_k, the
     outputs are c_1 q' and c_2 q'':
@@ -87,8 +87,8 @@ def bench_axis_truth() -> PoleResidue:
 def sensor_deviation(frequency: NDArray[np.float64], response: NDArray[np.complex128]) -> NDArray[np.float64]:
     """Return one standard deviation of the distance between an averaged estimate and the response.
 
-    Three parts, added in squares: a share of the response itself (leakage and drift of the drive's gain), a floor of the
-    sensor, and a part that grows with frequency (the encoder's steps are differentiated; the accelerometer nears the
+    Three parts, added in squares: a share of the response itself (leakage and drift of the drive's gain), a floor of
+    the sensor, and a part that grows with frequency (the encoder's steps are differentiated; the accelerometer nears the
     resonance of its mount). The floor is what is left at an antiresonance.
 
     Parameters
