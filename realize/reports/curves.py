@@ -50,8 +50,8 @@ def corner_frequencies(model: Model) -> Array:
 def drawing_band(models: Sequence[Model], band: Band | None = None) -> Band:
     """Return the frequencies to draw, rad/s.
 
-    In this order: the band asked for; the band of the data with a quarter of an octave on each side; from a tenth of the
-    smallest to ten times the largest pole or zero. Sampled models end at pi / period.
+    In this order: the band asked for; the band of the data with a quarter of an octave on each side; from a tenth of
+    the smallest to ten times the largest pole or zero. Sampled models end at pi / period.
     """
     ends = [math.pi / model.time.seconds for model in models if model.time.sampled]
     end = max(ends) if len(ends) == len(models) and ends else math.inf
@@ -189,7 +189,7 @@ def _evaluated(curve: Curve, frequency: Array) -> ComplexArray:
 
 
 def unwrapped_phase(curve: Curve, output: int, column: int) -> Array:
-    """Return the phase of one channel in degrees, unwrapped along the rational part, dead time added as a straight line."""
+    """Return the phase of one channel in degrees: unwrapped along the rational part, dead time added as a line."""
     values = curve.rational[:, output, column]
     phase = np.full(values.size, np.nan)
     good = np.isfinite(values) & (values != 0)
@@ -204,8 +204,8 @@ def unwrapped_phase(curve: Curve, output: int, column: int) -> Array:
 def aligned_phases(curves: Sequence[Curve], output: int, column: int) -> list[Array]:
     """Return the phases of one channel of all curves on a common branch.
 
-    The first parametric curve with a phase leads. Data points, which noise can carry around, each take the branch nearest
-    to it; other curves move as a whole by a multiple of 360 degrees.
+    The first parametric curve with a phase leads. Data points, which noise can carry around, each take the branch
+    nearest to it; other curves move as a whole by a multiple of 360 degrees, to meet it at the low end.
     """
     phases = [unwrapped_phase(curve, output, column) for curve in curves]
     usable = [k for k, phase in enumerate(phases) if np.isfinite(phase).any()]
@@ -224,9 +224,9 @@ def aligned_phases(curves: Sequence[Curve], output: int, column: int) -> list[Ar
             continue
         turns = np.rint((np.interp(own, x, y) - phases[k]) / 360)
         if curves[k].data and models:
-            inner = inside if inside.any() else np.isfinite(phases[k])
-            whole = float(np.median(turns[inner]))
+            whole = float(np.median(turns[inside]))
             phases[k] = phases[k] + 360 * np.where(inside, turns, whole)
         else:
-            phases[k] = phases[k] + 360 * float(np.median(turns[inside]))
+            low = turns[inside][: max(1, int(inside.sum()) // 5)]
+            phases[k] = phases[k] + 360 * float(np.median(low))
     return phases

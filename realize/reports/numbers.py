@@ -74,7 +74,7 @@ def channel_name(model: Any, output: int, column: int, longest: int = 60) -> str
 
 
 def channel_unit(model: Any, output: int, column: int) -> str:
-    """Return the unit of a channel's response, such as ``(rad/s)/(N*m)``; empty unless one of the two units is given."""
+    """Return the unit of a channel's response, such as ``(rad/s)/(N*m)``; empty where both signals have none."""
 
     def wrapped(unit: str) -> str:
         return f"({unit})" if any(sign in unit for sign in "/* ·") else unit

@@ -31,7 +31,7 @@ def _log_hertz(frequency: Array) -> Array:
 
 def _plot(axes: Any, curve: Curve, look: Look, x: Array, y: Array) -> None:
     if curve.data:
-        size = 5.0 if x.size < 60 else 3.4 if x.size < 250 else 2.6
+        size = 6.0 if x.size < 60 else 4.6 if x.size < 250 else 3.8
         axes.plot(
             x, y, look.marker, markersize=size, markerfacecolor="none", color=look.colour, markeredgewidth=0.7, zorder=2
         )
@@ -76,7 +76,7 @@ def channel(
     above.set_title(drawable(channel_name(named, i, j, 56), 56))
     units = [channel_unit(c.model, i, j) for c in curves]
     unit = next((text for text in units if text), "")
-    above.set_ylabel(drawable(f"magnitude, dB re 1 {unit}" if unit else "magnitude, dB", 44))
+    above.set_ylabel("magnitude, dB" + (f"\n{drawable('re 1 ' + unit, 40)}" if unit else ""))
     below.set_ylabel("phase, degrees")
     below.set_xlabel("frequency, Hz")
 
@@ -96,8 +96,10 @@ def channel(
 
     everything, turned = np.concatenate(levels), np.concatenate(phases)
     if not np.isfinite(everything).any():
-        empty = not everything.size
-        _say(above, "nothing at these frequencies" if empty else "identically zero")
+        zero = all(not np.any(curve.rational[:, i, j]) for curve in curves)
+        _say(
+            above, "nothing at these frequencies" if not everything.size else "identically zero" if zero else "infinite"
+        )
         below.set_ylim(-180, 180)
         above.set_yticks([])
         below.yaxis.set_major_locator(MultipleLocator(90))
@@ -133,12 +135,12 @@ def difference(axes: Any, curves: Sequence[Curve], styles: Sequence[Look], band:
         level = np.where(np.isfinite(level), level, np.nan)
         if np.isfinite(level).any():
             drawn.append(level)
-            shown = (
-                curve
-                if first.data is False or curve.data
-                else Curve(curve.label, curve.model, False, w, curve.rational, curve.dead_time)
-            )
-            _plot(axes, shown, look, _log_hertz(w), level)
+            if curve.data:
+                _plot(axes, curve, look, _log_hertz(w), level)
+            else:
+                # at the lines of noisy data a thin line; between models the same line as above
+                width = 0.9 if first.data else look.width
+                axes.plot(_log_hertz(w), level, linestyle=look.line, linewidth=width, color=look.colour, zorder=3)
             if w.size == 1:
                 axes.plot(_log_hertz(w), level, look.pole_marker, color=look.colour)
     deviation = getattr(first.model, "deviation", None) if first.data else None

@@ -14,6 +14,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from realize.errors import UsageError
+from realize.files.replacing import replace_file
 from realize.models import FrequencyResponse, Model
 from realize.reports import panels, polemap
 from realize.reports.curves import Band, curves_of, drawing_band
@@ -63,7 +64,7 @@ def draw(
     with page_settings():
         figure = figure_of(entries, band=band, title=title, hankel=hankel)
         content = rendered(figure, form)
-    _replace(Path(path), content)
+    replace_file(path, content)
 
 
 def picture_format(path: str | os.PathLike[str]) -> str:
@@ -181,7 +182,8 @@ def figure_of(
     heights = [2.2, 1.6] * rows + ([3.3] if extra else [])
     figure = Figure(figsize=(width, sum(heights) + 0.9), layout="constrained")
     figure.get_layout_engine().set(w_pad=0.08, h_pad=0.06, hspace=0.02, wspace=0.03)
-    parts = math.lcm(columns, max(len(extra), 1))
+    slots = max(len(extra), columns)
+    parts = math.lcm(columns, slots)
     grid = figure.add_gridspec(len(heights), parts, height_ratios=heights)
 
     share = parts // columns
@@ -191,7 +193,7 @@ def figure_of(
         above = figure.add_subplot(grid[2 * row, where])
         below = figure.add_subplot(grid[2 * row + 1, where])
         panels.channel(above, below, curves, styles, cell, span)
-    share = parts // max(len(extra), 1)
+    share = parts // slots
     for place, (name, content) in enumerate(extra):
         axes = figure.add_subplot(grid[len(heights) - 1, place * share : (place + 1) * share])
         if name == "difference":
@@ -203,9 +205,7 @@ def figure_of(
         else:
             notes += panels.hankel(axes, content, styles)
 
-    if title:
-        figure.suptitle(drawable(title, 100), fontsize=12, fontweight="bold", x=0.012, ha="left")
-    _legend(figure, curves, styles, width)
+    _legend(figure, curves, styles, width, title)
     if notes:
         wrapped = [
             line for note in dict.fromkeys(notes) for line in textwrap.wrap(drawable(note, 200), int(15.5 * width))
@@ -214,7 +214,7 @@ def figure_of(
     return figure
 
 
-def _legend(figure: Any, curves: Sequence[Any], styles: Sequence[Any], width: float) -> None:
+def _legend(figure: Any, curves: Sequence[Any], styles: Sequence[Any], width: float, title: str | None) -> None:
     from matplotlib.lines import Line2D
 
     handles = []
@@ -229,7 +229,11 @@ def _legend(figure: Any, curves: Sequence[Any], styles: Sequence[Any], width: fl
     labels = [drawable(curve.label, 40) for curve in curves]
     longest = max(len(label) for label in labels)
     across = max(1, min(len(labels), int(width / (0.075 * longest + 0.7))))
-    figure.legend(handles, labels, loc="outside upper left", ncols=across, handlelength=3.2, columnspacing=1.6)
+    legend = figure.legend(handles, labels, loc="outside upper left", ncols=across, handlelength=3.2, columnspacing=1.6)
+    if title:
+        # part of the legend, so that the layout keeps the two apart
+        legend.set_title(drawable(title, 100), prop={"size": 12, "weight": "bold"})
+        legend.set_alignment("left")
 
 
 def _hankel(label: str, model: Model, given: Mapping[str, ArrayLike] | None) -> Any:
@@ -237,7 +241,3 @@ def _hankel(label: str, model: Model, given: Mapping[str, ArrayLike] | None) -> 
     if given is not None and label in given:
         return np.asarray(given[label], dtype=float)
     return None
-
-
-def _replace(path: Path, content: bytes) -> None:
-    path.write_bytes(content)

@@ -44,14 +44,21 @@ def _axis_ticks(axis: Any, low: float, high: float, unit: float | None, scale: f
     from matplotlib.ticker import FixedFormatter, FixedLocator, MaxNLocator
 
     if unit is None:
-        ticks = [t for t in MaxNLocator(nbins=most, steps=[1, 2, 5, 10]).tick_values(low, high) if low <= t <= high]
-        values = [t * scale for t in ticks]
+        # a power of ten between the drawn and the true numbers keeps both the ticks round and the locator in range
+        ten = 10.0 ** math.floor(math.log10(scale))
+        drawn_scale = scale / ten
+        found = MaxNLocator(nbins=most, steps=[1, 2, 5, 10]).tick_values(low * drawn_scale, high * drawn_scale)
+        ticks = [t / drawn_scale for t in found if low <= t / drawn_scale <= high]
+        values = [t * drawn_scale * ten for t in ticks]
     else:
         largest = math.floor(math.log10(unit * math.sinh(min(max(abs(low), abs(high)), 700.0))))
-        smallest = math.ceil(math.log10(unit))
-        powers = list(range(smallest, largest + 1)) or [largest]
-        step = max(1, math.ceil(len(powers) / (most - 1 if low > -0.5 or high < 0.5 else most // 2)))
+        smallest = math.ceil(math.log10(2 * unit))
+        sided = most if low > -0.5 or high < 0.5 else most // 2
+        powers = list(range(smallest, largest + 1))
+        step = max(1, math.ceil(len(powers) / sided))
         kept = [10.0**p for p in powers[::-1][::step]]
+        if len(powers) <= sided // 3:
+            kept = [f * 10.0**p for p in range(largest, smallest - 2, -1) for f in (5, 2, 1) if f * 10.0**p > 2 * unit]
         values = [-v for v in kept] + [0.0] + kept[::-1]
         drawn = folded(np.array(values), unit)
         values = [v for v, t in zip(values, drawn, strict=True) if low - 1e-9 <= t <= high + 1e-9]
@@ -93,13 +100,6 @@ def s_plane(axes: Any, poles: Mapping[int, ComplexArray], styles: Sequence[Look]
     points = np.array([pole for group in groups.values() for pole, _ in group], dtype=complex)
     real, imag = np.abs(points.real), points.imag
     units = _unit_of(real[real > 0]), _unit_of(imag[imag > 0])
-    # a map is linear or folded as a whole: one rule for the eye
-    if any(unit is not None for unit in units):
-        sizes = [values[values > 0] for values in (real, imag)]
-        units = tuple(  # type: ignore[assignment]
-            unit if unit is not None else (float(size.min()) / 2 if size.size else 1.0)
-            for unit, size in zip(units, sizes, strict=True)
-        )
     # drawn in units of the largest part, so that no size of a pole matters
     scales = [
         1.0 if unit is not None else float(part.max(initial=0.0)) or 1.0
@@ -129,9 +129,12 @@ def s_plane(axes: Any, poles: Mapping[int, ComplexArray], styles: Sequence[Look]
         counts = [count for _, count in group]
         _marks(axes, drawn(own.real, 0), drawn(own.imag, 1), counts, styles[entry], place, crowded)
     _axis_ticks(axes.xaxis, left, right, units[0], scales[0], 6)
-    _axis_ticks(axes.yaxis, 0.0, top, units[1], scales[1], 7)
+    if np.any(imag > 0):
+        _axis_ticks(axes.yaxis, 0.0, top, units[1], scales[1], 7)
+    else:
+        axes.set_yticks([0.0])
     axes.set_title("Poles, s-plane (upper half)")
-    axes.set_xlabel("real part, 1/s" + (" (folded scale)" if units[0] is not None else ""))
+    axes.set_xlabel("real part, 1/s (shaded: unstable)")
     axes.set_ylabel("imaginary part, rad/s")
 
 
@@ -142,33 +145,37 @@ def _damping_lines(
     left, _, top = view
     reach_x = -left * scales[0] if units[0] is None else units[0] * math.sinh(-left)
     reach_y = top * scales[1] if units[1] is None else units[1] * math.sinh(top)
+    placed: list[tuple[float, float]] = []
     for ratio in DAMPING:
         slope = math.sqrt(1 - ratio**2) / ratio
         end = min(reach_x, reach_y / slope)
-        start = end * 1e-12
-        # the label wants room along the line: left of the axis, and above the real axis
-        a = np.concatenate([[0.0], np.geomspace(start, end, 200)])
+        a = np.concatenate([[0.0], np.geomspace(end * 1e-12, end, 300)])
         u = -(a / scales[0] if units[0] is None else folded(a, units[0]))
         v = a * slope / scales[1] if units[1] is None else folded(a * slope, units[1])
-        if u[-1] > 0.04 * left or v[-1] < 0.06 * top:
-            continue
         axes.plot(u, v, color=GREY, linewidth=0.7, linestyle=(0, (3, 3)), zorder=1)
-        at_top = v[-1] > 0.995 * top
+        # the label sits on the line just before it leaves the view, away from the axes and from other labels
+        k = int(np.flatnonzero((u >= 0.95 * left) & (v <= 0.95 * top))[-1])
+        spot = float(u[k] / left), float(v[k] / top)
+        near = any(abs(spot[0] - x) < 0.09 and abs(spot[1] - y) < 0.06 for x, y in placed)
+        if near or spot[0] < 0.03 or spot[1] < 0.06:
+            continue
+        placed.append(spot)
         axes.annotate(
             f"{ratio:g}",
-            (u[-1], v[-1]),
-            xytext=(0, 1) if at_top else (2, 2),
-            textcoords="offset points",
-            ha="center" if at_top else "left",
-            va="bottom",
+            (u[k], v[k]),
             fontsize=7.0,
             color="#4b5563",
-            annotation_clip=False,
+            ha="center",
+            va="center",
+            zorder=2,
+            bbox={"facecolor": "white", "edgecolor": "none", "pad": 0.8},
         )
 
 
 def z_plane(axes: Any, poles: Mapping[int, ComplexArray], styles: Sequence[Look]) -> None:
     """Draw the poles of sampled models, by entry index: the upper half plane with the unit circle."""
+    from matplotlib.ticker import MaxNLocator
+
     groups = {entry: grouped(values) for entry, values in poles.items()}
     points = np.array([pole for group in groups.values() for pole, _ in group], dtype=complex)
     angle = np.linspace(0, np.pi, 721)
@@ -187,17 +194,17 @@ def z_plane(axes: Any, poles: Mapping[int, ComplexArray], styles: Sequence[Look]
     axes.set_xlim(left, right)
     axes.set_ylim(-0.06 * top, top)
     axes.set_aspect("equal", adjustable="box")
-    axes.fill_between(np.cos(angle), np.sin(angle), 10 * top, color=FAINT, alpha=0.0)
     axes.plot(np.cos(angle), np.sin(angle), color=GREY, linewidth=1.1, zorder=1)
     axes.axhline(0.0, color=GREY, linewidth=0.8, zorder=1)
     for ratio in (0.1, 0.5):
         slope = math.sqrt(1 - ratio**2) / ratio
-        a = np.linspace(0, np.pi / slope, 300)
+        a = np.concatenate([[0.0], np.geomspace(1e-9, 1.0, 600)]) * np.pi / slope
         spiral = np.exp(-a + 1j * a * slope)
         axes.plot(spiral.real, spiral.imag, color=GREY, linewidth=0.7, linestyle=(0, (3, 3)), zorder=1)
         inside = (spiral.real > left) & (spiral.real < right) & (spiral.imag < top)
         if inside.any():
-            k = int(np.flatnonzero(inside)[int(0.45 * inside.sum())])
+            away = np.where(inside, np.abs(spiral - 1), 0.0)
+            k = int(np.argmin(np.abs(away - 0.6 * away.max())))
             axes.annotate(
                 f"{ratio:g}",
                 (spiral.real[k], spiral.imag[k]),
@@ -211,6 +218,8 @@ def z_plane(axes: Any, poles: Mapping[int, ComplexArray], styles: Sequence[Look]
     for place, (entry, group) in enumerate(groups.items()):
         own = np.array([pole for pole, _ in group], dtype=complex)
         _marks(axes, own.real, own.imag, [count for _, count in group], styles[entry], place, crowded)
+    axes.xaxis.set_major_locator(MaxNLocator(nbins=5))
+    axes.yaxis.set_major_locator(MaxNLocator(nbins=5))
     axes.set_title("Poles, z-plane (upper half)")
     axes.set_xlabel("real part")
     axes.set_ylabel("imaginary part")

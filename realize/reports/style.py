@@ -1,4 +1,4 @@
-"""The look of the pictures: colours, lines, markers, ticks. One place, so that every panel says the same the same way."""
+"""The look of the pictures: colours, lines, markers, ticks, in one place for all panels."""
 
 from __future__ import annotations
 
@@ -79,7 +79,7 @@ def looks(data: list[bool]) -> list[Look]:
             Look(
                 colour=COLOURS[k % len(COLOURS)],
                 line=LINES[same % len(LINES)],
-                width=max(2.6 - 0.45 * same, 1.1),
+                width=max(2.0 - 0.25 * same, 1.1),
                 marker=DATA_MARKERS[same % len(DATA_MARKERS)],
                 pole_marker=POLE_MARKERS[same % len(POLE_MARKERS)],
             )
@@ -176,7 +176,8 @@ def phase_step(span: float) -> float:
     for step in (15, 30, 45, 90, 180, 360):
         if span / step <= 6:
             return float(step)
-    return 360.0 * 10 ** math.ceil(math.log10(span / 360 / 6))
+    power = 10.0 ** math.floor(math.log10(span / 360 / 6))
+    return next(360.0 * f * power for f in (1, 2, 5, 10, 20) if span / (360.0 * f * power) <= 6)
 
 
 def folded(values: NDArray[np.float64], unit: float) -> NDArray[np.float64]:
