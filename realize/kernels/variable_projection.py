@@ -156,6 +156,7 @@ def polished(
     direct: bool,
     vanish: float,
     iterations: int,
+    tolerance: float,
 ) -> tuple[ComplexArray, float]:
     """Return poles of no higher cost sum |weights misfit|^2, and that cost: Levenberg-Marquardt over the poles alone.
 
@@ -172,6 +173,8 @@ def polished(
         Real point at which a response without direct term is zero; infinite for continuous time.
     iterations : int
         Largest number of accepted or rejected steps.
+    tolerance : float
+        Two steps in a row that lower the cost by less than this fraction are the last.
     """
     w, a, single = sections_of(poles)
     unknowns = np.clip(np.log(np.concatenate([w, a, single])), -2 * FARTHEST, FARTHEST)
@@ -204,7 +207,7 @@ def polished(
         there = at(trial)
         gain = here.cost - there.cost
         if gain > 0:
-            small = small + 1 if gain <= 1e-7 * here.cost else 0
+            small = small + 1 if gain <= tolerance * here.cost else 0
             unknowns, here = trial, there
             if here.cost <= floor or small >= 2:
                 break
@@ -212,7 +215,7 @@ def polished(
             damping = max(damping * max(1 / 3, 1 - (2 * gain / max(predicted, gain * 1e-3) - 1) ** 3), 1e-12)
             growth = 2.0
         else:
-            if predicted <= 1e-9 * here.cost or damping > 1e12:
+            if predicted <= 0.01 * tolerance * here.cost or damping > 1e12:
                 break
             damping *= growth
             growth *= 2

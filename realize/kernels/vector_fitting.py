@@ -97,7 +97,7 @@ def least_squares(matrix: Array, right: Array) -> Array:
     """Solve a least squares problem with its columns scaled to length 1; the smallest solution when it is not unique."""
     norm = np.linalg.norm(matrix, axis=0)
     norm = np.where(norm > 0, norm, 1.0)
-    return np.linalg.lstsq(matrix / norm, right, rcond=max(matrix.shape) * np.finfo(float).eps)[0] / norm
+    return np.linalg.lstsq(matrix / norm, right, rcond=4 * np.finfo(float).eps)[0] / norm
 
 
 def residues_of(

@@ -1,0 +1,8 @@
+"""Measured responses to models: one method a file, one record for all of them."""
+
+from realize.fitting import vector_fitting as _vector_fitting
+from realize.fitting.face import fit_response
+from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
+from realize.fitting.registry import METHODS, Method, choose_method
+
+__all__ = ["METHODS", "Candidate", "Fit", "Method", "Noise", "PoleRow", "Worst", "choose_method", "fit_response"]

@@ -1,0 +1,276 @@
+"""The friendly face of fitting: checks, scaling by powers of two, and the record that comes back."""
+
+from __future__ import annotations
+
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import ArrayLike, NDArray
+
+from realize.errors import InputError, Refused
+from realize.fitting import noise as noises
+from realize.fitting.order import HIGHEST_ORDER
+from realize.fitting.problem import Problem
+from realize.fitting.records import Candidate, Fit
+from realize.fitting.registry import choose_method
+from realize.fitting.result import finish
+from realize.fitting.sampled import warped
+
+Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+
+#: ``auto`` leaves at least this many numbers of data to every unknown.
+NUMBERS_PER_UNKNOWN = 2.0
+
+
+def fit_response(
+    frequency: ArrayLike,
+    response: ArrayLike,
+    *,
+    deviation: ArrayLike | None = None,
+    coherence: ArrayLike | None = None,
+    order: int | tuple[int, int] | str = "auto",
+    method: str = "auto",
+    period: float | None = None,
+    direct: bool | Literal["auto"] = True,
+) -> Fit:
+    """Fit a rational model with common stable poles to a measured frequency response.
+
+    Minimises sum |misfit/deviation|^2 over all lines and channels of sum_j residues_j / (s - poles_j) + direct.
+
+    Weights. ``deviation``: 1/deviation. ``coherence`` c: deviation proportional to |H| sqrt((1 - c)/c). Neither:
+    deviation^2 = a^2 + b^2 |H|^2 with a and b estimated for each channel from what neighbouring lines do not predict,
+    then again from the misfit of the first fit. Floors: see ``realize.fitting.noise``.
+
+    Order. ``auto``: increasing orders until the Bayesian information criterion has not improved for four orders in a
+    row; up to 40, and at least two numbers of data for each unknown. A range (lowest, highest) is searched alike.
+
+    Poles on the imaginary axis or at the origin are not represented: an integrator comes out as stable poles far below
+    the lowest line. With a period the points are z = exp(jwT); a line at z = -1 is left out of the fit.
+
+    Parameters
+    ----------
+    frequency : [k] float
+        Increasing, not negative, rad/s.
+    response : [k][outputs][inputs] complex
+    deviation : [k][outputs][inputs] float, optional
+        One standard deviation of the complex response: the mean of |error|^2 is deviation^2.
+    coherence : [k][outputs][inputs] float, optional
+        0 to 1; used where no deviation is given.
+    order : int, (int, int) or "auto"
+    method : str
+        A name of ``realize.fitting.METHODS``, or "auto".
+    period : float, optional
+        Sampling period of a sampled response, s.
+    direct : bool or "auto"
+        Constant real direct term: True, False, or as the criterion says.
+
+    Returns
+    -------
+    Fit
+
+    Raises
+    ------
+    InputError
+        Data of wrong shape, not finite, not increasing; more unknowns than data.
+    Refused
+        A result beyond the range of double precision.
+
+    Sources
+    -------
+    See ``realize.kernels.vector_fitting`` and ``realize.kernels.variable_projection``; G. Schwarz, "Estimating the
+    dimension of a model", Annals of Statistics 6, 1978.
+    """
+    w, H = _checked(frequency, response, period)
+    lines, p, m = H.shape
+    sigma = _like(deviation, "deviation", H)
+    gamma = _like(coherence, "coherence", H)
+    if not (direct is True or direct is False or direct == "auto"):
+        raise InputError(f"direct = {direct!r}", 'True, False or "auto"', field="direct")
+    wanted = _order_range(order)
+    x, used = (w, np.ones(lines, bool)) if period is None else warped(w, period)
+    cautions: list[str] = []
+    if not np.all(used):
+        cautions.append("the line at half the sampling rate (z = -1) is left out of the fit")
+    if not np.any(used):
+        raise InputError("only a line at half the sampling rate", "lines below it", field="frequency")
+    shift = _middle_exponent(x[used])
+    points = 1j * np.ldexp(x[used], -shift)
+    flat = H.reshape(lines, p * m)
+    lift = _top_exponents(flat)
+    values = _scaled(flat, -lift)[used]
+    vanish = np.inf if period is None else float(np.ldexp(1.0, -shift))
+
+    weights, basis = _weights(points.imag, values, sigma, gamma, lift, used)
+    problem = Problem(points, values, weights, basis == "given", basis == "estimated", direct is not False, vanish)
+    chosen = choose_method(method, problem)
+    exact = _exactly_constant(values)
+    if exact and (direct is not False or not np.any(values)):
+        if wanted[0] > 0:
+            cautions.append("the response is one real constant at all lines: order 0, whatever order was asked")
+        trivial = (Candidate(0, 0.0, 0.0, 0.0, True),)
+        return finish(
+            w, H, problem, np.zeros(0, complex), trivial, cautions, chosen.name, basis, period, shift, lift, used
+        )
+    lowest, highest = _within_reach(problem, wanted, lines)
+    outcome = chosen.fit(problem, lowest, highest, direct == "auto")
+    cautions.extend(outcome.cautions)
+    if wanted == (0, None) and outcome.poles.size >= highest > 0:
+        cautions.append(f"the order stopped at the highest one tried ({highest}), not because more brought nothing")
+    return finish(
+        w,
+        H,
+        outcome.problem,
+        outcome.poles,
+        outcome.candidates,
+        cautions,
+        chosen.name,
+        basis,
+        period,
+        shift,
+        lift,
+        used,
+    )
+
+
+def _checked(frequency: ArrayLike, response: ArrayLike, period: float | None) -> tuple[Array, ComplexArray]:
+    w = _numbers(frequency, "frequency", float)
+    H = _numbers(response, "response", complex)
+    if w.ndim != 1 or w.size == 0:
+        raise InputError(f"shape {list(w.shape)}", "a list of frequencies in rad/s", field="frequency")
+    if H.ndim == 1:
+        H = H[:, None, None]
+    if H.ndim != 3 or 0 in H.shape[1:]:
+        raise InputError(f"shape {list(H.shape)}", "lines x outputs x inputs", field="response")
+    if H.shape[0] != w.size:
+        raise InputError(f"{H.shape[0]} lines", f"{w.size}, one for each frequency", field="response")
+    for name, array in (("frequency", w), ("response", H)):
+        bad = np.argwhere(~np.isfinite(array))
+        if bad.size:
+            place = "".join(f"[{i}]" for i in bad[0])
+            raise InputError(f"{array[tuple(bad[0])]}", "a finite number", field=f"{name}{place}")
+    if w[0] < 0:
+        raise InputError(f"{w[0]}", "a frequency that is not negative", field="frequency[0]")
+    bad = np.flatnonzero(np.diff(w) <= 0)
+    if bad.size:
+        k = int(bad[0]) + 1
+        raise InputError(f"{w[k]} after {w[k - 1]}", "increasing frequencies", field=f"frequency[{k}]")
+    if w[-1] == 0:
+        raise InputError("frequency 0 alone", "at least one line above 0", field="frequency")
+    if period is not None:
+        if not (np.isfinite(period) and period > 0):
+            raise InputError(f"{period}", "a positive number of seconds", field="period")
+        if w[-1] * period > np.pi * (1 + 1e-9):
+            raise InputError(f"{w[-1]} rad/s", "frequencies up to half the sampling rate", field=f"frequency[{w.size - 1}]")
+    return w, H
+
+
+def _numbers(value: ArrayLike, name: str, kind: type) -> NDArray[Any]:
+    try:
+        return np.array(value, dtype=kind)
+    except (TypeError, ValueError):
+        raise InputError("something that is no array of numbers", "numbers", field=name) from None
+
+
+def _like(value: ArrayLike | None, name: str, H: ComplexArray) -> Array | None:
+    if value is None:
+        return None
+    array = _numbers(value, name, float)
+    if array.ndim == 1 and H.shape[1:] == (1, 1):
+        array = array[:, None, None]
+    if array.shape != H.shape:
+        raise InputError(f"shape {list(array.shape)}", f"shape {list(H.shape)}", field=name)
+    top = 1.0 if name == "coherence" else np.finfo(float).max
+    bad = np.argwhere(~((array >= 0) & (array <= top)))
+    if bad.size:
+        place = "".join(f"[{i}]" for i in bad[0])
+        expected = "a number between 0 and 1" if name == "coherence" else "a finite number that is not negative"
+        raise InputError(f"{array[tuple(bad[0])]}", expected, field=f"{name}{place}")
+    return array.reshape(H.shape[0], -1)
+
+
+def _order_range(order: Any) -> tuple[int, int | None]:
+    """Return lowest and highest order asked; highest None for ``auto``."""
+    if isinstance(order, str):
+        if order == "auto":
+            return 0, None
+        raise InputError(f"{order!r}", 'a number of poles, a pair (lowest, highest) or "auto"', field="order")
+    pair = order if isinstance(order, (tuple, list)) else (order, order)
+    if len(pair) != 2 or any(isinstance(n, bool) or not isinstance(n, (int, np.integer)) for n in pair):
+        raise InputError(f"{order!r}", 'a number of poles, a pair (lowest, highest) or "auto"', field="order")
+    low, high = int(pair[0]), int(pair[1])
+    if low < 0 or high < low:
+        raise InputError(f"{order!r}", "0 <= lowest <= highest", field="order")
+    return low, high
+
+
+def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) -> tuple[int, int]:
+    largest = problem.largest_order
+    low, high = wanted
+    if low > largest or problem.unknowns(low) > problem.numbers:
+        raise InputError(
+            f"{problem.unknowns(low)} unknowns for order {low} and {problem.numbers} numbers in {lines} line(s)",
+            f"an order of at most {largest}, or more lines",
+            field="order",
+        )
+    if high is None:
+        # order 0 with one line: nothing that could be called a fit
+        if problem.points.size < 2:
+            raise InputError("1 line", "at least 2 lines to fit a response that is not a real constant", field="frequency")
+        high = HIGHEST_ORDER
+        while high > 0 and problem.unknowns(high) * NUMBERS_PER_UNKNOWN > problem.numbers:
+            high -= 1
+    return low, min(high, largest)
+
+
+def _middle_exponent(x: Array) -> int:
+    positive = x[x > 0]
+    if positive.size == 0:
+        return 0
+    return round((np.log2(positive[0]) + np.log2(positive[-1])) / 2)
+
+
+def _top_exponents(flat: ComplexArray) -> NDArray[np.int64]:
+    size = np.max(np.maximum(np.abs(flat.real), np.abs(flat.imag)), axis=0)
+    return np.where(size > 0, np.frexp(size)[1], 0).astype(np.int64)
+
+
+def _scaled(flat: ComplexArray, exponents: NDArray[np.int64]) -> ComplexArray:
+    result = np.empty(flat.shape, dtype=complex)
+    with np.errstate(under="ignore"):
+        result.real = np.ldexp(flat.real, exponents)
+        result.imag = np.ldexp(flat.imag, exponents)
+    return result
+
+
+def _exactly_constant(values: ComplexArray) -> bool:
+    return bool(np.all(values == values[:1]) and not np.any(values.imag))
+
+
+def _weights(
+    x: Array,
+    values: ComplexArray,
+    sigma: Array | None,
+    gamma: Array | None,
+    lift: NDArray[np.int64],
+    used: NDArray[np.bool_],
+) -> tuple[Array, str]:
+    """Return weights of the scaled problem and how they were got."""
+    if sigma is not None:
+        with np.errstate(under="ignore", over="ignore"):
+            given = noises.floored(np.ldexp(sigma[used], -lift))
+        if given is not None and np.all(np.isfinite(given)):
+            return 1 / given, "given"
+    if gamma is not None:
+        shape = noises.from_coherence(values, gamma[used])
+        basis = "coherence"
+    else:
+        shape = noises.noise_shape(x, values, noises.smoothed_size(values, 2))
+        basis = "estimated"
+    dead = ~np.any(values != 0, axis=0)
+    shape[:, dead] = 1.0
+    if not np.all(np.isfinite(shape)) or np.any(shape <= 0):
+        raise Refused("no deviation can be estimated from these data; give a deviation for each line")
+    return 1 / shape, basis
+
+

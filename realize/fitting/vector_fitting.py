@@ -1,0 +1,94 @@
+"""Vector fitting with a maximum-likelihood polish and a search over orders."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.fitting.noise import noise_shape, smoothed_size
+from realize.fitting.order import Search, Trial, finished, relocate, start
+from realize.fitting.problem import Problem
+from realize.fitting.records import Candidate
+from realize.fitting.registry import Method, Outcome, register
+
+#: Estimated deviations are estimated again from the misfit when one line's share moved by more than this factor.
+MOVED = 1.5
+#: A fixed order up to this is reached through all smaller orders as well.
+LONGEST_LADDER = 40
+
+
+def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outcome:
+    """Return the best fit with an order between ``lowest`` and ``highest``.
+
+    Estimated noise: the search runs with deviations estimated from the data (local interpolation), then, where the
+    misfit of that fit gives another picture, with those estimated from the misfit, from the poles already found.
+
+    Parameters
+    ----------
+    problem : Problem
+    lowest, highest : int
+        Range of orders; equal for a fixed order.
+    direct_auto : bool
+        Try without direct term as well, and keep it only where the criterion is better with it.
+    """
+    search, chosen = _searched(problem, lowest, highest, None)
+    if problem.estimated and search.best[chosen].cost > problem.floor:
+        again = _weights_from_misfit(problem, search.best[max(search.best)])
+        if again is not None:
+            known = {n: t.poles for n, t in search.best.items()}
+            search, chosen = _searched(problem.with_weights(again), lowest, highest, known)
+    solved = search.problem
+    trial = finished(solved, search.prune(chosen, lowest))
+    search.best[trial.order] = trial
+    if direct_auto:
+        without = finished(solved.with_direct(False), trial)
+        plain = solved.with_direct(False)
+        if plain.criterion(without.order, without.cost) <= solved.criterion(trial.order, trial.cost):
+            trial, solved = without, plain
+    return Outcome(solved, trial.poles, _candidates(search, trial))
+
+
+def _searched(problem: Problem, lowest: int, highest: int, known: dict | None) -> tuple[Search, int]:
+    search = Search(problem, known)
+    if lowest == highest and highest > LONGEST_LADDER:
+        fresh = [relocate(problem, start(problem, highest, s), 20) for s in ("logarithmic", "linear", "real")]
+        search.best[highest] = min(fresh, key=lambda t: t.cost)
+        return search, highest
+    return search, search.grow(lowest, highest)
+
+
+def _weights_from_misfit(problem: Problem, trial: Trial) -> NDArray[np.float64] | None:
+    misfit = problem.misfit(trial.poles)
+    weights = 1 / noise_shape(problem.x, misfit, smoothed_size(problem.values + misfit, 0))
+    change = weights / problem.weights
+    change = change / np.median(change)
+    return weights if np.max(change) > MOVED or np.min(change) < 1 / MOVED else None
+
+
+def _candidates(search: Search, kept: Trial) -> tuple[Candidate, ...]:
+    problem = search.problem
+    size = float(np.sqrt(np.sum(np.abs(problem.values) ** 2)))
+    rows = []
+    for n in sorted(search.best):
+        trial = kept if n == kept.order else search.best[n]
+        rows.append(
+            Candidate(
+                order=n,
+                rms=float(np.sqrt(np.sum(np.abs(problem.misfit(trial.poles)) ** 2))) / size,
+                weighted=float(np.sqrt(2 * trial.cost / problem.numbers)),
+                criterion=problem.criterion(n, trial.cost),
+                kept=n == kept.order,
+            )
+        )
+    return tuple(rows)
+
+
+VECTOR_FITTING = register(
+    Method(
+        name="vector-fitting",
+        says="common stable poles by relaxed vector fitting, polished to maximum likelihood by variable projection",
+        source="Gustavsen & Semlyen 1999; Gustavsen 2006; Deschrijver et al. 2008; Golub & Pereyra 1973; Kaufman 1975",
+        fit=fit,
+    )
+)
+
