@@ -6,6 +6,7 @@ Rounding is to nearest, ties to even, with subnormal numbers and overflow to inf
 from __future__ import annotations
 
 import math
+import sys
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from typing import Any
@@ -77,7 +78,7 @@ def _dyadic(mantissa: int, exponent: int) -> float:
     if top > 1100:
         return math.inf if mantissa > 0 else -math.inf
     if top < _TINY:
-        return math.copysign(0.0, mantissa)
+        return 0.0 if mantissa >= 0 else -0.0
     if exponent >= 0:
         mantissa, exponent = mantissa << exponent, 0
     try:
@@ -104,11 +105,46 @@ def nearest_ball(ball: arb) -> float | None:
         return _dyadic(int(mantissa), int(exponent))
     if ball.contains(0):
         return None
-    with precision(max(flint.ctx.prec, 64)):
-        mantissa, exponent = ball.lower().man_exp()
-        low = _dyadic(int(mantissa), int(exponent))
-        mantissa, exponent = ball.upper().man_exp()
-        return low if low == _dyadic(int(mantissa), int(exponent)) else None
+    middle, high = ball.mid().man_exp()
+    radius, low = ball.rad().man_exp()
+    m, r, k = int(middle), int(radius), int(high - low)
+    if abs(k) > 1 << 22:
+        return None
+    m, r, e = (m << k, r, int(low)) if k >= 0 else (m, r << -k, int(high))
+    value = _dyadic(m - r, e)
+    return value if value == _dyadic(m + r, e) else None
+
+
+def simplest(low: fmpq, high: fmpq) -> fmpq:
+    """Return the rational of least denominator in a closed interval (continued fractions)."""
+    if low <= 0 <= high:
+        return fmpq(0)
+    if high < 0:
+        return -simplest(-high, -low)
+    terms: list[fmpz] = []
+    while True:
+        whole = low.floor()
+        if whole == low or whole + 1 <= high:
+            terms.append(whole if whole == low else whole + 1)
+            break
+        terms.append(whole)
+        low, high = 1 / (high - whole), 1 / (low - whole)
+    value = fmpq(terms.pop())
+    while terms:
+        value = terms.pop() + 1 / value
+    return value
+
+
+def tie(ball: arb) -> fmpq | None:
+    """Return the point halfway between two neighbouring doubles that lies in a narrow ball, or None."""
+    value = near_ball(ball)
+    if math.isinf(value):
+        value = math.copysign(sys.float_info.max, value)
+    with precision(max(flint.ctx.prec, 128)):
+        for point in midpoints(value):
+            if ball.contains(arb(point)):
+                return point
+    return None
 
 
 def near_ball(ball: arb) -> float:

@@ -1,0 +1,207 @@
+"""Certified isolation of the roots of a squarefree polynomial, with what is exactly on an axis decided exactly."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any
+
+from flint import acb, acb_poly, arb, arb_poly, fmpq, fmpq_poly, fmpz_poly, nmod_poly
+
+from realize.kernels.exact.numbers import exact_value, precision, simplest
+from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.polynomials import even_odd, in_square, monic, quotient
+
+#: Relative accuracy (bits) of the balls that isolation returns.
+ISOLATION_BITS = 128
+#: Rational roots are looked for completely up to this size (bits) of leading coefficient and root.
+RATIONAL_CAP = 20_000
+#: From this size on, primes are asked first whether a rational root is possible.
+RATIONAL_FILTER = 400
+
+
+@dataclass(frozen=True)
+class Origin:
+    """Where an isolated root comes from: a root of ``polynomial`` itself, or a square root of one.
+
+    ``signs`` are those of the square root taken (real part, imaginary part); (0, 0) for the root itself.
+    """
+
+    polynomial: fmpz_poly
+    ball: acb
+    signs: tuple[int, int]
+
+    def at(self, bits: int) -> acb:
+        """Return a ball around the root with a relative accuracy of at least so many bits."""
+        if not any(self.signs):
+            return refined(self.polynomial, self.ball, bits)
+        square = refined(self.polynomial, self.ball, bits + 4)
+        with precision(bits + 32):
+            return _square_root(square, self.signs)
+
+
+@dataclass(frozen=True)
+class Isolated:
+    """One root of the upper half-plane or the real axis: ball, exact flags, origin."""
+
+    origin: Origin
+    ball: acb
+    on_axis: bool
+    real: bool
+
+
+def integer_polynomial(p: fmpq_poly) -> fmpz_poly:
+    """Return the primitive integer polynomial with the same roots, leading coefficient positive."""
+    f = p.numer()
+    content = f.content()
+    f = fmpz_poly([c // content for c in f.coeffs()]) if content > 1 else f
+    return -f if f.leading_coefficient() < 0 else f
+
+
+def complex_roots(f: Any) -> list[acb]:
+    """Return disjoint balls around the roots of a squarefree integer polynomial; real ones have no imaginary part."""
+    return [root for root, _ in f.complex_roots()]
+
+
+def _square_root(square: acb, signs: tuple[int, int]) -> acb:
+    re, im = signs
+    if im == 0:
+        size = square.real.sqrt()
+        return acb(size if re > 0 else -size)
+    if re == 0:
+        return acb(0, (-square.real).sqrt())
+    root = square.sqrt()
+    return acb(root.real if re > 0 else -root.real, root.imag)
+
+
+def isolate(f: fmpq_poly) -> list[Isolated]:
+    """Return the roots of a squarefree polynomial with imaginary part >= 0; zero must not be a root.
+
+    With f(s) = e(s^2) + s o(s^2) and h = gcd(e, o), the roots of h(s^2) are those that come with their negatives, so
+    that all roots on the imaginary axis are square roots of the negative roots of h, and no others are.
+    """
+    e, o = even_odd(f)
+    found = []
+    h = (e.gcd(o) if o else monic(e)) if f.degree() > 1 else fmpq_poly([1])
+    if h.degree() > 0:
+        f = quotient(f, in_square(h))
+        whole = integer_polynomial(h)
+        with precision(ISOLATION_BITS + 32):
+            squares = complex_roots(whole)
+            for x in squares:
+                if x.imag.is_zero():
+                    if x.real > 0:
+                        for sign in (1, -1):
+                            found.append(Isolated(Origin(whole, x, (sign, 0)), _square_root(x, (sign, 0)), False, True))
+                    else:
+                        found.append(Isolated(Origin(whole, x, (0, 1)), _square_root(x, (0, 1)), True, False))
+                elif x.imag > 0:
+                    for sign in (1, -1):
+                        ball = _square_root(x, (sign, 1))
+                        found.append(Isolated(Origin(whole, x, (sign, 1)), ball, False, False))
+    if f.degree() > 0:
+        whole = integer_polynomial(f)
+        with precision(ISOLATION_BITS + 8):
+            for root in complex_roots(whole):
+                real = root.imag.is_zero()
+                if real or root.imag > 0:
+                    found.append(Isolated(Origin(whole, root, (0, 0)), root, False, real))
+    return found
+
+
+def refined(f: fmpz_poly, ball: acb, bits: int) -> acb:
+    """Return the root in an isolating ball with a relative accuracy of at least so many bits.
+
+    Interval Newton method: the root lies in m - f(m) / f'(X) for the midpoint m of a ball X that holds it (Moore,
+    Interval Analysis, 1966, section 7.2); the working precision is doubled while the ball does not shrink.
+    """
+    if ball.rel_accuracy_bits() >= bits:
+        return ball
+    real = ball.imag.is_zero()
+    slope = f.derivative()
+    work = bits + 64
+    for _ in range(4):
+        value: Any
+        rate: Any
+        with precision(work):
+            value, rate = (arb_poly(f), arb_poly(slope)) if real else (acb_poly(f), acb_poly(slope))
+            x: Any = ball.real if real else ball
+            while True:
+                accuracy = x.rel_accuracy_bits()
+                if accuracy >= bits:
+                    return acb(x)
+                middle = x.mid()
+                new = middle - value(middle) / rate(x)
+                if not new.is_finite():
+                    break
+                new = _common(new, x)
+                if new.rel_accuracy_bits() <= accuracy + 1:
+                    break
+                x = new
+        ball = acb(x)
+        work *= 2
+    with precision(bits + 32):
+        again = [root for root in complex_roots(f) if root.overlaps(ball)]
+    if len(again) != 1:
+        raise ArithmeticError("a root could not be told from its neighbours")
+    return again[0]
+
+
+def _common(new: Any, old: Any) -> Any:
+    """Return a ball around the intersection of two balls that hold the same point."""
+    if isinstance(new, arb):
+        return new.intersection(old)
+    return acb(new.real.intersection(old.real), new.imag.intersection(old.imag))
+
+
+class RationalSearch:
+    """Exact test whether the real roots of one polynomial are rational.
+
+    L times a rational root is an integer, L the leading coefficient: once the ball is narrow enough, one candidate is
+    left. Primes are asked first when L is long: a rational root is a root modulo every prime that does not divide L.
+    """
+
+    def __init__(self, f: fmpz_poly) -> None:
+        self.polynomial = f
+        self.lead = f.leading_coefficient()
+        self.possible: bool | None = None
+        self.residue: nmod_poly | None = None
+
+    def of(self, origin: Origin, ball: acb) -> fmpq | None:
+        """Return the root as a rational, or None if it is irrational (or longer than RATIONAL_CAP bits)."""
+        candidate = self._short(ball.real)
+        if candidate is not None:
+            return candidate
+        size = int(self.lead).bit_length() + max(int(abs(ball.real).upper().man_exp()[1]) + ball.real.bits(), 0) + 8
+        if size > RATIONAL_CAP or (size > RATIONAL_FILTER and not self._possible()):
+            return None
+        if ball.rel_accuracy_bits() < size:
+            ball = origin.at(size)
+        with precision(size + 64):
+            whole = (ball.real * arb(self.lead)).unique_fmpz()
+        if whole is None:
+            return None
+        value = fmpq(whole, self.lead)
+        return value if self.polynomial(value) == 0 else None
+
+    def _short(self, ball: arb) -> fmpq | None:
+        """Return the simplest rational in the ball if it is a root."""
+        middle, radius = exact_value(ball), exact_value(ball.rad())
+        value = simplest(middle - radius, middle + radius)
+        q = prime(0)
+        if value.q % q == 0:
+            return None
+        if self.residue is None:
+            self.residue = nmod_poly([int(c % q) for c in self.polynomial.coeffs()], q)
+        if self.residue(int(value.p % q) * pow(int(value.q), -1, q)):
+            return None
+        return value if self.polynomial(value) == 0 else None
+
+    def _possible(self) -> bool:
+        if self.possible is None:
+            self.possible = True
+            for k in range(4):
+                q = prime(k)
+                if self.lead % q and not nmod_poly([int(c % q) for c in self.polynomial.coeffs()], q).roots():
+                    self.possible = False
+                    break
+        return self.possible
