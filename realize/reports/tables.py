@@ -1,0 +1,435 @@
+"""Receipts and records as text for people: facts first, the verdict in words, 80 columns unless there is more room."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from typing import Any
+
+import numpy as np
+
+from realize.reports.look import PLAIN, Page, bullets, facts, grid, laid_out, words
+from realize.reports.numbers import clean, hertz, prefixed, short
+from realize.schema import Claim, ModelMark, Receipt
+
+#: Rows of a list of poles or zeros before the rest is only counted.
+MOST_ROWS = 24
+VERDICTS = {True: "yes", False: "NO", None: "open"}
+_STYLES = {"yes": "green", "NO": "bold red", "open": "yellow"}
+_OPINIONS = {
+    "agrees": "agrees",
+    "disagrees": "DISAGREES",
+    "failed": "failed (the result stands as it is)",
+    "not-applicable": "not applicable",
+    "not-asked": "not asked for",
+}
+
+
+def receipt_table(conversion: Any, *, page: Page = PLAIN) -> str:
+    """Return the receipt of one step as a short table.
+
+    Parameters
+    ----------
+    conversion : Receipt, (model, receipt), or an object with ``receipt``
+    page : Page, optional
+    """
+    receipt = _receipt_of(conversion)
+    head = [("step", _joined(receipt.step, receipt.method and f"by {receipt.method}"))]
+    head.append(("from", _mark(receipt.source)))
+    head.append(("to", _mark(receipt.result)))
+    if len(receipt.route) > 2:
+        head.append(("route", " → ".join(clean(stop) for stop in receipt.route)))
+    parts: list[Any] = [facts(head)]
+    if receipt.claims:
+        parts += [words(""), claims_grid(receipt.claims)]
+    tail: list[tuple[str, Any]] = []
+    if receipt.fragility:
+        tail.append(("fragility", _fragility(receipt.fragility)))
+    tail.append(("second opinion", _opinion(receipt)))
+    tail.append(("time taken", prefixed(receipt.seconds, "s")))
+    parts += [words(""), facts(tail)]
+    parts += _cautions(receipt.cautions)
+    parts += [words(""), verdict(receipt)]
+    return laid_out(parts, page)
+
+
+def verdict(receipt: Receipt) -> Any:
+    """Return one sentence on whether the limits are kept."""
+    limited = [claim for claim in receipt.claims if claim.limit is not None]
+    if receipt.failed:
+        names = ", ".join(dict.fromkeys(claim.name for claim in receipt.failed))
+        return words(f"FAILED: {names} beyond the limit.", "bold red")
+    if receipt.open:
+        names = ", ".join(dict.fromkeys(claim.name for claim in receipt.open))
+        return words(
+            f"OPEN: {names} measured within the limit, without a bound on what lies between samples.", "yellow"
+        )
+    if limited:
+        return words(f"All {len(limited)} limits are kept." if len(limited) > 1 else "The limit is kept.", "green")
+    return words("No limits were set: the values above are for you to judge.")
+
+
+def claims_grid(claims: Iterable[Claim]) -> Any:
+    """Return the claims as rows: name, value with uncertainty, limit, basis, kept or not, and where and why beneath."""
+    from rich.text import Text
+
+    rows: list[list[Any]] = []
+    for claim in claims:
+        kept = "" if claim.limit is None else VERDICTS[claim.holds]
+        rows.append(
+            [claim.name, value_text(claim), short(claim.limit), claim.basis, Text(kept or "-", _STYLES.get(kept, ""))]
+        )
+    columns = [("claim", "left"), ("value", "left"), ("limit", "right"), ("basis", "left"), ("kept", "left")]
+    from rich.console import Group
+
+    remarks = [(claim.name, text) for claim in claims if (text := _remark(claim))]
+    table = grid(columns, rows)
+    return Group(table, words(""), facts(remarks)) if remarks else table
+
+
+def value_text(claim: Claim) -> str:
+    """Return the value of a claim with its uncertainty and unit, such as ``1.2e-9 ± 3e-12 relative``."""
+    if claim.infinite:
+        return "infinite"
+    if claim.value is None:
+        return "not available"
+    if claim.name == "stability":
+        return "stable" if claim.value else "UNSTABLE"
+    if claim.name == "order":
+        return short(int(claim.value) if float(claim.value).is_integer() else claim.value)
+    text = short(claim.value)
+    if claim.uncertainty:
+        text += f" ± {short(claim.uncertainty, 2)}"
+    unit = "" if claim.unit == "1" else clean(claim.unit, 24)
+    return _joined(text, unit)
+
+
+def _remark(claim: Claim) -> str:
+    parts = []
+    if claim.relative is not None and claim.unit != "relative":
+        parts.append(f"{short(claim.relative)} relative to the largest gain")
+    frequency = claim.where.get("frequency")
+    if isinstance(frequency, (int, float)) and claim.value:
+        parts.append(f"at {short(frequency, 4)} rad/s ({hertz(frequency, 4)})")
+    spots = [f"{key} {claim.where[key]}" for key in ("output", "input") if claim.where.get(key) is not None]
+    if spots and claim.value:
+        parts.append(", ".join(spots))
+    if claim.note:
+        parts.append(clean(claim.note, 300))
+    return "; ".join(parts)
+
+
+def _receipt_of(conversion: Any) -> Receipt:
+    if isinstance(conversion, Receipt):
+        return conversion
+    if isinstance(conversion, tuple):
+        return conversion[1]
+    return conversion.receipt
+
+
+def _joined(*parts: Any) -> str:
+    return " ".join(str(part) for part in parts if part)
+
+
+def _mark(mark: ModelMark) -> str:
+    return mark.kind if mark.order is None else f"{mark.kind}, order {mark.order}"
+
+
+def _fragility(fragility: Mapping[str, float | None]) -> str:
+    return (
+        ", ".join(f"{name} {short(value)}" for name, value in fragility.items())
+        + " (relative, one rounding of its numbers)"
+    )
+
+
+def _opinion(receipt: Receipt) -> str:
+    opinion = receipt.second_opinion
+    text = _OPINIONS.get(opinion.status, opinion.status)
+    if opinion.by and opinion.status not in ("not-asked",):
+        text = f"{clean(opinion.by)} {text}"
+    if opinion.agreement is not None:
+        text += f", difference {short(opinion.agreement)}"
+    return f"{text}; {clean(opinion.note, 300)}" if opinion.note else text
+
+
+def _cautions(cautions: Sequence[str]) -> list[Any]:
+    return [words(""), words("cautions", "bold"), bullets([clean(text, 1000) for text in cautions])] if cautions else []
+
+
+def poles_table(
+    poles: Iterable[tuple[complex, int]], period: float | None = None, *, name: str = "pole", page: Page = PLAIN
+) -> str:
+    """Return poles (or zeros) as a table: size in rad/s and Hz, damping ratio, the number itself, multiplicity.
+
+    Parameters
+    ----------
+    poles : iterable of (complex, multiplicity)
+        A conjugate pair is shown once; a member without its mate is shown by itself.
+    period : float, optional
+        Sampling period, s: the numbers are then of z, and frequency and damping are those of ln(z) / period.
+    name : str, optional
+        Heading: ``pole`` or ``zero``.
+    """
+    return laid_out([roots_grid(poles, period, name)], page)
+
+
+def roots_grid(poles: Iterable[tuple[complex, int]], period: float | None, name: str) -> Any:
+    """Return the table of `poles_table` before it is laid out."""
+    from rich.console import Group
+
+    listed = _paired([(complex(value), int(count)) for value, count in poles])
+    rows = []
+    for value, count, paired in listed[:MOST_ROWS]:
+        equivalent = _equivalent(value, period)
+        size = abs(equivalent)
+        number = short(value.real, 4)
+        if value.imag:
+            sign = "±" if paired else "+" if value.imag > 0 else "-"
+            number += f" {sign} {short(abs(value.imag), 4)}j"
+        known = math.isfinite(size)
+        rows.append(
+            [
+                number,
+                short(size, 4) if known else "-",
+                hertz(size) if known else "-",
+                _damping(equivalent),
+                _character(value, equivalent, period, name),
+                f"{count}×" if count > 1 else "",
+            ]
+        )
+    if not rows:
+        return words(f"no {name}s")
+    columns = [
+        (name, "left"),
+        ("rad/s", "right"),
+        ("frequency", "right"),
+        ("damping", "right"),
+        ("", "left"),
+        ("times", "left"),
+    ]
+    if not any(row[5] for row in rows):
+        columns, rows = columns[:5], [row[:5] for row in rows]
+    table = grid(columns, rows)
+    if len(listed) > MOST_ROWS:
+        return Group(table, words(f"... and {len(listed) - MOST_ROWS} more rows, by size"))
+    return table
+
+
+def _paired(roots: list[tuple[complex, int]]) -> list[tuple[complex, int, bool]]:
+    """Return (root, multiplicity, with its conjugate?), each pair once, by size."""
+    waiting: dict[tuple[complex, int], int] = {}
+    result: list[tuple[complex, int, bool]] = []
+    for value, count in roots:
+        mate = (value.conjugate(), count)
+        if value.imag and waiting.get(mate):
+            waiting[mate] -= 1
+            where = next(k for k, (v, c, p) in enumerate(result) if (v, c) == mate and not p)
+            result[where] = (complex(value.real, abs(value.imag)), count, True)
+        else:
+            if value.imag:
+                waiting[(value, count)] = waiting.get((value, count), 0) + 1
+            result.append((value, count, False))
+    return sorted(result, key=lambda row: (abs(row[0]), row[0].real, row[0].imag))
+
+
+def _equivalent(value: complex, period: float | None) -> complex:
+    if period is None:
+        return value
+    return complex(-math.inf) if value == 0 else complex(np.log(value)) / period
+
+
+def _damping(equivalent: complex) -> str:
+    size = abs(equivalent)
+    if size == 0 or not math.isfinite(size):
+        return "-"
+    return short(0.0 - equivalent.real / size + 0.0)
+
+
+def _character(value: complex, equivalent: complex, period: float | None, name: str) -> str:
+    if name != "pole":
+        right = abs(value) > 1 if period is not None else value.real > 0
+        return "non-minimum phase" if right else ""
+    if period is not None and value == 0:
+        return "delay"
+    distance = abs(value) - 1 if period is not None else value.real
+    if distance > 0:
+        return "UNSTABLE"
+    if distance == 0:
+        return "integrator" if equivalent == 0 else "on the boundary"
+    return ""
+
+
+def _roots_of(record: Mapping[str, Any], field: str) -> list[tuple[complex, int]] | None:
+    rows = record.get(field)
+    if rows is None:
+        return None
+    return [(complex(row[0], row[1]), int(row[2]) if len(row) > 2 else 1) for row in rows]
+
+
+def _signals(entries: Any) -> str:
+    if isinstance(entries, int):
+        return str(entries)
+    texts = []
+    for k, entry in enumerate(entries):
+        name, unit = (entry.get("name", ""), entry.get("unit", "")) if isinstance(entry, Mapping) else (str(entry), "")
+        texts.append(_joined(clean(name) or f"number {k}", unit and f"({clean(unit)})"))
+    shown = ", ".join(texts[:8])
+    return f"{len(texts)}: {shown}" + (f", and {len(texts) - 8} more" if len(texts) > 8 else "")
+
+
+def inspect_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
+    """Return the record of ``inspect`` as text: what the plant is, its poles and zeros, and what is wrong with it.
+
+    Fields that the record does not have are left out.
+    """
+    period = _period(record)
+    rows: list[tuple[str, Any]] = []
+    if "file" in record:
+        rows.append(("file", clean(record["file"], 200)))
+    rows.append(("kind", record.get("kind", "-")))
+    if record.get("order") is not None:
+        minimal = record.get("minimal_order")
+        text = str(record["order"])
+        if minimal is not None:
+            text += " (minimal)" if minimal == record["order"] else f", of which {minimal} are needed (minimal order)"
+        rows.append(("order", text))
+    rows.append(
+        (
+            "time",
+            "continuous"
+            if period is None
+            else f"sampled, {prefixed(period, 's', 4)} ({prefixed(1 / period, 'Hz', 4)})",
+        )
+    )
+    for name in ("inputs", "outputs"):
+        if name in record:
+            rows.append((name, _signals(record[name])))
+    if "stable" in record:
+        rows.append(
+            ("stable", {True: "yes", False: "NO", None: "not decided"}.get(record["stable"], str(record["stable"])))
+        )
+    known = (
+        "file",
+        "kind",
+        "order",
+        "minimal_order",
+        "time",
+        "period",
+        "inputs",
+        "outputs",
+        "stable",
+        "poles",
+        "zeros",
+    )
+    known += ("hankel_singular_values", "fragility", "cautions", "realize", "digest", "receipts", "history")
+    for name, value in record.items():
+        if name not in known and isinstance(value, (bool, int, float, str)):
+            rows.append((name.replace("_", " "), clean(value, 200) if isinstance(value, str) else short(value, 4)))
+    fragility = record.get("fragility")
+    if isinstance(fragility, Mapping):
+        rows.append(("fragility", _fragility(fragility)))
+    elif fragility is not None:
+        rows.append(("fragility", f"{short(fragility)} (relative, one rounding of its numbers)"))
+    hankel = record.get("hankel_singular_values")
+    if hankel:
+        rows.append(("Hankel values", _sequence(hankel)))
+    if record.get("digest"):
+        rows.append(("digest", str(record["digest"])))
+    parts: list[Any] = [facts(rows)]
+    for field, name in (("poles", "pole"), ("zeros", "zero")):
+        roots = _roots_of(record, field)
+        if roots is not None:
+            parts += [words(""), roots_grid(roots, period, name)]
+    parts += _cautions(record.get("cautions") or [])
+    return laid_out(parts, page)
+
+
+def _period(record: Mapping[str, Any]) -> float | None:
+    if record.get("period") is not None:
+        return float(record["period"])
+    time = record.get("time")
+    if isinstance(time, Mapping) and time.get("domain") == "sampled":
+        return float(time["period"]) if time.get("period") is not None else 1 / float(time["rate"])
+    return None
+
+
+def _sequence(values: Sequence[Any], most: int = 12) -> str:
+    numbers = [entry.get("value") if isinstance(entry, Mapping) else entry for entry in values]
+    shown = ", ".join(short(value) for value in numbers[:most])
+    return shown + (f", ... {short(numbers[-1])} ({len(numbers)} in all)" if len(numbers) > most else "")
+
+
+def compare_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
+    """Return the record of ``compare`` as text.
+
+    Parameters
+    ----------
+    record : mapping
+        Claims by name, or ``comparisons``: a list of such mappings, each with the names of its two models under ``a`` and
+        ``b`` where given. A claim is a `Claim` or its plain record.
+    """
+    parts: list[Any] = []
+    for number, one in enumerate(record.get("comparisons") or [record]):
+        if number:
+            parts.append(words(""))
+        pair = [clean(one[key], 100) for key in ("a", "b") if isinstance(one.get(key), str)]
+        if pair:
+            parts.append(words(" against ".join(reversed(pair)), "bold"))
+        claims = _claims_in(one)
+        parts.append(claims_grid(claims) if claims else words("nothing could be compared"))
+        parts += _cautions(one.get("cautions") or [])
+    if "comparisons" in record:
+        parts += _cautions(record.get("cautions") or [])
+    return laid_out(parts, page)
+
+
+def _claims_in(record: Mapping[str, Any]) -> list[Claim]:
+    import msgspec
+
+    listed = record["claims"] if isinstance(record.get("claims"), list) else list(record.values())
+    names = [None] * len(listed) if isinstance(record.get("claims"), list) else list(record)
+    claims = []
+    for name, entry in zip(names, listed, strict=True):
+        if isinstance(entry, Claim):
+            claims.append(entry)
+        elif isinstance(entry, Mapping) and "value" in entry:
+            claims.append(msgspec.convert({"name": name, **entry} if name else dict(entry), Claim))
+    return claims
+
+
+def fit_table(candidates: Iterable[Mapping[str, Any]], *, page: Page = PLAIN) -> str:
+    """Return the orders that a fit tried as a table, the kept one marked.
+
+    Parameters
+    ----------
+    candidates : iterable of mappings
+        ``order``, ``rms`` (relative misfit), ``weighted`` (1 = as large as the noise), ``criterion`` (smaller is better),
+        ``kept``; a ``note`` where given.
+    """
+    rows, noted = [], False
+    listed = [dict(candidate) for candidate in candidates]
+    for one in listed:
+        note = clean(one.get("note") or one.get("why") or "", 200)
+        noted = noted or bool(note)
+        rms = one.get("rms")
+        rows.append(
+            [
+                str(one.get("order", "-")),
+                "-" if rms is None else f"{short(100 * rms)} %",
+                short(one.get("weighted")),
+                short(one.get("criterion"), 5),
+                "kept" if one.get("kept") else "",
+                note,
+            ]
+        )
+    columns = [
+        ("order", "right"),
+        ("misfit", "right"),
+        ("misfit/noise", "right"),
+        ("criterion", "right"),
+        ("", "left"),
+        ("", "left"),
+    ]
+    if not noted:
+        columns, rows = columns[:-1], [row[:-1] for row in rows]
+    return laid_out([grid(columns, rows) if rows else words("no order was tried")], page)
