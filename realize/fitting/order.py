@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
 from realize.kernels.variable_projection import best_additions, polished
 from realize.kernels.vector_fitting import ordered_poles, separated_poles, starting_poles, vector_fit
@@ -22,6 +23,14 @@ ComplexArray = NDArray[np.complex128]
 HIGHEST_ORDER = 40
 #: ``auto`` stops after this many orders in a row without a better criterion (two pairs).
 PATIENCE = 4
+#: Up to this order every order is tried, above it every second one.
+EVERY_ORDER = 12
+#: Up to this order a start by vector fitting is tried beside the warm ones.
+FRESH_ORDER = 20
+#: Misfit power this much above that of the noise is as good as the noise: the criterion alone decides.
+NEAR_NOISE = 0.25
+#: Further above the noise two more poles must leave less than this share of the excess misfit power.
+WORTH = 0.65
 #: Band edges further apart than this get logarithmically spaced starting poles, others linearly spaced ones.
 WIDE = 10.0
 
@@ -92,56 +101,122 @@ class Search:
             starts.append(ordered_poles(np.concatenate([self.best[order - 1].poles, self.additions(order - 1)[1]])))
         if order - 2 in self.best:
             starts.append(ordered_poles(np.concatenate([self.best[order - 2].poles, self.additions(order - 2)[0]])))
-        trials = [polish(problem, s, 20, 1e-4) for s in starts]
+        trials = [polish(problem, s, 12, 1e-3) for s in starts]
         spacings = [spacing_of(problem)] if starts else ["logarithmic", "linear", "real"]
+        if starts and order > FRESH_ORDER:
+            spacings = []
         fresh = [relocate(problem, start(problem, order, s), 8 if starts else 20) for s in spacings]
         lowest = min((t.cost for t in trials), default=np.inf)
         # a relocated start that is far behind is not worth a polish
-        trials += [polish(problem, t.poles, 20, 1e-4) for t in fresh if not starts or t.cost < 2 * lowest]
+        trials += [polish(problem, t.poles, 12, 1e-3) for t in fresh if not starts or t.cost < 2 * lowest]
         best = min(trials + fresh, key=lambda t: t.cost)
         if best.cost > problem.floor:
-            best = polish(problem, best.poles, 20, 1e-6)
+            best = polish(problem, best.poles, 12, 1e-4)
         self.best[order] = best
         return best
 
     def criterion(self, order: int) -> float:
         return self.problem.criterion(order, self.best[order].cost)
 
-    def grow(self, lowest: int, highest: int, patience: int = PATIENCE) -> int:
-        """Fit orders 0 to ``highest`` until ``patience`` of them brought nothing; return the order chosen."""
+    def grow(self, lowest: int, highest: int) -> None:
+        """Fit orders from 0 until the criterion has not improved for ``PATIENCE`` orders, or to ``highest``."""
+        orders = list(range(min(highest, EVERY_ORDER) + 1))
+        orders += [n for n in range(EVERY_ORDER + 1, highest + 1) if (n - highest) % 2 == 0]
         chosen = lowest
-        for order in range(highest + 1):
+        for order in orders:
             self.fit(order)
             if order < lowest:
                 continue
-            if order == lowest or self.criterion(order) < self.criterion(chosen):
+            if lowest not in self.best:
+                chosen = lowest = order
+            if self.criterion(order) < self.criterion(chosen):
                 chosen = order
-            if order - chosen >= patience or self.best[order].cost <= self.problem.floor:
+            if order - chosen >= PATIENCE or self.best[order].cost <= self.problem.floor:
                 break
+
+    def noise_power(self) -> float:
+        """Return the cost that noise alone would leave: given, or from what neighbouring misfits do not predict.
+
+        The misfit of the largest order fitted is taken, with the degrees of freedom that it has left.
+        """
+        p = self.problem
+        half = p.numbers / 2
+        if p.known:
+            return half
+        top = self.best[max(self.best)]
+        factor = noise_factor(p.x, p.misfit(top.poles), p.weights)
+        return half * factor**2 * p.numbers / max(p.numbers - p.unknowns(top.order), 1)
+
+    def choose(self, lowest: int, noise: float) -> int:
+        """Return the order at which no larger one is worth its poles."""
+        orders = [n for n in sorted(self.best) if n >= lowest]
+        chosen = orders[0]
+        for order in orders[1:]:
+            if worthwhile(self.problem, self.best[chosen], self.best[order], noise):
+                chosen = order
         return chosen
 
-    def prune(self, order: int, lowest: int) -> Trial:
-        """Return the fit after leaving out, one by one, poles whose absence improves the criterion."""
+    def prune(self, order: int, lowest: int, noise: float) -> Trial:
+        """Return the fit after leaving out, one by one, poles that are not worth their place or that fit one line."""
         trial = self.best[order]
         while trial.order > lowest:
             p = self.problem
-            upper = np.flatnonzero(trial.poles.imag >= 0)
-            shorter = []
-            for k in upper:
-                gone = [k, k + 1] if trial.poles[k].imag > 0 else [k]
-                poles = np.delete(trial.poles, gone)
-                if poles.size >= lowest:
-                    shorter.append(polish(p, poles, 0, 1.0))
+            shorter = [polish(p, q, 0, 1.0) for q in _shorter(trial.poles) if q.size >= lowest]
             if not shorter:
                 break
             candidate = polish(p, min(shorter, key=lambda t: p.criterion(t.order, t.cost)).poles, 30, 1e-5)
-            if p.criterion(candidate.order, candidate.cost) >= p.criterion(trial.order, trial.cost):
-                break
+            if worthwhile(p, candidate, trial, noise):
+                spikes = [k for k in single_line_poles(p, trial.poles) if trial.order - 2 >= lowest]
+                if not spikes:
+                    break
+                candidate = polish(p, np.delete(trial.poles, [spikes[0], spikes[0] + 1]), 30, 1e-5)
             trial = candidate
-            known = self.best.get(trial.order)
-            if known is None or trial.cost < known.cost:
-                self.best[trial.order] = trial
+            self.best[trial.order] = trial
         return trial
+
+
+def worthwhile(problem: Problem, small: Trial, large: Trial, noise: float) -> bool:
+    """Return whether the larger fit is worth its additional poles.
+
+    The criterion must be lower. Where the misfit of the smaller fit is well above the noise (real structures are not
+    exactly rational, and their errors are alike on neighbouring lines, so that the criterion alone never stops), each
+    two poles must also take at least a third of the misfit power in excess of the noise.
+    """
+    if problem.criterion(large.order, large.cost) >= problem.criterion(small.order, small.cost):
+        return False
+    noise = max(noise, problem.floor)
+    before, after = small.cost - noise, large.cost - noise
+    if before <= NEAR_NOISE * noise:
+        return True
+    return after <= WORTH ** ((large.order - small.order) / 2) * before
+
+
+def _shorter(poles: ComplexArray) -> list[ComplexArray]:
+    upper = np.flatnonzero(poles.imag >= 0)
+    return [np.delete(poles, [k, k + 1] if poles[k].imag > 0 else [k]) for k in upper]
+
+
+def single_line_poles(problem: Problem, poles: ComplexArray) -> list[int]:
+    """Return the pairs (first member's index) that only one or two lines call for.
+
+    A pair narrower than the distance of the lines is tried again without the two nearest lines: if the others do not
+    need it by the criterion, it stands for errors of these lines, not for a resonance.
+    """
+    x = problem.x
+    found = []
+    for k in np.flatnonzero(poles.imag > 0):
+        place = abs(poles[k])
+        j = int(np.clip(np.searchsorted(x, place), 1, x.size - 1))
+        if -poles[k].real > x[j] - x[j - 1]:
+            continue
+        weights = problem.weights.copy()
+        weights[np.argsort(np.abs(x - place), kind="stable")[:2]] = 0
+        rest = problem.with_weights(weights)
+        with_it = polish(rest, poles, 0, 1.0)
+        without = polish(rest, np.delete(poles, [k, k + 1]), 0, 1.0)
+        if rest.criterion(without.order, without.cost) <= rest.criterion(with_it.order, with_it.cost):
+            found.append(int(k))
+    return found
 
 
 def finished(problem: Problem, trial: Trial) -> Trial:

@@ -11,6 +11,8 @@ from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate
 from realize.fitting.registry import Method, Outcome, register
 
+ComplexArray = NDArray[np.complex128]
+
 #: Estimated deviations are estimated again from the misfit when one line's share moved by more than this factor.
 MOVED = 1.5
 #: A fixed order up to this is reached through all smaller orders as well.
@@ -31,14 +33,16 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
     direct_auto : bool
         Try without direct term as well, and keep it only where the criterion is better with it.
     """
-    search, chosen = _searched(problem, lowest, highest, None)
-    if problem.estimated and search.best[chosen].cost > problem.floor:
+    search = _searched(problem, lowest, highest, None)
+    if problem.estimated and min(t.cost for t in search.best.values()) > problem.floor:
         again = _weights_from_misfit(problem, search.best[max(search.best)])
         if again is not None:
             known = {n: t.poles for n, t in search.best.items()}
-            search, chosen = _searched(problem.with_weights(again), lowest, highest, known)
+            search = _searched(problem.with_weights(again), lowest, highest, known)
     solved = search.problem
-    trial = finished(solved, search.prune(chosen, lowest))
+    noise = search.noise_power()
+    chosen = search.choose(lowest, noise)
+    trial = finished(solved, search.prune(chosen, lowest, noise))
     search.best[trial.order] = trial
     if direct_auto:
         without = finished(solved.with_direct(False), trial)
@@ -48,13 +52,14 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
     return Outcome(solved, trial.poles, _candidates(search, trial))
 
 
-def _searched(problem: Problem, lowest: int, highest: int, known: dict | None) -> tuple[Search, int]:
+def _searched(problem: Problem, lowest: int, highest: int, known: dict[int, ComplexArray] | None) -> Search:
     search = Search(problem, known)
     if lowest == highest and highest > LONGEST_LADDER:
         fresh = [relocate(problem, start(problem, highest, s), 20) for s in ("logarithmic", "linear", "real")]
         search.best[highest] = min(fresh, key=lambda t: t.cost)
-        return search, highest
-    return search, search.grow(lowest, highest)
+    else:
+        search.grow(lowest, highest)
+    return search
 
 
 def _weights_from_misfit(problem: Problem, trial: Trial) -> NDArray[np.float64] | None:

@@ -22,7 +22,7 @@ from realize.kernels.vector_fitting import ordered_poles, stacked
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
-#: Unknowns stay within this distance of the middle of the (normalised) band, in natural logarithms: 13 decades.
+#: Unknowns stay within this distance of the middle of the (normalised) band, in natural logarithms: 13 decades each way.
 FARTHEST = 30.0
 
 
@@ -135,17 +135,18 @@ class Projection:
             self.norms.append(norm)
             self.cost += float(rest @ rest)
 
-    def normal_rows(self) -> Array:
-        """Return the triangular factor of [J, r] over all channels, J in the approximation of reference 2."""
-        rows = []
+    def normal_equations(self) -> tuple[Array, Array]:
+        """Return J^T J and J^T r over all channels, J in the approximation of reference 2."""
+        square, right = np.zeros((self.n, self.n)), np.zeros(self.n)
         for c, (q, r, rest, z, norm) in enumerate(
             zip(self.orthonormal, self.triangle, self.residual, self.target, self.norms, strict=True)
         ):
             coefficient = np.linalg.lstsq(r, z, rcond=max(q.shape) * np.finfo(float).eps)[0] / norm
             slope = -stacked(self.weights[:, c, None] * self.sections.derivatives(coefficient[: self.n]))
             slope -= q @ (q.T @ slope)
-            rows.append(np.linalg.qr(np.hstack([slope, rest[:, None]]), mode="r"))
-        return np.vstack(rows)
+            square += slope.T @ slope
+            right += slope.T @ rest
+        return square, right
 
 
 def polished(
@@ -177,7 +178,7 @@ def polished(
         Two steps in a row that lower the cost by less than this fraction are the last.
     """
     w, a, single = sections_of(poles)
-    unknowns = np.clip(np.log(np.concatenate([w, a, single])), -2 * FARTHEST, FARTHEST)
+    unknowns = np.clip(np.log(np.concatenate([w, a, single])), -FARTHEST, FARTHEST)
     pairs = w.size
 
     def at(theta: Array) -> Projection:
@@ -190,20 +191,18 @@ def polished(
     total = float(np.sum(np.abs(weights * values) ** 2))
     floor = (4 * np.finfo(float).eps) ** 2 * total
     damping, growth = 1e-3, 2.0
-    factor = np.linalg.qr(here.normal_rows(), mode="r")
+    square, right = here.normal_equations()
     small = 0
     for _ in range(iterations):
-        jacobian, right = factor[:, :-1], factor[:, -1]
-        size = np.linalg.norm(jacobian, axis=0)
+        size = np.sqrt(np.diagonal(square))
         size = np.where(size > 0, size, 1.0)
-        scaled = jacobian / size
-        matrix = np.vstack([scaled, np.sqrt(damping) * np.eye(size.size)])
-        step = np.linalg.lstsq(matrix, np.append(-right, np.zeros(size.size)), rcond=None)[0]
-        predicted = float(np.sum(right**2) - np.sum((scaled @ step + right) ** 2))
+        scaled, target = square / np.outer(size, size), right / size
+        step = np.linalg.solve(scaled + damping * np.eye(size.size), -target)
+        predicted = float(-2 * step @ target - step @ scaled @ step)
         step = step / size
         step *= min(1.0, 1.0 / max(np.max(np.abs(step)), 1e-300))
         # a logarithm of the damping below -2 FARTHEST is an undamped pole: it stops there
-        trial = np.clip(unknowns + step, -2 * FARTHEST, FARTHEST)
+        trial = np.clip(unknowns + step, -FARTHEST, FARTHEST)
         there = at(trial)
         gain = here.cost - there.cost
         if gain > 0:
@@ -211,7 +210,7 @@ def polished(
             unknowns, here = trial, there
             if here.cost <= floor or small >= 2:
                 break
-            factor = np.linalg.qr(here.normal_rows(), mode="r")
+            square, right = here.normal_equations()
             damping = max(damping * max(1 / 3, 1 - (2 * gain / max(predicted, gain * 1e-3) - 1) ** 3), 1e-12)
             growth = 2.0
         else:
