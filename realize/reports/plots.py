@@ -136,7 +136,8 @@ def _notes(listed: Entries, band: Band) -> list[str]:
 
 
 def _pole_sets(listed: Entries) -> tuple[dict[int, Any], dict[int, Any]]:
-    continuous, sampled = {}, {}
+    continuous: dict[int, Any] = {}
+    sampled: dict[int, Any] = {}
     for k, (_, model) in enumerate(listed):
         poles = poles_of(model)
         if poles.size:
@@ -153,6 +154,7 @@ def figure_of(
 ) -> Any:
     """Return the page as a matplotlib figure, not yet written; parameters as for `draw`, inside `page_settings`."""
     from matplotlib.figure import Figure
+    from matplotlib.layout_engine import ConstrainedLayoutEngine
 
     listed = _checked(entries, band)
     models = [model for _, model in listed]
@@ -180,8 +182,8 @@ def figure_of(
 
     width = max((7.5, 11.0, 13.5)[columns - 1], (7.5, 7.5, 11.0, 13.5)[max(len(extra) - 1, 0)])
     heights = [2.2, 1.6] * rows + ([3.3] if extra else [])
-    figure = Figure(figsize=(width, sum(heights) + 0.9), layout="constrained")
-    figure.get_layout_engine().set(w_pad=0.08, h_pad=0.06, hspace=0.02, wspace=0.03)
+    engine = ConstrainedLayoutEngine(w_pad=0.08, h_pad=0.06, hspace=0.02, wspace=0.03)
+    figure = Figure(figsize=(width, sum(heights) + 0.9), layout=engine)
     slots = max(len(extra), columns)
     parts = math.lcm(columns, slots)
     grid = figure.add_gridspec(len(heights), parts, height_ratios=heights)
