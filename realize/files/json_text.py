@@ -1,0 +1,118 @@
+"""JSON text to plain objects, strictly, and back, readably.
+
+Where JSON readers are lenient, marks are left in the result, so that the field that is wrong can be named: `Mark` for
+NaN, Infinity and integers without end, `Twice` for an object that has a name twice.
+"""
+
+from __future__ import annotations
+
+import json
+import re
+from typing import Any
+
+from realize.errors import InputError
+from realize.files.sources import require_memory
+from realize.models.checks import MAX_DIGITS
+
+_MINUS_ZERO = re.compile(r"-0(?![.\deE])")
+#: Longest line of a list that is written on one line, characters.
+LINE = 100
+
+
+class Mark:
+    """Something in a numeric place that this format does not have; ``text`` is what to call it."""
+
+    __slots__ = ("text",)
+
+    def __init__(self, text: str) -> None:
+        self.text = text
+
+
+class Twice(dict[str, Any]):
+    """An object in which ``key`` occurs more than once."""
+
+    key = ""
+
+
+def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
+    result = dict(pairs)
+    if len(result) == len(pairs):
+        return result
+    marked = Twice(result)
+    names = [name for name, _ in pairs]
+    marked.key = next(name for k, name in enumerate(names) if name in names[:k])
+    return marked
+
+
+def _integer(text: str) -> Any:
+    if len(text) > MAX_DIGITS:
+        return Mark(f"an integer of {len(text.lstrip('-'))} digits")
+    return -0.0 if text == "-0" else int(text)
+
+
+def parse(data: bytes) -> Any:
+    """Return the JSON value of UTF-8 text (a byte order mark is skipped).
+
+    Raises InputError with line and column where the text is no JSON; `Mark` and `Twice` stay in the result.
+    """
+    try:
+        text = data.decode("utf-8-sig")
+    except UnicodeDecodeError as error:
+        line = data.count(b"\n", 0, error.start) + 1
+        raise InputError(
+            f"byte 0x{data[error.start]:02x}, which is not UTF-8",
+            "UTF-8 text",
+            field=f"line {line}, byte {error.start}",
+        ) from None
+    if not text.strip(" \t\r\n"):
+        raise InputError("nothing but blanks" if text else "an empty file", "one JSON object with a model")
+    # lists of 64 bytes, objects of 250, and 32 bytes for each number beside its place in a list
+    require_memory(
+        3 * len(data) + 64 * data.count(b"[") + 250 * data.count(b"{") + 40 * data.count(b","), "reading this text"
+    )
+    integers = _integer if _MINUS_ZERO.search(text) else None
+    try:
+        try:
+            return json.loads(text, object_pairs_hook=_object, parse_constant=Mark, parse_int=integers)
+        except json.JSONDecodeError:
+            raise
+        except ValueError:  # an integer beyond what Python converts
+            return json.loads(text, object_pairs_hook=_object, parse_constant=Mark, parse_int=_integer)
+    except json.JSONDecodeError as error:
+        near = text[error.pos : error.pos + 20].split("\n")[0]
+        after = f" at {near!r}" if near else " at the end of the text"
+        what = error.msg[:1].lower() + error.msg[1:]
+        if error.msg == "Extra data":
+            what = "more text after the end of the value"
+        raise InputError(
+            f"not JSON: {what}{after}", "one JSON object", field=f"line {error.lineno}, column {error.colno}"
+        ) from None
+    except RecursionError:
+        raise InputError("lists or objects nested too deeply", "at most five levels of lists") from None
+
+
+def _depth(value: Any) -> int:
+    depth = 0
+    while isinstance(value, list) and value:
+        value, depth = value[0], depth + 1
+    return depth
+
+
+def one_line(value: Any) -> str:
+    """Return a plain value as JSON on one line."""
+    return json.dumps(value, ensure_ascii=False, allow_nan=False)
+
+
+def write(record: dict[str, Any]) -> str:
+    """Return an object as JSON: a line for each field, and for each row of a matrix or entry of a long list."""
+    fields = []
+    for name, value in record.items():
+        text = one_line(value)
+        rows = isinstance(value, list) and len(value) > 1 and (_depth(value) >= 2 or isinstance(value[0], dict))
+        if rows and (len(text) > LINE or _depth(value) == 2):
+            inner = [one_line(entry) for entry in value]
+            pairs = _depth(value) == 2 and all(len(entry) == 2 for entry in value)
+            if not (pairs and len(text) <= LINE):
+                text = "[\n    " + ",\n    ".join(inner) + "\n  ]"
+        fields.append(f"  {one_line(name)}: {text}")
+    return "{\n" + ",\n".join(fields) + "\n}\n"
