@@ -25,8 +25,8 @@ class Scaled:
     """A model in units of its own: exact powers of two taken out.
 
     A = 2^time S A' S^-1, B = 2^input S B', C = 2^output C' S^-1 with S = diag(2^states), and
-    C (sI - A)^-1 B = 2^(input + output - time) C' (s' I - A')^-1 B' at s = 2^time s'. `input` and `output` are both even
-    or both odd, so that the balanced coordinates of the two models differ by powers of two only.
+    C (sI - A)^-1 B = 2^(input + output - time) C' (s' I - A')^-1 B' at s = 2^time s'. `input` and `output` are both
+    even or both odd, so that the balanced coordinates of the two models differ by powers of two only.
     """
 
     A: Array
@@ -55,8 +55,8 @@ def _power(matrix: Array, exponents: NDArray[np.int64] | int) -> Array:
 def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
     """Take units of time, inputs, outputs and states out of a model in powers of two.
 
-    The states are balanced on the bordered matrix [A B; C 0], so that inputs and outputs count too; all inputs share one
-    factor and all outputs another, because balanced truncation depends on the weights between them.
+    The states are balanced on the bordered matrix [A B; C 0], so that inputs and outputs count too; all inputs share
+    one factor and all outputs another, because balanced truncation depends on the weights between them.
 
     Parameters
     ----------
@@ -163,8 +163,8 @@ def _product_svd(R: Array, L: Array) -> tuple[Array, Array, Array]:
 def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFactors:
     """Return Gramian factors and Hankel singular values of a stable model in real Schur form.
 
-    The values are the singular values of R L [1]_. Up to order 500 they are computed once more from the dual model, whose
-    rounding errors are independent; three times the largest difference among neighbours is the estimated error.
+    The values are the singular values of R L [1]_. Up to order 500 they are computed once more from the dual model,
+    whose rounding errors are independent; three times the largest difference among neighbours is the estimated error.
     Beyond, it is n eps |R| |L|.
 
     Parameters
@@ -186,8 +186,8 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
 
     References
     ----------
-    .. [1] M. S. Tombs, I. Postlethwaite, Truncated balanced realization of a stable non-minimal state-space system, Int. J.
-           Control 46 (1987) 1319-1330.
+    .. [1] M. S. Tombs, I. Postlethwaite, Truncated balanced realization of a stable non-minimal state-space system,
+           Int. J. Control 46 (1987) 1319-1330.
     """
     n = T.shape[0]
     L, R = schur_gramian_factors(T, B, C, sampled=sampled)
@@ -251,9 +251,9 @@ def truncation(
 ) -> tuple[Array, Array]:
     """Return (W, V) with W'V = I that project a model on its `order` most significant balanced states.
 
-    V = L Z1 S1^-1/2, W = R'U1 S1^-1/2 gives balanced coordinates [1]_; with `orthogonal` their column spaces are spanned by
-    orthonormal bases first, which is better conditioned and not balanced [2]_. Signs: the first large entry of each row of
-    W'B (of each column of C V, where that row is zero) is positive.
+    V = L Z1 S1^-1/2, W = R'U1 S1^-1/2 gives balanced coordinates [1]_; with `orthogonal` their column spaces are
+    spanned by orthonormal bases first, which is better conditioned and not balanced [2]_. Signs: the first large entry
+    of each row of W'B (of each column of C V, where that row is zero) is positive.
 
     Parameters
     ----------
