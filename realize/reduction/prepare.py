@@ -1,0 +1,126 @@
+"""What every balancing method starts from: the model scaled, its stable part split off, its Gramian factors."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.errors import InputError, Refused
+from realize.kernels.balancing import HankelFactors, Scaled, equal_groups, hankel_factors, scale_model, tail_bounds
+from realize.kernels.norms import Peak, peak_gain
+from realize.kernels.splitting import Split, split_stable
+
+Array = NDArray[np.float64]
+
+EPS = float(np.finfo(float).eps)
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """A model ready to be reduced: everything here is in the scaled units of `scaled`, except D.
+
+    Attributes
+    ----------
+    scaled : Scaled
+    split : Split
+    factors : HankelFactors
+        Of the stable part.
+    D : array
+        Feed-through in the model's own unit.
+    sampled : bool
+    """
+
+    scaled: Scaled
+    split: Split
+    factors: HankelFactors
+    D: Array
+    sampled: bool
+
+    @property
+    def kept_order(self) -> int:
+        return self.split.kept_poles.size
+
+    @property
+    def stable_order(self) -> int:
+        return self.split.stable_poles.size
+
+    @cached_property
+    def available(self) -> int:
+        """How many Hankel singular values stand clear of rounding: above their own error and n eps times the largest."""
+        values, errors = self.factors.values, self.factors.errors
+        if values.size == 0 or values[0] == 0:
+            return 0
+        clear = (values > errors) & (values > values.size * EPS * values[0])
+        return int(values.size if clear.all() else np.argmin(clear))
+
+    @cached_property
+    def tails(self) -> Array:
+        """Twice the sum of the distinct values beyond the first r, r = 0..n (scaled unit)."""
+        return tail_bounds(self.factors.values)
+
+    @cached_property
+    def groups(self) -> NDArray[np.int64]:
+        """The group of equal values each value belongs to."""
+        return equal_groups(self.factors.values)
+
+    def in_gain(self, value: float) -> float:
+        """Return a scaled gain in the model's own unit; refuses what a double cannot hold."""
+        try:
+            return math.ldexp(value, self.scaled.gain)
+        except OverflowError:
+            raise Refused("the gain of this model is too large for a double; use smaller units") from None
+
+    def cut_allowed(self, order: int) -> bool:
+        """True unless a cut after `order` stable states would divide equal values."""
+        return order <= 0 or order >= self.groups.size or self.groups[order - 1] != self.groups[order]
+
+    def largest_gain(self) -> Peak:
+        """Return the largest gain of the stable part with its feed-through, in the model's own unit."""
+        T, B, C = self.split.stable
+        scaled = np.ldexp(self.D, -self.scaled.gain)
+        found = peak_gain(T, B, C, scaled, sampled=self.sampled, tolerance=1e-10)
+        upper = self.in_gain(found.upper) if math.isfinite(found.upper) else math.inf
+        frequency = math.ldexp(found.frequency, self.scaled.time) if math.isfinite(found.frequency) else math.inf
+        return Peak(self.in_gain(found.value), frequency, upper, found.basis)
+
+
+def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> Prepared:
+    """Scale a state model, separate its stable part and factor the Gramians of that.
+
+    Parameters
+    ----------
+    A, B, C, D : arrays (n, n), (n, m), (p, n), (p, m)
+    sampled : bool
+
+    Returns
+    -------
+    Prepared
+
+    Raises
+    ------
+    InputError
+        If shapes do not match or an entry is not finite.
+    Refused
+        If the stable part cannot be separated.
+    """
+    A, B, C, D = (np.asarray(matrix, dtype=float) for matrix in (A, B, C, D))
+    n = A.shape[0]
+    if A.ndim != 2 or A.shape != (n, n):
+        raise InputError("a matrix that is not square", "n x n", field="A")
+    for name, matrix, shape in (("B", B, (n, D.shape[1])), ("C", C, (D.shape[0], n))):
+        if matrix.shape != shape:
+            raise InputError(f"{matrix.shape}", f"{shape}", field=name)
+    for name, matrix in zip("ABCD", (A, B, C, D), strict=True):
+        if not np.all(np.isfinite(matrix)):
+            raise InputError("an entry that is not a finite number", "finite numbers", field=name)
+    scaled = scale_model(A, B, C, sampled=sampled)
+    try:
+        split = split_stable(scaled.A, scaled.B, scaled.C, sampled=sampled)
+        factors = hankel_factors(*split.stable, sampled=sampled)
+    except ValueError as reason:
+        raise Refused(f"the stable part cannot be separated from the poles on or beyond the axis: {reason}") from None
+    return Prepared(scaled, split, factors, D, sampled)
