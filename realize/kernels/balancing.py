@@ -9,7 +9,7 @@ import scipy.linalg
 import scipy.linalg.lapack
 from numpy.typing import NDArray
 
-from realize.kernels.lyapunov import schur_gramian_factors
+from realize.kernels.lyapunov import SquareRoots, schur_gramian_factors, square_roots
 
 Array = NDArray[np.float64]
 
@@ -102,8 +102,8 @@ class HankelFactors:
 
     Attributes
     ----------
-    controllability, observability : (n, n) arrays L, R
-        L L' and R'R are the Gramians.
+    roots : SquareRoots
+        L and R with L L' and R'R the Gramians, and the model as they see it.
     values : (n,) array
         Hankel singular values, decreasing.
     left, right : (n, n) arrays U, Z
@@ -112,8 +112,7 @@ class HankelFactors:
         Estimated absolute error of each value.
     """
 
-    controllability: Array
-    observability: Array
+    roots: SquareRoots
     values: Array
     left: Array
     right: Array
@@ -190,9 +189,10 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
            Int. J. Control 46 (1987) 1319-1330.
     """
     n = T.shape[0]
-    L, R = schur_gramian_factors(T, B, C, sampled=sampled)
+    roots = square_roots(T, B, C, sampled=sampled)
+    L, R = roots.L, roots.R
     if n == 0:
-        return HankelFactors(L, R, np.zeros(0), L, R, np.zeros(0))
+        return HankelFactors(roots, np.zeros(0), L, R, np.zeros(0))
     U, values, Z = _product_svd(R, L)
     if n <= REPEATED_ORDER:
         # the dual in another Schur form: Gramians change places, rounding errors are drawn anew
@@ -208,7 +208,7 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
         errors = 3 * window + EPS * np.sqrt(n) * values
     else:
         errors = np.full(n, n * EPS * np.linalg.norm(R, 2) * np.linalg.norm(L, 2))
-    return HankelFactors(L, R, values, U, Z, errors)
+    return HankelFactors(roots, values, U, Z, errors)
 
 
 def equal_groups(values: Array) -> NDArray[np.int64]:
@@ -236,33 +236,72 @@ def tail_bounds(values: Array) -> Array:
     return bounds
 
 
-def _signed(columns: Array, weights: Array) -> Array:
-    """Return +1 or -1 per row of weights: the first of its large entries becomes positive."""
-    sign = np.ones(columns.shape[1])
-    for k, row in enumerate(weights):
-        size = np.abs(row)
+def _signs(rows: Array, columns: Array) -> Array:
+    """Return +1 or -1 per state: the first large entry of its row becomes positive, or of its column if the row is noise."""
+    sign = np.ones(rows.shape[0])
+    for k, (row, column) in enumerate(zip(rows, columns, strict=True)):
+        chosen = column if np.linalg.norm(row) <= 1e-8 * np.linalg.norm(column) else row
+        size = np.abs(chosen)
         if size.max(initial=0.0) > 0:
-            sign[k] = np.sign(row[np.argmax(size >= 0.999 * size.max())])
+            sign[k] = np.sign(chosen[np.argmax(size >= 0.999 * size.max())])
     return sign
 
 
-def truncation(
-    T: Array, B: Array, C: Array, factors: HankelFactors, order: int, *, orthogonal: bool
-) -> tuple[Array, Array]:
-    """Return (W, V) with W'V = I that project a model on its `order` most significant balanced states.
+@dataclass(frozen=True)
+class Balanced:
+    """The first states of a balanced model, and the projections that lead there: W'V = I, A = W'T V, B = W'B, C = C V."""
 
-    V = L Z1 S1^-1/2, W = R'U1 S1^-1/2 gives balanced coordinates [1]_; with `orthogonal` their column spaces are
-    spanned by orthonormal bases first, which is better conditioned and not balanced [2]_. Signs: the first large entry
-    of each row of W'B (of each column of C V, where that row is zero) is positive.
+    A: Array
+    B: Array
+    C: Array
+    W: Array
+    V: Array
+
+
+def balanced_part(factors: HankelFactors, order: int) -> Balanced:
+    """Return the `order` most significant states of the balanced model.
+
+    V = L Z1 S1^-1/2 and W = R'U1 S1^-1/2 [1]_, but the large matrices are not projected: with R T = M R and T L = L N
+
+        A = S1^-1/2 (U1'M U1) S1^1/2 = S1^1/2 (Z1'N Z1) S1^-1/2,   B = S1^1/2 Z1'L^-1 B,   C = C R^-1 U1 S1^1/2,
+
+    where M, N, L^-1 B and C R^-1 come with the Gramian factors and are as large as the poles only. Above the diagonal
+    the first form damps rounding errors, below it the second. Signs: the first large entry of each row of B (of each
+    column of C, where that row is zero) is positive.
 
     Parameters
     ----------
-    T, B, C : arrays
-        The model in the coordinates of the factors.
     factors : HankelFactors
     order : int
         At most the number of values well above zero.
-    orthogonal : bool
+
+    Returns
+    -------
+    Balanced
+
+    References
+    ----------
+    .. [1] Tombs & Postlethwaite 1987, as in `hankel_factors`.
+    """
+    roots = factors.roots
+    root = np.sqrt(factors.values[:order])
+    U, Z = factors.left[:, :order], factors.right[:, :order]
+    above = (U.T @ (roots.M @ U)) / root[:, None] * root
+    below = (Z.T @ (roots.N @ Z)) * root[:, None] / root
+    B = root[:, None] * (Z.T @ roots.input)
+    C = (roots.output @ U) * root
+    sign = _signs(B, C.T)
+    A = (np.triu(above) + np.tril(below, -1)) * sign[:, None] * sign
+    return Balanced(A, B * sign[:, None], C * sign, roots.R.T @ U / root * sign, roots.L @ Z / root * sign)
+
+
+def balancing_free_projection(factors: HankelFactors, order: int) -> tuple[Array, Array]:
+    """Return (W, V) with W'V = I onto the same states in well-conditioned coordinates that are not balanced [1]_.
+
+    Parameters
+    ----------
+    factors : HankelFactors
+    order : int
 
     Returns
     -------
@@ -270,21 +309,9 @@ def truncation(
 
     References
     ----------
-    .. [1] Tombs & Postlethwaite 1987, as in `hankel_factors`.
-    .. [2] A. Varga, Balancing-free square-root algorithm for computing singular perturbation approximations, Proc. 30th
+    .. [1] A. Varga, Balancing-free square-root algorithm for computing singular perturbation approximations, Proc. 30th
            IEEE CDC (1991) 1062-1065.
     """
-    root = np.sqrt(factors.values[:order])
-    V = factors.controllability @ factors.right[:, :order]
-    W = factors.observability.T @ factors.left[:, :order]
-    if orthogonal and order:
-        V, _ = np.linalg.qr(V)
-        W, _ = np.linalg.qr(W)
-        W = np.linalg.solve(W.T @ V, W.T).T
-    else:
-        V, W = V / root, W / root
-    rows, columns = W.T @ B, (C @ V).T
-    # a row of W'B that is rounding noise says nothing about the sign
-    quiet = np.linalg.norm(rows, axis=1) <= 1e-8 * np.linalg.norm(columns, axis=1)
-    sign = np.where(quiet, _signed(V, columns), _signed(V, rows))
-    return W * sign, V * sign
+    V, _ = np.linalg.qr(factors.roots.L @ factors.right[:, :order])
+    W, _ = np.linalg.qr(factors.roots.R.T @ factors.left[:, :order])
+    return np.linalg.solve(W.T @ V, W.T).T, V

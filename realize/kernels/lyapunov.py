@@ -20,6 +20,7 @@ recursion spends its time in matrix products [3]_.
 from __future__ import annotations
 
 import math
+from dataclasses import dataclass
 
 import numpy as np
 import scipy.linalg
@@ -123,8 +124,8 @@ def schur_eigenvalues(T: Array) -> NDArray[np.complex128]:
     return values
 
 
-def observability_factor(T: Array, C: Array) -> Array:
-    """Return R with T'X + X T + C'C = 0, X = R'R, for a stable upper quasi-triangular T (standardised blocks).
+def observability_factor(T: Array, C: Array) -> tuple[Array, Array, Array]:
+    """Return (R, V, M) with T'X + X T + C'C = 0, X = R'R, C = V R, R T = M R, for a stable upper quasi-triangular T.
 
     Parameters
     ----------
@@ -134,8 +135,11 @@ def observability_factor(T: Array, C: Array) -> Array:
 
     Returns
     -------
-    (n, n) array
+    R : (n, n) array
         Block upper triangular (the rows of a complex pair fill their 2 x 2 block).
+    V : (p, n) array
+    M : (n, n) array
+        Upper quasi-triangular, M + M' = -V'V where no row of R is zero.
 
     Raises
     ------
@@ -147,16 +151,18 @@ def observability_factor(T: Array, C: Array) -> Array:
     Hammarling and Kressner, references 1 and 2 of the module.
     """
     n = T.shape[0]
-    R = np.zeros((n, n))
-    if n == 0 or C.shape[0] == 0:
-        return R
+    R, M, V = np.zeros((n, n)), np.zeros((n, n)), np.zeros(C.shape)
+    if n == 0:
+        return R, V, M
     if not np.all(schur_eigenvalues(T).real < 0):
         raise NotStable("an eigenvalue has a real part that is not negative")
-    left = np.array(C if C.shape[0] <= n else np.linalg.qr(C, mode="r"), dtype=float)
-    V = np.zeros_like(left)
-    M = np.zeros((n, n))
+    if C.shape[0] <= n:
+        _factor(T, np.array(C, dtype=float), R, V, M, 0, n)
+        return R, V, M
+    basis, left = np.linalg.qr(C)
+    V = np.zeros((n, n))
     _factor(T, left, R, V, M, 0, n)
-    return R
+    return R, basis @ V, M
 
 
 def _factor(T: Array, C: Array, R: Array, V: Array, M: Array, low: int, high: int) -> None:
@@ -232,11 +238,11 @@ def _pair_block(T: Array, C: Array, R: Array, V: Array, M: Array, j: int) -> Non
     M[j, j + 1], M[j + 1, j] = mu * root_one / root_two, -mu * root_two / root_one
 
 
-def bilinear_schur(T: Array, B: Array, C: Array) -> tuple[Array, Array, Array]:
-    """Return the continuous model with the same Gramians as a sampled one in real Schur form.
+def bilinear_schur(T: Array, B: Array, C: Array) -> tuple[Array, Array, Array, float]:
+    """Return the continuous model with the same Gramians as a sampled one in real Schur form, and a sign.
 
-    (T + I)^-1 (T - I), sqrt(2) (T + I)^-1 B, sqrt(2) C (T + I)^-1. The map of -T serves as well (T X T' is the same);
-    of the two the one whose poles stay farther from the point that goes to infinity is taken.
+    (sign T + I)^-1 (sign T - I), sqrt(2) (sign T + I)^-1 B, sqrt(2) C (sign T + I)^-1. T and -T have the same Gramians
+    (T X T' is the same); the sign whose poles stay farther from the point that goes to infinity is taken.
     """
     n = T.shape[0]
     identity = np.eye(n)
@@ -244,14 +250,41 @@ def bilinear_schur(T: Array, B: Array, C: Array) -> tuple[Array, Array, Array]:
     sign = 1.0 if np.min(np.abs(poles + 1)) >= np.min(np.abs(poles - 1)) else -1.0
     mapped = np.linalg.solve(sign * T + identity, np.hstack([sign * T - identity, math.sqrt(2.0) * B]))
     right = np.linalg.solve((sign * T + identity).T, math.sqrt(2.0) * C.T).T
-    state = np.triu(mapped[:, :n], -1)
-    pairs = np.flatnonzero(np.diagonal(T, -1) == 0)
-    state[pairs + 1, pairs] = 0.0
-    return state, mapped[:, n:], right
+    return _quasi_triangular(mapped[:, :n], T), mapped[:, n:], right, sign
 
 
-def schur_gramian_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> tuple[Array, Array]:
-    """Return (L, R) with controllability Gramian L L' and observability Gramian R'R of a model in real Schur form.
+def _quasi_triangular(matrix: Array, pattern: Array) -> Array:
+    """Return the matrix with what is zero below the diagonal of the pattern set to zero."""
+    result = np.triu(matrix, -1)
+    single = np.flatnonzero(np.diagonal(pattern, -1) == 0)
+    result[single + 1, single] = 0.0
+    return result
+
+
+@dataclass(frozen=True)
+class SquareRoots:
+    """Square roots of both Gramians of a stable model T, B, C, and the model as they see it.
+
+    Attributes
+    ----------
+    L, R : (n, n) arrays
+        Controllability Gramian L L', observability Gramian R'R.
+    N, input : (n, n) and (n, m) arrays
+        T L = L N and B = L input.
+    M, output : (n, n) and (p, n) arrays
+        R T = M R and C = output R.
+    """
+
+    L: Array
+    R: Array
+    N: Array
+    input: Array
+    M: Array
+    output: Array
+
+
+def square_roots(T: Array, B: Array, C: Array, *, sampled: bool) -> SquareRoots:
+    """Return square roots of the Gramians of a model in real Schur form, with their companions.
 
     Parameters
     ----------
@@ -260,11 +293,11 @@ def schur_gramian_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> tup
     B : (n, m) array
     C : (p, n) array
     sampled : bool
-        Stein instead of Lyapunov equations: T X T' - X + B B' = 0, by the bilinear map.
+        Stein instead of Lyapunov equations, by the bilinear map: T X T' - X + B B' = 0.
 
     Returns
     -------
-    L, R : (n, n) arrays
+    SquareRoots
 
     Raises
     ------
@@ -273,15 +306,36 @@ def schur_gramian_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> tup
     """
     n = T.shape[0]
     if n == 0:
-        return np.zeros((0, 0)), np.zeros((0, 0))
+        nothing = np.zeros((0, 0))
+        return SquareRoots(nothing, nothing, nothing, B, nothing, C)
+    sign = 1.0
     if sampled:
         if not np.all(np.abs(schur_eigenvalues(T)) < 1):
             raise NotStable("an eigenvalue lies on or outside the unit circle")
-        T, B, C = bilinear_schur(T, B, C)
-    R = observability_factor(T, C)
+        T, B, C, sign = bilinear_schur(T, B, C)
+    R, output, M = observability_factor(T, C)
     # the dual: reversed transpose of T is upper quasi-triangular again
-    L = observability_factor(np.ascontiguousarray(T.T[::-1, ::-1]), np.ascontiguousarray(B.T[:, ::-1]))
-    return np.ascontiguousarray(L.T[::-1]), R
+    dual, inputs, K = observability_factor(np.ascontiguousarray(T.T[::-1, ::-1]), np.ascontiguousarray(B.T[:, ::-1]))
+    if sampled:
+        # back through the map: contractive because M + M' <= 0
+        M, output = _back(M, output, sign)
+        K, inputs = _back(K, inputs, sign)
+    return SquareRoots(np.ascontiguousarray(dual.T[::-1]), R, K.T, inputs.T, M, output)
+
+
+def _back(M: Array, V: Array, sign: float) -> tuple[Array, Array]:
+    identity = np.eye(M.shape[0])
+    inner = _quasi_triangular(np.linalg.solve(identity - M, identity + M), M)
+    return sign * inner, V @ (inner + identity) / math.sqrt(2.0)
+
+
+def schur_gramian_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> tuple[Array, Array]:
+    """Return (L, R) with controllability Gramian L L' and observability Gramian R'R of a model in real Schur form.
+
+    Parameters, exceptions and method are those of `square_roots`.
+    """
+    roots = square_roots(T, B, C, sampled=sampled)
+    return roots.L, roots.R
 
 
 def gramian_factors(A: Array, B: Array, C: Array, *, sampled: bool) -> tuple[Array, Array]:

@@ -393,7 +393,7 @@ def squared_norm(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> fl
         factor = schur_gramian_factors(T, Q.T @ B, C @ Q, sampled=True)[1]
         own = float(np.linalg.norm(factor @ (Q.T @ B)))
     else:
-        own = float(np.linalg.norm(observability_factor(T, C @ Q) @ (Q.T @ B)))
+        own = float(np.linalg.norm(observability_factor(T, C @ Q)[0] @ (Q.T @ B)))
     # the Gramian carries the unit of time to the power 1: its square root comes back with half the exponent
     return math.hypot(_scaled_up(own, b + c - time // 2), direct)
 

@@ -40,14 +40,14 @@ def by_order(prepared: Prepared, order: int, notes: list[str]) -> int:
         moved += 1
     if moved != wanted:
         notes.append(
-            f"order {order} would cut inside a group of equal Hankel singular values; the cut was moved to the end of the "
-            f"group, order {moved + kept}"
+            f"order {order} would cut inside a group of equal Hankel singular values; the cut was moved to the end of "
+            f"the group, order {moved + kept}"
         )
     return min(moved, prepared.available)
 
 
 def by_error(prepared: Prepared, error: float, notes: list[str]) -> int:
-    """Return the smallest number of stable states whose bound is at most `error` (absolute, in the model's own unit)."""
+    """Return the smallest number of stable states whose bound is at most `error` (absolute, in the model's unit)."""
     if not error >= 0:
         raise UsageError(f"an error of {error}: it must not be negative")
     for order in range(prepared.available + 1):
@@ -55,8 +55,8 @@ def by_error(prepared: Prepared, error: float, notes: list[str]) -> int:
             return order
     least = prepared.in_gain(float(prepared.tails[prepared.available]))
     notes.append(
-        f"no order keeps the error of {error:.3g}: the states that drown in rounding count for {least:.3g}; the balanced "
-        f"minimal part is the best there is"
+        f"no order keeps the error of {error:.3g}: the states that drown in rounding count for {least:.3g}; the "
+        f"balanced minimal part is the best there is"
     )
     return prepared.available
 

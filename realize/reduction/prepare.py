@@ -50,7 +50,7 @@ class Prepared:
 
     @cached_property
     def available(self) -> int:
-        """How many Hankel singular values stand clear of rounding: above their own error and n eps times the largest."""
+        """How many Hankel singular values stand clear of rounding: above their own error and n eps of the first."""
         values, errors = self.factors.values, self.factors.errors
         if values.size == 0 or values[0] == 0:
             return 0

@@ -10,7 +10,6 @@ from numpy.typing import NDArray
 
 from realize.errors import Refused, UsageError
 from realize.kernels.norms import pole_frequencies
-from realize.kernels.splitting import matrix_norm
 from realize.reduction import choice
 from realize.reduction.prepare import Prepared, prepare
 from realize.reduction.registry import automatic, method_named
@@ -73,8 +72,8 @@ def reduce_states(
     if prepared.kept_order:
         on_axis = int(np.count_nonzero(prepared.split.marginal))
         notes.append(
-            f"{choice.states(prepared.kept_order)} kept as they are: {prepared.kept_order - on_axis} of unstable poles, "
-            f"{on_axis} of poles on the boundary of stability"
+            f"{choice.states(prepared.kept_order)} kept as they are: {prepared.kept_order - on_axis} of unstable poles "
+            f"and {on_axis} of poles on the boundary of stability"
         )
     largest: float | None = None
     limit: float | None = None
@@ -105,7 +104,7 @@ def reduce_states(
             rounding = rounding_term(prepared, part, count)
         if rounding > limit:
             raise Refused(
-                f"an error of {limit:.3g} is below the rounding of this model, about {rounding:.3g}; ask for more than that"
+                f"an error of {limit:.3g} is below the rounding of this model, about {rounding:.3g}; ask for more"
             )
     return _assembled(prepared, part, count, chosen_method.name, rounding, largest, notes)
 

@@ -12,7 +12,7 @@ Array = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Projected:
-    """The reduced stable part, in the scaled coordinates of `Prepared`: matrices, and projections from the stable block."""
+    """The reduced stable part in the scaled units of `Prepared`: matrices, and projections from the stable block."""
 
     A: Array
     B: Array
