@@ -1,5 +1,90 @@
-"""Convert, minimise, reduce and fit linear plant models, with a receipt for every result."""
+"""Convert, minimise, reduce and fit linear plant models, with a receipt for every result.
+
+Everything is imported when it is first used, so that ``import realize`` costs nothing.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
 
 from realize._version import __version__
 
-__all__ = ["__version__"]
+if TYPE_CHECKING:
+    from realize.errors import ClaimFailed, InputError, RealizeError, Refused, UsageError
+    from realize.files import read, write
+    from realize.models import (
+        DeadTime,
+        FrequencyResponse,
+        Offset,
+        PoleResidue,
+        Sections,
+        Signal,
+        StateSpace,
+        TimeBase,
+        TransferFunction,
+        ZeroPoleGain,
+    )
+    from realize.schema import Claim, Receipt
+    from realize.steps import Conversion, compare, convert, explain, fit, inspect, reduce
+
+_HOMES = {
+    "realize.errors": ("ClaimFailed", "InputError", "RealizeError", "Refused", "UsageError"),
+    "realize.files": ("read", "write"),
+    "realize.models": (
+        "DeadTime",
+        "FrequencyResponse",
+        "Offset",
+        "PoleResidue",
+        "Sections",
+        "Signal",
+        "StateSpace",
+        "TimeBase",
+        "TransferFunction",
+        "ZeroPoleGain",
+    ),
+    "realize.schema": ("Claim", "Receipt"),
+    "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "inspect", "reduce"),
+}
+_HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
+
+__all__ = [
+    "Claim",
+    "ClaimFailed",
+    "Conversion",
+    "DeadTime",
+    "FrequencyResponse",
+    "InputError",
+    "Offset",
+    "PoleResidue",
+    "RealizeError",
+    "Receipt",
+    "Refused",
+    "Sections",
+    "Signal",
+    "StateSpace",
+    "TimeBase",
+    "TransferFunction",
+    "UsageError",
+    "ZeroPoleGain",
+    "__version__",
+    "compare",
+    "convert",
+    "explain",
+    "fit",
+    "inspect",
+    "read",
+    "reduce",
+    "write",
+]
+
+
+def __getattr__(name: str) -> Any:
+    home = _HOME_OF.get(name)
+    if home is None:
+        raise AttributeError(f"module 'realize' has no attribute {name!r}")
+    return getattr(import_module(home), name)
+
+
+def __dir__() -> list[str]:
+    return __all__

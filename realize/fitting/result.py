@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from realize.errors import Refused
 from realize.fitting.noise import noise_factor
-from realize.fitting.problem import Problem
+from realize.fitting.problem import ROUNDING, Problem
 from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
 from realize.fitting.sampled import mapped_back
 from realize.kernels.vector_fitting import residues_of
@@ -86,7 +86,7 @@ def finish(
     )
     weighted, noise = _noise(problem, poles.size, missed[used], basis, common, size)
     table = _pole_table(poles, contribution, peak, period, scale)
-    cautions = [*cautions, *_remarks(table, w, period, noise, weighted, problem, worst)]
+    cautions = [*cautions, *_remarks(table, w, noise, weighted, worst)]
     return Fit(
         poles=_frozen(out_poles),
         residues=_frozen(out_residues),
@@ -140,6 +140,8 @@ def _noise(
         elif free > 0:
             # neighbouring misfits are alike the more unknowns there are: the same correction for both
             factor *= np.sqrt(problem.numbers / free)
+        # rounding is the least that any deviation can be
+        factor = max(factor, ROUNDING * np.sqrt(2 * problem.total / problem.numbers))
     deviation = (factor * common / problem.weights)[:, alive]
     level = float(np.sqrt(np.sum(deviation**2))) / size if size > 0 else 0.0
     return (rms / factor if factor > 0 else 0.0), Noise(basis, level)
@@ -162,10 +164,8 @@ def _pole_table(
 def _remarks(
     table: tuple[PoleRow, ...],
     w: Array,
-    period: float | None,
     noise: Noise,
     weighted: float,
-    problem: Problem,
     worst: Worst,
 ) -> list[str]:
     remarks = []
@@ -176,15 +176,12 @@ def _remarks(
             f"{sum(2 if row.pair else 1 for row in slow)} pole(s) lie below a tenth of the lowest line: the data look "
             "like an integrator there, and the model is a stable stand-in for it below the band"
         )
-    if w.size > 2:
-        for row in table:
-            if row.pair and w[0] < row.frequency < w[-1]:
-                k = int(np.clip(np.searchsorted(w, row.frequency), 1, w.size - 1))
-                if 2 * row.damping * row.frequency < (w[k] - w[k - 1]) * 0.5:
-                    remarks.append(
-                        f"the resonance at {row.frequency:.6g} rad/s is narrower than half the distance of the lines: "
-                        "its damping is not well determined"
-                    )
+    narrow = [row for row in table if row.pair and _narrow(row, w)]
+    if narrow:
+        places = ", ".join(f"{row.frequency:.6g}" for row in narrow)
+        remarks.append(
+            f"resonance(s) narrower than half the distance of the lines, their damping hangs on a few lines: {places} rad/s"
+        )
     if weighted > POOR and noise.level > 0 and worst.value > 1e-9:
         source = "given" if noise.basis == "given" else "estimated"
         remarks.append(
@@ -192,3 +189,10 @@ def _remarks(
             "or their errors are not independent from line to line"
         )
     return remarks
+
+
+def _narrow(row: PoleRow, w: Array) -> bool:
+    if w.size < 3 or not w[0] < row.frequency < w[-1]:
+        return False
+    k = int(np.clip(np.searchsorted(w, row.frequency), 1, w.size - 1))
+    return 2 * row.damping * row.frequency < 0.5 * (w[k] - w[k - 1])

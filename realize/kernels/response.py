@@ -197,7 +197,7 @@ def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Arra
     pattern = np.abs(A) if E is None else np.abs(A) + np.abs(E)
     if not np.all(np.isfinite(pattern)):
         return A, B, C, E
-    _, (scale, _) = scipy.linalg.matrix_balance(pattern, permute=False, separate=True)
+    scale = scipy.linalg.lapack.dgebal(pattern, scale=1, permute=0)[3]
     if np.all(scale == 1):
         return A, B, C, E
     with np.errstate(over="ignore", under="ignore"):

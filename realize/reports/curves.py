@@ -170,7 +170,8 @@ def relative_difference(first: Curve, other: Curve) -> tuple[Array, Array]:
 
 def _frobenius(values: ComplexArray) -> Array:
     """Frobenius norm of each matrix, scaled so that nothing overflows."""
-    parts = np.concatenate([values.real, values.imag], axis=2).reshape(values.shape[0], -1)
+    parts = np.concatenate([values.real, values.imag], axis=2)
+    parts = parts.reshape(values.shape[0], parts.shape[1] * parts.shape[2])
     size = np.abs(parts).max(axis=1, initial=0.0)
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.where(size == 0, 0.0, size * np.sqrt(np.sum((parts / size[:, None]) ** 2, axis=1)))
@@ -188,45 +189,42 @@ def _evaluated(curve: Curve, frequency: Array) -> ComplexArray:
     return values * np.exp(-1j * frequency[:, None, None] * curve.dead_time)
 
 
-def unwrapped_phase(curve: Curve, output: int, column: int) -> Array:
-    """Return the phase of one channel in degrees: unwrapped along the rational part, dead time added as a line."""
+def rational_phase(curve: Curve, output: int, column: int) -> Array:
+    """Return the phase of one channel without its dead time, unwrapped, in degrees; it starts within [-180, 180)."""
     values = curve.rational[:, output, column]
     phase = np.full(values.size, np.nan)
     good = np.isfinite(values) & (values != 0)
     if good.any():
         phase[good] = np.degrees(np.unwrap(np.angle(values[good])))
-        # the first point within (-180, 180], and -180 rather than a rounding's +180
-        start = phase[good][0]
-        phase -= 360 * math.ceil((start - 180 * (1 - 1e-9)) / 360)
-    return phase - np.degrees(curve.frequency * curve.dead_time[output, column])
+        # a rounding's +180 is -180 too
+        phase -= 360 * math.ceil((phase[good][0] - 180 * (1 - 1e-9)) / 360)
+    return phase
 
 
 def aligned_phases(curves: Sequence[Curve], output: int, column: int) -> list[Array]:
-    """Return the phases of one channel of all curves on a common branch.
+    """Return the phases of one channel of all curves on a common branch, degrees, dead time included.
 
-    The first parametric curve with a phase leads. Data points, which noise can carry around, each take the branch
-    nearest to it; other curves move as a whole by a multiple of 360 degrees, to meet it at the low end.
+    The first parametric curve leads. Others move as a whole by a multiple of 360 degrees so that they meet it, dead times
+    aside, at the low end. Data points, which noise can carry around, each take the branch nearest to it.
     """
-    phases = [unwrapped_phase(curve, output, column) for curve in curves]
+    phases = [rational_phase(curve, output, column) for curve in curves]
     usable = [k for k, phase in enumerate(phases) if np.isfinite(phase).any()]
     models = [k for k in usable if not curves[k].data]
-    if not usable:
-        return phases
-    lead = (models or usable)[0]
-    good = np.isfinite(phases[lead])
-    x, y = np.log(curves[lead].frequency[good]), phases[lead][good]
+    late = [np.degrees(curve.frequency * curve.dead_time[output, column]) for curve in curves]
     for k in usable:
+        lead = (models or usable)[0]
         if k == lead:
             continue
+        pointwise = curves[k].data and bool(models)
+        good = np.isfinite(phases[lead])
+        x, y = np.log(curves[lead].frequency[good]), phases[lead][good]
+        if pointwise:
+            y = y - late[lead][good]
         own = np.log(curves[k].frequency)
         inside = (own >= x[0]) & (own <= x[-1]) & np.isfinite(phases[k])
-        if not inside.any():
-            continue
-        turns = np.rint((np.interp(own, x, y) - phases[k]) / 360)
-        if curves[k].data and models:
-            whole = float(np.median(turns[inside]))
-            phases[k] = phases[k] + 360 * np.where(inside, turns, whole)
-        else:
+        if inside.any():
+            turns = np.rint((np.interp(own, x, y) - phases[k]) / 360)
             low = turns[inside][: max(1, int(inside.sum()) // 5)]
-            phases[k] = phases[k] + 360 * float(np.median(low))
-    return phases
+            whole = float(np.median(low))
+            phases[k] = phases[k] + 360 * (np.where(inside, turns, whole) if pointwise else whole)
+    return [phase - delay for phase, delay in zip(phases, late, strict=True)]

@@ -18,14 +18,13 @@ from realize.files.replacing import replace_file
 from realize.models import FrequencyResponse, Model
 from realize.reports import panels, polemap
 from realize.reports.curves import Band, curves_of, drawing_band
+from realize.reports.hankel import hankel_values
 from realize.reports.numbers import clean
 from realize.reports.roots import poles_of
 from realize.reports.style import SETTINGS, drawable, looks
 
 FORMATS = {".png": "png", ".svg": "svg"}
 MOST_CHANNELS, MOST_ENTRIES = 6, 12
-#: State models beyond this order are drawn without Hankel singular values unless these are given.
-HANKEL_UP_TO = 500
 
 Entries = Sequence[tuple[str, Model]]
 
@@ -112,6 +111,10 @@ def _checked(entries: Entries, band: Band | None) -> list[tuple[str, Model]]:
             )
     if band is not None and not (0 < band[0] < band[1] < math.inf):
         raise UsageError(f"band {band[0]:g} to {band[1]:g} rad/s; a band runs from a number above zero to a larger one")
+    if band is not None and all(model.time.sampled for _, model in listed):
+        end = max(math.pi / model.time.seconds for _, model in listed)
+        if band[0] >= end:
+            raise UsageError(f"a band from {band[0]:g} rad/s on; half the sampling rate is {end:.6g} rad/s")
     return listed
 
 
@@ -239,7 +242,7 @@ def _legend(figure: Any, curves: Sequence[Any], styles: Sequence[Any], width: fl
 
 
 def _hankel(label: str, model: Model, given: Mapping[str, ArrayLike] | None) -> Any:
-    """Return Hankel singular values that are given, or those of a stable state model of moderate order, or None."""
+    """Return Hankel singular values as given, or those computed from the model, or None."""
     if given is not None and label in given:
         return np.asarray(given[label], dtype=float)
-    return None
+    return hankel_values(model)

@@ -88,8 +88,8 @@ def sensor_deviation(frequency: NDArray[np.float64], response: NDArray[np.comple
     """Return one standard deviation of the distance between an averaged estimate and the response.
 
     Three parts, added in squares: a share of the response itself (leakage and drift of the drive's gain), a floor of
-    the sensor, and a part that grows with frequency (the encoder's steps are differentiated; the accelerometer nears the
-    resonance of its mount). The floor is what is left at an antiresonance.
+    the sensor, and a part that grows with frequency (the encoder's steps are differentiated; the accelerometer nears
+    the resonance of its mount). The floor is what is left at an antiresonance.
 
     Parameters
     ----------

@@ -1,0 +1,34 @@
+"""The command `convert`."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from realize.commands.common import Context, deliver, load, print_record, write_log
+from realize.errors import UsageError
+from realize.steps import convert, explain
+
+
+def execute(context: Context, model: str, to: str | None, form: str | None, common_denominator: bool, **rest: Any) -> int:
+    """Convert a model file."""
+    if to is None:
+        raise UsageError("convert needs --to KIND")
+    source = load(model)
+    if rest.pop("explain"):
+        lines = explain(source, to, form=form, common_denominator=common_denominator)
+        if context.json:
+            record = {"step": "convert", "route": lines}
+            write_log(context, record)
+            print_record(record)
+        else:
+            print("\n".join(lines))
+        return 0
+    conversion = convert(
+        source,
+        to,
+        form=form,
+        common_denominator=common_denominator,
+        limits=context.limits,
+        second_opinion=context.second_opinion,
+    )
+    return deliver(context, conversion)

@@ -1,0 +1,147 @@
+"""The table of conversions, and the route from a kind to another.
+
+Nodes are the kinds of models, state models in particular coordinates (``state-space:cascade``), and two exact
+intermediates: ``exact-fractions`` (numerator and denominator of each channel over the rationals) and ``factors``
+(poles, zeros and gain of each channel). Exact rows lose nothing; rounding rows round each number of their result once.
+"""
+
+from __future__ import annotations
+
+import heapq
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any
+
+from realize.conversions import builders
+from realize.errors import Refused, UsageError
+from realize.models import Model, StateSpace
+from realize.verification.views import EXACT_BUDGET, predicted_cost
+
+
+@dataclass(frozen=True)
+class Task:
+    """What is wanted: the source, the target kind, the coordinates, and whether channels share a denominator."""
+
+    model: Model
+    to: str
+    form: str | None = None
+    common_denominator: bool = False
+
+    @property
+    def target(self) -> str:
+        """Name of the target node."""
+        if self.to != "state-space":
+            return self.to
+        form = self.form or default_form(self.model)
+        return f"state-space:{form}" if form else "state-space"
+
+
+@dataclass(frozen=True)
+class Row:
+    """One conversion: from node, to node, the function, whether it is exact, and what it does."""
+
+    source: str
+    target: str
+    apply: Callable[[Any, Task], Any]
+    exact: bool
+    says: str
+
+
+ROWS: tuple[Row, ...] = (
+    Row("transfer-function", "exact-fractions", builders.fractions, True, "coefficients as exact rationals"),
+    Row("zero-pole-gain", "exact-fractions", builders.fractions, True, "exact products of the factors"),
+    Row("pole-residue", "exact-fractions", builders.fractions, True, "exact sum of the partial fractions"),
+    Row("sections", "exact-fractions", builders.fractions, True, "exact product of the sections"),
+    Row("state-space", "exact-fractions", builders.fractions, True, "exact C adj(sE - A) B + D det(sE - A) over det(sE - A)"),
+    Row("zero-pole-gain", "factors", builders.factors_as_given, True, "poles, zeros and gain as they stand"),
+    Row("exact-fractions", "factors", builders.factors_from_fractions, False, "certified poles and zeros, each rounded once"),
+    Row("exact-fractions", "transfer-function", builders.transfer_function, False, "each coefficient rounded once"),
+    Row("exact-fractions", "pole-residue", builders.pole_residue, False, "certified poles and residues, each rounded once"),
+    Row("factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"),
+    Row("factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"),
+    Row("factors", "state-space:cascade", builders.cascade, False, "sections in series, each entry rounded once"),
+    Row("sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"),
+    Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
+    Row(
+        "exact-fractions",
+        "state-space:controllable-companion",
+        builders.controllable,
+        False,
+        "coefficients as entries, each rounded once",
+    ),
+    Row(
+        "exact-fractions",
+        "state-space:observable-companion",
+        builders.observable,
+        False,
+        "coefficients as entries, each rounded once",
+    ),
+)
+
+#: Rows for models too large for exact arithmetic.
+DOUBLE_ROWS: tuple[Row, ...] = (
+    Row("state-space", "pole-residue", builders.residues_in_doubles, False, "eigenvalues and eigenvectors in double arithmetic"),
+    Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
+    *(row for row in ROWS if row.source in ("zero-pole-gain", "factors", "sections") and row.target != "exact-fractions"),
+)
+
+
+def default_form(model: Model) -> str:
+    """Return the coordinates that are used unless others are asked for ('' = leave a state model as it is).
+
+    State models stay as they are. Partial fractions, and models with several channels, become modal; a single channel
+    becomes a cascade.
+    """
+    if isinstance(model, StateSpace):
+        return ""
+    if model.kind == "pole-residue" or model.shape != (1, 1):
+        return "modal"
+    return "cascade"
+
+
+def plan_route(task: Task) -> list[Row]:
+    """Return the rows from the source to the target: fewest roundings first, then fewest rows.
+
+    Raises
+    ------
+    Refused
+        If the only routes are beyond exact arithmetic's budget.
+    UsageError
+        If the form does not go with the kind.
+    """
+    if task.form is not None and task.to != "state-space":
+        raise UsageError(f"--form {task.form} goes with --to state-space, not with --to {task.to}")
+    start, goal = task.model.kind, task.target
+    if start == goal and not task.common_denominator:
+        return []
+    affordable = predicted_cost(task.model) <= EXACT_BUDGET
+    rows = ROWS if affordable else DOUBLE_ROWS
+    queue: list[tuple[tuple[int, int], int, str, list[Row]]] = [((0, 0), 0, start, [])]
+    done: set[str] = set()
+    count = 0
+    while queue:
+        cost, _, node, path = heapq.heappop(queue)
+        if node == goal and path:
+            return path
+        if node in done:
+            continue
+        done.add(node)
+        for row in rows:
+            # the way back to the source's own kind goes through the fractions (a new common denominator)
+            if row.source == node and (row.target not in done or row.target == goal):
+                count += 1
+                heapq.heappush(
+                    queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row])
+                )
+    raise Refused(
+        f"order {task.model.order} is beyond exact arithmetic, and a {task.to} of that order could not be trusted in doubles; "
+        "ask for pole-residue or a modal state space, or reduce the model first"
+    )
+
+
+def convert_model(task: Task, route: list[Row]) -> Model:
+    """Follow a route and return the model at its end, without receipts."""
+    value: Any = task.model
+    for row in route:
+        value = row.apply(value, task)
+    return value

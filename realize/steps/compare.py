@@ -1,0 +1,173 @@
+"""The verb `compare`."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import msgspec
+import numpy as np
+
+from realize.errors import InputError, Refused
+from realize.models import FrequencyResponse, Model, mark
+from realize.schema import Claim, judge
+from realize.steps.conversion import Conversion, model_of
+from realize.steps.reduce import states_of
+from realize.verification import Pair, View
+from realize.verification.conversion import channel_error, peak_error, response_error
+from realize.verification.difference import h2_error, linf_error
+from realize.verification.misfit import data_claims
+
+
+def compare(
+    reference: Model | Conversion,
+    *others: Model | Conversion,
+    band: tuple[float, float] | None = None,
+    names: Sequence[str] = (),
+) -> dict[str, Any]:
+    """Measure the discrepancy of models from the first one.
+
+    Parameters
+    ----------
+    reference, others : Model or Conversion
+        Parametric models or data; the claims take the first as the source. Against data, they hold at its lines.
+    band : (low, high), optional
+        Frequencies of data lines that count, rad/s.
+    names : sequence of str, optional
+        What to call them.
+
+    Returns
+    -------
+    dict
+        The claims of the first comparison by name (``response-error``, ``peak-error``, ``linf-error``, ``h2-error``, or
+        misfits for data), ``reference`` and ``other``; all of them in ``comparisons``.
+    """
+    if not others:
+        raise InputError("one model", "at least two models or data sets to compare")
+    models = [model_of(reference), *(model_of(other) for other in others)]
+    labels = list(names) or [f"model {k}" for k in range(len(models))]
+    rows = [_one(models[0], other, band, labels[0], label) for other, label in zip(models[1:], labels[1:], strict=True)]
+    return rows[0] | {"comparisons": rows}
+
+
+def _one(first: Model, second: Model, band: tuple[float, float] | None, a: str, b: str) -> dict[str, Any]:
+    if first.shape != second.shape:
+        raise InputError(
+            f"{second.shape[0]} outputs and {second.shape[1]} inputs",
+            f"{first.shape[0]} and {first.shape[1]}, as in {a}",
+            file=b,
+        )
+    if first.time.domain != second.time.domain or (
+        first.time.sampled and first.time.exact_period != second.time.exact_period
+    ):
+        raise Refused(f"{a} and {b} have different time bases; sample one of them like the other first")
+    record: dict[str, Any] = {
+        "a": a,
+        "b": b,
+        "reference": msgspec.to_builtins(mark(first)),
+        "other": msgspec.to_builtins(mark(second)),
+    }
+    return record | {claim.name: msgspec.to_builtins(claim) for claim in _claims(first, second, band, a, b)}
+
+
+def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: str, b: str) -> list[Claim]:
+    if isinstance(first, FrequencyResponse) and isinstance(second, FrequencyResponse):
+        return _both_data(first, second, band, a, b)
+    if isinstance(first, FrequencyResponse):
+        return _against_data(first, second, band, first)
+    if isinstance(second, FrequencyResponse):
+        return _against_data(second, first, band, first)
+    if not _same_dead_time(first, second):
+        return _with_dead_time(first, second)
+    pair = Pair(View(first), View(second))
+    claims = [response_error(pair)]
+    if first.shape != (1, 1):
+        claims.append(channel_error(pair))
+    claims += [peak_error(pair), linf_error(first, second)]
+    try:
+        claims.append(h2_error(states_of(first)[0], states_of(second)[0]))
+    except Refused as error:
+        claims.append(judge("h2-error", None, unit="absolute", note=str(error)))
+    return claims
+
+
+def _same_dead_time(first: Model, second: Model) -> bool:
+    a = np.zeros(first.shape) if first.dead_time is None else first.dead_time.total
+    b = np.zeros(first.shape) if second.dead_time is None else second.dead_time.total
+    return np.array_equal(a, b)
+
+
+def _with_dead_time(first: Model, second: Model) -> list[Claim]:
+    """Compare at many frequencies: different dead times let the difference turn for ever."""
+    from realize.verification.conversion import whole_band
+    from realize.verification.search import largest, seeds
+
+    view, other = View(first), View(second)
+    band = whole_band(view)
+    w = seeds(band, view.poles, other.poles)
+
+    def difference(x: np.ndarray) -> np.ndarray:
+        points = first.time.points(x)
+        return np.linalg.norm(first.evaluate(points) - second.evaluate(points), axis=(1, 2))
+
+    def size(x: np.ndarray) -> np.ndarray:
+        return np.linalg.norm(first.evaluate(first.time.points(x)), axis=(1, 2))
+
+    note = "dead times differ: the difference keeps turning above the band"
+    inside = whole_band(view, margin=1.0)
+    relative, at = largest(lambda x: difference(x) / size(x), inside.keep(w), inside)
+    top, where = largest(difference, w, band)
+    gain, _ = largest(size, w, band)
+    return [
+        judge("response-error", relative, where={"frequency": at}, note=note),
+        judge("peak-error", top / gain if gain else float(top > 0), where={"frequency": where}, note=note),
+    ]
+
+
+def _selected(data: FrequencyResponse, band: tuple[float, float] | None) -> np.ndarray:
+    from realize.steps.fit import _lines
+
+    return _lines(data, band)
+
+
+def _against_data(
+    data: FrequencyResponse, model: Model, band: tuple[float, float] | None, source: Model
+) -> list[Claim]:
+    keep = _selected(data, band)
+    w = data.radians[keep]
+    theirs = model.evaluate(model.time.points(w))
+    return _line_claims(data.response[keep], theirs, w, source is data) + data_claims(data, model, {}, keep)
+
+
+def _both_data(
+    first: FrequencyResponse, second: FrequencyResponse, band: tuple[float, float] | None, a: str, b: str
+) -> list[Claim]:
+    one, two = first.radians, second.radians
+    if one.size != two.size or np.any(np.abs(one - two) > 1e-9 * np.abs(one)):
+        raise Refused(f"{a} and {b} have different frequencies; fit a model to one of them and compare with that")
+    keep = _selected(first, band)
+    return _line_claims(first.response[keep], second.response[keep], one[keep], True)
+
+
+def _line_claims(data: np.ndarray, other: np.ndarray, w: np.ndarray, data_is_source: bool) -> list[Claim]:
+    source = data if data_is_source else other
+    difference = np.linalg.norm(other - data, axis=(1, 2))
+    size = np.linalg.norm(source, axis=(1, 2))
+    gain = np.linalg.svd(other - data, compute_uv=False)[:, 0]
+    note = "at the data's lines"
+    with np.errstate(divide="ignore", invalid="ignore"):
+        relative = np.where(difference == 0, 0.0, difference / size)
+    worst, top, high = int(np.argmax(relative)), int(np.argmax(difference)), int(np.argmax(gain))
+    peak = size.max()
+    rounding = 1e-12
+
+    def claim(name: str, value: float, k: int, unit: str = "relative") -> Claim:
+        return judge(
+            name, value, unit=unit, where={"frequency": float(w[k])}, note=note, uncertainty=rounding * (1 + abs(value))
+        )
+
+    return [
+        claim("response-error", float(relative[worst]), worst),
+        claim("peak-error", float(difference[top] / peak) if peak > 0 else float(difference[top] > 0), top),
+        claim("linf-error", float(gain[high]), high, "absolute"),
+    ]

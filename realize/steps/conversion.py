@@ -1,0 +1,53 @@
+"""Conversion: the one result type of every verb."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Self
+
+from realize.errors import ClaimFailed
+from realize.models import Model
+from realize.schema import Receipt
+
+
+@dataclass(frozen=True)
+class Conversion:
+    """A result: the model, and the receipt of the step that made it.
+
+    Attributes
+    ----------
+    model : Model
+        Carries the whole chain of receipts, this step's last.
+    receipt : Receipt
+    """
+
+    model: Model
+    receipt: Receipt
+
+    @property
+    def history(self) -> tuple[Receipt, ...]:
+        """Receipts of all steps that led here, oldest first."""
+        return self.model.receipts
+
+    def require(self, *, strict: bool = False) -> Self:
+        """Return itself, or raise `ClaimFailed` if a claim failed its limit.
+
+        Parameters
+        ----------
+        strict : bool
+            Count claims that could not be decided as failed.
+        """
+        bad = list(self.receipt.failed) + (list(self.receipt.open) if strict else [])
+        if bad:
+            words = "; ".join(
+                f"{claim.name} is {'infinite' if claim.infinite else f'{claim.value:.3g}'}, limit {claim.limit:.3g}"
+                + ("" if claim.holds is False else " (measured, not bounded)")
+                for claim in bad
+            )
+            raise ClaimFailed(f"{self.receipt.step}: {words}")
+        return self
+
+
+def model_of(value: Model | Conversion) -> Model:
+    """Return the model of a model or a conversion."""
+    return value.model if isinstance(value, Conversion) else value

@@ -1,0 +1,147 @@
+"""The verb `convert`."""
+
+from __future__ import annotations
+
+import time
+from typing import Any
+
+from realize.conversions import ROWS, Task, convert_model, plan_route
+from realize.errors import Refused, UsageError
+from realize.models import FrequencyResponse, Model
+from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
+from realize.steps.conversion import Conversion, model_of
+from realize.steps.receipts import finish
+from realize.steps.second_opinion import ask
+from realize.verification import View, conversion_claims
+
+
+def _task(model: Model, to: str, form: str | None, common_denominator: bool) -> Task:
+    if to not in PARAMETRIC_KINDS:
+        raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
+    if form is not None and form not in FORMS:
+        raise UsageError(f"no form {form!r}; there are: {', '.join(FORMS)}")
+    if common_denominator and to != "transfer-function":
+        raise UsageError("--common-denominator goes with --to transfer-function")
+    if isinstance(model, FrequencyResponse):
+        raise Refused("a frequency response has no exact conversion to a model; use fit")
+    return Task(model, to, form, common_denominator)
+
+
+def explain(model: Model | Conversion, to: str, *, form: str | None = None, common_denominator: bool = False) -> list[str]:
+    """Return the route of a conversion in words, one line a row."""
+    task = _task(model_of(model), to, form, common_denominator)
+    route = plan_route(task)
+    if not route:
+        return [f"{task.model.kind} stays as it is (exact)"]
+    return [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
+
+
+def convert(
+    model: Model | Conversion,
+    to: str,
+    *,
+    form: str | None = None,
+    common_denominator: bool = False,
+    limits: dict[str, float] | None = None,
+    second_opinion: bool = False,
+) -> Conversion:
+    """Write the same model as another kind, or in other coordinates.
+
+    Parameters
+    ----------
+    model : Model or Conversion
+    to : str
+        A parametric kind.
+    form : str, optional
+        Coordinates of a state-space result; the default is a cascade for one channel, modal for several, and whatever
+        a state-space source has.
+    common_denominator : bool
+        One denominator for all channels of a transfer function.
+    limits : dict, optional
+        Limits by claim name, instead of the defaults.
+    second_opinion : bool
+        Ask an independent library, in a child process.
+
+    Returns
+    -------
+    Conversion
+
+    Raises
+    ------
+    UsageError, Refused
+    """
+    started = time.perf_counter()
+    source = model_of(model)
+    task = _task(source, to, form, common_denominator)
+    waiting = ask("convert", source, {"to": to}) if second_opinion else None
+    route = plan_route(task)
+    result = convert_model(task, route)
+    shape = _form_of(task, route)
+    claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
+    if form is None and to == "state-space" and _failed(claims) and shape == "modal":
+        # the default for several channels did not do: series connections, channel by channel
+        other = Task(source, to, "cascade", common_denominator)
+        second_route = plan_route(other)
+        second = convert_model(other, second_route)
+        second_claims = conversion_claims(source, second, True, limits)
+        if _worst(second_claims) < _worst(claims):
+            route, result, claims, shape = second_route, second, second_claims, "cascade"
+    cautions = _cautions(source, result, to)
+    return finish(
+        "convert",
+        f"exact rational arithmetic, {shape or to}" if _exact(route) else f"double arithmetic, {shape or to}",
+        [row.target for row in route],
+        source,
+        result,
+        claims,
+        started=started,
+        cautions=cautions,
+        opinion=waiting,
+        details={"form": shape} if shape else {},
+    )
+
+
+def _exact(route: list[Any]) -> bool:
+    return all(row in ROWS for row in route)
+
+
+def _form_of(task: Task, route: list[Any]) -> str:
+    if task.to != "state-space" or not route:
+        return ""
+    return route[-1].target.partition(":")[2]
+
+
+def _failed(claims: list[Claim]) -> bool:
+    return any(claim.holds is False for claim in claims)
+
+
+def _worst(claims: list[Claim]) -> float:
+    for claim in claims:
+        if claim.name == "peak-error":
+            return float("inf") if claim.infinite or claim.value is None else claim.value
+    return float("inf")
+
+
+def _cautions(source: Model, result: Model, to: str) -> list[str]:
+    notes = []
+    view = View(source)
+    if source.shape == (1, 1) and view.fractions is not None and source.order is not None:
+        hidden = source.order - max(view.fractions[0][0][1].degree(), view.fractions[0][0][0].degree())
+        if hidden > 0:
+            kept = (result.order or 0) > source.order - hidden
+            notes.append(
+                f"{hidden} of the source's {source.order} poles cancel exactly with zeros; "
+                + ("they are kept in the result." if kept else "the result is without them.")
+            )
+            unstable = view.cancelled_unstable
+            if unstable:
+                notes.append(f"{unstable} of the cancelled poles are not stable: the plant can run away unseen at its output.")
+    states = getattr(source, "states", ())
+    if any(state.name for state in states) and result is not source and not any(s.name for s in getattr(result, "states", ())):
+        notes.append("The states have new coordinates: their names and units are left behind.")
+    if source.offset is not None and source.offset.states is not None and result is not source:
+        notes.append("The operating point of the states is left behind with their coordinates.")
+    if result.beyond_doubles:
+        places = ", ".join(result.beyond_doubles[:3]) + (" ..." if len(result.beyond_doubles) > 3 else "")
+        notes.append(f"Numbers beyond the range of doubles are written as decimal strings: {places}.")
+    return notes

@@ -1,0 +1,168 @@
+"""The verb `fit`."""
+
+from __future__ import annotations
+
+import time
+from typing import Any
+
+import numpy as np
+
+from realize.conversions import Task, convert_model, plan_route
+from realize.errors import InputError, UsageError
+from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue
+from realize.schema import FIT_METHODS, PARAMETRIC_KINDS, Claim, judge
+from realize.steps.conversion import Conversion, model_of
+from realize.steps.receipts import finish
+from realize.steps.second_opinion import ask
+from realize.verification.misfit import misfit, rms_misfit, weighted_misfit, worst_misfit
+from realize.verification.stability import order_claim, stability_claim
+
+
+def fit(
+    data: Model | Conversion,
+    *,
+    to: str = "state-space",
+    order: int | tuple[int, int] | str = "auto",
+    method: str = "auto",
+    dead_time: float | None = None,
+    band: tuple[float, float] | None = None,
+    limits: dict[str, float] | None = None,
+    second_opinion: bool = False,
+) -> Conversion:
+    """Turn a measured frequency response into a model.
+
+    Parameters
+    ----------
+    data : FrequencyResponse
+    to : str
+        Kind of the result.
+    order : int, (low, high) or "auto"
+        Number of poles.
+    method : str
+        "vector-fitting" or "auto".
+    dead_time : float, optional
+        Known dead time of every channel, s; it is taken out of the data and put into the model.
+    band : (low, high), optional
+        Use only these frequencies, rad/s.
+    limits : dict, optional
+        Limits by claim name.
+    second_opinion : bool
+
+    Returns
+    -------
+    Conversion
+        ``receipt.details`` holds the candidates of the order, the poles with frequency and damping, and the noise.
+
+    Raises
+    ------
+    InputError, UsageError, Refused
+    """
+    started = time.perf_counter()
+    source = model_of(data)
+    if not isinstance(source, FrequencyResponse):
+        raise UsageError(f"fit takes a frequency response, and this is a {source.kind}; use convert or reduce")
+    if to not in PARAMETRIC_KINDS:
+        raise UsageError(f"no kind {to!r} to fit; there are: {', '.join(PARAMETRIC_KINDS)}")
+    if method not in FIT_METHODS:
+        raise UsageError(f"no method {method!r}; there are: {', '.join(FIT_METHODS)}")
+    given = limits or {}
+    keep = _lines(source, band)
+    dead = _dead_time(source, dead_time)
+    waiting = ask("fit", source, {}) if second_opinion else None
+
+    from realize.fitting import fit_response
+
+    w = source.radians[keep]
+    response = source.response[keep]
+    if dead is not None:
+        response = response * np.exp(1j * w[:, None, None] * dead.total)
+    found = fit_response(
+        w,
+        response,
+        deviation=None if source.deviation is None else source.deviation[keep],
+        coherence=None if source.coherence is None else source.coherence[keep],
+        order=order,
+        method=method,
+        period=source.time.seconds if source.time.sampled else None,
+    )
+    common = source.common() | {"dead_time": dead}
+    residue_model = PoleResidue(poles=found.poles, residues=found.residues, direct=found.direct, **common)
+    task = Task(residue_model, to)
+    route = plan_route(task)
+    result = convert_model(task, route)
+
+    part = misfit(source, result, keep)
+    claims: list[Claim] = [rms_misfit(part, given.get("rms-misfit")), worst_misfit(part, given.get("worst-misfit"))]
+    if source.deviation is not None:
+        weighted = weighted_misfit(part, source.deviation, given.get("weighted-misfit"))
+    else:
+        weighted = judge(
+            "weighted-misfit",
+            found.weighted,
+            unit="1",
+            uncertainty=1e-9 * (1 + found.weighted),
+            limit=given.get("weighted-misfit"),
+            note=f"the deviation is {found.noise.basis}",
+        )
+    claims += [weighted] if weighted is not None else []
+    claims += [order_claim(result, given.get("order")), stability_claim(result)]
+    cautions = list(found.cautions)
+    cautions.append(
+        f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({w[0] / (2 * np.pi):.6g} to {w[-1] / (2 * np.pi):.6g} Hz): "
+        "outside of it nothing was measured."
+    )
+    return finish(
+        "fit",
+        found.method,
+        ["pole-residue", *(row.target for row in route)],
+        source,
+        result,
+        claims,
+        started=started,
+        cautions=cautions,
+        opinion=waiting,
+        details=_details(found, source, len(w)),
+    )
+
+
+def _lines(source: FrequencyResponse, band: tuple[float, float] | None) -> np.ndarray:
+    w = source.radians
+    if band is None:
+        return np.ones(w.size, dtype=bool)
+    # a line at the edge that the change of units moved by a rounding still counts
+    slack = 4 * np.finfo(float).eps
+    keep = (w >= band[0] * (1 - slack)) & (w <= band[1] * (1 + slack))
+    if not keep.any():
+        raise InputError(
+            f"no line between {band[0]:.6g} and {band[1]:.6g} rad/s",
+            f"a band that overlaps {w[0]:.6g} to {w[-1]:.6g} rad/s",
+            field="band",
+        )
+    return keep
+
+
+def _dead_time(source: FrequencyResponse, seconds: float | None) -> DeadTime | None:
+    """Return the dead time of the model: what the data file says, or the same for all channels."""
+    if seconds is None:
+        return source.dead_time
+    if source.dead_time is not None:
+        raise UsageError("the data already state a dead time; leave --dead-time out")
+    p, m = source.shape
+    return DeadTime((0.0,) * m, (0.0,) * p, tuple((float(seconds),) * m for _ in range(p)))
+
+
+def _details(found: Any, source: FrequencyResponse, lines: int) -> dict[str, Any]:
+    return {
+        "lines": lines,
+        "noise": {"basis": found.noise.basis, "level": found.noise.level},
+        "candidates": [
+            {"order": c.order, "rms": c.rms, "weighted": c.weighted, "criterion": c.criterion, "kept": c.kept}
+            for c in found.candidates
+        ],
+        "poles": [[pole.real, pole.imag, 1] for pole in found.poles.tolist()],
+        "modes": [
+            {"frequency": row.frequency, "damping": row.damping, "dominance": row.dominance, "pair": row.pair}
+            for row in found.pole_table
+        ],
+        "period": source.time.seconds if source.time.sampled else None,
+    }

@@ -1,0 +1,183 @@
+"""Child process of the second opinion: the step by scipy.signal or slycot, its response on standard output.
+
+Run by path, with isolated imports: it shares nothing with the package but the request. slycot is GPL-2.0 and is imported
+here only.
+"""
+
+import json
+import resource
+import sys
+
+
+class Inapplicable(Exception):
+    """The library has no routine for this step."""
+
+
+def main() -> None:
+    """Read a request from standard input, answer on standard output."""
+    memory, seconds = int(sys.argv[1]), int(sys.argv[2])
+    resource.setrlimit(resource.RLIMIT_AS, (memory, memory))
+    resource.setrlimit(resource.RLIMIT_CPU, (seconds, seconds + 1))
+    resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
+    request = json.load(sys.stdin)
+    answer = {"by": ""}
+    try:
+        import numpy as np
+
+        with np.errstate(all="ignore"):
+            answer["by"], response = {"convert": convert, "reduce": reduce}[request["step"]](request)
+        answer["real"], answer["imaginary"] = response.real.tolist(), response.imag.tolist()
+    except Inapplicable as error:
+        answer.update(error=str(error), inapplicable=True)
+    except MemoryError:
+        answer.update(error="memory limit reached")
+    except Exception as error:  # whatever the library raises is its own failure and is reported as such
+        answer.update(error=f"{type(error).__name__}: {error}")
+    json.dump(answer, sys.stdout)
+
+
+def points(request):
+    """Return s or z at the requested frequencies."""
+    import numpy as np
+
+    w = np.array(request["frequency"])
+    return 1j * w if request["period"] is None else np.exp(1j * w * request["period"])
+
+
+def states(A, B, C, D, E, s):
+    """Return C (sE - A)^-1 B + D."""
+    import numpy as np
+
+    E = np.eye(A.shape[0]) if E is None else E
+    return np.array([C @ np.linalg.solve(x * E - A, B) + D if A.size else D for x in s], dtype=complex)
+
+
+def arrays(fields):
+    """Return the matrices of a state model."""
+    import numpy as np
+
+    A, B, C, D = (np.array(fields[name], dtype=float) for name in "ABCD")
+    n = A.shape[0]
+    E = None if fields["E"] is None else np.array(fields["E"], dtype=float)
+    return A.reshape(n, n), B.reshape(n, -1) if n else np.zeros((0, D.shape[1])), C.reshape(D.shape[0], n), D, E
+
+
+def complex_list(pair):
+    """Return a complex vector from [real, imaginary]."""
+    import numpy as np
+
+    return np.array(pair[0]) + 1j * np.array(pair[1])
+
+
+def convert(request):
+    """Return the response of the target by scipy.signal's own route through the requested kind, channel by channel."""
+    import numpy as np
+    from scipy import signal
+
+    kind, to, fields, s = request["kind"], request["options"]["to"], request["fields"], points(request)
+    p, m = request["shape"]
+    by = "scipy.signal"
+    if kind == "state-space":
+        A, B, C, D, E = arrays(fields)
+        if E is not None:
+            raise Inapplicable("scipy.signal has no descriptor models")
+        if to == "state-space":
+            return by, states(A, B, C, D, None, s)
+        values = np.empty((s.size, p, m), dtype=complex)
+        for j in range(m):
+            numerators, denominator = signal.ss2tf(A, B, C, D, input=j)
+            for i in range(p):
+                values[:, i, j] = through(signal, "transfer-function", (numerators[i], denominator), to, s)
+        return by, values
+    values = np.empty((s.size, p, m), dtype=complex)
+    if kind == "pole-residue":
+        poles = complex_list(fields["poles"])
+        residues = complex_list(fields["residues"]).reshape(poles.size, p, m)
+        direct = np.array(fields["direct"], dtype=float)
+        if np.any(np.array(fields["powers"]) != 1) or direct.shape[0] != 1:
+            raise Inapplicable("repeated poles and polynomial parts have no counterpart in scipy.signal")
+        for i in range(p):
+            for j in range(m):
+                n, d = signal.invres(residues[:, i, j], poles, direct[0, i, j : j + 1] if direct[0, i, j] else [])
+                values[:, i, j] = through(signal, "transfer-function", (np.real(n), np.real(d)), to, s)
+        return by, values
+    if kind == "sections":
+        n, d = np.array([1.0]), np.array([1.0])
+        for numerator, denominator in fields["sections"]:
+            n, d = np.polymul(n, numerator), np.polymul(d, denominator)
+        values[:, 0, 0] = through(signal, "transfer-function", (n * fields["gain"], d), to, s)
+        return by, values
+    for i in range(p):
+        for j in range(m):
+            if kind == "transfer-function":
+                data = (np.array(fields["numerator"][i][j]), np.array(fields["denominator"][i][j]))
+            else:
+                data = (complex_list(fields["zeros"][i][j]), complex_list(fields["poles"][i][j]), fields["gain"][i][j])
+            values[:, i, j] = through(signal, kind, data, to, s)
+    return by, values
+
+
+def through(signal, kind, data, to, s):
+    """Convert one channel to the target kind with scipy.signal, and return the response of what came out."""
+    import numpy as np
+
+    if kind == "transfer-function" and not np.any(data[0]):
+        return np.zeros(s.size, dtype=complex)
+    if to == "state-space":
+        n, d = (data[0], data[1]) if kind == "transfer-function" else (data[0], data[1])
+        if len(n) > len(d):
+            raise Inapplicable("scipy.signal has no improper state models")
+        made = signal.tf2ss(*data) if kind == "transfer-function" else signal.zpk2ss(*data)
+        A, B, C, D = (np.real(part) for part in made)
+        return states(A, B, C, D, None, s)[:, 0, 0] if A.size else np.full(s.size, D[0, 0], dtype=complex)
+    if to == "zero-pole-gain":
+        z, p, k = signal.tf2zpk(*data) if kind == "transfer-function" else data
+        return k * np.prod(s[:, None] - z, axis=1) / np.prod(s[:, None] - p, axis=1)
+    n, d = data if kind == "transfer-function" else signal.zpk2tf(*data)
+    if to == "pole-residue":
+        r, p, k = signal.residue(n, d)
+        value, last, power = np.polyval(k, s) if len(k) else np.zeros(s.size, dtype=complex), None, 1
+        for residue, pole in zip(r, p):
+            power = power + 1 if last is not None and abs(pole - last) <= 1e-3 * abs(last) else 1
+            value = value + residue / (s - pole) ** power
+            last = pole
+        return value
+    if to == "sections":
+        z, p, k = signal.tf2zpk(n, d)
+        if len(z) > len(p):
+            raise Inapplicable("scipy.signal has no improper sections")
+        value = np.ones(s.size, dtype=complex)
+        for row in signal.zpk2sos(z, p, k, analog=True, pairing="minimal"):
+            value = value * np.polyval(row[:3], s) / np.polyval(row[3:], s)
+        return value
+    return np.polyval(n, s) / np.polyval(d, s)
+
+
+def reduce(request):
+    """Return the response of slycot's balanced truncation (AB09AD) of the same order."""
+    import numpy as np
+
+    if request["kind"] != "state-space":
+        raise Inapplicable("the independent routine takes state models only")
+    A, B, C, D, E = arrays(request["fields"])
+    order = request["options"]["order"]
+    if E is not None:
+        raise Inapplicable("the independent routine has no descriptor models")
+    n = A.shape[0]
+    if n < 3 or not 0 < order < n:
+        raise Inapplicable("the independent routine is not called for orders below 3, nor for trivial reductions")
+    eigenvalues = np.linalg.eigvals(A)
+    sampled = request["period"] is not None
+    if np.any(np.abs(eigenvalues) >= 1) if sampled else np.any(eigenvalues.real >= 0):
+        raise Inapplicable("the independent routine takes stable models only")
+    try:
+        import slycot
+    except ImportError:
+        raise Inapplicable("slycot is not installed") from None
+    made = slycot.ab09ad("D" if sampled else "C", "B", "N", n, B.shape[1], C.shape[0], A, B, C, nr=order)
+    nr, Ar, Br, Cr = made[:4]
+    return "slycot AB09AD", states(Ar[:nr, :nr], Br[:nr], Cr[:, :nr], D, None, points(request))
+
+
+if __name__ == "__main__":
+    main()

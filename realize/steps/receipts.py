@@ -1,0 +1,120 @@
+"""Assemble the receipt of a step."""
+
+from __future__ import annotations
+
+import time
+from collections.abc import Callable, Sequence
+from functools import cache
+from typing import Any
+
+import numpy as np
+
+from realize._version import __version__
+from realize.models import FrequencyResponse, Model, mark
+from realize.schema import Claim, Receipt, SecondOpinion
+from realize.steps.conversion import Conversion
+from realize.verification import View, fragility
+from realize.verification.search import seeds
+from realize.verification.conversion import whole_band
+
+CLOSED_LOOP = (
+    "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."
+)
+#: Fragility above which the receipt points to another kind.
+FRAGILE = 1e-6
+
+
+@cache
+def versions() -> dict[str, str]:
+    """Return the versions of this package and of what it computes with."""
+    import platform
+    from importlib.metadata import version
+
+    return {"realize": __version__, "python": platform.python_version()} | {
+        name: version(name) for name in ("numpy", "scipy", "python-flint")
+    }
+
+
+def fragility_of(model: Model, frequency: np.ndarray) -> float | None:
+    """Return the fragility over the frequencies, None for data."""
+    return None if isinstance(model, FrequencyResponse) else fragility(model, frequency)
+
+
+def probe_frequencies(model: Model, count: int = 60) -> np.ndarray:
+    """Return up to `count` frequencies (rad/s) over the dynamics of a model, none at a pole on the axis."""
+    if isinstance(model, FrequencyResponse):
+        w = model.radians[model.radians > 0]
+    else:
+        view = View(model)
+        w = seeds(whole_band(view, margin=1.0), view.poles)
+        w = w[w > 0]
+    if w.size > count:
+        w = w[np.unique(np.linspace(0, w.size - 1, count).astype(int))]
+    return w
+
+
+def fragility_cautions(values: dict[str, float | None], result: Model) -> list[str]:
+    """Return words where the doubles of source or result cannot carry the response."""
+    cautions = []
+    source, after = values.get("source"), values.get("result")
+    if source is not None and source > FRAGILE:
+        cautions.append(
+            f"The source itself is fragile: one rounding of its numbers moves its response by up to {source:.1e} of its size."
+        )
+    if after is not None and after > FRAGILE and after > 10 * (source or 0.0):
+        cautions.append(
+            f"Doubles hold this plant badly as {result.kind}: one rounding moves its response by up to {after:.1e} of its size. "
+            "Keep it as state-space (cascade), sections, zero-pole-gain or pole-residue."
+        )
+    return cautions
+
+
+def finish(
+    step: str,
+    method: str,
+    route: Sequence[str],
+    source: Model,
+    result: Model,
+    claims: list[Claim],
+    *,
+    started: float,
+    cautions: Sequence[str] = (),
+    opinion: Callable[[Model], SecondOpinion] | None = None,
+    details: dict[str, Any] | None = None,
+) -> Conversion:
+    """Return the conversion with its receipt, the model carrying the chain.
+
+    Parameters
+    ----------
+    started : float
+        ``time.perf_counter()`` at the start of the step.
+    opinion : callable, optional
+        Waits for the second opinion about the result.
+    """
+    frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
+    values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
+    notes = list(cautions) + fragility_cautions(values, result)
+    undecided = [claim.name for claim in claims if claim.holds is None and claim.limit is not None]
+    if undecided:
+        notes.append(
+            f"Measured at many frequencies, with no bound on what hides between them: {', '.join(undecided)}."
+        )
+    second = opinion(result) if opinion is not None else SecondOpinion()
+    if second.status == "disagrees":
+        notes.append(f"The second opinion disagrees: {second.note}")
+    notes.append(CLOSED_LOOP)
+    receipt = Receipt(
+        step=step,
+        method=method,
+        route=list(route),
+        source=mark(source),
+        result=mark(result),
+        claims=claims,
+        fragility=values,
+        second_opinion=second,
+        cautions=notes,
+        details=details or {},
+        versions=versions(),
+        seconds=round(time.perf_counter() - started, 6),
+    )
+    return Conversion(result.with_(receipts=(*source.receipts, receipt)), receipt)

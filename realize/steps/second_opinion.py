@@ -1,0 +1,147 @@
+"""The second opinion: the same step by an independent library, in a child process with limits on time and memory.
+
+The child can crash, hang or answer nonsense: the receipt then says "failed" and the result stands.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import subprocess
+import sys
+import tempfile
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from realize.models import FrequencyResponse, Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.schema import SecondOpinion
+
+#: Seconds that the child may take, counted from its start.
+TIME_LIMIT = 30.0
+#: Bytes of address space.
+MEMORY_LIMIT = 8 * 2**30
+#: Largest difference, relative to the largest gain, that still counts as agreement: what library routines of working
+#: precision give on harmless models is 1e-8 and better.
+AGREEMENT = 1e-6
+#: Larger models are not handed over.
+LARGEST_ORDER = 1500
+FREQUENCIES = 40
+
+CHILD = Path(__file__).with_name("opinion_child.py")
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, np.ndarray):
+        if value.dtype.kind == "c":
+            return [value.real.tolist(), value.imag.tolist()]
+        return value.tolist()
+    if isinstance(value, tuple):
+        return [_plain(entry) for entry in value]
+    return value
+
+
+def _request(step: str, source: Model, options: dict[str, Any], frequency: np.ndarray) -> dict[str, Any] | None:
+    if isinstance(source, FrequencyResponse) or source.beyond_doubles or (source.order or 0) > LARGEST_ORDER:
+        return None
+    known = (TransferFunction, ZeroPoleGain, PoleResidue, Sections, StateSpace)
+    if not isinstance(source, known):
+        return None
+    fields = {name: _plain(value) for name, value in source.parameters().items() if name != "states"}
+    return {
+        "step": step,
+        "kind": source.kind,
+        "shape": list(source.shape),
+        "period": source.time.seconds if source.time.sampled else None,
+        "fields": fields,
+        "options": options,
+        "frequency": frequency.tolist(),
+    }
+
+
+def ask(step: str, source: Model, options: dict[str, Any]) -> Callable[[Model], SecondOpinion]:
+    """Start the child for a step and return a function that waits for it and judges the result.
+
+    Parameters
+    ----------
+    step : str
+        Name of the verb.
+    source : Model
+    options : dict
+        What the child needs to know of the step.
+    """
+    if step not in ("convert", "reduce"):
+        return lambda result: SecondOpinion(status="not-applicable", note="no independent routine for this step")
+    from realize.steps.receipts import probe_frequencies
+
+    frequency = probe_frequencies(source, FREQUENCIES) if not isinstance(source, FrequencyResponse) else np.ones(1)
+    request = _request(step, source, options, frequency)
+    if request is None:
+        return lambda result: SecondOpinion(status="not-applicable", note="the model is too large or beyond the range of doubles")
+    files = tempfile.TemporaryFile(), tempfile.TemporaryFile()
+    files[0].write(json.dumps(request).encode())
+    files[0].seek(0)
+    environment = {**os.environ, "OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"}
+    try:
+        child = subprocess.Popen(
+            [sys.executable, "-I", str(CHILD), str(MEMORY_LIMIT), str(int(TIME_LIMIT))],
+            stdin=files[0],
+            stdout=files[1],
+            stderr=subprocess.DEVNULL,
+            env=environment,
+        )
+    except OSError as error:
+        note = f"the child process could not be started: {error}"
+        return lambda result: SecondOpinion(status="failed", note=note)
+    return lambda result: _judge(child, files, frequency, result)
+
+
+def _judge(child: subprocess.Popen[bytes], files: tuple[Any, Any], frequency: np.ndarray, result: Model) -> SecondOpinion:
+    try:
+        code = child.wait(timeout=TIME_LIMIT)
+        files[1].seek(0)
+        text = files[1].read()
+    except subprocess.TimeoutExpired:
+        return SecondOpinion(status="failed", note=f"no answer within {TIME_LIMIT:g} s")
+    finally:
+        if child.poll() is None:
+            child.kill()
+            child.wait()
+        for file in files:
+            file.close()
+    if code != 0 or not text:
+        what = f"died with signal {-code}" if code < 0 else f"ended with status {code}"
+        return SecondOpinion(status="failed", note=f"the independent library {what}")
+    try:
+        answer = json.loads(text)
+    except ValueError:
+        return SecondOpinion(status="failed", note="the independent library's answer could not be read")
+    by = str(answer.get("by", ""))
+    if "error" in answer:
+        status = "not-applicable" if answer.get("inapplicable") else "failed"
+        return SecondOpinion(by=by, status=status, note=str(answer["error"])[:300])  # type: ignore[arg-type]
+    theirs = np.array(answer["real"], dtype=float) + 1j * np.array(answer["imaginary"], dtype=float)
+    with np.errstate(all="ignore"):
+        ours = result.rational_part(result.time.points(frequency))
+    if theirs.shape != ours.shape:
+        return SecondOpinion(by=by, status="failed", note=f"an answer of shape {list(theirs.shape)} instead of {list(ours.shape)}")
+    usable = np.isfinite(ours).all(axis=(1, 2))
+    if not np.isfinite(theirs[usable]).all():
+        return SecondOpinion(by=by, status="failed", note="its response is infinite or not a number")
+    if not usable.any():
+        return SecondOpinion(by=by, status="failed", note="no frequency at which the responses could be compared")
+    difference = np.linalg.norm((theirs - ours)[usable], axis=(1, 2))
+    size = np.linalg.norm(ours[usable], axis=(1, 2)).max()
+    worst = int(np.argmax(difference))
+    agreement = float(difference[worst] / size) if size > 0 else float(difference[worst] > 0)
+    if agreement <= AGREEMENT:
+        return SecondOpinion(by=by, agreement=agreement, status="agrees")
+    where = frequency[usable][worst]
+    return SecondOpinion(
+        by=by,
+        agreement=agreement,
+        status="disagrees",
+        note=f"its response differs by {agreement:.1e} of the largest gain at {where:.6g} rad/s",
+    )

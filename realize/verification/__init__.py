@@ -1,0 +1,7 @@
+"""Claims, from two models and kernels alone."""
+
+from realize.verification.conversion import Pair, conversion_claims
+from realize.verification.fragility import fragility
+from realize.verification.views import View
+
+__all__ = ["Pair", "View", "conversion_claims", "fragility"]

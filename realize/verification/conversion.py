@@ -1,0 +1,281 @@
+"""Claims about a conversion, from source and result alone (definitions: realize.schema.claims, docs/methods/claims)."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.models import Model
+from realize.schema import CLAIMS, Claim, judge
+from realize.verification.search import LIGHT, Band, axis_intervals, dynamic_band, largest, seeds
+from realize.verification.views import NO_DYNAMICS, Dynamics, View
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True)
+class Pair:
+    """Source and result, with their difference evaluated where needed."""
+
+    source: View
+    result: View
+
+    @cached_property
+    def exact(self) -> bool:
+        """True where both are compared in exact arithmetic."""
+        return self.source.fractions is not None and self.result.fractions is not None
+
+    def sizes(self, w: Array) -> tuple[Array, Array]:
+        """Return |dG| and |G_source| of each channel: two arrays [k][p][m]."""
+        p, m = self.source.model.shape
+        if self.exact:
+            difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
+            from realize.kernels.exact.evaluation import difference as exact_difference
+
+            assert self.source.fractions is not None and self.result.fractions is not None
+            for i in range(p):
+                for j in range(m):
+                    found = exact_difference(
+                        *self.source.fractions[i][j], *self.result.fractions[i][j], w, self.source.exact_period
+                    )
+                    difference[:, i, j], size[:, i, j] = found.value, found.reference
+            return difference, size
+        first, second = self.source.response(w), self.result.response(w)
+        return np.abs(first - second), np.abs(first)
+
+
+def _frobenius(values: Array) -> Array:
+    """Return the Frobenius norm over the channels, safe against overflow."""
+    largest_entry = values.max(axis=(1, 2), keepdims=True)
+    scale = np.where((largest_entry > 0) & np.isfinite(largest_entry), largest_entry, 1.0)
+    return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]
+
+
+def _finite_at_zero(view: View) -> bool:
+    """True where every channel is finite at zero frequency and some channel is not zero there."""
+    poles = view.poles
+    if poles.s.size and np.any(poles.s == 0):
+        return False
+    return bool(np.any(view.response(np.zeros(1)) != 0))
+
+
+def _channel_band(view: View, i: int, j: int) -> Band:
+    zeros, poles = view.channel_roots[i][j]
+    at_origin = bool(np.any(poles.s == 0))
+    finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
+    return dynamic_band(zeros, poles, view.period, finite)
+
+
+def _light_zeros(zeros: Dynamics) -> list[float]:
+    light = (zeros.damping < LIGHT) & (zeros.frequency > 0)
+    return sorted(set(zeros.frequency[light].tolist()))
+
+
+def _common_zeros(view: View) -> Dynamics:
+    """Zeros shared by every channel that is not identically zero."""
+    p, m = view.model.shape
+    lists = [view.channel_roots[i][j][0] for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    if not lists:
+        return NO_DYNAMICS
+    if len(lists) == 1:
+        return lists[0]
+    shared = set(lists[0].s.tolist()).intersection(*(set(zeros.s.tolist()) for zeros in lists[1:]))
+    keep = np.array([value in shared for value in lists[0].s.tolist()], dtype=bool)
+    return Dynamics(lists[0].s[keep], lists[0].on_axis[keep])
+
+
+def zero_channel(view: View, i: int, j: int) -> bool:
+    """True where a channel is identically zero (exactly, or at every seed in doubles)."""
+    if view.fractions is not None:
+        return view.fractions[i][j][0].degree() < 0
+    return not np.any(view.response(10.0 ** np.linspace(-3, 3, 7) * 1.0375)[:, i, j])
+
+
+def _relative(pair: Pair, w: Array, lines: list[float], channel: tuple[int, int] | None, peak: float) -> Array:
+    """Return the relative error at w with the divisor of light zeros taken from the edges of their interval."""
+    difference, size = pair.sizes(w)
+    if channel is None:
+        above, below = _frobenius(difference), _frobenius(size)
+    else:
+        above, below = difference[:, channel[0], channel[1]], size[:, channel[0], channel[1]]
+    for line in lines:
+        near = np.abs(w - line) <= LIGHT * line
+        if near.any():
+            edges = pair.sizes(np.array([line * (1 - LIGHT), line * (1 + LIGHT)]))[1]
+            edge = _frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
+            below = np.where(near, edge.max(), below)
+    if peak:
+        below = np.full(above.shape, peak)
+    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+        error = above / below
+    return np.where(above == 0, 0.0, error)
+
+
+def _note(pair: Pair) -> str:
+    return "" if pair.exact else "evaluated in double arithmetic; the rounding of the evaluation is part of the value"
+
+
+def response_error(pair: Pair, limit: float | None = None) -> Claim:
+    """Return the claim `response-error`."""
+    view = pair.source
+    p, m = view.model.shape
+    bands = [_channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    if not bands:
+        bands = [Band(0.1, 10.0, True)]
+    band = Band(
+        min(b.low for b in bands), max(b.high for b in bands), _finite_at_zero(view), axis_intervals(view.poles)
+    )
+    zeros = _common_zeros(view)
+    w = seeds(band, zeros, view.poles, pair.result.poles, *_channel_zeros(view))
+    value, where = largest(lambda x: _relative(pair, x, _light_zeros(zeros), None, 0.0), w, band)
+    return judge("response-error", value, limit=limit, where={"frequency": where}, note=_note(pair))
+
+
+def _channel_zeros(view: View) -> list[Dynamics]:
+    return [zeros for row in view.channel_roots for zeros, _ in row]
+
+
+def channel_error(pair: Pair, limit: float | None = None) -> Claim:
+    """Return the claim `channel-error`: the worst channel, each over its own dynamic band."""
+    view = pair.source
+    p, m = view.model.shape
+    worst, place = 0.0, {}
+    gain = None
+    for i in range(p):
+        for j in range(m):
+            if zero_channel(view, i, j):
+                if gain is None:
+                    gain = peak_gain(pair)[0]
+                band = Band(0.1, 10.0) if not view.poles.s.size else whole_band(view)
+                w = seeds(band, view.poles, pair.result.poles)
+                value, where = largest(lambda x, c=(i, j): _relative(pair, x, [], c, gain or 1.0), w, band)
+            else:
+                band = _channel_band(view, i, j)
+                zeros, poles = view.channel_roots[i][j]
+                w = seeds(band, zeros, poles, pair.result.channel_roots[i][j][1])
+                value, where = largest(lambda x, c=(i, j), z=zeros: _relative(pair, x, _light_zeros(z), c, 0.0), w, band)
+            if not value <= worst:
+                worst, place = value, {"frequency": where, "output": i, "input": j}
+    return judge("channel-error", worst, limit=limit, where=place, note=_note(pair))
+
+
+def whole_band(view: View, margin: float = 1e2) -> Band:
+    """Return the dynamic band of all channels together, widened by a factor; zero included, axis poles left out."""
+    zeros = NO_DYNAMICS
+    for part in _channel_zeros(view):
+        zeros = zeros.merged(part)
+    at_origin = bool(np.any(view.poles.s == 0))
+    band = dynamic_band(zeros, view.poles, view.period, not at_origin)
+    top = np.pi / view.period if view.period is not None else np.inf
+    low = band.low / margin if not at_origin else band.low
+    return Band(max(low, 1e-300), min(band.high * margin, top, 1e300), not at_origin, band.left_out)
+
+
+def peak_gain(pair: Pair) -> tuple[float, float]:
+    """Return the largest Frobenius gain of the source found, and its frequency."""
+    band = whole_band(pair.source)
+    w = seeds(band, pair.source.poles, *_channel_zeros(pair.source))
+    return largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
+
+
+def peak_error(pair: Pair, limit: float | None = None) -> Claim:
+    """Return the claim `peak-error`."""
+    gain, _ = peak_gain(pair)
+    band = whole_band(pair.source)
+    w = seeds(band, pair.source.poles, pair.result.poles)
+    value, where = largest(lambda x: _frobenius(pair.sizes(x)[0]), w, band)
+    error = value / gain if gain > 0 else (0.0 if value == 0 else np.inf)
+    return judge("peak-error", error, limit=limit, where={"frequency": where}, note=_note(pair))
+
+
+def end_behaviour(pair: Pair, limit: float | None = None) -> Claim | None:
+    """Return the claim `end-behaviour`, or None where exact fractions are not affordable."""
+    if not pair.exact:
+        return None
+    from realize.kernels.exact.numbers import nearest
+
+    assert pair.source.fractions is not None and pair.result.fractions is not None
+    worst, note, place = 0.0, "", {}
+    origin = 0 if pair.source.period is None else 1
+    for i, (one, two) in enumerate(zip(pair.source.fractions, pair.result.fractions, strict=True)):
+        for j, ((n1, d1), (n2, d2)) in enumerate(zip(one, two, strict=True)):
+            value, said = 0.0, ""
+            if n1.degree() < 0 or n2.degree() < 0:
+                if n1.degree() != n2.degree():
+                    value, said = np.inf, "a channel that is identically zero on one side is not on the other"
+            elif n1.degree() - d1.degree() != n2.degree() - d2.degree():
+                value = np.inf
+                said = f"relative degree {d1.degree() - n1.degree()} became {d2.degree() - n2.degree()}"
+            elif _multiplicity(n1, origin) != _multiplicity(n2, origin) or _multiplicity(d1, origin) != _multiplicity(d2, origin):
+                value, said = np.inf, f"the multiplicity of poles or zeros at {'z = 1' if origin else 'the origin'} changed"
+            else:
+                ratio = (n2.leading_coefficient() * d1.leading_coefficient()) / (
+                    n1.leading_coefficient() * d2.leading_coefficient()
+                )
+                value = abs(nearest(ratio - 1))
+                moved = _axis_moved(pair, i, j)
+                if moved:
+                    value, said = np.inf, moved
+            if value > worst or (value == worst and said and not note):
+                worst, note, place = value, said, {"output": i, "input": j}
+    return judge("end-behaviour", worst, limit=limit, basis="proved", uncertainty=0.0, note=note, where=place)
+
+
+def _multiplicity(polynomial: Any, point: int) -> int:
+    """Return how often the polynomial vanishes at the integer point."""
+    count = 0
+    while polynomial.degree() >= 0 and polynomial(point) == 0:
+        polynomial = polynomial // type(polynomial)([-point, 1])
+        count += 1
+    return count
+
+
+def _axis_moved(pair: Pair, i: int, j: int) -> str:
+    """Return words if a pole on the axis left it, or moved by more than one unit in the last place; else ''."""
+    first, second = pair.source.channel_roots[i][j][1], pair.result.channel_roots[i][j][1]
+    a = np.sort(np.abs(first.s[first.on_axis].imag))
+    if a.size == 0:
+        return ""
+    b = np.sort(np.abs(second.s[second.on_axis].imag))
+    if a.size != b.size:
+        return f"{a.size} poles on the axis became {b.size}"
+    if np.any(np.abs(a - b) > 2 * np.spacing(a)):
+        return "a pole on the axis moved by more than one unit in the last place"
+    return ""
+
+
+def conversion_claims(source: Model, result: Model, structured: bool, limits: dict[str, float] | None = None) -> list[Claim]:
+    """Return the claims of a conversion.
+
+    Parameters
+    ----------
+    source, result : Model
+        Parametric models of the same shape and time base.
+    structured : bool
+        True for results whose coordinates keep every channel accurate everywhere: judged by response error and end
+        behaviour too.
+    limits : dict, optional
+        Limits that replace the defaults, by claim name.
+    """
+    given = limits or {}
+
+    def limit(name: str) -> float | None:
+        if name in given:
+            return given[name]
+        defaults = CLAIMS[name].limits
+        return defaults.get("convert", defaults.get("convert:structured") if structured else None)
+
+    pair = Pair(View(source), View(result))
+    claims = [response_error(pair, limit("response-error"))]
+    if source.shape != (1, 1):
+        claims.append(channel_error(pair, limit("channel-error")))
+    claims.append(peak_error(pair, limit("peak-error")))
+    end = end_behaviour(pair, limit("end-behaviour"))
+    if end is not None:
+        claims.append(end)
+    claims.append(judge("order", float(result.order or 0), unit="states", basis="proved", uncertainty=0.0, limit=given.get("order")))
+    return claims

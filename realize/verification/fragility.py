@@ -1,0 +1,125 @@
+"""Fragility: how far one rounding of a model's own numbers can move its response, to first order.
+
+With u = 2^-53 and each number changed by at most u times itself, at one frequency ::
+
+    transfer function    u (sum |b_k s^k| / |N| + sum |a_k s^k| / |D|)
+    zero-pole-gain       u (1 + sum (|Re z| + |Im z|) / |s - z| + the same for poles)
+    pole-residue         u (sum |r| / |s - p|^k + k |r| (|Re p| + |Im p|) / |s - p|^(k+1) + sum |d_k s^k|) / |G|
+    sections             the sum over the sections of the transfer function's formula
+    state space          u (|C X| |B| + |C X| |A| |X B| + |C| |X B| + |D| (+ |s| |C X| |E| |X B|)) / |G|,  X = (sE - A)^-1
+
+in Frobenius norms over the channels; the largest value over the frequencies of the band is reported.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.kernels.response import balanced_states, scaled_polynomial
+from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+
+Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+_U = np.finfo(float).eps / 2
+
+
+def fragility(model: Model, frequency: Array) -> float | None:
+    """Return the largest relative first-order response change for one rounding of every number, over the frequencies.
+
+    Parameters
+    ----------
+    frequency : [k] float
+        Angular frequencies, rad/s, none of them at a pole or zero on the axis.
+    """
+    points = model.time.points(frequency)
+    with np.errstate(all="ignore"):
+        value = _relative(model, points)
+    value = value[np.isfinite(value)]
+    return float(value.max()) if value.size else None
+
+
+def _growth(mantissa: Array, exponent: NDArray[np.int64], points: ComplexArray) -> Array:
+    """Return sum |c_k s^k| / |p(s)|."""
+    bound = scaled_polynomial((mantissa, exponent), points)[2]
+    return bound / (4 * mantissa.size * np.finfo(float).eps)
+
+
+def _root_terms(roots: ComplexArray, points: ComplexArray) -> Array:
+    size = np.abs(roots.real) + np.abs(roots.imag)
+    return np.sum(np.where(size > 0, size[None, :] / np.abs(points[:, None] - roots[None, :]), 0.0), axis=1)
+
+
+def _relative(model: Model, points: ComplexArray) -> Array:
+    p, m = model.shape
+    if isinstance(model, StateSpace):
+        return _states(model, points)
+    if isinstance(model, Sections):
+        total = np.full(points.size, 1.0)
+        for section in model.sections:
+            for row in section:
+                lead = int(np.argmax(row != 0)) if np.any(row) else 2
+                mantissa, exponent = np.frexp(row[lead:])
+                total += _growth(mantissa, exponent.astype(np.int64), points)
+        return _U * total
+    response = model.rational_part(points)
+    size = np.abs(response)
+    if isinstance(model, PoleResidue):
+        change = np.zeros(size.shape)
+        distance = np.abs(points[:, None] - model.poles[None, :])
+        weight = np.abs(model.poles.real) + np.abs(model.poles.imag)
+        for k in range(model.poles.size):
+            power = int(model.powers[k])
+            factor = distance[:, k] ** -power * (1 + power * weight[k] / distance[:, k])
+            change += factor[:, None, None] * np.abs(model.residues[k])
+        part = np.zeros(size.shape)
+        for matrix in model.direct:
+            part = part * np.abs(points)[:, None, None] + np.abs(matrix)
+        change += part
+    else:
+        change = np.zeros(size.shape)
+        for i in range(p):
+            for j in range(m):
+                if isinstance(model, TransferFunction):
+                    terms = _growth(*model.exact_or_double("numerator", i, j), points) + _growth(
+                        *model.exact_or_double("denominator", i, j), points
+                    )
+                elif isinstance(model, ZeroPoleGain):
+                    terms = 1 + _root_terms(model.zeros[i][j], points) + _root_terms(model.poles[i][j], points)
+                else:
+                    raise TypeError(model.kind)
+                change[:, i, j] = np.where(size[:, i, j] > 0, terms * size[:, i, j], 0.0)
+    return _U * _norm(change) / _norm(size)
+
+
+def _norm(values: Array) -> Array:
+    top = values.max(axis=(1, 2), keepdims=True)
+    scale = np.where(top > 0, top, 1.0)
+    return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]
+
+
+def _states(model: StateSpace, points: ComplexArray) -> Array:
+    n = model.A.shape[0]
+    if n == 0:
+        return np.full(points.size, _U)
+    if n > 200:
+        points = points[:: max(1, points.size // 40)]
+    A, B, C, E = balanced_states(model.A, model.B, model.C, model.E)
+    result = np.empty(points.size)
+    eye = np.eye(n)
+    for k, s in enumerate(points):
+        try:
+            pencil = s * (eye if E is None else E) - A
+            right = np.linalg.solve(pencil, B)
+            left = np.linalg.solve(pencil.T, C.T).T
+        except np.linalg.LinAlgError:
+            result[k] = np.nan
+            continue
+        value = C @ right + model.D
+        row, column = np.abs(left), np.abs(right)
+        change = row @ np.abs(B) + row @ np.abs(A) @ column + np.abs(C) @ column + np.abs(model.D)
+        if E is not None:
+            change = change + abs(s) * (row @ np.abs(E) @ column)
+        size = np.linalg.norm(value)
+        result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
+    return result

@@ -1,0 +1,116 @@
+"""Frequencies to look at, and the search for the largest value of an error over them."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.verification.views import Dynamics
+
+Array = NDArray[np.float64]
+
+#: Zeros and poles closer to the axis than this damping ratio get an interval of the same relative width.
+LIGHT = 1e-4
+PER_DECADE = 12
+MOST_SEEDS = 2000
+
+
+@dataclass(frozen=True)
+class Band:
+    """A range of angular frequencies (rad/s), with zero included or not, and intervals left out."""
+
+    low: float
+    high: float
+    zero: bool = False
+    left_out: tuple[tuple[float, float], ...] = ()
+
+    def keep(self, w: Array) -> Array:
+        """Return the frequencies that are inside and not left out."""
+        inside = ((w >= self.low) & (w <= self.high)) | (self.zero & (w == 0))
+        for low, high in self.left_out:
+            inside &= ~((w > low) & (w < high))
+        return w[inside]
+
+
+def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_at_zero: bool) -> Band:
+    """Return 1/10 of the smallest to 10 times the largest nonzero |pole| or |zero|; around 1 rad/s where there is none."""
+    sizes = zeros.merged(poles).frequency
+    sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
+    top = np.pi / period if period is not None else np.inf
+    if sizes.size == 0:
+        middle = 1.0 if period is None else 0.1 * top
+        low, high = middle / 10, min(10 * middle, top)
+    else:
+        low, high = float(sizes.min()) / 10, min(float(sizes.max()) * 10, top)
+        low = min(low, high / 10)
+    return Band(max(low, 1e-300), min(high, 1e300), finite_at_zero, axis_intervals(poles))
+
+
+def axis_intervals(poles: Dynamics) -> tuple[tuple[float, float], ...]:
+    """Return the intervals around poles on the axis, of relative half-width `LIGHT`."""
+    frequencies = np.unique(np.abs(poles.s[poles.on_axis].imag))
+    return tuple((w * (1 - LIGHT), w * (1 + LIGHT)) for w in frequencies.tolist() if w > 0)
+
+
+def seeds(band: Band, *lists: Dynamics) -> Array:
+    """Return a grid over the band with every known pole and zero in it, and points beside the lightly damped ones."""
+    decades = max(np.log10(band.high) - np.log10(band.low), 0.1)
+    count = int(np.clip(PER_DECADE * decades, 25, 600))
+    parts = [10.0 ** np.linspace(np.log10(band.low), np.log10(band.high), count), np.array([band.low, band.high])]
+    for roots in lists:
+        size, damping = roots.frequency, roots.damping
+        usable = (size > 0) & np.isfinite(size)
+        size, damping = size[usable], np.maximum(damping[usable], 1e-9)
+        natural = np.abs(roots.s.imag[usable])
+        spread = np.minimum(damping, 0.3)
+        parts += [size, natural[natural > 0]]
+        if size.size * 8 <= MOST_SEEDS * 4:
+            for step in (0.3, 1.0, 3.0):
+                parts += [size * (1 + step * spread), size / (1 + step * spread)]
+            parts += [size * (1 + LIGHT), size * (1 - LIGHT)]
+    for low, high in band.left_out:
+        parts.append(np.array([low, high]))
+    w = np.unique(np.concatenate(parts + ([np.zeros(1)] if band.zero else [])))
+    return band.keep(w)
+
+
+def largest(error: Callable[[Array], Array], w: Array, band: Band, rounds: int = 3) -> tuple[float, float]:
+    """Return the largest value found and its frequency: a grid, then zooming in on the highest local maxima."""
+    values = np.asarray(error(w), dtype=float)
+    if values.size == 0:
+        return 0.0, 0.0
+    if np.isnan(values).any():
+        k = int(np.flatnonzero(np.isnan(values))[0])
+        return np.inf, float(w[k])
+    best = int(np.argmax(values))
+    found, where = float(values[best]), float(w[best])
+    if not np.isfinite(found) or w.size < 3:
+        return found, where
+    peaks = [k for k in range(w.size) if values[k] >= values[max(k - 1, 0)] and values[k] >= values[min(k + 1, w.size - 1)]]
+    peaks = sorted(peaks, key=lambda k: -values[k])[:5]
+    spans = [(float(w[max(k - 1, 0)]), float(w[min(k + 1, w.size - 1)])) for k in peaks if values[k] > 0.2 * found]
+    for _ in range(rounds):
+        if not spans:
+            break
+        grids = [np.linspace(low, high, 11)[1:-1] for low, high in spans]
+        points = np.concatenate(grids)
+        inside = np.isin(points, band.keep(points))
+        new = np.where(inside, 0.0, -1.0)
+        if inside.any():
+            new[inside] = error(points[inside])
+        top = int(np.argmax(new))
+        if new[top] > found:
+            found, where = float(new[top]), float(points[top])
+        spans = []
+        start = 0
+        for grid in grids:
+            part = new[start : start + grid.size]
+            start += grid.size
+            k = int(np.argmax(part))
+            step = grid[1] - grid[0]
+            if part[k] > 0.5 * found:
+                spans.append((float(grid[k] - step), float(grid[k] + step)))
+    return found, where

@@ -1,0 +1,313 @@
+"""What verification sees of a model: exact channel fractions where affordable, doubles otherwise.
+
+The exact fractions are checked at one random rational point against the model's own structure (an exact solve, a
+product, a sum), so that a fault in forming them cannot vouch for itself: two different fractions of degree n agree at a
+point drawn from 2^61 with probability at most 2n/2^61 (Schwartz 1980; Zippel 1979).
+"""
+
+from __future__ import annotations
+
+import random
+from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models.fractions import form_fractions
+
+Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+
+#: Predicted elementary operations above which verification works in doubles.
+EXACT_BUDGET = 2e10
+
+
+@dataclass(frozen=True)
+class Dynamics:
+    """Poles or zeros as equivalent continuous numbers s (rad/s), those exactly on the axis marked."""
+
+    s: ComplexArray
+    on_axis: NDArray[np.bool_]
+
+    def merged(self, other: Dynamics) -> Dynamics:
+        """Return both lists together."""
+        return Dynamics(np.concatenate([self.s, other.s]), np.concatenate([self.on_axis, other.on_axis]))
+
+    @property
+    def frequency(self) -> Array:
+        """|s| in rad/s."""
+        return np.abs(self.s)
+
+    @property
+    def damping(self) -> Array:
+        """Damping ratio |Re s| / |s|; 1 at the origin, 0 where exactly on the axis."""
+        size = np.abs(self.s)
+        ratio = np.divide(np.abs(self.s.real), size, out=np.ones(size.shape), where=size > 0)
+        return np.where(self.on_axis & (size > 0), 0.0, ratio)
+
+
+NO_DYNAMICS = Dynamics(np.zeros(0, dtype=complex), np.zeros(0, dtype=bool))
+
+
+def dynamics_of(values: ComplexArray, exact_axis: NDArray[np.bool_], period: float | None) -> Dynamics:
+    """Return roots as continuous equivalents: ln(z)/T for a sampled model; roots at z = 0 have none."""
+    values = np.asarray(values, dtype=complex)
+    keep = np.isfinite(values)
+    values, exact_axis = values[keep], exact_axis[keep]
+    if period is None:
+        return Dynamics(values, exact_axis)
+    keep = values != 0
+    z = values[keep]
+    # ln z with the real part from |z|^2 - 1, which does not cancel near the unit circle
+    radius = (z.real - 1) * (z.real + 1) + z.imag * z.imag
+    real = np.where(np.abs(radius) < 0.5, 0.5 * np.log1p(np.maximum(radius, -0.999)), np.log(np.abs(z)))
+    s = (real + 1j * np.angle(z)) / period
+    return Dynamics(s, exact_axis[keep])
+
+
+class View:
+    """One parametric model, prepared for verification.
+
+    Parameters
+    ----------
+    model : Model
+    exact : bool, optional
+        False forbids exact arithmetic; otherwise the predicted cost decides.
+    """
+
+    def __init__(self, model: Model, exact: bool = True) -> None:
+        self.model = model
+        self.period = model.time.seconds if model.time.sampled else None
+        self._exact_allowed = exact
+
+    @cached_property
+    def fractions(self) -> list[list[tuple[Any, Any]]] | None:
+        """Exact (numerator, denominator) of each channel, common factors cancelled; None where too costly."""
+        if not self._exact_allowed or predicted_cost(self.model) > EXACT_BUDGET:
+            return None
+        return exact_fractions(self.model)
+
+    @cached_property
+    def channel_roots(self) -> list[list[tuple[Dynamics, Dynamics]]]:
+        """(zeros, poles) of each channel as continuous equivalents; zeros are empty where only doubles are affordable."""
+        p, m = self.model.shape
+        if self.fractions is not None:
+            from realize.kernels.exact.roots import roots
+
+            known: dict[Any, Dynamics] = {}
+
+            def of(polynomial: Any) -> Dynamics:
+                key = tuple(str(c) for c in (polynomial.numer(), polynomial.denom()))
+                if key not in known:
+                    found = [root for root in roots(polynomial) for _ in range(root.multiplicity)] if polynomial.degree() > 0 else []
+                    values = np.array([root.value for root in found], dtype=complex)
+                    axis = np.array([root.on_axis for root in found], dtype=bool)
+                    if self.period is not None and values.size:
+                        axis = np.abs(np.abs(values) - 1) <= 4 * np.finfo(float).eps
+                    known[key] = dynamics_of(values, axis, self.period)
+                return known[key]
+
+            return [[(of(self.fractions[i][j][0]), of(self.fractions[i][j][1])) for j in range(m)] for i in range(p)]
+        poles = double_poles(self.model)
+        size = np.abs(poles)
+        axis = np.abs(poles.real) <= 4 * np.finfo(float).eps * size
+        if self.period is not None:
+            axis = np.abs(size - 1) <= 4 * np.finfo(float).eps
+        shared = dynamics_of(poles, axis, self.period)
+        return [[(NO_DYNAMICS, shared) for _ in range(m)] for _ in range(p)]
+
+    @cached_property
+    def poles(self) -> Dynamics:
+        """The poles of all channels together, each as often as the channel with the most has it."""
+        seen: dict[complex, int] = {}
+        axis: dict[complex, bool] = {}
+        for row in self.channel_roots:
+            for _, poles in row:
+                here: dict[complex, int] = {}
+                for value, on in zip(poles.s.tolist(), poles.on_axis.tolist(), strict=True):
+                    here[value] = here.get(value, 0) + 1
+                    axis[value] = on
+                for value, count in here.items():
+                    seen[value] = max(seen.get(value, 0), count)
+        values = [value for value, count in seen.items() for _ in range(count)]
+        return Dynamics(np.array(values, dtype=complex), np.array([axis[v] for v in values], dtype=bool))
+
+    @cached_property
+    def cancelled_unstable(self) -> int:
+        """How many poles of a single channel, not strictly stable, cancel exactly with zeros."""
+        if self.fractions is None or self.model.shape != (1, 1):
+            return 0
+        from realize.kernels.exact.roots import roots
+
+        full = exact_fractions(self.model, cancel=False)[0][0][1]
+        hidden = full // self.fractions[0][0][1]
+        if hidden.degree() < 1:
+            return 0
+        edge = 0 if self.period is None else 1
+        return sum(
+            root.multiplicity
+            for root in roots(hidden)
+            if (root.value.real >= 0 if not edge else abs(root.value) >= 1 - 4 * np.finfo(float).eps)
+        )
+
+    def response(self, frequency: Array) -> ComplexArray:
+        """Return the response [k][p][m] at angular frequencies (rad/s), dead time left out."""
+        if self.fractions is not None:
+            from realize.kernels.exact.evaluation import evaluate
+
+            p, m = self.model.shape
+            values = np.empty((frequency.size, p, m), dtype=complex)
+            for i in range(p):
+                for j in range(m):
+                    n, d = self.fractions[i][j]
+                    values[:, i, j] = evaluate(n, d, frequency, self.exact_period)[0]
+            return values
+        return self.model.rational_part(self.model.time.points(frequency))
+
+    @cached_property
+    def exact_period(self) -> Any:
+        """Sampling period as an exact rational, None in continuous time."""
+        if self.period is None:
+            return None
+        from realize.kernels.exact.numbers import fraction
+
+        period = self.model.time.exact_period
+        return fraction((period.numerator, period.denominator))
+
+
+def predicted_cost(model: Model) -> float:
+    """Return the predicted operations of forming exact fractions (a function of sizes alone)."""
+    p, m = model.shape
+    order = float(model.order or 0)
+    if isinstance(model, StateSpace):
+        return 60 * order**4 * (2 if model.E is not None else 1) + 1e4 * p * m
+    return 400 * order**3 + 1e4 * p * m
+
+
+def double_poles(model: Model) -> ComplexArray:
+    """Return the poles in double arithmetic, for models whose exact fractions are too costly."""
+    import scipy.linalg
+
+    if isinstance(model, StateSpace):
+        from realize.kernels.response import balanced_states
+
+        A, _, _, E = balanced_states(model.A, model.B, model.C, model.E)
+        values = scipy.linalg.eigvals(A, E) if E is not None else scipy.linalg.eigvals(A)
+        return values[np.isfinite(values)]
+    if isinstance(model, PoleResidue):
+        return np.asarray(model.poles)
+    if isinstance(model, ZeroPoleGain):
+        return np.unique(np.concatenate([roots for row in model.poles for roots in row]))
+    if isinstance(model, TransferFunction):
+        return np.unique(np.concatenate([np.roots(d) for row in model.denominator for d in row]))
+    if isinstance(model, Sections):
+        return np.concatenate([np.roots(section[1]) for section in model.sections] or [np.zeros(0)])
+    raise TypeError(model.kind)
+
+
+def exact_fractions(model: Model, cancel: bool = True) -> list[list[tuple[Any, Any]]]:
+    """Return the exact (numerator, denominator) of each channel, checked at a random point.
+
+    Parameters
+    ----------
+    cancel : bool
+        Cancel common factors (the denominator is then monic).
+    """
+    from realize.kernels.exact import polynomials
+
+    fractions = form_fractions(model)
+    _check_at_a_point(model, fractions)
+    if cancel:
+        return [[polynomials.reduce_fraction(n, d) for n, d in row] for row in fractions]
+    return fractions
+
+
+class FormationFault(RuntimeError):
+    """Exact fractions that do not agree with the model they were formed from: a bug."""
+
+
+def _check_at_a_point(model: Model, fractions: list[list[tuple[Any, Any]]]) -> None:
+    """Compare the fractions with the model's own structure at one random integer point, in exact arithmetic."""
+    from realize.kernels.exact.numbers import fraction
+
+    rng = random.Random(model.kind + str(model.shape) + str(model.order))
+    # a point of 20 bits where the structure costs an exact solve per point, of 61 bits else
+    for _ in range(8):
+        x = fraction((rng.getrandbits(61) | 1, 1 << 20))
+        values = _structural_value(model, x)
+        if values is None:
+            continue
+        for i, row in enumerate(fractions):
+            for j, (n, d) in enumerate(row):
+                below = d(x)
+                if below == 0:
+                    break
+                if n(x) != values[i][j] * below:
+                    raise FormationFault(f"channel output {i}, input {j}: fraction and structure disagree at {x}")
+        return
+
+
+def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
+    """Return the model at the rational point x by its own structure, or None where x is a pole."""
+    from realize.kernels.exact import states
+    from realize.kernels.exact.numbers import complex_fraction, fraction
+
+    p, m = model.shape
+    zero, one = fraction(0), fraction(1)
+
+    def horner(ratios: Any) -> Any:
+        value = zero
+        for ratio in ratios:
+            value = value * x + fraction(ratio)
+        return value
+
+    def product(roots: Any) -> Any:
+        re, im = one, zero
+        for root in roots:
+            a, b = complex_fraction(root)
+            a, b = x - a, -b
+            re, im = re * a - im * b, re * b + im * a
+        return re
+
+    if isinstance(model, TransferFunction):
+        above, under = model.exact("numerator"), model.exact("denominator")
+        pairs = [[(horner(above[i][j]), horner(under[i][j])) for j in range(m)] for i in range(p)]
+    elif isinstance(model, ZeroPoleGain):
+        zeros, poles, gain = model.exact("zeros"), model.exact("poles"), model.exact("gain")
+        pairs = [[(product(zeros[i][j]) * fraction(gain[i][j]), product(poles[i][j])) for j in range(m)] for i in range(p)]
+    elif isinstance(model, Sections):
+        above, under = fraction(model.exact("gain")), one
+        for numerator, denominator in model.exact("sections"):
+            above, under = above * horner(numerator), under * horner(denominator)
+        pairs = [[(above, under)]]
+    elif isinstance(model, PoleResidue):
+        poles, residues, direct = model.exact("poles"), model.exact("residues"), model.exact("direct")
+        values = [[horner([matrix[i][j] for matrix in direct]) for j in range(m)] for i in range(p)]
+        for pole, residue, power in zip(poles, residues, model.powers, strict=True):
+            a, b = complex_fraction(pole)
+            a, b = x - a, -b
+            size = a * a + b * b
+            if size == 0:
+                return None
+            # 1 / (x - pole) = conj / |.|^2, then the power
+            u, v = a / size, -b / size
+            re, im = one, zero
+            for _ in range(int(power)):
+                re, im = re * u - im * v, re * v + im * u
+            for i in range(p):
+                for j in range(m):
+                    c, d = complex_fraction(residue[i][j])
+                    # imaginary parts cancel between conjugates
+                    values[i][j] += re * c - im * d
+        return values
+    elif isinstance(model, StateSpace):
+        response = states.response_at(*(model.exact(name) for name in "ABCDE"), x, zero)
+        return None if response is None else [[value[0] for value in row] for row in response]
+    else:
+        raise TypeError(model.kind)
+    if any(under == 0 for row in pairs for _, under in row):
+        return None
+    return [[above / under for above, under in row] for row in pairs]
