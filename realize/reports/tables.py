@@ -326,3 +326,38 @@ def fit_table(candidates: Iterable[Mapping[str, Any]], *, page: Page = PLAIN) ->
     if not noted:
         columns, rows = columns[:-1], [row[:-1] for row in rows]
     return laid_out([grid(columns, rows) if rows else words("no order was tried")], page)
+
+
+def demo_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
+    """Return the record of ``demo`` as text: what was made, how well, and where the files are."""
+    fitted, reduced = record["fitted"], record["reduced"]
+    against = record["against_the_invented_truth"]
+    rows = [
+        ["fitted", fitted["kind"], str(fitted["order"]), _percent(fitted["claims"]["rms-misfit"]), _percent(against["fitted"])],
+        ["converted", record["converted"]["kind"], str(record["converted"]["order"]), "-", "-"],
+        [
+            "reduced",
+            reduced["kind"],
+            str(reduced["order"]),
+            "-",
+            _percent(against["reduced"]),
+        ],
+    ]
+    columns = [
+        ("step", "left"),
+        ("kind", "left"),
+        ("order", "right"),
+        ("misfit", "right"),
+        ("off the invented truth", "right"),
+    ]
+    parts: list[Any] = [
+        words(f"{record['lines']} lines of an invented sweep, seed {record['seed']}"),
+        grid(columns, rows),
+        words(f"folder {record['folder']}: {', '.join(record['files'])}"),
+        words(f"{record['seconds']:.1f} s. The axis is invented: do not build anything on it."),
+    ]
+    return laid_out(parts, page)
+
+
+def _percent(value: float | None) -> str:
+    return "-" if value is None else f"{short(100 * value)} %"
