@@ -115,7 +115,7 @@ def fit_response(
     lowest, highest = _within_reach(problem, wanted, lines)
     outcome = chosen.fit(problem, lowest, highest, direct == "auto")
     cautions.extend(outcome.cautions)
-    if wanted == (0, None) and outcome.poles.size >= highest > 0:
+    if wanted == (0, None) and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
         cautions.append(f"the order stopped at the highest one tried ({highest}), not because more brought nothing")
     return finish(
         w,
@@ -258,7 +258,7 @@ def _weights(
     """Return weights of the scaled problem and how they were got."""
     if sigma is not None:
         with np.errstate(under="ignore", over="ignore"):
-            given = noises.floored(np.ldexp(sigma[used], -lift))
+            given = noises.floored(np.ldexp(sigma[used], -lift), values)
         if given is not None and np.all(np.isfinite(given)):
             return 1 / given, "given"
     if gamma is not None:

@@ -18,19 +18,24 @@ ComplexArray = NDArray[np.complex128]
 
 #: Fewer lines than this tell nothing about the shape of the noise.
 FEWEST_LINES = 24
-#: Smallest deviation of one line relative to the channel's median deviation: a line that claims to be a thousand
-#: times better than the others would otherwise own the fit.
-SMALLEST_DEVIATION = 1e-3
+#: Smallest size of a response or deviation relative to the channel's median that is taken for real in an estimate.
+SMALLEST_SHARE = 1e-6
 
 
-def floored(deviation: Array) -> Array | None:
-    """Return given deviations [k][channels] with zeros and tiny ones raised to the floor; None if a channel has none."""
+def floored(deviation: Array, values: ComplexArray) -> Array | None:
+    """Return given deviations [k][channels] fit for dividing; None if a channel has no positive one.
+
+    A zero says that the deviation of that line is not known (one average, for instance): it takes that of the nearest
+    line with a positive one. None is below the rounding of the value itself.
+    """
     result = deviation.copy()
+    lines = np.arange(result.shape[0])
     for c in range(result.shape[1]):
-        positive = result[result[:, c] > 0, c]
+        positive = np.flatnonzero(result[:, c] > 0)
         if positive.size == 0:
             return None
-        result[:, c] = np.maximum(result[:, c], SMALLEST_DEVIATION * np.median(positive))
+        nearest = positive[np.argmin(np.abs(lines[:, None] - positive[None, :]), axis=1)]
+        result[:, c] = np.maximum(result[nearest, c], np.finfo(float).eps * np.abs(values[:, c]))
     return result
 
 
@@ -38,11 +43,11 @@ def from_coherence(values: ComplexArray, coherence: Array) -> Array:
     """Return deviations up to a common factor: |H| sqrt((1 - c)/c) (reference 1).
 
     Floors: c is kept within [0.001, 0.9999] (a coherence nearer 1 is not known from a finite number of averages), and
-    |H| is the root mean square of three neighbouring lines, at least a thousandth of the channel's median.
+    |H| is the root mean square of three neighbouring lines, at least a millionth of the channel's median.
     """
     c = np.clip(coherence, 1e-3, 1 - 1e-4)
     size = smoothed_size(values, 1)
-    return np.maximum(size, SMALLEST_DEVIATION * np.median(size, axis=0)) * np.sqrt((1 - c) / c)
+    return np.maximum(size, SMALLEST_SHARE * np.median(size, axis=0)) * np.sqrt((1 - c) / c)
 
 
 def smoothed_size(values: ComplexArray, reach: int) -> Array:
@@ -116,7 +121,7 @@ def noise_shape(x: Array, rough: ComplexArray, size: Array) -> Array:
         fitted = np.ones_like(mean) if chosen == np.inf else chosen + mean
         result[:, c] = np.sqrt(shape * np.exp(np.mean(np.log(level / fitted))))
     for c in range(channels):
-        result[:, c] = np.maximum(result[:, c], SMALLEST_DEVIATION**2 * np.median(result[:, c]))
+        result[:, c] = np.maximum(result[:, c], SMALLEST_SHARE * np.median(result[:, c]))
     return result
 
 

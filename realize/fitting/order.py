@@ -15,7 +15,14 @@ from numpy.typing import NDArray
 from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
 from realize.kernels.variable_projection import best_additions, polished
-from realize.kernels.vector_fitting import ordered_poles, separated_poles, starting_poles, vector_fit
+from realize.kernels.vector_fitting import (
+    ordered_poles,
+    relocated,
+    separated_poles,
+    starting_poles,
+    vector_fit,
+    weighted_cost,
+)
 
 ComplexArray = NDArray[np.complex128]
 
@@ -131,8 +138,15 @@ class Search:
                 chosen = lowest = order
             if self.criterion(order) < self.criterion(chosen):
                 chosen = order
-            if order - chosen >= PATIENCE or self.best[order].cost <= self.problem.floor:
+            if order - chosen >= PATIENCE or self.reproduced(order):
                 break
+
+    def reproduced(self, order: int) -> bool:
+        """Return whether the misfit is no more than rounding, so that more poles cannot bring anything."""
+        trial, problem = self.best[order], self.problem
+        if trial.cost > 1e-6**2 * problem.total:
+            return False
+        return trial.cost <= problem.rounding(separated_poles(trial.poles))
 
     def noise_power(self) -> float:
         """Return the cost that noise alone would leave: given, or from what neighbouring misfits do not predict.
@@ -217,6 +231,19 @@ def single_line_poles(problem: Problem, poles: ComplexArray) -> list[int]:
         if rest.criterion(without.order, without.cost) <= rest.criterion(with_it.order, with_it.cost):
             found.append(int(k))
     return found
+
+
+def unstable_image(problem: Problem, trial: Trial) -> int:
+    """Return how many poles on the right a fit free to have them would keep, where that at least halves the misfit."""
+    p, poles = problem, trial.poles
+    best, count = trial.cost / 4, 0
+    for _ in range(5):
+        poles = relocated(p.points, poles, p.values, p.weights, p.direct, p.vanish, reflect=False)
+        right = int(np.sum(poles.real > 0))
+        cost = weighted_cost(p.misfit(poles), p.weights)
+        if right and cost < best:
+            best, count = cost, right
+    return count
 
 
 def finished(problem: Problem, trial: Trial) -> Trial:

@@ -91,6 +91,18 @@ class Problem:
         """Fitted minus given values with the best residues for these poles."""
         return residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)[2]
 
+    def rounding(self, poles: ComplexArray) -> float:
+        """Return the cost that rounding alone may cause in the sum of partial fractions over these poles.
+
+        (4 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2: large where residues cancel, as at
+        nearly repeated poles. A fit below it cannot be improved in this form.
+        """
+        residues, direct, _ = residues_of(
+            self.points, poles, self.values, self.weights, self.direct, self.vanish
+        )
+        size = (1 / np.abs(self.points[:, None] - poles)) @ np.abs(residues) + np.abs(direct)
+        return max(self.floor, (4 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
+
     def criterion(self, order: int, cost: float) -> float:
         """Bayesian information criterion of a fit (Schwarz 1978), complex data counted as two numbers a line.
 

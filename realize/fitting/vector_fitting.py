@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.noise import noise_shape, smoothed_size
-from realize.fitting.order import Search, Trial, finished, relocate, start
+from realize.fitting.order import Search, Trial, finished, relocate, single_line_poles, start, unstable_image
 from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate
 from realize.fitting.registry import Method, Outcome, register
@@ -49,7 +49,26 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
         plain = solved.with_direct(False)
         if plain.criterion(without.order, without.cost) <= solved.criterion(trial.order, trial.cost):
             trial, solved = without, plain
-    return Outcome(solved, trial.poles, _candidates(search, trial))
+    return Outcome(solved, trial.poles, _candidates(search, trial), _remarks(search, trial, noise))
+
+
+def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
+    solved = search.problem
+    remarks = []
+    enough = search.choose(0, noise)
+    if enough < trial.order:
+        remarks.append(f"order {enough} would do: the other {trial.order - enough} pole(s) bring nothing significant")
+    spikes = single_line_poles(solved, trial.poles) if trial.order else []
+    if spikes:
+        remarks.append(f"{len(spikes)} pair(s) of poles fit one or two lines only, not a resonance")
+    if trial.order and trial.cost > max(2 * noise, solved.rounding(trial.poles)):
+        count = unstable_image(solved, trial)
+        if count:
+            remarks.append(
+                f"the data ask for {count} unstable pole(s), which this method does not give: the misfit would be at "
+                "most half as large with them (or the sign of the phase is the other one)"
+            )
+    return tuple(remarks)
 
 
 def _searched(problem: Problem, lowest: int, highest: int, known: dict[int, ComplexArray] | None) -> Search:

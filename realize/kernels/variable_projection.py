@@ -22,8 +22,11 @@ from realize.kernels.vector_fitting import ordered_poles, stacked
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
-#: Unknowns stay within this distance of the middle of the (normalised) band, in natural logarithms: 13 decades each way.
+#: Logarithms of damping terms stay above minus this: a damping of 1e-13 in a band near 1 is none.
 FARTHEST = 30.0
+#: Sections stay this far (natural logarithm) from the band at most. A double integrator 1/s^2 stood in for by a pair at
+#: a fraction d of the lowest frequency is d^2 off, and its residues cancel to eps/d: 2^-18 makes both alike.
+BELOW, BELOW_SINGLE, ABOVE = 18 * np.log(2.0), 40 * np.log(2.0), 26 * np.log(2.0)
 
 
 def sections_of(poles: ComplexArray) -> tuple[Array, Array, Array]:
@@ -178,8 +181,12 @@ def polished(
         Two steps in a row that lower the cost by less than this fraction are the last.
     """
     w, a, single = sections_of(poles)
-    unknowns = np.clip(np.log(np.concatenate([w, a, single])), -FARTHEST, FARTHEST)
     pairs = w.size
+    lower, upper = _bounds(points.imag, pairs, single.size)
+    wanted = np.log(np.concatenate([w, a, single]))
+    unknowns = np.clip(wanted, lower, upper)
+    if np.any(unknowns != wanted):
+        poles = _poles_at(unknowns, pairs)
 
     def at(theta: Array) -> Projection:
         return Projection(points, theta, pairs, values, weights, direct, vanish)
@@ -202,7 +209,7 @@ def polished(
         step = step / size
         step *= min(1.0, 1.0 / max(np.max(np.abs(step)), 1e-300))
         # a logarithm of the damping below -2 FARTHEST is an undamped pole: it stops there
-        trial = np.clip(unknowns + step, -FARTHEST, FARTHEST)
+        trial = np.clip(unknowns + step, lower, upper)
         there = at(trial)
         gain = here.cost - there.cost
         if gain > 0:
@@ -220,7 +227,19 @@ def polished(
             growth *= 2
     if here.cost >= start:
         return poles, start
-    return poles_of(here.sections.w, here.sections.a, here.sections.single), here.cost
+    return _poles_at(unknowns, pairs), here.cost
+
+
+def _bounds(x: Array, pairs: int, singles: int) -> tuple[Array, Array]:
+    low, high = np.log(np.min(x[x > 0])), np.log(np.max(x))
+    lower = [low - BELOW] * pairs + [-FARTHEST] * pairs + [low - BELOW_SINGLE] * singles
+    upper = [high + ABOVE] * pairs + [high + ABOVE] * pairs + [high + ABOVE] * singles
+    return np.array(lower), np.array(upper)
+
+
+def _poles_at(unknowns: Array, pairs: int) -> ComplexArray:
+    w, a, single = np.exp(unknowns[:pairs]), np.exp(unknowns[pairs : 2 * pairs]), np.exp(unknowns[2 * pairs :])
+    return poles_of(w, a, single)
 
 
 def best_additions(
@@ -235,7 +254,7 @@ def best_additions(
 
     A list of candidates is tried: pairs at the lines of the largest misfit and at frequencies spread over the band,
     each with damping ratios from half the distance of the lines up to 0.7; real poles spread over the band and a
-    decade beyond. The gain of each is exact (linear least squares by projection). Parameters as in ``polished``.
+    decade beyond; a few of both far outside. The gain of each is exact (linear least squares by projection). Parameters as in ``polished``.
     """
     x = points.imag
     w, a, single = sections_of(poles)
@@ -243,7 +262,8 @@ def best_additions(
     positive = x[x > 0]
     low, high = positive[0], positive[-1]
     strength = sum(r[: x.size] ** 2 + r[x.size :] ** 2 for r in base.residual)
-    smooth = np.convolve(strength, [0.5, 1.0, 0.5], mode="same")
+    around = np.concatenate([strength[:1], strength, strength[-1:]])
+    smooth = strength + 0.5 * (around[:-2] + around[2:])
     padded = np.concatenate([[-1.0], smooth, [-1.0]])
     peaks = np.flatnonzero((smooth >= padded[:-2]) & (smooth > padded[2:]) & (x > 0))
     peaks = peaks[np.argsort(-smooth[peaks], kind="stable")][:10]
@@ -256,8 +276,13 @@ def best_additions(
         for zeta in np.geomspace(narrow, 0.7, 6):
             frequency.append(x[k])
             damping.append(zeta)
+    # outside the band: what a double integrator below it, or a resonance above it, leaves within
+    for place in [low * 2.0**-k for k in (1, 2, 4, 7, 12, 17)] + [high * 2.0**k for k in (0.5, 1.5, 4)]:
+        for zeta in (0.02, 0.7):
+            frequency.append(place)
+            damping.append(zeta)
     pair_w, pair_a = np.array(frequency), 2 * np.array(frequency) * np.array(damping)
-    real = np.geomspace(low / 10, high * 10, 24)
+    real = np.concatenate([low * np.array([1e-9, 1e-6, 1e-4, 1e-2]), np.geomspace(low / 10, high * 10, 24), high * np.array([1e3, 1e6])])
     trial = Sections(
         points, np.log(np.concatenate([pair_w, pair_a, real])), pair_w.size, np.inf if direct else vanish
     ).columns()

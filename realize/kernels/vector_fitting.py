@@ -28,7 +28,7 @@ SMALLEST_DAMPING = 8 * np.finfo(float).eps
 SMALLEST_DISTANCE = 2.0**-18
 
 
-def ordered_poles(poles: ComplexArray) -> ComplexArray:
+def ordered_poles(poles: ComplexArray, reflect: bool = True) -> ComplexArray:
     """Return the poles stable, by increasing size, conjugate pairs exact and adjacent with the positive member first.
 
     Poles on the right are reflected at the imaginary axis (reference 1); poles on it get ``SMALLEST_DAMPING``.
@@ -37,6 +37,8 @@ def ordered_poles(poles: ComplexArray) -> ComplexArray:
     ----------
     poles : [n] complex
         Closed under conjugation: only members with imaginary part >= 0 are read.
+    reflect : bool
+        False leaves poles on the right where they are.
 
     Returns
     -------
@@ -45,7 +47,8 @@ def ordered_poles(poles: ComplexArray) -> ComplexArray:
     upper = poles[poles.imag >= 0]
     size = np.abs(upper)
     size = np.where(size > 0, size, np.finfo(float).tiny ** 0.25)
-    real = -np.maximum(np.abs(upper.real), SMALLEST_DAMPING * size)
+    real = np.maximum(np.abs(upper.real), SMALLEST_DAMPING * size)
+    real = np.where(upper.real > 0, real, -real) if not reflect else -real
     upper = real + 1j * upper.imag
     upper = upper[np.argsort(np.abs(upper), kind="stable")]
     result: list[complex] = []
@@ -138,6 +141,8 @@ def residues_of(
         basis = np.hstack([basis, np.ones((points.size, 1))])
     if basis.shape[1] == 0:
         return np.zeros((0, channels), complex), np.zeros(channels), -values.astype(complex)
+    if n == 0 and np.all(values == values[:1]):
+        return np.zeros((0, channels), complex), values[0].real.copy(), values[0].real - values
     coefficient = np.empty((basis.shape[1], channels))
     for c in range(channels):
         coefficient[:, c] = least_squares(
@@ -161,13 +166,14 @@ def relocated(
     weights: Array,
     direct: bool,
     vanish: float = np.inf,
+    reflect: bool = True,
 ) -> ComplexArray:
     """Return the poles after one relocation: the zeros of sigma(s) in sigma H = (proper fraction over the old poles).
 
     sigma(s) = d + sum_j c_j phi_j(s) is found by relaxed least squares (reference 2): the sum of its real part over
     the points is fixed instead of d. Each channel is reduced by its own QR factorisation to the rows that hold sigma
     alone (reference 3). Zeros are eigenvalues of A - b c^T / d with A, b real (reference 1, appendix); those on the
-    right are reflected. Parameters as in ``residues_of``.
+    right are reflected unless ``reflect`` is false. Parameters as in ``residues_of``.
     """
     n = poles.size
     if n == 0:
@@ -196,7 +202,7 @@ def relocated(
     # a sigma whose constant vanishes has a zero at infinity: fall back on the unrelaxed form (reference 2, section V)
     if not abs(c[n]) > 1e-8 * np.max(np.abs(plain[:, :n] * c[:n])):
         c = np.append(least_squares(reduced[:, :n], -reduced[:, n] / scale[n]) / scale[:n], 1.0)
-    return ordered_poles(np.linalg.eigvals(_zeros_matrix(poles, c[:n] / c[n])))
+    return ordered_poles(np.linalg.eigvals(_zeros_matrix(poles, c[:n] / c[n])), reflect)
 
 
 def _zeros_matrix(poles: ComplexArray, c: Array) -> Array:
