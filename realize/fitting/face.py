@@ -102,6 +102,8 @@ def fit_response(
     vanish = np.inf if period is None else float(np.ldexp(1.0, -shift))
 
     weights, basis = _weights(points.imag, values, sigma, gamma, lift, used)
+    if sigma is not None and basis != "given":
+        cautions.append("a channel has no deviation above zero: the deviations given are not used")
     problem = Problem(points, values, weights, basis == "given", basis == "estimated", direct is not False, vanish)
     chosen = choose_method(method, problem)
     exact = _exactly_constant(values)
@@ -161,7 +163,9 @@ def _checked(frequency: ArrayLike, response: ArrayLike, period: float | None) ->
         if not (np.isfinite(period) and period > 0):
             raise InputError(f"{period}", "a positive number of seconds", field="period")
         if w[-1] * period > np.pi * (1 + 1e-9):
-            raise InputError(f"{w[-1]} rad/s", "frequencies up to half the sampling rate", field=f"frequency[{w.size - 1}]")
+            raise InputError(
+                f"{w[-1]} rad/s", "frequencies up to half the sampling rate", field=f"frequency[{w.size - 1}]"
+            )
     return w, H
 
 
@@ -216,7 +220,9 @@ def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) 
     if high is None:
         # order 0 with one line: nothing that could be called a fit
         if problem.points.size < 2:
-            raise InputError("1 line", "at least 2 lines to fit a response that is not a real constant", field="frequency")
+            raise InputError(
+                "1 line", "at least 2 lines to fit a response that is not a real constant", field="frequency"
+            )
         high = HIGHEST_ORDER
         while high > 0 and problem.unknowns(high) * NUMBERS_PER_UNKNOWN > problem.numbers:
             high -= 1
@@ -272,5 +278,3 @@ def _weights(
     if not np.all(np.isfinite(shape)) or np.any(shape <= 0):
         raise Refused("no deviation can be estimated from these data; give a deviation for each line")
     return 1 / shape, basis
-
-

@@ -12,8 +12,8 @@ from realize.kernels.vector_fitting import residues_of, weighted_cost
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
-#: Relative misfit below which a fit reproduces the data: rounding of basis, residues and sum (some tens of roundings).
-ROUNDING = 2.0**-46
+#: Relative misfit below which a fit reproduces the data: rounding of basis, residues and sum (some hundred roundings).
+ROUNDING = 2.0**-44
 
 
 @dataclass(frozen=True, eq=False)
@@ -94,14 +94,12 @@ class Problem:
     def rounding(self, poles: ComplexArray) -> float:
         """Return the cost that rounding alone may cause in the sum of partial fractions over these poles.
 
-        (4 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2: large where residues cancel, as at
+        (16 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2: large where residues cancel, as at
         nearly repeated poles. A fit below it cannot be improved in this form.
         """
-        residues, direct, _ = residues_of(
-            self.points, poles, self.values, self.weights, self.direct, self.vanish
-        )
+        residues, direct, _ = residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)
         size = (1 / np.abs(self.points[:, None] - poles)) @ np.abs(residues) + np.abs(direct)
-        return max(self.floor, (4 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
+        return max(self.floor, (16 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
 
     def criterion(self, order: int, cost: float) -> float:
         """Bayesian information criterion of a fit (Schwarz 1978), complex data counted as two numbers a line.

@@ -7,7 +7,7 @@ from numpy.typing import NDArray
 
 from realize.errors import Refused
 from realize.fitting.noise import noise_factor
-from realize.fitting.problem import ROUNDING, Problem
+from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
 from realize.fitting.sampled import mapped_back
 from realize.kernels.vector_fitting import residues_of
@@ -50,6 +50,7 @@ def finish(
         Lines that took part.
     """
     lines, p, m = H.shape
+    solved = poles
     residues, direct, _ = residues_of(
         problem.points, poles, problem.values, problem.weights, problem.direct, problem.vanish
     )
@@ -81,10 +82,8 @@ def finish(
     peak = np.max(np.abs(lifted), axis=0)
     relative = np.abs(missed) / np.where(peak > 0, peak, 1.0)
     line, channel = np.unravel_index(int(np.argmax(relative)), relative.shape)
-    worst = Worst(
-        float(relative[line, channel]), int(line), int(channel) // m, int(channel) % m, float(w[line])
-    )
-    weighted, noise = _noise(problem, poles.size, missed[used], basis, common, size)
+    worst = Worst(float(relative[line, channel]), int(line), int(channel) // m, int(channel) % m, float(w[line]))
+    weighted, noise = _noise(problem, solved, missed[used], basis, common, size)
     table = _pole_table(poles, contribution, peak, period, scale)
     cautions = [*cautions, *_remarks(table, w, noise, weighted, worst)]
     return Fit(
@@ -119,7 +118,7 @@ def _ldexp(values: ComplexArray, exponents: NDArray[np.int64]) -> ComplexArray:
 
 
 def _noise(
-    problem: Problem, order: int, missed: ComplexArray, basis: str, common: Array, size: float
+    problem: Problem, poles: ComplexArray, missed: ComplexArray, basis: str, common: Array, size: float
 ) -> tuple[float, Noise]:
     """Return RMS of misfit over deviation, and the deviations' size.
 
@@ -134,14 +133,14 @@ def _noise(
     factor = 1.0
     if not problem.known:
         factor = noise_factor(problem.x, missed[:, alive], problem.weights[:, alive])
-        free = problem.numbers - problem.unknowns(order)
+        free = problem.numbers - problem.unknowns(poles.size)
         if problem.points.size < 8:
             factor = rms * np.sqrt(problem.numbers / max(free, 1))
         elif free > 0:
             # neighbouring misfits are alike the more unknowns there are: the same correction for both
             factor *= np.sqrt(problem.numbers / free)
         # rounding is the least that any deviation can be
-        factor = max(factor, ROUNDING * np.sqrt(2 * problem.total / problem.numbers))
+        factor = max(factor, np.sqrt(2 * problem.rounding(poles) / problem.numbers))
     deviation = (factor * common / problem.weights)[:, alive]
     level = float(np.sqrt(np.sum(deviation**2))) / size if size > 0 else 0.0
     return (rms / factor if factor > 0 else 0.0), Noise(basis, level)
@@ -175,6 +174,12 @@ def _remarks(
         remarks.append(
             f"{sum(2 if row.pair else 1 for row in slow)} pole(s) lie below a tenth of the lowest line: the data look "
             "like an integrator there, and the model is a stable stand-in for it below the band"
+        )
+    fast = [row for row in table if row.frequency > 10 * w[-1] and row.dominance > 1]
+    if fast:
+        remarks.append(
+            f"{sum(2 if row.pair else 1 for row in fast)} pole(s) lie far above the highest line: the response still "
+            "grows there, and the (proper) model levels off somewhere above the band"
         )
     narrow = [row for row in table if row.pair and _narrow(row, w)]
     if narrow:

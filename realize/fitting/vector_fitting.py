@@ -58,7 +58,7 @@ def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
     enough = search.choose(0, noise)
     if enough < trial.order:
         remarks.append(f"order {enough} would do: the other {trial.order - enough} pole(s) bring nothing significant")
-    spikes = single_line_poles(solved, trial.poles) if trial.order else []
+    spikes = single_line_poles(solved, trial.poles) if 0 < trial.order <= LONGEST_LADDER else []
     if spikes:
         remarks.append(f"{len(spikes)} pair(s) of poles fit one or two lines only, not a resonance")
     if trial.order and trial.cost > max(2 * noise, solved.rounding(trial.poles)):
@@ -115,4 +115,3 @@ VECTOR_FITTING = register(
         fit=fit,
     )
 )
-

@@ -282,7 +282,9 @@ def best_additions(
             frequency.append(place)
             damping.append(zeta)
     pair_w, pair_a = np.array(frequency), 2 * np.array(frequency) * np.array(damping)
-    real = np.concatenate([low * np.array([1e-9, 1e-6, 1e-4, 1e-2]), np.geomspace(low / 10, high * 10, 24), high * np.array([1e3, 1e6])])
+    real = np.concatenate(
+        [low * np.array([1e-9, 1e-6, 1e-4, 1e-2]), np.geomspace(low / 10, high * 10, 24), high * np.array([1e3, 1e6])]
+    )
     trial = Sections(
         points, np.log(np.concatenate([pair_w, pair_a, real])), pair_w.size, np.inf if direct else vanish
     ).columns()

@@ -58,17 +58,21 @@ def ordered_poles(poles: ComplexArray, reflect: bool = True) -> ComplexArray:
 
 
 def separated_poles(poles: ComplexArray) -> ComplexArray:
-    """Return ordered poles with members nearer than ``SMALLEST_DISTANCE`` (relative) moved apart in size."""
+    """Return ordered poles with members nearer than ``SMALLEST_DISTANCE`` (relative) moved apart about their middle."""
     upper = ordered_poles(poles)
     upper = upper[upper.imag >= 0]
-    nudged = upper.copy()
-    for k in range(1, nudged.size):
-        while np.any(np.abs(nudged[:k] - nudged[k]) < SMALLEST_DISTANCE * np.abs(nudged[k])):
-            nudged[k] *= 1 + 2 * SMALLEST_DISTANCE
+    for k in range(1, upper.size):
+        distance = np.abs(upper[:k] - upper[k])
+        j = int(np.argmin(distance))
+        if distance[j] < SMALLEST_DISTANCE * abs(upper[k]) and (upper[j].imag > 0) == (upper[k].imag > 0):
+            middle = (upper[j] + upper[k]) / 2
+            upper[j], upper[k] = middle * (1 - SMALLEST_DISTANCE), middle * (1 + SMALLEST_DISTANCE)
+        while np.any(np.abs(upper[:k] - upper[k]) < SMALLEST_DISTANCE * np.abs(upper[k])):
+            upper[k] *= 1 + 2 * SMALLEST_DISTANCE
     # a pair nearly on the real axis is a double real pole with residues that grow alike
-    flat = (nudged.imag > 0) & (nudged.imag < SMALLEST_DISTANCE * np.abs(nudged))
-    nudged[flat] = nudged[flat].real + 1j * SMALLEST_DISTANCE * np.abs(nudged[flat])
-    return ordered_poles(np.concatenate([nudged, nudged[nudged.imag > 0].conj()]))
+    flat = (upper.imag > 0) & (upper.imag < SMALLEST_DISTANCE * np.abs(upper))
+    upper[flat] = upper[flat].real + 1j * SMALLEST_DISTANCE * np.abs(upper[flat])
+    return ordered_poles(np.concatenate([upper, upper[upper.imag > 0].conj()]))
 
 
 def real_basis(points: ComplexArray, poles: ComplexArray, vanish: float = np.inf) -> ComplexArray:
