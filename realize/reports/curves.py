@@ -204,8 +204,8 @@ def rational_phase(curve: Curve, output: int, column: int) -> Array:
 def aligned_phases(curves: Sequence[Curve], output: int, column: int) -> list[Array]:
     """Return the phases of one channel of all curves on a common branch, degrees, dead time included.
 
-    The first parametric curve leads. Others move as a whole by a multiple of 360 degrees so that they meet it, dead times
-    aside, at the low end. Data points, which noise can carry around, each take the branch nearest to it.
+    The first parametric curve leads. Others move as a whole by a multiple of 360 degrees so that they meet it, dead
+    times aside, at the low end. Data points, which noise can carry around, each take the branch nearest to it.
     """
     phases = [rational_phase(curve, output, column) for curve in curves]
     usable = [k for k, phase in enumerate(phases) if np.isfinite(phase).any()]

@@ -7,8 +7,12 @@ import os
 from dataclasses import dataclass
 from typing import Any
 
+from realize.reports.numbers import clean
+
 #: Narrowest and widest page: below, columns fold; above, lines are hard to follow.
 NARROWEST, WIDEST = 40, 110
+#: A text from a file is cut in the middle beyond this many signs.
+LONGEST = 2000
 _PLAIN_SIGNS = str.maketrans({"→": "->", "±": "+-", "…": "~", "×": "x", "µ": "u", "─": "-", "━": "=", "│": "|"})
 
 
@@ -92,7 +96,7 @@ def grid(columns: list[tuple[str, str]], rows: list[list[Any]], *, heading: bool
             min_width=min(len(name), 6) if k else None,
         )
     for row in rows:
-        table.add_row(*[cell if isinstance(cell, Text) else Text(str(cell)) for cell in row])
+        table.add_row(*[cell if isinstance(cell, Text) else words(cell) for cell in row])
     return table
 
 
@@ -105,25 +109,24 @@ def facts(rows: list[tuple[str, Any]]) -> Any:
     table.add_column(style="bold", no_wrap=True, min_width=16)
     table.add_column(overflow="fold")
     for name, value in rows:
-        table.add_row(Text(name), value if isinstance(value, Text) else Text(str(value)))
+        table.add_row(words(name), value if isinstance(value, Text) else words(value))
     return table
 
 
-def words(text: str, style: str = "") -> Any:
-    """Return text as it is, styled where the page allows."""
+def words(text: Any, style: str = "") -> Any:
+    """Return text on one line, without control characters, styled where the page allows; the page folds it."""
     from rich.text import Text
 
-    return Text(text, style=style, overflow="fold")
+    return Text(clean(text, LONGEST), style=style, overflow="fold")
 
 
 def bullets(lines: list[str], style: str = "yellow") -> Any:
     """Return one line for each text with a mark in front, folded under itself."""
     from rich.table import Table
-    from rich.text import Text
 
     table = Table(box=None, show_header=False, pad_edge=False, padding=(0, 1, 0, 0))
     table.add_column(no_wrap=True, style=style)
     table.add_column(overflow="fold")
     for line in lines:
-        table.add_row(Text("!"), Text(line))
+        table.add_row(words("!"), words(line))
     return table

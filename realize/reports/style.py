@@ -136,13 +136,10 @@ def logarithmic_axis(axis: Any, low: float, high: float, label: Any, most: int =
         step = max(1, math.ceil(span / most))
         powers = [p for p in range(math.ceil(low - 1e-9), math.floor(high + 1e-9) + 1)]
         ticks = [float(p) for p in powers if p % step == 0]
-        if step == 1:
-            fine = [math.log10(k) for k in range(2, 10)]
-            minor = [p + f for p in range(math.floor(low), math.ceil(high)) for f in fine]
-        else:
+        if span <= 4.5:
+            minor = [p + math.log10(k) for p in range(math.floor(low), math.ceil(high)) for k in range(2, 10)]
+        elif step > 1 and span <= 60:
             minor = [float(p) for p in powers if p % step]
-        if len(minor) > 80:
-            minor = []
     elif span >= 0.45:
         ticks = [
             p + f for p in range(math.floor(low), math.ceil(high) + 1) for f in (0.0, math.log10(2), math.log10(5))

@@ -195,7 +195,7 @@ def inspect_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
         )
     )
     for name in ("inputs", "outputs"):
-        if name in record:
+        if record.get(name) is not None:
             rows.append((name, _signals(record[name])))
     if "stable" in record:
         rows.append(
@@ -333,7 +333,13 @@ def demo_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
     fitted, reduced = record["fitted"], record["reduced"]
     against = record["against_the_invented_truth"]
     rows = [
-        ["fitted", fitted["kind"], str(fitted["order"]), _percent(fitted["claims"]["rms-misfit"]), _percent(against["fitted"])],
+        [
+            "fitted",
+            fitted["kind"],
+            str(fitted["order"]),
+            _percent(fitted["claims"]["rms-misfit"]),
+            _percent(against["fitted"]),
+        ],
         ["converted", record["converted"]["kind"], str(record["converted"]["order"]), "-", "-"],
         [
             "reduced",
