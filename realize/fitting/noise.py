@@ -126,7 +126,7 @@ def noise_shape(x: Array, rough: ComplexArray, size: Array) -> Array:
 
 
 def noise_factor(x: Array, misfit: ComplexArray, weights: Array) -> float:
-    """Return the size of the noise in units of 1/weights, from what neighbouring misfits do not predict; 0 if unknown."""
+    """Return the noise in units of 1/weights, from what neighbouring misfits do not predict; 0 if unknown."""
     if x.size < 8:
         return 0.0
     return float(np.sqrt(np.median(np.abs(unpredicted(x, misfit * weights)) ** 2) / np.log(2)))

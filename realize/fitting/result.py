@@ -185,7 +185,8 @@ def _remarks(
     if narrow:
         places = ", ".join(f"{row.frequency:.6g}" for row in narrow)
         remarks.append(
-            f"resonance(s) narrower than half the distance of the lines, their damping hangs on a few lines: {places} rad/s"
+            "resonance(s) narrower than half the distance of the lines, whose damping hangs on a few lines: "
+            f"{places} rad/s"
         )
     if weighted > POOR and noise.level > 0 and worst.value > 1e-9:
         source = "given" if noise.basis == "given" else "estimated"

@@ -6,10 +6,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.noise import noise_shape, smoothed_size
-from realize.fitting.order import Search, Trial, finished, relocate, single_line_poles, start, unstable_image
+from realize.fitting.order import Search, Trial, finished, polish, relocate, single_line_poles, start, unstable_image
 from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate
 from realize.fitting.registry import Method, Outcome, register
+from realize.fitting.thinning import thinned
 
 ComplexArray = NDArray[np.complex128]
 
@@ -72,13 +73,19 @@ def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
 
 
 def _searched(problem: Problem, lowest: int, highest: int, known: dict[int, ComplexArray] | None) -> Search:
-    search = Search(problem, known)
+    few = thinned(problem)
+    search = Search(few, known)
     if lowest == highest and highest > LONGEST_LADDER:
-        fresh = [relocate(problem, start(problem, highest, s), 20) for s in ("logarithmic", "linear", "real")]
+        fresh = [relocate(few, start(few, highest, s), 20) for s in ("logarithmic", "linear", "real")]
         search.best[highest] = min(fresh, key=lambda t: t.cost)
     else:
         search.grow(lowest, highest)
-    return search
+    if few is problem:
+        return search
+    full = Search(problem)
+    for order, trial in search.best.items():
+        full.best[order] = polish(problem, trial.poles, 4, 1e-3)
+    return full
 
 
 def _weights_from_misfit(problem: Problem, trial: Trial) -> NDArray[np.float64] | None:

@@ -254,37 +254,14 @@ def best_additions(
 
     A list of candidates is tried: pairs at the lines of the largest misfit and at frequencies spread over the band,
     each with damping ratios from half the distance of the lines up to 0.7; real poles spread over the band and a
-    decade beyond; a few of both far outside. The gain of each is exact (linear least squares by projection). Parameters as in ``polished``.
+    decade beyond; a few of both far outside. The gain of each is exact (linear least squares by
+    projection). Parameters as in ``polished``.
     """
     x = points.imag
     w, a, single = sections_of(poles)
     base = Projection(points, np.log(np.concatenate([w, a, single])), w.size, values, weights, direct, vanish)
-    positive = x[x > 0]
-    low, high = positive[0], positive[-1]
     strength = sum(r[: x.size] ** 2 + r[x.size :] ** 2 for r in base.residual)
-    around = np.concatenate([strength[:1], strength, strength[-1:]])
-    smooth = strength + 0.5 * (around[:-2] + around[2:])
-    padded = np.concatenate([[-1.0], smooth, [-1.0]])
-    peaks = np.flatnonzero((smooth >= padded[:-2]) & (smooth > padded[2:]) & (x > 0))
-    peaks = peaks[np.argsort(-smooth[peaks], kind="stable")][:10]
-    spread = np.unique(np.rint(np.linspace(0, x.size - 1, 14)).astype(int))
-    lines = np.unique(np.concatenate([peaks, spread[x[spread] > 0]]))
-    gap = np.gradient(x) if x.size > 1 else np.ones(1)
-    frequency, damping = [], []
-    for k in lines:
-        narrow = min(max(gap[k] / (2 * x[k]), 1e-9), 0.7)
-        for zeta in np.geomspace(narrow, 0.7, 6):
-            frequency.append(x[k])
-            damping.append(zeta)
-    # outside the band: what a double integrator below it, or a resonance above it, leaves within
-    for place in [low * 2.0**-k for k in (1, 2, 4, 7, 12, 17)] + [high * 2.0**k for k in (0.5, 1.5, 4)]:
-        for zeta in (0.02, 0.7):
-            frequency.append(place)
-            damping.append(zeta)
-    pair_w, pair_a = np.array(frequency), 2 * np.array(frequency) * np.array(damping)
-    real = np.concatenate(
-        [low * np.array([1e-9, 1e-6, 1e-4, 1e-2]), np.geomspace(low / 10, high * 10, 24), high * np.array([1e3, 1e6])]
-    )
+    pair_w, pair_a, real = _addition_candidates(x, strength)
     trial = Sections(
         points, np.log(np.concatenate([pair_w, pair_a, real])), pair_w.size, np.inf if direct else vanish
     ).columns()
@@ -299,6 +276,37 @@ def best_additions(
     best = int(np.argmax(gains[:m]))
     pair = poles_of(pair_w[best : best + 1], pair_a[best : best + 1], np.zeros(0))
     return pair, np.array([complex(-real[int(np.argmax(gains[m:]))])])
+
+
+def _addition_candidates(x: Array, strength: Array) -> tuple[Array, Array, Array]:
+    """Return w and a of pairs, and a of real poles, worth trying for the misfit power of each line."""
+    positive = x[x > 0]
+    low, high = positive[0], positive[-1]
+    around = np.concatenate([strength[:1], strength, strength[-1:]])
+    smooth = strength + 0.5 * (around[:-2] + around[2:])
+    padded = np.concatenate([[-1.0], smooth, [-1.0]])
+    peaks = np.flatnonzero((smooth >= padded[:-2]) & (smooth > padded[2:]) & (x > 0))
+    peaks = peaks[np.argsort(-smooth[peaks], kind="stable")][:10]
+    spread = np.unique(np.rint(np.linspace(0, x.size - 1, 14)).astype(int))
+    lines = np.unique(np.concatenate([peaks, spread[x[spread] > 0]]))
+    gap = np.gradient(x) if x.size > 1 else np.ones(1)
+    frequency: list[float] = []
+    damping: list[float] = []
+    for k in lines:
+        narrow = min(max(gap[k] / (2 * x[k]), 1e-9), 0.7)
+        for zeta in np.geomspace(narrow, 0.7, 6):
+            frequency.append(x[k])
+            damping.append(zeta)
+    # outside the band: what a double integrator below it, or a resonance above it, leaves within
+    for place in [low * 2.0**-k for k in (1, 2, 4, 7, 12, 17)] + [high * 2.0**k for k in (0.5, 1.5, 4)]:
+        frequency += [place, place]
+        damping += [0.02, 0.7]
+    real = [
+        low * np.array([1e-9, 1e-6, 1e-4, 1e-2]),
+        np.geomspace(low / 10, high * 10, 24),
+        high * np.array([1e3, 1e6]),
+    ]
+    return np.array(frequency), 2 * np.array(frequency) * np.array(damping), np.concatenate(real)
 
 
 def _gains(columns: Array, inner: Array, before: Array, m: int) -> Array:
