@@ -201,23 +201,7 @@ def inspect_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
         rows.append(
             ("stable", {True: "yes", False: "NO", None: "not decided"}.get(record["stable"], str(record["stable"])))
         )
-    known: tuple[str, ...] = (
-        "file",
-        "kind",
-        "order",
-        "minimal_order",
-        "time",
-        "period",
-        "inputs",
-        "outputs",
-        "stable",
-        "poles",
-        "zeros",
-    )
-    known += ("hankel_singular_values", "fragility", "cautions", "realize", "digest", "receipts", "history")
-    for name, value in record.items():
-        if name not in known and isinstance(value, (bool, int, float, str)):
-            rows.append((name.replace("_", " "), clean(value, 200) if isinstance(value, str) else short(value, 4)))
+    rows += _further(record)
     fragility = record.get("fragility")
     if isinstance(fragility, Mapping):
         rows.append(("fragility", _fragility(fragility)))
@@ -233,8 +217,82 @@ def inspect_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
         roots = _roots_of(record, field)
         if roots is not None:
             parts += [words(""), roots_grid(roots, period, name)]
+    parts += _channel_zeros(record.get("channel_zeros"), period)
     parts += _cautions(record.get("cautions") or [])
     return laid_out(parts, page)
+
+
+#: Fields of an inspection that have a place of their own, or none.
+_PLACED: tuple[str, ...] = (
+    "file",
+    "kind",
+    "order",
+    "minimal_order",
+    "time",
+    "period",
+    "inputs",
+    "outputs",
+    "stable",
+    "poles",
+    "zeros",
+)
+_PLACED += (
+    "channel_zeros",
+    "hankel_singular_values",
+    "fragility",
+    "cautions",
+    "realize",
+    "digest",
+    "receipts",
+    "history",
+)
+
+
+def _further(record: Mapping[str, Any]) -> list[tuple[str, Any]]:
+    """Return the other plain fields of an inspection, in its order: frequencies in both units, steps as a route."""
+    rows: list[tuple[str, Any]] = []
+    for name, value in record.items():
+        title = name.replace("_", " ")
+        if name in _PLACED or value is None:
+            continue
+        if name == "steps":
+            if value:
+                rows.append((title, " → ".join(str(step) for step in value)))
+        elif name == "dead_time":
+            channels = [
+                f"output {i}, input {j}: {prefixed(v, 's', 4)}"
+                for i, r in enumerate(value)
+                for j, v in enumerate(r)
+                if v
+            ]
+            rows.append(
+                (title, "; ".join(channels[:8]) + (f"; and {len(channels) - 8} more" if len(channels) > 8 else ""))
+            )
+        elif name.endswith("frequency") and isinstance(value, (int, float)):
+            rows.append((title, f"{short(value, 4)} rad/s ({hertz(value, 4)})"))
+        elif isinstance(value, (bool, int, float)):
+            rows.append((title, short(value, 4)))
+        elif isinstance(value, str):
+            rows.append((title, clean(value, 200)))
+    return rows
+
+
+def _channel_zeros(channels: Any, period: float | None) -> list[Any]:
+    """Return the zeros channel by channel where there are few channels, else how many there are."""
+    if not channels:
+        return []
+    cells = [(i, j, zeros) for i, row in enumerate(channels) for j, zeros in enumerate(row)]
+    if len(cells) > 4:
+        counts = [sum(int(zero[2]) for zero in zeros) for _, _, zeros in cells]
+        return [
+            words(""),
+            facts([("zeros", f"{min(counts)} to {max(counts)} in each of {len(cells)} channels (all in the record)")]),
+        ]
+    parts: list[Any] = []
+    for i, j, zeros in cells:
+        roots = [(complex(zero[0], zero[1]), int(zero[2])) for zero in zeros]
+        parts += [words(""), words(f"output {i}, input {j}", "bold"), roots_grid(roots, period, "zero")]
+    return parts
 
 
 def _period(record: Mapping[str, Any]) -> float | None:
@@ -291,79 +349,35 @@ def _claims_in(record: Mapping[str, Any]) -> list[Claim]:
 
 
 def fit_table(candidates: Iterable[Mapping[str, Any]], *, page: Page = PLAIN) -> str:
-    """Return the orders that a fit tried as a table, the kept one marked.
+    """Return the orders that a fit or a reduction tried as a table, the kept one marked.
 
     Parameters
     ----------
     candidates : iterable of mappings
-        ``order``, ``rms`` (relative misfit), ``weighted`` (1 = as large as the noise), ``criterion`` (smaller is
-        better), ``kept``; a ``note`` where given.
+        ``order``, and what there is of ``rms`` (relative misfit), ``weighted`` (1 = as large as the noise),
+        ``bound`` (of a reduction's error), ``criterion`` (smaller is better), ``kept``, ``note``.
     """
-    rows, noted = [], False
     listed = [dict(candidate) for candidate in candidates]
-    for one in listed:
-        note = clean(one.get("note") or one.get("why") or "", 200)
-        noted = noted or bool(note)
-        rms = one.get("rms")
-        rows.append(
-            [
-                str(one.get("order", "-")),
-                "-" if rms is None else f"{short(100 * rms)} %",
-                short(one.get("weighted")),
-                short(one.get("criterion"), 5),
-                "kept" if one.get("kept") else "",
-                note,
-            ]
-        )
-    columns = [
-        ("order", "right"),
-        ("misfit", "right"),
-        ("misfit/noise", "right"),
-        ("criterion", "right"),
-        ("", "left"),
-        ("", "left"),
-    ]
-    if not noted:
-        columns, rows = columns[:-1], [row[:-1] for row in rows]
-    return laid_out([grid(columns, rows) if rows else words("no order was tried")], page)
+    if not listed:
+        return laid_out([words("no order was tried")], page)
+    columns = [("order", "right")]
+    cells = [[str(one.get("order", "-")) for one in listed]]
+    for field, name, digits in _CANDIDATE:
+        values = [one.get(field) for one in listed]
+        if any(value is not None for value in values):
+            columns.append((name, "right"))
+            cells.append([short(value, digits) for value in values])
+    cells.append(["kept" if one.get("kept") else "" for one in listed])
+    cells.append([clean(one.get("note") or "", 200) for one in listed])
+    columns += [("", "left"), ("", "left")]
+    filled = [k for k, column in enumerate(cells) if any(column)]
+    rows = [[cells[k][row] for k in filled] for row in range(len(listed))]
+    return laid_out([grid([columns[k] for k in filled], rows)], page)
 
 
-def demo_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
-    """Return the record of ``demo`` as text: what was made, how well, and where the files are."""
-    fitted, reduced = record["fitted"], record["reduced"]
-    against = record["against_the_invented_truth"]
-    rows = [
-        [
-            "fitted",
-            fitted["kind"],
-            str(fitted["order"]),
-            _percent(fitted["claims"]["rms-misfit"]),
-            _percent(against["fitted"]),
-        ],
-        ["converted", record["converted"]["kind"], str(record["converted"]["order"]), "-", "-"],
-        [
-            "reduced",
-            reduced["kind"],
-            str(reduced["order"]),
-            "-",
-            _percent(against["reduced"]),
-        ],
-    ]
-    columns = [
-        ("step", "left"),
-        ("kind", "left"),
-        ("order", "right"),
-        ("misfit", "right"),
-        ("off the invented truth", "right"),
-    ]
-    parts: list[Any] = [
-        words(f"{record['lines']} lines of an invented sweep, seed {record['seed']}"),
-        grid(columns, rows),
-        words(f"folder {record['folder']}: {', '.join(record['files'])}"),
-        words(f"{record['seconds']:.1f} s. The axis is invented: do not build anything on it."),
-    ]
-    return laid_out(parts, page)
-
-
-def _percent(value: float | None) -> str:
-    return "-" if value is None else f"{short(100 * value)} %"
+_CANDIDATE = (
+    ("rms", "misfit", 3),
+    ("weighted", "misfit/noise", 3),
+    ("bound", "error bound", 3),
+    ("criterion", "criterion", 6),
+)

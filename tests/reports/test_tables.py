@@ -208,6 +208,19 @@ def test_inspect_needs_no_field_and_takes_null() -> None:
     data = {"kind": "frequency-response", "order": None, "inputs": 1, "outputs": 2, "lines": 400, "largest gain": 1e300}
     text = check(inspect_table(data))
     assert "lines 400" in text and "largest gain 1e300" in text and "order" not in text
+    several = {"channel_zeros": [[[[3.0, 0.0, 1]]], [[]]], "dead_time": [[0.0], [0.002]], "steps": ["fit", "reduce"]}
+    text = check(inspect_table({**several, "lowest_frequency": 628.3185307}))
+    for fact in (
+        "output 0, input 0 zero rad/s frequency damping 3 3",
+        "non-minimum phase",
+        "output 1, input 0 no zeros",
+        "dead time output 1, input 0: 2 ms",
+        "steps fit → reduce",
+        "lowest frequency 628.3 rad/s (100 Hz)",
+    ):
+        assert fact in text, fact
+    many = inspect_table({"channel_zeros": [[[[1.0, 0.0, 2]], [], []], [[], [], []]]})
+    assert "0 to 2 in each of 6 channels" in many
     assert "order 3 (minimal)" in check(inspect_table({"order": 3, "minimal_order": 3}))
 
 
@@ -239,11 +252,13 @@ def test_fit_marks_the_order_that_was_kept() -> None:
         for order in (8, 10, 12)
     ]
     lines = [" ".join(line.split()) for line in fit_table(candidates).splitlines()]
-    assert lines[2] == "10 1 % 1.2 -123.46 kept"
+    assert lines[2] == "10 0.01 1.2 -123.457 kept"
     assert sum("kept" in line for line in lines) == 1
     candidates[0]["note"] = "one pole moved to the edge of the band and stayed there, so this order was left out"
     candidates[0]["rms"] = None
     assert "left out" in check(fit_table(candidates))
+    text = check(fit_table([{"order": 3, "bound": 0.125}, {"order": 4, "bound": 0.0}]))
+    assert text == "order error bound 3 0.125 4 0"
     assert fit_table([]) == "no order was tried\n"
 
 
