@@ -7,7 +7,7 @@ import warnings
 import zipfile
 from collections.abc import Iterator
 from contextlib import contextmanager
-from typing import BinaryIO
+from typing import Any, BinaryIO
 
 import numpy as np
 from numpy.typing import NDArray
@@ -97,7 +97,7 @@ class Arrays:
             with self._zip.open(member) as stream:
                 return np.lib.format.read_array(stream, allow_pickle=False)  # type: ignore[no-any-return]
 
-    def numbers(self, name: str, *, whole: bool = False) -> NDArray[np.generic]:
+    def numbers(self, name: str, *, whole: bool = False) -> NDArray[Any]:
         """Return an array of numbers (``whole``: of integers)."""
         values = self.raw(name)
         if values.dtype.kind not in ("iu" if whole else "iufc"):

@@ -1,7 +1,7 @@
 """Tables of a frequency response: CSV and other text, columns recognised by their names.
 
-Frequencies in kHz, MHz or GHz become the doubles nearest to the decimal number of Hz; rad/s stay rad/s. Lines are sorted
-by frequency. Real and imaginary part count before magnitude and phase where a channel has both.
+Frequencies in kHz, MHz or GHz become the doubles nearest to the decimal number of Hz; rad/s stay rad/s. Lines are
+sorted by frequency. Real and imaginary part count before magnitude and phase where a channel has both.
 
 - A magnitude is linear unless its name says dB.
 - A phase without unit is in degrees beside a magnitude in dB, or where some value exceeds 2 pi; else it is refused as
@@ -130,7 +130,8 @@ def _example(width: int) -> str:
     for k in range(pairs):
         label = f"y{k + 1}_" if pairs > 1 else ""
         names += [f"{label}real", f"{label}imaginary"]
-    return ",".join(names + ["-"] * (width - len(names)))
+    names += ["-"] * (width - len(names))
+    return ",".join(names[:9]) + (",..." if width > 9 else "")
 
 
 def _one(columns: list[Column], role: str, label: str) -> int | None:

@@ -43,6 +43,8 @@ ROLES = {
     "deviation": ("standard deviation", "standard_deviation", "deviation", "std", "stdev", "stddev", "sigma"),
     "coherence": ("coherence", "coh"),
 }
+#: Longest name of a column, characters.
+MAX_NAME = 300
 _ANGULAR = ("omega", "w", "ω", "angular frequency", "angular_frequency")
 _ROLE_OF = {word: role for role, words in ROLES.items() for word in words}
 _WORDS = "|".join(re.escape(word) for word in sorted(_ROLE_OF, key=len, reverse=True))
@@ -70,6 +72,8 @@ class Column:
 def parse(name: str) -> Column:
     """Return what the name of a column says; the role is empty where it says nothing that is known."""
     shown = name.strip()
+    if len(shown) > MAX_NAME:
+        return Column(shown, "")
     if shown.lower() in ("-", "skip"):
         return Column(shown, "skip")
     if _LOGARITHM.fullmatch(shown):

@@ -17,7 +17,12 @@ from dataclasses import dataclass, field
 from realize.errors import InputError, Refused
 
 COMMENTS = ("#", "%", "!")
-MAX_LINES = 1_000_000
+#: Largest number of lines, numbers in a line, and characters in a line.
+MAX_LINES = 500_000
+MAX_WIDTH = 10_000
+MAX_LINE = 1 << 20
+#: Most numbers in one table.
+MAX_NUMBERS = 8_000_000
 NUMBER = re.compile(r"[+-]?(?:\d+[.,]?\d*|[.,]\d+)(?:[eEdD][+-]?\d+)?", re.ASCII)
 _NON_FINITE = re.compile(r"[+-]?(nan|inf|infinity|n/a|na|#.*|-+)?", re.IGNORECASE)
 
@@ -110,12 +115,16 @@ def split_names(line: str, separator: str) -> list[str]:
 def scan(text: str) -> Table:
     """Return the table in a text; numbers stay text, so that the frequency can be scaled without rounding twice.
 
-    Raises InputError naming the line that does not fit; Refused for more than a million lines.
+    Raises InputError naming the line that does not fit; Refused for more than half a million lines.
     """
     table = Table()
     names: list[tuple[int, str]] = []
     width = 0
+    if max(text.count("\n"), text.count("\r")) > MAX_LINES:
+        raise Refused(f"more than {MAX_LINES:,} lines; thin the data out, or cut a band")
     for number, line in enumerate(re.split(r"\r\n|\r|\n", text), start=1):
+        if len(line) > MAX_LINE:
+            raise InputError(f"a line of {len(line):,} characters", "a line for each frequency", field=f"line {number}")
         bare = line.strip()
         if not bare:
             continue
@@ -138,10 +147,12 @@ def scan(text: str) -> Table:
         fields = split(line, table.separator)
         if not table.rows:
             width = len(fields)
+            if width > MAX_WIDTH:
+                raise InputError(f"{width:,} columns", f"at most {MAX_WIDTH:,}", field=f"line {number}")
         elif len(fields) != width:
             raise InputError(f"{len(fields)} columns", f"{width}, as in line {table.lines[0]}", field=f"line {number}")
-        if len(table.rows) >= MAX_LINES:
-            raise Refused(f"more than {MAX_LINES:,} lines of numbers; thin the data out, or cut a band")
+        if len(table.rows) * width >= MAX_NUMBERS:
+            raise Refused(f"more than {MAX_NUMBERS:,} numbers; thin the data out, or leave channels out")
         table.rows.append(fields)
         table.lines.append(number)
     table.commas = "," in text and (table.separator != "," or '"' in text)

@@ -20,7 +20,7 @@ from realize.models.base import Index
 from realize.models.checks import decimal_fraction
 
 #: Most decimal strings in one model.
-MAX_DECIMALS = 1_000_000
+MAX_DECIMALS = 500_000
 _SHORT = re.compile(r"[+-]?(\d+(\.\d*)?|\.\d+)([eE][+-]?\d{1,3})?", re.ASCII)
 
 Decimals = dict[Index, str]

@@ -153,9 +153,9 @@ def _checked(frequency: ArrayLike, response: ArrayLike, period: float | None) ->
             raise InputError(f"{array[tuple(bad[0])]}", "a finite number", field=f"{name}{place}")
     if w[0] < 0:
         raise InputError(f"{w[0]}", "a frequency that is not negative", field="frequency[0]")
-    bad = np.flatnonzero(np.diff(w) <= 0)
-    if bad.size:
-        k = int(bad[0]) + 1
+    wrong = np.flatnonzero(np.diff(w) <= 0)
+    if wrong.size:
+        k = int(wrong[0]) + 1
         raise InputError(f"{w[k]} after {w[k - 1]}", "increasing frequencies", field=f"frequency[{k}]")
     if w[-1] == 0:
         raise InputError("frequency 0 alone", "at least one line above 0", field="frequency")

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -109,7 +111,7 @@ def _frozen(array: NDArray) -> NDArray:
     return array
 
 
-def _ldexp(values: ComplexArray, exponents: NDArray[np.int64]) -> ComplexArray:
+def _ldexp(values: ComplexArray, exponents: Any) -> ComplexArray:
     result = np.empty(values.shape, dtype=complex)
     with np.errstate(under="ignore"):
         result.real = np.ldexp(values.real, exponents)

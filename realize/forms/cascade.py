@@ -165,22 +165,20 @@ def cascade_states(sections: list[Section], gain: Fraction) -> tuple[Array, Arra
         blocks.append(block)
     shares = _spread_exponent(exponent, len(blocks))
     row = np.zeros((1, n))  # the signal between sections as a function of the states so far
-    through = 1.0
+    # the mantissa of the gain enters at the input, where it multiplies powers of two only: no second rounding, and what
+    # cancels inside a section still cancels exactly
+    through = to_double(mantissa)
     start = 0
-    for k, (block, share) in enumerate(zip(blocks, shares, strict=True)):
+    for block, share in zip(blocks, shares, strict=True):
         size = block.A.shape[0]
         part = slice(start, start + size)
         A[part, part] = block.A
-        scale = math.ldexp(1.0, share)
         A[part, :] += block.B @ row
         B[part, 0] += block.B[:, 0] * through
-        last = k == len(blocks) - 1
-        factor = (to_double(mantissa) if last else 1.0) * scale
-        row = block.d * row * factor
-        row[0, part] = block.C[0] * factor if not last else [
-            to_double(value * mantissa * Fraction(scale)) for value in block.exact_output
-        ]
-        through = block.d * through * factor
+        scale = math.ldexp(1.0, share)
+        row = block.d * row * scale
+        row[0, part] = block.C[0] * scale
+        through = block.d * through * scale
         start += size
     return A, B, row, np.array([[through]])
 
@@ -191,7 +189,6 @@ class _Block:
     B: Array
     C: Array
     d: float
-    exact_output: list[Fraction]
     gain_exponent: int
 
 
@@ -206,9 +203,9 @@ def _block(section: Section) -> _Block:
         b = math.ldexp(1.0, e // 2)
         if proper:
             c = [(above[1] - below[1]) / Fraction(b)]
-            return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 1.0, c, 0)
+            return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 1.0, 0)
         c = [Fraction(2) ** (e - e // 2)]
-        return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 0.0, c, e)
+        return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 0.0, e)
     a1, a0 = below[1], below[2]
     size = max(abs(pole) for pole in section.poles)
     e = math.frexp(size)[1] if size > 0 else 0
@@ -220,13 +217,13 @@ def _block(section: Section) -> _Block:
     b = Fraction(2) ** (e // 2)
     if zeros == 2:
         c = [(above[2] / k - Fraction(stiffness)) / b, (above[1] - Fraction(damping)) / b]
-        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 1.0, c, 0)
+        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 1.0, 0)
     rest = Fraction(2) ** (e - e // 2)
     if zeros == 1:
         c = [above[1] / k * rest, rest]
-        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, c, e)
+        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, e)
     c = [rest, Fraction(0)]
-    return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, c, 2 * e)
+    return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, 2 * e)
 
 
 def _doubles(values: list[Fraction]) -> Array:

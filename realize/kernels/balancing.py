@@ -237,7 +237,7 @@ def tail_bounds(values: Array) -> Array:
 
 
 def _signs(rows: Array, columns: Array) -> Array:
-    """Return +1 or -1 per state: the first large entry of its row becomes positive, or of its column if the row is noise."""
+    """Return +1 or -1 per state: the first large entry of its row (of its column, if that is noise) gets positive."""
     sign = np.ones(rows.shape[0])
     for k, (row, column) in enumerate(zip(rows, columns, strict=True)):
         chosen = column if np.linalg.norm(row) <= 1e-8 * np.linalg.norm(column) else row
@@ -249,7 +249,7 @@ def _signs(rows: Array, columns: Array) -> Array:
 
 @dataclass(frozen=True)
 class Balanced:
-    """The first states of a balanced model, and the projections that lead there: W'V = I, A = W'T V, B = W'B, C = C V."""
+    """The first states of a balanced model, with the projections that lead there: W'V = I, A = W'T V, B = W'B..."""
 
     A: Array
     B: Array

@@ -264,11 +264,11 @@ def peak_gain(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, toleranc
            Systems & Control Letters 14 (1990) 287-293.
     """
     own = (A, B, C, D)
+    if A.shape[0] == 0 or not np.any(B) or not np.any(C):
+        value = float(gains(D[None].astype(complex))[0])
+        return Peak(value, 0.0, value * (1 + 4 * max(D.shape) * EPS), "bounded")
     A, B, C, D, time, gain = _units(A, B, C, D, sampled)
     direct = float(gains(D[None].astype(complex))[0])
-    if A.shape[0] == 0 or not np.any(B) or not np.any(C):
-        value = _scaled_up(direct, gain)
-        return Peak(value, 0.0, value * (1 + 4 * EPS), "bounded")
     evaluate = response_evaluator(A, B, C, D)
 
     def at(frequency: Array) -> Array:

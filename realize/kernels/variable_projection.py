@@ -260,7 +260,7 @@ def best_additions(
     x = points.imag
     w, a, single = sections_of(poles)
     base = Projection(points, np.log(np.concatenate([w, a, single])), w.size, values, weights, direct, vanish)
-    strength = sum(r[: x.size] ** 2 + r[x.size :] ** 2 for r in base.residual)
+    strength = np.sum([r[: x.size] ** 2 + r[x.size :] ** 2 for r in base.residual], axis=0)
     pair_w, pair_a, real = _addition_candidates(x, strength)
     trial = Sections(
         points, np.log(np.concatenate([pair_w, pair_a, real])), pair_w.size, np.inf if direct else vanish

@@ -195,18 +195,20 @@ def relocated(
         left = stacked(weights[:, c, None] * own)
         norm = np.linalg.norm(left, axis=0)
         right = stacked((-weights[:, c] * values[:, c])[:, None] * plain) / scale
-        triangle = np.linalg.qr(np.hstack([left / np.where(norm > 0, norm, 1.0), right]), mode="r")
+        whole = np.hstack([left / np.where(norm > 0, norm, 1.0), right])
+        triangle: Array = np.linalg.qr(whole, mode="r")  # type: ignore[assignment]
         rows.append(triangle[own.shape[1] :, own.shape[1] :])
     reduced = np.vstack(rows)
     relaxation = plain.real.sum(axis=0) / scale * (total / points.size)
     matrix = np.vstack([reduced, relaxation])
     right = np.zeros(matrix.shape[0])
     right[-1] = total
-    c = np.linalg.lstsq(matrix, right, rcond=max(matrix.shape) * np.finfo(float).eps)[0] / scale
+    sigma = np.linalg.lstsq(matrix, right, rcond=max(matrix.shape) * np.finfo(float).eps)[0] / scale
     # a sigma whose constant vanishes has a zero at infinity: fall back on the unrelaxed form (reference 2, section V)
-    if not abs(c[n]) > 1e-8 * np.max(np.abs(plain[:, :n] * c[:n])):
-        c = np.append(least_squares(reduced[:, :n], -reduced[:, n] / scale[n]) / scale[:n], 1.0)
-    return ordered_poles(np.linalg.eigvals(_zeros_matrix(poles, c[:n] / c[n])), reflect)
+    if not abs(sigma[n]) > 1e-8 * np.max(np.abs(plain[:, :n] * sigma[:n])):
+        sigma = np.append(least_squares(reduced[:, :n], -reduced[:, n] / scale[n]) / scale[:n], 1.0)
+    zeros = np.linalg.eigvals(_zeros_matrix(poles, sigma[:n] / sigma[n])).astype(complex)
+    return ordered_poles(zeros, reflect)
 
 
 def _zeros_matrix(poles: ComplexArray, c: Array) -> Array:

@@ -22,15 +22,15 @@ def by_order(prepared: Prepared, order: int, notes: list[str]) -> int:
         raise UsageError(f"an order of {order}: it is a number of states, 0 or more")
     if order < kept:
         raise Refused(
-            f"an order of {order} is too small: {states(kept)} belong to poles that are unstable or on the boundary of "
-            f"stability and are kept as they are; ask for {kept} or more"
+            f"an order of {order} is too small: poles that are unstable or on the boundary of stability are kept as "
+            f"they are and need {states(kept)}; ask for {kept} or more"
         )
     wanted = order - kept
     if wanted >= prepared.available:
         if prepared.available < n:
             notes.append(
-                f"{states(n - prepared.available)} contribute less than rounding and were left out: the result is the "
-                f"balanced minimal part with {states(prepared.available + kept)}"
+                f"left out, because rounding hides what they contribute: {states(n - prepared.available)}; the result is "
+                f"the balanced minimal part with {states(prepared.available + kept)}"
             )
         elif order >= kept + n:
             notes.append(f"nothing was cut: the result is the whole model with {states(n + kept)}, balanced")

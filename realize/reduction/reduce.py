@@ -72,8 +72,8 @@ def reduce_states(
     if prepared.kept_order:
         on_axis = int(np.count_nonzero(prepared.split.marginal))
         notes.append(
-            f"{choice.states(prepared.kept_order)} kept as they are: {prepared.kept_order - on_axis} of unstable poles "
-            f"and {on_axis} of poles on the boundary of stability"
+            f"kept as they are: {choice.states(prepared.kept_order - on_axis)} of unstable poles and "
+            f"{choice.states(on_axis)} of poles on the boundary of stability"
         )
     largest: float | None = None
     limit: float | None = None
@@ -112,21 +112,30 @@ def reduce_states(
 def rounding_term(prepared: Prepared, part: Projected, count: int) -> float:
     """Return what rounding may add to the theorem's bound (absolute, in the model's own unit).
 
-    Twice the estimated errors of the values that were cut, and the first-order effect of rounding errors in the
-    projected matrices: |dG| <= |C (sI - A)^-1| |dA| |(sI - A)^-1 B| + ..., with |dA| = sqrt(n) eps | |W'| |T| |V| |
-    and so on (Higham, Accuracy and Stability of Numerical Algorithms, 2002, section 3.5; the square root is the usual
-    statistical growth), largest over the frequencies of the result's poles.
+    Twice the estimated errors of the values that were cut, and the first-order effect of errors in the entries of the
+    result, |dG| <= |C (sI - A)^-1| |dA| |(sI - A)^-1 B| + |C (sI - A)^-1| |dB| + |dC| |(sI - A)^-1 B|, largest over the
+    frequencies of the result's poles. The error of an entry is n^1/2 eps times the size of the products it is summed
+    from, which are graded by the Hankel singular values (the root is the usual statistical growth: Higham, Accuracy
+    and Stability of Numerical Algorithms, 2002, section 2.8), and the relative errors of the two values it belongs to.
     """
-    T, B, C = prepared.split.stable
-    n = T.shape[0]
-    cut = 2 * float(prepared.factors.errors[count : prepared.available].sum()) if count < n else 0.0
+    factors = prepared.factors
+    n = factors.values.size
+    cut = 2 * float(factors.errors[count : prepared.available].sum()) if count < n else 0.0
     if count == 0 or n == 0:
         return prepared.in_gain(cut)
     unit = EPS * math.sqrt(n)
-    w, v = np.abs(part.W.T), np.abs(part.V)
-    change_a = unit * float(np.linalg.norm(w @ (np.abs(T) @ v)))
-    change_b = unit * float(np.linalg.norm(w @ np.abs(B)))
-    change_c = unit * float(np.linalg.norm(np.abs(C) @ v))
+    root = np.sqrt(factors.values[:count])
+    uncertain = factors.errors[:count] / factors.values[:count] / 2
+    # sizes of the sums behind each entry, form by form as in `balanced_part`
+    left, right = np.abs(factors.left[:, :count]), np.abs(factors.right[:, :count])
+    roots = factors.roots
+    above = (left.T @ (np.abs(roots.M) @ left)) / root[:, None] * root
+    below = (right.T @ (np.abs(roots.N) @ right)) * root[:, None] / root
+    change_a = unit * (np.triu(above) + np.tril(below, -1)) + np.abs(part.A) * (uncertain[:, None] + uncertain)
+    sums_b = root * np.linalg.norm(right.T @ np.abs(roots.input), axis=1)
+    sums_c = root * np.linalg.norm(np.abs(roots.output) @ left, axis=0)
+    change_b = unit * sums_b + uncertain * np.linalg.norm(part.B, axis=1)
+    change_c = unit * sums_c + uncertain * np.linalg.norm(part.C, axis=0)
     poles = np.linalg.eigvals(part.A)
     frequencies = pole_frequencies(poles, sampled=prepared.sampled)
     points = np.exp(1j * frequencies) if prepared.sampled else 1j * frequencies
@@ -137,9 +146,10 @@ def rounding_term(prepared: Prepared, part: Projected, count: int) -> float:
     worst = 0.0
     for point in points:
         pencil = point * np.eye(count) - triangle
-        right = float(np.linalg.norm(scipy.linalg.solve_triangular(pencil, into, check_finite=False), 2))
-        left = float(np.linalg.norm(scipy.linalg.solve_triangular(pencil, out.T, trans=1, check_finite=False), 2))
-        worst = max(worst, left * change_a * right + left * change_b + right * change_c)
+        state = basis @ scipy.linalg.solve_triangular(pencil, into, check_finite=False)
+        costate = scipy.linalg.solve_triangular(pencil, out.T, trans=1, check_finite=False).T @ basis.conj().T
+        x, y = np.linalg.norm(state, axis=1), np.linalg.norm(costate, axis=0)
+        worst = max(worst, float(y @ change_a @ x + y @ change_b + change_c @ x))
     return prepared.in_gain(cut + worst)
 
 

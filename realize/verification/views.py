@@ -21,8 +21,10 @@ from realize.models.fractions import form_fractions
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
-#: Predicted elementary operations above which verification works in doubles.
-EXACT_BUDGET = 2e10
+#: Predicted operations (about nanoseconds) above which doubles are used.
+EXACT_BUDGET = 5e9
+#: State models of larger order are not looked at: their exact matrices alone would take long to form.
+LARGEST_EXACT = 250
 
 
 @dataclass(frozen=True)
@@ -179,12 +181,21 @@ class View:
 
 
 def predicted_cost(model: Model) -> float:
-    """Return the predicted operations of forming exact fractions (a function of sizes alone)."""
+    """Return the predicted operations of forming exact fractions and their roots (from sizes and bit lengths alone)."""
+    from realize.kernels.exact import cost
+
     p, m = model.shape
-    order = float(model.order or 0)
+    order = model.order or 0
     if isinstance(model, StateSpace):
-        return 60 * order**4 * (2 if model.E is not None else 1) + 1e4 * p * m
-    return 400 * order**3 + 1e4 * p * m
+        if order > LARGEST_EXACT:
+            return np.inf
+        bits = cost.matrix_bits(model.exact("A"))
+        return cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
+    if order > 4 * LARGEST_EXACT:
+        return np.inf
+    # the coefficients of a product of n factors have about n times the bits of one
+    each = order if p * m == 1 else max(order // max(p * m, 1), 1)
+    return p * m * cost.roots_operations(each, 53 * max(each, 1))
 
 
 def double_poles(model: Model) -> ComplexArray:

@@ -221,6 +221,12 @@ def decimal_string(value: fmpq, digits: int) -> str:
     return f"{sign}{head}e{exponent}"
 
 
+def conjugate(number: acb) -> acb:
+    """Return the complex conjugate with all its bits: python-flint rounds even that to the working precision."""
+    with precision(max(number.real.bits(), number.imag.bits()) + 64):
+        return number.conjugate()
+
+
 def ball(value: fmpq) -> arb:
     """Return a real ball of the working precision around a rational."""
     return arb(value)

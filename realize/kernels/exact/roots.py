@@ -16,7 +16,7 @@ from realize.kernels.exact.isolation import (
     integer_polynomial,
     isolate,
 )
-from realize.kernels.exact.numbers import nearest, nearest_ball, precision, scaled_ball, tie
+from realize.kernels.exact.numbers import conjugate, nearest, nearest_ball, precision, scaled_ball, tie
 from realize.kernels.exact.polynomials import bilinear_image, even_odd, quotient, shifted, squarefree
 
 #: Relative accuracy (bits) from which a part of a root that has not rounded is tested for an exact tie.
@@ -68,7 +68,7 @@ class Root:
         if self.ball.rel_accuracy_bits() >= bits or self.origin is None:
             return self.ball
         ball = self.origin.at(bits)
-        return ball.conjugate() if self.ball.imag < 0 else ball
+        return conjugate(ball) if self.ball.imag < 0 else ball
 
 
 def roots(p: fmpq_poly) -> list[Root]:
@@ -140,7 +140,7 @@ def _rounded(item: Isolated, f: fmpq_poly, multiplicity: int, search: RationalSe
     upper = Root(complex(re, im), multiplicity, item.on_axis, item.real, ball, None, f, item.origin)
     if item.real:
         return [upper]
-    lower = Root(complex(re, -im), multiplicity, item.on_axis, False, ball.conjugate(), None, f, item.origin)
+    lower = Root(complex(re, -im), multiplicity, item.on_axis, False, conjugate(ball), None, f, item.origin)
     return [upper, lower]
 
 
