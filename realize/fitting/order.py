@@ -30,6 +30,8 @@ ComplexArray = NDArray[np.complex128]
 HIGHEST_ORDER = 40
 #: ``auto`` stops after this many orders in a row without a better criterion (two pairs).
 PATIENCE = 4
+#: Near the noise ``auto`` stops after this many orders of which none was worth its poles (``worthwhile``).
+LOOKAHEAD = 12
 #: Up to this order every order is tried, above it every second one.
 EVERY_ORDER = 12
 #: Up to this order a start by vector fitting is tried beside the warm ones.
@@ -138,8 +140,15 @@ class Search:
                 chosen = lowest = order
             if self.criterion(order) < self.criterion(chosen):
                 chosen = order
-            if order - chosen >= PATIENCE or self.reproduced(order):
+            if order - chosen >= PATIENCE or self.reproduced(order) or self.flat(order, lowest):
                 break
+
+    def flat(self, order: int, lowest: int) -> bool:
+        """Return whether the misfit is near the noise and a dozen orders more were not worth it."""
+        if order < lowest + LOOKAHEAD:
+            return False
+        noise = self.noise_power()
+        return self.best[order].cost <= 3 * noise and order - self.choose(lowest, noise) >= LOOKAHEAD
 
     def reproduced(self, order: int) -> bool:
         """Return whether the misfit is no more than rounding, so that more poles cannot bring anything."""
