@@ -248,8 +248,8 @@ def bilinear_schur(T: Array, B: Array, C: Array) -> tuple[Array, Array, Array, f
     identity = np.eye(n)
     poles = schur_eigenvalues(T)
     sign = 1.0 if np.min(np.abs(poles + 1)) >= np.min(np.abs(poles - 1)) else -1.0
-    mapped = np.linalg.solve(sign * T + identity, np.hstack([sign * T - identity, math.sqrt(2.0) * B]))
-    right = np.linalg.solve((sign * T + identity).T, math.sqrt(2.0) * C.T).T
+    mapped = np.linalg.solve(sign * T + identity, np.hstack([sign * T - identity, math.sqrt(2.0) * B])).astype(float)
+    right = np.linalg.solve((sign * T + identity).T, math.sqrt(2.0) * C.T).T.astype(float)
     return _quasi_triangular(mapped[:, :n], T), mapped[:, n:], right, sign
 
 
@@ -325,7 +325,7 @@ def square_roots(T: Array, B: Array, C: Array, *, sampled: bool) -> SquareRoots:
 
 def _back(M: Array, V: Array, sign: float) -> tuple[Array, Array]:
     identity = np.eye(M.shape[0])
-    inner = _quasi_triangular(np.linalg.solve(identity - M, identity + M), M)
+    inner = _quasi_triangular(np.linalg.solve(identity - M, identity + M).astype(float), M)
     return sign * inner, V @ (inner + identity) / math.sqrt(2.0)
 
 

@@ -179,11 +179,11 @@ def _units(A: Array, B: Array, C: Array, D: Array, sampled: bool) -> tuple[Array
 def _bilinear(A: Array, B: Array, C: Array, D: Array) -> tuple[Array, Array, Array, Array, int]:
     """Return a continuous model with G_c(j tan(theta / 2)) = G(sign e^(j theta)), and that sign."""
     n = A.shape[0]
-    poles = np.linalg.eigvals(A)
+    poles = np.linalg.eigvals(A).astype(complex)
     sign = 1 if np.min(np.abs(poles + 1)) >= np.min(np.abs(poles - 1)) else -1
     shifted = sign * A + np.eye(n)
-    mapped = np.linalg.solve(shifted, np.hstack([sign * A - np.eye(n), B]))
-    left = np.linalg.solve(shifted.T, C.T).T
+    mapped = np.linalg.solve(shifted, np.hstack([sign * A - np.eye(n), B])).astype(float)
+    left = np.linalg.solve(shifted.T, C.T).T.astype(float)
     # G(z) = C (zI - A)^-1 B + D with z = sign (1 + s) / (1 - s); z = -sign at infinite s
     return mapped[:, :n], 2.0 * sign * mapped[:, n:], left, D - sign * (C @ mapped[:, n:]), sign
 
@@ -274,7 +274,7 @@ def peak_gain(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, toleranc
     def at(frequency: Array) -> Array:
         return gains(evaluate(np.exp(1j * frequency) if sampled else 1j * frequency))
 
-    poles = np.linalg.eigvals(A)
+    poles = np.linalg.eigvals(A).astype(complex)
     value, where = refined_peak(at, pole_frequencies(poles, sampled=sampled))
     if not sampled and direct >= value:
         value, where = direct, math.inf
@@ -332,7 +332,7 @@ def _confirm(
     if value == 0.0:
         # zero at every sample: seeds outnumber the zeros a nonzero response of this order can have
         return value, where, 0.0
-    poles = np.linalg.eigvals(A)
+    poles = np.linalg.eigvals(A).astype(complex)
     step = tolerance
     for _ in range(60):
         level = max(value, direct) * (1 + 2 * step)

@@ -29,8 +29,8 @@ def by_order(prepared: Prepared, order: int, notes: list[str]) -> int:
     if wanted >= prepared.available:
         if prepared.available < n:
             notes.append(
-                f"left out, because rounding hides what they contribute: {states(n - prepared.available)}; the result is "
-                f"the balanced minimal part with {states(prepared.available + kept)}"
+                f"left out, because rounding hides what they contribute: {states(n - prepared.available)}; the result "
+                f"is the balanced minimal part with {states(prepared.available + kept)}"
             )
         elif order >= kept + n:
             notes.append(f"nothing was cut: the result is the whole model with {states(n + kept)}, balanced")

@@ -136,7 +136,7 @@ def rounding_term(prepared: Prepared, part: Projected, count: int) -> float:
     sums_c = root * np.linalg.norm(np.abs(roots.output) @ left, axis=0)
     change_b = unit * sums_b + uncertain * np.linalg.norm(part.B, axis=1)
     change_c = unit * sums_c + uncertain * np.linalg.norm(part.C, axis=0)
-    poles = np.linalg.eigvals(part.A)
+    poles = np.linalg.eigvals(part.A).astype(complex)
     frequencies = pole_frequencies(poles, sampled=prepared.sampled)
     points = np.exp(1j * frequencies) if prepared.sampled else 1j * frequencies
     distance = np.min(np.abs(points[:, None] - poles[None, :]), axis=1)
