@@ -95,7 +95,7 @@ class PipeReader(io.RawIOBase):
         deadline = time.monotonic() + PIPE_PATIENCE
         while True:
             try:
-                data = os.read(self.descriptor, len(view))
+                data = os.read(self.descriptor, min(len(view), 1 << 20))
             except BlockingIOError:  # somebody has it open for writing: wait as long as that takes
                 self.started = True
                 select.select([self.descriptor], [], [])

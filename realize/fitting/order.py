@@ -112,7 +112,7 @@ class Search:
             starts.append(ordered_poles(np.concatenate([self.best[order - 2].poles, self.additions(order - 2)[0]])))
         trials = [polish(problem, s, 12, 1e-3) for s in starts]
         spacings = [spacing_of(problem)] if starts else ["logarithmic", "linear", "real"]
-        if starts and order > FRESH_ORDER:
+        if order in self.known or (starts and order > FRESH_ORDER):
             spacings = []
         fresh = [relocate(problem, start(problem, order, s), 8 if starts else 20) for s in spacings]
         lowest = min((t.cost for t in trials), default=np.inf)

@@ -9,21 +9,45 @@ Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 
+def _exponents(sizes: Array) -> NDArray[np.int64]:
+    """Return e with 2^(e-1) <= size < 2^e, 0 for 0."""
+    return np.where(sizes > 0, np.frexp(sizes)[1], 0).astype(np.int64)
+
+
+def _powers(exponents: NDArray[np.int64]) -> Array:
+    return np.ldexp(1.0, exponents)
+
+
 def _factor(residue: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
-    """Return columns c and rows b with residue = c b, of the numerical rank of the residue, balanced in size."""
+    """Return columns c and rows b with residue = c b, of the numerical rank of the residue, balanced in size.
+
+    Rows and columns are first scaled by powers of two, so that the rank does not depend on units.
+    """
     p, m = residue.shape
+    size = np.maximum(np.abs(residue.real), np.abs(residue.imag))
+    if not np.any(size):
+        return np.zeros((p, 0), dtype=complex), np.zeros((0, m), dtype=complex)
     if p == 1 or m == 1:
-        size = np.linalg.norm(residue)
-        if size == 0:
-            return np.zeros((p, 0), dtype=complex), np.zeros((0, m), dtype=complex)
-        root = 2.0 ** (np.frexp(size)[1] // 2)
-        one = np.full((1, 1), root, dtype=complex)
-        return (residue / root, one) if m == 1 else (one, residue / root)
-    u, s, vh = np.linalg.svd(residue)
+        half = _powers(_exponents(size.max()) // 2)
+        one = np.full((1, 1), half, dtype=complex)
+        return (residue / half, one) if m == 1 else (one, residue / half)
+    rows, columns = np.zeros(p, dtype=np.int64), np.zeros(m, dtype=np.int64)
+    scaled = size
+    for _ in range(3):
+        step = _exponents(scaled.max(axis=1))
+        rows, scaled = rows + step, np.ldexp(scaled, -step[:, None])
+        step = _exponents(scaled.max(axis=0))
+        columns, scaled = columns + step, np.ldexp(scaled, -step[None, :])
+    shift = -(rows[:, None] + columns[None, :])
+    even = np.ldexp(residue.real, shift) + 1j * np.ldexp(residue.imag, shift)
+    u, s, vh = np.linalg.svd(even)
     # one rounding of the entries moves the small singular values by at most eps times the norm
-    rank = int(np.sum(s > max(p, m) * 4 * np.finfo(float).eps * s[0])) if s[0] > 0 else 0
+    rank = int(np.sum(s > max(p, m) * 4 * np.finfo(float).eps * s[0]))
     root = np.sqrt(s[:rank])
-    return u[:, :rank] * root, root[:, None] * vh[:rank]
+    left, right = u[:, :rank] * root, root[:, None] * vh[:rank]
+    # the powers of two are put back half and half where the two sides are of very different size
+    half = (int(rows.max()) - int(columns.max())) // 2
+    return left * _powers(rows - half)[:, None], right * _powers(columns + half)[None, :]
 
 
 def modal_states(

@@ -77,9 +77,7 @@ def array(value: Any, name: str, dimensions: int, dtype: type = float, *, allow:
                 raise InputError("complex numbers", "real numbers", field=name)
             raw = raw.real
         values = raw.astype(dtype)
-    except (ValueError, TypeError, OverflowError) as error:
-        if isinstance(error, InputError):
-            raise
+    except (ValueError, TypeError, OverflowError):
         raise InputError("ragged rows or something that is no number", f"{dimensions}-dimensional numbers", field=name) from None
     if values.ndim != dimensions:
         if values.size == 0 and values.ndim < dimensions:
@@ -102,7 +100,9 @@ def is_vector(value: Any) -> bool:
     """True for a flat list of numbers (an empty one too)."""
     if isinstance(value, np.ndarray):
         return value.ndim == 1 and value.dtype.kind in "fiuc"
-    return isinstance(value, (list, tuple)) and all(np.ndim(entry) == 0 for entry in value)
+    return isinstance(value, (list, tuple)) and all(
+        not isinstance(entry, (list, tuple)) and np.ndim(entry) == 0 for entry in value
+    )
 
 
 def channels(value: Any, name: str, dtype: type, *, allow: Mapping[Any, str] | None = None) -> Channels:

@@ -14,7 +14,7 @@ from realize.schema import Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.reduce import states_of
 from realize.verification import Pair, View
-from realize.verification.conversion import channel_error, peak_error, response_error
+from realize.verification.conversion import channel_error, dead_time_difference, peak_error, response_error
 from realize.verification.difference import h2_error, linf_error
 from realize.verification.misfit import data_claims
 
@@ -77,7 +77,7 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
         return _against_data(first, second, band, first)
     if isinstance(second, FrequencyResponse):
         return _against_data(second, first, band, first)
-    if not _same_dead_time(first, second):
+    if dead_time_difference(first, second) > 0:
         return _with_dead_time(first, second)
     pair = Pair(View(first), View(second))
     claims = [response_error(pair)]
@@ -89,12 +89,6 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
     except Refused as error:
         claims.append(judge("h2-error", None, unit="absolute", note=str(error)))
     return claims
-
-
-def _same_dead_time(first: Model, second: Model) -> bool:
-    a = np.zeros(first.shape) if first.dead_time is None else first.dead_time.total
-    b = np.zeros(first.shape) if second.dead_time is None else second.dead_time.total
-    return np.array_equal(a, b)
 
 
 def _with_dead_time(first: Model, second: Model) -> list[Claim]:

@@ -5,6 +5,8 @@ from __future__ import annotations
 import time
 from typing import Any
 
+import numpy as np
+
 from realize.conversions import ROWS, Task, convert_model, plan_route
 from realize.errors import Refused, UsageError
 from realize.models import FrequencyResponse, Model
@@ -13,6 +15,9 @@ from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish
 from realize.steps.second_opinion import ask
 from realize.verification import View, conversion_claims
+
+#: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
+GOOD = 1e-9
 
 
 def _task(model: Model, to: str, form: str | None, common_denominator: bool) -> Task:
@@ -78,7 +83,7 @@ def convert(
     result = convert_model(task, route)
     shape = _form_of(task, route)
     claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
-    if form is None and to == "state-space" and _failed(claims) and shape == "modal":
+    if form is None and shape == "modal" and _worst(claims) > GOOD:
         # the default for several channels did not do: series connections, channel by channel
         other = Task(source, to, "cascade", common_denominator)
         second_route = plan_route(other)
@@ -111,15 +116,14 @@ def _form_of(task: Task, route: list[Any]) -> str:
     return route[-1].target.partition(":")[2]
 
 
-def _failed(claims: list[Claim]) -> bool:
-    return any(claim.holds is False for claim in claims)
-
-
 def _worst(claims: list[Claim]) -> float:
-    for claim in claims:
-        if claim.name == "peak-error":
-            return float("inf") if claim.infinite or claim.value is None else claim.value
-    return float("inf")
+    """Return the larger one of peak error and error of the worst channel."""
+    values = [
+        np.inf if claim.infinite or claim.value is None else claim.value
+        for claim in claims
+        if claim.name in ("peak-error", "channel-error", "response-error")
+    ]
+    return max(values, default=np.inf)
 
 
 def _cautions(source: Model, result: Model, to: str) -> list[str]:

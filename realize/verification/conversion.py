@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any
 
@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from realize.models import Model
 from realize.schema import CLAIMS, Claim, judge
+from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.search import LIGHT, Band, axis_intervals, dynamic_band, largest, seeds
 from realize.verification.views import NO_DYNAMICS, Dynamics, View
 
@@ -23,6 +24,15 @@ class Pair:
 
     source: View
     result: View
+    _proofs: dict[Any, Proof] = field(default_factory=dict, repr=False, compare=False)
+
+    def proof(self, channel: tuple[int, int] | None) -> Proof:
+        """Return the exact polynomials of all channels together, or of one."""
+        if self.source.model.shape == (1, 1):
+            channel = None
+        if channel not in self._proofs:
+            self._proofs[channel] = Proof(self.source, self.result, channel)
+        return self._proofs[channel]
 
     @cached_property
     def exact(self) -> bool:
@@ -119,6 +129,59 @@ def _note(pair: Pair) -> str:
     return "" if pair.exact else "evaluated in double arithmetic; the rounding of the evaluation is part of the value"
 
 
+def _claimed(
+    name: str,
+    pair: Pair,
+    value: float,
+    where: dict[str, Any],
+    limit: float | None,
+    intervals: list[tuple[float, float, float | None]],
+    channel: tuple[int, int] | None = None,
+) -> Claim:
+    """Return the claim, proved on the intervals where that is affordable, measured otherwise."""
+    if pair.exact and np.isfinite(value):
+        proof = pair.proof(channel)
+        if proof.identical:
+            return judge(name, 0.0, limit=limit, basis="proved", uncertainty=0.0, where={})
+        if proof.size <= LARGEST_DEGREE:
+            bound = proof.bound(value, intervals)
+            if bound is not None:
+                hidden = float(np.nextafter(max(bound - value, 0.0), np.inf))
+                return judge(name, value, limit=limit, basis="proved", uncertainty=hidden, where=where)
+    return judge(name, value, limit=limit, where=where, note=_note(pair))
+
+
+def _intervals(
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None
+) -> list[tuple[float, float, float | None]]:
+    """Return the pieces of a band between what is left out, with the divisor of light zeros from their edges."""
+    pieces: list[tuple[float, float, float | None]] = [(0.0, 0.0, None)] if band.zero else []
+    cuts = sorted((max(low, band.low), min(high, band.high)) for low, high in band.left_out if high > band.low and low < band.high)
+    start = band.low
+    spans = []
+    for low, high in cuts:
+        if low > start:
+            spans.append((start, low))
+        start = max(start, high)
+    if start < band.high:
+        spans.append((start, band.high))
+    for low, high in spans:
+        begin = low
+        for line in lines:
+            left, right = line * (1 - LIGHT), line * (1 + LIGHT)
+            if right <= begin or left >= high:
+                continue
+            if left > begin:
+                pieces.append((begin, left, None))
+            edges = pair.sizes(np.array([left, right]))[1]
+            edge = _frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
+            pieces.append((max(left, begin), min(right, high), float(edge.max()) * (1 - 2.0**-30)))
+            begin = right
+        if begin < high:
+            pieces.append((begin, high, None))
+    return pieces
+
+
 def response_error(pair: Pair, limit: float | None = None) -> Claim:
     """Return the claim `response-error`."""
     view = pair.source
@@ -130,9 +193,11 @@ def response_error(pair: Pair, limit: float | None = None) -> Claim:
         min(b.low for b in bands), max(b.high for b in bands), _finite_at_zero(view), axis_intervals(view.poles)
     )
     zeros = _common_zeros(view)
+    lines = _light_zeros(zeros)
     w = seeds(band, zeros, view.poles, pair.result.poles, *_channel_zeros(view))
-    value, where = largest(lambda x: _relative(pair, x, _light_zeros(zeros), None, 0.0), w, band)
-    return judge("response-error", value, limit=limit, where={"frequency": where}, note=_note(pair))
+    value, where = largest(lambda x: _relative(pair, x, lines, None, 0.0), w, band)
+    intervals = _intervals(pair, band, lines, None) if pair.exact else []
+    return _claimed("response-error", pair, value, {"frequency": where}, limit, intervals)
 
 
 def _channel_zeros(view: View) -> list[Dynamics]:
@@ -143,53 +208,125 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
     """Return the claim `channel-error`: the worst channel, each over its own dynamic band."""
     view = pair.source
     p, m = view.model.shape
-    worst, place = 0.0, {}
+    worst: Claim | None = None
     gain = None
     for i in range(p):
         for j in range(m):
+            reference = 0.0
             if zero_channel(view, i, j):
                 if gain is None:
-                    gain = peak_gain(pair)[0]
-                band = Band(0.1, 10.0) if not view.poles.s.size else whole_band(view)
+                    gain = peak_gain(pair)[0] or 1.0
+                reference = gain
+                band = whole_band(view) if view.poles.s.size else Band(0.1, 10.0)
+                lines: list[float] = []
                 w = seeds(band, view.poles, pair.result.poles)
-                value, where = largest(lambda x, c=(i, j): _relative(pair, x, [], c, gain or 1.0), w, band)
+                intervals = [(low, high, gain) for low, high, _ in _intervals(pair, band, [], (i, j))] if pair.exact else []
             else:
                 band = _channel_band(view, i, j)
                 zeros, poles = view.channel_roots[i][j]
+                lines = _light_zeros(zeros)
                 w = seeds(band, zeros, poles, pair.result.channel_roots[i][j][1])
-                value, where = largest(lambda x, c=(i, j), z=zeros: _relative(pair, x, _light_zeros(z), c, 0.0), w, band)
-            if not value <= worst:
-                worst, place = value, {"frequency": where, "output": i, "input": j}
-    return judge("channel-error", worst, limit=limit, where=place, note=_note(pair))
+                intervals = _intervals(pair, band, lines, (i, j)) if pair.exact else []
+            value, where = largest(
+                lambda x, c=(i, j), z=lines, r=reference: _relative(pair, x, z, c, r), w, band  # type: ignore[misc]
+            )
+            place = {"frequency": where, "output": i, "input": j}
+            claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
+            if worst is None or _total(claim) > _total(worst):
+                worst = claim
+    assert worst is not None
+    return worst
 
 
-def whole_band(view: View, margin: float = 1e2) -> Band:
-    """Return the dynamic band of all channels together, widened by a factor; zero included, axis poles left out."""
-    zeros = NO_DYNAMICS
+def _total(claim: Claim) -> float:
+    """Return what the claim may be at worst; a claim without a bound counts by its value."""
+    if claim.infinite or claim.value is None:
+        return np.inf
+    return claim.value + (claim.uncertainty or 0.0)
+
+
+def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Band:
+    """Return the dynamic band of all channels together, widened by a factor; zero included, axis poles left out.
+
+    Parameters
+    ----------
+    other : View, optional
+        The band covers the poles and zeros of this model too.
+    """
+    zeros, poles = NO_DYNAMICS, view.poles
     for part in _channel_zeros(view):
         zeros = zeros.merged(part)
-    at_origin = bool(np.any(view.poles.s == 0))
-    band = dynamic_band(zeros, view.poles, view.period, not at_origin)
+    at_origin = bool(np.any(poles.s == 0))
+    band = dynamic_band(zeros, poles, view.period, not at_origin)
+    low, high = band.low, band.high
+    if other is not None:
+        extra = dynamic_band(NO_DYNAMICS, other.poles, view.period, True)
+        if np.any(other.poles.frequency > 0):
+            low, high = min(low, extra.low), max(high, extra.high)
     top = np.pi / view.period if view.period is not None else np.inf
-    low = band.low / margin if not at_origin else band.low
-    return Band(max(low, 1e-300), min(band.high * margin, top, 1e300), not at_origin, band.left_out)
+    low = low / margin if not at_origin else low
+    return Band(max(low, 1e-300), min(high * margin, top, 1e300), not at_origin, band.left_out)
 
 
 def peak_gain(pair: Pair) -> tuple[float, float]:
-    """Return the largest Frobenius gain of the source found, and its frequency."""
+    """Return the largest Frobenius gain of the source found, and its frequency; the limit at infinity counts."""
     band = whole_band(pair.source)
     w = seeds(band, pair.source.poles, *_channel_zeros(pair.source))
-    return largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
+    gain, where = largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
+    limit = _at_infinity(pair)[1]
+    return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)
+
+
+def _at_infinity(pair: Pair) -> tuple[float, float]:
+    """Return the limits of ||dG|| and ||G|| at infinite frequency; (0, 0) where only samples are known, or sampled."""
+    if not pair.exact or pair.source.period is not None:
+        return 0.0, 0.0
+    from realize.kernels.exact.numbers import nearest
+
+    assert pair.source.fractions is not None and pair.result.fractions is not None
+
+    def limit(n: Any, d: Any) -> float:
+        if not n or n.degree() < d.degree():
+            return 0.0
+        if n.degree() > d.degree():
+            return np.inf
+        return abs(nearest(n.leading_coefficient() / d.leading_coefficient()))
+
+    pairs = [
+        (a, b)
+        for one, two in zip(pair.source.fractions, pair.result.fractions, strict=True)
+        for a, b in zip(one, two, strict=True)
+    ]
+    difference = [limit(b[0] * a[1] - a[0] * b[1], a[1] * b[1]) for a, b in pairs]
+    return float(np.linalg.norm(difference)), float(np.linalg.norm([limit(*a) for a, _ in pairs]))
 
 
 def peak_error(pair: Pair, limit: float | None = None) -> Claim:
-    """Return the claim `peak-error`."""
+    """Return the claim `peak-error`: over all frequencies, those of the result's own poles included.
+
+    A source whose gain grows without limit (more zeros than poles) is judged over its dynamic band.
+    """
     gain, _ = peak_gain(pair)
-    band = whole_band(pair.source)
+    end_difference, end_gain = _at_infinity(pair)
+    improper = not np.isfinite(end_gain)
+    band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source, other=pair.result)
+    if improper:
+        w = seeds(band, pair.source.poles)
+        gain, _ = largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
     w = seeds(band, pair.source.poles, pair.result.poles)
     value, where = largest(lambda x: _frobenius(pair.sizes(x)[0]), w, band)
+    place: dict[str, Any] = {"frequency": where}
+    if not improper and end_difference > value:
+        value, place = end_difference, {"frequency": None}
     error = value / gain if gain > 0 else (0.0 if value == 0 else np.inf)
-    return judge("peak-error", error, limit=limit, where={"frequency": where}, note=_note(pair))
+    if improper or gain == 0:
+        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, band, [], None)]
+    else:
+        full = Band(0.0, np.inf, False, band.left_out)
+        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, full, [], None)]
+    if not np.isfinite(gain):
+        intervals = []
+    return _claimed("peak-error", pair, error, place, limit, intervals if pair.exact and gain > 0 else [(0.0, 0.0, 1.0)])
 
 
 def end_behaviour(pair: Pair, limit: float | None = None) -> Claim | None:
@@ -248,6 +385,14 @@ def _axis_moved(pair: Pair, i: int, j: int) -> str:
     return ""
 
 
+def dead_time_difference(source: Model, result: Model) -> float:
+    """Return the largest difference of the channels' dead times, s."""
+    first, second = (
+        np.zeros(model.shape) if model.dead_time is None else model.dead_time.total for model in (source, result)
+    )
+    return float(np.abs(first - second).max())
+
+
 def conversion_claims(source: Model, result: Model, structured: bool, limits: dict[str, float] | None = None) -> list[Claim]:
     """Return the claims of a conversion.
 
@@ -270,6 +415,13 @@ def conversion_claims(source: Model, result: Model, structured: bool, limits: di
         return defaults.get("convert", defaults.get("convert:structured") if structured else None)
 
     pair = Pair(View(source), View(result))
+    late = dead_time_difference(source, result)
+    if late > 0:
+        note = f"the dead times differ by up to {late:.3g} s"
+        return [
+            judge(name, np.inf, limit=limit(name), basis="bounded", note=note)
+            for name in ("response-error", "peak-error", "end-behaviour")
+        ]
     claims = [response_error(pair, limit("response-error"))]
     if source.shape != (1, 1):
         claims.append(channel_error(pair, limit("channel-error")))

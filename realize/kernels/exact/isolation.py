@@ -7,7 +7,7 @@ from typing import Any
 
 from flint import acb, acb_poly, arb, arb_poly, fmpq, fmpq_poly, fmpz_poly, nmod_poly
 
-from realize.kernels.exact.numbers import exact_value, precision, simplest
+from realize.kernels.exact.numbers import precision, scaled_ball, simplest_in
 from realize.kernels.exact.pencils import prime
 from realize.kernels.exact.polynomials import even_odd, in_square, monic, quotient
 
@@ -171,7 +171,7 @@ class RationalSearch:
         candidate = self._short(ball.real)
         if candidate is not None:
             return candidate
-        size = int(self.lead).bit_length() + max(int(abs(ball.real).upper().man_exp()[1]) + ball.real.bits(), 0) + 8
+        size = int(self.lead).bit_length() + max(scaled_ball(ball.real)[1], 0) + 8
         if size > RATIONAL_CAP or (size > RATIONAL_FILTER and not self._possible()):
             return None
         if ball.rel_accuracy_bits() < size:
@@ -185,8 +185,7 @@ class RationalSearch:
 
     def _short(self, ball: arb) -> fmpq | None:
         """Return the simplest rational in the ball if it is a root."""
-        middle, radius = exact_value(ball), exact_value(ball.rad())
-        value = simplest(middle - radius, middle + radius)
+        value = simplest_in(ball, ISOLATION_BITS)
         q = prime(0)
         if value.q % q == 0:
             return None

@@ -135,6 +135,14 @@ def simplest(low: fmpq, high: fmpq) -> fmpq:
     return value
 
 
+def simplest_in(ball: arb, bits: int) -> fmpq:
+    """Return the rational of least denominator in a ball, after it was rounded to so many bits."""
+    with precision(bits):
+        rounded = +ball
+    middle, radius = exact_value(rounded), exact_value(rounded.rad())
+    return simplest(middle - radius, middle + radius)
+
+
 def tie(ball: arb) -> fmpq | None:
     """Return the point halfway between two neighbouring doubles that lies in a narrow ball, or None."""
     value = near_ball(ball)

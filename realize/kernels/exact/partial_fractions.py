@@ -7,7 +7,7 @@ from typing import Any
 
 from flint import acb, acb_poly, arb, fmpq, fmpq_poly
 
-from realize.kernels.exact.numbers import exact_value, near_ball, nearest, nearest_ball, precision, simplest, tie
+from realize.kernels.exact.numbers import near_ball, nearest, nearest_ball, precision, simplest_in, tie
 from realize.kernels.exact.polynomials import (
     Complex,
     coefficients,
@@ -171,8 +171,7 @@ def _vertical_line(pole: Root, bits: int) -> list[tuple[fmpq, fmpq_poly]]:
     h((s - a)^2) is the factor of those roots that come with their mirror images in the line Re s = a.
     """
     ball = pole.at(bits)
-    re, radius = exact_value(ball.real), exact_value(ball.real.rad())
-    center = fmpq(0) if pole.on_axis else simplest(re - radius, re + radius)
+    center = fmpq(0) if pole.on_axis else simplest_in(ball.real, bits)
     if 2 * int(center.q).bit_length() > bits - 32:
         return []
     moved = shifted(pole.factor, center)
@@ -260,8 +259,7 @@ def _rational_pair(pole: Root) -> Complex | None:
         return None
     parts = []
     for ball in (pole.ball.real, pole.ball.imag):
-        middle, radius = exact_value(ball), exact_value(ball.rad())
-        value = simplest(middle - radius, middle + radius)
+        value = simplest_in(ball, FIRST_BITS)
         if int(value.q).bit_length() > SHORT_BITS:
             return None
         parts.append(value)

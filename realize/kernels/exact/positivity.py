@@ -1,0 +1,130 @@
+"""Proof that a polynomial is positive on an interval, by Descartes' rule of signs and bisection.
+
+Vincent's theorem in the form of Collins & Akritas (1976, "Polynomial real root isolation using Descartes' rule of
+signs"): the number of sign changes of the coefficients after mapping an interval to (0, inf) bounds the number of roots
+inside it, and is zero on intervals that are small against the distance of the nearest complex roots.
+"""
+
+from __future__ import annotations
+
+from flint import fmpq, fmpq_poly, fmpz, fmpz_poly
+
+#: Intervals looked at before giving up: a proof needs a few for each nearby root.
+MOST_INTERVALS = 4000
+
+
+def _integers(p: fmpq_poly) -> fmpz_poly:
+    """Return a positive multiple with integer coefficients without common factor."""
+    n = fmpz_poly(p.numer().coeffs())
+    content = n.content()
+    return n // fmpz_poly([content]) if content not in (0, 1) else n
+
+
+def _changes(p: fmpz_poly) -> int:
+    """Return the number of sign changes of the coefficients, 2 at the most."""
+    count, last = 0, 0
+    for c in p.coeffs():
+        if c:
+            sign = 1 if c > 0 else -1
+            if last and sign != last:
+                count += 1
+                if count == 2:
+                    return 2
+            last = sign
+    return count
+
+
+_SHIFT = fmpz_poly([1, 1])
+
+
+def _to_half_line(p: fmpz_poly, low: fmpq, high: fmpq | None) -> fmpz_poly:
+    """Return a polynomial whose roots in (0, inf) are those of p in (low, high); infinite where high is None.
+
+    x = low + t for an infinite interval; x = (low + high t) / (1 + t) otherwise.
+    """
+    n = p.degree()
+    q = int(low.q)
+    shifted = fmpz_poly([int(c) * q ** (n - k) for k, c in enumerate(p.coeffs())]) if q != 1 else p
+    # now in units of 1/q: shifted(y) = q^n p(y / q)
+    if low.p:
+        shifted = shifted(fmpz_poly([low.p, 1]))
+    if high is None:
+        return shifted
+    width = (high - low) * q
+    a, b = int(width.p), int(width.q)
+    c = shifted.coeffs()
+    c = list(c) + [fmpz(0)] * (n + 1 - len(c))
+    # y = width u, u in (0, 1); then reverse and shift: u = 1 / (1 + t) covers the same interval
+    scaled = [ck * fmpz(a) ** k * fmpz(b) ** (n - k) for k, ck in enumerate(c)]
+    return fmpz_poly(list(reversed(scaled)))(_SHIFT)
+
+
+def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
+    """Return True if p(x) > 0 is proved for all low <= x <= high (high None: to infinity, the limit included).
+
+    Parameters
+    ----------
+    p : polynomial with rational coefficients
+    low : fmpq
+        Not negative.
+    high : fmpq or None
+
+    Returns
+    -------
+    bool
+        False where p is not positive or the proof was not found within `MOST_INTERVALS` intervals.
+    """
+    if not p:
+        return False
+    f = _integers(p)
+    if f.degree() == 0:
+        return f[0] > 0
+    if high is None and f.leading_coefficient() <= 0:
+        return False
+    if p(low) <= 0 or (high is not None and p(high) <= 0):
+        return False
+    if low == high:
+        return True
+    waiting: list[tuple[fmpq, fmpq | None]] = [(low, high)]
+    for _ in range(MOST_INTERVALS):
+        if not waiting:
+            return True
+        a, b = waiting.pop()
+        changes = _changes(_to_half_line(f, a, b))
+        if changes == 0:
+            # no root inside, and positive at the lower end
+            continue
+        if changes == 1:
+            return False
+        middle = _middle(a, b)
+        if p(middle) <= 0:
+            return False
+        waiting += [(middle, b), (a, middle)]
+    return False
+
+
+def _middle(a: fmpq, b: fmpq | None) -> fmpq:
+    """Return a power of two between the ends where there is one (near their geometric mean), else the middle."""
+    low = _exponent(a) if a > 0 else None
+    if b is None:
+        return fmpq(2) ** (low + 4) if low is not None else fmpq(1)
+    high = _exponent(b)
+    if low is None:
+        # towards zero in steps that grow: the lower end is zero itself
+        return fmpq(2) ** (high - 8) if high > -(1 << 14) else b / 2
+    if high - low >= 2:
+        return fmpq(2) ** ((low + high) // 2)
+    return (a + b) / 2
+
+
+def _exponent(value: fmpq) -> int:
+    """Return e with 2^(e-1) <= value < 2^(e+1)."""
+    return int(value.p).bit_length() - int(value.q).bit_length()
+
+
+def square_modulus(p: fmpq_poly) -> fmpq_poly:
+    """Return |p(jw)|^2 as a polynomial in x = w^2: even part squared plus x times odd part squared."""
+    c = p.coeffs()
+    even = fmpq_poly([value if k % 2 == 0 else -value for k, value in enumerate(c[0::2])])
+    odd = fmpq_poly([value if k % 2 == 0 else -value for k, value in enumerate(c[1::2])])
+    return even * even + fmpq_poly([0, 1]) * odd * odd
