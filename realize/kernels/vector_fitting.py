@@ -101,7 +101,7 @@ def stacked(matrix: ComplexArray) -> Array:
 
 
 def least_squares(matrix: Array, right: Array) -> Array:
-    """Solve a least squares problem with columns scaled to length 1; the smallest solution when it is not unique."""
+    """Solve one least squares problem with columns scaled to length 1; the smallest solution when it is not unique."""
     norm = np.linalg.norm(matrix, axis=0)
     norm = np.where(norm > 0, norm, 1.0)
     return np.linalg.lstsq(matrix / norm, right, rcond=4 * np.finfo(float).eps)[0] / norm
