@@ -10,6 +10,7 @@ from realize.files.record import model_from_record, model_to_record
 from realize.files.registry import Format, ReadOptions, register
 from realize.files.sources import Source
 from realize.models import Model
+from realize.schema import KINDS
 
 
 def sniff(head: bytes) -> bool:
@@ -27,7 +28,8 @@ def read(source: Source, options: ReadOptions) -> Model:
 
 def dumps(model: Model) -> str:
     """Return the model as the text of a JSON file."""
-    return json_text.write(model_to_record(model))
+    matrices = [f.name for f in KINDS[model.kind].fields if f.holds == "matrix"]
+    return json_text.write(model_to_record(model), matrices)
 
 
 def write(model: Model, stream: BinaryIO) -> None:

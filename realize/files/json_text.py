@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import json
 import re
+from collections.abc import Collection
 from typing import Any
 
 from realize.errors import InputError
@@ -97,28 +98,18 @@ def parse(data: bytes) -> Any:
         raise InputError("lists or objects nested too deeply", "at most five levels of lists") from None
 
 
-def _depth(value: Any) -> int:
-    depth = 0
-    while isinstance(value, list) and value:
-        value, depth = value[0], depth + 1
-    return depth
-
-
 def one_line(value: Any) -> str:
     """Return a plain value as JSON on one line."""
     return json.dumps(value, ensure_ascii=False, allow_nan=False)
 
 
-def write(record: dict[str, Any]) -> str:
-    """Return an object as JSON: a line for each field, and for each row of a matrix or entry of a long list."""
+def write(record: dict[str, Any], matrices: Collection[str] = ()) -> str:
+    """Return an object as JSON: a line for each field, for each row of ``matrices``, for each entry of a long list."""
     fields = []
     for name, value in record.items():
         text = one_line(value)
-        rows = isinstance(value, list) and len(value) > 1 and (_depth(value) >= 2 or isinstance(value[0], dict))
-        if rows and (len(text) > LINE or _depth(value) == 2):
-            inner = [one_line(entry) for entry in value]
-            pairs = _depth(value) == 2 and all(len(entry) == 2 for entry in value)
-            if not (pairs and len(text) <= LINE):
-                text = "[\n    " + ",\n    ".join(inner) + "\n  ]"
+        nested = isinstance(value, list) and len(value) > 1 and isinstance(value[0], (list, dict))
+        if nested and (len(text) > LINE or name in matrices):
+            text = "[\n    " + ",\n    ".join(map(one_line, value)) + "\n  ]"
         fields.append(f"  {one_line(name)}: {text}")
     return "{\n" + ",\n".join(fields) + "\n}\n"

@@ -272,11 +272,11 @@ def _remark(table: Table) -> dict[str, Any]:
     return {}
 
 
-def _labels(model: Model) -> list[list[str]]:
-    """Return a label for each channel that reads back as what it is: the signals' names where they do, else numbers."""
+def _labels(model: Model) -> tuple[list[list[str]], bool]:
+    """Return a label for each channel that reads back as one, and whether it is made of the signals' names."""
     p, m = model.shape
     if p * m == 1 and not model.outputs[0].name:
-        return [[""]]
+        return [[""]], False
     outputs = [signal.name or f"y{i + 1}" for i, signal in enumerate(model.outputs)]
     inputs = [signal.name or f"u{j + 1}" for j, signal in enumerate(model.inputs)]
 
@@ -296,8 +296,8 @@ def _labels(model: Model) -> list[list[str]]:
     if sound and m > 1:
         sound = all(split_label(labels[i][j]) == (outputs[i], inputs[j]) for i in range(p) for j in range(m))
     if sound:
-        return labels
-    return joined([f"y{i + 1}" for i in range(p)], [f"u{j + 1}" for j in range(m)])
+        return labels, True
+    return joined([f"y{i + 1}" for i in range(p)], [f"u{j + 1}" for j in range(m)]), False
 
 
 def write(model: Model, stream: BinaryIO) -> None:
@@ -308,8 +308,11 @@ def write(model: Model, stream: BinaryIO) -> None:
     common = common_to_record(model)
     if not model.time.sampled:
         del common["time"]
-    labels = _labels(model)
+    labels, named = _labels(model)
     p, m = model.shape
+    for side, given in (("outputs", model.outputs), ("inputs", model.inputs if m > 1 else ())):
+        if named and given and all(signal.name and not signal.unit for signal in given):
+            common.pop(side)  # the columns say it
     if common:
         text.write(REMARK + json.dumps(common) + "\n")
     header = ["frequency_hz" if model.frequency_unit == "Hz" else "frequency_rad/s"]
