@@ -111,33 +111,32 @@ def isolate(f: fmpq_poly) -> list[Isolated]:
 def refined(f: fmpz_poly, ball: acb, bits: int) -> acb:
     """Return the root in an isolating ball with a relative accuracy of at least so many bits.
 
-    Interval Newton method: the root lies in m - f(m) / f'(X) for the midpoint m of a ball X that holds it (Moore,
-    Interval Analysis, 1966, section 7.2); the working precision is doubled while the ball does not shrink.
+    Newton's iteration from the midpoint, then a certificate that does not depend on the width of the ball: the disc of
+    radius n |f / f'| around any point holds a root (Henrici, Applied and Computational Complex Analysis 1, 1974,
+    theorem 6.4g), so a disc inside the isolating ball holds this one; on the real axis a change of sign.
     """
     if ball.rel_accuracy_bits() >= bits:
         return ball
     real = ball.imag.is_zero()
-    slope = f.derivative()
+    slope, n = f.derivative(), f.degree()
     work = bits + 64
-    for _ in range(4):
-        value: Any
-        rate: Any
+    for _ in range(6):
         with precision(work):
             value, rate = (arb_poly(f), arb_poly(slope)) if real else (acb_poly(f), acb_poly(slope))
-            x: Any = ball.real if real else ball
-            while True:
-                accuracy = x.rel_accuracy_bits()
-                if accuracy >= bits:
-                    return acb(x)
-                middle = x.mid()
-                new = middle - value(middle) / rate(x)
-                if not new.is_finite():
+            x: Any = ball.real.mid() if real else acb(ball.real.mid(), ball.imag.mid())
+            for _ in range(4 + bits.bit_length()):
+                step = value(x) / rate(x)
+                if not step.is_finite():
                     break
-                new = _common(new, x)
-                if new.rel_accuracy_bits() <= accuracy + 1:
+                # the last step of an exact hit is zero; any radius then serves
+                radius = (n * step).abs_upper() + abs(x) * arb(2) ** (-work)
+                disc = _disc(x, radius, real)
+                if disc.rel_accuracy_bits() >= bits:
+                    inside = _inside(disc, ball, value, real)
+                    if inside:
+                        return disc
                     break
-                x = new
-        ball = acb(x)
+                x = (x - step).mid()
         work *= 2
     with precision(bits + 32):
         again = [root for root in complex_roots(f) if root.overlaps(ball)]
@@ -146,11 +145,17 @@ def refined(f: fmpz_poly, ball: acb, bits: int) -> acb:
     return again[0]
 
 
-def _common(new: Any, old: Any) -> Any:
-    """Return a ball around the intersection of two balls that hold the same point."""
-    if isinstance(new, arb):
-        return new.intersection(old)
-    return acb(new.real.intersection(old.real), new.imag.intersection(old.imag))
+def _disc(x: Any, radius: arb, real: bool) -> acb:
+    reach = arb(0, radius.upper())
+    return acb(x + reach) if real else acb(x.real + reach, x.imag + reach)
+
+
+def _inside(disc: acb, ball: acb, value: Any, real: bool) -> bool:
+    """Return whether the new ball holds the root of the old one for certain."""
+    if not real:
+        return bool(ball.real.contains(disc.real) and ball.imag.contains(disc.imag))
+    low, high = disc.real.lower(), disc.real.upper()
+    return bool(ball.real.contains(low) and ball.real.contains(high) and value(low) * value(high) < 0)
 
 
 class RationalSearch:
