@@ -48,9 +48,9 @@ def transfer_operations(states: int, inputs: int, outputs: int, bits: int, descr
     """Return predicted operations of `transfer_matrix`."""
     primes = states * (bits + 8) / 62 + 1
     if descriptor:
-        return primes * (6.0 * states**3 + 8.0 * states**2 * (inputs + 4) + 4000.0 * (states + 1)) * 1.3
+        return 5e5 + primes * (6.0 * states**3 + 8.0 * states**2 * (inputs + 4) + 4000.0 * (states + 1)) * 1.3
     krylov = 0.15 * states**3 * min(inputs, outputs) * (1 + primes / 4)
-    return 2.5 * primes * states**3 + krylov + 300.0 * states**2 + 2000.0 * states * inputs * outputs
+    return 3.0 * primes * states**3 + krylov + 5e5 + 4e3 * states**2 + 2e3 * states * inputs * outputs
 
 
 def solve_operations(states: int, inputs: int, bits: int, real: bool) -> float:
@@ -61,13 +61,13 @@ def solve_operations(states: int, inputs: int, bits: int, real: bool) -> float:
 
 
 def roots_operations(degree: int, bits: int) -> float:
-    """Return predicted operations of `roots` for roots that are not clustered."""
-    return 5e3 * degree**2 * (1 + bits / 512) + 1e5 * degree
+    """Return predicted operations of `roots` for roots that are not clustered, within a factor of about four."""
+    return 3e4 * degree**2 * (1 + bits / 50_000) + 1e5 * degree
 
 
 def residues_operations(degree: int, bits: int) -> float:
     """Return predicted operations of `residues`, roots included, for simple poles."""
-    return roots_operations(degree, bits) + 5e5 * degree + 2e3 * degree**2
+    return roots_operations(degree, bits) + 2e5 * degree + 2e4 * degree**2
 
 
 def evaluation_operations(degree: int, points: int, sampled: bool) -> float:
