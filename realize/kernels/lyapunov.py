@@ -224,7 +224,7 @@ def _pair_block(T: Array, C: Array, R: Array, V: Array, M: Array, j: int) -> Non
     across = length * float(np.linalg.norm(short - long * (float(long @ short) / length**2)))
     modulus = math.hypot(a, mu)
     large = 0.5 * (1.0 / (-2.0 * a) + abs(difference))
-    root_determinant = math.hypot(2.0 * a * across, mu) / (4.0 * -a * modulus)
+    root_determinant = math.hypot(2.0 * (a / modulus) * across, mu / modulus) / (-4.0 * a)
     root_one = math.sqrt(large)
     root_two = root_determinant / root_one
     speed = math.sqrt(-2.0 * a)

@@ -60,7 +60,7 @@ def gains(values: ComplexArray) -> Array:
     if values.shape[1] == 0 or values.shape[2] == 0:
         return np.zeros(values.shape[0])
     finite = np.isfinite(values).all(axis=(1, 2))
-    if values.shape[1] == 1 or values.shape[2] == 1:
+    if finite.any() and 1 in values.shape[1:]:
         flat = np.abs(values[finite]).reshape(int(finite.sum()), -1)
         size = flat.max(axis=1)
         safe = np.where(size > 0, size, 1.0)
@@ -272,7 +272,7 @@ def peak_gain(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, toleranc
     evaluate = response_evaluator(A, B, C, D)
 
     def at(frequency: Array) -> Array:
-        return gains(evaluate(np.exp(1j * frequency) if sampled else 1j * frequency))
+        return gains(evaluate(np.asarray(np.exp(1j * frequency) if sampled else 1j * frequency, dtype=complex)))
 
     poles = np.linalg.eigvals(A).astype(complex)
     value, where = refined_peak(at, pole_frequencies(poles, sampled=sampled))
