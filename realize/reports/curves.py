@@ -10,16 +10,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.models import FrequencyResponse, Model, StateSpace
-from realize.reports.roots import continuous_equivalent, poles_of, zeros_of
+from realize.reports.roots import Roots, continuous_equivalent
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 Band = tuple[float, float]
 
-#: Points of a plain grid, and of a grid refined to the last; a page is about 600 dots wide for each channel.
-PLAIN_POINTS, MOST_POINTS = 600, 4000
-#: State models beyond this order are not evaluated again and again to refine the grid.
+#: Points of a grid refined to the last; a page is about 600 dots wide for each channel.
+MOST_POINTS = 4000
+#: State models beyond this order cost time at every point: fewer points, and no refinement by the response.
 REFINED_UP_TO = 48
+FEWER_POINTS = 1000
 
 
 @dataclass(frozen=True)
@@ -39,15 +40,18 @@ class Curve:
         return self.rational * np.exp(-1j * self.frequency[:, None, None] * self.dead_time)
 
 
-def corner_frequencies(model: Model) -> Array:
+def _is_large(model: Model) -> bool:
+    return isinstance(model, StateSpace) and model.A.shape[0] > REFINED_UP_TO
+
+
+def corner_frequencies(model: Model, roots: Roots) -> Array:
     """Return |pole| and |zero| in rad/s, those at zero left out (sampled: of ln z / T)."""
-    roots = [continuous_equivalent(model, values) for values in (poles_of(model), zeros_of(model))]
     with np.errstate(over="ignore"):
-        size = np.abs(np.concatenate(roots))
+        size = np.abs(continuous_equivalent(model, np.concatenate([roots.poles, roots.zeros])))
     return size[(size > 0) & np.isfinite(size)]
 
 
-def drawing_band(models: Sequence[Model], band: Band | None = None) -> Band:
+def drawing_band(models: Sequence[Model], roots: Sequence[Roots], band: Band | None = None) -> Band:
     """Return the frequencies to draw, rad/s.
 
     In this order: the band asked for; the band of the data with a quarter of an octave on each side; from a tenth of
@@ -63,7 +67,7 @@ def drawing_band(models: Sequence[Model], band: Band | None = None) -> Band:
         low, high = min(values[0] for values in data), max(values[-1] for values in data)
         margin = 2**0.25 if low < high else 4.0
         return low / margin, high * margin
-    corners = np.concatenate([corner_frequencies(model) for model in models])
+    corners = np.concatenate([corner_frequencies(model, own) for model, own in zip(models, roots, strict=True)])
     if corners.size:
         low, high = float(corners.min()) / 10, float(min(corners.max(), 1e300)) * 10
     elif math.isfinite(end):
@@ -74,7 +78,7 @@ def drawing_band(models: Sequence[Model], band: Band | None = None) -> Band:
     return (low, high) if low < high / 2 else (high / 1000, high)
 
 
-def drawing_grid(model: Model, band: Band) -> Array:
+def drawing_grid(model: Model, roots: Roots, band: Band) -> Array:
     """Return frequencies for one parametric model: logarithmic, denser around each lightly damped pole and zero.
 
     Near a root with frequency w0 and damping ratio d the offsets are w0 * d * sinh(t), so that a peak of any width gets
@@ -86,17 +90,17 @@ def drawing_grid(model: Model, band: Band) -> Array:
     if not low < high:
         return np.zeros(0)
     decades = math.log10(high) - math.log10(low)
-    parts = [
-        np.logspace(math.log10(low), math.log10(high), int(np.clip(150 * decades, PLAIN_POINTS, MOST_POINTS // 2)))
-    ]
-    for values in (poles_of(model), zeros_of(model)):
-        roots = continuous_equivalent(model, values)
-        w0 = np.abs(roots.imag)
+    most = FEWER_POINTS if _is_large(model) else MOST_POINTS
+    plain = int(np.clip(150 * decades, 0.15 * most, most // 2))
+    parts = [np.logspace(math.log10(low), math.log10(high), plain)]
+    for values in (roots.poles, roots.zeros):
+        equivalent = continuous_equivalent(model, values)
+        w0 = np.abs(equivalent.imag)
         with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
-            damping = np.abs(roots.real) / w0
+            damping = np.abs(equivalent.real) / w0
         light = (w0 > low) & (w0 < high) & (damping < 0.3)
         pairs = sorted(set(zip(w0[light].tolist(), damping[light].tolist(), strict=True)))
-        each = int(np.clip(MOST_POINTS / 4 / max(len(pairs), 1), 5, 41)) | 1
+        each = int(np.clip(most / 2 / max(len(pairs), 1), 3, 41)) | 1
         for frequency, ratio in pairs:
             width = max(ratio, 1e-9)
             reach = math.asinh(0.3 / width)
@@ -114,7 +118,7 @@ def rational_response(model: Model, frequency: Array) -> ComplexArray:
 def refined(model: Model, grid: Array) -> tuple[Array, ComplexArray]:
     """Return grid and response, with points put in wherever a channel turns or jumps by more than a drawing hides."""
     values = rational_response(model, grid)
-    if isinstance(model, StateSpace) and model.A.shape[0] > REFINED_UP_TO:
+    if _is_large(model):
         return grid, values
     for _ in range(5):
         if grid.size >= MOST_POINTS or grid.size < 2:
@@ -132,10 +136,10 @@ def refined(model: Model, grid: Array) -> tuple[Array, ComplexArray]:
     return grid, values
 
 
-def curves_of(entries: Sequence[tuple[str, Model]], band: Band) -> list[Curve]:
+def curves_of(entries: Sequence[tuple[str, Model]], roots: Sequence[Roots], band: Band) -> list[Curve]:
     """Return the curve of each entry over the band: data at their own lines, models on their own grid."""
     curves = []
-    for label, model in entries:
+    for (label, model), own in zip(entries, roots, strict=True):
         p, m = model.shape
         dead = np.zeros((p, m)) if model.dead_time is None else model.dead_time.total
         if isinstance(model, FrequencyResponse):
@@ -143,7 +147,7 @@ def curves_of(entries: Sequence[tuple[str, Model]], band: Band) -> list[Curve]:
             w = model.radians[inside]
             curves.append(Curve(label, model, True, w, model.response[inside], np.zeros((p, m))))
         else:
-            w, values = refined(model, drawing_grid(model, band))
+            w, values = refined(model, drawing_grid(model, own, band))
             curves.append(Curve(label, model, False, w, values, dead))
     return curves
 

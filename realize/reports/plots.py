@@ -20,7 +20,7 @@ from realize.reports import panels, polemap
 from realize.reports.curves import Band, curves_of, drawing_band
 from realize.reports.hankel import hankel_values
 from realize.reports.numbers import clean
-from realize.reports.roots import poles_of
+from realize.reports.roots import Roots, roots_of
 from realize.reports.style import SETTINGS, drawable, looks
 
 FORMATS = {".png": "png", ".svg": "svg"}
@@ -138,13 +138,12 @@ def _notes(listed: Entries, band: Band) -> list[str]:
     return notes
 
 
-def _pole_sets(listed: Entries) -> tuple[dict[int, Any], dict[int, Any]]:
+def _pole_sets(listed: Entries, roots: Sequence[Roots]) -> tuple[dict[int, Any], dict[int, Any]]:
     continuous: dict[int, Any] = {}
     sampled: dict[int, Any] = {}
     for k, (_, model) in enumerate(listed):
-        poles = poles_of(model)
-        if poles.size:
-            (sampled if model.time.sampled else continuous)[k] = poles
+        if roots[k].poles.size:
+            (sampled if model.time.sampled else continuous)[k] = roots[k].poles
     return continuous, sampled
 
 
@@ -161,8 +160,9 @@ def figure_of(
 
     listed = _checked(entries, band)
     models = [model for _, model in listed]
-    span = drawing_band(models, band)
-    curves = curves_of(listed, span)
+    roots = [roots_of(model) for model in models]
+    span = drawing_band(models, roots, band)
+    curves = curves_of(listed, roots, span)
     styles = looks([curve.data for curve in curves])
     notes = _notes(listed, span)
 
@@ -174,7 +174,7 @@ def figure_of(
     extra: list[tuple[str, Any]] = []
     if len(curves) > 1:
         extra.append(("difference", None))
-    for name, poles in zip(("s-plane", "z-plane"), _pole_sets(listed), strict=True):
+    for name, poles in zip(("s-plane", "z-plane"), _pole_sets(listed, roots), strict=True):
         if poles:
             extra.append((name, poles))
     values = {

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -130,3 +132,16 @@ def continuous_equivalent(model: Model, roots: ComplexArray) -> ComplexArray:
     if not model.time.sampled:
         return roots
     return np.log(roots[roots != 0]) / model.time.seconds
+
+
+@dataclass(frozen=True)
+class Roots:
+    """Poles and zeros of one model, computed once for all panels."""
+
+    poles: ComplexArray
+    zeros: ComplexArray
+
+
+def roots_of(model: Model) -> Roots:
+    """Return poles and zeros of a model; see `poles_of` and `zeros_of`."""
+    return Roots(poles_of(model), zeros_of(model))
