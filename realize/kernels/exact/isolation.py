@@ -173,10 +173,11 @@ class RationalSearch:
 
     def of(self, origin: Origin, ball: acb) -> fmpq | None:
         """Return the root as a rational, or None if it is irrational (or longer than RATIONAL_CAP bits)."""
-        candidate = self._short(ball.real)
-        if candidate is not None:
-            return candidate
         size = int(self.lead).bit_length() + max(scaled_ball(ball.real)[1], 0) + 8
+        if size > ball.rel_accuracy_bits():
+            candidate = self._short(ball.real)
+            if candidate is not None:
+                return candidate
         if size > RATIONAL_CAP or (size > RATIONAL_FILTER and not self._possible()):
             return None
         if ball.rel_accuracy_bits() < size:

@@ -121,18 +121,16 @@ def simplest(low: fmpq, high: fmpq) -> fmpq:
         return fmpq(0)
     if high < 0:
         return -simplest(-high, -low)
-    terms: list[fmpz] = []
+    a, b, c, d = int(low.p), int(low.q), int(high.p), int(high.q)
+    # convergents p1 / q1 and p0 / q0 of the terms that both ends share
+    p1, q1, p0, q0 = 1, 0, 0, 1
     while True:
-        whole = low.floor()
-        if whole == low or whole + 1 <= high:
-            terms.append(whole if whole == low else whole + 1)
-            break
-        terms.append(whole)
-        low, high = 1 / (high - whole), 1 / (low - whole)
-    value = fmpq(terms.pop())
-    while terms:
-        value = terms.pop() + 1 / value
-    return value
+        whole, rest = divmod(a, b)
+        if not rest or (whole + 1) * d <= c:
+            last = whole + 1 if rest else whole
+            return fmpq(last * p1 + p0, last * q1 + q0)
+        p1, q1, p0, q0 = whole * p1 + p0, whole * q1 + q0, p1, q1
+        a, b, c, d = d, c - whole * d, b, rest
 
 
 def simplest_in(ball: arb, bits: int) -> fmpq:

@@ -143,7 +143,7 @@ def _hankel(sequence: list[list[Any]], count: int, p: int, m: int) -> list[list[
 
 def _modular_rank(sequence: Callable[[int], list[list[Any]]], count: int, p: int, m: int) -> int:
     best, k, done = 0, 0, 0
-    while done < PRIMES:
+    while done < PRIMES and k < 64:
         q = prime(k)
         k += 1
         try:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from flint import acb, arb, fmpq, fmpq_poly
 
@@ -86,7 +86,8 @@ def roots(p: fmpq_poly) -> list[Root]:
     if not p:
         raise ValueError("every number is a root of the zero polynomial")
     groups: list[list[Root]] = []
-    for factor, multiplicity in squarefree(p):
+    factors = squarefree(p)
+    for factor, multiplicity in factors:
         f = factor
         if not f[0]:
             groups.append([Root(0j, multiplicity, True, True, acb(0), fmpq(0), factor, None)])
@@ -96,7 +97,25 @@ def roots(p: fmpq_poly) -> list[Root]:
         search = RationalSearch(integer_polynomial(f))
         for item in isolate(f):
             groups.append(_rounded(item, f, multiplicity, search))
+    if len(factors) > 1:
+        groups = _apart(groups)
     return [root for group in sorted(groups, key=_order) for root in group]
+
+
+def _apart(groups: list[list[Root]]) -> list[list[Root]]:
+    """Return the roots with balls that do not meet those of another multiplicity."""
+    bits = ISOLATION_BITS
+    while True:
+        met: set[int] = set()
+        for k, first in enumerate(groups):
+            for i in range(k):
+                if first[0].multiplicity != groups[i][0].multiplicity and first[0].ball.overlaps(groups[i][0].ball):
+                    met.update((k, i))
+        if not met:
+            return groups
+        bits *= 2
+        for k in met:
+            groups[k] = [replace(root, ball=root.at(bits)) for root in groups[k]]
 
 
 def _order(group: list[Root]) -> tuple[int, float, float, float]:

@@ -193,6 +193,13 @@ def test_clusters():
     assert [r.multiplicity for r in roots((S + 1) ** 5)] == [5]
 
 
+def test_balls_of_different_multiplicity_do_not_meet():
+    p = (S**2 - 2) * (S**2 - 2 - fmpq(1, 10**60)) ** 2 * (S - 1) ** 3 * (S - 1 - fmpq(1, 10**70))
+    found = roots(p)
+    check(p, found)
+    assert sorted(r.multiplicity for r in found) == [1, 1, 1, 2, 2, 3]
+
+
 def test_twenty_equal_poles():
     found = roots((S + fmpq(1, 3)) ** 20)
     assert [(r.value, r.multiplicity, r.exact) for r in found] == [(-1 / 3, 20, fmpq(-1, 3))]
