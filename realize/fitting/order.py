@@ -40,6 +40,8 @@ FRESH_ORDER = 20
 NEAR_NOISE = 0.25
 #: Further above the noise two more poles must leave less than this share of the excess misfit power.
 WORTH = 0.65
+#: As long as this share of the data's power is missed beyond the noise, a tenth taken off is worth two poles.
+GROSS, WORTH_WHILE_GROSS = 0.05, 0.9
 #: Band edges further apart than this get logarithmically spaced starting poles, others linearly spaced ones.
 WIDE = 10.0
 
@@ -203,7 +205,8 @@ def worthwhile(problem: Problem, small: Trial, large: Trial, noise: float) -> bo
 
     The criterion must be lower. Where the misfit of the smaller fit is well above the noise (real structures are not
     exactly rational, and their errors are alike on neighbouring lines, so that the criterion alone never stops), each
-    two poles must also take at least a third of the misfit power in excess of the noise.
+    two poles must also take at least a third of the misfit power in excess of the noise (a tenth while the
+    fit is poor).
     """
     if problem.criterion(large.order, large.cost) >= problem.criterion(small.order, small.cost):
         return False
@@ -211,7 +214,8 @@ def worthwhile(problem: Problem, small: Trial, large: Trial, noise: float) -> bo
     before, after = small.cost - noise, large.cost - noise
     if before <= NEAR_NOISE * noise:
         return True
-    return after <= WORTH ** ((large.order - small.order) / 2) * before
+    share = WORTH_WHILE_GROSS if before > GROSS * problem.total else WORTH
+    return after <= share ** ((large.order - small.order) / 2) * before
 
 
 def _shorter(poles: ComplexArray) -> list[ComplexArray]:
@@ -243,15 +247,20 @@ def single_line_poles(problem: Problem, poles: ComplexArray) -> list[int]:
 
 
 def unstable_image(problem: Problem, trial: Trial) -> int:
-    """Return how many poles on the right a fit free to have them would keep, where that at least halves the misfit."""
-    p, poles = problem, trial.poles
+    """Return how many poles on the right a fit free to have them would keep, where that at least halves the misfit.
+
+    Relocation without reflection, from the poles of the fit and from a few poles spread over the band.
+    """
+    p = problem
     best, count = trial.cost / 4, 0
-    for _ in range(5):
-        poles = relocated(p.points, poles, p.values, p.weights, p.direct, p.vanish, reflect=False)
-        right = int(np.sum(poles.real > 0))
-        cost = weighted_cost(p.misfit(poles), p.weights)
-        if right and cost < best:
-            best, count = cost, right
+    few = start(p, min(max(trial.order, 1), 4), spacing_of(p))
+    for poles in (trial.poles, few):
+        for _ in range(6):
+            poles = relocated(p.points, poles, p.values, p.weights, p.direct, p.vanish, reflect=False)
+            right = int(np.sum(poles.real > 0))
+            cost = weighted_cost(p.misfit(poles), p.weights)
+            if right and cost < best:
+                best, count = cost, right
     return count
 
 

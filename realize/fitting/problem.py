@@ -94,11 +94,14 @@ class Problem:
     def rounding(self, poles: ComplexArray) -> float:
         """Return the cost that rounding alone may cause in the sum of partial fractions over these poles.
 
-        (16 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2: large where residues cancel, as at
-        nearly repeated poles. A fit below it cannot be improved in this form.
+        (16 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2, and what rounding the poles does: large
+        where residues cancel, as at nearly repeated poles, and where damping is light. A fit below it cannot be
+        improved in this form.
         """
         residues, direct, _ = residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)
-        size = (1 / np.abs(self.points[:, None] - poles)) @ np.abs(residues) + np.abs(direct)
+        inverse = 1 / np.abs(self.points[:, None] - poles)
+        # 1/8: the rounding of the poles themselves, 2 eps |pole|, moves a fraction by 2 eps |pole| / |s - pole|
+        size = (inverse * (1 + 0.125 * np.abs(poles) * inverse)) @ np.abs(residues) + np.abs(direct)
         return max(self.floor, (16 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
 
     def criterion(self, order: int, cost: float) -> float:

@@ -46,8 +46,8 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
     trial = finished(solved, search.prune(chosen, lowest, noise))
     search.best[trial.order] = trial
     if direct_auto:
-        without = finished(solved.with_direct(False), trial)
         plain = solved.with_direct(False)
+        without = finished(plain, polish(plain, trial.poles, 30, 1e-5))
         if plain.criterion(without.order, without.cost) <= solved.criterion(trial.order, trial.cost):
             trial, solved = without, plain
     return Outcome(solved, trial.poles, _candidates(search, trial), _remarks(search, trial, noise))
@@ -62,7 +62,7 @@ def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
     spikes = single_line_poles(solved, trial.poles) if 0 < trial.order <= LONGEST_LADDER else []
     if spikes:
         remarks.append(f"{len(spikes)} pair(s) of poles fit one or two lines only, not a resonance")
-    if trial.order and trial.cost > max(2 * noise, solved.rounding(trial.poles)):
+    if trial.cost > max(2 * noise, solved.rounding(trial.poles)):
         count = unstable_image(solved, trial)
         if count:
             remarks.append(

@@ -32,7 +32,7 @@ def assert_consistent(fit: Fit) -> None:
     assert np.all(np.isfinite(fit.misfit))
 
 
-@pytest.mark.parametrize("order", [1, 2, 3, 5, 6, 9, 12])
+@pytest.mark.parametrize("order", [1, 2, 5, 12])
 @pytest.mark.parametrize("shape", [(1, 1), (3, 1), (2, 2)])
 def test_exact_data_give_order_poles_and_residues(invented: Callable, order: int, shape: tuple[int, int]) -> None:
     system = invented(order, shape, seed=order)

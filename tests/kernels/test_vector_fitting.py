@@ -78,8 +78,10 @@ def test_derivatives_of_the_sections(vanish: float) -> None:
         up[k] += 1e-6
         down[k] -= 1e-6
         numeric = (
-            vp.Sections(points, up, 2, vanish).columns() - vp.Sections(points, down, 2, vanish).columns()
-        ) @ coefficient / 2e-6
+            (vp.Sections(points, up, 2, vanish).columns() - vp.Sections(points, down, 2, vanish).columns())
+            @ coefficient
+            / 2e-6
+        )
         rest = vf.stacked((numeric - slope[:, k])[:, None])[:, 0]
         outside = rest - vf.stacked(basis) @ vf.least_squares(vf.stacked(basis), rest)
         assert np.linalg.norm(outside) < 1e-6 * np.linalg.norm(numeric)
