@@ -1,4 +1,4 @@
-"""Shared by all tests: exact responses by rational arithmetic of the standard library alone, and command line helpers."""
+"""Shared by all tests: exact responses by the rational arithmetic of Python alone, and command line helpers."""
 
 from __future__ import annotations
 
@@ -141,10 +141,7 @@ class Oracle:
         n, m = model.B.shape
         E = np.eye(n) if model.E is None else model.E
         rows = [
-            [
-                _sub(_mul(s, _number(float(E[i, k]))), _number(float(model.A[i, k])))
-                for k in range(n)
-            ]
+            [_sub(_mul(s, _number(float(E[i, k]))), _number(float(model.A[i, k]))) for k in range(n)]
             + [_number(float(model.B[i, j])) for j in range(m)]
             for i in range(n)
         ]
@@ -174,7 +171,7 @@ class Oracle:
 
     @classmethod
     def error(cls, source: Model, result: Model, frequency: Sequence[float], *, channels: bool = False) -> float:
-        """Return the largest relative error (Frobenius norms over the channels, or the worst channel) over frequencies."""
+        """Return the largest relative error over frequencies: Frobenius norms over the channels, or the worst channel."""
         worst = 0.0
         for w in frequency:
             s = cls.point(source, w)

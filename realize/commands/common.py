@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import os
 import sys
 from dataclasses import dataclass, field
@@ -43,11 +44,20 @@ def load(path: str, columns: list[str] | None = None) -> Model:
     return read(path, columns=columns)
 
 
+def finite(value: Any) -> Any:
+    """Return plain data with null for numbers that JSON does not have."""
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if isinstance(value, dict):
+        return {name: finite(entry) for name, entry in value.items()}
+    return [finite(entry) for entry in value] if isinstance(value, (list, tuple)) else value
+
+
 def write_log(context: Context, record: dict[str, Any]) -> None:
     """Append the record to the log, as one line."""
     if context.log is None:
         return
-    line = (json.dumps(record) + "\n").encode()
+    line = (json.dumps(finite(record), allow_nan=False) + "\n").encode()
     try:
         descriptor = os.open(context.log, os.O_WRONLY | os.O_CREAT | os.O_APPEND, 0o666)
         try:
@@ -55,12 +65,14 @@ def write_log(context: Context, record: dict[str, Any]) -> None:
         finally:
             os.close(descriptor)
     except OSError as error:
-        raise InputError(f"cannot be written ({error.strerror})", "a file that can be appended to", file=context.log) from None
+        raise InputError(
+            f"cannot be written ({error.strerror})", "a file that can be appended to", file=context.log
+        ) from None
 
 
 def print_record(record: dict[str, Any]) -> None:
     """Write a record to standard output."""
-    sys.stdout.write(json.dumps(record, indent=1) + "\n")
+    sys.stdout.write(json.dumps(finite(record), indent=1, allow_nan=False) + "\n")
 
 
 def say(text: str) -> None:

@@ -7,7 +7,7 @@ from typing import Self
 
 from realize.errors import ClaimFailed
 from realize.models import Model
-from realize.schema import Receipt
+from realize.schema import Claim, Receipt
 
 
 @dataclass(frozen=True)
@@ -40,12 +40,18 @@ class Conversion:
         bad = list(self.receipt.failed) + (list(self.receipt.open) if strict else [])
         if bad:
             words = "; ".join(
-                f"{claim.name} is {'infinite' if claim.infinite else f'{claim.value:.3g}'}, limit {claim.limit:.3g}"
-                + ("" if claim.holds is False else " (measured, not bounded)")
+                f"{claim.name} is {_worded(claim)}, limit {claim.limit:.3g}"
+                + ("" if claim.holds is False or claim.value is None else " (measured, not bounded)")
                 for claim in bad
             )
             raise ClaimFailed(f"{self.receipt.step}: {words}")
         return self
+
+
+def _worded(claim: Claim) -> str:
+    if claim.infinite:
+        return "infinite"
+    return "not available" if claim.value is None else f"{claim.value:.3g}"
 
 
 def model_of(value: Model | Conversion) -> Model:

@@ -13,7 +13,7 @@ from realize.models import FrequencyResponse, Model
 from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish
-from realize.steps.second_opinion import ask
+from realize.steps.second_opinion import asking
 from realize.verification import View, conversion_claims
 
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
@@ -32,7 +32,9 @@ def _task(model: Model, to: str, form: str | None, common_denominator: bool) -> 
     return Task(model, to, form, common_denominator)
 
 
-def explain(model: Model | Conversion, to: str, *, form: str | None = None, common_denominator: bool = False) -> list[str]:
+def explain(
+    model: Model | Conversion, to: str, *, form: str | None = None, common_denominator: bool = False
+) -> list[str]:
     """Return the route of a conversion in words, one line a row."""
     task = _task(model_of(model), to, form, common_denominator)
     route = plan_route(task)
@@ -78,32 +80,33 @@ def convert(
     started = time.perf_counter()
     source = model_of(model)
     task = _task(source, to, form, common_denominator)
-    waiting = ask("convert", source, {"to": to}) if second_opinion else None
-    route = plan_route(task)
-    result = convert_model(task, route)
-    shape = _form_of(task, route)
-    claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
-    if form is None and shape == "modal" and _worst(claims) > GOOD:
-        # the default for several channels did not do: series connections, channel by channel
-        other = Task(source, to, "cascade", common_denominator)
-        second_route = plan_route(other)
-        second = convert_model(other, second_route)
-        second_claims = conversion_claims(source, second, True, limits)
-        if _worst(second_claims) < _worst(claims):
-            route, result, claims, shape = second_route, second, second_claims, "cascade"
-    cautions = _cautions(source, result, to)
-    return finish(
-        "convert",
-        f"exact rational arithmetic, {shape or to}" if _exact(route) else f"double arithmetic, {shape or to}",
-        [row.target for row in route],
-        source,
-        result,
-        claims,
-        started=started,
-        cautions=cautions,
-        opinion=waiting,
-        details={"form": shape} if shape else {},
-    )
+    with asking("convert", source, {"to": to}, second_opinion) as opinion:
+        route = plan_route(task)
+        result = convert_model(task, route)
+        shape = _form_of(task, route)
+        claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
+        if form is None and shape == "modal" and _worst(claims) > GOOD:
+            # the default for several channels did not do: series connections, channel by channel
+            other = Task(source, to, "cascade", common_denominator)
+            second_route = plan_route(other)
+            second = convert_model(other, second_route)
+            second_claims = conversion_claims(source, second, True, limits)
+            if _worst(second_claims) < _worst(claims):
+                route, result, claims, shape = second_route, second, second_claims, "cascade"
+        cautions = _cautions(source, result, to)
+        return finish(
+            "convert",
+            f"exact rational arithmetic, {shape or to}" if _exact(route) else f"double arithmetic, {shape or to}",
+            [row.target for row in route],
+            source,
+            result,
+            claims,
+            started=started,
+            cautions=cautions,
+            opinion=opinion,
+            limits=limits,
+            details={"form": shape} if shape else {},
+        )
 
 
 def _exact(route: list[Any]) -> bool:
@@ -139,9 +142,15 @@ def _cautions(source: Model, result: Model, to: str) -> list[str]:
             )
             unstable = view.cancelled_unstable
             if unstable:
-                notes.append(f"{unstable} of the cancelled poles are not stable: the plant can run away unseen at its output.")
+                notes.append(
+                    f"{unstable} of the cancelled poles are not stable: the plant can run away unseen at its output."
+                )
     states = getattr(source, "states", ())
-    if any(state.name for state in states) and result is not source and not any(s.name for s in getattr(result, "states", ())):
+    if (
+        any(state.name for state in states)
+        and result is not source
+        and not any(s.name for s in getattr(result, "states", ()))
+    ):
         notes.append("The states have new coordinates: their names and units are left behind.")
     if source.offset is not None and source.offset.states is not None and result is not source:
         notes.append("The operating point of the states is left behind with their coordinates.")

@@ -13,7 +13,7 @@ from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue
 from realize.schema import FIT_METHODS, PARAMETRIC_KINDS, Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish
-from realize.steps.second_opinion import ask
+from realize.steps.second_opinion import asking
 from realize.verification.misfit import misfit, rms_misfit, weighted_misfit, worst_misfit
 from realize.verification.stability import order_claim, stability_claim
 
@@ -68,7 +68,6 @@ def fit(
     given = limits or {}
     keep = _lines(source, band)
     dead = _dead_time(source, dead_time)
-    waiting = ask("fit", source, {}) if second_opinion else None
 
     from realize.fitting import fit_response
 
@@ -111,18 +110,20 @@ def fit(
         f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({w[0] / (2 * np.pi):.6g} to {w[-1] / (2 * np.pi):.6g} Hz): "
         "outside of it nothing was measured."
     )
-    return finish(
-        "fit",
-        found.method,
-        ["pole-residue", *(row.target for row in route)],
-        source,
-        result,
-        claims,
-        started=started,
-        cautions=cautions,
-        opinion=waiting,
-        details=_details(found, source, len(w)),
-    )
+    with asking("fit", source, {}, second_opinion) as opinion:
+        return finish(
+            "fit",
+            found.method,
+            ["pole-residue", *(row.target for row in route)],
+            source,
+            result,
+            claims,
+            started=started,
+            cautions=cautions,
+            opinion=opinion,
+            limits=limits,
+            details=_details(found, source, len(w)),
+        )
 
 
 def _lines(source: FrequencyResponse, band: tuple[float, float] | None) -> np.ndarray:

@@ -11,15 +11,13 @@ import numpy as np
 
 from realize._version import __version__
 from realize.models import FrequencyResponse, Model, mark
-from realize.schema import Claim, Receipt, SecondOpinion
+from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
 from realize.verification import View, fragility
 from realize.verification.search import seeds
 from realize.verification.conversion import whole_band
 
-CLOSED_LOOP = (
-    "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."
-)
+CLOSED_LOOP = "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."
 #: Fragility above which the receipt points to another kind.
 FRAGILE = 1e-6
 
@@ -69,6 +67,32 @@ def fragility_cautions(values: dict[str, float | None], result: Model) -> list[s
     return cautions
 
 
+def with_limits(claims: list[Claim], limits: dict[str, float]) -> list[Claim]:
+    """Return the claims with every limit asked for: judged where a step did not, open where there is no such claim."""
+    judged = [
+        judge(
+            claim.name,
+            float("inf") if claim.infinite else claim.value,
+            limit=limits[claim.name],
+            unit=claim.unit,
+            basis=claim.basis,
+            where=claim.where,
+            uncertainty=claim.uncertainty,
+            relative=claim.relative,
+            note=claim.note,
+        )
+        if claim.limit is None and claim.name in limits
+        else claim
+        for claim in claims
+    ]
+    have = {claim.name for claim in claims}
+    return judged + [
+        judge(name, None, limit=limit, unit=CLAIMS[name].unit, note="this step could not make the claim for this model")
+        for name, limit in limits.items()
+        if name not in have
+    ]
+
+
 def finish(
     step: str,
     method: str,
@@ -80,6 +104,7 @@ def finish(
     started: float,
     cautions: Sequence[str] = (),
     opinion: Callable[[Model], SecondOpinion] | None = None,
+    limits: dict[str, float] | None = None,
     details: dict[str, Any] | None = None,
 ) -> Conversion:
     """Return the conversion with its receipt, the model carrying the chain.
@@ -90,15 +115,21 @@ def finish(
         ``time.perf_counter()`` at the start of the step.
     opinion : callable, optional
         Waits for the second opinion about the result.
+    limits : dict, optional
+        Limits by claim name that were asked for; none of them is passed over in silence.
     """
+    claims = with_limits(claims, limits or {})
     frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
     values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
     notes = list(cautions) + fragility_cautions(values, result)
-    undecided = [claim.name for claim in claims if claim.holds is None and claim.limit is not None]
+    undecided = [
+        claim.name for claim in claims if claim.holds is None and claim.limit is not None and claim.value is not None
+    ]
     if undecided:
-        notes.append(
-            f"Measured at many frequencies, with no bound on what hides between them: {', '.join(undecided)}."
-        )
+        notes.append(f"Measured at many frequencies, with no bound on what hides between them: {', '.join(undecided)}.")
+    missing = [claim.name for claim in claims if claim.value is None and not claim.infinite and claim.limit is not None]
+    if missing:
+        notes.append(f"A limit was asked for, and there is no value to hold against it: {', '.join(missing)}.")
     second = opinion(result) if opinion is not None else SecondOpinion()
     if second.status == "disagrees":
         notes.append(f"The second opinion disagrees: {second.note}")

@@ -13,7 +13,7 @@ from realize.models.state_space import is_identity
 from realize.schema import REDUCTION_METHODS
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish
-from realize.steps.second_opinion import ask
+from realize.steps.second_opinion import asking
 from realize.verification.reduction import reduction_claims
 from realize.verification.stability import order_claim, stability_claim
 
@@ -42,7 +42,9 @@ def states_of(model: Model) -> tuple[StateSpace, list[str]]:
         return (model if model.E is None else model.with_(E=None)), route
     scale = np.abs(model.E).max(axis=1)
     if np.any(scale == 0):
-        raise Refused("E is singular: the model is improper or has algebraic states, which reduction does not split off")
+        raise Refused(
+            "E is singular: the model is improper or has algebraic states, which reduction does not split off"
+        )
     power = np.ldexp(1.0, -np.frexp(scale)[1])[:, None]
     condition = float(np.linalg.cond(power * model.E))
     if not condition < HARMLESS_E:
@@ -116,26 +118,27 @@ def reduce(
         method=method,
     )
     result = StateSpace(A=found.A, B=found.B, C=found.C, D=found.D, **source.common())
-    waiting = ask("reduce", plain, {"order": found.order}) if second_opinion else None
-    limit = absolute_error
-    if error is not None and found.largest_gain is not None:
-        limit = error * found.largest_gain
-    claims = reduction_claims(plain, result, bound=found.bound, limit=limit, limits=limits or {})
-    claims += [order_claim(result, (limits or {}).get("order")), stability_claim(result)]
-    return finish(
-        "reduce",
-        found.method,
-        [*route, "state-space"],
-        source,
-        result,
-        claims,
-        started=started,
-        cautions=list(found.notes),
-        opinion=waiting,
-        details={
-            "hankel_singular_values": [float(value) for value in found.hankel_singular_values[:200]],
-            "candidates": [{"order": c.order, "bound": float(c.bound)} for c in found.candidates],
-            "kept_order": found.kept_order,
-            "lower_bound": float(found.lower_bound),
-        },
-    )
+    with asking("reduce", plain, {"order": found.order}, second_opinion) as opinion:
+        limit = absolute_error
+        if error is not None and found.largest_gain is not None:
+            limit = error * found.largest_gain
+        claims = reduction_claims(plain, result, bound=found.bound, limit=limit, limits=limits or {})
+        claims += [order_claim(result, (limits or {}).get("order")), stability_claim(result)]
+        return finish(
+            "reduce",
+            found.method,
+            [*route, "state-space"],
+            source,
+            result,
+            claims,
+            started=started,
+            cautions=list(found.notes),
+            opinion=opinion,
+            limits=limits,
+            details={
+                "hankel_singular_values": [float(value) for value in found.hankel_singular_values[:200]],
+                "candidates": [{"order": c.order, "bound": float(c.bound)} for c in found.candidates],
+                "kept_order": found.kept_order,
+                "lower_bound": float(found.lower_bound),
+            },
+        )

@@ -10,7 +10,8 @@ import os
 import subprocess
 import sys
 import tempfile
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -29,6 +30,8 @@ AGREEMENT = 1e-6
 #: Larger models are not handed over.
 LARGEST_ORDER = 1500
 FREQUENCIES = 40
+#: Bytes of an answer that are looked at.
+ANSWER_LIMIT = 256 * 2**20
 
 CHILD = Path(__file__).with_name("opinion_child.py")
 
@@ -61,8 +64,14 @@ def _request(step: str, source: Model, options: dict[str, Any], frequency: np.nd
     }
 
 
-def ask(step: str, source: Model, options: dict[str, Any]) -> Callable[[Model], SecondOpinion]:
-    """Start the child for a step and return a function that waits for it and judges the result.
+Opinion = Callable[[Model], SecondOpinion]
+
+
+@contextmanager
+def asking(step: str, source: Model, options: dict[str, Any], wanted: bool) -> Iterator[Opinion | None]:
+    """Start the child for a step; yield a function that waits for it and judges the result, None where not wanted.
+
+    The child never outlives the step, whatever becomes of it.
 
     Parameters
     ----------
@@ -71,15 +80,38 @@ def ask(step: str, source: Model, options: dict[str, Any]) -> Callable[[Model], 
     source : Model
     options : dict
         What the child needs to know of the step.
+    wanted : bool
     """
+    if not wanted:
+        yield None
+        return
+    opinion, close = _ask(step, source, options)
+    try:
+        yield opinion
+    finally:
+        close()
+
+
+def _nothing() -> None:
+    """Nothing was started."""
+
+
+def _answer(status: str, note: str, by: str = "") -> SecondOpinion:
+    return SecondOpinion(by=by, status=status, note=note)  # type: ignore[arg-type]
+
+
+def _ask(step: str, source: Model, options: dict[str, Any]) -> tuple[Opinion, Callable[[], None]]:
+    """Start the child; return the function that judges, and the one that ends the child."""
     if step not in ("convert", "reduce"):
-        return lambda result: SecondOpinion(status="not-applicable", note="no independent routine for this step")
+        return lambda result: _answer("not-applicable", "no independent routine for this step"), _nothing
     from realize.steps.receipts import probe_frequencies
 
     frequency = probe_frequencies(source, FREQUENCIES) if not isinstance(source, FrequencyResponse) else np.ones(1)
     request = _request(step, source, options, frequency)
     if request is None:
-        return lambda result: SecondOpinion(status="not-applicable", note="the model is too large or beyond the range of doubles")
+        return lambda result: _answer(
+            "not-applicable", "the model is too large or beyond the range of doubles"
+        ), _nothing
     files = tempfile.TemporaryFile(), tempfile.TemporaryFile()
     files[0].write(json.dumps(request).encode())
     files[0].seek(0)
@@ -93,47 +125,60 @@ def ask(step: str, source: Model, options: dict[str, Any]) -> Callable[[Model], 
             env=environment,
         )
     except OSError as error:
+        for file in files:
+            file.close()
         note = f"the child process could not be started: {error}"
-        return lambda result: SecondOpinion(status="failed", note=note)
-    return lambda result: _judge(child, files, frequency, result)
+        return lambda result: _answer("failed", note), _nothing
 
-
-def _judge(child: subprocess.Popen[bytes], files: tuple[Any, Any], frequency: np.ndarray, result: Model) -> SecondOpinion:
-    try:
-        code = child.wait(timeout=TIME_LIMIT)
-        files[1].seek(0)
-        text = files[1].read()
-    except subprocess.TimeoutExpired:
-        return SecondOpinion(status="failed", note=f"no answer within {TIME_LIMIT:g} s")
-    finally:
+    def close() -> None:
         if child.poll() is None:
             child.kill()
             child.wait()
         for file in files:
             file.close()
+
+    return lambda result: _judge(child, files[1], frequency, result), close
+
+
+def _judge(child: subprocess.Popen[bytes], output: Any, frequency: np.ndarray, result: Model) -> SecondOpinion:
+    try:
+        code = child.wait(timeout=TIME_LIMIT)
+    except subprocess.TimeoutExpired:
+        return SecondOpinion(status="failed", note=f"no answer within {TIME_LIMIT:g} s")
+    output.seek(0)
+    text = output.read(ANSWER_LIMIT)
     if code != 0 or not text:
         what = f"died with signal {-code}" if code < 0 else f"ended with status {code}"
         return SecondOpinion(status="failed", note=f"the independent library {what}")
     try:
         answer = json.loads(text)
-    except ValueError:
+        by = str(answer.get("by", ""))
+        if "error" in answer:
+            return _answer("not-applicable" if answer.get("inapplicable") else "failed", str(answer["error"])[:300], by)
+        parts = [np.array(answer[name], dtype=float) for name in ("real", "imaginary")]
+        theirs = np.empty(np.broadcast_shapes(*(part.shape for part in parts)), dtype=complex)
+        theirs.real, theirs.imag = parts
+    except (ValueError, TypeError, KeyError, AttributeError, RecursionError):
         return SecondOpinion(status="failed", note="the independent library's answer could not be read")
-    by = str(answer.get("by", ""))
-    if "error" in answer:
-        status = "not-applicable" if answer.get("inapplicable") else "failed"
-        return SecondOpinion(by=by, status=status, note=str(answer["error"])[:300])  # type: ignore[arg-type]
-    theirs = np.array(answer["real"], dtype=float) + 1j * np.array(answer["imaginary"], dtype=float)
     with np.errstate(all="ignore"):
         ours = result.rational_part(result.time.points(frequency))
     if theirs.shape != ours.shape:
-        return SecondOpinion(by=by, status="failed", note=f"an answer of shape {list(theirs.shape)} instead of {list(ours.shape)}")
+        return SecondOpinion(
+            by=by, status="failed", note=f"an answer of shape {list(theirs.shape)} instead of {list(ours.shape)}"
+        )
     usable = np.isfinite(ours).all(axis=(1, 2))
     if not np.isfinite(theirs[usable]).all():
         return SecondOpinion(by=by, status="failed", note="its response is infinite or not a number")
     if not usable.any():
         return SecondOpinion(by=by, status="failed", note="no frequency at which the responses could be compared")
-    difference = np.linalg.norm((theirs - ours)[usable], axis=(1, 2))
-    size = np.linalg.norm(ours[usable], axis=(1, 2)).max()
+    # brought near 1 first: gains of 1e300 have no square
+    top = max(float(np.abs(values[usable].view(float)).max()) for values in (ours, theirs))
+    power = -int(np.frexp(top)[1]) // 2
+    ours, theirs = (
+        np.ldexp(np.ldexp(values[usable].view(float), power), power).view(complex) for values in (ours, theirs)
+    )
+    difference = np.linalg.norm(theirs - ours, axis=(1, 2))
+    size = np.linalg.norm(ours, axis=(1, 2)).max()
     worst = int(np.argmax(difference))
     agreement = float(difference[worst] / size) if size > 0 else float(difference[worst] > 0)
     if agreement <= AGREEMENT:

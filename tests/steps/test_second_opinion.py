@@ -1,0 +1,155 @@
+"""The second opinion agrees, disagrees, crashes, hangs or talks nonsense: the result is the same."""
+
+from __future__ import annotations
+
+import os
+import subprocess
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+from realize.errors import Refused
+from realize.models import FrequencyResponse, StateSpace, TransferFunction, digest
+from realize.steps import convert, fit, reduce, second_opinion
+
+PLANT = TransferFunction(numerator=[1.0, 2.0], denominator=[1.0, 3.0, 5.0, 7.0])
+
+ANSWERS = {
+    "segfault": ("import os, signal; os.kill(os.getpid(), signal.SIGSEGV)", "signal 11"),
+    "status": ("import sys; sys.exit(3)", "status 3"),
+    "nothing": ("pass", "status 0"),
+    "not a number": (
+        'import json, sys; r = json.load(sys.stdin); k = len(r["frequency"]);'
+        'print(json.dumps({"by": "x", "real": [[[float("nan")]]] * k, "imaginary": [[[0.0]]] * k}))',
+        "not a number",
+    ),
+    "infinite": (
+        'import json, sys; r = json.load(sys.stdin); k = len(r["frequency"]);'
+        'print(json.dumps({"by": "x", "real": [[[1e999]]] * k, "imaginary": [[[0.0]]] * k}))',
+        "infinite",
+    ),
+    "wrong shape": ('print(\'{"by": "x", "real": [1.0], "imaginary": [2.0]}\')', "shape"),
+    "ragged": ('print(\'{"by": "x", "real": [1.0, [2]], "imaginary": [2.0]}\')', "could not be read"),
+    "parts that do not fit": (
+        'print(\'{"by": "x", "real": [1.0, 2.0, 3.0], "imaginary": [2.0, 1.0]}\')',
+        "could not be",
+    ),
+    "half an answer": ('print(\'{"by": "x", "real": [1.0]}\')', "could not be read"),
+    "text for numbers": ('print(\'{"by": "x", "real": "a", "imaginary": {}}\')', "could not be read"),
+    "a list": ("print([1, 2])", "could not be read"),
+    "no JSON": ('print("hello")', "could not be read"),
+    "nested": ('print("[" * 100000)', "could not be read"),
+    "binary": ('import sys; sys.stdout.buffer.write(b"\\xff\\xfe\\x00" * 10)', "could not be read"),
+    "error": ('print(\'{"error": "LinAlgError: singular"}\')', "singular"),
+}
+
+
+def _child(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, text: str) -> None:
+    script = tmp_path / "child.py"
+    script.write_text(text)
+    monkeypatch.setattr(second_opinion, "CHILD", script)
+
+
+@pytest.mark.parametrize("name", ANSWERS)
+def test_a_child_that_fails_harms_nothing(name: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    text, note = ANSWERS[name]
+    _child(tmp_path, monkeypatch, text)
+    made = convert(PLANT, "zero-pole-gain", second_opinion=True)
+    opinion = made.receipt.second_opinion
+    assert opinion.status == "failed"
+    assert note in opinion.note
+    assert opinion.agreement is None
+    assert digest(made.model) == digest(convert(PLANT, "zero-pole-gain").model)
+    assert not made.receipt.failed
+
+
+def test_a_child_that_hangs_is_ended(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    marker = tmp_path / "pid"
+    _child(
+        tmp_path,
+        monkeypatch,
+        f"import os, signal, time; signal.signal(signal.SIGTERM, signal.SIG_IGN);"
+        f"open({str(marker)!r}, 'w').write(str(os.getpid())); time.sleep(60)",
+    )
+    monkeypatch.setattr(second_opinion, "TIME_LIMIT", 1.5)
+    made = convert(PLANT, "zero-pole-gain", second_opinion=True)
+    assert made.receipt.second_opinion.status == "failed"
+    assert "1.5 s" in made.receipt.second_opinion.note
+    with pytest.raises(ProcessLookupError):
+        os.kill(int(marker.read_text()), 0)
+
+
+def test_no_interpreter_is_a_failed_opinion(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(second_opinion.sys, "executable", "/nonexistent/python")
+    assert convert(PLANT, "zero-pole-gain", second_opinion=True).receipt.second_opinion.status == "failed"
+
+
+def test_a_refused_step_leaves_no_child_behind(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Sections hold one channel: refused after the child was started."""
+    started: list[subprocess.Popen[Any]] = []
+    original = subprocess.Popen
+
+    def watched(*arguments: Any, **options: Any) -> Any:
+        started.append(original(*arguments, **options))
+        return started[-1]
+
+    monkeypatch.setattr(second_opinion.subprocess, "Popen", watched)
+    wide = StateSpace(A=[[-1.0]], B=[[1.0, 2.0]], C=[[1.0]])
+    with pytest.raises(Refused):
+        convert(wide, "sections", second_opinion=True)
+    assert all(child.poll() is not None for child in started)
+
+
+def test_agrees_on_simple_models() -> None:
+    for to in ("state-space", "zero-pole-gain"):
+        opinion = convert(PLANT, to, second_opinion=True).receipt.second_opinion
+        assert opinion.status == "agrees" and opinion.by and opinion.agreement is not None
+        assert opinion.agreement < 1e-9
+
+
+def test_disagrees_where_the_library_is_wrong(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    _child(
+        tmp_path,
+        monkeypatch,
+        'import json, sys; r = json.load(sys.stdin); k = len(r["frequency"]);'
+        'print(json.dumps({"by": "x", "real": [[[0.5]]] * k, "imaginary": [[[0.0]]] * k}))',
+    )
+    made = convert(PLANT, "zero-pole-gain", second_opinion=True)
+    assert made.receipt.second_opinion.status == "disagrees"
+    assert any("disagrees" in caution for caution in made.receipt.cautions)
+
+
+@pytest.mark.parametrize("gain", [1e300, 1e-300])
+def test_huge_and_tiny_gains_are_compared_without_overflow(
+    gain: float, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    _child(
+        tmp_path,
+        monkeypatch,
+        'import json, sys; r = json.load(sys.stdin); g = r["fields"]["gain"][0][0];'
+        'v = [g / (1j * w + 1) for w in r["frequency"]];'
+        'print(json.dumps({"by": "x", "real": [[[x.real]] for x in v], "imaginary": [[[x.imag]] for x in v]}))',
+    )
+    from realize.models import ZeroPoleGain
+
+    model = ZeroPoleGain(zeros=[], poles=[-1.0], gain=gain)
+    opinion = convert(model, "transfer-function", second_opinion=True).receipt.second_opinion
+    assert opinion.status == "agrees"
+    assert opinion.agreement is not None and opinion.agreement < 1e-14
+
+
+def test_fit_has_no_independent_routine_and_data_are_not_handed_over() -> None:
+    w = np.geomspace(0.1, 100, 40)
+    data = FrequencyResponse(frequency=w, frequency_unit="rad/s", response=(1 / (1j * w + 2))[:, None, None])
+    made = fit(data, order=1, second_opinion=True)
+    assert made.receipt.second_opinion.status == "not-applicable"
+
+
+def test_reduce_agrees_with_the_library() -> None:
+    pytest.importorskip("slycot")
+    n = 6
+    plant = StateSpace(A=np.diag(-np.arange(1.0, n + 1)) + np.eye(n, k=1), B=np.ones((n, 1)), C=np.ones((1, n)))
+    opinion = reduce(plant, order=3, second_opinion=True).receipt.second_opinion
+    assert opinion.status == "agrees" and "slycot" in opinion.by
