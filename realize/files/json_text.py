@@ -20,6 +20,7 @@ _MINUS_ZERO = re.compile(r"-0(?![.\deE])")
 LINE = 100
 #: Most values in one text; the same in an ``.npz`` file takes a fraction of the time and memory.
 MAX_VALUES = 8_000_000
+MAX_LISTS = 1_000_000
 
 
 class Mark:
@@ -53,6 +54,12 @@ def _integer(text: str) -> Any:
     return -0.0 if text == "-0" else int(text)
 
 
+def _too_deep(data: bytes) -> None:
+    """Raise InputError where a text is nothing but opening brackets for longer than any model nests."""
+    if re.match(rb"\s*\[{100}", data):
+        raise InputError("lists nested too deeply", "at most five levels of lists")
+
+
 def parse(data: bytes) -> Any:
     """Return the JSON value of UTF-8 text (a byte order mark is skipped).
 
@@ -72,6 +79,12 @@ def parse(data: bytes) -> Any:
     if data.count(b",") > MAX_VALUES:
         raise InputError(
             f"more than {MAX_VALUES:,} values", f"at most {MAX_VALUES:,}; write a model of that size as an .npz file"
+        )
+    if data.count(b"[") + data.count(b"{") > MAX_LISTS:
+        _too_deep(data)
+        raise InputError(
+            f"more than {MAX_LISTS:,} lists and objects",
+            f"at most {MAX_LISTS:,}; write a model of that size as an .npz file",
         )
     # lists of 64 bytes, objects of 250, and 32 bytes for each number beside its place in a list
     require_memory(

@@ -51,7 +51,7 @@ _WORDS = "|".join(re.escape(word) for word in sorted(_ROLE_OF, key=len, reverse=
 _LAST = re.compile(rf"(?P<label>.*?)(?:^|[\s_\-.:]+)(?P<role>{_WORDS})", re.IGNORECASE | re.DOTALL)
 _FIRST = re.compile(rf"(?P<role>{_WORDS})[\s_\-.:]+(?P<label>.*)", re.IGNORECASE | re.DOTALL)
 _CAMEL = re.compile(r"(?P<role>Re|Im|Mag|Phase|Ph|Arg|Abs|Real|Imag)(?P<label>[A-Z].*)", re.DOTALL)
-_CALL = re.compile(rf"(?P<role>{_WORDS})\s*[(\[](?P<label>.*)[)\]]", re.IGNORECASE | re.DOTALL)
+_CALL = re.compile(rf"(?P<role>{_WORDS})\((?P<label>.*)\)", re.IGNORECASE | re.DOTALL)
 _BRACKETS = re.compile(r"(.*?)[\s_/]*[\[(]([^\[\]()]*)[\])]", re.DOTALL)
 _RADIANS = re.compile(r"rad(?:ian)?s?\s*(?:/|_?per_?|_)\s*s(?:ec(?:ond)?)?", re.IGNORECASE)
 _UNITS = "|".join(sorted(map(re.escape, UNITS), key=len, reverse=True))

@@ -26,7 +26,7 @@ from realize.models import (
 )
 from realize.schema import KINDS, Receipt, judge
 
-QUICK = settings(max_examples=40, deadline=None, suppress_health_check=list(HealthCheck))
+QUICK = settings(max_examples=25, deadline=None, suppress_health_check=list(HealthCheck))
 REALS = st.floats(allow_nan=False, allow_infinity=False)
 NONZERO = REALS.filter(lambda value: value != 0)
 DECIMALS = st.from_regex(r"-?[0-9]{1,25}\.[0-9]{0,25}(e[+-]?[0-9]{1,3})?", fullmatch=True)
@@ -152,7 +152,7 @@ def test_round_trip_of_invented_models(kind, tmp_path):
         assert_same(model, through_npz(model, tmp_path))
 
     check()
-    assert len(accepted) >= 10
+    assert len(accepted) >= 5
 
 
 def receipt():
