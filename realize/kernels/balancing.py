@@ -17,7 +17,7 @@ EPS = float(np.finfo(float).eps)
 #: Up to this order the Hankel singular values come from one-sided Jacobi rotations, accurate far below the largest.
 JACOBI_ORDER = 200
 #: Up to this order they are computed twice with independent rounding errors, which measures those errors.
-REPEATED_ORDER = 500
+REPEATED_ORDER = 300
 
 
 @dataclass(frozen=True)
@@ -164,7 +164,7 @@ def _product_svd(R: Array, L: Array) -> tuple[Array, Array, Array]:
 def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFactors:
     """Return Gramian factors and Hankel singular values of a stable model in real Schur form.
 
-    The values are the singular values of R L [1]_. Up to order 500 they are computed once more from the dual model,
+    The values are the singular values of R L [1]_. Up to order 300 they are computed once more from the dual model,
     whose rounding errors are independent; three times the largest difference among neighbours is the estimated error,
     and at least 4 n eps of the value. Beyond, it is n eps |R| |L|.
 

@@ -152,7 +152,7 @@ def test_equal_values_are_not_divided():
 
 
 def test_nearly_uncontrollable_states_are_left_out():
-    A, B, C, D = PLAIN
+    A, _, C, D = PLAIN
     small = reduce_states(A, np.array([[1.0], [1e-9], [1e-170]]), C, D, sampled=False, order=3)
     assert small.order == 2 and any("rounding" in note for note in small.notes)
     whole = reduce_states(*PLAIN, sampled=False, order=7)
