@@ -94,8 +94,8 @@ class Problem:
     def rounding(self, poles: ComplexArray) -> float:
         """Return the cost that rounding alone may cause in the sum of partial fractions over these poles.
 
-        (16 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2, and what rounding the poles does: large
-        where residues cancel, as at nearly repeated poles, and where damping is light. A fit below it cannot be
+        (16 eps)^2 sum |weights|^2 (sum_j |residue_j| / |s - pole_j| + |direct|)^2, and what rounding the poles does:
+        large where residues cancel, as at nearly repeated poles, and where damping is light. A fit below it cannot be
         improved in this form.
         """
         residues, direct, _ = residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)

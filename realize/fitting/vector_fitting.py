@@ -62,7 +62,7 @@ def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
     spikes = single_line_poles(solved, trial.poles) if 0 < trial.order <= LONGEST_LADDER else []
     if spikes:
         remarks.append(f"{len(spikes)} pair(s) of poles fit one or two lines only, not a resonance")
-    if trial.cost > max(2 * noise, solved.rounding(trial.poles)):
+    if trial.cost > 1e-12 * solved.total and solved.numbers > 2 * solved.unknowns(trial.order):
         count = unstable_image(solved, trial)
         if count:
             remarks.append(
