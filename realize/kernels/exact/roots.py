@@ -210,12 +210,26 @@ def inside_left_half_plane(p: fmpq_poly) -> int:
 def inside_unit_circle(p: fmpq_poly) -> int:
     """Return how many roots have a modulus below one, counted with multiplicity, exactly.
 
-    Through z = (1 + s) / (1 - s), which takes the left half-plane to the unit disk.
+    The roots exactly on the circle are known from `unit_circle`; the balls of the others are refined until the modulus
+    is on one side.
     """
-    if not p:
-        raise ValueError("every number is a root of the zero polynomial")
-    image = bilinear_image(p)
-    return inside_left_half_plane(image) if image.degree() > 0 else 0
+    found = roots(p)
+    return sum(
+        root.multiplicity for root, on in zip(found, unit_circle(p, found), strict=True) if not on and _is_inside(root)
+    )
+
+
+def _is_inside(root: Root) -> bool:
+    bits = ISOLATION_BITS
+    while True:
+        ball = root.at(bits)
+        with precision(bits + 16):
+            size = abs(ball)
+            if size < 1:
+                return True
+            if size > 1:
+                return False
+        bits *= 2
 
 
 def unit_circle(p: fmpq_poly, found: Sequence[Root] | None = None) -> list[bool]:
