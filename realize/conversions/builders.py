@@ -197,10 +197,10 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
         raise Refused("sections hold one input and one output; convert channel by channel, or to zero-pole-gain")
     channel = factors[0][0]
     if len(channel.zeros) <= len(channel.poles):
-        grouped = [(s.zeros, s.poles) for s in group_roots(channel.zeros, channel.poles)]
+        grouped = [(s.zeros, s.poles) for s in group_roots(channel.zeros, channel.poles, task.model.time.sampled)]
     else:
         # more zeros than poles: the roles are exchanged
-        grouped = [(s.poles, s.zeros) for s in group_roots(channel.poles, channel.zeros)]
+        grouped = [(s.poles, s.zeros) for s in group_roots(channel.poles, channel.zeros, task.model.time.sampled)]
     rows, decimals = [], {}
     for k, (zeros, poles) in enumerate(grouped):
         pair = []
@@ -233,8 +233,8 @@ def cascade(factors: list[list[Factors]], task: Task) -> StateSpace:
 
 def _cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
     if len(channel.zeros) <= len(channel.poles):
-        grouped = group_roots(channel.zeros, channel.poles)
-        return (*cascade_states(grouped, channel.gain), None)
+        grouped = group_roots(channel.zeros, channel.poles, task.model.time.sampled)
+        return (*cascade_states(grouped, channel.gain, task.model.time.sampled), None)
     from realize.kernels.exact import polynomials
     from realize.kernels.exact.numbers import fraction
 
@@ -245,8 +245,9 @@ def _cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
     d = polynomials.from_roots([exact(root) for root in channel.poles])
     gain = fraction((channel.gain.numerator, channel.gain.denominator))
     whole, rest = divmod(n * gain, d)
+    sampled = task.model.time.sampled
     part = factors_from_fractions([[(rest, d)]], task)[0][0]
-    A, B, C, D = cascade_states(group_roots(part.zeros, part.poles), part.gain)
+    A, B, C, D = cascade_states(group_roots(part.zeros, part.poles, sampled), part.gain, sampled)
     return A, B, C, D, np.array([[[value]] for value in _rounded(polynomials.coefficients(whole))[0]])
 
 
@@ -290,7 +291,7 @@ def cascade_of_sections(model: Model, task: Task) -> StateSpace:
             grouped.append(Section(_paired(part.poles), _paired(part.zeros)))
     if not ok:
         return cascade(factors_from_fractions(form_fractions(model), task), task)
-    return _state_model(task, *cascade_states(grouped, gain))
+    return _state_model(task, *cascade_states(grouped, gain, model.time.sampled))
 
 
 def _paired(roots: list[complex]) -> tuple[complex, ...]:

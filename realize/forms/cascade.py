@@ -1,20 +1,26 @@
 """Cascade of first- and second-order sections from poles, zeros and gain.
 
-Each section is a scaled companion block ::
+Each section is a scaled companion block about a centre c (0 in continuous time; 1 or -1, whichever is nearer to the
+poles, for sampled models, so that t = z - c does not cancel near the unit circle) ::
 
-    x1' = k x2,   x2' = -(a0/k) x1 - a1 x2 + b u,   y = c0 x1 + c1 x2 + d u,   d in {0, 1}, k and b powers of two
+    x1' = c x1 + k x2,   x2' = -(d0/k) x1 + (c - d1) x2 + b u,   y = c0 x1 + c1 x2 + u,   k and b powers of two
 
-so that the series connection needs no rounding: the off-diagonal blocks are products with powers of two. Zeros at the
-origin and zeros on the axis stay exactly where they are, since c1 = -a1 and c0 = -a0/k are then exact.
+with t^2 + d1 t + d0 the denominator: the series connection then multiplies by powers of two only and needs no rounding.
+Zeros at the origin and on the axis stay exactly where they are, since c1 = -d1 and c0 = -d0/k are then exact.
+Sampled sections with a zero at z = -1 or 1 beside another real zero r use B = (A - r I) b, D = C b instead, for which
+the numerator is (z - r) C adj(zI - A) b: with C made of powers of two the zero at -1 or 1 is exact, however near to each
+other the poles and 1 are. Such sections come first, and the mantissa of the gain enters after them; every product in
+the assembled matrices is exact.
 
 A section with as many zeros as poles forms its numerator as (numerator - denominator) + denominator: the relative
 rounding error near a zero is multiplied by |denominator| / |numerator's terms|. Zeros are therefore given to poles that
 keep this amplification small, and to strictly proper sections where there are more poles than zeros (Jackson 1970 on
-pairing and ordering for digital filters; the amplification argument is our own, docs/methods/cascade).
+pairing and ordering for digital filters; the amplification argument is our own, docs/methods).
 """
 
 from __future__ import annotations
 
+import cmath
 import math
 from dataclasses import dataclass
 from fractions import Fraction
@@ -47,17 +53,26 @@ def monic(roots: tuple[complex, ...]) -> list[Fraction]:
     return [Fraction(1), -(p + q), p * q]
 
 
-def _amplification(poles: tuple[complex, ...], zeros: tuple[complex, ...]) -> float:
+def _size(root: complex, sampled: bool) -> float:
+    """Return |s| of a root, |ln z| for sampled models (infinite at z = 0)."""
+    if not sampled:
+        return abs(root)
+    if root == 0:
+        return math.inf
+    return abs(cmath.log(root)) if root != 1 else 0.0
+
+
+def _amplification(poles: tuple[complex, ...], zeros: tuple[complex, ...], sampled: bool) -> float:
     """Return by how much the rounding of numerator - denominator is magnified near the zeros."""
     worst = 1.0
     for zero in zeros:
-        size = abs(zero)
-        if size == 0:
+        size = _size(zero, sampled)
+        if size == 0 or (sampled and zero in (1, -1)):
             continue
         value = 1.0
         for pole in poles:
             # ratios first: 1e300 rad/s squared is no double
-            value *= abs(1j - pole / size)
+            value *= abs(1j - pole / size) if not sampled else abs(cmath.exp(1j * min(size, math.pi)) - pole) / min(size, 1.0)
         worst = max(worst, value)
     return worst
 
@@ -68,28 +83,31 @@ def _pairs(roots: list[complex]) -> tuple[list[tuple[complex, complex]], list[co
     return [(root, root.conjugate()) for root in upper], [root for root in roots if root.imag == 0]
 
 
-def group_roots(zeros: list[complex], poles: list[complex]) -> list[Section]:
+def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = False) -> list[Section]:
     """Return sections with zeros given to poles, ordered from well to lightly damped.
 
     Parameters
     ----------
     zeros, poles : list of complex
         Closed under conjugation; no more zeros than poles.
+    sampled : bool
+        The roots are those of a polynomial in z.
     """
     pole_pairs, real_poles = _pairs(poles)
     zero_pairs, real_zeros = _pairs(zeros)
     slack = len(poles) - len(zeros)
     sections: list[Section] = []
 
+    def size(root: complex) -> float:
+        return _size(root, sampled)
+
     # complex zeros first, slowest first: they have the fewest poles at or below their own frequency
-    for pair in sorted(zero_pairs, key=lambda z: (abs(z[0]), -abs(z[0].real))):
-        candidates: list[tuple[float, int, tuple[complex, ...]]] = []
-        for k, poles_k in enumerate(pole_pairs):
-            candidates.append((_amplification(poles_k, pair) * abs(1j - poles_k[0] / abs(pair[0])), k, poles_k))
+    for pair in sorted(zero_pairs, key=lambda z: (size(z[0]), z[0].imag)):
+        candidates = [(_amplification(poles_k, pair, sampled), k, poles_k) for k, poles_k in enumerate(pole_pairs)]
         if len(real_poles) >= 2:
-            near = sorted(real_poles, key=lambda p: abs(p))[:2]
-            candidates.append((_amplification(tuple(near), pair), -1, tuple(near)))
-        cost, k, chosen = min(candidates, key=lambda c: (c[0], c[1]))
+            near = sorted(real_poles, key=size)[:2]
+            candidates.append((_amplification((near[0], near[1]), pair, sampled), -1, (near[0], near[1])))
+        _, k, chosen = min(candidates, key=lambda c: (c[0], c[1]))
         if k >= 0:
             pole_pairs.pop(k)
         else:
@@ -99,21 +117,17 @@ def group_roots(zeros: list[complex], poles: list[complex]) -> list[Section]:
 
     # real zeros: a strictly proper section of order two holds one zero without any amplification
     open_pairs: list[tuple[tuple[complex, complex], list[complex]]] = [(pair, []) for pair in pole_pairs]
-    for zero in sorted(real_zeros, key=abs):
+    for zero in sorted(real_zeros, key=lambda z: (size(z), z.real)):
         options: list[tuple[float, int, str, int]] = []
         for k, pole in enumerate(real_poles):
-            cost = 1.0 if zero == 0 else abs(1 - 1j * pole.real / abs(zero))
-            if zero != 0 and pole == zero:
-                cost = 0.0
+            cost = 0.0 if pole == zero else _amplification((pole,), (zero,), sampled)
             options.append((cost, 0, "single", k))
         for k, (pair, held) in enumerate(open_pairs):
             if not held:
-                if slack > 0:
-                    options.append((1.0, 1, "pair", k))
-                else:
-                    options.append((_amplification(pair, (zero,)), 2, "pair", k))
+                free = slack > 0
+                options.append((1.0 if free else _amplification(pair, (zero,), sampled), 1 if free else 2, "pair", k))
             elif len(held) == 1:
-                options.append((_amplification(pair, (held[0], zero)), 3, "pair", k))
+                options.append((_amplification(pair, (held[0], zero), sampled), 3, "pair", k))
         if slack > 0 and len(real_poles) >= 2:
             options.append((1.5, 4, "merge", -1))
         best = min(options, key=lambda o: (o[0] > 4, o[0] if o[0] > 4 else 0, o[1], o[0], o[3]))
@@ -124,7 +138,7 @@ def group_roots(zeros: list[complex], poles: list[complex]) -> list[Section]:
             slack += 1 if held else -1
             held.append(zero)
         else:
-            near = sorted(real_poles, key=lambda p: abs(p))[:2]
+            near = sorted(real_poles, key=size)[:2]
             for pole in near:
                 real_poles.remove(pole)
             open_pairs.append(((near[0], near[1]), [zero]))
@@ -134,44 +148,55 @@ def group_roots(zeros: list[complex], poles: list[complex]) -> list[Section]:
 
     def damping(section: Section) -> tuple[float, float]:
         pole = section.poles[0]
-        size = abs(pole)
-        return (-min(1.0, abs(pole.real) / size) if size > 0 else -2.0, size)
+        if sampled:
+            if pole == 0:
+                return -1.0, math.inf
+            pole = cmath.log(pole)
+        magnitude = abs(pole)
+        return (-min(1.0, abs(pole.real) / magnitude) if magnitude > 0 else -2.0, magnitude)
 
     return sorted(sections, key=damping)
 
 
-def cascade_states(sections: list[Section], gain: Fraction) -> tuple[Array, Array, Array, Array]:
-    """Return A, B, C, D of gain times the product of the sections, continuous time.
+def cascade_states(
+    sections: list[Section], gain: Fraction, sampled: bool = False
+) -> tuple[Array, Array, Array, Array]:
+    """Return A, B, C, D of gain times the product of the sections.
 
     Parameters
     ----------
     sections : list of Section
-        In the order of the signal.
+        In the order of the signal, apart from those that have to come first.
     gain : Fraction
         Ratio of the leading coefficients of numerator and denominator.
+    sampled : bool
+        The roots are those of polynomials in z.
     """
     n = sum(len(section.poles) for section in sections)
     A, B, C = np.zeros((n, n)), np.zeros((n, 1)), np.zeros((1, n))
+    blocks = [_block(section, sampled) for section in sections]
     if gain == 0:
-        A = _diagonal_only(sections, A)
+        start = 0
+        for block in blocks:
+            part = slice(start, start + block.A.shape[0])
+            A[part, part] = block.A
+            start = part.stop
         return A, B, C, np.zeros((1, 1))
     if not sections:
         return A, B, C, np.array([[to_double(gain)]])
     mantissa, exponent = split(gain)
-    blocks = []
-    for section in sections:
-        block = _block(section)
-        exponent -= block.gain_exponent
-        blocks.append(block)
+    # blocks whose input column is no power of two come first: their output rows are powers of two
+    blocks.sort(key=lambda block: not block.first)
+    exponent -= sum(block.gain_exponent for block in blocks)
     shares = _spread_exponent(exponent, len(blocks))
     row = np.zeros((1, n))  # the signal between sections as a function of the states so far
-    # the mantissa of the gain enters at the input, where it multiplies powers of two only: no second rounding, and what
-    # cancels inside a section still cancels exactly
-    through = to_double(mantissa)
+    through, entered = 1.0, False
     start = 0
     for block, share in zip(blocks, shares, strict=True):
-        size = block.A.shape[0]
-        part = slice(start, start + size)
+        if not entered and not block.first:
+            # here the mantissa meets powers of two on both sides: no second rounding, and what cancels still cancels
+            row, through, entered = row * to_double(mantissa), through * to_double(mantissa), True
+        part = slice(start, start + block.A.shape[0])
         A[part, part] = block.A
         A[part, :] += block.B @ row
         B[part, 0] += block.B[:, 0] * through
@@ -179,7 +204,9 @@ def cascade_states(sections: list[Section], gain: Fraction) -> tuple[Array, Arra
         row = block.d * row * scale
         row[0, part] = block.C[0] * scale
         through = block.d * through * scale
-        start += size
+        start = part.stop
+    if not entered:
+        row, through = row * to_double(mantissa), through * to_double(mantissa)
     return A, B, row, np.array([[through]])
 
 
@@ -190,54 +217,126 @@ class _Block:
     C: Array
     d: float
     gain_exponent: int
+    first: bool = False
 
 
-def _block(section: Section) -> _Block:
+#: Diagonal entries of sampled sections with a zero at -1 or 1 are multiples of this, so that entry +- 1 is exact.
+_GRID = Fraction(1, 2**52)
+
+
+def _on_grid(value: Fraction) -> Fraction:
+    return Fraction(round(value / _GRID)) * _GRID
+
+
+def _block(section: Section, sampled: bool) -> _Block:
     """Return the scaled companion block of a section, whose gain is 2^gain_exponent times the section's own."""
-    below, above = monic(section.poles), monic(section.zeros)
+    exact_zeros = sampled and any(zero in (1, -1) for zero in section.zeros)
     if len(section.poles) == 1:
-        pole = section.poles[0].real
-        proper = len(section.zeros) == 1
-        size = abs(pole) if pole else 1.0
-        e = math.frexp(size)[1]
-        b = math.ldexp(1.0, e // 2)
-        if proper:
-            c = [(above[1] - below[1]) / Fraction(b)]
-            return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 1.0, 0)
-        c = [Fraction(2) ** (e - e // 2)]
-        return _Block(np.array([[pole]]), np.array([[b]]), _doubles(c), 0.0, e)
-    a1, a0 = below[1], below[2]
-    size = max(abs(pole) for pole in section.poles)
+        return _first_order(section, exact_zeros)
+    centre = Fraction(0)
+    if sampled:
+        centre = Fraction(1 if section.poles[0].real + section.poles[1].real >= 0 else -1)
+    below, above = _shifted(monic(section.poles), centre), _shifted(monic(section.zeros), centre)
+    d1, d0 = below[1], below[2]
+    size = math.sqrt(abs(to_double(d0))) or abs(to_double(d1)) if sampled else max(abs(p) for p in section.poles)
     e = math.frexp(size)[1] if size > 0 else 0
     k = Fraction(2) ** e
-    stiffness, damping = to_double(a0 / k), to_double(a1)
-    A = np.array([[0.0, to_double(k)], [-stiffness, -damping]])
+    corner = centre - d1
+    corner = _on_grid(corner) if exact_zeros else Fraction(to_double(corner))
+    damping = centre - corner
+    stiffness = Fraction(to_double(d0 / k))
+    if sampled and _on_circle(section.poles[0]) and section.poles[0].imag:
+        # |p| = 1: with t = z - c the denominator is t^2 + d t + c d, whatever d is
+        stiffness = Fraction(to_double(damping * centre / k))
+    A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
     zeros = len(section.zeros)
-    # the numerator is formed against the rounded denominator, so that exact cancellations are exact
     b = Fraction(2) ** (e // 2)
+    if zeros == 2 and exact_zeros and section.zeros[0].imag == 0:
+        kept, other = sorted(section.zeros, key=lambda z: z not in (1, -1))
+        column = [k * b, (corner - Fraction(other.real)) * b]
+        row = [(centre - Fraction(kept.real)) / (k * b), 1 / b]
+        return _Block(A, _doubles(column).T, _doubles(row), 1.0, 0, True)
+    # the numerator is formed against the rounded denominator, so that exact cancellations are exact
+    column = [Fraction(0), b]
     if zeros == 2:
-        c = [(above[2] / k - Fraction(stiffness)) / b, (above[1] - Fraction(damping)) / b]
-        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 1.0, 0)
+        first = to_double(above[1] - damping)
+        if _amplification(section.poles, section.zeros, sampled) > TUNE_FROM or _near_end(section, sampled):
+            k = _tuned(k, b, d0, above[2], damping + Fraction(first) - above[1], section.zeros[0] - to_double(centre))
+            stiffness = Fraction(to_double(d0 / k))
+            A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
+        row = [(above[2] / k - stiffness) / b, (above[1] - damping) / b]
+        return _Block(A, _doubles(column).T, _doubles(row), 1.0, 0)
     rest = Fraction(2) ** (e - e // 2)
     if zeros == 1:
-        c = [above[1] / k * rest, rest]
-        return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, e)
-    c = [rest, Fraction(0)]
-    return _Block(A, np.array([[0.0], [to_double(b)]]), _doubles(c), 0.0, 2 * e)
+        return _Block(A, _doubles(column).T, _doubles([above[1] / k * rest, rest]), 0.0, e)
+    return _Block(A, _doubles(column).T, _doubles([rest, Fraction(0)]), 0.0, 2 * e)
+
+
+#: From this amplification of rounding near a zero the coupling of the two states is tuned.
+TUNE_FROM = 4.0
+#: Couplings tried; each has an even chance to halve the smallest error so far.
+COUPLINGS = 400
+
+
+def _near_end(section: Section, sampled: bool) -> bool:
+    """True for zeros near z = -1 while the poles are not: what is left of the numerator there is a small difference."""
+    zero = section.zeros[0]
+    return sampled and abs(zero + 1) < 0.5
+
+
+def _tuned(k: Fraction, b: Fraction, d0: Fraction, n0: Fraction, e1: Fraction, t: complex) -> Fraction:
+    """Return a coupling k for which the rounded numerator is nearly zero at the zero t (about the centre).
+
+    The constant term of the numerator is k (d0/k rounded) + k b c0 with c0 rounded: its error is a different fraction of
+    a rounding for each double k, so that among some hundred one is found that is right to several bits more. The
+    response then is what the numbers say it is, to more digits than each of them has.
+    """
+    best, found = k, math.inf
+    slope = to_double(e1)
+    unit = abs(to_double(n0 - d0)) * 2.0**-53 or 1.0
+    for step in range(COUPLINGS):
+        trial = k * Fraction(1024 + step, 1024) if step % 2 else k * Fraction(1024 - step, 1024) if step else k
+        stiffness = Fraction(to_double(d0 / trial))
+        c0 = Fraction(to_double((n0 / trial - stiffness) / b))
+        error = to_double(trial * (stiffness + b * c0) - n0)
+        size = abs(error + slope * t)
+        if size < found:
+            best, found = trial, size
+            if found < unit / 256:
+                break
+    return best
+
+
+def _first_order(section: Section, exact_zeros: bool) -> _Block:
+    pole = Fraction(section.poles[0].real)
+    if exact_zeros:
+        pole = _on_grid(pole)
+    size = abs(section.poles[0])
+    e = math.frexp(size)[1] if size > 0 else 0
+    b = Fraction(2) ** (e // 2)
+    A = np.array([[to_double(pole)]])
+    if section.zeros:
+        return _Block(A, _doubles([b]), _doubles([(pole - Fraction(section.zeros[0].real)) / b]), 1.0, 0)
+    return _Block(A, _doubles([b]), _doubles([Fraction(2) ** (e - e // 2)]), 0.0, e)
+
+
+def _shifted(polynomial: list[Fraction], centre: Fraction) -> list[Fraction]:
+    """Return the coefficients of p(t + centre) for degree at most two."""
+    if centre == 0 or len(polynomial) == 1:
+        return polynomial
+    if len(polynomial) == 2:
+        return [Fraction(1), polynomial[1] + centre]
+    return [Fraction(1), polynomial[1] + 2 * centre, polynomial[2] + polynomial[1] * centre + centre * centre]
+
+
+def _on_circle(pole: complex) -> bool:
+    """True where |p| is 1 within the rounding of its parts."""
+    re, im = Fraction(pole.real), Fraction(pole.imag)
+    return abs(re * re + im * im - 1) <= Fraction(1, 2**51)
 
 
 def _doubles(values: list[Fraction]) -> Array:
     return np.array([[to_double(value) for value in values]])
-
-
-def _diagonal_only(sections: list[Section], A: Array) -> Array:
-    start = 0
-    for section in sections:
-        block = _block(section)
-        size = block.A.shape[0]
-        A[start : start + size, start : start + size] = block.A
-        start += size
-    return A
 
 
 def _spread_exponent(exponent: int, count: int) -> list[int]:
