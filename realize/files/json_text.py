@@ -13,13 +13,14 @@ from typing import Any
 
 from realize.errors import InputError
 from realize.files.sources import require_memory
-from realize.models.checks import MAX_DIGITS
 
 _MINUS_ZERO = re.compile(r"-0(?![.\deE])")
+#: Longest integer that can be a double, characters.
+DOUBLE_DIGITS = 310
 #: Longest line of a list that is written on one line, characters.
 LINE = 100
 #: Most values in one text; the same in an ``.npz`` file takes a fraction of the time and memory.
-MAX_VALUES = 8_000_000
+MAX_VALUES = 5_000_000
 MAX_LISTS = 1_000_000
 
 
@@ -49,8 +50,8 @@ def _object(pairs: list[tuple[str, Any]]) -> dict[str, Any]:
 
 
 def _integer(text: str) -> Any:
-    if len(text) > MAX_DIGITS:
-        return Mark(f"an integer of {len(text.lstrip('-'))} digits")
+    if len(text) > DOUBLE_DIGITS:
+        return Mark(f"an integer of {len(text.lstrip('-'))} digits, beyond the largest double")
     return -0.0 if text == "-0" else int(text)
 
 
@@ -90,14 +91,11 @@ def parse(data: bytes) -> Any:
     require_memory(
         3 * len(data) + 64 * data.count(b"[") + 250 * data.count(b"{") + 40 * data.count(b","), "reading this text"
     )
-    integers = _integer if _MINUS_ZERO.search(text) else None
+    # a run of 310 digits covers one of these pieces: an integer that is slow to convert, or beyond what Python converts
+    long = any(data[k : k + 150].isdigit() for k in range(0, len(data), 150))
+    integers = _integer if long or _MINUS_ZERO.search(text) else None
     try:
-        try:
-            return json.loads(text, object_pairs_hook=_object, parse_constant=Mark, parse_int=integers)
-        except json.JSONDecodeError:
-            raise
-        except ValueError:  # an integer beyond what Python converts
-            return json.loads(text, object_pairs_hook=_object, parse_constant=Mark, parse_int=_integer)
+        return json.loads(text, object_pairs_hook=_object, parse_constant=Mark, parse_int=integers)
     except json.JSONDecodeError as error:
         near = text[error.pos : error.pos + 20].split("\n")[0]
         after = f" at {near!r}" if near else " at the end of the text"
@@ -120,9 +118,12 @@ def write(record: dict[str, Any], matrices: Collection[str] = ()) -> str:
     """Return an object as JSON: a line for each field, for each row of ``matrices``, for each entry of a long list."""
     fields = []
     for name, value in record.items():
-        text = one_line(value)
-        nested = isinstance(value, list) and len(value) > 1 and isinstance(value[0], (list, dict))
-        if nested and (len(text) > LINE or name in matrices):
-            text = "[\n    " + ",\n    ".join(map(one_line, value)) + "\n  ]"
+        if isinstance(value, list) and len(value) > 1 and isinstance(value[0], (list, dict)):
+            rows = [one_line(row) for row in value]
+            text = "[" + ", ".join(rows) + "]"
+            if len(text) > LINE or name in matrices:
+                text = "[\n    " + ",\n    ".join(rows) + "\n  ]"
+        else:
+            text = one_line(value)
         fields.append(f"  {one_line(name)}: {text}")
     return "{\n" + ",\n".join(fields) + "\n}\n"
