@@ -80,9 +80,16 @@ def heading(text: str, mark: str = "-") -> str:
     return f"{text}\n{mark * len(text)}\n"
 
 
+def _yes(value: bool) -> str:
+    return "yes" if value else "no"
+
+
 def kinds() -> str:
     """Return a table of all kinds."""
-    rows = [(f":ref:`{name} <kind-{name}>`", safe(kind.says), "yes" if kind.parametric else "no") for name, kind in KINDS.items()]
+    rows = [
+        (f":ref:`{name} <kind-{name}>`", safe(kind.says), "yes" if kind.parametric else "no")
+        for name, kind in KINDS.items()
+    ]
     return table(("kind", "is", "response at any frequency"), rows)
 
 
@@ -90,9 +97,7 @@ def kind_fields() -> str:
     """Return a section for each kind with its fields."""
     parts = []
     for name, kind in KINDS.items():
-        rows = [
-            (literal(f.name), "yes" if f.required else "no", safe(f.says), safe(HOLDS[f.holds])) for f in kind.fields
-        ]
+        rows = [(literal(f.name), _yes(f.required), safe(f.says), safe(HOLDS[f.holds])) for f in kind.fields]
         parts += [f".. _kind-{name}:\n", heading(name), safe(kind.says) + "\n"]
         parts += [table(("field", "needed", "means", "holds"), rows, (15, 10, 35, 40))]
     return "\n".join(parts)
@@ -127,7 +132,9 @@ def option_table(options: Iterable[Option]) -> str:
             says.append("Value: " + WRITTEN[option.takes])
         default = option.default
         if default is not None:
-            says.append("Default: " + literal({True: "on", False: "off"}[default] if isinstance(default, bool) else default))
+            says.append(
+                "Default: " + literal({True: "on", False: "off"}[default] if isinstance(default, bool) else default)
+            )
         rows.append((spelled(option), ". ".join(says) + "."))
     return table(("option", "does"), rows, (30, 70))
 
@@ -151,7 +158,9 @@ def verbs() -> str:
 
 def verb_summary() -> str:
     """Return a table of all verbs."""
-    return table(("verb", "does"), [(f":ref:`{name} <verb-{name}>`", safe(v.says)) for name, v in VERBS.items()], (20, 80))
+    return table(
+        ("verb", "does"), [(f":ref:`{name} <verb-{name}>`", safe(v.says)) for name, v in VERBS.items()], (20, 80)
+    )
 
 
 def common_options() -> str:
@@ -231,11 +240,10 @@ def formats() -> str:
     """Return a table of file formats."""
     import realize.files  # noqa: F401  registers the formats
 
-    rows = [
-        (literal(f.name), safe(f.says), listed(f.suffixes), "yes" if f.can_read else "no", "yes" if f.can_write else "no",
-         listed(f.writes_kinds) or "every kind")
-        for f in FORMATS.values()
-    ]  # fmt: skip
+    rows = []
+    for row in FORMATS.values():
+        cells = [literal(row.name), safe(row.says), listed(row.suffixes), _yes(row.can_read), _yes(row.can_write)]
+        rows.append([*cells, listed(row.writes_kinds) or "every kind"])
     return table(("format", "is", "suffixes", "read", "written", "kinds written"), rows)
 
 
