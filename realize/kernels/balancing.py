@@ -166,7 +166,7 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
 
     The values are the singular values of R L [1]_. Up to order 300 they are computed once more from the dual model,
     whose rounding errors are independent; three times the largest difference among neighbours is the estimated error,
-    and at least 4 n eps of the value. Beyond, it is n eps |R| |L|.
+    and at least 4 n eps of the value. Beyond, it is n eps |R| |L| in Frobenius norms.
 
     Parameters
     ----------
@@ -210,7 +210,7 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
         window = np.max([np.roll(np.pad(difference, 2), k)[2:-2] for k in range(-2, 3)], axis=0)
         errors = 3 * window + 4 * n * EPS * values
     else:
-        errors = np.full(n, n * EPS * np.linalg.norm(R, 2) * np.linalg.norm(L, 2))
+        errors = np.full(n, n * EPS * np.linalg.norm(R) * np.linalg.norm(L))
     return HankelFactors(roots, values, U, Z, errors)
 
 
