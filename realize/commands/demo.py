@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 from realize.commands.common import Context, print_record, say, write_log
 
 
@@ -9,7 +11,6 @@ def execute(context: Context, seed: int) -> int:
     """Do the whole job on the invented axis, in a fresh folder."""
     from realize.files import write
     from realize.reports import draw
-    from realize.reports.tables import demo_table
     from realize.steps.demo import fresh_folder, run_demo
     from realize.testing.scenario import bench_axis
 
@@ -28,5 +29,16 @@ def execute(context: Context, seed: int) -> int:
     if context.json:
         print_record(record)
     else:
-        say(demo_table(record))
+        say(_words(record))
     return 4 if any(made.receipt.failed for made in conversions.values()) else 0
+
+
+def _words(record: dict[str, Any]) -> str:
+    """Return what was made, how well, and where the files are."""
+    against = record["against_the_invented_truth"]
+    lines = [
+        f"{name:10s}{record[name]['kind']}, order {record[name]['order']}"
+        + (f", {against[name]:.2g} of the largest gain off the invented truth" if name in against else "")
+        for name in ("fitted", "converted", "reduced")
+    ]
+    return "\n".join([*lines, f"files in {record['folder']}: {', '.join(record['files'])}"])

@@ -33,8 +33,7 @@ def number(text: str) -> float:
 
 def integer(text: str | int) -> int:
     """Return an integer that is not negative."""
-    if isinstance(text, int):
-        return text
+    text = str(text)
     if not re.fullmatch(r"\d{1,9}", text, re.ASCII):
         raise ValueError(f"{text!r} is not a whole number")
     return int(text)

@@ -12,6 +12,7 @@ from realize.errors import InputError, Refused
 from realize.models import FrequencyResponse, Model, mark
 from realize.schema import Claim, judge
 from realize.steps.conversion import Conversion, model_of
+from realize.steps.receipts import refusing_singular
 from realize.steps.reduce import states_of
 from realize.verification import Pair, View
 from realize.verification.conversion import channel_error, dead_time_difference, peak_error, response_error
@@ -19,6 +20,7 @@ from realize.verification.difference import h2_error, linf_error
 from realize.verification.misfit import data_claims
 
 
+@refusing_singular()
 def compare(
     reference: Model | Conversion,
     *others: Model | Conversion,
@@ -32,7 +34,8 @@ def compare(
     reference, others : Model or Conversion
         Parametric models or data; the claims take the first as the source. Against data, they hold at its lines.
     band : (low, high), optional
-        Frequencies of data lines that count, rad/s.
+        Frequencies that count, rad/s: of data, the lines inside; of two parametric models, the claims are then measured
+        over this band instead of those of their definitions.
     names : sequence of str, optional
         What to call them.
 
@@ -77,8 +80,8 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
         return _against_data(first, second, band, first)
     if isinstance(second, FrequencyResponse):
         return _against_data(second, first, band, first)
-    if dead_time_difference(first, second) > 0:
-        return _with_dead_time(first, second)
+    if band is not None or dead_time_difference(first, second) > 0:
+        return _at_many_frequencies(first, second, band)
     pair = Pair(View(first), View(second))
     claims = [response_error(pair)]
     if first.shape != (1, 1):
@@ -91,29 +94,40 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
     return claims
 
 
-def _with_dead_time(first: Model, second: Model) -> list[Claim]:
-    """Compare at many frequencies: different dead times let the difference turn for ever."""
-    from realize.verification.conversion import whole_band
-    from realize.verification.search import largest, seeds
+def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float] | None) -> list[Claim]:
+    """Compare as evaluated, dead times included: over a band that was asked for, or where different dead times let the
+    difference turn for ever."""
+    from realize.verification.conversion import _frobenius, whole_band
+    from realize.verification.search import Band, largest, seeds
 
     view, other = View(first), View(second)
-    band = whole_band(view)
+    left_out = whole_band(view).left_out
+    if chosen is None:
+        inside, band = whole_band(view, margin=1.0), whole_band(view)
+        note = "dead times differ: the difference keeps turning above the band"
+    else:
+        inside = band = Band(max(chosen[0], 1e-300), chosen[1], chosen[0] == 0, left_out)
+        note = f"from {chosen[0]:.6g} to {chosen[1]:.6g} rad/s, as asked"
     w = seeds(band, view.poles, other.poles)
 
     def difference(x: np.ndarray) -> np.ndarray:
         points = first.time.points(x)
-        return np.linalg.norm(first.evaluate(points) - second.evaluate(points), axis=(1, 2))
+        with np.errstate(invalid="ignore", over="ignore"):
+            return _frobenius(np.abs(first.evaluate(points) - second.evaluate(points)))
 
     def size(x: np.ndarray) -> np.ndarray:
-        return np.linalg.norm(first.evaluate(first.time.points(x)), axis=(1, 2))
+        return _frobenius(np.abs(first.evaluate(first.time.points(x))))
 
-    note = "dead times differ: the difference keeps turning above the band"
-    inside = whole_band(view, margin=1.0)
-    relative, at = largest(lambda x: difference(x) / size(x), inside.keep(w), inside)
+    def relative(x: np.ndarray) -> np.ndarray:
+        above, below = difference(x), size(x)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            return np.where(above == 0, 0.0, above / below)
+
+    worst, at = largest(relative, inside.keep(w), inside)
     top, where = largest(difference, w, band)
     gain, _ = largest(size, w, band)
     return [
-        judge("response-error", relative, where={"frequency": at}, note=note),
+        judge("response-error", worst, where={"frequency": at}, note=note),
         judge("peak-error", top / gain if gain else float(top > 0), where={"frequency": where}, note=note),
     ]
 

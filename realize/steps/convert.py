@@ -12,7 +12,7 @@ from realize.errors import Refused, UsageError
 from realize.models import FrequencyResponse, Model
 from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
-from realize.steps.receipts import finish
+from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
 from realize.verification import View, conversion_claims
 
@@ -43,6 +43,7 @@ def explain(
     return [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
 
 
+@refusing_singular()
 def convert(
     model: Model | Conversion,
     to: str,

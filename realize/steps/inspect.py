@@ -8,7 +8,7 @@ import numpy as np
 
 from realize.models import FrequencyResponse, Model, PoleResidue, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
-from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies
+from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
 from realize.verification import View
 
 #: Poles this far apart in size, fastest over slowest, are worth a word.
@@ -17,6 +17,7 @@ STIFF = 1e9
 NEAR = 1e-6
 
 
+@refusing_singular()
 def inspect(model: Model | Conversion) -> dict[str, Any]:
     """Say what a model is: order, minimal order, poles and zeros with multiplicities, stability, and what is wrong with it.
 
@@ -141,7 +142,7 @@ def _hankel(model: Model, stable: bool, cautions: list[str]) -> list[float] | No
         from realize.reduction import prepare
 
         prepared = prepare(state_model.A, state_model.B, state_model.C, state_model.D, sampled=model.time.sampled)
-        return [float(value) for value in prepared.hankel_singular_values]
+        return [prepared.in_gain(float(value)) for value in prepared.factors.values]
     except RealizeError as error:
         cautions.append(f"No Hankel singular values: {error}")
         return None

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from functools import cache
 from typing import Any
 
 import numpy as np
 
 from realize._version import __version__
+from realize.errors import Refused
 from realize.models import FrequencyResponse, Model, mark
 from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
@@ -18,8 +20,25 @@ from realize.verification.search import seeds
 from realize.verification.conversion import whole_band
 
 CLOSED_LOOP = "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."
+SINGULAR = (
+    "the pencil sE - A is singular: det(sE - A) is zero for every s, so the model has no transfer function; "
+    "check the rows of E and A that belong together"
+)
 #: Fragility above which the receipt points to another kind.
 FRAGILE = 1e-6
+
+
+@contextmanager
+def refusing_singular() -> Iterator[None]:
+    """Turn the discovery that det(sE - A) is zero for every s into a refusal, wherever it is made."""
+    try:
+        yield
+    except ValueError as error:
+        from realize.kernels.exact.pencils import SingularPencil
+
+        if isinstance(error, SingularPencil):
+            raise Refused(SINGULAR) from None
+        raise
 
 
 @cache

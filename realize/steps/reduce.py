@@ -12,7 +12,7 @@ from realize.models import FrequencyResponse, Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import REDUCTION_METHODS
 from realize.steps.conversion import Conversion, model_of
-from realize.steps.receipts import finish
+from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
 from realize.verification.reduction import reduction_claims
 from realize.verification.stability import order_claim, stability_claim
@@ -58,6 +58,7 @@ def states_of(model: Model) -> tuple[StateSpace, list[str]]:
     return plain, [*route, f"E divided out (condition number {condition:.1e})"]
 
 
+@refusing_singular()
 def reduce(
     model: Model | Conversion,
     *,
