@@ -247,12 +247,12 @@ def single_line_poles(problem: Problem, poles: ComplexArray) -> list[int]:
 
 
 def unstable_image(problem: Problem, trial: Trial) -> int:
-    """Return how many poles on the right a fit free to have them would keep, where that at least halves the misfit.
+    """Return how many poles on the right a fit free to have them would keep, where that makes the misfit a tenth.
 
     Relocation without reflection, from the poles of the fit and from a few poles spread over the band.
     """
     p = problem
-    best, count = trial.cost / 4, 0
+    best, count = trial.cost / 100, 0
     few = start(p, min(max(trial.order, 1), 4), spacing_of(p))
     for poles in (trial.poles, few):
         for _ in range(6):

@@ -66,8 +66,8 @@ def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
         count = unstable_image(solved, trial)
         if count:
             remarks.append(
-                f"the data ask for {count} unstable pole(s), which this method does not give: the misfit would be at "
-                "most half as large with them (or the sign of the phase is the other one)"
+                f"the data ask for {count} unstable pole(s), which this method does not give: the misfit would be less "
+                "than a tenth with them (or the sign of the phase is the other one)"
             )
     return tuple(remarks)
 
