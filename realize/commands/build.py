@@ -18,11 +18,17 @@ def build_app(arguments: list[str]) -> click.Group:
     app = click.Group(
         "realize",
         help="Convert, reduce and fit linear plant models, with a receipt for every result.",
-        epilog="Kinds: " + ", ".join(KINDS) + ".  Exit status: " + "; ".join(f"{k} {v}" for k, v in EXIT_STATUSES.items()) + ".",
+        epilog="Kinds: "
+        + ", ".join(KINDS)
+        + ".  Exit status: "
+        + "; ".join(f"{k} {v}" for k, v in EXIT_STATUSES.items())
+        + ".",
         context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100},
     )
     app.params.append(
-        click.Option(["--version"], is_flag=True, is_eager=True, expose_value=False, callback=_version, help="print the version")
+        click.Option(
+            ["--version"], is_flag=True, is_eager=True, expose_value=False, callback=_version, help="print the version"
+        )
     )
     for verb in VERBS.values():
         app.add_command(_command(verb))
@@ -52,7 +58,12 @@ def _command(verb: Verb) -> click.Command:
         }.get(verb.name, "file to write; - is standard output")
         parameters.append(click.Option(["-o", "--output", "output"], metavar="OUTPUT", help=what))
     return click.Command(
-        verb.name, callback=_callback(verb), params=parameters, help=verb.says, short_help=verb.says, no_args_is_help=False
+        verb.name,
+        callback=_callback(verb),
+        params=parameters,
+        help=verb.says,
+        short_help=verb.says,
+        no_args_is_help=False,
     )
 
 

@@ -9,7 +9,9 @@ from realize.errors import UsageError
 from realize.steps import convert, explain
 
 
-def execute(context: Context, model: str, to: str | None, form: str | None, common_denominator: bool, **rest: Any) -> int:
+def execute(
+    context: Context, model: str, to: str | None, form: str | None, common_denominator: bool, **rest: Any
+) -> int:
     """Convert a model file."""
     if to is None:
         raise UsageError("convert needs --to KIND")

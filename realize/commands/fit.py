@@ -10,13 +10,13 @@ from realize.steps import fit
 
 def execute(context: Context, data: str, columns: list[str] | None, **options: Any) -> int:
     """Fit a model to a data file."""
-    conversion = fit(
-        load(data, columns), limits=context.limits, second_opinion=context.second_opinion, **options
-    )
+    conversion = fit(load(data, columns), limits=context.limits, second_opinion=context.second_opinion, **options)
     more = []
     if not context.json:
-        from realize.reports.tables import fit_table, poles_table
+        from realize.reports.root_lists import poles_table
+        from realize.reports.tables import fit_table
 
         details = conversion.receipt.details
-        more = [fit_table(details["candidates"]), poles_table(details["poles"], details.get("period"))]
+        poles = [(complex(re, im), count) for re, im, count in details["poles"]]
+        more = [fit_table(details["candidates"]), poles_table(poles, details.get("period"))]
     return deliver(context, conversion, *more)

@@ -57,17 +57,26 @@ def _run(arguments: list[str]) -> int:
         _say(f"see: realize {verb + ' ' if verb else ''}--help")
         return 2
     except RealizeError as error:
-        _report(str(error), error.exit_status, as_json, error)
+        _report(_one_line(str(error)), error.exit_status, as_json, error)
         return error.exit_status
     except (MemoryError, RecursionError) as error:
-        _report(f"refused: not enough {'memory' if isinstance(error, MemoryError) else 'stack'} for this model", 5, as_json)
+        _report(
+            f"refused: not enough {'memory' if isinstance(error, MemoryError) else 'stack'} for this model", 5, as_json
+        )
         return 5
     except (KeyboardInterrupt, BrokenPipeError):
         raise
+    except SystemExit:  # click's own way of ending when whoever read standard output has gone
+        raise BrokenPipeError from None
     except Exception as error:  # the last line of defence: whatever is left is a bug, and is said to be one
         traceback.print_exc()
         _report(f"internal fault (a bug): {type(error).__name__}: {error}", 1, as_json)
         return 1
+
+
+def _one_line(text: str) -> str:
+    """Return text with control characters (of names in files, or of files) written out."""
+    return "".join(c if c.isprintable() else c.encode("unicode_escape").decode() for c in text)
 
 
 def _say(text: str) -> None:

@@ -14,7 +14,7 @@ from realize.schema import Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import refusing_singular
 from realize.steps.reduce import states_of
-from realize.verification import Pair, View
+from realize.verification import Pair, view_of
 from realize.verification.conversion import channel_error, dead_time_difference, peak_error, response_error
 from realize.verification.difference import h2_error, linf_error
 from realize.verification.misfit import data_claims
@@ -82,7 +82,7 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
         return _against_data(second, first, band, first)
     if band is not None or dead_time_difference(first, second) > 0:
         return _at_many_frequencies(first, second, band)
-    pair = Pair(View(first), View(second))
+    pair = Pair(view_of(first), view_of(second))
     claims = [response_error(pair)]
     if first.shape != (1, 1):
         claims.append(channel_error(pair))
@@ -100,7 +100,7 @@ def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float
     from realize.verification.conversion import _frobenius, whole_band
     from realize.verification.search import Band, largest, seeds
 
-    view, other = View(first), View(second)
+    view, other = view_of(first), view_of(second)
     left_out = whole_band(view).left_out
     if chosen is None:
         inside, band = whole_band(view, margin=1.0), whole_band(view)

@@ -14,7 +14,7 @@ from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
-from realize.verification import View, conversion_claims
+from realize.verification import view_of, conversion_claims
 
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
 GOOD = 1e-9
@@ -132,7 +132,7 @@ def _worst(claims: list[Claim]) -> float:
 
 def _cautions(source: Model, result: Model, to: str) -> list[str]:
     notes = []
-    view = View(source)
+    view = view_of(source)
     if source.shape == (1, 1) and view.fractions is not None and source.order is not None:
         hidden = source.order - max(view.fractions[0][0][1].degree(), view.fractions[0][0][0].degree())
         if hidden > 0:

@@ -9,7 +9,7 @@ import numpy as np
 from realize.models import FrequencyResponse, Model, PoleResidue, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
-from realize.verification import View
+from realize.verification import view_of
 
 #: Poles this far apart in size, fastest over slowest, are worth a word.
 STIFF = 1e9
@@ -45,7 +45,7 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     if isinstance(model, FrequencyResponse):
         return record | _data(model)
     cautions: list[str] = []
-    view = View(model)
+    view = view_of(model)
     poles, zeros = _roots(view, cautions)
     record["poles"] = poles
     record["zeros"] = zeros if p * m == 1 else None

@@ -8,6 +8,7 @@ from contextlib import contextmanager
 from functools import cache
 from typing import Any
 
+import msgspec
 import numpy as np
 
 from realize._version import __version__
@@ -15,7 +16,7 @@ from realize.errors import Refused
 from realize.models import FrequencyResponse, Model, mark
 from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
-from realize.verification import View, fragility
+from realize.verification import view_of, fragility
 from realize.verification.search import seeds
 from realize.verification.conversion import whole_band
 
@@ -62,7 +63,7 @@ def probe_frequencies(model: Model, count: int = 60) -> np.ndarray:
     if isinstance(model, FrequencyResponse):
         w = model.radians[model.radians > 0]
     else:
-        view = View(model)
+        view = view_of(model)
         w = seeds(whole_band(view, margin=1.0), view.poles)
         w = w[w > 0]
     if w.size > count:
@@ -112,6 +113,15 @@ def with_limits(claims: list[Claim], limits: dict[str, float]) -> list[Claim]:
     ]
 
 
+def plain(value: Any) -> Any:
+    """Return nested data with Python's own numbers in place of numpy's."""
+    if isinstance(value, np.generic):
+        return value.item()
+    if isinstance(value, dict):
+        return {name: plain(entry) for name, entry in value.items()}
+    return [plain(entry) for entry in value] if isinstance(value, (list, tuple)) else value
+
+
 def finish(
     step: str,
     method: str,
@@ -137,7 +147,10 @@ def finish(
     limits : dict, optional
         Limits by claim name that were asked for; none of them is passed over in silence.
     """
-    claims = with_limits(claims, limits or {})
+    claims = [
+        msgspec.structs.replace(claim, **{field: plain(getattr(claim, field)) for field in claim.__struct_fields__})
+        for claim in with_limits(claims, limits or {})
+    ]
     frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
     values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
     notes = list(cautions) + fragility_cautions(values, result)
@@ -160,10 +173,10 @@ def finish(
         source=mark(source),
         result=mark(result),
         claims=claims,
-        fragility=values,
+        fragility=plain(values),
         second_opinion=second,
         cautions=notes,
-        details=details or {},
+        details=plain(details or {}),
         versions=versions(),
         seconds=round(time.perf_counter() - started, 6),
     )
