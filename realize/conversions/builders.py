@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from fractions import Fraction
 from typing import TYPE_CHECKING, Any
@@ -17,8 +19,9 @@ from realize.forms import (
     modal_states,
     observable_companion,
 )
-from realize.forms.cascade import Section, monic
+from realize.forms.cascade import BeyondDoubles, Section, monic
 from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models.checks import MAX_EXPONENT
 from realize.models.fractions import form_fractions
 
 if TYPE_CHECKING:
@@ -83,7 +86,13 @@ def _rounded(values: list[Any]) -> tuple[list[float], dict[int, str]]:
             value = fraction((value.numerator, value.denominator))
         number = nearest(value)
         if not np.isfinite(number) or (value != 0 and abs(number) < _SMALLEST):
-            strings[k] = decimal_string(value, DIGITS)
+            text = decimal_string(value, DIGITS)
+            if abs(int(text.partition("e")[2] or 0)) > MAX_EXPONENT:
+                raise Refused(
+                    f"a number of the result would be {text[:6]}e{text.partition('e')[2]}, beyond what a model file can hold; "
+                    "keep state space, zero-pole-gain or sections, or scale time and gain first"
+                )
+            strings[k] = text
         doubles.append(number)
     return doubles, strings
 
@@ -109,6 +118,9 @@ def transfer_function(grid: Grid, task: Task) -> TransferFunction:
 def factors_as_given(model: Model, task: Task) -> list[list[Factors]]:
     """Poles, zeros and gain of a zero-pole-gain model."""
     assert isinstance(model, ZeroPoleGain)
+    if "zeros" in model.decimals or "poles" in model.decimals:
+        # exact decimals are no doubles yet: multiplicities and rounding are decided exactly
+        return factors_from_fractions(form_fractions(model), task)
     gain = model.exact("gain")
     p, m = model.shape
     return [
@@ -169,9 +181,15 @@ def pole_residue(grid: Grid, task: Task) -> PoleResidue:
     for i, row in enumerate(grid):
         for j, (n, d) in enumerate(row):
             found, polynomial = residues(n, d)
+            listed = [root.value for root, _ in found]
+            if len(set(listed)) < len(listed):
+                raise Refused(
+                    "two different poles round to the same double, so that no residues in doubles can tell them apart; "
+                    "use state space, zero-pole-gain or transfer function"
+                )
             for root, values in found:
                 for power, value in enumerate(values, start=1):
-                    if not np.isfinite(root.value) or not np.isfinite(value):
+                    if not np.isfinite(root.value) or not np.isfinite(value) or (value == 0 and power == len(values)):
                         raise Refused("a pole or residue lies beyond the range of doubles; scale time or gain first")
                     key = (root.value, power)
                     entries.setdefault(key, np.zeros((p, m), dtype=complex))[i, j] += value
@@ -201,7 +219,8 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
     else:
         # more zeros than poles: the roles are exchanged
         grouped = [(s.poles, s.zeros) for s in group_roots(channel.poles, channel.zeros, task.model.time.sampled)]
-    rows, decimals = [], {}
+    rows: list[Any] = []
+    decimals: dict[Any, str] = {}
     for k, (zeros, poles) in enumerate(grouped):
         pair = []
         for which, roots in enumerate((zeros, poles)):
@@ -214,7 +233,7 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
     return Sections(
         sections=np.array(rows).reshape(len(rows), 2, 3),
         gain=gain,
-        decimals={"sections": decimals, "gain": {(0,): text for text in strings.values()}},
+        decimals={"sections": decimals, "gain": {(): text for text in strings.values()}},
         **task.model.common(),
     )
 
@@ -228,7 +247,17 @@ def _state_model(task: Task, A: Any, B: Any, C: Any, D: Any, E: Any = None) -> S
 
 def cascade(factors: list[list[Factors]], task: Task) -> StateSpace:
     """One cascade for each channel, side by side; an improper channel gets its polynomial part by itself."""
-    return _assemble(task, [[_cascade_channel(channel, task) for channel in row] for row in factors])
+    with _in_range():
+        return _assemble(task, [[_cascade_channel(channel, task) for channel in row] for row in factors])
+
+
+@contextmanager
+def _in_range() -> Iterator[None]:
+    """Turn an entry beyond the range of doubles into words."""
+    try:
+        yield
+    except BeyondDoubles:
+        raise Refused("an entry of the result lies beyond the range of doubles; scale time or gain first") from None
 
 
 def _cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
@@ -291,7 +320,8 @@ def cascade_of_sections(model: Model, task: Task) -> StateSpace:
             grouped.append(Section(_paired(part.poles), _paired(part.zeros)))
     if not ok:
         return cascade(factors_from_fractions(form_fractions(model), task), task)
-    return _state_model(task, *cascade_states(grouped, gain, model.time.sampled))
+    with _in_range():
+        return _state_model(task, *cascade_states(grouped, gain, model.time.sampled))
 
 
 def _paired(roots: list[complex]) -> tuple[complex, ...]:
@@ -334,7 +364,8 @@ def _companion(grid: Grid, task: Task, *, inputs: bool) -> StateSpace:
 
     numerators, denominator, wholes = _companion_input(grid, task, inputs=inputs)
     build = controllable_companion if inputs else observable_companion
-    A, B, C, D = build(numerators, denominator)
+    with _in_range():
+        A, B, C, D = build(numerators, denominator)
     if all(whole is None for whole in wholes):
         return _state_model(task, A, B, C, D)
     degree = max(whole.degree() for whole in wholes if whole is not None)

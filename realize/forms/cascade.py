@@ -195,18 +195,17 @@ def cascade_states(
     for block, share in zip(blocks, shares, strict=True):
         if not entered and not block.first:
             # here the mantissa meets powers of two on both sides: no second rounding, and what cancels still cancels
-            row, through, entered = row * to_double(mantissa), through * to_double(mantissa), True
+            row, through, entered = _scaled(row, to_double(mantissa)), through * to_double(mantissa), True
         part = slice(start, start + block.A.shape[0])
         A[part, part] = block.A
-        A[part, :] += block.B @ row
-        B[part, 0] += block.B[:, 0] * through
-        scale = math.ldexp(1.0, share)
-        row = block.d * row * scale
-        row[0, part] = block.C[0] * scale
-        through = block.d * through * scale
+        A[part, :] += _product(block.B, row)
+        B[part, 0] += _scaled(block.B[:, 0], through)
+        row = _scaled(row, block.d, share)
+        row[0, part] = _scaled(block.C[0], 1.0, share)
+        through = float(_scaled(np.array([through]), block.d, share)[0])
         start = part.stop
     if not entered:
-        row, through = row * to_double(mantissa), through * to_double(mantissa)
+        row, through = _scaled(row, to_double(mantissa)), through * to_double(mantissa)
     return A, B, row, np.array([[through]])
 
 
@@ -347,12 +346,42 @@ def _spread_exponent(exponent: int, count: int) -> list[int]:
     return [share + (1 if k < rest else 0) for k in range(count)]
 
 
+class BeyondDoubles(ArithmeticError):
+    """An entry of a form lies beyond the range of doubles."""
+
+
 def to_double(value: Fraction) -> float:
-    """Return the nearest double; infinite past the range."""
+    """Return the nearest double; raises `BeyondDoubles` where there is none with full accuracy."""
     try:
-        return value.numerator / value.denominator
+        number = value.numerator / value.denominator
     except OverflowError:
-        return math.inf if value > 0 else -math.inf
+        raise BeyondDoubles from None
+    if abs(number) < _NORMAL and Fraction(number) != value:
+        raise BeyondDoubles
+    return number
+
+
+_NORMAL = 2.0**-1022
+
+
+def _product(column: Array, row: Array) -> Array:
+    """Return the product of a column and a row, exact by construction; raises `BeyondDoubles` past the range."""
+    with np.errstate(over="ignore", under="ignore"):
+        result = column @ row
+    return _inside(result, (column != 0) @ (row != 0))
+
+
+def _scaled(values: Array, factor: float, exponent: int = 0) -> Array:
+    """Return values * factor * 2^exponent; raises `BeyondDoubles` past the range."""
+    with np.errstate(over="ignore", under="ignore"):
+        result = np.ldexp(values * factor, exponent)
+    return _inside(result, (values != 0) & (factor != 0))
+
+
+def _inside(result: Array, present: NDArray[np.bool_]) -> Array:
+    if not np.all(np.isfinite(result)) or np.any((np.abs(result) < _NORMAL) & present):
+        raise BeyondDoubles
+    return result
 
 
 def split(value: Fraction) -> tuple[Fraction, int]:

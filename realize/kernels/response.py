@@ -5,6 +5,8 @@ No function here forms polynomial coefficients of a model that does not have the
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
@@ -156,40 +158,52 @@ DIRECT_SIZE = 48
 
 
 def state_response(A: Array, B: Array, C: Array, D: Array, E: Array | None, points: ComplexArray) -> ComplexArray:
-    """Return C (sE - A)^-1 B + D at complex points: [k][outputs][inputs].
+    """Return C (sE - A)^-1 B + D at complex points: [k][outputs][inputs]; see `state_evaluator`."""
+    return state_evaluator(A, B, C, D, E)(points)
+
+
+def state_evaluator(
+    A: Array, B: Array, C: Array, D: Array, E: Array | None
+) -> Callable[[ComplexArray], ComplexArray]:
+    """Return a function of complex points that gives C (sE - A)^-1 B + D: [k][outputs][inputs].
 
     The states are scaled by powers of two first. Small models and block triangular ones are solved with their own
     entries, so that zeros stay zeros; others by complex Schur form once, then substitution at all points together.
     """
     n = A.shape[0]
-    p, m = D.shape
-    values = np.empty((points.size, p, m), dtype=complex)
-    values[:] = D
-    if n == 0 or points.size == 0:
-        return values
+    direct = np.array(D, dtype=complex)
+
+    def around(part: Callable[[ComplexArray], ComplexArray]) -> Callable[[ComplexArray], ComplexArray]:
+        return lambda points: part(points) + direct if points.size else np.empty((0, *direct.shape), dtype=complex)
+
+    if n == 0:
+        return lambda points: np.broadcast_to(direct, (points.size, *direct.shape)).copy()
     A, B, C, E = balanced_states(A, B, C, E)
     if n <= DIRECT_SIZE:
         chunk = max(1, 4_000_000 // (n * n))
-        for start in range(0, points.size, chunk):
-            part = slice(start, min(start + chunk, points.size))
-            values[part] += _direct_solve(A, B, C, E, points[part])
-        return values
+
+        def solved(points: ComplexArray) -> ComplexArray:
+            return np.concatenate(
+                [_direct_solve(A, B, C, E, points[k : k + chunk]) for k in range(0, points.size, chunk)]
+            )
+
+        return around(solved)
     blocks = triangular_blocks(A) if E is None else None
     if blocks is not None:
         lower, sizes = blocks
         order = slice(None) if lower else slice(None, None, -1)
-        a = A[order, order].astype(complex)
-        return values + _block_substitution(a, B[order], C[:, order], sizes if lower else sizes[::-1], points)
+        a, b, c = A[order, order].astype(complex), B[order], C[:, order]
+        sizes = sizes if lower else sizes[::-1]
+        return around(lambda points: _block_substitution(a, b, c, sizes, points))
+    # upper triangular, read backwards, is lower triangular
     if E is None:
         T, Q = scipy.linalg.schur(A.astype(complex), output="complex")
-        b, c = Q.conj().T @ B, C @ Q
-        # upper triangular, read backwards, is lower triangular
-        return values + _block_substitution(T[::-1, ::-1], b[::-1], c[:, ::-1], [1] * n, points)
+        a, b, c = np.ascontiguousarray(T[::-1, ::-1]), (Q.conj().T @ B)[::-1], (C @ Q)[:, ::-1]
+        return around(lambda points: _block_substitution(a, b, c, [1] * n, points))
     S, T, Q, Z = scipy.linalg.qz(A.astype(complex), E.astype(complex), output="complex")
-    b, c = Q.conj().T @ B, C @ Z
-    return values + _block_substitution(
-        S[::-1, ::-1], b[::-1], c[:, ::-1], [1] * n, points, np.ascontiguousarray(T[::-1, ::-1])
-    )
+    a, e = np.ascontiguousarray(S[::-1, ::-1]), np.ascontiguousarray(T[::-1, ::-1])
+    b, c = (Q.conj().T @ B)[::-1], (C @ Z)[:, ::-1]
+    return around(lambda points: _block_substitution(a, b, c, [1] * n, points, e))
 
 
 def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Array, Array, Array, Array | None]:
@@ -197,6 +211,10 @@ def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Arra
     pattern = np.abs(A) if E is None else np.abs(A) + np.abs(E)
     if not np.all(np.isfinite(pattern)):
         return A, B, C, E
+    if pattern.shape[0] == 0:
+        return A, B, C, E
+    # the diagonal does not change with the scale of the states
+    pattern = pattern - np.diag(np.diagonal(pattern))
     scale = scipy.linalg.lapack.dgebal(pattern, scale=1, permute=0)[3]
     if np.all(scale == 1):
         return A, B, C, E

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import Any, ClassVar, Self
@@ -238,6 +238,16 @@ class Model:
             else:
                 values = values * np.exp(-flat[:, None, None] * total)
         return values.reshape(points.shape + self.shape)
+
+    def remembered(self, key: str, make: Callable[[], Any]) -> Any:
+        """Return what was made before for this model under a key, or make it now; models never change."""
+        memory = self.__dict__.setdefault("_memory", {})
+        if key not in memory:
+            memory[key] = make()
+        return memory[key]
+
+    def __getstate__(self) -> dict[str, Any]:
+        return {name: value for name, value in self.__dict__.items() if name != "_memory"}
 
     def parameters(self) -> dict[str, Any]:
         """Return the kind's own fields by name, in the order of the schema, None for those not given."""

@@ -13,6 +13,11 @@ from realize.models.zero_pole_gain import ZeroPoleGain
 
 
 def form_fractions(model: Model) -> list[list[tuple[Any, Any]]]:
+    """Return the exact fractions of a model, formed once; see `_formed`."""
+    return model.remembered("fractions", lambda: _formed(model))
+
+
+def _formed(model: Model) -> list[list[tuple[Any, Any]]]:
     """Return the exact (numerator, denominator) of each channel as python-flint polynomials, common factors kept.
 
     Decimals count as typed, doubles as the binary fractions they are.

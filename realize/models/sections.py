@@ -23,6 +23,7 @@ class Sections(Model):
         ``sections[k][0]`` numerator, ``sections[k][1]`` denominator, highest power first; leading zeros make a section
         of first order or a constant.
     gain : float
+        An exact decimal of it has the index ().
     """
 
     kind: ClassVar[str] = "sections"
@@ -39,7 +40,8 @@ class Sections(Model):
             if not np.any(values[k, 1]) and not any(i[:2] == (k, 1) for i in self.decimals.get("sections", {})):
                 raise InputError("zero", "a denominator that is not zero", field=f"sections[{k}].denominator")
         self._put("sections", checks.frozen(values))
-        self._put("gain", float(checks.array([self.gain], "gain", 1, allow=self.decimals.get("gain"))[0]))
+        allowed = {(0,): text for text in self.decimals.get("gain", {}).values()}
+        self._put("gain", float(checks.array([self.gain], "gain", 1, allow=allowed)[0]))
 
     @property
     def shape(self) -> tuple[int, int]:

@@ -8,7 +8,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from realize.errors import InputError
-from realize.kernels.response import state_response
+from realize.kernels.response import state_evaluator
 from realize.models import checks
 from realize.models.base import ComplexArray, Model, Signal
 
@@ -85,7 +85,10 @@ class StateSpace(Model):
         return self.A.shape[0]
 
     def rational_part(self, points: ComplexArray) -> ComplexArray:
-        return state_response(self.A, self.B, self.C, self.D, self.E, points)
+        evaluator = self.remembered(
+            "evaluator", lambda: state_evaluator(self.A, self.B, self.C, self.D, self.E)
+        )
+        return evaluator(points)
 
 
 def is_identity(E: np.ndarray | None) -> bool:

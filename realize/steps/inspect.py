@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from realize.models import FrequencyResponse, Model, PoleResidue, StateSpace, mark
+from realize.models import FrequencyResponse, Model, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
 from realize.verification import view_of
@@ -51,7 +51,7 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     record["zeros"] = zeros if p * m == 1 else None
     if p * m > 1 and view.fractions is not None:
         record["channel_zeros"] = [[_listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
-    record["minimal_order"] = _minimal_order(model, view)
+    record["minimal_order"] = _minimal_order(view, cautions)
     record["stable"] = _stable(view, poles)
     record["hankel_singular_values"] = _hankel(model, bool(record["stable"]), cautions)
     value = fragility_of(model, probe_frequencies(model))
@@ -96,21 +96,21 @@ def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None
     return [[re, im, count] for (re, im), count in ordered], None
 
 
-def _minimal_order(model: Model, view: View) -> int | None:
-    """Return the exact order of a single channel after cancelling, the McMillan degree of simple partial fractions, or None."""
+def _minimal_order(view: View, cautions: list[str]) -> int | None:
+    """Return the exact McMillan degree, poles at infinity included; None beyond exact arithmetic."""
     if view.fractions is None:
         return None
-    if model.shape == (1, 1):
+    if view.model.shape == (1, 1):
         n, d = view.fractions[0][0]
         return max(n.degree(), d.degree(), 0)
-    return exact_minimal_order(model, view)
+    from realize.kernels.exact.order import mcmillan_degree
 
-
-def exact_minimal_order(model: Model, view: View) -> int | None:
-    """Return the exact McMillan degree of a model with several channels, None where it is not implemented."""
-    if isinstance(model, PoleResidue):
-        return model.order
-    return None
+    found = mcmillan_degree([[n for n, _ in row] for row in view.fractions], [[d for _, d in row] for row in view.fractions])
+    if not found.proved:
+        cautions.append(
+            f"The minimal order {found.order} is a rank modulo two large primes: too low only if both divide every minor."
+        )
+    return found.order
 
 
 def _stable(view: View, poles: list[Any]) -> bool | None:

@@ -2,6 +2,6 @@
 
 from realize.verification.conversion import Pair, conversion_claims
 from realize.verification.fragility import fragility
-from realize.verification.views import View
+from realize.verification.views import View, view_of
 
-__all__ = ["Pair", "View", "conversion_claims", "fragility"]
+__all__ = ["Pair", "View", "conversion_claims", "fragility", "view_of"]

@@ -13,7 +13,7 @@ from realize.models import Model
 from realize.schema import CLAIMS, Claim, judge
 from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.search import LIGHT, Band, axis_intervals, dynamic_band, largest, seeds
-from realize.verification.views import NO_DYNAMICS, Dynamics, View
+from realize.verification.views import NO_DYNAMICS, Dynamics, View, view_of
 
 Array = NDArray[np.float64]
 
@@ -31,31 +31,85 @@ class Pair:
         if self.source.model.shape == (1, 1):
             channel = None
         if channel not in self._proofs:
-            self._proofs[channel] = Proof(self.source, self.result, channel)
+            self._proofs[channel] = Proof(*self.scaled, self.source.exact_period, channel)
         return self._proofs[channel]
 
-    @cached_property
+    @property
     def exact(self) -> bool:
         """True where both are compared in exact arithmetic."""
         return self.source.fractions is not None and self.result.fractions is not None
 
+    @cached_property
+    def exponent(self) -> int:
+        """Power of two near the source's gain: sizes are counted in it, so that none leaves the range of doubles."""
+        if not self.exact:
+            return 0
+        from realize.kernels.exact.numbers import binary_exponent
+
+        assert self.source.fractions is not None
+        found = []
+        for row in self.source.fractions:
+            for n, d in row:
+                if n:
+                    # the gain at a point of the size of the dynamics, from coefficients alone
+                    e = binary_exponent(self._unit)
+                    top = max(binary_exponent(c) + k * e for k, c in enumerate(n.coeffs()) if c)
+                    bottom = max(binary_exponent(c) + k * e for k, c in enumerate(d.coeffs()) if c)
+                    found.append(top - bottom)
+        return max(found, default=0)
+
+    @cached_property
+    def _unit(self) -> Any:
+        from realize.kernels.exact.numbers import fraction
+
+        if self.source.period is not None:
+            return fraction(1)
+        sizes = self.source.poles.frequency
+        sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
+        middle = float(np.exp(np.mean(np.log(sizes)))) if sizes.size else 1.0
+        return fraction(middle.as_integer_ratio())
+
+    @cached_property
+    def scaled(self) -> tuple[list[list[Any]], list[list[Any]]]:
+        """The exact fractions of both, numerators divided by 2^exponent."""
+        from realize.kernels.exact.numbers import power_of_two
+
+        assert self.source.fractions is not None and self.result.fractions is not None
+        factor = power_of_two(-self.exponent)
+        first, second = (
+            [[(n * factor, d) for n, d in row] for row in grid] for grid in (self.source.fractions, self.result.fractions)
+        )
+        return first, second
+
     def sizes(self, w: Array) -> tuple[Array, Array]:
-        """Return |dG| and |G_source| of each channel: two arrays [k][p][m]."""
+        """Return |dG| and |G_source| of each channel, in units of 2^exponent: two arrays [k][p][m]."""
         p, m = self.source.model.shape
         if self.exact:
             difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
             from realize.kernels.exact.evaluation import difference as exact_difference
 
-            assert self.source.fractions is not None and self.result.fractions is not None
+            first, second = self.scaled
             for i in range(p):
                 for j in range(m):
-                    found = exact_difference(
-                        *self.source.fractions[i][j], *self.result.fractions[i][j], w, self.source.exact_period
-                    )
-                    difference[:, i, j], size[:, i, j] = found.value, found.reference
+                    found = exact_difference(*first[i][j], *second[i][j], w, self.source.exact_period)
+                    value, reference = found.value, found.reference
+                    # where both leave the range of doubles, their quotient is still known
+                    lost = (reference < _LOW) & (found.relative > 0)
+                    reference = np.where(lost, _LOW, reference)
+                    value = np.where(lost, np.minimum(found.relative * _LOW, 1e300), value)
+                    difference[:, i, j], size[:, i, j] = value, reference
             return difference, size
         first, second = self.source.response(w), self.result.response(w)
         return np.abs(first - second), np.abs(first)
+
+    @property
+    def identical(self) -> bool:
+        """True where both are one model."""
+        return self.source is self.result
+
+
+#: Sizes below this, in units of the source's gain, are replaced by their quotient.
+_LOW = 1e-280
 
 
 def _frobenius(values: Array) -> Array:
@@ -70,13 +124,19 @@ def _finite_at_zero(view: View) -> bool:
     poles = view.poles
     if poles.s.size and np.any(poles.s == 0):
         return False
-    return bool(np.any(view.response(np.zeros(1)) != 0))
+    if view.fractions is None:
+        return bool(np.any(view.response(np.zeros(1)) != 0))
+    point = 0 if view.period is None else 1
+    return any(n(point) != 0 for row in view.fractions for n, _ in row)
 
 
 def _channel_band(view: View, i: int, j: int) -> Band:
     zeros, poles = view.channel_roots[i][j]
     at_origin = bool(np.any(poles.s == 0))
-    finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
+    if view.fractions is not None:
+        finite = not at_origin and view.fractions[i][j][0](0 if view.period is None else 1) != 0
+    else:
+        finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
     return dynamic_band(zeros, poles, view.period, finite)
 
 
@@ -139,6 +199,8 @@ def _claimed(
     channel: tuple[int, int] | None = None,
 ) -> Claim:
     """Return the claim, proved on the intervals where that is affordable, measured otherwise."""
+    if pair.identical:
+        return judge(name, 0.0, limit=limit, basis="proved", uncertainty=0.0, where={})
     if pair.exact and np.isfinite(value):
         proof = pair.proof(channel)
         if proof.identical:
@@ -283,8 +345,6 @@ def _at_infinity(pair: Pair) -> tuple[float, float]:
         return 0.0, 0.0
     from realize.kernels.exact.numbers import nearest
 
-    assert pair.source.fractions is not None and pair.result.fractions is not None
-
     def limit(n: Any, d: Any) -> float:
         if not n or n.degree() < d.degree():
             return 0.0
@@ -294,7 +354,7 @@ def _at_infinity(pair: Pair) -> tuple[float, float]:
 
     pairs = [
         (a, b)
-        for one, two in zip(pair.source.fractions, pair.result.fractions, strict=True)
+        for one, two in zip(*pair.scaled, strict=True)
         for a, b in zip(one, two, strict=True)
     ]
     difference = [limit(b[0] * a[1] - a[0] * b[1], a[1] * b[1]) for a, b in pairs]
@@ -414,7 +474,7 @@ def conversion_claims(source: Model, result: Model, structured: bool, limits: di
         defaults = CLAIMS[name].limits
         return defaults.get("convert", defaults.get("convert:structured") if structured else None)
 
-    pair = Pair(View(source), View(result))
+    pair = Pair(view_of(source), view_of(result))
     late = dead_time_difference(source, result)
     if late > 0:
         note = f"the dead times differ by up to {late:.3g} s"
@@ -422,6 +482,10 @@ def conversion_claims(source: Model, result: Model, structured: bool, limits: di
             judge(name, np.inf, limit=limit(name), basis="bounded", note=note)
             for name in ("response-error", "peak-error", "end-behaviour")
         ]
+    if pair.identical:
+        names = ["response-error", *(["channel-error"] if source.shape != (1, 1) else []), "peak-error", "end-behaviour"]
+        same = [judge(name, 0.0, limit=limit(name), basis="proved", uncertainty=0.0, note="left as it was") for name in names]
+        return [*same, judge("order", float(result.order or 0), unit="states", basis="proved", uncertainty=0.0)]
     claims = [response_error(pair, limit("response-error"))]
     if source.shape != (1, 1):
         claims.append(channel_error(pair, limit("channel-error")))

@@ -13,7 +13,7 @@ from realize.schema import Claim, judge
 from realize.verification.conversion import Pair, whole_band
 from realize.verification.fragility import fragility
 from realize.verification.search import largest, seeds
-from realize.verification.views import View
+from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
 
@@ -49,7 +49,7 @@ def linf_error(first: Model, second: Model, *, name: str = "linf-error", limit: 
     Two state models whose difference is well above rounding: confirmed by Hamiltonian eigenvalues ("bounded"). Else the
     largest value found, from exact fractions where affordable ("measured").
     """
-    pair = Pair(View(first), View(second))
+    pair = Pair(view_of(first), view_of(second))
     band = whole_band(pair.source)
     w = seeds(band, pair.source.poles, pair.result.poles)
     gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band)

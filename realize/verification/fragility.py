@@ -13,7 +13,10 @@ in Frobenius norms over the channels; the largest value over the frequencies of 
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+
 import numpy as np
+import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.kernels.response import balanced_states, scaled_polynomial
@@ -22,6 +25,8 @@ from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFun
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 _U = np.finfo(float).eps / 2
+#: From this order one Schur form serves all frequencies.
+SCHUR_FROM = 60
 
 
 def fragility(model: Model, frequency: Array) -> float | None:
@@ -105,21 +110,52 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
     if n > 200:
         points = points[:: max(1, points.size // 40)]
     A, B, C, E = balanced_states(model.A, model.B, model.C, model.E)
+    a, b, c = np.abs(A), np.abs(B), np.abs(C)
     result = np.empty(points.size)
-    eye = np.eye(n)
-    for k, s in enumerate(points):
-        try:
-            pencil = s * (eye if E is None else E) - A
-            right = np.linalg.solve(pencil, B)
-            left = np.linalg.solve(pencil.T, C.T).T
-        except np.linalg.LinAlgError:
+    for k, (s, right, left) in enumerate(_solutions(A, B, C, E, points)):
+        if right is None or left is None:
             result[k] = np.nan
             continue
         value = C @ right + model.D
         row, column = np.abs(left), np.abs(right)
-        change = row @ np.abs(B) + row @ np.abs(A) @ column + np.abs(C) @ column + np.abs(model.D)
+        change = row @ b + row @ a @ column + c @ column + np.abs(model.D)
         if E is not None:
             change = change + abs(s) * (row @ np.abs(E) @ column)
         size = np.linalg.norm(value)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result
+
+
+def _solutions(
+    A: Array, B: Array, C: Array, E: Array | None, points: ComplexArray
+) -> Iterator[tuple[complex, ComplexArray | None, ComplexArray | None]]:
+    """Yield s, (sE - A)^-1 B and C (sE - A)^-1; None where singular. Large models by Schur form once."""
+    n = A.shape[0]
+    if n <= SCHUR_FROM:
+        eye = np.eye(n) if E is None else E
+        for s in points.tolist():
+            try:
+                pencil = s * eye - A
+                yield s, np.linalg.solve(pencil, B), np.linalg.solve(pencil.T, C.T).T
+            except np.linalg.LinAlgError:
+                yield s, None, None
+        return
+    if E is None:
+        T, Q = scipy.linalg.schur(A.astype(complex), output="complex")
+        Z, S = Q, None
+    else:
+        T, S, Q, Z = scipy.linalg.qz(A.astype(complex), E.astype(complex), output="complex")
+    b, c = Q.conj().T @ B, C @ Z
+    diagonal = np.arange(n)
+    for s in points.tolist():
+        if S is None:
+            pencil = -T
+            pencil[diagonal, diagonal] += s
+        else:
+            pencil = s * S - T
+        if np.any(pencil[diagonal, diagonal] == 0):
+            yield s, None, None
+            continue
+        right = scipy.linalg.solve_triangular(pencil, b, check_finite=False)
+        left = scipy.linalg.solve_triangular(pencil, c.T, trans="T", check_finite=False).T
+        yield s, Z @ right, left @ Q.conj().T

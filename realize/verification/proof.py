@@ -15,7 +15,7 @@ from collections.abc import Sequence
 from functools import cached_property
 from typing import Any
 
-from realize.verification.views import View
+Grid = list[list[Any]]
 
 #: Factors by which the value found is raised until the inequality is proved.
 STEPS = (1 + 2**-9, 1.02, 1.1, 1.5, 3.0)
@@ -30,18 +30,19 @@ class Proof:
 
     Parameters
     ----------
-    source, result : View
-        Both with exact fractions.
+    source, result : [outputs][inputs] of (numerator, denominator)
+        Exact fractions.
+    period : fmpq or None
+        Sampling period, s.
     channel : (output, input), optional
         Only this channel.
     """
 
-    def __init__(self, source: View, result: View, channel: tuple[int, int] | None = None) -> None:
+    def __init__(self, source: Grid, result: Grid, period: Any, channel: tuple[int, int] | None = None) -> None:
         from realize.kernels.exact import polynomials
 
-        self.period = source.exact_period
-        assert source.fractions is not None and result.fractions is not None
-        grids = [source.fractions, result.fractions]
+        self.period = period
+        grids = [source, result]
         if channel is not None:
             grids = [[[grid[channel[0]][channel[1]]]] for grid in grids]
         lists, commons = [], []

@@ -6,7 +6,7 @@ import numpy as np
 
 from realize.models import Model, StateSpace
 from realize.schema import Claim, judge
-from realize.verification.views import View, double_poles, exact_fractions
+from realize.verification.views import double_poles, exact_fractions, view_of
 
 
 def order_claim(result: Model, limit: float | None = None) -> Claim:
@@ -16,7 +16,7 @@ def order_claim(result: Model, limit: float | None = None) -> Claim:
 
 def stability_claim(result: Model) -> Claim:
     """Return the claim `stability`: proved by exact counts of the poles inside, or measured from eigenvalues."""
-    view = View(result)
+    view = view_of(result)
     sampled = view.period is not None
     if view.fractions is not None:
         from realize.kernels.exact.roots import inside_left_half_plane, inside_unit_circle

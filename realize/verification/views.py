@@ -24,7 +24,16 @@ ComplexArray = NDArray[np.complex128]
 #: Predicted operations (about nanoseconds) above which doubles are used.
 EXACT_BUDGET = 5e9
 #: State models of larger order are not looked at: their exact matrices alone would take long to form.
-LARGEST_EXACT = 250
+LARGEST_EXACT = 160
+#: Predicted operations of isolating the roots of degree n, over n^3: long coefficients of dense state models.
+ROOT_COST = 5.0e2
+#: State models whose channels have a larger degree get approximate roots: they only say where to look.
+LARGE_DEGREE = 30
+
+
+def view_of(model: Model) -> View:
+    """Return the view of a model, made once: exact fractions and roots are not formed twice."""
+    return model.remembered("view", lambda: View(model))
 
 
 @dataclass(frozen=True)
@@ -71,45 +80,34 @@ def dynamics_of(values: ComplexArray, exact_axis: NDArray[np.bool_], period: flo
 
 
 class View:
-    """One parametric model, prepared for verification.
+    """One parametric model, prepared for verification: exact where the predicted cost allows it."""
 
-    Parameters
-    ----------
-    model : Model
-    exact : bool, optional
-        False forbids exact arithmetic; otherwise the predicted cost decides.
-    """
-
-    def __init__(self, model: Model, exact: bool = True) -> None:
+    def __init__(self, model: Model) -> None:
         self.model = model
         self.period = model.time.seconds if model.time.sampled else None
-        self._exact_allowed = exact
 
     @cached_property
     def fractions(self) -> list[list[tuple[Any, Any]]] | None:
         """Exact (numerator, denominator) of each channel, common factors cancelled; None where too costly."""
-        if not self._exact_allowed or predicted_cost(self.model) > EXACT_BUDGET:
+        if predicted_cost(self.model) > EXACT_BUDGET:
             return None
         return exact_fractions(self.model)
 
     @cached_property
     def channel_roots(self) -> list[list[tuple[Dynamics, Dynamics]]]:
-        """(zeros, poles) of each channel as continuous equivalents; zeros are empty where only doubles are affordable."""
+        """(zeros, poles) of each channel as continuous equivalents; zeros are empty where only doubles are affordable.
+
+        They say where to look and what the dynamic band is; no proof rests on their last digits. Those exactly on the
+        axis are found by exact tests.
+        """
         p, m = self.model.shape
         if self.fractions is not None:
-            from realize.kernels.exact.roots import roots
-
             known: dict[Any, Dynamics] = {}
 
             def of(polynomial: Any) -> Dynamics:
-                key = tuple(str(c) for c in (polynomial.numer(), polynomial.denom()))
+                key = id(polynomial)
                 if key not in known:
-                    found = [root for root in roots(polynomial) for _ in range(root.multiplicity)] if polynomial.degree() > 0 else []
-                    values = np.array([root.value for root in found], dtype=complex)
-                    axis = np.array([root.on_axis for root in found], dtype=bool)
-                    if self.period is not None and values.size:
-                        axis = np.abs(np.abs(values) - 1) <= 4 * np.finfo(float).eps
-                    known[key] = dynamics_of(values, axis, self.period)
+                    known[key] = self._dynamics(polynomial)
                 return known[key]
 
             return [[(of(self.fractions[i][j][0]), of(self.fractions[i][j][1])) for j in range(m)] for i in range(p)]
@@ -120,6 +118,29 @@ class View:
             axis = np.abs(size - 1) <= 4 * np.finfo(float).eps
         shared = dynamics_of(poles, axis, self.period)
         return [[(NO_DYNAMICS, shared) for _ in range(m)] for _ in range(p)]
+
+    def _dynamics(self, polynomial: Any) -> Dynamics:
+        """Return the roots of an exact polynomial, axis membership decided exactly."""
+        from realize.kernels.exact.polynomials import bilinear_image, even_odd
+        from realize.kernels.exact.roots import roots
+
+        if polynomial.degree() < 1:
+            return NO_DYNAMICS
+        if isinstance(self.model, StateSpace) and polynomial.degree() > LARGE_DEGREE:
+            image = polynomial if self.period is None else bilinear_image(polynomial)
+            even, odd = even_odd(image)
+            common = even.gcd(odd) if odd else even
+            if common.degree() < 1:
+                # nothing on the axis: approximate roots do
+                values = approximate_roots(polynomial)
+                if values is not None:
+                    return dynamics_of(values, np.zeros(values.size, dtype=bool), self.period)
+        found = [root for root in roots(polynomial) for _ in range(root.multiplicity)]
+        values = np.array([root.value for root in found], dtype=complex)
+        axis = np.array([root.on_axis for root in found], dtype=bool)
+        if self.period is not None and values.size:
+            axis = np.abs(np.abs(values) - 1) <= 4 * np.finfo(float).eps
+        return dynamics_of(values, axis, self.period)
 
     @cached_property
     def poles(self) -> Dynamics:
@@ -182,6 +203,10 @@ class View:
 
 def predicted_cost(model: Model) -> float:
     """Return the predicted operations of forming exact fractions and their roots (from sizes and bit lengths alone)."""
+    return model.remembered("cost", lambda: _predicted_cost(model))
+
+
+def _predicted_cost(model: Model) -> float:
     from realize.kernels.exact import cost
 
     p, m = model.shape
@@ -190,12 +215,33 @@ def predicted_cost(model: Model) -> float:
         if order > LARGEST_EXACT:
             return np.inf
         bits = cost.matrix_bits(model.exact("A"))
-        return cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
-    if order > 4 * LARGEST_EXACT:
-        return np.inf
-    # the coefficients of a product of n factors have about n times the bits of one
-    each = order if p * m == 1 else max(order // max(p * m, 1), 1)
-    return p * m * cost.roots_operations(each, 53 * max(each, 1))
+        form = cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
+        # each channel has its own numerator, whose roots are sought
+        return form + (1 + p * m) * ROOT_COST * order**3
+    if isinstance(model, TransferFunction):
+        degrees = [n.size + d.size for a, b in zip(model.numerator, model.denominator, strict=True) for n, d in zip(a, b, strict=True)]
+    elif isinstance(model, ZeroPoleGain):
+        degrees = [z.size + q.size for a, b in zip(model.zeros, model.poles, strict=True) for z, q in zip(a, b, strict=True)]
+    else:
+        degrees = [2 * order] * (p * m)
+    return float(sum(ROOT_COST * (degree / 2) ** 3 + 1e5 * degree for degree in degrees))
+
+
+def approximate_roots(polynomial: Any) -> ComplexArray | None:
+    """Return roots to about ten digits by ball arithmetic of rising precision, or None where that does not end."""
+    from flint import acb_poly
+
+    from realize.kernels.exact.numbers import precision
+
+    degree = polynomial.degree()
+    for bits in (4 * degree + 64, 16 * degree + 128):
+        with precision(bits):
+            try:
+                found = acb_poly(polynomial).roots()
+            except ValueError:
+                continue
+            return np.array([complex(float(root.real), float(root.imag)) for root in found])
+    return None
 
 
 def double_poles(model: Model) -> ComplexArray:
