@@ -37,11 +37,11 @@ class Context:
             format_for_writing(self.output)
 
 
-def load(path: str, columns: list[str] | None = None) -> Model:
-    """Read a model or data file; - is standard input."""
+def load(path: str, columns: list[str] | None = None, *, several: bool = False) -> Model:
+    """Read a model or data file; - is standard input. Among several inputs, names of columns are for the tables."""
     from realize.files import read
 
-    return read(path, columns=columns)
+    return read(path, columns=columns, columns_for_tables=several)
 
 
 def finite(value: Any) -> Any:

@@ -20,7 +20,6 @@ _LOOKS = (
     (b"\xff\xd8\xff", "a JPEG picture"),
     (b"GIF8", "a GIF picture"),
     (b"\x89HDF\r\n", "an HDF5 file"),
-    (b"MATLAB 5.0", "a binary workspace of another program"),
     (b"\x93NUMPY", "a single numpy array; several with their names go into an .npz file"),
     (b"\x1f\x8b", "a gzip file; unpack it first"),
     (b"BZh", "a bzip2 file; unpack it first"),
@@ -65,7 +64,13 @@ def _readable() -> str:
     return " or ".join(f"{row.says} ({', '.join(row.suffixes)})" for row in FORMATS.values() if row.can_read)
 
 
-def read(path: str | os.PathLike[str], *, columns: Sequence[str] | None = None, allow_outside: bool = False) -> Model:
+def read(
+    path: str | os.PathLike[str],
+    *,
+    columns: Sequence[str] | None = None,
+    allow_outside: bool = False,
+    columns_for_tables: bool = False,
+) -> Model:
     """Read a model or a table of a frequency response.
 
     Parameters
@@ -76,6 +81,8 @@ def read(path: str | os.PathLike[str], *, columns: Sequence[str] | None = None, 
         Names of the columns of a table, instead of its header; ``-`` leaves a column out.
     allow_outside : bool
         Whether a model may name matrix files outside its own folder.
+    columns_for_tables : bool
+        Ignore ``columns`` for an input that is no table, instead of refusing them.
 
     Raises
     ------
@@ -87,6 +94,8 @@ def read(path: str | os.PathLike[str], *, columns: Sequence[str] | None = None, 
     source = open_source(path)
     try:
         row = recognise(source)
+        if columns_for_tables and row.name != "table":
+            columns = None
         if columns is not None and row.name != "table":
             raise UsageError(f"{source.name}: names of columns are for tables, and this is {row.says}")
         assert row.read is not None

@@ -54,8 +54,8 @@ def corner_frequencies(model: Model, roots: Roots) -> Array:
 def drawing_band(models: Sequence[Model], roots: Sequence[Roots], band: Band | None = None) -> Band:
     """Return the frequencies to draw, rad/s.
 
-    In this order: the band asked for; the band of the data with a quarter of an octave on each side; from a tenth of
-    the smallest to ten times the largest pole or zero. Sampled models end at pi / period.
+    In this order: the band asked for; the band of the data with a tenth of its width on each side (a quarter of an
+    octave at the most); from a tenth of the smallest to ten times the largest pole or zero. Sampled models end at pi / period.
     """
     ends = [math.pi / model.time.seconds for model in models if model.time.sampled]
     end = max(ends) if len(ends) == len(models) and ends else math.inf
@@ -65,7 +65,7 @@ def drawing_band(models: Sequence[Model], roots: Sequence[Roots], band: Band | N
     data = [values for values in data if values.size]
     if data:
         low, high = min(values[0] for values in data), max(values[-1] for values in data)
-        margin = 2**0.25 if low < high else 4.0
+        margin = min(2**0.25, (high / low) ** 0.1) if low < high else 4.0
         return low / margin, high * margin
     corners = np.concatenate([corner_frequencies(model, own) for model, own in zip(models, roots, strict=True)])
     if corners.size:

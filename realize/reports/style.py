@@ -95,22 +95,22 @@ def drawable(text: str, longest: int = 60) -> str:
     return "".join(sign if ord(sign) in known else "?" for sign in clean(text, longest))
 
 
-def frequency_label(value: float) -> str:
+def frequency_label(value: float, digits: int = 4) -> str:
     """Return the label of a frequency tick: ``10``, ``2k``, ``5m``."""
-    return prefixed(value, "", 4).replace(" ", "")
+    return prefixed(value, "", digits).replace(" ", "")
 
 
 _RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
-def power_label(value: float) -> str:
+def power_label(value: float, digits: int = 3) -> str:
     """Return the label of a level tick: a short number, or a power of ten."""
     power = round(math.log10(value))
     if -2 <= power <= 3:
-        return short(value, 3)
+        return short(value, digits)
     factor = value / 10.0**power if abs(power) < 300 else 1.0
     raised = "10" + str(power).translate(_RAISED)
-    return raised if abs(factor - 1) < 1e-6 else short(value, 3)
+    return raised if abs(factor - 1) < 1e-6 else short(value, digits)
 
 
 def logarithmic_axis(axis: Any, low: float, high: float, label: Any, most: int = 7) -> None:
@@ -124,7 +124,7 @@ def logarithmic_axis(axis: Any, low: float, high: float, label: Any, most: int =
     low, high : float
         Ends of the view, in decades.
     label : callable
-        Value to text.
+        Value, and number of digits where it matters, to text.
     most : int
         Number of labels that fit.
     """
@@ -132,6 +132,7 @@ def logarithmic_axis(axis: Any, low: float, high: float, label: Any, most: int =
 
     span = high - low
     minor: list[float] = []
+    texts: dict[float, str] = {}
     if span >= 1.3:
         step = max(1, math.ceil(span / most))
         powers = [p for p in range(math.ceil(low - 1e-9), math.floor(high + 1e-9) + 1)]
@@ -145,19 +146,18 @@ def logarithmic_axis(axis: Any, low: float, high: float, label: Any, most: int =
             p + f for p in range(math.floor(low), math.ceil(high) + 1) for f in (0.0, math.log10(2), math.log10(5))
         ]
     else:
-        base = 10.0 ** math.floor(low)
-        values = MaxNLocator(nbins=5).tick_values(10 ** (low - math.floor(low)), 10 ** (high - math.floor(low)))
-        ticks = [math.log10(v) + math.floor(low) for v in values if v > 0]
-        label = _in_units(label, base)
+        decade = math.floor(low)
+        values = MaxNLocator(nbins=min(5, most)).tick_values(10 ** (low - decade), 10 ** (high - decade))
+        values = [v for v in values if v > 0]
+        ticks = [math.log10(v) + decade for v in values]
+        # as many digits as it takes to tell neighbours apart
+        digits = max(4, 1 + math.ceil(-math.log10((values[1] - values[0]) / values[0]))) if len(values) > 1 else 4
+        texts = {t: label(float(f"{v:.12g}e{decade}"), digits) for t, v in zip(ticks, values, strict=True)}
     ticks = [t for t in ticks if low - 1e-9 <= t <= high + 1e-9]
     axis.set_major_locator(FixedLocator(ticks))
-    axis.set_major_formatter(FixedFormatter([label(_power(t)) for t in ticks]))
+    axis.set_major_formatter(FixedFormatter([texts.get(t) or label(_power(t)) for t in ticks]))
     axis.set_minor_locator(FixedLocator([t for t in minor if low <= t <= high]))
     axis.set_minor_formatter(NullFormatter())
-
-
-def _in_units(label: Any, base: float) -> Any:
-    return lambda value: label(float(f"{value:.6g}")) if base else label(value)
 
 
 def _power(exponent: float) -> float:
