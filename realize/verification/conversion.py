@@ -94,7 +94,7 @@ class Pair:
                     found = exact_difference(*first[i][j], *second[i][j], w, self.source.exact_period)
                     value, reference = found.value, found.reference
                     # where both leave the range of doubles, their quotient is still known
-                    lost = (reference < _LOW) & (found.relative > 0)
+                    lost = (reference < _LOW) & (found.relative > 0) & np.isfinite(found.relative)
                     reference = np.where(lost, _LOW, reference)
                     value = np.where(lost, np.minimum(found.relative * _LOW, 1e300), value)
                     difference[:, i, j], size[:, i, j] = value, reference
@@ -364,7 +364,8 @@ def _at_infinity(pair: Pair) -> tuple[float, float]:
 def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     """Return the claim `peak-error`: over all frequencies, those of the result's own poles included.
 
-    A source whose gain grows without limit (more zeros than poles) is judged over its dynamic band.
+    A source whose gain grows without limit (more zeros than poles) is judged over its dynamic band; one with a pole at
+    the origin from the lower end of that band on.
     """
     gain, _ = peak_gain(pair)
     end_difference, end_gain = _at_infinity(pair)
@@ -382,7 +383,9 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     if improper or gain == 0:
         intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, band, [], None)]
     else:
-        full = Band(0.0, np.inf, False, band.left_out)
+        # a pole at the origin leaves out what is below the dynamic band
+        start = band.low if np.any(pair.source.poles.s == 0) else 0.0
+        full = Band(start, np.inf, False, band.left_out)
         intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, full, [], None)]
     if not np.isfinite(gain):
         intervals = []
