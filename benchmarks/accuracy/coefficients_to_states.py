@@ -61,7 +61,10 @@ def main() -> None:
         limit = limit_of(source)
         w = np.geomspace(*_ends(source), 400)
         reference = source.response(w)[:, 0, 0]
-        double = np.abs(made.model.rational_part(made.model.time.points(w))[:, 0, 0] - reference).max() / np.abs(reference).max()
+        double = (
+            np.abs(made.model.rational_part(made.model.time.points(w))[:, 0, 0] - reference).max()
+            / np.abs(reference).max()
+        )
         wrong_order = made.model.order != model.order
         over = error > limit or double > 1e-10 or wrong_order or not end.holds
         count, bad, worst = count + 1, bad + over, max(worst, error / limit)

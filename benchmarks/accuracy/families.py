@@ -15,7 +15,9 @@ def _closed(roots: np.ndarray) -> list[complex]:
     """Return the roots as an exactly conjugate list."""
     roots = np.asarray(roots, dtype=complex)
     real = [complex(r.real) for r in roots if abs(r.imag) <= 1e-13 * abs(r)]
-    upper = [complex(r) if abs(r.real) > 1e-13 * abs(r) else complex(0, r.imag) for r in roots if r.imag > 1e-13 * abs(r)]
+    upper = [
+        complex(r) if abs(r.real) > 1e-13 * abs(r) else complex(0, r.imag) for r in roots if r.imag > 1e-13 * abs(r)
+    ]
     return real + [z for r in upper for z in (r, r.conjugate())]
 
 
@@ -42,7 +44,9 @@ def exact_product(roots: list[complex]) -> list[Fraction]:
     return total
 
 
-def coefficients(zeros: list[complex], poles: list[complex], gain: float | Fraction, time: realize.TimeBase | None = None) -> realize.TransferFunction:
+def coefficients(
+    zeros: list[complex], poles: list[complex], gain: float | Fraction, time: realize.TimeBase | None = None
+) -> realize.TransferFunction:
     """Return the transfer function with the correctly rounded coefficients of the factors; decimals beyond the doubles."""
     fields: dict[str, list[float]] = {}
     decimals: dict[str, dict[tuple[int, int, int], str]] = {}
@@ -136,7 +140,10 @@ def sampled() -> Iterator[tuple[str, realize.TransferFunction]]:
                     ("elliptic", scipy.signal.ellip(n, 0.5, 60, 2 * cut, output="zpk")),
                 ):
                     z, p, k = made
-                    yield f"sampled {name} {n}, cut-off {cut:g} of {rate:g} Hz", coefficients(_circle(z), _closed(p), float(k), time)
+                    yield (
+                        f"sampled {name} {n}, cut-off {cut:g} of {rate:g} Hz",
+                        coefficients(_circle(z), _closed(p), float(k), time),
+                    )
 
 
 def _circle(zeros: np.ndarray) -> list[complex]:

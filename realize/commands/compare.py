@@ -13,7 +13,9 @@ def execute(
     """Compare model and data files with the first one."""
     if [a, *b].count("-") > 1:
         raise UsageError("only one of the inputs can be standard input")
-    record = compare(load(a, columns, several=True), *(load(path, columns, several=True) for path in b), band=band, names=[a, *b])
+    record = compare(
+        load(a, columns, several=True), *(load(path, columns, several=True) for path in b), band=band, names=[a, *b]
+    )
     write_log(context, record)
     if context.json:
         print_record(record)

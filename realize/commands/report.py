@@ -16,7 +16,9 @@ def execute(
         raise UsageError("report needs -o PICTURE, a name that ends in .png or .svg")
     from realize.reports import draw
 
-    entries = [("standard input" if path == "-" else Path(path).stem, load(path, columns, several=True)) for path in model]
+    entries = [
+        ("standard input" if path == "-" else Path(path).stem, load(path, columns, several=True)) for path in model
+    ]
     draw(entries, context.output, band=band)
     record = {"step": "report", "inputs": list(model), "output": context.output}
     write_log(context, record)

@@ -55,7 +55,9 @@ def fractions(model: Model, task: Task) -> Grid:
     try:
         formed = form_fractions(model)
     except states.SingularPencil:
-        raise Refused("the pencil sE - A is singular: det(sE - A) is zero for every s, so no transfer function exists") from None
+        raise Refused(
+            "the pencil sE - A is singular: det(sE - A) is zero for every s, so no transfer function exists"
+        ) from None
     if isinstance(model, StateSpace) and not task.common_denominator and task.to != "state-space":
         return [[reduce_fraction(n, d) for n, d in row] for row in formed]
     if task.common_denominator:
@@ -286,7 +288,9 @@ def _assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
     keep = [(i, j) for i in range(p) for j in range(m) if p * m == 1 or np.any(grid[i][j][2]) or np.any(grid[i][j][3])]
     n = sum(grid[i][j][0].shape[0] for i, j in keep)
     A, B, C, D = np.zeros((n, n)), np.zeros((n, m)), np.zeros((p, n)), np.zeros((p, m))
-    degree = max((grid[i][j][4].shape[0] - 1 for i in range(p) for j in range(m) if grid[i][j][4] is not None), default=0)
+    degree = max(
+        (grid[i][j][4].shape[0] - 1 for i in range(p) for j in range(m) if grid[i][j][4] is not None), default=0
+    )
     polynomial = np.zeros((degree + 1, p, m))
     start = 0
     for i, j in keep:

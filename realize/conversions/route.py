@@ -52,15 +52,35 @@ ROWS: tuple[Row, ...] = (
     Row("zero-pole-gain", "exact-fractions", builders.fractions, True, "exact products of the factors"),
     Row("pole-residue", "exact-fractions", builders.fractions, True, "exact sum of the partial fractions"),
     Row("sections", "exact-fractions", builders.fractions, True, "exact product of the sections"),
-    Row("state-space", "exact-fractions", builders.fractions, True, "exact C adj(sE - A) B + D det(sE - A) over det(sE - A)"),
+    Row(
+        "state-space",
+        "exact-fractions",
+        builders.fractions,
+        True,
+        "exact C adj(sE - A) B + D det(sE - A) over det(sE - A)",
+    ),
     Row("zero-pole-gain", "factors", builders.factors_as_given, True, "poles, zeros and gain as they stand"),
-    Row("exact-fractions", "factors", builders.factors_from_fractions, False, "certified poles and zeros, each rounded once"),
+    Row(
+        "exact-fractions",
+        "factors",
+        builders.factors_from_fractions,
+        False,
+        "certified poles and zeros, each rounded once",
+    ),
     Row("exact-fractions", "transfer-function", builders.transfer_function, False, "each coefficient rounded once"),
-    Row("exact-fractions", "pole-residue", builders.pole_residue, False, "certified poles and residues, each rounded once"),
+    Row(
+        "exact-fractions",
+        "pole-residue",
+        builders.pole_residue,
+        False,
+        "certified poles and residues, each rounded once",
+    ),
     Row("factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"),
     Row("factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"),
     Row("factors", "state-space:cascade", builders.cascade, False, "sections in series, each entry rounded once"),
-    Row("sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"),
+    Row(
+        "sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"
+    ),
     Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
     Row(
         "exact-fractions",
@@ -80,9 +100,19 @@ ROWS: tuple[Row, ...] = (
 
 #: Rows for models too large for exact arithmetic.
 DOUBLE_ROWS: tuple[Row, ...] = (
-    Row("state-space", "pole-residue", builders.residues_in_doubles, False, "eigenvalues and eigenvectors in double arithmetic"),
+    Row(
+        "state-space",
+        "pole-residue",
+        builders.residues_in_doubles,
+        False,
+        "eigenvalues and eigenvectors in double arithmetic",
+    ),
     Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
-    *(row for row in ROWS if row.source in ("zero-pole-gain", "factors", "sections") and row.target != "exact-fractions"),
+    *(
+        row
+        for row in ROWS
+        if row.source in ("zero-pole-gain", "factors", "sections") and row.target != "exact-fractions"
+    ),
 )
 
 
@@ -130,9 +160,7 @@ def plan_route(task: Task) -> list[Row]:
             # the way back to the source's own kind goes through the fractions (a new common denominator)
             if row.source == node and (row.target not in done or row.target == goal):
                 count += 1
-                heapq.heappush(
-                    queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row])
-                )
+                heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
     raise Refused(
         f"order {task.model.order} with {task.model.shape[1]} inputs and {task.model.shape[0]} outputs is beyond what exact "
         f"arithmetic can do in seconds, and a {task.to} of that size could not be trusted in doubles; "

@@ -72,7 +72,11 @@ def _amplification(poles: tuple[complex, ...], zeros: tuple[complex, ...], sampl
         value = 1.0
         for pole in poles:
             # ratios first: 1e300 rad/s squared is no double
-            value *= abs(1j - pole / size) if not sampled else abs(cmath.exp(1j * min(size, math.pi)) - pole) / min(size, 1.0)
+            value *= (
+                abs(1j - pole / size)
+                if not sampled
+                else abs(cmath.exp(1j * min(size, math.pi)) - pole) / min(size, 1.0)
+            )
         worst = max(worst, value)
     return worst
 
@@ -158,9 +162,7 @@ def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = Fals
     return sorted(sections, key=damping)
 
 
-def cascade_states(
-    sections: list[Section], gain: Fraction, sampled: bool = False
-) -> tuple[Array, Array, Array, Array]:
+def cascade_states(sections: list[Section], gain: Fraction, sampled: bool = False) -> tuple[Array, Array, Array, Array]:
     """Return A, B, C, D of gain times the product of the sections.
 
     Parameters

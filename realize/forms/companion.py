@@ -12,7 +12,9 @@ from realize.forms.cascade import to_double
 Array = NDArray[np.float64]
 
 
-def _normal(numerators: list[list[Fraction]], denominator: list[Fraction]) -> tuple[list[Fraction], list[list[Fraction]], list[Fraction]]:
+def _normal(
+    numerators: list[list[Fraction]], denominator: list[Fraction]
+) -> tuple[list[Fraction], list[list[Fraction]], list[Fraction]]:
     n = len(denominator) - 1
     lead = denominator[0]
     a = [value / lead for value in denominator[1:]]
@@ -24,7 +26,9 @@ def _normal(numerators: list[list[Fraction]], denominator: list[Fraction]) -> tu
     return a, rows, direct
 
 
-def controllable_companion(numerators: list[list[Fraction]], denominator: list[Fraction]) -> tuple[Array, Array, Array, Array]:
+def controllable_companion(
+    numerators: list[list[Fraction]], denominator: list[Fraction]
+) -> tuple[Array, Array, Array, Array]:
     """Return A, B, C, D in controllable companion form for one input: A = [-a; I 0], B = e1.
 
     Every entry is the correctly rounded exact value.
@@ -47,7 +51,9 @@ def controllable_companion(numerators: list[list[Fraction]], denominator: list[F
     return A, B, C, np.array([[to_double(value)] for value in direct])
 
 
-def observable_companion(numerators: list[list[Fraction]], denominator: list[Fraction]) -> tuple[Array, Array, Array, Array]:
+def observable_companion(
+    numerators: list[list[Fraction]], denominator: list[Fraction]
+) -> tuple[Array, Array, Array, Array]:
     """Return A, B, C, D in observable companion form for one output: the transpose; numerators are those of the inputs."""
     A, B, C, D = controllable_companion(numerators, denominator)
     return A.T.copy(), C.T.copy(), B.T.copy(), D.T.copy()

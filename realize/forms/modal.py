@@ -117,5 +117,9 @@ def _chain(pole: complex, laurent: ComplexArray) -> tuple[ComplexArray, ComplexA
     if size:
         b[-1] = 1.0
     # state k from the end is 1/(s - pole)^(k+1)
-    c = np.stack([laurent[size - 1 - k][:, 0] for k in range(size)], axis=1) if size else np.zeros((laurent.shape[1], 0), complex)
+    c = (
+        np.stack([laurent[size - 1 - k][:, 0] for k in range(size)], axis=1)
+        if size
+        else np.zeros((laurent.shape[1], 0), complex)
+    )
     return a, b, c

@@ -162,9 +162,7 @@ def state_response(A: Array, B: Array, C: Array, D: Array, E: Array | None, poin
     return state_evaluator(A, B, C, D, E)(points)
 
 
-def state_evaluator(
-    A: Array, B: Array, C: Array, D: Array, E: Array | None
-) -> Callable[[ComplexArray], ComplexArray]:
+def state_evaluator(A: Array, B: Array, C: Array, D: Array, E: Array | None) -> Callable[[ComplexArray], ComplexArray]:
     """Return a function of complex points that gives C (sE - A)^-1 B + D: [k][outputs][inputs].
 
     The states are scaled by powers of two first. Small models and block triangular ones are solved with their own
@@ -219,7 +217,12 @@ def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Arra
     if np.all(scale == 1):
         return A, B, C, E
     with np.errstate(over="ignore", under="ignore"):
-        scaled = (A / scale[:, None] * scale, B / scale[:, None], C * scale, None if E is None else E / scale[:, None] * scale)
+        scaled = (
+            A / scale[:, None] * scale,
+            B / scale[:, None],
+            C * scale,
+            None if E is None else E / scale[:, None] * scale,
+        )
     for before, after in zip((A, B, C, E), scaled, strict=True):
         if before is not None and after is not None:
             if not np.all(np.isfinite(after)) or np.any((after == 0) != (before == 0)):

@@ -62,7 +62,10 @@ class TimeBase:
         value = checks.rational(getattr(self, name), f"time.{name}")
         if value <= 0:
             raise InputError(f"{getattr(self, name)}", "a number greater than zero", field=f"time.{name}")
-        if checks.nearest_double(1 / value) in (0.0, float("inf")) or checks.nearest_double(value) in (0.0, float("inf")):
+        if checks.nearest_double(1 / value) in (0.0, float("inf")) or checks.nearest_double(value) in (
+            0.0,
+            float("inf"),
+        ):
             raise InputError(f"{getattr(self, name)}", "a number whose inverse is a double too", field=f"time.{name}")
 
     @property
@@ -174,7 +177,9 @@ class Model:
             if bad.size:
                 index = "".join(f"[{i}]" for i in bad[0])
                 raise InputError(
-                    f"{values[tuple(bad[0])]}", "a finite number of seconds, not negative", field=f"dead_time.{name}{index}"
+                    f"{values[tuple(bad[0])]}",
+                    "a finite number of seconds, not negative",
+                    field=f"dead_time.{name}{index}",
                 )
         if self.time.sampled:
             ratio = dead.total / self.time.seconds
@@ -267,7 +272,9 @@ class Model:
         for name, rows in self.decimals.items():
             for index, text in rows.items():
                 value = checks.rational(text, name)
-                if not np.isfinite(checks.nearest_double(value)) or (value != 0 and checks.nearest_double(value) == 0.0):
+                if not np.isfinite(checks.nearest_double(value)) or (
+                    value != 0 and checks.nearest_double(value) == 0.0
+                ):
                     places.append(name + "".join(f"[{i}]" for i in index))
         return places
 

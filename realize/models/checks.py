@@ -61,7 +61,9 @@ def frozen(values: NDArray[Any]) -> NDArray[Any]:
     return copy
 
 
-def array(value: Any, name: str, dimensions: int, dtype: type = float, *, allow: Mapping[Any, str] | None = None) -> NDArray[Any]:
+def array(
+    value: Any, name: str, dimensions: int, dtype: type = float, *, allow: Mapping[Any, str] | None = None
+) -> NDArray[Any]:
     """Return a read-only array of the given number of dimensions with finite entries.
 
     ``allow`` holds the indices of exact decimals, whose nearest double may be infinite.
@@ -78,7 +80,9 @@ def array(value: Any, name: str, dimensions: int, dtype: type = float, *, allow:
             raw = raw.real
         values = raw.astype(dtype)
     except (ValueError, TypeError, OverflowError):
-        raise InputError("ragged rows or something that is no number", f"{dimensions}-dimensional numbers", field=name) from None
+        raise InputError(
+            "ragged rows or something that is no number", f"{dimensions}-dimensional numbers", field=name
+        ) from None
     if values.ndim != dimensions:
         if values.size == 0 and values.ndim < dimensions:
             values = values.reshape(values.shape + (0,) * (dimensions - values.ndim))

@@ -47,10 +47,14 @@ class FrequencyResponse(Model):
         bad = np.flatnonzero(np.diff(frequency) <= 0)
         if bad.size:
             k = int(bad[0]) + 1
-            raise InputError(f"{frequency[k]} after {frequency[k - 1]}", "increasing frequencies", field=f"frequency[{k}]")
+            raise InputError(
+                f"{frequency[k]} after {frequency[k - 1]}", "increasing frequencies", field=f"frequency[{k}]"
+            )
         response = checks.array(self.response, "response", 3, complex)
         if response.shape[0] != frequency.size:
-            raise InputError(f"{response.shape[0]} lines", f"{frequency.size}, one for each frequency", field="response")
+            raise InputError(
+                f"{response.shape[0]} lines", f"{frequency.size}, one for each frequency", field="response"
+            )
         if 0 in response.shape[1:]:
             raise InputError("no channels", "at least one input and one output", field="response")
         self._put("frequency", frequency)
@@ -69,7 +73,9 @@ class FrequencyResponse(Model):
             self._put(name, values)
         if self.time.sampled and self.radians[-1] > np.pi / self.time.seconds * (1 + 1e-12):
             raise InputError(
-                f"{frequency[-1]} {self.frequency_unit}", "frequencies up to half the sampling rate", field=f"frequency[{frequency.size - 1}]"
+                f"{frequency[-1]} {self.frequency_unit}",
+                "frequencies up to half the sampling rate",
+                field=f"frequency[{frequency.size - 1}]",
             )
 
     @property

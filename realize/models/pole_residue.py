@@ -76,7 +76,9 @@ class PoleResidue(Model):
             mate = seen.get((pole.conjugate(), int(whole[k])))
             if mate is None:
                 raise InputError(
-                    f"{pole:g} without its conjugate", "both members of every conjugate pair, equal to the last bit", field=f"poles[{k}]"
+                    f"{pole:g} without its conjugate",
+                    "both members of every conjugate pair, equal to the last bit",
+                    field=f"poles[{k}]",
                 )
             if not np.array_equal(residues[mate], residues[k].conj()):
                 raise InputError(

@@ -85,9 +85,7 @@ class StateSpace(Model):
         return self.A.shape[0]
 
     def rational_part(self, points: ComplexArray) -> ComplexArray:
-        evaluator = self.remembered(
-            "evaluator", lambda: state_evaluator(self.A, self.B, self.C, self.D, self.E)
-        )
+        evaluator = self.remembered("evaluator", lambda: state_evaluator(self.A, self.B, self.C, self.D, self.E))
         return evaluator(points)
 
 

@@ -35,7 +35,10 @@ class TransferFunction(Model):
         if len(denominator) * len(denominator[0]) == 1 and shape != (1, 1):
             shared = decimals.get("denominator", {})
             decimals["denominator"] = {
-                (i, j, *index[2:]): text for index, text in shared.items() for i in range(shape[0]) for j in range(shape[1])
+                (i, j, *index[2:]): text
+                for index, text in shared.items()
+                for i in range(shape[0])
+                for j in range(shape[1])
             }
         denominator = checks.spread(denominator, shape, "denominator")
         self._put("numerator", self._trimmed(numerator, "numerator", decimals))

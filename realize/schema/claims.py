@@ -73,9 +73,15 @@ CLAIMS: dict[str, ClaimDefinition] = {
             "the method's bound on the reduction error plus the rounding term; null for methods without one",
         ),
         ClaimDefinition("steady-state-error", "relative", "difference at zero frequency relative to the source there"),
-        ClaimDefinition("weighted-misfit", "1", "root mean square of misfit / standard deviation; 1 = as large as the noise"),
+        ClaimDefinition(
+            "weighted-misfit", "1", "root mean square of misfit / standard deviation; 1 = as large as the noise"
+        ),
         ClaimDefinition("rms-misfit", "relative", "root mean square misfit relative to the root mean square response"),
-        ClaimDefinition("worst-misfit", "relative", "largest misfit of one channel at one frequency, relative to that channel's peak"),
+        ClaimDefinition(
+            "worst-misfit",
+            "relative",
+            "largest misfit of one channel at one frequency, relative to that channel's peak",
+        ),
         ClaimDefinition("linf-error", "absolute", "L-infinity norm of the difference"),
         ClaimDefinition("h2-error", "absolute", "H2 norm of the difference"),
     )

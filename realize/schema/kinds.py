@@ -61,7 +61,9 @@ KINDS: dict[str, Kind] = {
             "Ratio of polynomials, channel by channel.",
             (
                 Field("numerator", "polynomials", True, "numerator coefficients"),
-                Field("denominator", "polynomials", True, "denominator coefficients; one polynomial serves all channels"),
+                Field(
+                    "denominator", "polynomials", True, "denominator coefficients; one polynomial serves all channels"
+                ),
             ),
         ),
         Kind(
@@ -79,7 +81,9 @@ KINDS: dict[str, Kind] = {
             (
                 Field("poles", "pole-list", True, "poles, both members of each conjugate pair"),
                 Field("residues", "residue-list", True, "one matrix of residues for each entry of poles"),
-                Field("powers", "power-list", False, "power of (s - pole) below each residue; 1 unless the pole repeats"),
+                Field(
+                    "powers", "power-list", False, "power of (s - pole) below each residue; 1 unless the pole repeats"
+                ),
                 Field("direct", "direct", False, "feed-through, or polynomial part"),
             ),
         ),

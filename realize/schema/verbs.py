@@ -69,7 +69,9 @@ VERBS: dict[str, Verb] = {
             ("DATA",),
             (
                 Option("to", "choice", "kind of the result", PARAMETRIC_KINDS, "state-space", "KIND"),
-                Option("order", "order", "number of poles: N, a range A..B, or auto", default="auto", metavar="N|A..B|auto"),
+                Option(
+                    "order", "order", "number of poles: N, a range A..B, or auto", default="auto", metavar="N|A..B|auto"
+                ),
                 Option("method", "choice", "method", FIT_METHODS, "auto"),
                 Option("dead-time", "time", "known dead time of every channel, seconds", metavar="X"),
                 BAND,

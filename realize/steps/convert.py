@@ -14,7 +14,7 @@ from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
-from realize.verification import view_of, conversion_claims
+from realize.verification import conversion_claims, view_of
 
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
 GOOD = 1e-9

@@ -26,7 +26,9 @@ def fresh_folder(wanted: str | None) -> Path:
             folder = Path(wanted)
             folder.mkdir(parents=True, exist_ok=True)
             if any(folder.iterdir()):
-                raise InputError("a folder that is not empty", "a folder that is empty or does not exist yet", file=wanted)
+                raise InputError(
+                    "a folder that is not empty", "a folder that is empty or does not exist yet", file=wanted
+                )
             return folder
         for number in range(1, 10_000):
             folder = Path("realize-demo" if number == 1 else f"realize-demo-{number}")
@@ -36,7 +38,9 @@ def fresh_folder(wanted: str | None) -> Path:
                 continue
             return folder
     except OSError as error:
-        raise InputError(f"cannot be made ({error.strerror})", "a folder that can be written", file=str(wanted or ".")) from None
+        raise InputError(
+            f"cannot be made ({error.strerror})", "a folder that can be written", file=str(wanted or ".")
+        ) from None
     raise InputError("ten thousand demo folders", "one of them removed")
 
 

@@ -78,7 +78,9 @@ def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None
     p, m = model.shape
     if view.fractions is None:
         values = double_poles(model)
-        cautions.append("Too large for exact arithmetic: poles are eigenvalues in double arithmetic, zeros are left out.")
+        cautions.append(
+            "Too large for exact arithmetic: poles are eigenvalues in double arithmetic, zeros are left out."
+        )
         values = values[np.lexsort((-values.imag, values.real, np.abs(values)))]
         return [[value.real, value.imag, 1] for value in values.tolist()], None
     if isinstance(model, StateSpace):
@@ -105,7 +107,9 @@ def _minimal_order(view: View, cautions: list[str]) -> int | None:
         return max(n.degree(), d.degree(), 0)
     from realize.kernels.exact.order import mcmillan_degree
 
-    found = mcmillan_degree([[n for n, _ in row] for row in view.fractions], [[d for _, d in row] for row in view.fractions])
+    found = mcmillan_degree(
+        [[n for n, _ in row] for row in view.fractions], [[d for _, d in row] for row in view.fractions]
+    )
     if not found.proved:
         cautions.append(
             f"The minimal order {found.order} is a rank modulo two large primes: too low only if both divide every minor."
@@ -151,7 +155,9 @@ def _hankel(model: Model, stable: bool, cautions: list[str]) -> list[float] | No
 def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[str]) -> None:
     order, minimal = record["order"], record["minimal_order"]
     if minimal is not None and order is not None and minimal < order:
-        cautions.append(f"{order - minimal} of {order} poles are not seen at the output: the minimal order is {minimal}.")
+        cautions.append(
+            f"{order - minimal} of {order} poles are not seen at the output: the minimal order is {minimal}."
+        )
     if record["stable"] is False:
         cautions.append("Not stable: at least one pole is on or beyond the edge of stability.")
     dynamics = view.poles
@@ -167,7 +173,9 @@ def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[st
             gap = np.abs(zeros.s[:, None] - poles.s[None, :]) / np.maximum(np.abs(poles.s)[None, :], 1e-300)
             close = int(np.sum(gap.min(axis=1) < NEAR))
             if close:
-                cautions.append(f"{close} zeros lie within {NEAR:g} of a pole, relative to its size: nearly cancelling.")
+                cautions.append(
+                    f"{close} zeros lie within {NEAR:g} of a pole, relative to its size: nearly cancelling."
+                )
     if isinstance(model, StateSpace) and model.order:
         from realize.kernels.response import balanced_states
 
@@ -177,7 +185,9 @@ def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[st
         if before.size and np.linalg.norm(model.A) > 1e4 * np.linalg.norm(after):
             cautions.append("Badly scaled states: a change of units would make the entries of A far more alike.")
     if model.beyond_doubles:
-        cautions.append(f"{len(model.beyond_doubles)} numbers are beyond the range of doubles; they are kept as decimals.")
+        cautions.append(
+            f"{len(model.beyond_doubles)} numbers are beyond the range of doubles; they are kept as decimals."
+        )
 
 
 def _data(model: FrequencyResponse) -> dict[str, Any]:

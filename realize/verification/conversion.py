@@ -77,7 +77,8 @@ class Pair:
         assert self.source.fractions is not None and self.result.fractions is not None
         factor = power_of_two(-self.exponent)
         first, second = (
-            [[(n * factor, d) for n, d in row] for row in grid] for grid in (self.source.fractions, self.result.fractions)
+            [[(n * factor, d) for n, d in row] for row in grid]
+            for grid in (self.source.fractions, self.result.fractions)
         )
         return first, second
 
@@ -218,7 +219,9 @@ def _intervals(
 ) -> list[tuple[float, float, float | None]]:
     """Return the pieces of a band between what is left out, with the divisor of light zeros from their edges."""
     pieces: list[tuple[float, float, float | None]] = [(0.0, 0.0, None)] if band.zero else []
-    cuts = sorted((max(low, band.low), min(high, band.high)) for low, high in band.left_out if high > band.low and low < band.high)
+    cuts = sorted(
+        (max(low, band.low), min(high, band.high)) for low, high in band.left_out if high > band.low and low < band.high
+    )
     start = band.low
     spans = []
     for low, high in cuts:
@@ -282,7 +285,9 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 band = whole_band(view) if view.poles.s.size else Band(0.1, 10.0)
                 lines: list[float] = []
                 w = seeds(band, view.poles, pair.result.poles)
-                intervals = [(low, high, gain) for low, high, _ in _intervals(pair, band, [], (i, j))] if pair.exact else []
+                intervals = (
+                    [(low, high, gain) for low, high, _ in _intervals(pair, band, [], (i, j))] if pair.exact else []
+                )
             else:
                 band = _channel_band(view, i, j)
                 zeros, poles = view.channel_roots[i][j]
@@ -290,7 +295,9 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 w = seeds(band, zeros, poles, pair.result.channel_roots[i][j][1])
                 intervals = _intervals(pair, band, lines, (i, j)) if pair.exact else []
             value, where = largest(
-                lambda x, c=(i, j), z=lines, r=reference: _relative(pair, x, z, c, r), w, band  # type: ignore[misc]
+                lambda x, c=(i, j), z=lines, r=reference: _relative(pair, x, z, c, r),
+                w,
+                band,  # type: ignore[misc]
             )
             place = {"frequency": where, "output": i, "input": j}
             claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
@@ -352,11 +359,7 @@ def _at_infinity(pair: Pair) -> tuple[float, float]:
             return np.inf
         return abs(nearest(n.leading_coefficient() / d.leading_coefficient()))
 
-    pairs = [
-        (a, b)
-        for one, two in zip(*pair.scaled, strict=True)
-        for a, b in zip(one, two, strict=True)
-    ]
+    pairs = [(a, b) for one, two in zip(*pair.scaled, strict=True) for a, b in zip(one, two, strict=True)]
     difference = [limit(b[0] * a[1] - a[0] * b[1], a[1] * b[1]) for a, b in pairs]
     return float(np.linalg.norm(difference)), float(np.linalg.norm([limit(*a) for a, _ in pairs]))
 
@@ -389,7 +392,9 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
         intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, full, [], None)]
     if not np.isfinite(gain):
         intervals = []
-    return _claimed("peak-error", pair, error, place, limit, intervals if pair.exact and gain > 0 else [(0.0, 0.0, 1.0)])
+    return _claimed(
+        "peak-error", pair, error, place, limit, intervals if pair.exact and gain > 0 else [(0.0, 0.0, 1.0)]
+    )
 
 
 def end_behaviour(pair: Pair, limit: float | None = None) -> Claim | None:
@@ -410,8 +415,13 @@ def end_behaviour(pair: Pair, limit: float | None = None) -> Claim | None:
             elif n1.degree() - d1.degree() != n2.degree() - d2.degree():
                 value = np.inf
                 said = f"relative degree {d1.degree() - n1.degree()} became {d2.degree() - n2.degree()}"
-            elif _multiplicity(n1, origin) != _multiplicity(n2, origin) or _multiplicity(d1, origin) != _multiplicity(d2, origin):
-                value, said = np.inf, f"the multiplicity of poles or zeros at {'z = 1' if origin else 'the origin'} changed"
+            elif _multiplicity(n1, origin) != _multiplicity(n2, origin) or _multiplicity(d1, origin) != _multiplicity(
+                d2, origin
+            ):
+                value, said = (
+                    np.inf,
+                    f"the multiplicity of poles or zeros at {'z = 1' if origin else 'the origin'} changed",
+                )
             else:
                 ratio = (n2.leading_coefficient() * d1.leading_coefficient()) / (
                     n1.leading_coefficient() * d2.leading_coefficient()
@@ -456,7 +466,9 @@ def dead_time_difference(source: Model, result: Model) -> float:
     return float(np.abs(first - second).max())
 
 
-def conversion_claims(source: Model, result: Model, structured: bool, limits: dict[str, float] | None = None) -> list[Claim]:
+def conversion_claims(
+    source: Model, result: Model, structured: bool, limits: dict[str, float] | None = None
+) -> list[Claim]:
     """Return the claims of a conversion.
 
     Parameters
@@ -486,8 +498,16 @@ def conversion_claims(source: Model, result: Model, structured: bool, limits: di
             for name in ("response-error", "peak-error", "end-behaviour")
         ]
     if pair.identical:
-        names = ["response-error", *(["channel-error"] if source.shape != (1, 1) else []), "peak-error", "end-behaviour"]
-        same = [judge(name, 0.0, limit=limit(name), basis="proved", uncertainty=0.0, note="left as it was") for name in names]
+        names = [
+            "response-error",
+            *(["channel-error"] if source.shape != (1, 1) else []),
+            "peak-error",
+            "end-behaviour",
+        ]
+        same = [
+            judge(name, 0.0, limit=limit(name), basis="proved", uncertainty=0.0, note="left as it was")
+            for name in names
+        ]
         return [*same, judge("order", float(result.order or 0), unit="states", basis="proved", uncertainty=0.0)]
     claims = [response_error(pair, limit("response-error"))]
     if source.shape != (1, 1):
@@ -496,5 +516,9 @@ def conversion_claims(source: Model, result: Model, structured: bool, limits: di
     end = end_behaviour(pair, limit("end-behaviour"))
     if end is not None:
         claims.append(end)
-    claims.append(judge("order", float(result.order or 0), unit="states", basis="proved", uncertainty=0.0, limit=given.get("order")))
+    claims.append(
+        judge(
+            "order", float(result.order or 0), unit="states", basis="proved", uncertainty=0.0, limit=given.get("order")
+        )
+    )
     return claims

@@ -82,7 +82,9 @@ def weighted_misfit(part: Misfit, deviation: Array | None, limit: float | None =
     return judge("weighted-misfit", value, limit=limit, unit="1", uncertainty=_rounding(value), note=note)
 
 
-def data_claims(data: FrequencyResponse, model: Model, limits: dict[str, float], keep: NDArray[np.bool_] | None = None) -> list[Claim]:
+def data_claims(
+    data: FrequencyResponse, model: Model, limits: dict[str, float], keep: NDArray[np.bool_] | None = None
+) -> list[Claim]:
     """Return the misfit claims that need nothing but data and model."""
     part = misfit(data, model, keep)
     claims = [rms_misfit(part, limits.get("rms-misfit")), worst_misfit(part, limits.get("worst-misfit"))]

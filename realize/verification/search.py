@@ -89,7 +89,9 @@ def largest(error: Callable[[Array], Array], w: Array, band: Band, rounds: int =
     found, where = float(values[best]), float(w[best])
     if not np.isfinite(found) or w.size < 3:
         return found, where
-    peaks = [k for k in range(w.size) if values[k] >= values[max(k - 1, 0)] and values[k] >= values[min(k + 1, w.size - 1)]]
+    peaks = [
+        k for k in range(w.size) if values[k] >= values[max(k - 1, 0)] and values[k] >= values[min(k + 1, w.size - 1)]
+    ]
     peaks = sorted(peaks, key=lambda k: -values[k])[:5]
     spans = [(float(w[max(k - 1, 0)]), float(w[min(k + 1, w.size - 1)])) for k in peaks if values[k] > 0.2 * found]
     for _ in range(rounds):

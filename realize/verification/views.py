@@ -219,9 +219,15 @@ def _predicted_cost(model: Model) -> float:
         # each channel has its own numerator, whose roots are sought
         return form + (1 + p * m) * ROOT_COST * order**3
     if isinstance(model, TransferFunction):
-        degrees = [n.size + d.size for a, b in zip(model.numerator, model.denominator, strict=True) for n, d in zip(a, b, strict=True)]
+        degrees = [
+            n.size + d.size
+            for a, b in zip(model.numerator, model.denominator, strict=True)
+            for n, d in zip(a, b, strict=True)
+        ]
     elif isinstance(model, ZeroPoleGain):
-        degrees = [z.size + q.size for a, b in zip(model.zeros, model.poles, strict=True) for z, q in zip(a, b, strict=True)]
+        degrees = [
+            z.size + q.size for a, b in zip(model.zeros, model.poles, strict=True) for z, q in zip(a, b, strict=True)
+        ]
     else:
         degrees = [2 * order] * (p * m)
     return float(sum(ROOT_COST * (degree / 2) ** 3 + 1e5 * degree for degree in degrees))
@@ -334,7 +340,9 @@ def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
         pairs = [[(horner(above[i][j]), horner(under[i][j])) for j in range(m)] for i in range(p)]
     elif isinstance(model, ZeroPoleGain):
         zeros, poles, gain = model.exact("zeros"), model.exact("poles"), model.exact("gain")
-        pairs = [[(product(zeros[i][j]) * fraction(gain[i][j]), product(poles[i][j])) for j in range(m)] for i in range(p)]
+        pairs = [
+            [(product(zeros[i][j]) * fraction(gain[i][j]), product(poles[i][j])) for j in range(m)] for i in range(p)
+        ]
     elif isinstance(model, Sections):
         above, under = fraction(model.exact("gain")), one
         for numerator, denominator in model.exact("sections"):
