@@ -97,7 +97,8 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
 def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float] | None) -> list[Claim]:
     """Compare as evaluated, dead times included: over a band that was asked for, or where different dead times let the
     difference turn for ever."""
-    from realize.verification.conversion import _frobenius, whole_band
+    from realize.verification.bands import whole_band
+    from realize.verification.pair import frobenius
     from realize.verification.search import Band, largest, seeds
 
     view, other = view_of(first), view_of(second)
@@ -113,10 +114,10 @@ def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float
     def difference(x: np.ndarray) -> np.ndarray:
         points = first.time.points(x)
         with np.errstate(invalid="ignore", over="ignore"):
-            return _frobenius(np.abs(first.evaluate(points) - second.evaluate(points)))
+            return frobenius(np.abs(first.evaluate(points) - second.evaluate(points)))
 
     def size(x: np.ndarray) -> np.ndarray:
-        return _frobenius(np.abs(first.evaluate(first.time.points(x))))
+        return frobenius(np.abs(first.evaluate(first.time.points(x))))
 
     def relative(x: np.ndarray) -> np.ndarray:
         above, below = difference(x), size(x)

@@ -17,7 +17,7 @@ from realize.models import FrequencyResponse, Model, mark
 from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
 from realize.verification import fragility, view_of
-from realize.verification.conversion import whole_band
+from realize.verification.bands import whole_band
 from realize.verification.search import seeds
 
 CLOSED_LOOP = "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."

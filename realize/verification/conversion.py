@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
-from functools import cached_property
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -11,179 +10,53 @@ from numpy.typing import NDArray
 
 from realize.models import Model
 from realize.schema import CLAIMS, Claim, judge
-from realize.verification.proof import LARGEST_DEGREE, Proof
-from realize.verification.search import LIGHT, Band, axis_intervals, dynamic_band, largest, seeds
-from realize.verification.views import NO_DYNAMICS, Dynamics, View, view_of
+from realize.verification.bands import (
+    Interval,
+    channel_band,
+    channel_zeros,
+    common_zeros,
+    finite_at_zero,
+    intervals_of,
+    light_zeros,
+    whole_band,
+    zero_channel,
+)
+from realize.verification.pair import Pair, frobenius
+from realize.verification.proof import LARGEST_DEGREE
+from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds
+from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
 
 
-@dataclass(frozen=True)
-class Pair:
-    """Source and result, with their difference evaluated where needed."""
-
-    source: View
-    result: View
-    _proofs: dict[Any, Proof] = field(default_factory=dict, repr=False, compare=False)
-
-    def proof(self, channel: tuple[int, int] | None) -> Proof:
-        """Return the exact polynomials of all channels together, or of one."""
-        if self.source.model.shape == (1, 1):
-            channel = None
-        if channel not in self._proofs:
-            self._proofs[channel] = Proof(*self.scaled, self.source.exact_period, channel)
-        return self._proofs[channel]
-
-    @property
-    def exact(self) -> bool:
-        """True where both are compared in exact arithmetic."""
-        return self.source.fractions is not None and self.result.fractions is not None
-
-    @cached_property
-    def exponent(self) -> int:
-        """Power of two near the source's gain: sizes are counted in it, so that none leaves the range of doubles."""
-        if not self.exact:
-            return 0
-        from realize.kernels.exact.numbers import binary_exponent
-
-        assert self.source.fractions is not None
-        found = []
-        for row in self.source.fractions:
-            for n, d in row:
-                if n:
-                    # the gain at a point of the size of the dynamics, from coefficients alone
-                    e = binary_exponent(self._unit)
-                    top = max(binary_exponent(c) + k * e for k, c in enumerate(n.coeffs()) if c)
-                    bottom = max(binary_exponent(c) + k * e for k, c in enumerate(d.coeffs()) if c)
-                    found.append(top - bottom)
-        return max(found, default=0)
-
-    @cached_property
-    def _unit(self) -> Any:
-        from realize.kernels.exact.numbers import fraction
-
-        if self.source.period is not None:
-            return fraction(1)
-        sizes = self.source.poles.frequency
-        sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
-        middle = float(np.exp(np.mean(np.log(sizes)))) if sizes.size else 1.0
-        return fraction(middle.as_integer_ratio())
-
-    @cached_property
-    def scaled(self) -> tuple[list[list[Any]], list[list[Any]]]:
-        """The exact fractions of both, numerators divided by 2^exponent."""
-        from realize.kernels.exact.numbers import power_of_two
-
-        assert self.source.fractions is not None and self.result.fractions is not None
-        factor = power_of_two(-self.exponent)
-        first, second = (
-            [[(n * factor, d) for n, d in row] for row in grid]
-            for grid in (self.source.fractions, self.result.fractions)
-        )
-        return first, second
-
-    def sizes(self, w: Array) -> tuple[Array, Array]:
-        """Return |dG| and |G_source| of each channel, in units of 2^exponent: two arrays [k][p][m]."""
-        p, m = self.source.model.shape
-        if self.exact:
-            difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
-            from realize.kernels.exact.evaluation import difference as exact_difference
-
-            first, second = self.scaled
-            for i in range(p):
-                for j in range(m):
-                    found = exact_difference(*first[i][j], *second[i][j], w, self.source.exact_period)
-                    value, reference = found.value, found.reference
-                    # where both leave the range of doubles, their quotient is still known
-                    lost = (reference < _LOW) & (found.relative > 0) & np.isfinite(found.relative)
-                    reference = np.where(lost, _LOW, reference)
-                    value = np.where(lost, np.minimum(found.relative * _LOW, 1e300), value)
-                    difference[:, i, j], size[:, i, j] = value, reference
-            return difference, size
-        first, second = self.source.response(w), self.result.response(w)
-        return np.abs(first - second), np.abs(first)
-
-    @property
-    def identical(self) -> bool:
-        """True where both are one model."""
-        return self.source is self.result
-
-
-#: Sizes below this, in units of the source's gain, are replaced by their quotient.
-_LOW = 1e-280
-
-
-def _frobenius(values: Array) -> Array:
-    """Return the Frobenius norm over the channels, safe against overflow."""
-    largest_entry = values.max(axis=(1, 2), keepdims=True)
-    scale = np.where((largest_entry > 0) & np.isfinite(largest_entry), largest_entry, 1.0)
-    return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]
-
-
-def _finite_at_zero(view: View) -> bool:
-    """True where every channel is finite at zero frequency and some channel is not zero there."""
-    poles = view.poles
-    if poles.s.size and np.any(poles.s == 0):
-        return False
-    if view.fractions is None:
-        return bool(np.any(view.response(np.zeros(1)) != 0))
-    point = 0 if view.period is None else 1
-    return any(n(point) != 0 for row in view.fractions for n, _ in row)
-
-
-def _channel_band(view: View, i: int, j: int) -> Band:
-    zeros, poles = view.channel_roots[i][j]
-    at_origin = bool(np.any(poles.s == 0))
-    if view.fractions is not None:
-        finite = not at_origin and view.fractions[i][j][0](0 if view.period is None else 1) != 0
-    else:
-        finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
-    return dynamic_band(zeros, poles, view.period, finite)
-
-
-def _light_zeros(zeros: Dynamics) -> list[float]:
-    light = (zeros.damping < LIGHT) & (zeros.frequency > 0)
-    return sorted(set(zeros.frequency[light].tolist()))
-
-
-def _common_zeros(view: View) -> Dynamics:
-    """Zeros shared by every channel that is not identically zero."""
-    p, m = view.model.shape
-    lists = [view.channel_roots[i][j][0] for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
-    if not lists:
-        return NO_DYNAMICS
-    if len(lists) == 1:
-        return lists[0]
-    shared = set(lists[0].s.tolist()).intersection(*(set(zeros.s.tolist()) for zeros in lists[1:]))
-    keep = np.array([value in shared for value in lists[0].s.tolist()], dtype=bool)
-    return Dynamics(lists[0].s[keep], lists[0].on_axis[keep])
-
-
-def zero_channel(view: View, i: int, j: int) -> bool:
-    """True where a channel is identically zero (exactly, or at every seed in doubles)."""
-    if view.fractions is not None:
-        return view.fractions[i][j][0].degree() < 0
-    return not np.any(view.response(10.0 ** np.linspace(-3, 3, 7) * 1.0375)[:, i, j])
-
-
-def _relative(pair: Pair, w: Array, lines: list[float], channel: tuple[int, int] | None, peak: float) -> Array:
-    """Return the relative error at w with the divisor of light zeros taken from the edges of their interval."""
-    difference, size = pair.sizes(w)
+def _relative(
+    pair: Pair, w: Array, lines: list[float], channel: tuple[int, int] | None, reference: float, quick: bool
+) -> Array:
+    """Return the error at w relative to the source, light zeros from the edges of their interval, or to a reference."""
+    difference, size = pair.quick_sizes(w) if quick else pair.sizes(w)
     if channel is None:
-        above, below = _frobenius(difference), _frobenius(size)
+        above, below = frobenius(difference), frobenius(size)
     else:
         above, below = difference[:, channel[0], channel[1]], size[:, channel[0], channel[1]]
     for line in lines:
         near = np.abs(w - line) <= LIGHT * line
         if near.any():
-            edges = pair.sizes(np.array([line * (1 - LIGHT), line * (1 + LIGHT)]))[1]
-            edge = _frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
-            below = np.where(near, edge.max(), below)
-    if peak:
-        below = np.full(above.shape, peak)
+            below = np.where(near, pair.edge_gain(line * (1 - LIGHT), line * (1 + LIGHT), channel), below)
+    if reference:
+        below = np.full(above.shape, reference)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         error = above / below
     return np.where(above == 0, 0.0, error)
+
+
+def _largest(
+    pair: Pair, w: Array, band: Band, lines: list[float], channel: tuple[int, int] | None, reference: float = 0.0
+) -> tuple[float, float]:
+    """Return the largest error found and its frequency: the search is quick, the value that it finds exact."""
+    found, where = largest(lambda x: _relative(pair, x, lines, channel, reference, True), w, band, rounds=2)
+    if not pair.exact or not np.isfinite(found) or w.size == 0:
+        return found, where
+    return float(_relative(pair, np.array([where]), lines, channel, reference, False)[0]), where
 
 
 def _note(pair: Pair) -> str:
@@ -196,7 +69,7 @@ def _claimed(
     value: float,
     where: dict[str, Any],
     limit: float | None,
-    intervals: list[tuple[float, float, float | None]],
+    intervals: Sequence[Interval],
     channel: tuple[int, int] | None = None,
 ) -> Claim:
     """Return the claim, proved on the intervals where that is affordable, measured otherwise."""
@@ -214,59 +87,22 @@ def _claimed(
     return judge(name, value, limit=limit, where=where, note=_note(pair))
 
 
-def _intervals(
-    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None
-) -> list[tuple[float, float, float | None]]:
-    """Return the pieces of a band between what is left out, with the divisor of light zeros from their edges."""
-    pieces: list[tuple[float, float, float | None]] = [(0.0, 0.0, None)] if band.zero else []
-    cuts = sorted(
-        (max(low, band.low), min(high, band.high)) for low, high in band.left_out if high > band.low and low < band.high
-    )
-    start = band.low
-    spans = []
-    for low, high in cuts:
-        if low > start:
-            spans.append((start, low))
-        start = max(start, high)
-    if start < band.high:
-        spans.append((start, band.high))
-    for low, high in spans:
-        begin = low
-        for line in lines:
-            left, right = line * (1 - LIGHT), line * (1 + LIGHT)
-            if right <= begin or left >= high:
-                continue
-            if left > begin:
-                pieces.append((begin, left, None))
-            edges = pair.sizes(np.array([left, right]))[1]
-            edge = _frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
-            pieces.append((max(left, begin), min(right, high), float(edge.max()) * (1 - 2.0**-30)))
-            begin = right
-        if begin < high:
-            pieces.append((begin, high, None))
-    return pieces
-
-
 def response_error(pair: Pair, limit: float | None = None) -> Claim:
     """Return the claim `response-error`."""
     view = pair.source
     p, m = view.model.shape
-    bands = [_channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    bands = [channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
     if not bands:
         bands = [Band(0.1, 10.0, True)]
     band = Band(
-        min(b.low for b in bands), max(b.high for b in bands), _finite_at_zero(view), axis_intervals(view.poles)
+        min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles)
     )
-    zeros = _common_zeros(view)
-    lines = _light_zeros(zeros)
-    w = seeds(band, zeros, view.poles, pair.result.poles, *_channel_zeros(view))
-    value, where = largest(lambda x: _relative(pair, x, lines, None, 0.0), w, band)
-    intervals = _intervals(pair, band, lines, None) if pair.exact else []
+    zeros = common_zeros(view)
+    lines = light_zeros(zeros)
+    w = seeds(band, zeros, view.poles, pair.result.rough_poles, *channel_zeros(view))
+    value, where = _largest(pair, w, band, lines, None)
+    intervals = intervals_of(pair, band, lines, None) if pair.exact else []
     return _claimed("response-error", pair, value, {"frequency": where}, limit, intervals)
-
-
-def _channel_zeros(view: View) -> list[Dynamics]:
-    return [zeros for row in view.channel_roots for zeros, _ in row]
 
 
 def channel_error(pair: Pair, limit: float | None = None) -> Claim:
@@ -284,21 +120,17 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 reference = gain
                 band = whole_band(view) if view.poles.s.size else Band(0.1, 10.0)
                 lines: list[float] = []
-                w = seeds(band, view.poles, pair.result.poles)
-                intervals = (
-                    [(low, high, gain) for low, high, _ in _intervals(pair, band, [], (i, j))] if pair.exact else []
-                )
+                w = seeds(band, view.poles, pair.result.rough_poles)
+                intervals: list[Interval] = []
+                if pair.exact:
+                    intervals = [(low, high, gain) for low, high, _ in intervals_of(pair, band, [], (i, j))]
             else:
-                band = _channel_band(view, i, j)
+                band = channel_band(view, i, j)
                 zeros, poles = view.channel_roots[i][j]
-                lines = _light_zeros(zeros)
-                w = seeds(band, zeros, poles, pair.result.channel_roots[i][j][1])
-                intervals = _intervals(pair, band, lines, (i, j)) if pair.exact else []
-            value, where = largest(
-                lambda x, c=(i, j), z=lines, r=reference: _relative(pair, x, z, c, r),
-                w,
-                band,  # type: ignore[misc]
-            )
+                lines = light_zeros(zeros)
+                w = seeds(band, zeros, poles, pair.result.rough_poles)
+                intervals = intervals_of(pair, band, lines, (i, j)) if pair.exact else []
+            value, where = _largest(pair, w, band, lines, (i, j), reference)
             place = {"frequency": where, "output": i, "input": j}
             claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
             if worst is None or _total(claim) > _total(worst):
@@ -314,34 +146,13 @@ def _total(claim: Claim) -> float:
     return claim.value + (claim.uncertainty or 0.0)
 
 
-def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Band:
-    """Return the dynamic band of all channels together, widened by a factor; zero included, axis poles left out.
-
-    Parameters
-    ----------
-    other : View, optional
-        The band covers the poles and zeros of this model too.
-    """
-    zeros, poles = NO_DYNAMICS, view.poles
-    for part in _channel_zeros(view):
-        zeros = zeros.merged(part)
-    at_origin = bool(np.any(poles.s == 0))
-    band = dynamic_band(zeros, poles, view.period, not at_origin)
-    low, high = band.low, band.high
-    if other is not None:
-        extra = dynamic_band(NO_DYNAMICS, other.poles, view.period, True)
-        if np.any(other.poles.frequency > 0):
-            low, high = min(low, extra.low), max(high, extra.high)
-    top = np.pi / view.period if view.period is not None else np.inf
-    low = low / margin if not at_origin else low
-    return Band(max(low, 1e-300), min(high * margin, top, 1e300), not at_origin, band.left_out)
-
-
 def peak_gain(pair: Pair) -> tuple[float, float]:
     """Return the largest Frobenius gain of the source found, and its frequency; the limit at infinity counts."""
     band = whole_band(pair.source)
-    w = seeds(band, pair.source.poles, *_channel_zeros(pair.source))
-    gain, where = largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
+    w = seeds(band, pair.source.poles, *channel_zeros(pair.source))
+    gain, where = largest(lambda x: frobenius(pair.quick_sizes(x)[1]), w, band, rounds=2)
+    if pair.exact and np.isfinite(gain):
+        gain = float(frobenius(pair.sizes(np.array([where]))[1])[0])
     limit = _at_infinity(pair)[1]
     return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)
 
@@ -375,21 +186,20 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     improper = not np.isfinite(end_gain)
     band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source, other=pair.result)
     if improper:
-        w = seeds(band, pair.source.poles)
-        gain, _ = largest(lambda x: _frobenius(pair.sizes(x)[1]), w, band)
-    w = seeds(band, pair.source.poles, pair.result.poles)
-    value, where = largest(lambda x: _frobenius(pair.sizes(x)[0]), w, band)
+        gain, _ = largest(lambda x: frobenius(pair.sizes(x)[1]), seeds(band, pair.source.poles), band)
+    w = seeds(band, pair.source.poles, pair.result.rough_poles)
+    value, where = _largest(pair, w, band, [], None, 1.0)
     place: dict[str, Any] = {"frequency": where}
     if not improper and end_difference > value:
         value, place = end_difference, {"frequency": None}
     error = value / gain if gain > 0 else (0.0 if value == 0 else np.inf)
     if improper or gain == 0:
-        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, band, [], None)]
+        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in intervals_of(pair, band, [], None)]
     else:
         # a pole at the origin leaves out what is below the dynamic band
         start = band.low if np.any(pair.source.poles.s == 0) else 0.0
         full = Band(start, np.inf, False, band.left_out)
-        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in _intervals(pair, full, [], None)]
+        intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in intervals_of(pair, full, [], None)]
     if not np.isfinite(gain):
         intervals = []
     return _claimed(

@@ -10,8 +10,9 @@ from realize.kernels.lyapunov import NotStable
 from realize.models import Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import Claim, judge
-from realize.verification.conversion import Pair, whole_band
+from realize.verification.bands import whole_band
 from realize.verification.fragility import fragility
+from realize.verification.pair import Pair
 from realize.verification.search import largest, seeds
 from realize.verification.views import view_of
 

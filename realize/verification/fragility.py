@@ -27,6 +27,8 @@ ComplexArray = NDArray[np.complex128]
 _U = np.finfo(float).eps / 2
 #: From this order one Schur form serves all frequencies.
 SCHUR_FROM = 60
+#: Up to this order all frequencies are solved at once.
+SMALL = 12
 
 
 def fragility(model: Model, frequency: Array) -> float | None:
@@ -110,6 +112,10 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
     if n > 200:
         points = points[:: max(1, points.size // 40)]
     A, B, C, E = balanced_states(model.A, model.B, model.C, model.E)
+    if n <= SMALL:
+        together = _together(A, B, C, model.D, E, points)
+        if together is not None:
+            return together
     a, b, c = np.abs(A), np.abs(B), np.abs(C)
     result = np.empty(points.size)
     for k, (s, right, left) in enumerate(_solutions(A, B, C, E, points)):
@@ -124,6 +130,25 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
         size = np.linalg.norm(value)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result
+
+
+def _together(
+    A: Array, B: Array, C: Array, D: Array, E: Array | None, points: ComplexArray
+) -> Array | None:
+    """Return the relative changes of a small model at all points at once, or None if a point is a pole."""
+    n = A.shape[0]
+    pencil = points[:, None, None] * (np.eye(n) if E is None else E) - A
+    try:
+        inverse = np.linalg.solve(pencil, np.broadcast_to(np.eye(n), pencil.shape))
+    except np.linalg.LinAlgError:
+        return None
+    right, left = inverse @ B, C @ inverse
+    value = C @ right + D
+    row, column = np.abs(left), np.abs(right)
+    change = row @ np.abs(B) + row @ np.abs(A) @ column + np.abs(C) @ column + np.abs(D)
+    if E is not None:
+        change = change + np.abs(points)[:, None, None] * (row @ np.abs(E) @ column)
+    return _U * _norm(change) / _norm(np.abs(value))
 
 
 def _solutions(

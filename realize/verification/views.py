@@ -159,6 +159,14 @@ class View:
         return Dynamics(np.array(values, dtype=complex), np.array([axis[v] for v in values], dtype=bool))
 
     @cached_property
+    def rough_poles(self) -> Dynamics:
+        """The poles in double arithmetic, good enough to look beside; exact ones where doubles cannot hold the model."""
+        if self.model.beyond_doubles:
+            return self.poles
+        values = double_poles(self.model)
+        return dynamics_of(values, np.zeros(values.size, dtype=bool), self.period)
+
+    @cached_property
     def cancelled_unstable(self) -> int:
         """How many poles of a single channel, not strictly stable, cancel exactly with zeros."""
         if self.fractions is None or self.model.shape != (1, 1):

@@ -1,0 +1,117 @@
+"""Bands of frequencies of a view: dynamic bands, what is left out, light zeros and their intervals."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from realize.verification.pair import Pair
+from realize.verification.search import LIGHT, Band, dynamic_band
+from realize.verification.views import NO_DYNAMICS, Dynamics, View
+
+#: Low end, high end (rad/s), and the gain to divide by; None: the source's own at each frequency.
+Interval = tuple[float, float, float | None]
+
+
+def finite_at_zero(view: View) -> bool:
+    """True where every channel is finite at zero frequency and some channel is not zero there."""
+    poles = view.poles
+    if poles.s.size and np.any(poles.s == 0):
+        return False
+    if view.fractions is None:
+        return bool(np.any(view.response(np.zeros(1)) != 0))
+    point = 0 if view.period is None else 1
+    return any(n(point) != 0 for row in view.fractions for n, _ in row)
+
+
+def channel_band(view: View, i: int, j: int) -> Band:
+    zeros, poles = view.channel_roots[i][j]
+    at_origin = bool(np.any(poles.s == 0))
+    if view.fractions is not None:
+        finite = not at_origin and view.fractions[i][j][0](0 if view.period is None else 1) != 0
+    else:
+        finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
+    return dynamic_band(zeros, poles, view.period, finite)
+
+
+def light_zeros(zeros: Dynamics) -> list[float]:
+    light = (zeros.damping < LIGHT) & (zeros.frequency > 0)
+    return sorted(set(zeros.frequency[light].tolist()))
+
+
+def common_zeros(view: View) -> Dynamics:
+    """Zeros shared by every channel that is not identically zero."""
+    p, m = view.model.shape
+    lists = [view.channel_roots[i][j][0] for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    if not lists:
+        return NO_DYNAMICS
+    if len(lists) == 1:
+        return lists[0]
+    shared = set(lists[0].s.tolist()).intersection(*(set(zeros.s.tolist()) for zeros in lists[1:]))
+    keep = np.array([value in shared for value in lists[0].s.tolist()], dtype=bool)
+    return Dynamics(lists[0].s[keep], lists[0].on_axis[keep])
+
+
+def zero_channel(view: View, i: int, j: int) -> bool:
+    """True where a channel is identically zero (exactly, or at every seed in doubles)."""
+    if view.fractions is not None:
+        return view.fractions[i][j][0].degree() < 0
+    return not np.any(view.response(10.0 ** np.linspace(-3, 3, 7) * 1.0375)[:, i, j])
+
+
+def intervals_of(
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None
+) -> list[Interval]:
+    """Return the pieces of a band between what is left out, with the divisor of light zeros from their edges."""
+    pieces: list[Interval] = [(0.0, 0.0, None)] if band.zero else []
+    cuts = sorted(
+        (max(low, band.low), min(high, band.high)) for low, high in band.left_out if high > band.low and low < band.high
+    )
+    start = band.low
+    spans = []
+    for low, high in cuts:
+        if low > start:
+            spans.append((start, low))
+        start = max(start, high)
+    if start < band.high:
+        spans.append((start, band.high))
+    for low, high in spans:
+        begin = low
+        for line in lines:
+            left, right = line * (1 - LIGHT), line * (1 + LIGHT)
+            if right <= begin or left >= high:
+                continue
+            if left > begin:
+                pieces.append((begin, left, None))
+            gain = pair.edge_gain(left, right, channel)
+            pieces.append((max(left, begin), min(right, high), gain * (1 - 2.0**-30)))
+            begin = right
+        if begin < high:
+            pieces.append((begin, high, None))
+    return pieces
+
+
+def channel_zeros(view: View) -> list[Dynamics]:
+    return [zeros for row in view.channel_roots for zeros, _ in row]
+
+
+def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Band:
+    """Return the dynamic band of all channels together, widened by a factor; zero included, axis poles left out.
+
+    Parameters
+    ----------
+    other : View, optional
+        The band covers the poles and zeros of this model too.
+    """
+    zeros, poles = NO_DYNAMICS, view.poles
+    for part in channel_zeros(view):
+        zeros = zeros.merged(part)
+    at_origin = bool(np.any(poles.s == 0))
+    band = dynamic_band(zeros, poles, view.period, not at_origin)
+    low, high = band.low, band.high
+    if other is not None:
+        extra = dynamic_band(NO_DYNAMICS, other.rough_poles, view.period, True)
+        if np.any(other.rough_poles.frequency > 0):
+            low, high = min(low, extra.low), max(high, extra.high)
+    top = np.pi / view.period if view.period is not None else np.inf
+    low = low / margin if not at_origin else low
+    return Band(max(low, 1e-300), min(high * margin, top, 1e300), not at_origin, band.left_out)

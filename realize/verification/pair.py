@@ -1,0 +1,183 @@
+"""Two models side by side: the size of their difference at any frequency, exact where affordable."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from realize.verification.proof import Proof
+from realize.verification.quick import Moduli
+from realize.verification.views import View
+
+Array = NDArray[np.float64]
+
+
+#: Sizes below this, in units of the source's gain, are replaced by their quotient.
+_LOW = 1e-280
+#: Quick values with a larger bound on their relative error are replaced by exact ones.
+_DOUBTFUL = 0.01
+
+
+@dataclass(frozen=True)
+class Pair:
+    """Source and result, with their difference evaluated where needed."""
+
+    source: View
+    result: View
+    _proofs: dict[Any, Any] = field(default_factory=dict, repr=False, compare=False)
+
+    def proof(self, channel: tuple[int, int] | None) -> Proof:
+        """Return the exact polynomials of all channels together, or of one."""
+        if self.source.model.shape == (1, 1):
+            channel = None
+        if channel not in self._proofs:
+            self._proofs[channel] = Proof(*self.scaled, self.source.exact_period, channel)
+        return self._proofs[channel]
+
+    @property
+    def exact(self) -> bool:
+        """True where both are compared in exact arithmetic."""
+        return self.source.fractions is not None and self.result.fractions is not None
+
+    @cached_property
+    def exponent(self) -> int:
+        """Power of two near the source's gain: sizes are counted in it, so that none leaves the range of doubles."""
+        if not self.exact:
+            return 0
+        from realize.kernels.exact.numbers import binary_exponent
+
+        assert self.source.fractions is not None
+        found = []
+        for row in self.source.fractions:
+            for n, d in row:
+                if n:
+                    # the gain at a point of the size of the dynamics, from coefficients alone
+                    e = binary_exponent(self._unit)
+                    top = max(binary_exponent(c) + k * e for k, c in enumerate(n.coeffs()) if c)
+                    bottom = max(binary_exponent(c) + k * e for k, c in enumerate(d.coeffs()) if c)
+                    found.append(top - bottom)
+        return max(found, default=0)
+
+    @cached_property
+    def _unit(self) -> Any:
+        from realize.kernels.exact.numbers import fraction
+
+        if self.source.period is not None:
+            return fraction(1)
+        sizes = self.source.poles.frequency
+        sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
+        middle = float(np.exp(np.mean(np.log(sizes)))) if sizes.size else 1.0
+        return fraction(middle.as_integer_ratio())
+
+    @cached_property
+    def scaled(self) -> tuple[list[list[Any]], list[list[Any]]]:
+        """The exact fractions of both, numerators divided by 2^exponent."""
+        from realize.kernels.exact.numbers import power_of_two
+
+        assert self.source.fractions is not None and self.result.fractions is not None
+        factor = power_of_two(-self.exponent)
+        first, second = (
+            [[(n * factor, d) for n, d in row] for row in grid]
+            for grid in (self.source.fractions, self.result.fractions)
+        )
+        return first, second
+
+    def sizes(self, w: Array) -> tuple[Array, Array]:
+        """Return |dG| and |G_source| of each channel, in units of 2^exponent: two arrays [k][p][m]."""
+        p, m = self.source.model.shape
+        if self.exact:
+            difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
+            from realize.kernels.exact.evaluation import difference as exact_difference
+
+            first, second = self.scaled
+            for i in range(p):
+                for j in range(m):
+                    found = exact_difference(*first[i][j], *second[i][j], w, self.source.exact_period)
+                    value, reference = found.value, found.reference
+                    # where both leave the range of doubles, their quotient is still known
+                    lost = (reference < _LOW) & (found.relative > 0) & np.isfinite(found.relative)
+                    reference = np.where(lost, _LOW, reference)
+                    value = np.where(lost, np.minimum(found.relative * _LOW, 1e300), value)
+                    difference[:, i, j], size[:, i, j] = value, reference
+            return difference, size
+        first, second = self.source.response(w), self.result.response(w)
+        return np.abs(first - second), np.abs(first)
+
+    def edge_gain(self, low: float, high: float, channel: tuple[int, int] | None) -> float:
+        """Return the larger gain of the source at the two ends of an interval, in units of 2^exponent."""
+        key = (low, high, channel)
+        if key not in self._proofs:
+            edges = self.sizes(np.array([low, high]))[1]
+            self._proofs[key] = float((frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]).max())
+        return self._proofs[key]
+
+    @cached_property
+    def _quick(self) -> tuple[Moduli, list[list[tuple[int, int, int, int]]]]:
+        """Moduli of M, N1, D1, D2 of each channel, and the rows where they stand."""
+        from realize.kernels.exact.polynomials import bilinear_image
+
+        rows: dict[int, int] = {}
+        kept: list[Any] = []
+
+        def row(polynomial: Any, degree: int) -> int:
+            key = id(polynomial)
+            if key not in rows:
+                rows[key] = len(kept)
+                images.append(polynomial if self.source.period is None else bilinear_image(polynomial, degree))
+                kept.append(polynomial)
+            return rows[key]
+
+        images: list[Any] = []
+        first, second = self.scaled
+        degree = max(p.degree() for grid in (first, second) for line in grid for pair in line for p in pair)
+        degree = max(degree, 0)
+        table = [
+            [
+                (row(n2 * d1 - n1 * d2, 2 * degree), row(n1, degree), row(d1, degree), row(d2, degree))
+                for (n1, d1), (n2, d2) in zip(one, two, strict=True)
+            ]
+            for one, two in zip(first, second, strict=True)
+        ]
+        unit = 1.0 if self.source.period is not None else float(2.0 ** np.rint(np.log2(float(self._unit))))
+        return Moduli(images, unit), table
+
+    def quick_sizes(self, w: Array) -> tuple[Array, Array]:
+        """Return |dG| and |G_source| as `sizes` does, to about 1 %: in doubles where their rounding bound allows it."""
+        if not self.exact:
+            return self.sizes(w)
+        moduli, table = self._quick
+        p, m = self.source.model.shape
+        with np.errstate(over="ignore", invalid="ignore"):
+            x = w / moduli.unit if self.source.period is None else np.abs(np.tan(w * self.source.period / 2))
+        logarithm, bound = moduli(x)
+        difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
+        doubtful = ~np.isfinite(x)
+        with np.errstate(over="ignore", under="ignore", invalid="ignore"):
+            for i in range(p):
+                for j in range(m):
+                    M, n1, d1, d2 = table[i][j]
+                    difference[:, i, j] = np.exp2(logarithm[M] - logarithm[d1] - logarithm[d2])
+                    size[:, i, j] = np.exp2(logarithm[n1] - logarithm[d1])
+                    zero = self.scaled[0][i][j][0].degree() < 0
+                    for k in (M, d1, d2) if zero else (M, n1, d1, d2):
+                        doubtful |= bound[k] > _DOUBTFUL
+                    doubtful |= ~np.isfinite(difference[:, i, j] + size[:, i, j]) | (size[:, i, j] < _LOW) & (not zero)
+        if doubtful.any():
+            difference[doubtful], size[doubtful] = self.sizes(w[doubtful])
+        return difference, size
+
+    @property
+    def identical(self) -> bool:
+        """True where both are one model."""
+        return self.source is self.result
+
+
+def frobenius(values: Array) -> Array:
+    """Return the Frobenius norm over the channels, safe against overflow."""
+    largest_entry = values.max(axis=(1, 2), keepdims=True)
+    scale = np.where((largest_entry > 0) & np.isfinite(largest_entry), largest_entry, 1.0)
+    return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]

@@ -1,0 +1,98 @@
+"""Moduli of exact polynomials on the axis in double arithmetic, with a rounding bound: where to look, not what is claimed."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+
+#: Bits kept of each coefficient.
+_KEPT = 64
+
+
+def _doubles(polynomial: Any) -> tuple[list[float], float]:
+    """Return coefficients (lowest power first) divided by a power of two near the largest, and log2 of the divisor."""
+    mantissas, exponents = [], []
+    for c in polynomial.numer().coeffs():
+        value = int(c)
+        shift = max(value.bit_length() - _KEPT, 0)
+        mantissas.append(float(value >> shift))
+        exponents.append(shift)
+    below = int(polynomial.denom())
+    shift = max(below.bit_length() - _KEPT, 0)
+    if not mantissas:
+        return [0.0], 0.0
+    m, e = np.frexp(np.array(mantissas))
+    e = e.astype(np.int64) + np.array(exponents, dtype=np.int64)
+    top = int(e[m != 0].max())
+    return np.ldexp(m, e - top).tolist(), top - float(np.log2(float(below >> shift)) + shift)
+
+
+class Moduli:
+    """log2 |p(jw)| of several exact polynomials at once, by Horner's rule for even and odd part.
+
+    Parameters
+    ----------
+    polynomials : sequence of exact polynomials
+        In s; of a sampled model, images under z = (1 + s)/(1 - s), all homogenised as the caller needs.
+    unit : float
+        Frequencies are counted in this (rad/s), a power of two near the middle of the dynamics.
+    """
+
+    def __init__(self, polynomials: Sequence[Any], unit: float) -> None:
+        from realize.kernels.exact.numbers import fraction
+        from realize.kernels.exact.polynomials import stretched
+
+        self.unit = unit
+        factor = fraction(unit.as_integer_ratio())
+        lists = [_doubles(stretched(p, factor) if unit != 1.0 else p) for p in polynomials]
+        length = max(len(c) for c, _ in lists)
+        self.degree = length - 1
+        table = np.zeros((len(lists), length))
+        for k, (c, _) in enumerate(lists):
+            table[k, : len(c)] = c
+        self.exponent = np.array([e for _, e in lists])
+        # p(jx): even powers alternate in sign in the real part, odd ones in the imaginary part
+        sign = np.where(np.arange(length) % 4 < 2, 1.0, -1.0)
+        self._low = _halves(table * sign)
+        reverse = (table * sign)[:, ::-1]
+        self._high = _halves(reverse)
+
+    def __call__(self, x: Array) -> tuple[Array, Array]:
+        """Return log2 |p| and a bound on its relative error, arrays [polynomial][k], at x = w / unit >= 0."""
+        logarithm = np.empty((self.exponent.size, x.size))
+        bound = np.empty_like(logarithm)
+        small = x <= 1
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore", under="ignore"):
+            for part, halves in ((small, self._low), (~small, self._high)):
+                if not part.any():
+                    continue
+                y = x[part] if halves is self._low else 1 / x[part]
+                value, total = _horner(halves, y)
+                logarithm[:, part] = np.log2(value)
+                bound[:, part] = total / value
+            logarithm += self.exponent[:, None]
+            logarithm[:, ~small] += self.degree * np.log2(x[~small])
+        bound *= 8 * (self.degree + 2) * np.finfo(float).eps
+        return logarithm, np.where(np.isnan(bound), np.inf, bound)
+
+
+def _halves(table: Array) -> tuple[Array, Array, Array, Array]:
+    even, odd = np.ascontiguousarray(table[:, 0::2]), np.ascontiguousarray(table[:, 1::2])
+    return even, odd, np.abs(even), np.abs(odd)
+
+
+def _horner(halves: tuple[Array, Array, Array, Array], y: Array) -> tuple[Array, Array]:
+    """Return |even + j y odd| and the sum of the moduli of the terms."""
+    square = y * y
+    sums = []
+    for coefficients in halves:
+        value = np.zeros((coefficients.shape[0], y.size))
+        for k in range(coefficients.shape[1] - 1, -1, -1):
+            value = value * square + coefficients[:, k : k + 1]
+        sums.append(value)
+    return np.hypot(sums[0], y * sums[1]), sums[2] + y * sums[3]
