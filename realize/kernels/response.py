@@ -5,10 +5,10 @@ No function here forms polynomial coefficients of a model that does not have the
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 
 import numpy as np
-import scipy.linalg
 from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
@@ -194,6 +194,8 @@ def state_evaluator(A: Array, B: Array, C: Array, D: Array, E: Array | None) -> 
         sizes = sizes if lower else sizes[::-1]
         return around(lambda points: _block_substitution(a, b, c, sizes, points))
     # upper triangular, read backwards, is lower triangular
+    import scipy.linalg
+
     if E is None:
         T, Q = scipy.linalg.schur(A.astype(complex), output="complex")
         a, b, c = np.ascontiguousarray(T[::-1, ::-1]), (Q.conj().T @ B)[::-1], (C @ Q)[:, ::-1]
@@ -211,9 +213,7 @@ def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Arra
         return A, B, C, E
     if pattern.shape[0] == 0:
         return A, B, C, E
-    # the diagonal does not change with the scale of the states
-    pattern = pattern - np.diag(np.diagonal(pattern))
-    scale = scipy.linalg.lapack.dgebal(pattern, scale=1, permute=0)[3]
+    scale = balancing_scale(pattern)
     if np.all(scale == 1):
         return A, B, C, E
     with np.errstate(over="ignore", under="ignore"):
@@ -228,6 +228,43 @@ def balanced_states(A: Array, B: Array, C: Array, E: Array | None) -> tuple[Arra
             if not np.all(np.isfinite(after)) or np.any((after == 0) != (before == 0)):
                 return A, B, C, E
     return scaled
+
+
+def balancing_scale(pattern: Array) -> Array:
+    """Return powers of two d for which rows and columns of pattern[i, j] d[j] / d[i] have like norms, diagonal aside.
+
+    Parlett & Reinsch 1969, "Balancing a matrix for calculation of eigenvalues and eigenvectors"; without permutation.
+
+    Parameters
+    ----------
+    pattern : (n, n) array
+        Not negative.
+    """
+    n = pattern.shape[0]
+    work = pattern - np.diag(np.diagonal(pattern))
+    if n > DIRECT_SIZE:
+        import scipy.linalg
+
+        return scipy.linalg.lapack.dgebal(work, scale=1, permute=0)[3]
+    scale = np.ones(n)
+    for _ in range(20):
+        rows, columns = work.max(axis=1, initial=0.0), work.max(axis=0, initial=0.0)
+        usable = (rows > 0) & (columns > 0)
+        worst = np.where(usable, np.abs(np.log2(np.where(usable, rows, 1)) - np.log2(np.where(usable, columns, 1))), 0)
+        if worst.max(initial=0.0) <= 2:
+            break
+        for i in np.flatnonzero(worst > 2).tolist():
+            row, column = float(work[i].max()), float(work[:, i].max())
+            # row / f and column * f meet at f = sqrt(row / column); logarithms first: the quotient may overflow
+            step = round((math.log2(row) - math.log2(column)) / 2)
+            if step:
+                factor = math.ldexp(1.0, max(min(step, 1000), -1000))
+                work[i] /= factor
+                work[:, i] *= factor
+                scale[i] *= factor
+        if not (np.all(np.isfinite(work)) and np.all(np.isfinite(scale)) and np.all(scale > 0)):
+            return np.ones(n)
+    return scale
 
 
 def _direct_solve(A: Array, B: Array, C: Array, E: Array | None, points: ComplexArray) -> ComplexArray:

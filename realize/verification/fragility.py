@@ -16,7 +16,6 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 import numpy as np
-import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.kernels.response import balanced_states, scaled_polynomial
@@ -165,6 +164,8 @@ def _solutions(
             except np.linalg.LinAlgError:
                 yield s, None, None
         return
+    import scipy.linalg
+
     if E is None:
         T, Q = scipy.linalg.schur(A.astype(complex), output="complex")
         Z, S = Q, None

@@ -260,13 +260,15 @@ def approximate_roots(polynomial: Any) -> ComplexArray | None:
 
 def double_poles(model: Model) -> ComplexArray:
     """Return the poles in double arithmetic, for models whose exact fractions are too costly."""
-    import scipy.linalg
-
     if isinstance(model, StateSpace):
         from realize.kernels.response import balanced_states
 
         A, _, _, E = balanced_states(model.A, model.B, model.C, model.E)
-        values = scipy.linalg.eigvals(A, E) if E is not None else scipy.linalg.eigvals(A)
+        if E is None:
+            return np.linalg.eigvals(A)
+        import scipy.linalg
+
+        values = scipy.linalg.eigvals(A, E)
         return values[np.isfinite(values)]
     if isinstance(model, PoleResidue):
         return np.asarray(model.poles)
