@@ -48,7 +48,7 @@ def _python(value: Any) -> Fraction:
 
 
 def fractions(model: Model, task: Task) -> Grid:
-    """Exact fractions of each channel; from states, common factors are cancelled unless a common denominator is asked for."""
+    """Exact fractions of each channel; common factors of a state model cancel, unless a common denominator is asked for."""
     from realize.kernels.exact import states
     from realize.kernels.exact.polynomials import reduce_fraction
 
@@ -91,8 +91,8 @@ def _rounded(values: list[Any]) -> tuple[list[float], dict[int, str]]:
             text = decimal_string(value, DIGITS)
             if abs(int(text.partition("e")[2] or 0)) > MAX_EXPONENT:
                 raise Refused(
-                    f"a number of the result would be {text[:6]}e{text.partition('e')[2]}, beyond what a model file can hold; "
-                    "keep state space, zero-pole-gain or sections, or scale time and gain first"
+                    f"a number of the result would be {text[:6]}e{text.partition('e')[2]}, beyond what a model file can "
+                    "hold; keep state space, zero-pole-gain or sections, or scale time and gain first"
                 )
             strings[k] = text
         doubles.append(number)
@@ -159,7 +159,8 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
 
 def zero_pole_gain(factors: list[list[Factors]], task: Task) -> ZeroPoleGain:
     """Zero-pole-gain model; gains beyond the doubles become decimal strings."""
-    gains, decimals = [], {}
+    gains: list[list[float]] = []
+    decimals: dict[tuple[int, ...], str] = {}
     for i, row in enumerate(factors):
         doubles, strings = _rounded([channel.gain for channel in row])
         gains.append(doubles)
@@ -195,8 +196,8 @@ def pole_residue(grid: Grid, task: Task) -> PoleResidue:
                         raise Refused("a pole or residue lies beyond the range of doubles; scale time or gain first")
                     key = (root.value, power)
                     entries.setdefault(key, np.zeros((p, m), dtype=complex))[i, j] += value
-            for power, value in enumerate(reversed(polynomial)):
-                direct.setdefault(power, np.zeros((p, m)))[i, j] = _rounded([value])[0][0]
+            for power, term in enumerate(reversed(polynomial)):
+                direct.setdefault(power, np.zeros((p, m)))[i, j] = _rounded([term])[0][0]
     degree = max(direct, default=0)
     parts = [direct.get(power, np.zeros((p, m))) for power in range(degree, -1, -1)]
     if not np.all(np.isfinite(parts)):
@@ -235,7 +236,7 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
     return Sections(
         sections=np.array(rows).reshape(len(rows), 2, 3),
         gain=gain,
-        decimals={"sections": decimals, "gain": {(): text for text in strings.values()}},
+        decimals={"sections": decimals, "gain": {(): strings[0]} if strings else {}},
         **task.model.common(),
     )
 
@@ -414,8 +415,8 @@ def residues_in_doubles(model: Model, task: Task) -> PoleResidue:
         condition = float(np.max(1 / np.abs(overlap)))
     if not condition < 1e10:
         raise Refused(
-            f"the eigenvectors have condition {condition:.1e}: poles so close together that their residues have no correct digit; "
-            "keep the state space, or reduce the model first"
+            f"the eigenvectors have condition {condition:.1e}: poles so close together that their residues have no correct "
+            "digit; keep the state space, or reduce the model first"
         )
     into = (left.conj().T @ B) / overlap[:, None]
     out = C @ right

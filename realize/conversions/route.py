@@ -162,8 +162,8 @@ def plan_route(task: Task) -> list[Row]:
                 count += 1
                 heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
     raise Refused(
-        f"order {task.model.order} with {task.model.shape[1]} inputs and {task.model.shape[0]} outputs is beyond what exact "
-        f"arithmetic can do in seconds, and a {task.to} of that size could not be trusted in doubles; "
+        f"order {task.model.order} with {task.model.shape[1]} inputs and {task.model.shape[0]} outputs is beyond what "
+        f"exact arithmetic can do in seconds, and a {task.to} of that size could not be trusted in doubles; "
         + (
             "ask for --to pole-residue, or --to state-space --form modal, or reduce the model first"
             if isinstance(task.model, StateSpace)

@@ -8,9 +8,9 @@ poles, for sampled models, so that t = z - c does not cancel near the unit circl
 with t^2 + d1 t + d0 the denominator: the series connection then multiplies by powers of two only and needs no rounding.
 Zeros at the origin and on the axis stay exactly where they are, since c1 = -d1 and c0 = -d0/k are then exact.
 Sampled sections with a zero at z = -1 or 1 beside another real zero r use B = (A - r I) b, D = C b instead, for which
-the numerator is (z - r) C adj(zI - A) b: with C made of powers of two the zero at -1 or 1 is exact, however near to each
-other the poles and 1 are. Such sections come first, and the mantissa of the gain enters after them; every product in
-the assembled matrices is exact.
+the numerator is (z - r) C adj(zI - A) b: with C made of powers of two the zero at -1 or 1 is exact, however near to
+each other the poles and 1 are. Such sections come first, and the mantissa of the gain enters after them; every product
+in the assembled matrices is exact.
 
 A section with as many zeros as poles forms its numerator as (numerator - denominator) + denominator: the relative
 rounding error near a zero is multiplied by |denominator| / |numerator's terms|. Zeros are therefore given to poles that
@@ -288,8 +288,8 @@ def _near_end(section: Section, sampled: bool) -> bool:
 def _tuned(k: Fraction, b: Fraction, d0: Fraction, n0: Fraction, e1: Fraction, t: complex) -> Fraction:
     """Return a coupling k for which the rounded numerator is nearly zero at the zero t (about the centre).
 
-    The constant term of the numerator is k (d0/k rounded) + k b c0 with c0 rounded: its error is a different fraction of
-    a rounding for each double k, so that among some hundred one is found that is right to several bits more. The
+    The constant term of the numerator is k (d0/k rounded) + k b c0 with c0 rounded: its error is a different fraction
+    of a rounding for each double k, so that among some hundred one is found that is right to several bits more. The
     response then is what the numbers say it is, to more digits than each of them has.
     """
     best, found = k, math.inf

@@ -54,6 +54,6 @@ def controllable_companion(
 def observable_companion(
     numerators: list[list[Fraction]], denominator: list[Fraction]
 ) -> tuple[Array, Array, Array, Array]:
-    """Return A, B, C, D in observable companion form for one output: the transpose; numerators are those of the inputs."""
+    """Return A, B, C, D in observable companion form for one output; numerators are those of the inputs."""
     A, B, C, D = controllable_companion(numerators, denominator)
     return A.T.copy(), C.T.copy(), B.T.copy(), D.T.copy()

@@ -9,7 +9,7 @@ Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 
-def _exponents(sizes: Array) -> NDArray[np.int64]:
+def _exponents(sizes: Array | np.float64) -> NDArray[np.int64]:
     """Return e with 2^(e-1) <= size < 2^e, 0 for 0."""
     return np.where(sizes > 0, np.frexp(sizes)[1], 0).astype(np.int64)
 
@@ -28,9 +28,9 @@ def _factor(residue: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
     if not np.any(size):
         return np.zeros((p, 0), dtype=complex), np.zeros((0, m), dtype=complex)
     if p == 1 or m == 1:
-        half = _powers(_exponents(size.max()) // 2)
-        one = np.full((1, 1), half, dtype=complex)
-        return (residue / half, one) if m == 1 else (one, residue / half)
+        root_size = float(_powers(_exponents(size.max()) // 2))
+        one = np.full((1, 1), root_size, dtype=complex)
+        return (residue / root_size, one) if m == 1 else (one, residue / root_size)
     rows, columns = np.zeros(p, dtype=np.int64), np.zeros(m, dtype=np.int64)
     scaled = size
     for _ in range(3):
@@ -109,7 +109,7 @@ def modal_states(
 
 
 def _chain(pole: complex, laurent: ComplexArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
-    """Return the chain a = pole I + shift, b = last unit vector, c = residues, for one input: sum laurent[k]/(s-pole)^(k+1)."""
+    """Return a = pole I + shift, b = last unit vector, c = residues: sum laurent[k]/(s - pole)^(k+1) for one input."""
     filled = [k for k in range(laurent.shape[0]) if np.any(laurent[k] != 0)]
     size = filled[-1] + 1 if filled else 0
     a = pole * np.eye(size, dtype=complex) + np.eye(size, k=1)

@@ -58,9 +58,7 @@ def zero_channel(view: View, i: int, j: int) -> bool:
     return not np.any(view.response(10.0 ** np.linspace(-3, 3, 7) * 1.0375)[:, i, j])
 
 
-def intervals_of(
-    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None
-) -> list[Interval]:
+def intervals_of(pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None) -> list[Interval]:
     """Return the pieces of a band between what is left out, with the divisor of light zeros from their edges."""
     pieces: list[Interval] = [(0.0, 0.0, None)] if band.zero else []
     cuts = sorted(

@@ -94,9 +94,7 @@ def response_error(pair: Pair, limit: float | None = None) -> Claim:
     bands = [channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
     if not bands:
         bands = [Band(0.1, 10.0, True)]
-    band = Band(
-        min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles)
-    )
+    band = Band(min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles))
     zeros = common_zeros(view)
     lines = light_zeros(zeros)
     w = seeds(band, zeros, view.poles, pair.result.rough_poles, *channel_zeros(view))

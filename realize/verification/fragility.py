@@ -6,7 +6,8 @@ With u = 2^-53 and each number changed by at most u times itself, at one frequen
     zero-pole-gain       u (1 + sum (|Re z| + |Im z|) / |s - z| + the same for poles)
     pole-residue         u (sum |r| / |s - p|^k + k |r| (|Re p| + |Im p|) / |s - p|^(k+1) + sum |d_k s^k|) / |G|
     sections             the sum over the sections of the transfer function's formula
-    state space          u (|C X| |B| + |C X| |A| |X B| + |C| |X B| + |D| (+ |s| |C X| |E| |X B|)) / |G|,  X = (sE - A)^-1
+    state space          u (|C X| |B| + |C X| |A| |X B| + |C| |X B| + |D| (+ |s| |C X| |E| |X B|)) / |G|,
+                         X = (sE - A)^-1
 
 in Frobenius norms over the channels; the largest value over the frequencies of the band is reported.
 """
@@ -131,9 +132,7 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
     return result
 
 
-def _together(
-    A: Array, B: Array, C: Array, D: Array, E: Array | None, points: ComplexArray
-) -> Array | None:
+def _together(A: Array, B: Array, C: Array, D: Array, E: Array | None, points: ComplexArray) -> Array | None:
     """Return the relative changes of a small model at all points at once, or None if a point is a pole."""
     n = A.shape[0]
     pencil = points[:, None, None] * (np.eye(n) if E is None else E) - A

@@ -64,7 +64,7 @@ def worst_misfit(part: Misfit, limit: float | None = None) -> Claim:
     peak = H.max(axis=0)
     peak = np.where(peak > 0, peak, H.max() or 1.0)
     relative = np.abs(part.difference) / peak
-    index = np.unravel_index(int(np.argmax(relative)), relative.shape)
+    index = tuple(int(i) for i in np.unravel_index(int(np.argmax(relative)), relative.shape))
     value = float(relative[index])
     return judge("worst-misfit", value, limit=limit, uncertainty=_rounding(value), where=_where(part, index))
 

@@ -93,10 +93,11 @@ class Pair:
             difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
             from realize.kernels.exact.evaluation import difference as exact_difference
 
-            first, second = self.scaled
+            one, two = self.scaled
             for i in range(p):
                 for j in range(m):
-                    found = exact_difference(*first[i][j], *second[i][j], w, self.source.exact_period)
+                    (n1, d1), (n2, d2) = one[i][j], two[i][j]
+                    found = exact_difference(n1, d1, n2, d2, w, self.source.exact_period)
                     value, reference = found.value, found.reference
                     # where both leave the range of doubles, their quotient is still known
                     lost = (reference < _LOW) & (found.relative > 0) & np.isfinite(found.relative)

@@ -1,4 +1,4 @@
-"""Moduli of exact polynomials on the axis in double arithmetic, with a rounding bound: where to look, not what is claimed."""
+"""Moduli of exact polynomials on the axis in double arithmetic, with a rounding bound: where to look, no claim."""
 
 from __future__ import annotations
 

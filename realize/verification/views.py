@@ -160,7 +160,7 @@ class View:
 
     @cached_property
     def rough_poles(self) -> Dynamics:
-        """The poles in double arithmetic, good enough to look beside; exact ones where doubles cannot hold the model."""
+        """The poles in doubles, good enough to look beside; exact ones where doubles cannot hold the model."""
         if self.model.beyond_doubles:
             return self.poles
         values = double_poles(self.model)
@@ -265,7 +265,7 @@ def double_poles(model: Model) -> ComplexArray:
 
         A, _, _, E = balanced_states(model.A, model.B, model.C, model.E)
         if E is None:
-            return np.linalg.eigvals(A)
+            return np.linalg.eigvals(A).astype(complex)
         import scipy.linalg
 
         values = scipy.linalg.eigvals(A, E)
@@ -379,8 +379,12 @@ def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
                     values[i][j] += re * c - im * d
         return values
     elif isinstance(model, StateSpace):
-        response = states.response_at(*(model.exact(name) for name in "ABCDE"), x, zero)
-        return None if response is None else [[value[0] for value in row] for row in response]
+        A, B, C, D, E = (model.exact(name) for name in "ABCDE")
+        try:
+            response = states.response_at(A, B, C, D, E, x, zero)
+        except ZeroDivisionError:
+            return None
+        return [[value[0] for value in row] for row in response]
     else:
         raise TypeError(model.kind)
     if any(under == 0 for row in pairs for _, under in row):
