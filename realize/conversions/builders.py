@@ -48,7 +48,7 @@ def _python(value: Any) -> Fraction:
 
 
 def fractions(model: Model, task: Task) -> Grid:
-    """Exact fractions of each channel; common factors of a state model cancel, unless a common denominator is asked for."""
+    """Exact fractions of each channel; those of a state model are reduced, unless a common denominator is asked for."""
     from realize.kernels.exact import states
     from realize.kernels.exact.polynomials import reduce_fraction
 
@@ -91,8 +91,8 @@ def _rounded(values: list[Any]) -> tuple[list[float], dict[int, str]]:
             text = decimal_string(value, DIGITS)
             if abs(int(text.partition("e")[2] or 0)) > MAX_EXPONENT:
                 raise Refused(
-                    f"a number of the result would be {text[:6]}e{text.partition('e')[2]}, beyond what a model file can "
-                    "hold; keep state space, zero-pole-gain or sections, or scale time and gain first"
+                    f"a number of the result would be {text[:6]}e{text.partition('e')[2]}, beyond what a model file "
+                    "can hold; keep state space, zero-pole-gain or sections, or scale time and gain first"
                 )
             strings[k] = text
         doubles.append(number)
@@ -415,8 +415,8 @@ def residues_in_doubles(model: Model, task: Task) -> PoleResidue:
         condition = float(np.max(1 / np.abs(overlap)))
     if not condition < 1e10:
         raise Refused(
-            f"the eigenvectors have condition {condition:.1e}: poles so close together that their residues have no correct "
-            "digit; keep the state space, or reduce the model first"
+            f"the eigenvectors have condition {condition:.1e}: poles so close together that their residues have no "
+            "correct digit; keep the state space, or reduce the model first"
         )
     into = (left.conj().T @ B) / overlap[:, None]
     out = C @ right

@@ -36,7 +36,7 @@ class Band:
 
 
 def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_at_zero: bool) -> Band:
-    """Return 1/10 of the smallest to 10 times the largest nonzero |pole| or |zero|; about 1 rad/s where there is none."""
+    """Return 1/10 of the smallest to 10 times the largest nonzero |pole| or |zero|; about 1 rad/s without any."""
     sizes = zeros.merged(poles).frequency
     sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
     top = np.pi / period if period is not None else np.inf
