@@ -10,6 +10,7 @@ import scipy.linalg.lapack
 from numpy.typing import NDArray
 
 from realize.kernels.lyapunov import SquareRoots, schur_gramian_factors, square_roots
+from realize.kernels.response import balancing_scale
 
 Array = NDArray[np.float64]
 
@@ -79,10 +80,8 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             border = np.zeros((n + m + p, n + m + p))
             border[:n, :n], border[:n, n : n + m] = np.ldexp(A, -time), np.ldexp(B, -inputs)
             border[n + m :, :n] = np.ldexp(C, -outputs)
-            # the diagonal does not change, but the library counts it; inputs have no row and outputs no column, so they
-            # are left alone
-            np.fill_diagonal(border, 0.0)
-            _, (factor, _) = scipy.linalg.matrix_balance(border, permute=False, separate=True)
+            # inputs have no row and outputs no column, so they are left alone
+            factor = balancing_scale(np.abs(border))
             states = np.frexp(factor[:n])[1].astype(np.int64) - 1
             between = states[None, :] - states[:, None]
             own = _power(A, between)

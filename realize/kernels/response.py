@@ -72,7 +72,10 @@ def _ldexp(values: ComplexArray, exponent: NDArray[np.int64]) -> ComplexArray:
 
 
 def polynomial_ratio(numerator: Scaled, denominator: Scaled, points: ComplexArray) -> ComplexArray:
-    """Return numerator / denominator at complex points; coefficients as mantissas and exponents, highest power first."""
+    """Return numerator / denominator at complex points.
+
+    Coefficients are mantissas and exponents, highest power first.
+    """
     above = scaled_polynomial(numerator, points)
     below = scaled_polynomial(denominator, points)
     return scaled_quotient(above[:2], below[:2])

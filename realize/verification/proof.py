@@ -22,7 +22,7 @@ STEPS = (1 + 2**-9, 1.02, 1.1, 1.5, 3.0)
 #: A value that is this far below one rounding is raised to it first: nobody needs a proof of less.
 SMALLEST = 2.0**-60
 #: Largest degree of the inequality that is tried by default.
-LARGEST_DEGREE = 420
+LARGEST_DEGREE = 500
 
 
 class Proof:
