@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import io
 import json
+import subprocess
+import sys
 from typing import Any
 
 import numpy as np
@@ -11,6 +13,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+import realize.reports
 from realize.reports import compare_table, fit_table, inspect_table, page_for, poles_table, receipt_table
 from realize.reports.look import Page
 from realize.reports.numbers import channel_name, channel_unit, clean, hertz, prefixed, short
@@ -386,3 +389,19 @@ def test_channel_names_and_units() -> None:
     assert channel_unit(data, 1, 0) == "(m/s^2)/(N*m)"
     bare = data.with_(inputs=(), outputs=())
     assert channel_name(bare, 1, 0) == "input 0 → output 1" and channel_unit(bare, 1, 0) == ""
+
+
+def test_a_table_does_not_pay_for_pictures() -> None:
+    code = (
+        "import sys, realize.reports.tables; from realize.reports import receipt_table\n"
+        "assert not {'realize.reports.' + name for name in ('plots', 'panels', 'curves')} & set(sys.modules)"
+    )
+    subprocess.run([sys.executable, "-W", "error", "-c", code], check=True, timeout=60)
+
+
+def test_every_name_of_the_package_is_there() -> None:
+    assert dir(realize.reports) == sorted(realize.reports.__all__)
+    for name in realize.reports.__all__:
+        assert getattr(realize.reports, name) is not None
+    with pytest.raises(AttributeError, match="nothing"):
+        getattr(realize.reports, "no" + "thing")
