@@ -171,7 +171,7 @@ class Oracle:
 
     @classmethod
     def error(cls, source: Model, result: Model, frequency: Sequence[float], *, channels: bool = False) -> float:
-        """Return the largest relative error over frequencies: Frobenius norms over the channels, or the worst channel."""
+        """Return the largest relative error over frequencies, by Frobenius norms or of the worst channel."""
         worst = 0.0
         for w in frequency:
             s = cls.point(source, w)

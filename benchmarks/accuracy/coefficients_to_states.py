@@ -69,9 +69,10 @@ def main() -> None:
         over = error > limit or double > 1e-10 or wrong_order or not end.holds
         count, bad, worst = count + 1, bad + over, max(worst, error / limit)
         if over or "--all" in sys.argv:
+            words = ("  OVER" if over else "") + (" ORDER" if wrong_order else "")
             print(
-                f"{name:44} {model.order:5d} {error:9.1e} {limit:9.1e} {double:9.1e} {str(end.holds):>5} "
-                f"{scipy_error(model):9.1e} {1e3 * seconds:7.1f}{'  OVER' if over else ''}{' ORDER' if wrong_order else ''}"
+                f"{name:44} {model.order:5d} {error:9.1e} {limit:9.1e} {double:9.1e} {end.holds!s:>5} "
+                f"{scipy_error(model):9.1e} {1e3 * seconds:7.1f}{words}"
             )
     print(f"{count} plants, {bad} over a limit, largest error / limit {worst:.3g}")
 

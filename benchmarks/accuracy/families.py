@@ -47,7 +47,7 @@ def exact_product(roots: list[complex]) -> list[Fraction]:
 def coefficients(
     zeros: list[complex], poles: list[complex], gain: float | Fraction, time: realize.TimeBase | None = None
 ) -> realize.TransferFunction:
-    """Return the transfer function with the correctly rounded coefficients of the factors; decimals beyond the doubles."""
+    """Return the transfer function of the factors: coefficients correctly rounded, as decimals beyond the doubles."""
     fields: dict[str, list[float]] = {}
     decimals: dict[str, dict[tuple[int, int, int], str]] = {}
     for name, roots, factor in (("numerator", zeros, Fraction(gain)), ("denominator", poles, Fraction(1))):

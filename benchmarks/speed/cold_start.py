@@ -5,8 +5,8 @@ Two comparisons, each between processes started in turn so that a busy machine d
 ``realize --version``       against ``python -c pass``: at most 80 ms more
 ``realize convert ...``     against ``python -c "import numpy, scipy.linalg"``: at most twice the time
 
-Usage: ``python benchmarks/speed/cold_start.py [--runs N] [--check]``; with ``--check`` the exit status is 1 when a limit
-is not kept.
+Usage: ``python benchmarks/speed/cold_start.py [--runs N] [--check]``; with ``--check`` the exit status is 1 when a
+limit is not kept.
 """
 
 from __future__ import annotations

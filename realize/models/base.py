@@ -283,7 +283,7 @@ class Model:
         return replace(self, **changes)
 
     def common(self) -> dict[str, Any]:
-        """Return what travels unchanged through every step: signals, time, dead time, operating point of the signals."""
+        """Return what every step hands on: time, signals, dead time, operating point of the signals, receipts."""
         offset = self.offset
         if offset is not None and offset.states is not None:
             offset = Offset(offset.inputs, offset.outputs)

@@ -78,7 +78,7 @@ def array(
             if np.any(raw.imag != 0):
                 raise InputError("complex numbers", "real numbers", field=name)
             raw = raw.real
-        values = raw.astype(dtype)
+        values: NDArray[Any] = raw.astype(dtype)
     except (ValueError, TypeError, OverflowError):
         raise InputError(
             "ragged rows or something that is no number", f"{dimensions}-dimensional numbers", field=name

@@ -97,7 +97,7 @@ class PoleResidue(Model):
         decimals = dict(self.decimals.get("direct", {}))
         if depth == 2:
             value = [value]
-            decimals = {(0, *index): text if len(index) == 2 else text for index, text in decimals.items()}
+            decimals = {(0, *index): text for index, text in decimals.items()}
             self._put("decimals", {**self.decimals, "direct": decimals})
         array = checks.array(value, "direct", 3, allow=decimals)
         if array.shape[0] == 0:

@@ -40,7 +40,7 @@ class Sections(Model):
             if not np.any(values[k, 1]) and not any(i[:2] == (k, 1) for i in self.decimals.get("sections", {})):
                 raise InputError("zero", "a denominator that is not zero", field=f"sections[{k}].denominator")
         self._put("sections", checks.frozen(values))
-        allowed = {(0,): text for text in self.decimals.get("gain", {}).values()}
+        allowed = {(0, *index): text for index, text in self.decimals.get("gain", {}).items()}
         self._put("gain", float(checks.array([self.gain], "gain", 1, allow=allowed)[0]))
 
     @property

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import Any, ClassVar
 
 import numpy as np
+from numpy.typing import NDArray
 
 from realize.errors import InputError
 from realize.kernels.response import state_evaluator
@@ -39,11 +40,8 @@ class StateSpace(Model):
     states: tuple[Signal, ...] = ()
 
     def _normalise(self) -> None:
-        arrays = {}
-        for name in ("A", "B", "C", "D", "E"):
-            value = getattr(self, name)
-            arrays[name] = None if value is None else checks.array(value, name, 2, allow=self.decimals.get(name))
-        A, B, C, D, E = (arrays[name] for name in "ABCDE")
+        A, B, C = (self._matrix(name) for name in "ABC")
+        D, E = (None if getattr(self, name) is None else self._matrix(name) for name in "DE")
         n = A.shape[0]
         if A.shape == (0, 0) or A.size == 0:
             n = 0
@@ -71,6 +69,9 @@ class StateSpace(Model):
             self._put(name, checks.frozen(value))
         self._put("E", None if E is None else checks.frozen(E))
         self._put("states", checks.signals(self.states, n, "states", Signal))
+
+    def _matrix(self, name: str) -> NDArray[Any]:
+        return checks.array(getattr(self, name), name, 2, allow=self.decimals.get(name))
 
     @property
     def shape(self) -> tuple[int, int]:

@@ -55,7 +55,8 @@ def drawing_band(models: Sequence[Model], roots: Sequence[Roots], band: Band | N
     """Return the frequencies to draw, rad/s.
 
     In this order: the band asked for; the band of the data with a tenth of its width on each side (a quarter of an
-    octave at the most); from a tenth of the smallest to ten times the largest pole or zero. Sampled models end at pi / period.
+    octave at the most); from a tenth of the smallest to ten times the largest pole or zero. Sampled models end at
+    pi / period.
     """
     ends = [math.pi / model.time.seconds for model in models if model.time.sampled]
     end = max(ends) if len(ends) == len(models) and ends else math.inf
