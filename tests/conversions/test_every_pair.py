@@ -1,4 +1,4 @@
-"""Every pair of parametric kinds on a catalogue of odd plants: exact errors, honest claims, routes that can be printed."""
+"""Every pair of parametric kinds on a catalogue of odd plants: exact errors, honest claims, printed routes."""
 
 from __future__ import annotations
 
@@ -130,7 +130,7 @@ CASES = [(name, to, form) for name in PLANTS for to, form in TARGETS]
 def test_the_response_is_kept_and_the_claims_are_honest(name: str, to: str, form: str | None, oracle: Any) -> None:
     source = PLANTS[name]
     if not _allowed(name, to, form):
-        with pytest.raises(Refused, match="use|convert"):
+        with pytest.raises(Refused, match=r"use|convert"):
             convert(source, to, form=form)
         return
     beyond = name == "overflowing gain" and (form or "").endswith("companion")

@@ -1,5 +1,6 @@
-"""The JSON records of every verb keep their structure: golden files hold names and types, the words that are contract, no numbers.
+"""The JSON records of every verb keep their structure.
 
+Golden files hold names and types and the words that are contract, no numbers.
 ``python tests/schema/test_golden_records.py`` writes the golden files anew; a change of them is a change of the format.
 """
 

@@ -1,4 +1,4 @@
-"""The command line is the schema's: verbs, options, spellings, defaults, help; and the schema is consistent in itself."""
+"""The command line is the schema's: verbs, options, spellings, defaults, help; the schema is consistent in itself."""
 
 from __future__ import annotations
 
