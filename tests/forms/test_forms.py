@@ -78,7 +78,7 @@ def test_a_cascade_of_nothing_is_zero() -> None:
 def test_modal_blocks_at_any_size(size: float) -> None:
     poles = np.array([-1 + 2j, -1 - 2j, -3 + 0j])
     residues = size * np.array([1 + 1j, 1 - 1j, 2]).reshape(3, 1, 1)
-    A, B, C, D = modal_states(poles, residues, np.ones(3, dtype=int), np.zeros((1, 1)))
+    A, B, C, _ = modal_states(poles, residues, np.ones(3, dtype=int), np.zeros((1, 1)))
     assert A.shape == (3, 3)
     s = 0.7j
     expected = sum(residues[k, 0, 0] / size / (s - poles[k]) for k in range(3))

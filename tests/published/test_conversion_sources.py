@@ -24,7 +24,8 @@ def decibels(model: Model, hertz: list[float]) -> np.ndarray:
 
 # IEC 61672-1:2013, annex E (pole frequencies) and table 3 (A weighting, dB, at 10^(n/10) Hz), from memory
 A_POLES = (20.598997, 107.65265, 737.86223, 12194.217)
-A_TABLE = {10: -70.4, 31.622776601683793: -39.4, 100: -19.1, 316.2277660168379: -6.6, 1000: 0.0, 1995.2623149688795: 1.2,
+A_TABLE = {10: -70.4, 31.622776601683793: -39.4, 100: -19.1, 316.2277660168379: -6.6, 1000: 0.0, 1995.2623149688795:
+1.2,
            3981.0717055349724: 1.0, 10000: -2.5, 19952.623149688796: -9.3}  # fmt: skip
 
 
@@ -75,7 +76,8 @@ def test_riaa_time_constants_are_the_poles_and_the_zero() -> None:
 # Recommendation ITU-R BS.1770, annex 1, tables 1 and 2: K weighting at 48 kHz as decimal strings, from memory
 SHELF = (("1.53512485958697", "-2.69169618940638", "1.19839281085285"), ("1", "-1.69065929318241", "0.73248077421585"))
 HIGHPASS = (("1.0", "-2.0", "1.0"), ("1", "-1.99004745483398", "0.99007225036621"))
-#: response at these frequencies, computed from the coefficients with 40 digits; 0.691 dB at 997 Hz is the Recommendation's own
+#  response at these frequencies, computed from the coefficients with 40 digits; 0.691 dB at 997 Hz is the
+# Recommendation's own
 K_TABLE = {20.0: -13.275367792527211, 100.0: -1.1334980926854066, 997.0: 0.6910140954660231, 10000.0: 4.041882222570132}
 
 
@@ -164,7 +166,9 @@ def test_pade_approximations_stay_all_pass(coefficients: list[int], to: str) -> 
 
 
 def test_kundur_machine_on_an_infinite_bus() -> None:
-    """P. Kundur, Power System Stability and Control (1994), example 12.3: eigenvalues -0.11 +- j6.41, -0.204 (from memory)."""
+    """P. Kundur, Power System Stability and Control (1994), example 12.3: eigenvalues -0.11 +- j6.41, -0.204 (from
+    memory).
+    """
     A = [[0.0, -0.1092, -0.1236], [376.99, 0.0, 0.0], [0.0, -0.1938, -0.4229]]
     plant = StateSpace(A=A, B=[[1.0], [0.0], [0.0]], C=[[0.0, 1.0, 0.0]])
     poles = inspect(plant)["poles"]
@@ -179,9 +183,11 @@ def test_kundur_machine_on_an_infinite_bus() -> None:
 
 
 def test_gilbert_residues_and_order() -> None:
-    """E. G. Gilbert (1963): the order of simple partial fractions is the sum of the ranks of the residues (from memory).
+    """E. G. Gilbert (1963): the order of simple partial fractions is the sum of the ranks of the residues (from
+    memory).
 
-    [1/(s+1), 2/(s+1); 1/((s+1)(s+2)), 1/(s+2)]: residues [1 2; 1 0] at -1 (rank 2), [0 0; -1 1] at -2 (rank 1): order 3.
+    [1/(s+1), 2/(s+1); 1/((s+1)(s+2)), 1/(s+2)]: residues [1 2; 1 0] at -1 (rank 2), [0 0; -1 1] at -2 (rank 1):
+    order 3.
     """
     plant = TransferFunction(
         numerator=[[[1.0], [2.0]], [[1.0], [1.0]]],
@@ -218,7 +224,9 @@ def test_hard_coefficients_to_states(name: str) -> None:
 
 @pytest.mark.parametrize("name", ["SS01", "SS05", "SS09"])
 def test_hard_states_to_coefficients(name: str) -> None:
-    """The claim is the exact error of the coefficients, whether they can carry the plant or not; where they cannot, it fails."""
+    """The claim is the exact error of the coefficients, whether they can carry the plant or not; where they
+    cannot, it fails.
+    """
     case = _hard(name)
     source = StateSpace(**{key: case["input"][key] for key in "ABCD"})
     made = convert(source, "transfer-function")

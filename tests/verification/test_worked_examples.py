@@ -38,6 +38,7 @@ def covers(claim: Claim, truth: float, slack: float = 1e-6) -> None:
 
 def test_1_the_roll_off_of_a_dense_form() -> None:
     """1/(s+1)^3 in rotated coordinates.
+
     In exact arithmetic C B = C A B = 0 and the response falls as 1/s^3. After rounding, C B is some d of the size
     of 1e-17, so that the response is 1/s^3 + d/s far out: at 1e8 rad/s the first term is 1e-24 and the second 1e-25
     d/1e-17, a relative error of d 1e16, tens of per cent for d of 1e-17 to 1e-16. The band ends at 10 times the
@@ -69,6 +70,7 @@ def test_1_the_roll_off_of_a_dense_form() -> None:
 
 def test_2_a_notch_on_the_axis() -> None:
     """(s^2 + 1)/(s^2 + s + 1) against (s^2 + 1 + e)/(s^2 + s + 1), e = 2^-40 = 9.1e-13.
+
     |dG| / |G| = e / |1 - w^2|, infinite at w = 1. The zero has damping 0, so from 1 - 1e-4 to 1 + 1e-4 rad/s the
     divisor is the larger |G| at the edges. Inside, |dG| = e/|D| is nearly constant; the largest ratio is just
     outside, at the lower edge: |1 - (1 - 1e-4)^2| = 2e-4 - 1e-8 = 1.9999e-4, so the claim is e / 1.9999e-4 =
@@ -102,6 +104,7 @@ def test_3_an_integrator() -> None:
 
 def test_4_a_pole_pair_on_the_axis() -> None:
     """1/(s^2 + 4): from 2 - 2e-4 to 2 + 2e-4 rad/s nothing is compared.
+
     Against 1/(s^2 + 4 + e), e = 2^-40: dG/G = -e / (4 + e - w^2); at the lower edge w = 2 (1 - 1e-4): 4 - w^2 = 4
     (2e-4 - 1e-8) = 7.9996e-4, so 9.095e-13 / 7.9996e-4 = 1.137e-9. The pole moved by e/4 = 2.3e-13 rad/s, far more
     than one unit in the last place of 2 (4.4e-16): end-behaviour is infinite.
@@ -117,8 +120,9 @@ def test_4_a_pole_pair_on_the_axis() -> None:
 def test_5_an_identically_zero_channel() -> None:
     """[1/(s+1), 0] against [1/(s+1), e/(s+1)], e = 2^-30.
 
-    The Frobenius norm of the difference over that of the source is e everywhere. In the zero channel the divisor is the
-    largest gain of the matrix, 1 at w = 0: channel-error e. The other way round a channel was lost: channel-error 1.
+    The Frobenius norm of the difference over that of the source is e everywhere. In the zero channel the divisor is
+    the largest gain of the matrix, 1 at w = 0: channel-error e. The other way round a channel was lost:
+    channel-error 1.
     """
     e = 2.0**-30
     one, pole = [1.0], [1.0, 1.0]
@@ -136,6 +140,7 @@ def test_5_an_identically_zero_channel() -> None:
 
 def test_6_a_sampled_model_near_one() -> None:
     """1/(z - p), p = 1 - 2^-30, period 1 ms, against p' = p - 2^-50.
+
     At w = 0: G = 2^30, G' = 1/(2^-30 + 2^-50) = 2^30 / (1 + 2^-20), so the relative error is 2^-20/(1 + 2^-20) =
     9.54e-7; that is the largest, because |z - p| grows with w. The pole is ln(p)/T = -2^-30/1e-3 = -9.3e-7 rad/s:
     the band starts at 9.3e-8 rad/s and ends at pi/T, and 0 belongs to it.
@@ -169,6 +174,7 @@ def test_7_dead_time_must_come_along() -> None:
 
 def test_8_a_lost_zero_far_below_the_other_numbers() -> None:
     """1e-14 (s + 5)/((s + 1)(s + 2)) against 5e-14/((s + 1)(s + 2)): the zero at -5 is lost.
+
     |dG| / |G| = |s| / |s + 5|; the band ends at 10 * 5 = 50 rad/s: 50/sqrt(50^2 + 5^2) = 0.99504. |dG| is 1e-14 w /
     (sqrt(w^2 + 1) sqrt(w^2 + 4)), largest at w = sqrt(2): 1e-14 sqrt(2)/(sqrt(3) sqrt(6)) = 1e-14/3; |G| is largest
     at 0: 2.5e-14. The peak error is 0.4/3 = 0.13333. The relative degree went from 1 to 2.
@@ -185,6 +191,7 @@ def test_8_a_lost_zero_far_below_the_other_numbers() -> None:
 
 def test_9_leading_coefficients_and_frobenius_norms() -> None:
     """[[3/(s+1)], [4/(s+1)]] against [[3/(s+1)], [4 (1 + e)/(s+1)]], e = 2^-20.
+
     The difference is 4 e/(s+1), the source 5/(s+1) in the Frobenius norm: response-error and peak-error 0.8 e; the
     second channel alone is off by e, and so is its leading coefficient.
     """
@@ -219,9 +226,9 @@ def test_10_constants_and_order_zero() -> None:
 
 
 def test_a_spurious_light_pole_far_outside_of_the_band_counts() -> None:
-    """1/(s+1) + 1/(s^2 + s + 1e12): at 1e6 rad/s the addition is 1/(1e6 j), 1e-6 of the peak, a million times its value in
+    """1/(s+1) + 1/(s^2 + s + 1e12): at 1e6 rad/s the addition is 1/(1e6 j), 1e-6 of the peak, a million times its
+    value in
     the band."""
-    """
     source = plant([1.0], [1.0, 1.0])
     result = plant([1.0, 2.0, 1.0 + 1e12], [1.0, 2.0, 1e12 + 1.0, 1e12])
     found = claims(source, result)
@@ -236,7 +243,9 @@ def test_a_difference_that_grows_for_ever_is_infinite() -> None:
 
 
 def test_a_difference_at_infinite_frequency_counts() -> None:
-    """s/(s+1) against s/(s+1) + D: the difference is D at every frequency, and where it is constant nothing hides it."""
+    """s/(s+1) against s/(s+1) + D: the difference is D at every frequency, and where it is constant nothing hides
+    it.
+    """
     found = claims(plant([1.0, 0.0], [1.0, 1.0]), plant([1.0 + 1e-6, 1e-6], [1.0, 1.0]))
     assert value(found["peak-error"]) == pytest.approx(1e-6, rel=1e-3)
 
