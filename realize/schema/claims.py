@@ -7,7 +7,8 @@ from dataclasses import dataclass, field
 BASES = {
     "proved": "exact or ball arithmetic over all frequencies of the definition",
     "bounded": "a theorem whose hypotheses were checked in floating point, rounding included",
-    "measured": "the largest value found, seeded at every known pole and zero; uncertainty bounds what can hide, or is null",
+    "measured": "the largest value found, seeded at every known pole and zero; "
+    "uncertainty bounds what can hide, or is null",
 }
 
 #: Coordinates and kinds that keep every channel accurate everywhere: judged by the response error too.
@@ -56,8 +57,9 @@ CLAIMS: dict[str, ClaimDefinition] = {
         ClaimDefinition(
             "end-behaviour",
             "relative",
-            "relative degree, multiplicity of poles and zeros at the origin (z = 1) and axis poles, compared exactly; the value "
-            "is the largest relative error of a channel's leading coefficient, or infinite if a degree or multiplicity differs",
+            "relative degree, multiplicity of poles and zeros at the origin (z = 1) and axis poles, compared exactly; "
+            "the value is the largest relative error of a channel's leading coefficient, or infinite if a degree or "
+            "multiplicity differs",
             {"convert:structured": 1e-9},
         ),
         ClaimDefinition("order", "states", "order of the result"),

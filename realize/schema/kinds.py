@@ -128,8 +128,8 @@ PARAMETRIC_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric
 COMMON_FIELDS: dict[str, str] = {
     "realize": "version of the file format; this is version 1",
     "kind": "one of: " + ", ".join(KINDS),
-    "time": '{"domain": "continuous"}, or {"domain": "sampled", "period": seconds} or {"domain": "sampled", "rate": Hz}; '
-    "continuous unless given",
+    "time": '{"domain": "continuous"}, or {"domain": "sampled", "period": seconds} or '
+    '{"domain": "sampled", "rate": Hz}; continuous unless given',
     "inputs": '[m] of {"name": text, "unit": text}',
     "outputs": '[p] of {"name": text, "unit": text}',
     "dead_time": '{"inputs": [m], "outputs": [p], "channels": [p][m]} in seconds, all optional',

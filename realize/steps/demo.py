@@ -20,7 +20,7 @@ DEMO_ERROR = 0.05
 
 
 def fresh_folder(wanted: str | None) -> Path:
-    """Make the folder for the demo: the one asked for, if it is absent or empty, else realize-demo with the next number."""
+    """Make the folder for the demo: the one asked for, if absent or empty, else realize-demo with the next number."""
     try:
         if wanted is not None:
             folder = Path(wanted)
@@ -60,7 +60,7 @@ def run_demo(seed: int) -> tuple[dict[str, Conversion], dict[str, Any]]:
     sections = convert(fitted, "zero-pole-gain")
     reduced = reduce(fitted, error=DEMO_ERROR)
     truth = compare(bench_axis_truth(), fitted, reduced)
-    record = {
+    record: dict[str, Any] = {
         "step": "demo",
         "seed": seed,
         "lines": int(data.radians.size),

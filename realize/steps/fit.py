@@ -106,8 +106,9 @@ def fit(
     claims += [weighted] if weighted is not None else []
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
     cautions = list(found.cautions)
+    hertz = w / (2 * np.pi)
     cautions.append(
-        f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({w[0] / (2 * np.pi):.6g} to {w[-1] / (2 * np.pi):.6g} Hz): "
+        f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({hertz[0]:.6g} to {hertz[-1]:.6g} Hz): "
         "outside of it nothing was measured."
     )
     with asking("fit", source, {}, second_opinion) as opinion:

@@ -9,7 +9,7 @@ import numpy as np
 from realize.models import FrequencyResponse, Model, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
-from realize.verification import view_of
+from realize.verification import View, view_of
 
 #: Poles this far apart in size, fastest over slowest, are worth a word.
 STIFF = 1e9
@@ -19,7 +19,7 @@ NEAR = 1e-6
 
 @refusing_singular()
 def inspect(model: Model | Conversion) -> dict[str, Any]:
-    """Say what a model is: order, minimal order, poles and zeros with multiplicities, stability, and what is wrong with it.
+    """Say what a model is: order, minimal order, poles and zeros with multiplicities, stability, and what is wrong.
 
     Returns
     -------
@@ -112,7 +112,8 @@ def _minimal_order(view: View, cautions: list[str]) -> int | None:
     )
     if not found.proved:
         cautions.append(
-            f"The minimal order {found.order} is a rank modulo two large primes: too low only if both divide every minor."
+            f"The minimal order {found.order} is a rank modulo two large primes: "
+            "too low only if both divide every minor."
         )
     return found.order
 

@@ -1,7 +1,7 @@
 """Child process of the second opinion: the step by scipy.signal or slycot, its response on standard output.
 
-Run by path, with isolated imports: it shares nothing with the package but the request. slycot is GPL-2.0 and is imported
-here only.
+Run by path, with isolated imports: it shares nothing with the package but the request. slycot is GPL-2.0 and is
+imported here only.
 """
 
 import json
@@ -20,7 +20,7 @@ def main() -> None:
     resource.setrlimit(resource.RLIMIT_CPU, (seconds, seconds + 1))
     resource.setrlimit(resource.RLIMIT_CORE, (0, 0))
     request = json.load(sys.stdin)
-    answer = {"by": ""}
+    answer: dict[str, object] = {"by": ""}
     try:
         import numpy as np
 
@@ -124,8 +124,8 @@ def through(signal, kind, data, to, s):
     if kind == "transfer-function" and not np.any(data[0]):
         return np.zeros(s.size, dtype=complex)
     if to == "state-space":
-        n, d = (data[0], data[1]) if kind == "transfer-function" else (data[0], data[1])
-        if len(n) > len(d):
+        above, below = data[:2]
+        if len(above) > len(below):
             raise Inapplicable("scipy.signal has no improper state models")
         made = signal.tf2ss(*data) if kind == "transfer-function" else signal.zpk2ss(*data)
         A, B, C, D = (np.real(part) for part in made)
@@ -137,7 +137,7 @@ def through(signal, kind, data, to, s):
     if to == "pole-residue":
         r, p, k = signal.residue(n, d)
         value, last, power = np.polyval(k, s) if len(k) else np.zeros(s.size, dtype=complex), None, 1
-        for residue, pole in zip(r, p):
+        for residue, pole in zip(r, p, strict=True):
             power = power + 1 if last is not None and abs(pole - last) <= 1e-3 * abs(last) else 1
             value = value + residue / (s - pole) ** power
             last = pole

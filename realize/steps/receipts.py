@@ -20,7 +20,10 @@ from realize.verification import fragility, view_of
 from realize.verification.bands import whole_band
 from realize.verification.search import seeds
 
-CLOSED_LOOP = "Check the closed loop on the full plant model, and on the hardware with limits in place, before relying on this model."
+CLOSED_LOOP = (
+    "Check the closed loop on the full plant model, and on the hardware with limits in place, "
+    "before relying on this model."
+)
 SINGULAR = (
     "the pencil sE - A is singular: det(sE - A) is zero for every s, so the model has no transfer function; "
     "check the rows of E and A that belong together"
@@ -77,11 +80,13 @@ def fragility_cautions(values: dict[str, float | None], result: Model) -> list[s
     source, after = values.get("source"), values.get("result")
     if source is not None and source > FRAGILE:
         cautions.append(
-            f"The source itself is fragile: one rounding of its numbers moves its response by up to {source:.1e} of its size."
+            "The source itself is fragile: one rounding of its numbers moves its response "
+            f"by up to {source:.1e} of its size."
         )
     if after is not None and after > FRAGILE and after > 10 * (source or 0.0):
         cautions.append(
-            f"Doubles hold this plant badly as {result.kind}: one rounding moves its response by up to {after:.1e} of its size. "
+            f"Doubles hold this plant badly as {result.kind}: one rounding moves its response "
+            f"by up to {after:.1e} of its size. "
             "Keep it as state-space (cascade), sections, zero-pole-gain or pole-residue."
         )
     return cautions

@@ -49,8 +49,8 @@ def states_of(model: Model) -> tuple[StateSpace, list[str]]:
     condition = float(np.linalg.cond(power * model.E))
     if not condition < HARMLESS_E:
         raise Refused(
-            f"E has condition number {condition:.1e}: dividing it out would spoil the model, and the parts belonging to "
-            "poles near infinity are not split off"
+            f"E has condition number {condition:.1e}: dividing it out would spoil the model, and the parts "
+            "belonging to poles near infinity are not split off"
         )
     solved = np.linalg.solve(power * model.E, power * np.hstack([model.A, model.B]))
     n = model.A.shape[0]

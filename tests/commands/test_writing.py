@@ -10,6 +10,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Callable
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -60,7 +61,7 @@ def test_they_travel_through_reduce_and_a_chain(run: Callable[..., Any], plant: 
     _same_signals(done.record)
     assert [receipt["step"] for receipt in done.record["receipts"]] == ["convert", "reduce", "convert", "convert"]
     chain = done.record["receipts"]
-    for before, after in zip(chain, chain[1:], strict=False):
+    for before, after in pairwise(chain):
         assert before["result"]["digest"] == after["source"]["digest"]
 
 
