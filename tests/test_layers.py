@@ -8,6 +8,7 @@ import subprocess
 import sys
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cache
 from pathlib import Path
 
 import pytest
@@ -61,8 +62,15 @@ def _is_type_checking(node: ast.AST) -> bool:
     )
 
 
-def imports_of(path: Path) -> Iterator[Import]:
-    """Yield the imports of a file, those inside functions too, those under TYPE_CHECKING not."""
+@cache
+def tree_of(path: Path) -> ast.Module:
+    """Return the parsed file."""
+    return ast.parse(path.read_text(encoding="utf-8"))
+
+
+@cache
+def imports_of(path: Path) -> tuple[Import, ...]:
+    """Return the imports of a file, those inside functions too, those under TYPE_CHECKING not."""
 
     def walk(node: ast.AST, at_top: bool) -> Iterator[Import]:
         for child in ast.iter_child_nodes(node):
@@ -80,7 +88,7 @@ def imports_of(path: Path) -> Iterator[Import]:
                 inside = isinstance(child, (ast.FunctionDef, ast.AsyncFunctionDef, ast.Lambda))
                 yield from walk(child, at_top and not inside)
 
-    yield from walk(ast.parse(path.read_text(encoding="utf-8")), True)
+    return tuple(walk(tree_of(path), True))
 
 
 def part_of(path: Path) -> str:
@@ -126,7 +134,7 @@ def test_independent_libraries_are_imported_in_the_child_alone(library: str) -> 
     }
     assert users <= {CHILD}
     for path in MODULES:
-        for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        for node in ast.walk(tree_of(path)):
             if isinstance(node, ast.Call) and getattr(node.func, "id", getattr(node.func, "attr", "")) in (
                 "import_module",
                 "__import__",
