@@ -12,8 +12,8 @@ from realize.models import Model
 from realize.schema import CLAIMS, Claim, judge
 from realize.verification.bands import (
     Interval,
+    all_bands,
     channel_band,
-    channel_zeros,
     common_zeros,
     finite_at_zero,
     intervals_of,
@@ -29,34 +29,47 @@ from realize.verification.views import view_of
 Array = NDArray[np.float64]
 
 
-def _relative(
-    pair: Pair, w: Array, lines: list[float], channel: tuple[int, int] | None, reference: float, quick: bool
+def _quotient(
+    pair: Pair,
+    w: Array,
+    sizes: tuple[Array, Array],
+    lines: list[float],
+    channel: tuple[int, int] | None,
+    divisor: float,
 ) -> Array:
-    """Return the error at w relative to the source, light zeros from the edges of their interval, or to a reference."""
-    difference, size = pair.quick_sizes(w) if quick else pair.sizes(w)
-    if channel is None:
-        above, below = frobenius(difference), frobenius(size)
-    else:
-        above, below = difference[:, channel[0], channel[1]], size[:, channel[0], channel[1]]
+    """Return the error at w relative to the source, light zeros from the edges of their interval, or to a divisor."""
+    difference, size = sizes
+    above = frobenius(difference) if channel is None else difference[:, channel[0], channel[1]]
+    if divisor:
+        return above / divisor
+    below = frobenius(size) if channel is None else size[:, channel[0], channel[1]]
     for line in lines:
         near = np.abs(w - line) <= LIGHT * line
         if near.any():
             below = np.where(near, pair.edge_gain(line * (1 - LIGHT), line * (1 + LIGHT), channel), below)
-    if reference:
-        below = np.full(above.shape, reference)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         error = above / below
     return np.where(above == 0, 0.0, error)
 
 
 def _largest(
-    pair: Pair, w: Array, band: Band, lines: list[float], channel: tuple[int, int] | None, reference: float = 0.0
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None, divisor: float = 0.0
 ) -> tuple[float, float]:
     """Return the largest error found and its frequency: the search is quick, the value that it finds exact."""
-    found, where = largest(lambda x: _relative(pair, x, lines, channel, reference, True), w, band, rounds=2)
+    w, difference, size = pair.grid
+    inside = band.contains(w)
+    w = w[inside]
+    start = _quotient(pair, w, (difference[inside], size[inside]), lines, channel, divisor)
+    found, where = largest(
+        lambda x: _quotient(pair, x, pair.quick_sizes(x), lines, channel, divisor), w, band, rounds=2, values=start
+    )
     if not pair.exact or not np.isfinite(found) or w.size == 0:
         return found, where
-    return float(_relative(pair, np.array([where]), lines, channel, reference, False)[0]), where
+    reference = divisor or None
+    for line in lines:
+        if not divisor and abs(where - line) <= LIGHT * line:
+            reference = pair.edge_gain(line * (1 - LIGHT), line * (1 + LIGHT), channel)
+    return pair.proof(channel).value_at(where, reference), where
 
 
 def _note(pair: Pair) -> str:
@@ -90,15 +103,11 @@ def _claimed(
 def response_error(pair: Pair, limit: float | None = None) -> Claim:
     """Return the claim `response-error`."""
     view = pair.source
-    p, m = view.model.shape
-    bands = [channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
-    if not bands:
-        bands = [Band(0.1, 10.0, True)]
+    bands = all_bands(view) or [Band(0.1, 10.0, True)]
     band = Band(min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles))
     zeros = common_zeros(view)
     lines = light_zeros(zeros)
-    w = seeds(band, zeros, view.poles, pair.result.rough_poles, *channel_zeros(view))
-    value, where = _largest(pair, w, band, lines, None)
+    value, where = _largest(pair, band, lines, None)
     intervals = intervals_of(pair, band, lines, None) if pair.exact else []
     return _claimed("response-error", pair, value, {"frequency": where}, limit, intervals)
 
@@ -118,17 +127,14 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 reference = gain
                 band = whole_band(view) if view.poles.s.size else Band(0.1, 10.0)
                 lines: list[float] = []
-                w = seeds(band, view.poles, pair.result.rough_poles)
                 intervals: list[Interval] = []
                 if pair.exact:
                     intervals = [(low, high, gain) for low, high, _ in intervals_of(pair, band, [], (i, j))]
             else:
                 band = channel_band(view, i, j)
-                zeros, poles = view.channel_roots[i][j]
-                lines = light_zeros(zeros)
-                w = seeds(band, zeros, poles, pair.result.rough_poles)
+                lines = light_zeros(view.channel_roots[i][j][0])
                 intervals = intervals_of(pair, band, lines, (i, j)) if pair.exact else []
-            value, where = _largest(pair, w, band, lines, (i, j), reference)
+            value, where = _largest(pair, band, lines, (i, j), reference)
             place = {"frequency": where, "output": i, "input": j}
             claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
             if worst is None or _total(claim) > _total(worst):
@@ -146,11 +152,14 @@ def _total(claim: Claim) -> float:
 
 def peak_gain(pair: Pair) -> tuple[float, float]:
     """Return the largest Frobenius gain of the source found, and its frequency; the limit at infinity counts."""
-    band = whole_band(pair.source)
-    w = seeds(band, pair.source.poles, *channel_zeros(pair.source))
-    gain, where = largest(lambda x: frobenius(pair.quick_sizes(x)[1]), w, band, rounds=2)
+    band = whole_band(pair.source, other=pair.result)
+    w, _, size = pair.grid
+    inside = band.contains(w)
+    gain, where = largest(
+        lambda x: frobenius(pair.quick_sizes(x)[1]), w[inside], band, rounds=2, values=frobenius(size[inside])
+    )
     if pair.exact and np.isfinite(gain):
-        gain = float(frobenius(pair.sizes(np.array([where]))[1])[0])
+        gain = pair.proof(None).gain_at(where)
     limit = _at_infinity(pair)[1]
     return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)
 
@@ -185,8 +194,7 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source, other=pair.result)
     if improper:
         gain, _ = largest(lambda x: frobenius(pair.sizes(x)[1]), seeds(band, pair.source.poles), band)
-    w = seeds(band, pair.source.poles, pair.result.rough_poles)
-    value, where = _largest(pair, w, band, [], None, 1.0)
+    value, where = _largest(pair, band, [], None, 1.0)
     place: dict[str, Any] = {"frequency": where}
     if not improper and end_difference > value:
         value, place = end_difference, {"frequency": None}
@@ -254,10 +262,11 @@ def _multiplicity(polynomial: Any, point: int) -> int:
 
 def _axis_moved(pair: Pair, i: int, j: int) -> str:
     """Return words if a pole on the axis left it, or moved by more than one unit in the last place; else ''."""
-    first, second = pair.source.channel_roots[i][j][1], pair.result.channel_roots[i][j][1]
+    first = pair.source.channel_roots[i][j][1]
     a = np.sort(np.abs(first.s[first.on_axis].imag))
     if a.size == 0:
         return ""
+    second = pair.result.channel_roots[i][j][1]
     b = np.sort(np.abs(second.s[second.on_axis].imag))
     if a.size != b.size:
         return f"{a.size} poles on the axis became {b.size}"

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from realize.verification.proof import Proof
 from realize.verification.quick import Moduli
+from realize.verification.search import seeds
 from realize.verification.views import View
 
 Array = NDArray[np.float64]
@@ -108,12 +109,29 @@ class Pair:
         first, second = self.source.response(w), self.result.response(w)
         return np.abs(first - second), np.abs(first)
 
+    @cached_property
+    def grid(self) -> tuple[Array, Array, Array]:
+        """Frequencies over the dynamics of both models and beyond, with `quick_sizes` there; one for all claims."""
+        from realize.verification.bands import all_bands, channel_zeros, whole_band
+
+        band = whole_band(self.source, other=self.result)
+        edges = [edge for part in all_bands(self.source) for edge in part.edges]
+        w = seeds(band, self.source.poles, self.result.rough_poles, *channel_zeros(self.source))
+        w = np.unique(np.concatenate([w, np.array(edges), np.zeros(1)]))
+        difference, size = self.quick_sizes(w)
+        return w, difference, size
+
     def edge_gain(self, low: float, high: float, channel: tuple[int, int] | None) -> float:
         """Return the larger gain of the source at the two ends of an interval, in units of 2^exponent."""
         key = (low, high, channel)
         if key not in self._proofs:
-            edges = self.sizes(np.array([low, high]))[1]
-            self._proofs[key] = float((frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]).max())
+            if self.exact:
+                proof = self.proof(channel)
+                self._proofs[key] = max(proof.gain_at(low), proof.gain_at(high))
+            else:
+                edges = self.sizes(np.array([low, high]))[1]
+                chosen = frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
+                self._proofs[key] = float(chosen.max())
         return self._proofs[key]
 
     @cached_property
@@ -179,6 +197,8 @@ class Pair:
 
 def frobenius(values: Array) -> Array:
     """Return the Frobenius norm over the channels, safe against overflow."""
+    if values.shape[1:] == (1, 1):
+        return values[:, 0, 0]
     largest_entry = values.max(axis=(1, 2), keepdims=True)
     scale = np.where((largest_entry > 0) & np.isfinite(largest_entry), largest_entry, 1.0)
     return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]

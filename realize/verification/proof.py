@@ -156,6 +156,42 @@ class Proof:
             value = tangent * tangent
             return exact_value(value.upper() if up else value.lower())
 
+    def value_at(self, frequency: float, reference: float | None) -> float:
+        """Return the error at a frequency, relative to |G1| or to a reference gain, rounded once or twice.
+
+        Sampled models: at a frequency within a rounding of the one given.
+        """
+        x = self.place(frequency, up=False)
+        difference = self.error_square
+        bound = self.source_square if reference is None else self.denominator_square
+        if x is None:
+            degree = max(difference.degree(), bound.degree())
+            above, below = difference[degree], bound[degree]
+        else:
+            above, below = difference(x), bound(x)
+        if not above:
+            return 0.0
+        if not below:
+            return math.inf
+        value = _root(above / below)
+        return value if reference is None else value / reference
+
+    def gain_at(self, frequency: float) -> float:
+        """Return the gain of the source at a frequency, infinite at a pole; rounded once or twice."""
+        x = self.place(frequency, up=False)
+        top, bottom = self.gain_squares
+        if x is None:
+            degree = max(top.degree(), bottom.degree())
+            above, below = top[degree], bottom[degree]
+        else:
+            above, below = top(x), bottom(x)
+        return _root(above / below) if below else math.inf
+
+    @cached_property
+    def gain_squares(self) -> tuple[Any, Any]:
+        """Sum of |N1|^2 over the channels and |D1|^2, in x."""
+        return self._sum(self.n1, self.degree), self._modulus(self.d1, self.degree)
+
     def within(self, error: float, low: float, high: float, reference: float | None) -> bool:
         """Return True if the error is proved on [low, high] (rad/s): relative to |G1|, or to a reference gain."""
         from realize.kernels.exact.numbers import fraction
@@ -204,6 +240,18 @@ class Proof:
                 return error
             # what was proved with less holds with more: only the rest is left
         return None
+
+
+def _root(square: Any) -> float:
+    """Return the square root of an exact rational; infinite or zero past the range of doubles."""
+    from realize.kernels.exact.numbers import scaled
+
+    mantissa, exponent = scaled(square)
+    odd = exponent % 2
+    try:
+        return math.ldexp(math.sqrt(mantissa * (2.0 if odd else 1.0)), (exponent - odd) // 2)
+    except OverflowError:
+        return math.inf
 
 
 def _without_common(first: Any, second: Any) -> tuple[Any, Any]:

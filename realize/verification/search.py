@@ -27,12 +27,23 @@ class Band:
     zero: bool = False
     left_out: tuple[tuple[float, float], ...] = ()
 
-    def keep(self, w: Array) -> Array:
-        """Return the frequencies that are inside and not left out."""
-        inside = ((w >= self.low) & (w <= self.high)) | (self.zero & (w == 0))
+    def contains(self, w: Array) -> NDArray[np.bool_]:
+        """Return which frequencies are inside and not left out."""
+        inside = (w >= self.low) & (w <= self.high)
+        if self.zero:
+            inside |= w == 0
         for low, high in self.left_out:
             inside &= ~((w > low) & (w < high))
-        return w[inside]
+        return inside
+
+    def keep(self, w: Array) -> Array:
+        """Return the frequencies that are inside and not left out."""
+        return w[self.contains(w)]
+
+    @property
+    def edges(self) -> list[float]:
+        """The ends, and the ends of what is left out."""
+        return [self.low, self.high, *(end for pair in self.left_out for end in pair)]
 
 
 def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_at_zero: bool) -> Band:
@@ -77,9 +88,17 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
     return band.keep(w)
 
 
-def largest(error: Callable[[Array], Array], w: Array, band: Band, rounds: int = 3) -> tuple[float, float]:
-    """Return the largest value found and its frequency: a grid, then zooming in on the highest local maxima."""
-    values = np.asarray(error(w), dtype=float)
+def largest(
+    error: Callable[[Array], Array], w: Array, band: Band, rounds: int = 3, values: Array | None = None
+) -> tuple[float, float]:
+    """Return the largest value found and its frequency: a grid, then zooming in on the highest local maxima.
+
+    Parameters
+    ----------
+    values : [k] float, optional
+        The error at w, where it is known already.
+    """
+    values = np.asarray(error(w) if values is None else values, dtype=float)
     if values.size == 0:
         return 0.0, 0.0
     if np.isnan(values).any():
@@ -89,18 +108,18 @@ def largest(error: Callable[[Array], Array], w: Array, band: Band, rounds: int =
     found, where = float(values[best]), float(w[best])
     if not np.isfinite(found) or w.size < 3:
         return found, where
-    peaks = [
-        k for k in range(w.size) if values[k] >= values[max(k - 1, 0)] and values[k] >= values[min(k + 1, w.size - 1)]
-    ]
-    peaks = sorted(peaks, key=lambda k: -values[k])[:5]
-    spans = [(float(w[max(k - 1, 0)]), float(w[min(k + 1, w.size - 1)])) for k in peaks if values[k] > 0.2 * found]
+    padded = np.concatenate([[-np.inf], values, [-np.inf]])
+    peaks = np.flatnonzero((values >= padded[:-2]) & (values >= padded[2:]) & (values > 0.2 * found))
+    peaks = peaks[np.argsort(-values[peaks], kind="stable")][:5]
+    ends = w.tolist()
+    spans = [(ends[max(k - 1, 0)], ends[min(k + 1, w.size - 1)]) for k in peaks.tolist()]
     for _ in range(rounds):
         if not spans:
             break
         grids = [np.linspace(low, high, 11)[1:-1] for low, high in spans]
         points = np.concatenate(grids)
-        inside = np.isin(points, band.keep(points))
-        new = np.where(inside, 0.0, -1.0)
+        inside = band.contains(points)
+        new = np.full(points.size, -1.0)
         if inside.any():
             new[inside] = error(points[inside])
         top = int(np.argmax(new))

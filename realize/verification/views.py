@@ -8,6 +8,9 @@ point drawn from 2^61 with probability at most 2n/2^61 (Schwartz 1980; Zippel 19
 from __future__ import annotations
 
 import random
+from collections.abc import Iterator
+from contextlib import contextmanager
+from contextvars import ContextVar
 from dataclasses import dataclass
 from functools import cached_property
 from typing import Any
@@ -23,16 +26,34 @@ ComplexArray = NDArray[np.complex128]
 
 #: Predicted operations (about nanoseconds) above which doubles are used.
 EXACT_BUDGET = 5e9
-#: State models of larger order are not looked at: their exact matrices alone would take long to form.
-LARGEST_EXACT = 160
+#: The integers of larger state models are not looked at: their bits are counted from exponents alone.
+LARGEST_COUNTED = 160
 #: Predicted operations of isolating the roots of degree n, over n^3: long coefficients of dense state models.
 ROOT_COST = 5.0e2
 #: State models whose channels have a larger degree get approximate roots: they only say where to look.
 LARGE_DEGREE = 30
 
 
+#: Predicted operations that views of models may take; lifted where exact arithmetic is asked for whatever it costs.
+_allowed: ContextVar[float] = ContextVar("allowed", default=EXACT_BUDGET)
+
+
+@contextmanager
+def whatever_it_costs(lifted: bool = True) -> Iterator[None]:
+    """Inside, views of models are exact without regard to the budget."""
+    token = _allowed.set(np.inf if lifted else _allowed.get())
+    try:
+        yield
+    finally:
+        _allowed.reset(token)
+
+
 def view_of(model: Model) -> View:
     """Return the view of a model, made once: exact fractions and roots are not formed twice."""
+    budget = _allowed.get()
+    if budget != EXACT_BUDGET and predicted_cost(model) > EXACT_BUDGET:
+        # kept apart, so that what other steps choose does not depend on this one
+        return model.remembered("view without budget", lambda: View(model, budget))
     return model.remembered("view", lambda: View(model))
 
 
@@ -82,14 +103,15 @@ def dynamics_of(values: ComplexArray, exact_axis: NDArray[np.bool_], period: flo
 class View:
     """One parametric model, prepared for verification: exact where the predicted cost allows it."""
 
-    def __init__(self, model: Model) -> None:
+    def __init__(self, model: Model, budget: float = EXACT_BUDGET) -> None:
         self.model = model
+        self.budget = budget
         self.period = model.time.seconds if model.time.sampled else None
 
     @cached_property
     def fractions(self) -> list[list[tuple[Any, Any]]] | None:
         """Exact (numerator, denominator) of each channel, common factors cancelled; None where too costly."""
-        if predicted_cost(self.model) > EXACT_BUDGET:
+        if predicted_cost(self.model) > self.budget:
             return None
         return exact_fractions(self.model)
 
@@ -214,15 +236,22 @@ def predicted_cost(model: Model) -> float:
     return model.remembered("cost", lambda: _predicted_cost(model))
 
 
+def _bits_of(model: StateSpace) -> int:
+    """Return about how long the integers of a large model are: a mantissa and the range of the balanced exponents."""
+    from realize.kernels.response import balanced_states
+
+    exponents = np.frexp(balanced_states(model.A, model.B, model.C, model.E)[0])
+    used = exponents[1][exponents[0] != 0]
+    return 53 + (int(used.max()) - int(used.min()) if used.size else 0)
+
+
 def _predicted_cost(model: Model) -> float:
     from realize.kernels.exact import cost
 
     p, m = model.shape
     order = model.order or 0
     if isinstance(model, StateSpace):
-        if order > LARGEST_EXACT:
-            return np.inf
-        bits = cost.matrix_bits(model.exact("A"))
+        bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
         form = cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
         # each channel has its own numerator, whose roots are sought
         return form + (1 + p * m) * ROOT_COST * order**3

@@ -17,8 +17,6 @@ from realize.kernels.exact.integer_scaling import split, state_shifts
 
 #: Operations that one exact step of a conversion may take: some seconds.
 BUDGET = 5e9
-#: Operations that an exact check beside a result in doubles may take.
-CHECK_BUDGET = 5e8
 
 
 def affordable(operations: float, budget: float = BUDGET) -> bool:

@@ -236,8 +236,3 @@ def conjugate(number: acb) -> acb:
 def ball(value: fmpq) -> arb:
     """Return a real ball of the working precision around a rational."""
     return arb(value)
-
-
-def complex_ball(real: fmpq, imaginary: fmpq) -> acb:
-    """Return a complex ball of the working precision around a complex rational."""
-    return acb(arb(real), arb(imaginary))

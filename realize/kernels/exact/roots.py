@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
+from functools import lru_cache
 
 from flint import acb, arb, fmpq, fmpq_poly
 
@@ -85,6 +86,13 @@ def roots(p: fmpq_poly) -> list[Root]:
     """
     if not p:
         raise ValueError("every number is a root of the zero polynomial")
+    return list(_known(tuple(int(c) for c in integer_polynomial(p).coeffs())))
+
+
+@lru_cache(maxsize=32)
+def _known(coefficients: tuple[int, ...]) -> tuple[Root, ...]:
+    """Return the roots of a primitive integer polynomial, lowest power first; kept for the next who asks."""
+    p = fmpq_poly(list(coefficients))
     groups: list[list[Root]] = []
     factors = squarefree(p)
     for factor, multiplicity in factors:
@@ -99,7 +107,7 @@ def roots(p: fmpq_poly) -> list[Root]:
             groups.append(_rounded(item, f, multiplicity, search))
     if len(factors) > 1:
         groups = _apart(groups)
-    return [root for group in sorted(groups, key=_order) for root in group]
+    return tuple(root for group in sorted(groups, key=_order) for root in group)
 
 
 def _apart(groups: list[list[Root]]) -> list[list[Root]]:
