@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import subprocess
+import time
 from pathlib import Path
 from typing import Any
 
@@ -74,7 +75,9 @@ def test_a_child_that_hangs_is_ended(tmp_path: Path, monkeypatch: pytest.MonkeyP
         f"open({str(marker)!r}, 'w').write(str(os.getpid())); time.sleep(60)",
     )
     monkeypatch.setattr(second_opinion, "TIME_LIMIT", 1.5)
+    started = time.monotonic()
     made = convert(PLANT, "zero-pole-gain", second_opinion=True)
+    assert time.monotonic() - started < 30, "ended, not waited for"
     assert made.receipt.second_opinion.status == "failed"
     assert "1.5 s" in made.receipt.second_opinion.note
     with pytest.raises(ProcessLookupError):
