@@ -36,7 +36,9 @@ def channel_band(view: View, i: int, j: int) -> Band:
 def all_bands(view: View) -> list[Band]:
     """Return the dynamic band of every channel that is not identically zero."""
     p, m = view.model.shape
-    return [channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    return view.model.remembered(
+        "bands", lambda: [channel_band(view, i, j) for i in range(p) for j in range(m) if not zero_channel(view, i, j)]
+    )
 
 
 def light_zeros(zeros: Dynamics) -> list[float]:

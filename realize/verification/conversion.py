@@ -22,7 +22,6 @@ from realize.verification.bands import (
     zero_channel,
 )
 from realize.verification.pair import Pair, frobenius
-from realize.verification.proof import LARGEST_DEGREE
 from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds
 from realize.verification.views import view_of
 
@@ -65,6 +64,9 @@ def _largest(
     )
     if not pair.exact or not np.isfinite(found) or w.size == 0:
         return found, where
+    if not pair.provable(channel):
+        at = np.array([where])
+        return float(_quotient(pair, at, pair.sizes(at), lines, channel, divisor)[0]), where
     reference = divisor or None
     for line in lines:
         if not divisor and abs(where - line) <= LIGHT * line:
@@ -88,15 +90,14 @@ def _claimed(
     """Return the claim, proved on the intervals where that is affordable, measured otherwise."""
     if pair.identical:
         return judge(name, 0.0, limit=limit, basis="proved", uncertainty=0.0, where={})
-    if pair.exact and np.isfinite(value):
+    if np.isfinite(value) and pair.provable(channel):
         proof = pair.proof(channel)
         if proof.identical:
             return judge(name, 0.0, limit=limit, basis="proved", uncertainty=0.0, where={})
-        if proof.size <= LARGEST_DEGREE:
-            bound = proof.bound(value, intervals)
-            if bound is not None:
-                hidden = float(np.nextafter(max(bound - value, 0.0), np.inf))
-                return judge(name, value, limit=limit, basis="proved", uncertainty=hidden, where=where)
+        bound = proof.bound(value, intervals)
+        if bound is not None:
+            hidden = float(np.nextafter(max(bound - value, 0.0), np.inf))
+            return judge(name, value, limit=limit, basis="proved", uncertainty=hidden, where=where)
     return judge(name, value, limit=limit, where=where, note=_note(pair))
 
 
@@ -158,8 +159,10 @@ def peak_gain(pair: Pair) -> tuple[float, float]:
     gain, where = largest(
         lambda x: frobenius(pair.quick_sizes(x)[1]), w[inside], band, rounds=2, values=frobenius(size[inside])
     )
-    if pair.exact and np.isfinite(gain):
+    if np.isfinite(gain) and pair.provable(None):
         gain = pair.proof(None).gain_at(where)
+    elif pair.exact and np.isfinite(gain):
+        gain = float(frobenius(pair.sizes(np.array([where]))[1])[0])
     limit = _at_infinity(pair)[1]
     return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)
 

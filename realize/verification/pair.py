@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.verification.proof import Proof
+from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.quick import Moduli
 from realize.verification.search import seeds
 from realize.verification.views import View
@@ -38,6 +38,22 @@ class Pair:
         if channel not in self._proofs:
             self._proofs[channel] = Proof(*self.scaled, self.source.exact_period, channel)
         return self._proofs[channel]
+
+    def provable(self, channel: tuple[int, int] | None) -> bool:
+        """True where an inequality over common denominators is of a degree that can be proved."""
+        if not self.exact:
+            return False
+        degree = 0
+        for view in (self.source, self.result):
+            assert view.fractions is not None
+            rows = view.fractions if channel is None else [[view.fractions[channel[0]][channel[1]]]]
+            flat = [pair for row in rows for pair in row]
+            distinct: dict[str, int] = {}
+            for _, d in flat:
+                if d.degree() > 0:
+                    distinct[str(d) if len(flat) > 1 else ""] = d.degree()
+            degree += sum(distinct.values())
+        return 2 * degree <= LARGEST_DEGREE
 
     @property
     def exact(self) -> bool:
@@ -125,7 +141,7 @@ class Pair:
         """Return the larger gain of the source at the two ends of an interval, in units of 2^exponent."""
         key = (low, high, channel)
         if key not in self._proofs:
-            if self.exact:
+            if self.provable(channel):
                 proof = self.proof(channel)
                 self._proofs[key] = max(proof.gain_at(low), proof.gain_at(high))
             else:
