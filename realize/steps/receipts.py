@@ -61,7 +61,7 @@ def fragility_of(model: Model, frequency: np.ndarray) -> float | None:
     return None if isinstance(model, FrequencyResponse) else fragility(model, frequency)
 
 
-def probe_frequencies(model: Model, count: int = 60) -> np.ndarray:
+def probe_frequencies(model: Model, count: int = 40) -> np.ndarray:
     """Return up to `count` frequencies (rad/s) over the dynamics of a model, none at a pole on the axis."""
     if isinstance(model, FrequencyResponse):
         w = model.radians[model.radians > 0]
@@ -140,6 +140,7 @@ def finish(
     opinion: Callable[[Model], SecondOpinion] | None = None,
     limits: dict[str, float] | None = None,
     details: dict[str, Any] | None = None,
+    digits: int | None = None,
 ) -> Conversion:
     """Return the conversion with its receipt, the model carrying the chain.
 
@@ -151,6 +152,8 @@ def finish(
         Waits for the second opinion about the result.
     limits : dict, optional
         Limits by claim name that were asked for; none of them is passed over in silence.
+    digits : int, optional
+        Decimal digits of the result's numbers, where they are no doubles: its fragility is that of one rounding there.
     """
     claims = [
         msgspec.structs.replace(claim, **{field: plain(getattr(claim, field)) for field in claim.__struct_fields__})
@@ -158,6 +161,9 @@ def finish(
     ]
     frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
     values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
+    if digits is not None and values["result"] is not None:
+        # half a unit of the last digit in place of half a unit of the last bit; numbers that are doubles stay doubles
+        values["result"] *= 0.5 * 10.0 ** max(1 - digits, -300) / (np.finfo(float).eps / 2)
     notes = list(cautions) + fragility_cautions(values, result)
     undecided = [
         claim.name for claim in claims if claim.holds is None and claim.limit is not None and claim.value is not None
