@@ -10,14 +10,20 @@ from realize.steps import convert, explain
 
 
 def execute(
-    context: Context, model: str, to: str | None, form: str | None, common_denominator: bool, **rest: Any
+    context: Context,
+    model: str,
+    to: str | None,
+    form: str | None,
+    common_denominator: bool,
+    digits: int | None,
+    **rest: Any,
 ) -> int:
     """Convert a model file."""
     if to is None:
         raise UsageError("convert needs --to KIND")
     source = load(model)
     if rest.pop("explain"):
-        lines = explain(source, to, form=form, common_denominator=common_denominator)
+        lines = explain(source, to, form=form, common_denominator=common_denominator, digits=digits)
         if context.json:
             record = {"step": "convert", "route": lines}
             write_log(context, record)
@@ -30,6 +36,7 @@ def execute(
         to,
         form=form,
         common_denominator=common_denominator,
+        digits=digits,
         limits=context.limits,
         second_opinion=context.second_opinion,
     )

@@ -12,7 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from realize.conversions import builders
+from realize.conversions import builders, digits
 from realize.errors import Refused, UsageError
 from realize.models import Model, StateSpace
 from realize.verification.views import EXACT_BUDGET, predicted_cost
@@ -20,12 +20,13 @@ from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 @dataclass(frozen=True)
 class Task:
-    """What is wanted: the source, the target kind, the coordinates, and whether channels share a denominator."""
+    """What is wanted: source, target kind, coordinates, whether channels share a denominator, decimal digits if any."""
 
     model: Model
     to: str
     form: str | None = None
     common_denominator: bool = False
+    digits: int | None = None
 
     @property
     def target(self) -> str:
@@ -142,10 +143,13 @@ def plan_route(task: Task) -> list[Row]:
     if task.form is not None and task.to != "state-space":
         raise UsageError(f"--form {task.form} goes with --to state-space, not with --to {task.to}")
     start, goal = task.model.kind, task.target
-    if start == goal and not task.common_denominator:
+    if start == goal and not task.common_denominator and task.digits is None:
         return []
     affordable = predicted_cost(task.model) <= EXACT_BUDGET
     rows = ROWS if affordable else DOUBLE_ROWS
+    if task.digits is not None:
+        # nothing that is computed in doubles has more digits than they have
+        rows = tuple(row for row in rows if row in ROWS)
     queue: list[tuple[tuple[int, int], int, str, list[Row]]] = [((0, 0), 0, start, [])]
     done: set[str] = set()
     count = 0
@@ -165,7 +169,9 @@ def plan_route(task: Task) -> list[Row]:
         f"order {task.model.order} with {task.model.shape[1]} inputs and {task.model.shape[0]} outputs is beyond what "
         f"exact arithmetic can do in seconds, and a {task.to} of that size could not be trusted in doubles; "
         + (
-            "ask for --to pole-residue, or --to state-space --form modal, or reduce the model first"
+            "leave out --digits, or reduce the model first"
+            if task.digits is not None
+            else "ask for --to pole-residue, or --to state-space --form modal, or reduce the model first"
             if isinstance(task.model, StateSpace)
             else "split it into smaller plants, or give it as a state model"
         )
@@ -176,5 +182,8 @@ def convert_model(task: Task, route: list[Row]) -> Model:
     """Follow a route and return the model at its end, without receipts."""
     value: Any = task.model
     for row in route:
-        value = row.apply(value, task)
+        apply = row.apply
+        if task.digits is not None:
+            apply = digits.BUILDERS.get((row.source, row.target), row.apply)
+        value = apply(value, task)
     return value

@@ -86,6 +86,9 @@ VERBS: dict[str, Verb] = {
                 TO_KIND,
                 Option("form", "choice", "coordinates of a state-space result", FORMS),
                 Option("common-denominator", "flag", "one denominator for all channels of a transfer function"),
+                Option(
+                    "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"
+                ),
                 Option("explain", "flag", "print the route and why, and stop"),
             ),
         ),

@@ -10,17 +10,20 @@ import numpy as np
 from realize.conversions import ROWS, Task, convert_model, plan_route
 from realize.errors import Refused, UsageError
 from realize.models import FrequencyResponse, Model
+from realize.models.checks import MAX_DIGITS
 from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
 from realize.verification import conversion_claims, view_of
 
+#: Kinds that `digits` goes with: every other holds matrices or samples in doubles.
+WITH_DIGITS = ("transfer-function", "zero-pole-gain", "pole-residue", "sections")
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
 GOOD = 1e-9
 
 
-def _task(model: Model, to: str, form: str | None, common_denominator: bool) -> Task:
+def _task(model: Model, to: str, form: str | None, common_denominator: bool, digits: int | None = None) -> Task:
     if to not in PARAMETRIC_KINDS:
         raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
     if form is not None and form not in FORMS:
@@ -29,14 +32,24 @@ def _task(model: Model, to: str, form: str | None, common_denominator: bool) -> 
         raise UsageError("--common-denominator goes with --to transfer-function")
     if isinstance(model, FrequencyResponse):
         raise Refused("a frequency response has no exact conversion to a model; use fit")
-    return Task(model, to, form, common_denominator)
+    if digits is not None:
+        if to not in WITH_DIGITS:
+            raise UsageError(f"--digits goes with --to {', '.join(WITH_DIGITS)}, not with --to {to}")
+        if isinstance(digits, bool) or not isinstance(digits, int) or not 1 <= digits <= MAX_DIGITS:
+            raise UsageError(f"--digits {digits}: expected a whole number from 1 to {MAX_DIGITS}")
+    return Task(model, to, form, common_denominator, digits)
 
 
 def explain(
-    model: Model | Conversion, to: str, *, form: str | None = None, common_denominator: bool = False
+    model: Model | Conversion,
+    to: str,
+    *,
+    form: str | None = None,
+    common_denominator: bool = False,
+    digits: int | None = None,
 ) -> list[str]:
     """Return the route of a conversion in words, one line a row."""
-    task = _task(model_of(model), to, form, common_denominator)
+    task = _task(model_of(model), to, form, common_denominator, digits)
     route = plan_route(task)
     if not route:
         return [f"{task.model.kind} stays as it is (exact)"]
@@ -50,6 +63,7 @@ def convert(
     *,
     form: str | None = None,
     common_denominator: bool = False,
+    digits: int | None = None,
     limits: dict[str, float] | None = None,
     second_opinion: bool = False,
 ) -> Conversion:
@@ -65,6 +79,9 @@ def convert(
         a state-space source has.
     common_denominator : bool
         One denominator for all channels of a transfer function.
+    digits : int, optional
+        Decimals with so many correct significant digits in place of doubles (1 to 2000); for transfer-function,
+        zero-pole-gain, pole-residue and sections. Numbers that are doubles exactly may stay doubles.
     limits : dict, optional
         Limits by claim name, instead of the defaults.
     second_opinion : bool
@@ -80,7 +97,7 @@ def convert(
     """
     started = time.perf_counter()
     source = model_of(model)
-    task = _task(source, to, form, common_denominator)
+    task = _task(source, to, form, common_denominator, digits)
     with asking("convert", source, {"to": to}, second_opinion) as opinion:
         route = plan_route(task)
         result = convert_model(task, route)
@@ -107,6 +124,7 @@ def convert(
             opinion=opinion,
             limits=limits,
             details={"form": shape} if shape else {},
+            digits=digits,
         )
 
 
