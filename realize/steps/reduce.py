@@ -123,7 +123,7 @@ def reduce(
         limit = absolute_error
         if error is not None and found.largest_gain is not None:
             limit = error * found.largest_gain
-        claims = reduction_claims(plain, result, bound=found.bound, limit=limit, limits=limits or {})
+        claims = reduction_claims(source, plain, result, bound=found.bound, limit=limit, limits=limits or {})
         claims += [order_claim(result, (limits or {}).get("order")), stability_claim(result)]
         return finish(
             "reduce",

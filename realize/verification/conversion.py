@@ -51,7 +51,7 @@ def _quotient(
     return np.where(above == 0, 0.0, error)
 
 
-def _largest(
+def largest_error(
     pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None, divisor: float = 0.0
 ) -> tuple[float, float]:
     """Return the largest error found and its frequency: the search is quick, the value that it finds exact."""
@@ -108,7 +108,7 @@ def response_error(pair: Pair, limit: float | None = None) -> Claim:
     band = Band(min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles))
     zeros = common_zeros(view)
     lines = light_zeros(zeros)
-    value, where = _largest(pair, band, lines, None)
+    value, where = largest_error(pair, band, lines, None)
     intervals = intervals_of(pair, band, lines, None) if pair.exact else []
     return _claimed("response-error", pair, value, {"frequency": where}, limit, intervals)
 
@@ -135,7 +135,7 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 band = channel_band(view, i, j)
                 lines = light_zeros(view.channel_roots[i][j][0])
                 intervals = intervals_of(pair, band, lines, (i, j)) if pair.exact else []
-            value, where = _largest(pair, band, lines, (i, j), reference)
+            value, where = largest_error(pair, band, lines, (i, j), reference)
             place = {"frequency": where, "output": i, "input": j}
             claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
             if worst is None or _total(claim) > _total(worst):
@@ -163,11 +163,11 @@ def peak_gain(pair: Pair) -> tuple[float, float]:
         gain = pair.proof(None).gain_at(where)
     elif pair.exact and np.isfinite(gain):
         gain = float(frobenius(pair.sizes(np.array([where]))[1])[0])
-    limit = _at_infinity(pair)[1]
+    limit = at_infinity(pair)[1]
     return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)
 
 
-def _at_infinity(pair: Pair) -> tuple[float, float]:
+def at_infinity(pair: Pair) -> tuple[float, float]:
     """Return the limits of ||dG|| and ||G|| at infinite frequency; (0, 0) where only samples are known, or sampled."""
     if not pair.exact or pair.source.period is not None:
         return 0.0, 0.0
@@ -192,12 +192,12 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     the origin from the lower end of that band on.
     """
     gain, _ = peak_gain(pair)
-    end_difference, end_gain = _at_infinity(pair)
+    end_difference, end_gain = at_infinity(pair)
     improper = not np.isfinite(end_gain)
     band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source, other=pair.result)
     if improper:
         gain, _ = largest(lambda x: frobenius(pair.sizes(x)[1]), seeds(band, pair.source.poles), band)
-    value, where = _largest(pair, band, [], None, 1.0)
+    value, where = largest_error(pair, band, [], None, 1.0)
     place: dict[str, Any] = {"frequency": where}
     if not improper and end_difference > value:
         value, place = end_difference, {"frequency": None}

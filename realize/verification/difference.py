@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -10,10 +12,12 @@ from realize.kernels.lyapunov import NotStable
 from realize.models import Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import Claim, judge
-from realize.verification.bands import whole_band
+from realize.schema.records import Basis
+from realize.verification.bands import Interval, intervals_of, whole_band
+from realize.verification.conversion import at_infinity, largest_error, peak_gain
 from realize.verification.fragility import fragility
 from realize.verification.pair import Pair
-from realize.verification.search import largest, seeds
+from realize.verification.search import Band, axis_intervals, largest, seeds
 from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
@@ -47,60 +51,92 @@ def rounding_of(first: Model, second: Model, gain: float, frequency: Array) -> f
 def linf_error(first: Model, second: Model, *, name: str = "linf-error", limit: float | None = None) -> Claim:
     """Return the L-infinity norm of the difference, absolute, with the value relative to the first one's largest gain.
 
-    Two state models whose difference is well above rounding: confirmed by Hamiltonian eigenvalues ("bounded"). Else the
-    largest value found, from exact fractions where affordable ("measured").
+    Intervals around poles on the axis are left out; a pole at the origin leaves out what is below the dynamic band.
+    From exact fractions where affordable: proved for one channel, and for several by the Frobenius norm unless
+    Hamiltonian eigenvalues of two state models give a closer bound. In doubles otherwise.
     """
     pair = Pair(view_of(first), view_of(second))
-    band = whole_band(pair.source)
-    w = seeds(band, pair.source.poles, pair.result.poles)
-    gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band)
-    if both_states(first, second):
-        assert isinstance(first, StateSpace) and isinstance(second, StateSpace)
-        period = first.time.seconds if first.time.sampled else None
-        peak = norms.peak_gain(*difference_states(first, second), sampled=period is not None, tolerance=TOLERANCE)
-        rounding = rounding_of(first, second, gain, w[:: max(1, w.size // 40)])
-        if not np.isfinite(peak.value) or peak.value > 100 * rounding:
-            where = peak.frequency / period if period is not None else peak.frequency
-            place = {"frequency": where} if np.isfinite(where) else {"frequency": None, "note": "at infinite frequency"}
-            uncertainty = peak.upper - peak.value + rounding if peak.basis == "bounded" else None
-            return judge(
-                name,
-                peak.value,
-                unit="absolute",
-                basis=peak.basis,
-                limit=limit,
-                uncertainty=uncertainty,
-                where=place,
-                relative=peak.value / gain if gain > 0 else None,
-            )
-    value, where = _searched(pair, w, band)
+    if pair.identical or (pair.provable(None) and pair.proof(None).identical):
+        return judge(name, 0.0, unit="absolute", basis="proved", uncertainty=0.0, limit=limit, relative=0.0)
+    band, pieces = _domain(pair)
+    basis: Basis
+    if pair.exact:
+        gain = peak_gain(pair)[0]
+        value, where, bound, basis = _from_fractions(pair, band, pieces)
+        if pair.source.model.shape != (1, 1) and not band.left_out and band.zero:
+            closer = _confirmed(pair, first, second, value, gain)
+            if closer is not None and (bound is None or closer < bound):
+                bound, basis = closer, "bounded"
+        scale = pair.exponent
+        value, gain = _lifted(value, scale), _lifted(gain, scale)
+        bound = None if bound is None else _lifted(bound, scale)
+        note = ""
+    else:
+        value, where, bound, gain = _in_doubles(pair, first, second, band)
+        basis, note = "measured" if bound is None else "bounded", "evaluated in double arithmetic"
+    hidden = None if bound is None else float(np.nextafter(max(bound - value, 0.0), np.inf))
     return judge(
         name,
         value,
         unit="absolute",
+        basis=basis,
         limit=limit,
-        where={"frequency": where},
-        relative=value / gain if gain > 0 else None,
-        note="" if pair.exact else "evaluated in double arithmetic",
+        uncertainty=hidden,
+        where={"frequency": where if np.isfinite(where) else None},
+        relative=value / gain if gain > 0 and np.isfinite(gain) else None,
+        note=note,
     )
 
 
-def _searched(pair: Pair, w: Array, band: object) -> tuple[float, float]:
-    if pair.source.model.shape == (1, 1) or not pair.exact:
-        if pair.source.model.shape == (1, 1):
-            return largest(lambda x: pair.sizes(x)[0][:, 0, 0], w, band)  # type: ignore[arg-type]
-        return largest(lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band)  # type: ignore[arg-type]
+def _lifted(value: float, exponent: int) -> float:
+    with np.errstate(over="ignore", under="ignore"):
+        return float(np.ldexp(value, exponent))
+
+
+def _domain(pair: Pair) -> tuple[Band, list[Interval]]:
+    """Return the band of the search, and the intervals of the norm (all frequencies, axis poles left out)."""
+    axis = pair.source.poles.merged(pair.result.poles) if pair.exact else pair.source.poles
+    band = whole_band(pair.source, other=pair.result)
+    left_out = axis_intervals(axis)
+    at_origin = bool(np.any(axis.s == 0))
+    band = Band(band.low, band.high, not at_origin, left_out)
+    if at_origin and band.zero:
+        band = Band(band.low, band.high, False, left_out)
+    full = Band(band.low if at_origin else 0.0, np.inf, False, left_out)
+    return band, [(low, high, 1.0) for low, high, _ in intervals_of(pair, full, [], None)]
+
+
+def _from_fractions(pair: Pair, band: Band, pieces: list[Interval]) -> tuple[float, float, float | None, Basis]:
+    """Return largest gain of the difference, its frequency, a bound if one was proved (in units of 2^exponent)."""
+    frobenius_peak, where = largest_error(pair, band, [], None, 1.0)
+    at_end = at_infinity(pair)[0]
+    if at_end > frobenius_peak:
+        frobenius_peak, where = at_end, np.inf
+    value = frobenius_peak
+    if pair.source.model.shape != (1, 1):
+        value, where = _largest_singular(pair, band)
+        end = _singular_at_infinity(pair)
+        if end > value:
+            value, where = end, np.inf
+    if not np.isfinite(frobenius_peak) or not pair.provable(None):
+        return value, where, None, "measured"
+    bound = pair.proof(None).bound(frobenius_peak, pieces)
+    return value, where, bound, "measured" if bound is None else "proved"
+
+
+def _cross(pair: Pair) -> list[list[tuple[Any, Any]]]:
+    """Numerator and denominator of each channel of the difference."""
+    return [
+        [(n2 * d1 - n1 * d2, d1 * d2) for (n1, d1), (n2, d2) in zip(one, two, strict=True)]
+        for one, two in zip(*pair.scaled, strict=True)
+    ]
+
+
+def _largest_singular(pair: Pair, band: Band) -> tuple[float, float]:
     from realize.kernels.exact.evaluation import evaluate
 
-    assert pair.source.fractions is not None and pair.result.fractions is not None
     p, m = pair.source.model.shape
-    cross = [
-        [
-            (n2 * d1 - n1 * d2, d1 * d2)
-            for (n1, d1), (n2, d2) in zip(pair.source.fractions[i], pair.result.fractions[i], strict=True)
-        ]
-        for i in range(p)
-    ]
+    cross = _cross(pair)
 
     def difference(x: Array) -> Array:
         values = np.empty((x.size, p, m), dtype=complex)
@@ -109,7 +145,55 @@ def _searched(pair: Pair, w: Array, band: object) -> tuple[float, float]:
                 values[:, i, j] = evaluate(*cross[i][j], x, pair.source.exact_period)[0]
         return norms.gains(values)
 
-    return largest(difference, w, band)  # type: ignore[arg-type]
+    return largest(difference, band.keep(pair.grid[0]), band)
+
+
+def _singular_at_infinity(pair: Pair) -> float:
+    """Return the largest singular value of the limit at infinite frequency; 0 for sampled models."""
+    if pair.source.period is not None:
+        return 0.0
+    from realize.kernels.exact.numbers import nearest
+
+    def limit(n: Any, d: Any) -> float:
+        if not n or n.degree() < d.degree():
+            return 0.0
+        return np.inf if n.degree() > d.degree() else nearest(n.leading_coefficient() / d.leading_coefficient())
+
+    matrix = np.array([[limit(n, d) for n, d in row] for row in _cross(pair)])
+    return float(norms.gains(matrix[None].astype(complex))[0])
+
+
+def _confirmed(pair: Pair, first: Model, second: Model, value: float, gain: float) -> float | None:
+    """Return the Hamiltonian bound on the difference of two state models in units of 2^exponent, or None."""
+    if not both_states(first, second):
+        return None
+    assert isinstance(first, StateSpace) and isinstance(second, StateSpace)
+    peak = norms.peak_gain(
+        *difference_states(first, second), sampled=pair.source.period is not None, tolerance=TOLERANCE
+    )
+    if peak.basis != "bounded" or not np.isfinite(peak.upper):
+        return None
+    w = pair.grid[0]
+    rounding = rounding_of(first, second, gain, w[w > 0][:: max(1, w.size // 40)])
+    upper = _lifted(peak.upper, -pair.exponent) + rounding
+    # a difference that is all rounding is not bounded by eigenvalues that carry the same rounding
+    return upper if value > 100 * rounding and upper >= value else None
+
+
+def _in_doubles(pair: Pair, first: Model, second: Model, band: Band) -> tuple[float, float, float | None, float]:
+    """Return value, frequency, bound (None where nothing is confirmed) and largest gain of the source."""
+    w = seeds(band, pair.source.poles, pair.result.rough_poles)
+    gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band, rounds=2)
+    if both_states(first, second) and not band.left_out and band.zero:
+        assert isinstance(first, StateSpace) and isinstance(second, StateSpace)
+        period = first.time.seconds if first.time.sampled else None
+        peak = norms.peak_gain(*difference_states(first, second), sampled=period is not None, tolerance=TOLERANCE)
+        rounding = rounding_of(first, second, gain, w[:: max(1, w.size // 40)])
+        if np.isfinite(peak.value) and peak.value > 100 * rounding:
+            where = peak.frequency / period if period is not None else peak.frequency
+            return peak.value, where, peak.upper + rounding if peak.basis == "bounded" else None, gain
+    value, where = largest(lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band)
+    return value, where, None, gain
 
 
 def h2_error(first: StateSpace, second: StateSpace) -> Claim:

@@ -173,7 +173,7 @@ class Proof:
             return 0.0
         if not below:
             return math.inf
-        value = _root(above / below)
+        value = square_root(above / below)
         return value if reference is None else value / reference
 
     def gain_at(self, frequency: float) -> float:
@@ -185,7 +185,7 @@ class Proof:
             above, below = top[degree], bottom[degree]
         else:
             above, below = top(x), bottom(x)
-        return _root(above / below) if below else math.inf
+        return square_root(above / below) if below else math.inf
 
     @cached_property
     def gain_squares(self) -> tuple[Any, Any]:
@@ -242,7 +242,7 @@ class Proof:
         return None
 
 
-def _root(square: Any) -> float:
+def square_root(square: Any) -> float:
     """Return the square root of an exact rational; infinite or zero past the range of doubles."""
     from realize.kernels.exact.numbers import scaled
 
