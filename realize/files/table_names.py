@@ -3,7 +3,7 @@
 A name is a role, a unit and the label of a channel, in any order and case, joined by blanks,
 ``_``, ``-``, ``.`` or ``:``. The unit may stand in brackets or behind a slash.
 
-- frequency: ``frequency``, ``freq``, ``f`` with Hz, kHz, MHz, GHz or rad/s; ``omega`` or ``w`` (rad/s); ``GHz``
+- frequency: ``frequency``, ``freq``, ``f`` with Hz, kHz, MHz, GHz, mHz or rad/s; ``omega`` or ``w`` (rad/s); ``GHz``
 - real part and imaginary part: ``real``, ``re``; ``imaginary``, ``imag``, ``im``
 - magnitude: ``magnitude``, ``mag``, ``abs``, ``amplitude``, ``gain`` (linear, or dB)
 - phase: ``phase``, ``arg``, ``angle`` (deg or rad)
@@ -19,7 +19,14 @@ import re
 from dataclasses import dataclass
 
 #: unit of frequency -> power of ten, unit that is kept
-FREQUENCY_UNITS = {"hz": (0, "Hz"), "khz": (3, "Hz"), "mhz": (6, "Hz"), "ghz": (9, "Hz"), "rad/s": (0, "rad/s")}
+FREQUENCY_UNITS = {
+    "hz": (0, "Hz"),
+    "khz": (3, "Hz"),
+    "mhz": (6, "Hz"),
+    "ghz": (9, "Hz"),
+    "millihz": (-3, "Hz"),
+    "rad/s": (0, "rad/s"),
+}
 UNITS = {
     **{unit: unit for unit in FREQUENCY_UNITS},
     "rads": "rad/s",
@@ -91,7 +98,7 @@ def parse(name: str) -> Column:
     else:
         behind = _UNIT_LAST.fullmatch(text)
         if behind is not None:
-            unit, text = UNITS[behind[2].lower()], behind[1]
+            unit, text = _unit(behind[2]), behind[1]
     text = text.strip(" \t_-.:")
     if not text and unit:
         role = "frequency" if unit in FREQUENCY_UNITS else {"db": "magnitude", "deg": "phase"}.get(unit, "")
@@ -108,7 +115,9 @@ def parse(name: str) -> Column:
 
 
 def _unit(text: str) -> str:
-    return UNITS.get(_RADIANS.sub("rad/s", text).strip().lower(), "")
+    """Return the unit that a spelling stands for; case counts for mHz (milli) alone, all else in it is mega."""
+    spelled = _RADIANS.sub("rad/s", text).strip()
+    return "millihz" if spelled == "mHz" else UNITS.get(spelled.lower(), "")
 
 
 #: Units that belong to a role; others (of the quantity itself, such as V or m/N) are left alone.

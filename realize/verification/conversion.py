@@ -311,8 +311,11 @@ def conversion_claims(
 
     pair = Pair(view_of(source), view_of(result))
     late = dead_time_difference(source, result)
-    if late > 0:
-        note = f"the dead times differ by up to {late:.3g} s"
+    same_clock = source.time.sampled == result.time.sampled and (
+        not source.time.sampled or source.time.exact_period == result.time.exact_period
+    )
+    if late > 0 or not same_clock:
+        note = f"the dead times differ by up to {late:.3g} s" if same_clock else "the time bases differ"
         return [
             judge(name, np.inf, limit=limit(name), basis="bounded", note=note)
             for name in ("response-error", "peak-error", "end-behaviour")
