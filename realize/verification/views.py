@@ -30,6 +30,10 @@ EXACT_BUDGET = 5e9
 LARGEST_COUNTED = 160
 #: Predicted operations of isolating the roots of degree n, over n^3: long coefficients of dense state models.
 ROOT_COST = 5.0e2
+#: The same for other kinds, whose roots may be clustered.
+CLUSTERED = 1.5e3
+#: Predicted operations of the claims about one channel, over its degree.
+CHANNEL_COST = 2e6
 #: State models whose channels have a larger degree get approximate roots: they only say where to look.
 LARGE_DEGREE = 30
 
@@ -265,9 +269,12 @@ def _predicted_cost(model: Model) -> float:
         degrees = [
             z.size + q.size for a, b in zip(model.zeros, model.poles, strict=True) for z, q in zip(a, b, strict=True)
         ]
+    elif isinstance(model, PoleResidue):
+        present = np.count_nonzero(model.residues, axis=0) + model.direct.shape[0]
+        degrees = (2 * present).reshape(-1).tolist()
     else:
         degrees = [2 * order] * (p * m)
-    return float(sum(ROOT_COST * (degree / 2) ** 3 + 1e5 * degree for degree in degrees))
+    return float(sum(CLUSTERED * (degree / 2) ** 3 + CHANNEL_COST * (1 + degree) for degree in degrees))
 
 
 def approximate_roots(polynomial: Any) -> ComplexArray | None:
