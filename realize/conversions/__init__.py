@@ -1,5 +1,25 @@
-"""Conversions between kinds: rows of one table, a route that can be printed."""
+"""Conversions between kinds: rows of two tables, a route that can be printed."""
 
-from realize.conversions.route import ROWS, Row, Task, convert_model, default_form, plan_route
+from realize.conversions.route import (
+    DOUBLE_ROWS,
+    ROWS,
+    Choice,
+    Row,
+    Task,
+    choose_arithmetic,
+    convert_model,
+    default_form,
+    plan_route,
+)
 
-__all__ = ["ROWS", "Row", "Task", "convert_model", "default_form", "plan_route"]
+__all__ = [
+    "DOUBLE_ROWS",
+    "ROWS",
+    "Choice",
+    "Row",
+    "Task",
+    "choose_arithmetic",
+    "convert_model",
+    "default_form",
+    "plan_route",
+]

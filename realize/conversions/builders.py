@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import TYPE_CHECKING, Any
 
@@ -41,6 +41,8 @@ class Factors:
     zeros: list[complex]
     poles: list[complex]
     gain: Fraction
+    #: Sampled models: those of them that are exactly on the unit circle, whatever their doubles are.
+    circle: frozenset[complex] = field(default=frozenset(), kw_only=True)
 
 
 def _python(value: Any) -> Fraction:
@@ -78,7 +80,7 @@ def _over_common_denominator(grid: Grid) -> Grid:
     return [[(n * (common // d), common) for n, d in row] for row in reduced]
 
 
-def _rounded(values: list[Any]) -> tuple[list[float], dict[int, str]]:
+def rounded(values: list[Any]) -> tuple[list[float], dict[int, str]]:
     """Return the nearest doubles, and decimal strings for the numbers that no double can hold."""
     from realize.kernels.exact.numbers import decimal_string, fraction, nearest
 
@@ -109,7 +111,7 @@ def transfer_function(grid: Grid, task: Task) -> TransferFunction:
         lines: tuple[list[Any], list[Any]] = ([], [])
         for j, pair in enumerate(row):
             for name, polynomial, line in zip(("numerator", "denominator"), pair, lines, strict=True):
-                doubles, strings = _rounded(coefficients(polynomial))
+                doubles, strings = rounded(coefficients(polynomial))
                 line.append(doubles)
                 decimals[name].update({(i, j, k): text for k, text in strings.items()})
         result["numerator"].append(lines[0])
@@ -133,12 +135,18 @@ def factors_as_given(model: Model, task: Task) -> list[list[Factors]]:
 
 def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
     """Certified poles and zeros, correctly rounded, with exact multiplicities."""
-    from realize.kernels.exact.roots import roots
+    from realize.kernels.exact.roots import roots, unit_circle
+
+    on_circle: set[complex] = set()
 
     def listed(polynomial: Any) -> list[complex]:
         if polynomial.degree() < 1:
             return []
-        found = [root.value for root in roots(polynomial) for _ in range(root.multiplicity)]
+        distinct = roots(polynomial)
+        if task.model.time.sampled:
+            flags = unit_circle(polynomial, distinct)
+            on_circle.update(root.value for root, flag in zip(distinct, flags, strict=True) if flag)
+        found = [root.value for root in distinct for _ in range(root.multiplicity)]
         for value in found:
             if not (np.isfinite(value.real) and np.isfinite(value.imag)):
                 raise Refused("a pole or zero lies beyond the range of doubles; scale time first")
@@ -152,7 +160,8 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
                 line.append(Factors([], listed(d), Fraction(0)))
                 continue
             gain = _python(n.leading_coefficient() / d.leading_coefficient())
-            line.append(Factors(listed(n), listed(d), gain))
+            zeros, poles = listed(n), listed(d)
+            line.append(Factors(zeros, poles, gain, circle=frozenset(on_circle)))
         result.append(line)
     return result
 
@@ -162,7 +171,7 @@ def zero_pole_gain(factors: list[list[Factors]], task: Task) -> ZeroPoleGain:
     gains: list[list[float]] = []
     decimals: dict[tuple[int, ...], str] = {}
     for i, row in enumerate(factors):
-        doubles, strings = _rounded([channel.gain for channel in row])
+        doubles, strings = rounded([channel.gain for channel in row])
         gains.append(doubles)
         decimals.update({(i, j): text for j, text in strings.items()})
     return ZeroPoleGain(
@@ -197,7 +206,7 @@ def pole_residue(grid: Grid, task: Task) -> PoleResidue:
                     key = (root.value, power)
                     entries.setdefault(key, np.zeros((p, m), dtype=complex))[i, j] += value
             for power, term in enumerate(reversed(polynomial)):
-                direct.setdefault(power, np.zeros((p, m)))[i, j] = _rounded([term])[0][0]
+                direct.setdefault(power, np.zeros((p, m)))[i, j] = rounded([term])[0][0]
     degree = max(direct, default=0)
     parts = [direct.get(power, np.zeros((p, m))) for power in range(degree, -1, -1)]
     if not np.all(np.isfinite(parts)):
@@ -227,12 +236,14 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
     for k, (zeros, poles) in enumerate(grouped):
         pair = []
         for which, roots in enumerate((zeros, poles)):
-            doubles, strings = _rounded(monic(tuple(roots)))
+            doubles, strings = rounded(monic(tuple(roots)))
+            if len(roots) == 2 and roots[0] in channel.circle:
+                doubles[2] = 1.0
             shift = 3 - len(doubles)
             pair.append([0.0] * shift + doubles)
             decimals.update({(k, which, shift + c): text for c, text in strings.items()})
         rows.append(pair)
-    (gain,), strings = _rounded([channel.gain])
+    (gain,), strings = rounded([channel.gain])
     return Sections(
         sections=np.array(rows).reshape(len(rows), 2, 3),
         gain=gain,
@@ -241,7 +252,8 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
     )
 
 
-def _state_model(task: Task, A: Any, B: Any, C: Any, D: Any, E: Any = None) -> StateSpace:
+def state_model(task: Task, A: Any, B: Any, C: Any, D: Any, E: Any = None) -> StateSpace:
+    """State model with the signals of the source, refused with entries beyond the doubles."""
     for name, value in zip("ABCD", (A, B, C, D), strict=True):
         if not np.all(np.isfinite(value)):
             raise Refused(f"an entry of {name} lies beyond the range of doubles; scale time or gain first")
@@ -250,12 +262,12 @@ def _state_model(task: Task, A: Any, B: Any, C: Any, D: Any, E: Any = None) -> S
 
 def cascade(factors: list[list[Factors]], task: Task) -> StateSpace:
     """One cascade for each channel, side by side; an improper channel gets its polynomial part by itself."""
-    with _in_range():
-        return _assemble(task, [[_cascade_channel(channel, task) for channel in row] for row in factors])
+    with in_range():
+        return assemble(task, [[cascade_channel(channel, task) for channel in row] for row in factors])
 
 
 @contextmanager
-def _in_range() -> Iterator[None]:
+def in_range() -> Iterator[None]:
     """Turn an entry beyond the range of doubles into words."""
     try:
         yield
@@ -263,10 +275,11 @@ def _in_range() -> Iterator[None]:
         raise Refused("an entry of the result lies beyond the range of doubles; scale time or gain first") from None
 
 
-def _cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
+def cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
+    """Matrices A, B, C, D of one channel as a cascade, and its polynomial part, None where there is none."""
     if len(channel.zeros) <= len(channel.poles):
         grouped = group_roots(channel.zeros, channel.poles, task.model.time.sampled)
-        return (*cascade_states(grouped, channel.gain, task.model.time.sampled), None)
+        return (*cascade_states(grouped, channel.gain, task.model.time.sampled, channel.circle), None)
     from realize.kernels.exact import polynomials
     from realize.kernels.exact.numbers import fraction
 
@@ -279,11 +292,11 @@ def _cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
     whole, rest = divmod(n * gain, d)
     sampled = task.model.time.sampled
     part = factors_from_fractions([[(rest, d)]], task)[0][0]
-    A, B, C, D = cascade_states(group_roots(part.zeros, part.poles, sampled), part.gain, sampled)
-    return A, B, C, D, np.array([[[value]] for value in _rounded(polynomials.coefficients(whole))[0]])
+    A, B, C, D = cascade_states(group_roots(part.zeros, part.poles, sampled), part.gain, sampled, part.circle)
+    return A, B, C, D, np.array([[[value]] for value in rounded(polynomials.coefficients(whole))[0]])
 
 
-def _assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
+def assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
     """Put the channels side by side, identically zero ones left out, the polynomial parts in one descriptor block."""
     p, m = len(grid), len(grid[0])
     keep = [(i, j) for i in range(p) for j in range(m) if p * m == 1 or np.any(grid[i][j][2]) or np.any(grid[i][j][3])]
@@ -305,8 +318,8 @@ def _assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
             if own is not None:
                 polynomial[degree + 1 - own.shape[0] :, i, j] = own[:, 0, 0]
     if degree == 0 and not np.any(polynomial):
-        return _state_model(task, A, B, C, D)
-    return _state_model(task, *append_polynomial_part(A, B, C, D, polynomial))
+        return state_model(task, A, B, C, D)
+    return state_model(task, *append_polynomial_part(A, B, C, D, polynomial))
 
 
 def cascade_of_sections(model: Model, task: Task) -> StateSpace:
@@ -325,8 +338,8 @@ def cascade_of_sections(model: Model, task: Task) -> StateSpace:
             grouped.append(Section(_paired(part.poles), _paired(part.zeros)))
     if not ok:
         return cascade(factors_from_fractions(form_fractions(model), task), task)
-    with _in_range():
-        return _state_model(task, *cascade_states(grouped, gain, model.time.sampled))
+    with in_range():
+        return state_model(task, *cascade_states(grouped, gain, model.time.sampled))
 
 
 def _paired(roots: list[complex]) -> tuple[complex, ...]:
@@ -337,8 +350,8 @@ def modal(model: PoleResidue, task: Task) -> StateSpace:
     """One block for each pole or pair; the polynomial part in a descriptor block."""
     A, B, C, D = modal_states(model.poles, model.residues, model.powers, model.direct[-1])
     if model.direct.shape[0] > 1:
-        return _state_model(task, *append_polynomial_part(A, B, C, np.zeros_like(D), model.direct))
-    return _state_model(task, A, B, C, D)
+        return state_model(task, *append_polynomial_part(A, B, C, np.zeros_like(D), model.direct))
+    return state_model(task, A, B, C, D)
 
 
 def _companion_input(grid: Grid, task: Task, *, inputs: bool) -> tuple[list[list[Fraction]], list[Fraction], Any]:
@@ -369,18 +382,18 @@ def _companion(grid: Grid, task: Task, *, inputs: bool) -> StateSpace:
 
     numerators, denominator, wholes = _companion_input(grid, task, inputs=inputs)
     build = controllable_companion if inputs else observable_companion
-    with _in_range():
+    with in_range():
         A, B, C, D = build(numerators, denominator)
     if all(whole is None for whole in wholes):
-        return _state_model(task, A, B, C, D)
+        return state_model(task, A, B, C, D)
     degree = max(whole.degree() for whole in wholes if whole is not None)
     polynomial = np.zeros((degree + 1, *D.shape))
     for k, whole in enumerate(wholes):
         if whole is not None:
-            values = _rounded(coefficients(whole))[0]
+            values = rounded(coefficients(whole))[0]
             place = (k, 0) if inputs else (0, k)
             polynomial[(slice(degree + 1 - len(values), None), *place)] = values
-    return _state_model(task, *append_polynomial_part(A, B, C, D, polynomial))
+    return state_model(task, *append_polynomial_part(A, B, C, D, polynomial))
 
 
 def controllable(grid: Grid, task: Task) -> StateSpace:
@@ -391,43 +404,3 @@ def controllable(grid: Grid, task: Task) -> StateSpace:
 def observable(grid: Grid, task: Task) -> StateSpace:
     """Observable companion form, one output."""
     return _companion(grid, task, inputs=False)
-
-
-def residues_in_doubles(model: Model, task: Task) -> PoleResidue:
-    """Poles and residues of a large state model by eigenvalues and eigenvectors.
-
-    Raises
-    ------
-    Refused
-        If the eigenvectors are too ill-conditioned for the residues to mean anything.
-    """
-    import scipy.linalg
-
-    from realize.kernels.response import balanced_states
-
-    assert isinstance(model, StateSpace)
-    if model.E is not None:
-        raise Refused("a descriptor model of this order cannot be diagonalised safely; reduce it or remove E first")
-    A, B, C, _ = balanced_states(model.A, model.B, model.C, None)
-    values, left, right = scipy.linalg.eig(A, left=True)
-    overlap = np.einsum("ij,ij->j", left.conj(), right)
-    with np.errstate(divide="ignore"):
-        condition = float(np.max(1 / np.abs(overlap)))
-    if not condition < 1e10:
-        raise Refused(
-            f"the eigenvectors have condition {condition:.1e}: poles so close together that their residues have no "
-            "correct digit; keep the state space, or reduce the model first"
-        )
-    into = (left.conj().T @ B) / overlap[:, None]
-    out = C @ right
-    upper = values.imag > 0
-    real = values.imag == 0
-    residues = out.T[:, :, None] * into[:, None, :]
-    poles = np.concatenate([np.stack([values[upper], values[upper].conj()], axis=1).reshape(-1), values[real]])
-    parts = np.concatenate(
-        [
-            np.stack([residues[upper], residues[upper].conj()], axis=1).reshape(-1, *model.shape),
-            residues[real].real.astype(complex),
-        ]
-    )
-    return PoleResidue(poles=poles, residues=parts, direct=model.D, **model.common())

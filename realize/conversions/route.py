@@ -12,7 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
-from realize.conversions import builders, digits
+from realize.conversions import builders, digits, doubles
 from realize.errors import Refused, UsageError
 from realize.models import Model, StateSpace
 from realize.verification.views import EXACT_BUDGET, predicted_cost
@@ -27,6 +27,7 @@ class Task:
     form: str | None = None
     common_denominator: bool = False
     digits: int | None = None
+    arithmetic: str = "auto"
 
     @property
     def target(self) -> str:
@@ -99,22 +100,75 @@ ROWS: tuple[Row, ...] = (
     ),
 )
 
-#: Rows for models too large for exact arithmetic.
+#: Rows in double arithmetic: nothing exact is formed.
 DOUBLE_ROWS: tuple[Row, ...] = (
+    Row("zero-pole-gain", "factors", doubles.factors_as_given, True, "poles, zeros and gain as they stand"),
+    Row(
+        "transfer-function",
+        "factors",
+        doubles.factors_from_coefficients,
+        False,
+        "eigenvalues of balanced companion matrices",
+    ),
+    Row("sections", "factors", doubles.factors_from_sections, False, "roots of each section by the quadratic formula"),
     Row(
         "state-space",
-        "pole-residue",
-        builders.residues_in_doubles,
+        "factors",
+        doubles.factors_from_states,
         False,
-        "eigenvalues and eigenvectors in double arithmetic",
+        "eigenvalues, and finite zeros channel by channel after deflation of those at infinity",
+    ),
+    Row("pole-residue", "factors", doubles.factors_from_residues, False, "finite zeros of the modal state model"),
+    Row("state-space", "pole-residue", doubles.residues_from_states, False, "eigenvalues and eigenvectors"),
+    Row("factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"),
+    Row("factors", "transfer-function", doubles.transfer_function, False, "factors multiplied out"),
+    Row("factors", "pole-residue", doubles.pole_residue, False, "products of differences of poles and zeros"),
+    Row("factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"),
+    Row("factors", "state-space:cascade", doubles.cascade, False, "sections in series"),
+    Row(
+        "sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"
     ),
     Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
-    *(
-        row
-        for row in ROWS
-        if row.source in ("zero-pole-gain", "factors", "sections") and row.target != "exact-fractions"
+    Row(
+        "transfer-function",
+        "state-space:controllable-companion",
+        doubles.controllable,
+        False,
+        "coefficients as entries",
     ),
+    Row("transfer-function", "state-space:observable-companion", doubles.observable, False, "coefficients as entries"),
 )
+
+#: Kinds and coordinates that doubles cannot carry at an order beyond the budget: used in doubles only when asked for.
+COEFFICIENTS = ("transfer-function", "state-space:controllable-companion", "state-space:observable-companion")
+
+
+@dataclass(frozen=True)
+class Choice:
+    """Which arithmetic a conversion uses, and the numbers that decided."""
+
+    arithmetic: str
+    asked: str
+    predicted: float
+    budget: float
+
+    @property
+    def over(self) -> bool:
+        """True where the predicted operations exceed the budget."""
+        return self.predicted > self.budget
+
+    @property
+    def words(self) -> str:
+        """The choice and why, as one sentence."""
+        numbers = f"about {self.predicted:.1e} predicted operations, budget {self.budget:.1e}"
+        return f"{self.arithmetic} arithmetic, {'chosen' if self.asked == 'auto' else 'as asked'}: {numbers}"
+
+
+def choose_arithmetic(task: Task) -> Choice:
+    """Return the arithmetic of a conversion, from sizes and bit lengths alone, never from the clock."""
+    predicted = predicted_cost(task.model)
+    auto = "exact" if predicted <= EXACT_BUDGET else "double"
+    return Choice(auto if task.arithmetic == "auto" else task.arithmetic, task.arithmetic, predicted, EXACT_BUDGET)
 
 
 def default_form(model: Model) -> str:
@@ -136,7 +190,7 @@ def plan_route(task: Task) -> list[Row]:
     Raises
     ------
     Refused
-        If the only routes are beyond exact arithmetic's budget.
+        If the only routes are beyond exact arithmetic's budget, or the source is beyond doubles and those are asked for.
     UsageError
         If the form does not go with the kind.
     """
@@ -145,8 +199,7 @@ def plan_route(task: Task) -> list[Row]:
     start, goal = task.model.kind, task.target
     if start == goal and not task.common_denominator and task.digits is None:
         return []
-    affordable = predicted_cost(task.model) <= EXACT_BUDGET
-    rows = ROWS if affordable else DOUBLE_ROWS
+    rows = _rows(task)
     if task.digits is not None:
         # nothing that is computed in doubles has more digits than they have
         rows = tuple(row for row in rows if row in ROWS)
@@ -165,6 +218,8 @@ def plan_route(task: Task) -> list[Row]:
             if row.source == node and (row.target not in done or row.target == goal):
                 count += 1
                 heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
+    if task.arithmetic != "auto":
+        raise Refused(f"there is no way from {start} to {goal} in {task.arithmetic} arithmetic")
     raise Refused(
         f"order {task.model.order} with {task.model.shape[1]} inputs and {task.model.shape[0]} outputs is beyond what "
         f"exact arithmetic can do in seconds, and a {task.to} of that size could not be trusted in doubles; "
@@ -176,6 +231,20 @@ def plan_route(task: Task) -> list[Row]:
             else "split it into smaller plants, or give it as a state model"
         )
     )
+
+
+def _rows(task: Task) -> tuple[Row, ...]:
+    """Return the table that the arithmetic of the task allows."""
+    if choose_arithmetic(task).arithmetic == "exact":
+        return ROWS
+    if task.model.beyond_doubles:
+        raise Refused(
+            f"{task.model.beyond_doubles[0]} lies beyond the range of doubles, and the conversion is in doubles; "
+            "use --arithmetic exact, or scale time and gain first"
+        )
+    if task.arithmetic == "double":
+        return DOUBLE_ROWS
+    return tuple(row for row in DOUBLE_ROWS if row.source not in COEFFICIENTS and row.target not in COEFFICIENTS)
 
 
 def convert_model(task: Task, route: list[Row]) -> Model:

@@ -22,6 +22,7 @@ from __future__ import annotations
 
 import cmath
 import math
+from collections.abc import Collection
 from dataclasses import dataclass
 from fractions import Fraction
 
@@ -107,7 +108,10 @@ def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = Fals
 
     # complex zeros first, slowest first: they have the fewest poles at or below their own frequency
     for pair in sorted(zero_pairs, key=lambda z: (size(z[0]), z[0].imag)):
-        candidates = [(_amplification(poles_k, pair, sampled), k, poles_k) for k, poles_k in enumerate(pole_pairs)]
+        candidates = [
+            (0.0 if poles_k == pair else _amplification(poles_k, pair, sampled), k, poles_k)
+            for k, poles_k in enumerate(pole_pairs)
+        ]
         if len(real_poles) >= 2:
             near = sorted(real_poles, key=size)[:2]
             candidates.append((_amplification((near[0], near[1]), pair, sampled), -1, (near[0], near[1])))
@@ -162,7 +166,9 @@ def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = Fals
     return sorted(sections, key=damping)
 
 
-def cascade_states(sections: list[Section], gain: Fraction, sampled: bool = False) -> tuple[Array, Array, Array, Array]:
+def cascade_states(
+    sections: list[Section], gain: Fraction, sampled: bool = False, circle: Collection[complex] = ()
+) -> tuple[Array, Array, Array, Array]:
     """Return A, B, C, D of gain times the product of the sections.
 
     Parameters
@@ -173,10 +179,12 @@ def cascade_states(sections: list[Section], gain: Fraction, sampled: bool = Fals
         Ratio of the leading coefficients of numerator and denominator.
     sampled : bool
         The roots are those of polynomials in z.
+    circle : collection of complex
+        Roots that stand for numbers exactly on the unit circle.
     """
     n = sum(len(section.poles) for section in sections)
     A, B, C = np.zeros((n, n)), np.zeros((n, 1)), np.zeros((1, n))
-    blocks = [_block(section, sampled) for section in sections]
+    blocks = [_block(section, sampled, circle) for section in sections]
     if gain == 0:
         start = 0
         for block in blocks:
@@ -229,7 +237,7 @@ def _on_grid(value: Fraction) -> Fraction:
     return Fraction(round(value / _GRID)) * _GRID
 
 
-def _block(section: Section, sampled: bool) -> _Block:
+def _block(section: Section, sampled: bool, circle: Collection[complex] = ()) -> _Block:
     """Return the scaled companion block of a section, whose gain is 2^gain_exponent times the section's own."""
     exact_zeros = sampled and any(zero in (1, -1) for zero in section.zeros)
     if len(section.poles) == 1:
@@ -246,12 +254,15 @@ def _block(section: Section, sampled: bool) -> _Block:
     corner = _on_grid(corner) if exact_zeros else Fraction(to_double(corner))
     damping = centre - corner
     stiffness = Fraction(to_double(d0 / k))
-    if sampled and _on_circle(section.poles[0]) and section.poles[0].imag:
+    if sampled and section.poles[0].imag and (section.poles[0] in circle or _on_circle(section.poles[0])):
         # |p| = 1: with t = z - c the denominator is t^2 + d t + c d, whatever d is
         stiffness = Fraction(to_double(damping * centre / k))
     A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
     zeros = len(section.zeros)
     b = Fraction(2) ** (e // 2)
+    if zeros == 2 and sorted_alike(section.zeros, section.poles):
+        # zeros on the poles themselves: nothing is left of the section but two states that no output sees
+        return _Block(A, _doubles([Fraction(0), b]).T, np.zeros((1, 2)), 1.0, 0)
     if zeros == 2 and exact_zeros and section.zeros[0].imag == 0:
         kept, other = sorted(section.zeros, key=lambda z: z not in (1, -1))
         column = [k * b, (corner - Fraction(other.real)) * b]
@@ -330,10 +341,19 @@ def _shifted(polynomial: list[Fraction], centre: Fraction) -> list[Fraction]:
     return [Fraction(1), polynomial[1] + 2 * centre, polynomial[2] + polynomial[1] * centre + centre * centre]
 
 
+def sorted_alike(first: tuple[complex, ...], second: tuple[complex, ...]) -> bool:
+    """True where two lists hold the same numbers equally often."""
+
+    def order(root: complex) -> tuple[float, float]:
+        return root.real, root.imag
+
+    return sorted(first, key=order) == sorted(second, key=order)
+
+
 def _on_circle(pole: complex) -> bool:
-    """True where |p| is 1 within the rounding of its parts."""
+    """True where |p| of the doubles is exactly 1."""
     re, im = Fraction(pole.real), Fraction(pole.imag)
-    return abs(re * re + im * im - 1) <= Fraction(1, 2**51)
+    return re * re + im * im == 1
 
 
 def _doubles(values: list[Fraction]) -> Array:

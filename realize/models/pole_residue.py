@@ -9,6 +9,7 @@ import numpy as np
 
 from realize.errors import InputError
 from realize.kernels.response import partial_fractions
+from realize.kernels.trust import POINT_OPERATIONS, RESIDUE_OPERATIONS, corrected
 from realize.models import checks
 from realize.models.base import ComplexArray, Model
 
@@ -123,7 +124,23 @@ class PoleResidue(Model):
         return finite + degree * min(p, m)
 
     def rational_part(self, points: ComplexArray) -> ComplexArray:
-        return partial_fractions(self.poles, self.residues, self.powers, self.direct, points)
+        values, bound = partial_fractions(self.poles, self.residues, self.powers, self.direct, points)
+        if self.decimals:
+            # the doubles are themselves rounded: relative to the distance from the poles
+            bound = np.full(points.size, np.inf)
+        p, m = self.shape
+        operations = POINT_OPERATIONS + RESIDUE_OPERATIONS * self.poles.size * p * m
+        return corrected(values, bound, points, operations, self._exact_values)
+
+    def _exact_values(self, points: ComplexArray) -> ComplexArray:
+        """Return the response at finite points in exact arithmetic, rounded once."""
+        from realize.kernels.exact.numbers import complex_fraction, fraction
+        from realize.kernels.exact.points import partial_fractions_at
+
+        poles = [complex_fraction(pole) for pole in self.exact("poles")]
+        residues = [[[complex_fraction(r) for r in row] for row in matrix] for matrix in self.exact("residues")]
+        direct = [[[fraction(c) for c in row] for row in matrix] for matrix in self.exact("direct")]
+        return partial_fractions_at(poles, residues, [int(power) for power in self.powers], direct, points)
 
 
 def _depth(value: Any) -> int:

@@ -9,6 +9,7 @@ import numpy as np
 
 from realize.errors import InputError
 from realize.kernels.response import section_product
+from realize.kernels.trust import POINT_OPERATIONS, SECTION_OPERATIONS, corrected
 from realize.models import checks
 from realize.models.base import ComplexArray, Model
 
@@ -55,4 +56,19 @@ class Sections(Model):
         return max(numerator, denominator)
 
     def rational_part(self, points: ComplexArray) -> ComplexArray:
-        return section_product(self.sections, self.gain, points)[:, None, None]
+        beyond = bool(self.beyond_doubles)
+        values, bound = section_product(self.sections, 1.0 if beyond else self.gain, points)
+        if beyond:
+            bound = np.full(points.size, np.inf)
+        operations = POINT_OPERATIONS + 2 * SECTION_OPERATIONS * self.sections.shape[0]
+        return corrected(values, bound, points, operations, self._exact_values)[:, None, None]
+
+    def _exact_values(self, points: ComplexArray) -> ComplexArray:
+        """Return the response at finite points in exact arithmetic, rounded once."""
+        from realize.kernels.exact.numbers import fraction
+        from realize.kernels.exact.points import products_at
+        from realize.kernels.exact.polynomials import polynomial
+
+        pairs = [[polynomial(row) for row in section] for section in self.exact("sections")]
+        above, below = [n for n, _ in pairs], [d for _, d in pairs]
+        return products_at(fraction(self.exact("gain")), above, below, points)

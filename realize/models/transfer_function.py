@@ -3,14 +3,18 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, ClassVar
 
 import numpy as np
 
 from realize.errors import InputError
 from realize.kernels.response import polynomial_ratio
+from realize.kernels.trust import COEFFICIENT_OPERATIONS, POINT_OPERATIONS, corrected
 from realize.models import checks
 from realize.models.base import ComplexArray, Model
+
+OWN = ("numerator", "denominator")
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, repr=False)
@@ -96,10 +100,22 @@ class TransferFunction(Model):
         values = np.empty((points.size, p, m), dtype=complex)
         for i in range(p):
             for j in range(m):
-                values[:, i, j] = polynomial_ratio(
+                rough, bound = polynomial_ratio(
                     self.exact_or_double("numerator", i, j), self.exact_or_double("denominator", i, j), points
                 )
+                size = self.numerator[i][j].size + self.denominator[i][j].size
+                operations = POINT_OPERATIONS + COEFFICIENT_OPERATIONS * size
+                values[:, i, j] = corrected(rough, bound, points, operations, partial(self._exact_values, i, j))
         return values
+
+    def _exact_values(self, i: int, j: int, points: ComplexArray) -> ComplexArray:
+        """Return one channel at finite points in exact arithmetic, rounded once."""
+        from realize.kernels.exact.numbers import fraction
+        from realize.kernels.exact.points import products_at
+        from realize.kernels.exact.polynomials import polynomial
+
+        n, d = (polynomial(self.remembered(name, partial(self.exact, name))[i][j]) for name in OWN)
+        return products_at(fraction(1), [n], [d], points)
 
     def exact_or_double(self, name: str, i: int, j: int) -> tuple[np.ndarray, np.ndarray]:
         """Return mantissas and binary exponents of one channel's polynomial, also for decimals beyond the doubles."""

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import partial
 from typing import Any, ClassVar
 
 import numpy as np
 
 from realize.errors import InputError
 from realize.kernels.response import root_ratio
+from realize.kernels.trust import POINT_OPERATIONS, SECTION_OPERATIONS, corrected
 from realize.models import checks
 from realize.models.base import ComplexArray, Model
 
@@ -68,7 +70,27 @@ class ZeroPoleGain(Model):
     def rational_part(self, points: ComplexArray) -> ComplexArray:
         p, m = self.shape
         values = np.empty((points.size, p, m), dtype=complex)
+        beyond, rounded = bool(self.beyond_doubles), ("zeros" in self.decimals, "poles" in self.decimals)
         for i in range(p):
             for j in range(m):
-                values[:, i, j] = root_ratio(self.zeros[i][j], self.poles[i][j], self.gain[i, j], points)
+                zeros, poles = self.zeros[i][j], self.poles[i][j]
+                gain = 1.0 if beyond else self.gain[i, j]
+                rough, bound = root_ratio(zeros, poles, gain, points, *rounded)
+                if beyond:
+                    bound = np.full(points.size, np.inf)
+                operations = POINT_OPERATIONS + SECTION_OPERATIONS * (zeros.size + poles.size)
+                values[:, i, j] = corrected(rough, bound, points, operations, partial(self._exact_values, i, j))
         return values
+
+    def _exact_values(self, i: int, j: int, points: ComplexArray) -> ComplexArray:
+        """Return one channel at finite points in exact arithmetic, rounded once."""
+        from realize.kernels.exact.numbers import complex_fraction, fraction
+        from realize.kernels.exact.points import products_at
+        from realize.kernels.exact.polynomials import from_roots
+
+        sides = []
+        for name in ("zeros", "poles"):
+            roots = [complex_fraction(root) for root in self.exact(name)[i][j]]
+            pairs = [[(x, y), (x, -y)] if y else [(x, y)] for x, y in roots if y >= 0]
+            sides.append([from_roots(pair) for pair in pairs])
+        return products_at(fraction(self.exact("gain")[i][j]), sides[0], sides[1], points)

@@ -59,6 +59,13 @@ COLUMNS = Option(
     "names of the columns of a table without a header, such as frequency_hz,real,imaginary",
     metavar="LIST",
 )
+ARITHMETIC = Option(
+    "arithmetic",
+    "choice",
+    "exact whatever it costs, double, or auto: exact where few enough operations are predicted",
+    ARITHMETICS,
+    "auto",
+)
 
 VERBS: dict[str, Verb] = {
     verb.name: verb
@@ -89,6 +96,7 @@ VERBS: dict[str, Verb] = {
                 Option(
                     "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"
                 ),
+                ARITHMETIC,
                 Option("explain", "flag", "print the route and why, and stop"),
             ),
         ),

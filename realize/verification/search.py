@@ -74,7 +74,7 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
     for roots in lists:
         size, damping = roots.frequency, roots.damping
         usable = (size > 0) & np.isfinite(size)
-        size, damping = size[usable], np.maximum(damping[usable], 1e-9)
+        size, damping = size[usable], np.maximum(damping[usable], 1e-15)
         natural = np.abs(roots.s.imag[usable])
         spread = np.minimum(damping, 0.3)
         parts += [size, natural[natural > 0]]

@@ -148,7 +148,7 @@ class View:
     def _dynamics(self, polynomial: Any) -> Dynamics:
         """Return the roots of an exact polynomial, axis membership decided exactly."""
         from realize.kernels.exact.polynomials import bilinear_image, even_odd
-        from realize.kernels.exact.roots import roots
+        from realize.kernels.exact.roots import roots, unit_circle
 
         if polynomial.degree() < 1:
             return NO_DYNAMICS
@@ -161,12 +161,11 @@ class View:
                 values = approximate_roots(polynomial)
                 if values is not None:
                     return dynamics_of(values, np.zeros(values.size, dtype=bool), self.period)
-        found = [root for root in roots(polynomial) for _ in range(root.multiplicity)]
-        values = np.array([root.value for root in found], dtype=complex)
-        axis = np.array([root.on_axis for root in found], dtype=bool)
-        if self.period is not None and values.size:
-            axis = np.abs(np.abs(values) - 1) <= 4 * np.finfo(float).eps
-        return dynamics_of(values, axis, self.period)
+        distinct = roots(polynomial)
+        flags = [root.on_axis for root in distinct] if self.period is None else unit_circle(polynomial, distinct)
+        counts = [root.multiplicity for root in distinct]
+        values = np.repeat(np.array([root.value for root in distinct], dtype=complex), counts)
+        return dynamics_of(values, np.repeat(np.array(flags, dtype=bool), counts), self.period)
 
     @cached_property
     def poles(self) -> Dynamics:

@@ -7,7 +7,7 @@ found by rational arithmetic, so that the loop ends. Points are doubles and coun
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -192,44 +192,3 @@ def _exact_sum(
             u, v = u * a - v * b, u * b + v * a
         re, im = re + u, im + v
     return re, im
-
-
-#: Relative error bound up to which values in doubles are taken as they are.
-TRUSTED = 1e-12
-#: Predicted operations (about nanoseconds) that one evaluation may spend on exact values.
-POINT_BUDGET = 5e8
-
-
-def corrected(
-    values: ComplexArray,
-    bound: NDArray[np.float64],
-    points: ComplexArray,
-    operations: float,
-    exact: Callable[[ComplexArray], ComplexArray],
-) -> ComplexArray:
-    """Return values in doubles with those that cannot be trusted replaced by exact ones.
-
-    The points with the largest bounds come first; when their number times the predicted operations of a point exceeds
-    POINT_BUDGET, the others stay as they are, so that an evaluation takes a second at most beyond the doubles.
-
-    Parameters
-    ----------
-    values : complex array [k, ...]
-    bound : array [k]
-        Relative error bounds; infinite or NaN where nothing is known.
-    points : complex array [k]
-    operations : float
-        Predicted operations of one exact value.
-    exact : function of points
-    """
-    doubtful = (~(bound <= TRUSTED)) & np.isfinite(points)
-    if not doubtful.any():
-        return values
-    index = np.flatnonzero(doubtful)
-    most = max(int(POINT_BUDGET / operations), 1)
-    if index.size > most:
-        size = np.where(np.isnan(bound[index]), np.inf, bound[index])
-        index = index[np.argsort(-size, kind="stable")[:most]]
-    result = values.copy()
-    result[index] = exact(points[index])
-    return result
