@@ -16,6 +16,7 @@ def execute(
     form: str | None,
     common_denominator: bool,
     digits: int | None,
+    arithmetic: str,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
@@ -23,9 +24,11 @@ def execute(
         raise UsageError("convert needs --to KIND")
     source = load(model)
     if rest.pop("explain"):
-        lines = explain(source, to, form=form, common_denominator=common_denominator, digits=digits)
+        lines = explain(
+            source, to, form=form, common_denominator=common_denominator, digits=digits, arithmetic=arithmetic
+        )
         if context.json:
-            record = {"step": "convert", "route": lines}
+            record = {"step": "convert", "route": lines[:-1], "arithmetic": lines[-1]}
             write_log(context, record)
             print_record(record)
         else:
@@ -37,6 +40,7 @@ def execute(
         form=form,
         common_denominator=common_denominator,
         digits=digits,
+        arithmetic=arithmetic,
         limits=context.limits,
         second_opinion=context.second_opinion,
     )

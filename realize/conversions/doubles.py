@@ -349,7 +349,7 @@ def residues_from_states(model: Model, task: Task) -> PoleResidue:
             return pole_residue(factors_from_states(model, task), task)  # type: ignore[no-any-return]
         except Refused as reason:
             raise Refused(
-                f"the eigenvectors have condition {condition:.1e}, and products of poles and zeros do not help: {reason}"
+                f"the eigenvectors have condition {condition:.1e}, and products of factors do not help: {reason}"
             ) from None
     into = (left.conj().T @ B) / overlap[:, None]
     out = C @ right
@@ -428,11 +428,11 @@ def _companion(model: TransferFunction, task: Task, *, inputs: bool) -> StateSpa
     A = np.vstack([-a[None, :], np.eye(n)[:-1]]) if n else np.zeros((0, 0))
     A = A + 0.0
     B = np.eye(n)[:, :1] if n else np.zeros((0, 1))
-    parts = (A, B, rows) if inputs else (A.T, rows.T, B.T)
+    A, B, C = (A, B, rows) if inputs else (A.T, rows.T, B.T)
     polynomial = wholes[:, :, None] if inputs else wholes[:, None, :]
     if degree == 0:
-        return state_model(task, *parts, polynomial[-1])
-    return state_model(task, *append_polynomial_part(*parts, np.zeros(polynomial[0].shape), polynomial))
+        return state_model(task, A, B, C, polynomial[-1])
+    return state_model(task, *append_polynomial_part(A, B, C, np.zeros(polynomial[0].shape), polynomial))
 
 
 @_guarded

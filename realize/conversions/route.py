@@ -20,7 +20,7 @@ from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 @dataclass(frozen=True)
 class Task:
-    """What is wanted: source, target kind, coordinates, whether channels share a denominator, decimal digits if any."""
+    """What is wanted: source, target kind, coordinates, one denominator or not, decimal digits if any, arithmetic."""
 
     model: Model
     to: str
@@ -190,7 +190,7 @@ def plan_route(task: Task) -> list[Row]:
     Raises
     ------
     Refused
-        If the only routes are beyond exact arithmetic's budget, or the source is beyond doubles and those are asked for.
+        If the only routes are beyond exact arithmetic's budget, or doubles are to hold a source that is beyond them.
     UsageError
         If the form does not go with the kind.
     """
@@ -226,10 +226,11 @@ def plan_route(task: Task) -> list[Row]:
         + (
             "leave out --digits, or reduce the model first"
             if task.digits is not None
-            else "ask for --to pole-residue, or --to state-space --form modal, or reduce the model first"
+            else "ask for pole-residue, zero-pole-gain or state-space --form modal, or reduce the model first"
             if isinstance(task.model, StateSpace)
             else "split it into smaller plants, or give it as a state model"
         )
+        + f"; --arithmetic exact{'' if task.digits is not None else ' or double'} does it all the same"
     )
 
 

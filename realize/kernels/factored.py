@@ -102,7 +102,7 @@ def _added(terms: list[Scaled]) -> Scaled:
 
 
 def _spread(roots: ComplexArray) -> ComplexArray:
-    """Return real roots and upper members in an order in which partial products stay of like size (Leja; Reichel 1990)."""
+    """Return real roots and upper members, each as far as can be from those before it (Leja order; Reichel 1990)."""
     left = list(roots[(roots.imag >= 0)])
     if not left:
         return np.zeros(0, dtype=complex)

@@ -15,6 +15,8 @@ ComplexArray = NDArray[np.complex128]
 Steps = list[tuple[int, int, Array | None]]
 
 EPS = float(np.finfo(float).eps)
+#: Largest shift that still says something to a double.
+_FAR = 3000
 #: A - B D^-1 C is formed where the second term is not larger than the first by more: one digit at most is lost.
 HARMLESS = 10.0
 
@@ -234,8 +236,8 @@ def scaled_system(
 ) -> tuple[Array, Array, Array, Array, Array | None, int]:
     """Return the system in units of its own, powers of two taken out of states, inputs, outputs and time.
 
-    States are balanced on the bordered matrix [A B; C D], one factor for all inputs and outputs; rows of [C D] and
-    columns of [B; D] are then brought near one. Zeros and poles are 2^time times those of the scaled system.
+    States are balanced on the bordered matrix [A B; C D], one factor for all inputs and outputs; columns of B and
+    rows of [C D] are then brought near one. Zeros and poles are 2^time times those of the scaled system.
 
     Returns
     -------
@@ -243,7 +245,7 @@ def scaled_system(
     """
     n, m, p = A.shape[0], B.shape[1], C.shape[0]
     time = _top(A) - (1 if E is None else _top(E))
-    A = np.ldexp(A, -time)
+    A, down = np.ldexp(A, -time), 0
     if E is not None:
         down = _top(E)
         A, E = np.ldexp(A, -down), np.ldexp(E, -down)
@@ -265,14 +267,14 @@ def scaled_system(
             E = moved[3] if E is not None else None
             more = 0 if E is not None else _top(A)
             A, time = np.ldexp(A, -more), time + more
-    B, C, D = B.copy(), C.copy(), D.copy()
-    for i in range(p):
-        down = _top(C[i], D[i])
-        C[i], D[i] = np.ldexp(C[i], -down), np.ldexp(D[i], -down)
-    for j in range(m):
-        down = _top(B[:, j], D[:, j])
-        B[:, j], D[:, j] = np.ldexp(B[:, j], -down), np.ldexp(D[:, j], -down)
-    return A, B, C, D, E, time
+    # the rows of A and B were divided by 2^(time + down): B takes its part of that together with D
+    inputs = np.array([_top(B[:, j]) for j in range(m)], dtype=np.int64)
+    outputs = np.array([_top(C[i]) for i in range(p)], dtype=np.int64)
+    mantissa, exponent = np.frexp(D)
+    height = np.where(mantissa != 0, exponent.astype(np.int64) + time + down - inputs - outputs[:, None], -_FAR)
+    outputs += (more := np.maximum(height.max(axis=1, initial=0), 0))
+    height = np.clip(height - more[:, None], -_FAR, 0)
+    return A, np.ldexp(B, -inputs), np.ldexp(C, -outputs[:, None]), np.ldexp(mantissa, height), E, time
 
 
 def without_descriptor(A: Array, B: Array, C: Array, D: Array, E: Array) -> tuple[Array, Array, Array, Array]:

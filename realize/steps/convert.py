@@ -7,15 +7,16 @@ from typing import Any
 
 import numpy as np
 
-from realize.conversions import ROWS, Task, convert_model, plan_route
+from realize.conversions import Choice, Task, choose_arithmetic, convert_model, plan_route
 from realize.errors import Refused, UsageError
 from realize.models import FrequencyResponse, Model
 from realize.models.checks import MAX_DIGITS
-from realize.schema import FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
+from realize.schema import ARITHMETICS, FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
 from realize.verification import conversion_claims, view_of
+from realize.verification.views import whatever_it_costs
 
 #: Kinds that `digits` goes with: every other holds matrices or samples in doubles.
 WITH_DIGITS = ("transfer-function", "zero-pole-gain", "pole-residue", "sections")
@@ -23,11 +24,15 @@ WITH_DIGITS = ("transfer-function", "zero-pole-gain", "pole-residue", "sections"
 GOOD = 1e-9
 
 
-def _task(model: Model, to: str, form: str | None, common_denominator: bool, digits: int | None = None) -> Task:
+def _task(
+    model: Model, to: str, form: str | None, common_denominator: bool, digits: int | None, arithmetic: str
+) -> Task:
     if to not in PARAMETRIC_KINDS:
         raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
     if form is not None and form not in FORMS:
         raise UsageError(f"no form {form!r}; there are: {', '.join(FORMS)}")
+    if arithmetic not in ARITHMETICS:
+        raise UsageError(f"no arithmetic {arithmetic!r}; there are: {', '.join(ARITHMETICS)}")
     if common_denominator and to != "transfer-function":
         raise UsageError("--common-denominator goes with --to transfer-function")
     if isinstance(model, FrequencyResponse):
@@ -37,7 +42,9 @@ def _task(model: Model, to: str, form: str | None, common_denominator: bool, dig
             raise UsageError(f"--digits goes with --to {', '.join(WITH_DIGITS)}, not with --to {to}")
         if isinstance(digits, bool) or not isinstance(digits, int) or not 1 <= digits <= MAX_DIGITS:
             raise UsageError(f"--digits {digits}: expected a whole number from 1 to {MAX_DIGITS}")
-    return Task(model, to, form, common_denominator, digits)
+        if arithmetic == "double":
+            raise UsageError("--digits needs exact arithmetic, and --arithmetic double was asked for")
+    return Task(model, to, form, common_denominator, digits, arithmetic)
 
 
 def explain(
@@ -47,13 +54,13 @@ def explain(
     form: str | None = None,
     common_denominator: bool = False,
     digits: int | None = None,
+    arithmetic: str = "auto",
 ) -> list[str]:
-    """Return the route of a conversion in words, one line a row."""
-    task = _task(model_of(model), to, form, common_denominator, digits)
+    """Return the route of a conversion in words, one line a row, and last the arithmetic and why."""
+    task = _task(model_of(model), to, form, common_denominator, digits, arithmetic)
     route = plan_route(task)
-    if not route:
-        return [f"{task.model.kind} stays as it is (exact)"]
-    return [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
+    lines = [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
+    return [*(lines or [f"{task.model.kind} stays as it is (exact)"]), choose_arithmetic(task).words]
 
 
 @refusing_singular()
@@ -64,6 +71,7 @@ def convert(
     form: str | None = None,
     common_denominator: bool = False,
     digits: int | None = None,
+    arithmetic: str = "auto",
     limits: dict[str, float] | None = None,
     second_opinion: bool = False,
 ) -> Conversion:
@@ -82,6 +90,9 @@ def convert(
     digits : int, optional
         Decimals with so many correct significant digits in place of doubles (1 to 2000); for transfer-function,
         zero-pole-gain, pole-residue and sections. Numbers that are doubles exactly may stay doubles.
+    arithmetic : str
+        "auto": exact where few enough operations are predicted; "exact": whatever it costs, claims too; "double":
+        doubles alone make the result, and the claims say what that cost.
     limits : dict, optional
         Limits by claim name, instead of the defaults.
     second_opinion : bool
@@ -97,24 +108,25 @@ def convert(
     """
     started = time.perf_counter()
     source = model_of(model)
-    task = _task(source, to, form, common_denominator, digits)
-    with asking("convert", source, {"to": to}, second_opinion) as opinion:
+    task = _task(source, to, form, common_denominator, digits, arithmetic)
+    choice = choose_arithmetic(task)
+    with whatever_it_costs(arithmetic == "exact"), asking("convert", source, {"to": to}, second_opinion) as opinion:
         route = plan_route(task)
         result = convert_model(task, route)
         shape = _form_of(task, route)
         claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
         if form is None and shape == "modal" and _worst(claims) > GOOD:
             # the default for several channels did not do: series connections, channel by channel
-            other = Task(source, to, "cascade", common_denominator)
+            other = Task(source, to, "cascade", common_denominator, arithmetic=arithmetic)
             second_route = plan_route(other)
             second = convert_model(other, second_route)
             second_claims = conversion_claims(source, second, True, limits)
             if _worst(second_claims) < _worst(claims):
                 route, result, claims, shape = second_route, second, second_claims, "cascade"
-        cautions = _cautions(source, result, to)
+        cautions = _cautions(source, result, to) + _costly(choice)
         return finish(
             "convert",
-            f"exact rational arithmetic, {shape or to}" if _exact(route) else f"double arithmetic, {shape or to}",
+            f"{_method(choice) if route else 'left as it was'}, {shape or to}",
             [row.target for row in route],
             source,
             result,
@@ -123,13 +135,28 @@ def convert(
             cautions=cautions,
             opinion=opinion,
             limits=limits,
-            details={"form": shape} if shape else {},
+            details={
+                **({"form": shape} if shape else {}),
+                "arithmetic": choice.arithmetic,
+                "predicted_operations": float(f"{choice.predicted:.3g}"),
+                "budget": choice.budget,
+            },
             digits=digits,
         )
 
 
-def _exact(route: list[Any]) -> bool:
-    return all(row in ROWS for row in route)
+def _method(choice: Choice) -> str:
+    return "exact rational arithmetic" if choice.arithmetic == "exact" else "double arithmetic"
+
+
+def _costly(choice: Choice) -> list[str]:
+    """Return what exact arithmetic beyond the budget costs, in words."""
+    if choice.arithmetic != "exact" or not choice.over:
+        return []
+    return [
+        f"Exact arithmetic was asked for: about {choice.predicted:.1e} predicted operations, "
+        f"{choice.predicted / choice.budget:.2g} times what auto would spend (some seconds)."
+    ]
 
 
 def _form_of(task: Task, route: list[Any]) -> str:
