@@ -109,7 +109,9 @@ def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float
     else:
         inside = band = Band(max(chosen[0], 1e-300), chosen[1], chosen[0] == 0, left_out)
         note = f"from {chosen[0]:.6g} to {chosen[1]:.6g} rad/s, as asked"
-    w = seeds(band, view.poles, other.poles)
+    w = np.unique(np.concatenate([seeds(band, view.poles, other.poles), inside.edges]))
+    if not inside.zero:
+        w = w[w > 0]
 
     def difference(x: np.ndarray) -> np.ndarray:
         points = first.time.points(x)
@@ -129,7 +131,7 @@ def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float
     gain, _ = largest(size, w, band)
     return [
         judge("response-error", worst, where={"frequency": at}, note=note),
-        judge("peak-error", top / gain if gain else float(top > 0), where={"frequency": where}, note=note),
+        judge("peak-error", _over(top, gain), where={"frequency": where}, note=note),
     ]
 
 
@@ -144,7 +146,8 @@ def _against_data(
 ) -> list[Claim]:
     keep = _selected(data, band)
     w = data.radians[keep]
-    theirs = model.evaluate(model.time.points(w))
+    with np.errstate(all="ignore"):
+        theirs = model.evaluate(model.time.points(w))
     return _line_claims(data.response[keep], theirs, w, source is data) + data_claims(data, model, {}, keep)
 
 
@@ -156,6 +159,11 @@ def _both_data(
         raise Refused(f"{a} and {b} have different frequencies; fit a model to one of them and compare with that")
     keep = _selected(first, band)
     return _line_claims(first.response[keep], second.response[keep], one[keep], True)
+
+
+def _over(value: float, size: float) -> float:
+    """Return value / size; infinite where only the size is zero."""
+    return value / size if size > 0 else (np.inf if value > 0 else 0.0)
 
 
 def _line_claims(data: np.ndarray, other: np.ndarray, w: np.ndarray, data_is_source: bool) -> list[Claim]:
@@ -177,6 +185,6 @@ def _line_claims(data: np.ndarray, other: np.ndarray, w: np.ndarray, data_is_sou
 
     return [
         claim("response-error", float(relative[worst]), worst),
-        claim("peak-error", float(difference[top] / peak) if peak > 0 else float(difference[top] > 0), top),
+        claim("peak-error", _over(float(difference[top]), float(peak)), top),
         claim("linf-error", float(gain[high]), high, "absolute"),
     ]

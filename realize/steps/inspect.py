@@ -171,8 +171,8 @@ def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[st
     if model.shape == (1, 1) and view.fractions is not None:
         zeros, poles = view.channel_roots[0][0]
         if zeros.s.size and poles.s.size:
-            gap = np.abs(zeros.s[:, None] - poles.s[None, :]) / np.maximum(np.abs(poles.s)[None, :], 1e-300)
-            close = int(np.sum(gap.min(axis=1) < NEAR))
+            gap, size = np.abs(zeros.s[:, None] - poles.s[None, :]), np.abs(poles.s)[None, :]
+            close = int(np.sum(np.any(gap < NEAR * size, axis=1)))
             if close:
                 cautions.append(
                     f"{close} zeros lie within {NEAR:g} of a pole, relative to its size: nearly cancelling."

@@ -18,7 +18,7 @@ from realize.verification.conversion import at_infinity, largest_error, peak_gai
 from realize.verification.fragility import fragility
 from realize.verification.pair import Pair
 from realize.verification.search import Band, axis_intervals, largest, seeds
-from realize.verification.views import view_of
+from realize.verification.views import NO_DYNAMICS, Dynamics, view_of
 
 Array = NDArray[np.float64]
 
@@ -95,7 +95,7 @@ def _lifted(value: float, exponent: int) -> float:
 
 def _domain(pair: Pair) -> tuple[Band, list[Interval]]:
     """Return the band of the search, and the intervals of the norm (all frequencies, axis poles left out)."""
-    axis = pair.source.poles.merged(pair.result.poles) if pair.exact else pair.source.poles
+    axis = _difference_poles(pair) if pair.exact else pair.source.poles.merged(pair.result.poles)
     band = whole_band(pair.source, other=pair.result)
     left_out = axis_intervals(axis)
     at_origin = bool(np.any(axis.s == 0))
@@ -104,6 +104,20 @@ def _domain(pair: Pair) -> tuple[Band, list[Interval]]:
         band = Band(band.low, band.high, False, left_out)
     full = Band(band.low if at_origin else 0.0, np.inf, False, left_out)
     return band, [(low, high, 1.0) for low, high, _ in intervals_of(pair, full, [], None)]
+
+
+def _difference_poles(pair: Pair) -> Dynamics:
+    """Return the poles of the difference that are on the axis: what both have and cancels is none."""
+    from realize.kernels.exact.polynomials import reduce_fraction
+
+    found = NO_DYNAMICS
+    if not np.any(pair.source.poles.on_axis) and not np.any(np.abs(pair.result.rough_poles.damping) < 1e-6):
+        return found
+    for row in _cross(pair):
+        for n, d in row:
+            part = pair.source.dynamics(reduce_fraction(n, d)[1])
+            found = found.merged(Dynamics(part.s[part.on_axis], part.on_axis[part.on_axis]))
+    return found
 
 
 def _from_fractions(pair: Pair, band: Band, pieces: list[Interval]) -> tuple[float, float, float | None, Basis]:

@@ -162,30 +162,18 @@ class Proof:
         Sampled models: at a frequency within a rounding of the one given.
         """
         x = self.place(frequency, up=False)
-        difference = self.error_square
-        bound = self.source_square if reference is None else self.denominator_square
-        if x is None:
-            degree = max(difference.degree(), bound.degree())
-            above, below = difference[degree], bound[degree]
-        else:
-            above, below = difference(x), bound(x)
-        if not above:
+        value = _root_at(self.error_square, self.source_square if reference is None else self.denominator_square, x)
+        if value is None:
+            # both vanish: a zero or pole on the axis that was kept exactly
+            value = _root_at(*(self.relative_pair if reference is None else self.absolute_pair), x)
+        if value is None:
             return 0.0
-        if not below:
-            return math.inf
-        value = square_root(above / below)
         return value if reference is None else value / reference
 
     def gain_at(self, frequency: float) -> float:
         """Return the gain of the source at a frequency, infinite at a pole; rounded once or twice."""
-        x = self.place(frequency, up=False)
-        top, bottom = self.gain_squares
-        if x is None:
-            degree = max(top.degree(), bottom.degree())
-            above, below = top[degree], bottom[degree]
-        else:
-            above, below = top(x), bottom(x)
-        return square_root(above / below) if below else math.inf
+        value = _root_at(*self.gain_squares, self.place(frequency, up=False))
+        return math.inf if value is None else value
 
     @cached_property
     def gain_squares(self) -> tuple[Any, Any]:
@@ -240,6 +228,18 @@ class Proof:
                 return error
             # what was proved with less holds with more: only the rest is left
         return None
+
+
+def _root_at(above: Any, below: Any, x: Any) -> float | None:
+    """Return the square root of above(x) / below(x), at infinity for None; None where both vanish."""
+    if x is None:
+        degree = max(above.degree(), below.degree())
+        top, bottom = above[degree], below[degree]
+    else:
+        top, bottom = above(x), below(x)
+    if not bottom:
+        return math.inf if top else None
+    return square_root(top / bottom) if top else 0.0
 
 
 def square_root(square: Any) -> float:

@@ -133,7 +133,7 @@ class View:
             def of(polynomial: Any) -> Dynamics:
                 key = id(polynomial)
                 if key not in known:
-                    known[key] = self._dynamics(polynomial)
+                    known[key] = self.dynamics(polynomial)
                 return known[key]
 
             return [[(of(self.fractions[i][j][0]), of(self.fractions[i][j][1])) for j in range(m)] for i in range(p)]
@@ -145,7 +145,7 @@ class View:
         shared = dynamics_of(poles, axis, self.period)
         return [[(NO_DYNAMICS, shared) for _ in range(m)] for _ in range(p)]
 
-    def _dynamics(self, polynomial: Any) -> Dynamics:
+    def dynamics(self, polynomial: Any) -> Dynamics:
         """Return the roots of an exact polynomial, axis membership decided exactly."""
         from realize.kernels.exact.polynomials import bilinear_image, even_odd
         from realize.kernels.exact.roots import roots, unit_circle

@@ -7,6 +7,8 @@ inside it, and is zero on intervals that are small against the distance of the n
 
 from __future__ import annotations
 
+from typing import Literal, NamedTuple
+
 from flint import fmpq, fmpq_poly, fmpz, fmpz_poly
 
 #: Intervals looked at before giving up: a proof needs a few for each nearby root.
@@ -59,6 +61,12 @@ def _to_half_line(p: fmpz_poly, low: fmpq, high: fmpq | None) -> fmpz_poly:
     return fmpz_poly(list(reversed(scaled)))(_SHIFT)
 
 
+class Counterexample(NamedTuple):
+    """A place where a polynomial is not positive; None stands for infinity."""
+
+    x: fmpq | None
+
+
 def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
     """Return True if p(x) > 0 is proved for all low <= x <= high (high None: to infinity, the limit included).
 
@@ -74,19 +82,36 @@ def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
     bool
         False where p is not positive or the proof was not found within `MOST_INTERVALS` intervals.
     """
+    return examined(p, low, high) is True
+
+
+def examined(
+    p: fmpq_poly, low: fmpq, high: fmpq | None, most: int = MOST_INTERVALS
+) -> Literal[True] | Counterexample | None:
+    """Return True if p > 0 is proved on an interval, a place where it is not, or None if neither was found.
+
+    Parameters
+    ----------
+    p, low, high
+        As for `positive`.
+    most : int
+        Intervals looked at before giving up.
+    """
     if not p:
-        return False
+        return Counterexample(low)
     f = _integers(p)
     if f.degree() == 0:
-        return f[0] > 0
+        return True if f[0] > 0 else Counterexample(low)
     if high is None and f.leading_coefficient() <= 0:
-        return False
-    if p(low) <= 0 or (high is not None and p(high) <= 0):
-        return False
+        return Counterexample(None)
+    if p(low) <= 0:
+        return Counterexample(low)
+    if high is not None and p(high) <= 0:
+        return Counterexample(high)
     if low == high:
         return True
     waiting: list[tuple[fmpq, fmpq | None]] = [(low, high)]
-    for _ in range(MOST_INTERVALS):
+    for _ in range(most):
         if not waiting:
             return True
         a, b = waiting.pop()
@@ -94,13 +119,12 @@ def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
         if changes == 0:
             # no root inside, and positive at the lower end
             continue
-        if changes == 1:
-            return False
         middle = _middle(a, b)
         if p(middle) <= 0:
-            return False
+            return Counterexample(middle)
+        # one change would be one root between two positive ends, which cannot be
         waiting += [(middle, b), (a, middle)]
-    return False
+    return None if waiting else True
 
 
 def _middle(a: fmpq, b: fmpq | None) -> fmpq:

@@ -1,0 +1,92 @@
+"""Exact H2 norm and Hankel norm of rational functions."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from flint import fmpq, fmpq_poly
+
+from realize.kernels.exact.polynomials import ZERO, reduce_fraction
+from realize.kernels.exact.roots import roots
+
+Fraction = tuple[fmpq_poly, fmpq_poly]
+
+
+def _mirrored(p: fmpq_poly) -> fmpq_poly:
+    """Return p(-s)."""
+    return fmpq_poly([-c if k % 2 else c for k, c in enumerate(p.coeffs())])
+
+
+def _inverse(p: fmpq_poly, modulus: fmpq_poly) -> fmpq_poly:
+    """Return the inverse of p modulo a polynomial without common root."""
+    g, u, _ = (p % modulus).xgcd(modulus)
+    if g.degree() != 0:
+        raise ZeroDivisionError("a common root")
+    return u / g[0]
+
+
+def squared_h2(numerators: Sequence[fmpq_poly], denominator: fmpq_poly) -> fmpq:
+    """Return the sum over the channels of (1 / 2 pi) times the integral over all w of |n(jw) / d(jw)|^2, exactly.
+
+    With n(s) n(-s) = u(s) d(-s) + u(-s) d(s) the integral is u_(n-1) / d_n, and u = n(s) n(-s) / d(-s) modulo d(s) [1]_.
+
+    Parameters
+    ----------
+    numerators : sequence of polynomials
+        Of lower degree than the denominator.
+    denominator : polynomial
+        All roots in the open left half-plane (not checked).
+
+    References
+    ----------
+    .. [1] K. J. Astrom, Introduction to Stochastic Control Theory, Academic Press, 1970, chapter 5, where the same
+           integral is found by recursion.
+    """
+    degree = denominator.degree()
+    above = ZERO
+    for n in numerators:
+        above = above + n * _mirrored(n)
+    if degree < 1 or not above:
+        return fmpq(0)
+    u = (above % denominator) * _inverse(_mirrored(denominator), denominator) % denominator
+    return u[degree - 1] / denominator[degree]
+
+
+def hankel_polynomial(n: fmpq_poly, d: fmpq_poly) -> fmpq_poly:
+    """Return the polynomial whose roots are plus or minus the Hankel singular values of n / d.
+
+    n(s) p(s) = t d(-s) p(-s) + d(s) q(s) has a solution p of lower degree than d for each of these numbers t [1]_: they
+    are the eigenvalues of p -> (n / d(-s)) p modulo d followed by s -> -s, a rational matrix.
+
+    Parameters
+    ----------
+    n, d : polynomials
+        Coprime; d with all roots in the open left half-plane; the direct term does not matter.
+
+    References
+    ----------
+    .. [1] P. A. Fuhrmann, A polynomial approach to Hankel norm and balanced approximations, Linear Algebra and its
+           Applications 146 (1991) 133-220.
+    """
+    from flint import fmpq_mat
+
+    degree = d.degree()
+    u = (n % d) * _inverse(_mirrored(d), d) % d
+    rows = []
+    column = u
+    for _ in range(degree):
+        c = column.coeffs()
+        c = c + [fmpq(0)] * (degree - len(c))
+        rows.append([-value if k % 2 else value for k, value in enumerate(c)])
+        column = column * fmpq_poly([0, 1]) % d
+    return fmpq_mat(rows).transpose().charpoly()
+
+
+def hankel_norm(n: fmpq_poly, d: fmpq_poly) -> tuple[float, float]:
+    """Return the largest Hankel singular value of a stable n / d, correctly rounded, and a bound of that rounding."""
+    n, d = reduce_fraction(n, d)
+    if d.degree() < 1 or not n % d:
+        return 0.0, 0.0
+    found = roots(hankel_polynomial(n, d))
+    value = max(abs(root.value.real) for root in found)
+    return value, value * 2.0**-52
