@@ -85,7 +85,7 @@ def test_a_stop_band_from_residues(oracle: Any) -> None:
 
 
 def test_sampled_filters_near_one(oracle: Any) -> None:
-    z, p, k = scipy.signal.butter(8, 0.002, output="zpk")
+    _, p, k = scipy.signal.butter(8, 0.002, output="zpk")
     clock = TimeBase("sampled", period=1e-3)
     source = ZeroPoleGain(zeros=[-1.0] * 8, poles=closed(p), gain=float(k), time=clock)
     points = [complex(1.0, 1e-6), complex(1 - 1e-5, 2e-5), complex(0.99, 0.1), -1 + 1e-7j, 0.3 + 0j]

@@ -49,7 +49,7 @@ def test_quotients(above: list[int], below: list[int], point: complex) -> None:
     else:
         # a common factor: the limit is the value of the reduced fraction
         near = products_at(fmpq(1), [fmpq_poly(above)], [fmpq_poly(below)], np.array([point + 1e-9]))[0]
-        assert math.isinf(value.real) and abs(near) > 1e3 or abs(value - near) <= 1e-4 * max(1.0, abs(near))
+        assert (math.isinf(value.real) and abs(near) > 1e3) or abs(value - near) <= 1e-4 * max(1.0, abs(near))
 
 
 def test_factors_and_gain_beyond_doubles() -> None:
