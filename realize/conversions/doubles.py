@@ -15,7 +15,7 @@ from realize.conversions.builders import Factors, assemble, cascade_channel, in_
 from realize.errors import Refused
 from realize.forms import append_polynomial_part, cascade_states, group_roots
 from realize.kernels import factored
-from realize.kernels.zeros import NormalRank, connected_states, eigenvalues, paired, poles, zeros
+from realize.kernels.zeros import NormalRank, at_origin, connected_states, eigenvalues, paired, poles, zeros
 from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
 from realize.models.checks import MAX_EXPONENT
 
@@ -190,6 +190,8 @@ def factors_from_states(model: Model, task: Task) -> FactorGrid:
         except NormalRank:
             return Factors([], below.tolist(), Fraction(0))
         _finite(above, below)
+        if not model.time.sampled:
+            above = at_origin(above, np.block([[A, B], [C, D]]))
         usable = np.isfinite(responses[:, i, j]) & (responses[:, i, j] != 0)
         if not usable.any():
             if not np.any(responses[:, i, j]):
@@ -363,8 +365,12 @@ def residues_from_states(model: Model, task: Task) -> PoleResidue:
         ]
     )
     _finite(found, parts)
-    _refuse_near(found)
-    return PoleResidue(poles=found, residues=parts, direct=model.D, **model.common())
+    # a pole with several independent eigenvectors is listed once, with the sum of its residues
+    distinct, where = np.unique(found, return_inverse=True)
+    together = np.zeros((distinct.size, *model.shape), dtype=complex)
+    np.add.at(together, where, parts)
+    order = np.lexsort((-distinct.imag, np.abs(distinct.imag), distinct.real, np.abs(distinct)))
+    return PoleResidue(poles=distinct[order], residues=together[order], direct=model.D, **model.common())
 
 
 @_guarded

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -12,8 +13,8 @@ ComplexArray = NDArray[np.complex128]
 #: Mantissas in [0.5, 1) and binary exponents.
 Scaled = tuple[Array, NDArray[np.int64]]
 
-#: Binary exponents of roots that a matrix in doubles can hold together.
-LARGEST_EXPONENT = 1000
+#: Bits between the sizes of two groups of roots from which each group has a polynomial of its own.
+FAR_APART = 64
 #: Largest shift that still says something to a double.
 _FAR = 3000
 
@@ -47,7 +48,7 @@ def polynomial_roots(polynomial: Scaled) -> ComplexArray:
     Raises
     ------
     OverflowError
-        If roots differ by more than the range of doubles.
+        If a root is too small or too large for a double.
     """
     mantissa, exponent = polynomial
     last = int(np.flatnonzero(mantissa)[-1])
@@ -58,13 +59,30 @@ def polynomial_roots(polynomial: Scaled) -> ComplexArray:
         return at_origin
     hull = np.rint(_hull([int(k) if v != 0 else None for v, k in zip(m, e, strict=True)])).astype(np.int64)
     slopes = np.diff(hull)
-    if np.abs(slopes).max() > LARGEST_EXPONENT:
+    # groups of roots so far apart in size that neither moves the other by a rounding
+    cuts = [0, *(1 + np.flatnonzero(-np.diff(slopes) > FAR_APART + 2 * n.bit_length())).tolist(), n]
+    pieces = [
+        _group(m[i : j + 1] / m[i], e[i : j + 1] - e[i], hull[i : j + 1] - hull[i])
+        for i, j in itertools.pairwise(cuts)
+    ]
+    found = np.concatenate(pieces)
+    if np.any(found == 0):
         raise OverflowError
-    if n <= 2:
-        return np.concatenate([_few(m, e), at_origin])
-    matrix = np.diag(np.ldexp(1.0, slopes[:-1]), -1)
+    return np.concatenate([found, at_origin])
+
+
+def _group(m: Array, e: NDArray[np.int64], hull: NDArray[np.int64]) -> ComplexArray:
+    """Return the roots of a monic polynomial that does not vanish at the origin, in units of their mean size."""
+    if m.size <= 3:
+        return _few(m, e)
+    n = m.size - 1
+    k = int(hull[-1]) // n
+    down = np.arange(n + 1) * k
+    e, hull = e - down, hull - down
+    matrix = np.diag(np.ldexp(1.0, np.diff(hull)[:-1]), -1)
     matrix[0] = -np.ldexp(m[1:], np.maximum(e[1:] - hull[:-1], -_FAR))
-    return np.concatenate([np.linalg.eigvals(matrix).astype(complex), at_origin])
+    found = np.linalg.eigvals(matrix).astype(complex)
+    return np.ldexp(found.real, k) + 1j * np.ldexp(found.imag, k)
 
 
 def _few(m: Array, e: NDArray[np.int64]) -> ComplexArray:

@@ -144,9 +144,9 @@ def _deflate(A: Array, B: Array, C: Array, D: Array, tolerance: float) -> tuple[
     while A.shape[0] and C.shape[0]:
         steps, D = _compress(D, tolerance)
         rank = len(steps)
+        _apply(steps, C)
         if rank == C.shape[0]:
             break
-        _apply(steps, C)
         steps, _ = _compress(C[rank:].T, tolerance)
         gone = len(steps)
         if gone == 0:
@@ -308,6 +308,30 @@ def without_descriptor(A: Array, B: Array, C: Array, D: Array, E: Array) -> tupl
 
 def _moved(values: ComplexArray, time: int) -> ComplexArray:
     return np.ldexp(values.real, time) + 1j * np.ldexp(values.imag, time)
+
+
+def at_origin(values: ComplexArray, matrix: Array) -> ComplexArray:
+    """Return poles or zeros with the smallest put at the origin where a matrix is singular within n eps.
+
+    Parameters
+    ----------
+    values : (k,) complex array
+    matrix : (n, n) array
+        A, or the system matrix [A B; C D]. Rows and columns are brought near one first, in powers of two, so that slow
+        dynamics beside fast ones are not taken for an integrator.
+    """
+    if values.size == 0 or np.any(values == 0) or not np.all(np.isfinite(matrix)):
+        return values
+    work = np.array(matrix)
+    for _ in range(4):
+        for part in (work, work.T):
+            size = np.max(np.abs(part), axis=1)
+            part[:] = np.ldexp(part, -np.where(size > 0, np.frexp(size)[1], 0)[:, None])
+    singular = np.linalg.svd(work, compute_uv=False)
+    if singular[-1] > work.shape[0] * EPS * singular[0]:
+        return values
+    size = np.abs(values)
+    return np.where(size == size.min(), 0.0, values)
 
 
 def poles(A: Array, E: Array | None) -> ComplexArray:

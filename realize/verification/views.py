@@ -310,7 +310,11 @@ def double_poles(model: Model) -> ComplexArray:
     if isinstance(model, ZeroPoleGain):
         return np.unique(np.concatenate([roots for row in model.poles for roots in row]))
     if isinstance(model, TransferFunction):
-        return np.unique(np.concatenate([np.roots(d) for row in model.denominator for d in row]))
+        from realize.kernels.factored import polynomial_roots
+
+        p, m = model.shape
+        found = [polynomial_roots(model.exact_or_double("denominator", i, j)) for i in range(p) for j in range(m)]
+        return np.unique(np.concatenate(found))
     if isinstance(model, Sections):
         return np.concatenate([np.roots(section[1]) for section in model.sections] or [np.zeros(0)])
     raise TypeError(model.kind)
