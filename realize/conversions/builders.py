@@ -29,6 +29,9 @@ if TYPE_CHECKING:
 
 Grid = list[list[tuple[Any, Any]]]
 
+#: Bits to which roots of sampled models are known while a cascade is built.
+PRECISE_BITS = 120
+
 #: Digits of a decimal string that stands for a number beyond the range of doubles.
 DIGITS = 20
 _SMALLEST = 2.0**-1022
@@ -43,6 +46,8 @@ class Factors:
     gain: Fraction
     #: Sampled models: those of them that are exactly on the unit circle, whatever their doubles are.
     circle: frozenset[complex] = field(default=frozenset(), kw_only=True)
+    #: Sampled models: what they stand for to more digits, since what counts is their distance from z = 1 and -1.
+    precise: dict[complex, tuple[Fraction, Fraction]] = field(default_factory=dict, kw_only=True)
 
 
 def _python(value: Any) -> Fraction:
@@ -135,9 +140,11 @@ def factors_as_given(model: Model, task: Task) -> list[list[Factors]]:
 
 def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
     """Certified poles and zeros, correctly rounded, with exact multiplicities."""
+    from realize.kernels.exact.numbers import exact_value
     from realize.kernels.exact.roots import roots, unit_circle
 
     on_circle: set[complex] = set()
+    precise: dict[complex, tuple[Fraction, Fraction]] = {}
 
     def listed(polynomial: Any) -> list[complex]:
         if polynomial.degree() < 1:
@@ -146,6 +153,9 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
         if task.model.time.sampled:
             flags = unit_circle(polynomial, distinct)
             on_circle.update(root.value for root, flag in zip(distinct, flags, strict=True) if flag)
+            for root in distinct:
+                ball = root.at(PRECISE_BITS)
+                precise[root.value] = (_python(exact_value(ball.real)), _python(exact_value(ball.imag)))
         found = [root.value for root in distinct for _ in range(root.multiplicity)]
         for value in found:
             if not (np.isfinite(value.real) and np.isfinite(value.imag)):
@@ -161,7 +171,7 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
                 continue
             gain = _python(n.leading_coefficient() / d.leading_coefficient())
             zeros, poles = listed(n), listed(d)
-            line.append(Factors(zeros, poles, gain, circle=frozenset(on_circle)))
+            line.append(Factors(zeros, poles, gain, circle=frozenset(on_circle), precise=precise))
         result.append(line)
     return result
 
@@ -271,7 +281,7 @@ def in_range() -> Iterator[None]:
     """Turn an entry beyond the range of doubles into words."""
     try:
         yield
-    except BeyondDoubles:
+    except (BeyondDoubles, OverflowError):
         raise Refused("an entry of the result lies beyond the range of doubles; scale time or gain first") from None
 
 
@@ -279,7 +289,7 @@ def cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
     """Matrices A, B, C, D of one channel as a cascade, and its polynomial part, None where there is none."""
     if len(channel.zeros) <= len(channel.poles):
         grouped = group_roots(channel.zeros, channel.poles, task.model.time.sampled)
-        return (*cascade_states(grouped, channel.gain, task.model.time.sampled, channel.circle), None)
+        return (*cascade_states(grouped, channel.gain, task.model.time.sampled, channel.circle, channel.precise), None)
     from realize.kernels.exact import polynomials
     from realize.kernels.exact.numbers import fraction
 
@@ -292,7 +302,9 @@ def cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
     whole, rest = divmod(n * gain, d)
     sampled = task.model.time.sampled
     part = factors_from_fractions([[(rest, d)]], task)[0][0]
-    A, B, C, D = cascade_states(group_roots(part.zeros, part.poles, sampled), part.gain, sampled, part.circle)
+    A, B, C, D = cascade_states(
+        group_roots(part.zeros, part.poles, sampled), part.gain, sampled, part.circle, part.precise
+    )
     return A, B, C, D, np.array([[[value]] for value in rounded(polynomials.coefficients(whole))[0]])
 
 

@@ -22,7 +22,7 @@ from __future__ import annotations
 
 import cmath
 import math
-from collections.abc import Collection
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 
@@ -40,18 +40,37 @@ class Section:
     zeros: tuple[complex, ...]
 
 
-def monic(roots: tuple[complex, ...]) -> list[Fraction]:
-    """Return the exact coefficients, highest power first, of the monic polynomial with one or two given roots."""
+#: Roots to more digits than their doubles have: real and imaginary part.
+Precise = Mapping[complex, tuple[Fraction, Fraction]]
+
+
+def monic(
+    roots: tuple[complex, ...], circle: Collection[complex] = (), precise: Precise | None = None
+) -> list[Fraction]:
+    """Return the coefficients, highest power first, of the monic polynomial with one or two given roots.
+
+    Parameters
+    ----------
+    circle : collection of complex
+        Roots that stand for numbers exactly on the unit circle.
+    precise : mapping, optional
+        What roots stand for to more digits; the doubles themselves where they are not listed.
+    """
     if not roots:
         return [Fraction(1)]
+
+    def parts(root: complex) -> tuple[Fraction, Fraction]:
+        known = None if precise is None else precise.get(root)
+        return (Fraction(root.real), Fraction(root.imag)) if known is None else known
+
     if len(roots) == 1:
-        return [Fraction(1), -Fraction(roots[0].real)]
+        return [Fraction(1), -parts(roots[0])[0]]
     first, second = roots
+    re, im = parts(first)
     if first.imag != 0:
-        re, im = Fraction(first.real), Fraction(first.imag)
-        return [Fraction(1), -2 * re, re * re + im * im]
-    p, q = Fraction(first.real), Fraction(second.real)
-    return [Fraction(1), -(p + q), p * q]
+        return [Fraction(1), -2 * re, Fraction(1) if first in circle else re * re + im * im]
+    q = parts(second)[0]
+    return [Fraction(1), -(re + q), re * q]
 
 
 def _size(root: complex, sampled: bool) -> float:
@@ -167,7 +186,11 @@ def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = Fals
 
 
 def cascade_states(
-    sections: list[Section], gain: Fraction, sampled: bool = False, circle: Collection[complex] = ()
+    sections: list[Section],
+    gain: Fraction,
+    sampled: bool = False,
+    circle: Collection[complex] = (),
+    precise: Precise | None = None,
 ) -> tuple[Array, Array, Array, Array]:
     """Return A, B, C, D of gain times the product of the sections.
 
@@ -181,10 +204,12 @@ def cascade_states(
         The roots are those of polynomials in z.
     circle : collection of complex
         Roots that stand for numbers exactly on the unit circle.
+    precise : mapping, optional
+        What roots stand for to more digits.
     """
     n = sum(len(section.poles) for section in sections)
     A, B, C = np.zeros((n, n)), np.zeros((n, 1)), np.zeros((1, n))
-    blocks = [_block(section, sampled, circle) for section in sections]
+    blocks = [_block(section, sampled, circle, precise) for section in sections]
     if gain == 0:
         start = 0
         for block in blocks:
@@ -237,7 +262,7 @@ def _on_grid(value: Fraction) -> Fraction:
     return Fraction(round(value / _GRID)) * _GRID
 
 
-def _block(section: Section, sampled: bool, circle: Collection[complex] = ()) -> _Block:
+def _block(section: Section, sampled: bool, circle: Collection[complex], precise: Precise | None) -> _Block:
     """Return the scaled companion block of a section, whose gain is 2^gain_exponent times the section's own."""
     exact_zeros = sampled and any(zero in (1, -1) for zero in section.zeros)
     if len(section.poles) == 1:
@@ -245,7 +270,8 @@ def _block(section: Section, sampled: bool, circle: Collection[complex] = ()) ->
     centre = Fraction(0)
     if sampled:
         centre = Fraction(1 if section.poles[0].real + section.poles[1].real >= 0 else -1)
-    below, above = _shifted(monic(section.poles), centre), _shifted(monic(section.zeros), centre)
+    below = _shifted(monic(section.poles, circle, precise), centre)
+    above = _shifted(monic(section.zeros, circle, precise), centre)
     d1, d0 = below[1], below[2]
     size = math.sqrt(abs(to_double(d0))) or abs(to_double(d1)) if sampled else max(abs(p) for p in section.poles)
     e = math.frexp(size)[1] if size > 0 else 0
@@ -271,12 +297,15 @@ def _block(section: Section, sampled: bool, circle: Collection[complex] = ()) ->
     # the numerator is formed against the rounded denominator, so that exact cancellations are exact
     column = [Fraction(0), b]
     if zeros == 2:
-        first = to_double(above[1] - damping)
+        constant = above[2]
         if _amplification(section.poles, section.zeros, sampled) > TUNE_FROM or _near_end(section, sampled):
-            k = _tuned(k, b, d0, above[2], damping + Fraction(first) - above[1], section.zeros[0] - to_double(centre))
+            # what rounding does to the linear term is made good, at the zero, by the constant term
+            missed = damping + Fraction(to_double(above[1] - damping)) - above[1]
+            constant -= missed * (Fraction(section.zeros[0].real) - centre)
+            k = _tuned(k, d0, constant)
             stiffness = Fraction(to_double(d0 / k))
             A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
-        row = [(above[2] / k - stiffness) / b, (above[1] - damping) / b]
+        row = [(constant / k - stiffness) / b, (above[1] - damping) / b]
         return _Block(A, _doubles(column).T, _doubles(row), 1.0, 0)
     rest = Fraction(2) ** (e - e // 2)
     if zeros == 1:
@@ -287,7 +316,7 @@ def _block(section: Section, sampled: bool, circle: Collection[complex] = ()) ->
 #: From this amplification of rounding near a zero the coupling of the two states is tuned.
 TUNE_FROM = 4.0
 #: Couplings tried; each has an even chance to halve the smallest error so far.
-COUPLINGS = 400
+COUPLINGS = 1200
 
 
 def _near_end(section: Section, sampled: bool) -> bool:
@@ -296,27 +325,35 @@ def _near_end(section: Section, sampled: bool) -> bool:
     return sampled and abs(zero + 1) < 0.5
 
 
-def _tuned(k: Fraction, b: Fraction, d0: Fraction, n0: Fraction, e1: Fraction, t: complex) -> Fraction:
-    """Return a coupling k for which the rounded numerator is nearly zero at the zero t (about the centre).
+def _tuned(k: Fraction, d0: Fraction, n0: Fraction) -> Fraction:
+    """Return a coupling k for which the rounded constant term of the numerator is nearly exact.
 
-    The constant term of the numerator is k (d0/k rounded) + k b c0 with c0 rounded: its error is a different fraction
-    of a rounding for each double k, so that among some hundred one is found that is right to several bits more. The
+    That term is k (s + b c0) with s = d0/k and b c0 = n0/k - s both rounded: its error is a different fraction of a
+    rounding for each double k, so that among some hundred one is found that is right to several bits more. The
     response then is what the numbers say it is, to more digits than each of them has.
+
+    Parameters
+    ----------
+    k : Fraction
+        A power of two.
+    d0, n0 : Fraction
+        Constant terms of denominator and numerator.
     """
-    best, found = k, math.inf
-    slope = to_double(e1)
-    unit = abs(to_double(n0 - d0)) * 2.0**-53 or 1.0
+    # in units of n0's and d0's common denominator, with k T/1024 in place of k: whole numbers all along
+    unit = math.lcm(d0.denominator, n0.denominator)
+    D, N = d0.numerator * (unit // d0.denominator), n0.numerator * (unit // n0.denominator)
+    target = abs(to_double(n0 - d0)) * 2.0**-53 / 1024
+    best, found = 1024, math.inf
     for step in range(COUPLINGS):
-        trial = k * Fraction(1024 + step, 1024) if step % 2 else k * Fraction(1024 - step, 1024) if step else k
-        stiffness = Fraction(to_double(d0 / trial))
-        c0 = Fraction(to_double((n0 / trial - stiffness) / b))
-        error = to_double(trial * (stiffness + b * c0) - n0)
-        size = abs(error + slope * t)
-        if size < found:
-            best, found = trial, size
-            if found < unit / 256:
+        T = 1024 + (step if step % 2 else -step // 2)
+        s, below = (D / T).as_integer_ratio()
+        c, under = ((N * below - s * T) / (T * below)).as_integer_ratio()
+        error = abs((T * (s * under + c * below) - N * below * under) / (unit * below * under))
+        if error < found:
+            best, found = T, error
+            if found <= target:
                 break
-    return best
+    return k * Fraction(best, 1024)
 
 
 def _first_order(section: Section, exact_zeros: bool) -> _Block:
