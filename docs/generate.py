@@ -216,7 +216,7 @@ def conversions() -> str:
 
 def double_conversions() -> str:
     """Return the table of conversions in double arithmetic."""
-    return _rows(row for row in DOUBLE_ROWS if row not in ROWS or row.source == "pole-residue")
+    return _rows(DOUBLE_ROWS)
 
 
 def reduction_methods() -> str:
