@@ -27,6 +27,9 @@ if TYPE_CHECKING:
     )
     from realize.schema import Claim, Receipt
     from realize.steps import Conversion, compare, convert, explain, fit, inspect, reduce
+    from realize.verification.feedback import gap_distance, stability_margin
+    from realize.verification.margins import LoopMargins, loop_margins
+    from realize.verification.norms import h2_norm, hankel_norm, largest_gain
 
 _HOMES = {
     "realize.errors": ("ClaimFailed", "InputError", "RealizeError", "Refused", "UsageError"),
@@ -45,6 +48,9 @@ _HOMES = {
     ),
     "realize.schema": ("Claim", "Receipt"),
     "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "inspect", "reduce"),
+    "realize.verification.feedback": ("gap_distance", "stability_margin"),
+    "realize.verification.margins": ("LoopMargins", "loop_margins"),
+    "realize.verification.norms": ("h2_norm", "hankel_norm", "largest_gain"),
 }
 _HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 
@@ -55,6 +61,7 @@ __all__ = [
     "DeadTime",
     "FrequencyResponse",
     "InputError",
+    "LoopMargins",
     "Offset",
     "PoleResidue",
     "RealizeError",
@@ -72,9 +79,15 @@ __all__ = [
     "convert",
     "explain",
     "fit",
+    "gap_distance",
+    "h2_norm",
+    "hankel_norm",
     "inspect",
+    "largest_gain",
+    "loop_margins",
     "read",
     "reduce",
+    "stability_margin",
     "write",
 ]
 

@@ -86,5 +86,27 @@ CLAIMS: dict[str, ClaimDefinition] = {
         ),
         ClaimDefinition("linf-error", "absolute", "L-infinity norm of the difference"),
         ClaimDefinition("h2-error", "absolute", "H2 norm of the difference"),
+        ClaimDefinition(
+            "nu-gap",
+            "relative",
+            "nu-gap between two plants, 0 to 1: a controller whose stability margin exceeds it suits both; it depends "
+            "on the units of inputs and outputs",
+        ),
+        ClaimDefinition("largest-gain", "absolute", "L-infinity norm: largest singular value over all frequencies"),
+        ClaimDefinition("h2-norm", "absolute", "H2 norm, the feed-through of a sampled model included"),
+        ClaimDefinition("hankel-norm", "absolute", "largest Hankel singular value of the stable part"),
+        ClaimDefinition(
+            "stability-margin",
+            "relative",
+            "b(P, K) of the loop u = -K y, 0 (not stable) to 1, a lower bound; it depends on the units",
+        ),
+        ClaimDefinition("gain-margin", "1", "smallest factor above 1 on the loop gain that puts it on -1"),
+        ClaimDefinition("gain-reduction-margin", "1", "largest factor below 1 on the loop gain that puts it on -1"),
+        ClaimDefinition("phase-margin", "degrees", "least change of phase that puts the loop gain on -1"),
+        ClaimDefinition("delay-margin", "s", "least dead time that puts the loop gain on -1"),
+        ClaimDefinition("largest-sensitivity", "1", "largest |1 / (1 + L)| of a loop L over all frequencies"),
+        ClaimDefinition(
+            "largest-complementary-sensitivity", "1", "largest |L / (1 + L)| of a loop L over all frequencies"
+        ),
     )
 }

@@ -17,6 +17,7 @@ from realize.steps.reduce import states_of
 from realize.verification import Pair, view_of
 from realize.verification.conversion import channel_error, dead_time_difference, peak_error, response_error
 from realize.verification.difference import h2_error, linf_error
+from realize.verification.feedback import gap_claim
 from realize.verification.misfit import data_claims
 
 
@@ -42,8 +43,8 @@ def compare(
     Returns
     -------
     dict
-        The claims of the first comparison by name (``response-error``, ``peak-error``, ``linf-error``, ``h2-error``, or
-        misfits for data), ``reference`` and ``other``; all of them in ``comparisons``.
+        The claims of the first comparison by name (``response-error``, ``peak-error``, ``linf-error``, ``h2-error``,
+        ``nu-gap``, or misfits for data), ``reference`` and ``other``; all of them in ``comparisons``.
     """
     if not others:
         raise InputError("one model", "at least two models or data sets to compare")
@@ -86,12 +87,19 @@ def _claims(first: Model, second: Model, band: tuple[float, float] | None, a: st
     claims = [response_error(pair)]
     if first.shape != (1, 1):
         claims.append(channel_error(pair))
-    claims += [peak_error(pair), linf_error(first, second)]
-    try:
-        claims.append(h2_error(states_of(first)[0], states_of(second)[0]))
-    except Refused as error:
-        claims.append(judge("h2-error", None, unit="absolute", note=str(error)))
+    claims += [peak_error(pair), linf_error(first, second), _h2(first, second), gap_claim(first, second)]
     return claims
+
+
+def _h2(first: Model, second: Model) -> Claim:
+    found = h2_error(first, second)
+    if found is None:
+        try:
+            found = h2_error(states_of(first)[0], states_of(second)[0])
+        except Refused as error:
+            return judge("h2-error", None, unit="absolute", note=str(error))
+    assert found is not None
+    return found
 
 
 def _at_many_frequencies(first: Model, second: Model, chosen: tuple[float, float] | None) -> list[Claim]:

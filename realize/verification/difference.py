@@ -8,14 +8,15 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels import norms
-from realize.kernels.lyapunov import NotStable
 from realize.models import Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import Claim, judge
 from realize.schema.records import Basis
 from realize.verification.bands import Interval, intervals_of, whole_band
 from realize.verification.conversion import at_infinity, largest_error, peak_gain
+from realize.verification.curves import LARGEST_DEGREE, MOST_MINORS, Extreme, largest_of, minor_count
 from realize.verification.fragility import fragility
+from realize.verification.norms import H2_ORDER, h2_of_fractions, h2_of_states
 from realize.verification.pair import Pair
 from realize.verification.search import Band, axis_intervals, largest, seeds
 from realize.verification.views import NO_DYNAMICS, Dynamics, view_of
@@ -52,8 +53,9 @@ def linf_error(first: Model, second: Model, *, name: str = "linf-error", limit: 
     """Return the L-infinity norm of the difference, absolute, with the value relative to the first one's largest gain.
 
     Intervals around poles on the axis are left out; a pole at the origin leaves out what is below the dynamic band.
-    From exact fractions where affordable: proved for one channel, and for several by the Frobenius norm unless
-    Hamiltonian eigenvalues of two state models give a closer bound. In doubles otherwise.
+    From exact fractions where affordable, proved: the largest singular value itself, from the minors of the difference;
+    where there are too many of them, its Frobenius norm, unless Hamiltonian eigenvalues of two state models give a
+    closer bound. In doubles otherwise.
     """
     pair = Pair(view_of(first), view_of(second))
     if pair.identical or (pair.provable(None) and pair.proof(None).identical):
@@ -62,8 +64,12 @@ def linf_error(first: Model, second: Model, *, name: str = "linf-error", limit: 
     basis: Basis
     if pair.exact:
         gain = peak_gain(pair)[0]
-        value, where, bound, basis = _from_fractions(pair, band, pieces)
-        if pair.source.model.shape != (1, 1) and not band.left_out and band.zero:
+        closest = _from_minors(pair, pieces)
+        if closest is not None:
+            value, where, bound, basis = closest.value, closest.frequency, closest.bound, "proved"
+        else:
+            value, where, bound, basis = _from_fractions(pair, band, pieces)
+        if closest is None and pair.source.model.shape != (1, 1) and not band.left_out and band.zero:
             closer = _confirmed(pair, first, second, value, gain)
             if closer is not None and (bound is None or closer < bound):
                 bound, basis = closer, "bounded"
@@ -118,6 +124,31 @@ def _difference_poles(pair: Pair) -> Dynamics:
             part = pair.source.dynamics(reduce_fraction(n, d)[1])
             found = found.merged(Dynamics(part.s[part.on_axis], part.on_axis[part.on_axis]))
     return found
+
+
+def _from_minors(pair: Pair, pieces: list[Interval]) -> Extreme | None:
+    """Return the largest singular value of the difference with a proved bound (in units of 2^exponent), or None."""
+    from realize.kernels.exact.graphs import continuous, gain_squares, minors_of
+
+    p, m = pair.source.model.shape
+    if not pair.provable(None):
+        return None
+    assert pair.source.fractions is not None and pair.result.fractions is not None
+    degree = max(
+        max(n.degree(), d.degree())
+        for grid in (pair.source.fractions, pair.result.fractions)
+        for row in grid
+        for n, d in row
+    )
+    if minor_count(p, m) * 2 * max(degree, 1) > MOST_MINORS or 2 * degree > LARGEST_DEGREE:
+        return None
+    cross: Any = _cross(pair)
+    minors = minors_of(cross if pair.source.period is None else continuous(cross))
+    if minors.poles.degree() < minors.degree:
+        return None
+    intervals = [(low, high) for low, high, _ in pieces]
+    found = largest_of(gain_squares(minors), pair.source.exact_period, [minors.poles], intervals)
+    return found if found.bound is not None else None
 
 
 def _from_fractions(pair: Pair, band: Band, pieces: list[Interval]) -> tuple[float, float, float | None, Basis]:
@@ -210,13 +241,25 @@ def _in_doubles(pair: Pair, first: Model, second: Model, band: Band) -> tuple[fl
     return value, where, None, gain
 
 
-def h2_error(first: StateSpace, second: StateSpace) -> Claim:
-    """Return the H2 norm of the difference of two state models; None where one of them is not stable."""
-    period = first.time.seconds if first.time.sampled else None
-    A, B, C, D = difference_states(first, second)
-    try:
-        value: float | None = norms.squared_norm(A, B, C, D, sampled=period is not None)
-        note = "rounding of the Gramian not included"
-    except NotStable:
-        value, note = None, "one of the models is not stable"
-    return judge("h2-error", value, unit="absolute", note=note)
+def h2_error(first: Model, second: Model) -> Claim | None:
+    """Return the H2 norm of the difference, from exact fractions where affordable; None where it takes state models.
+
+    Not available where the difference is not stable; exact: where unstable parts do not cancel.
+    """
+    pair = Pair(view_of(first), view_of(second))
+    if pair.identical:
+        return judge("h2-error", 0.0, unit="absolute", basis="proved", uncertainty=0.0)
+    sampled = pair.source.period is not None
+    if pair.exact:
+        cross: Any = _cross(pair)
+        if max(max(n.degree(), d.degree()) for row in cross for n, d in row) <= 2 * H2_ORDER:
+            factor = pair.exponent
+            from realize.kernels.exact.numbers import power_of_two
+
+            return h2_of_fractions(
+                "h2-error", [[(n * power_of_two(factor), d) for n, d in row] for row in cross], sampled
+            )
+    if not both_states(first, second):
+        return None
+    assert isinstance(first, StateSpace) and isinstance(second, StateSpace)
+    return h2_of_states("h2-error", *difference_states(first, second), sampled)

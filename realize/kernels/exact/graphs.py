@@ -180,8 +180,9 @@ def _mirrored(p: fmpq_poly) -> fmpq_poly:
 def angles(first: Minors, second: Minors, *, adjoint: bool) -> Angles:
     """Return the angles between the graph of P1 and that of P2.
 
-    With V = [P1; I] and U = [I, -P2]*, whose columns span what is perpendicular to the graph of P2, the sum over r = p + m
-    chosen rows of [V, U; a V, 0] of the squared determinants is det of its Gram matrix, a polynomial in a^2 = -c.
+    With V = [P1; I] and U = [I, -P2]*, whose columns span what is perpendicular to the graph of P2, the sum over all
+    choices of p + m rows of [V, U; a V, 0] of the squared determinants is that of its Gram matrix, a polynomial in
+    a^2 = -c.
 
     Parameters
     ----------
@@ -255,7 +256,6 @@ __all__ = [
     "angles",
     "continuous",
     "determinant_count",
-    "fmpq",
     "gain_squares",
     "in_units",
     "middle",

@@ -28,7 +28,8 @@ def _inverse(p: fmpq_poly, modulus: fmpq_poly) -> fmpq_poly:
 def squared_h2(numerators: Sequence[fmpq_poly], denominator: fmpq_poly) -> fmpq:
     """Return the sum over the channels of (1 / 2 pi) times the integral over all w of |n(jw) / d(jw)|^2, exactly.
 
-    With n(s) n(-s) = u(s) d(-s) + u(-s) d(s) the integral is u_(n-1) / d_n, and u = n(s) n(-s) / d(-s) modulo d(s) [1]_.
+    With n(s) n(-s) = u(s) d(-s) + u(-s) d(s) the integral is u_(n-1) / d_n [1]_, and u = n(s) n(-s) / d(-s) modulo
+    d(s).
 
     Parameters
     ----------

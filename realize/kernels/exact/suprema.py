@@ -5,7 +5,7 @@ The squared singular values at x = w^2 are the roots of ::
     P(x, t) = S_0(x) t^q - S_1(x) t^(q-1) + ... + (-1)^q S_q(x),      S_k(x) >= 0,
 
 all of them real and not negative. They stay below t on an interval where P(x, t) > 0, if they do so at one of its
-points: none can pass t without a zero of P, and S_0 has none that is not a pole. With one singular value, P = S_0 t - S_1.
+points: none can pass t without a zero of P, and S_0 has none that is not a pole. One singular value: P = S_0 t - S_1.
 """
 
 from __future__ import annotations
@@ -125,7 +125,6 @@ class Curve:
             for k, value in enumerate(values[2:], start=2):
                 c.append((-1) ** k * (value.mid() / s1 * factor).mid())
                 factor = factor * power
-            q = len(c) - 1
             u = arb(1)
             for _ in range(200):
                 f, slope = arb(0), arb(0)
@@ -137,7 +136,6 @@ class Curve:
                 u = (u - step).mid()
                 if step < u * arb(2) ** -80:
                     break
-            del q
             return exact_value(u * s1 / s0)
 
     def logarithm(self, x: float) -> float:
