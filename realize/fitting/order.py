@@ -30,6 +30,9 @@ ComplexArray = NDArray[np.complex128]
 HIGHEST_ORDER = 40
 #: ``auto`` stops after this many orders in a row without a better criterion (two pairs).
 PATIENCE = 4
+#: Above this many times the noise power, orders that bring nothing by themselves do not end the search: a structure
+#: with many modes takes many poles before the misfit falls.
+FAR = 10.0
 #: Near the noise ``auto`` stops after this many orders of which none was worth its poles (``worthwhile``).
 LOOKAHEAD = 12
 #: Up to this order every order is tried, above it every second one.
@@ -40,8 +43,8 @@ FRESH_ORDER = 20
 NEAR_NOISE = 0.25
 #: Further above the noise two more poles must leave less than this share of the excess misfit power.
 WORTH = 0.65
-#: As long as this share of the data's power is missed beyond the noise, a tenth taken off is worth two poles.
-GROSS, WORTH_WHILE_GROSS = 0.05, 0.9
+#: As long as this share of the data's power is missed beyond the noise, the criterion alone decides.
+GROSS, WORTH_WHILE_GROSS = 0.05, 1.0
 #: Band edges further apart than this get logarithmically spaced starting poles, others linearly spaced ones.
 WIDE = 10.0
 
@@ -130,7 +133,7 @@ class Search:
         return self.problem.criterion(order, self.best[order].cost)
 
     def grow(self, lowest: int, highest: int) -> None:
-        """Fit orders from 0 until the criterion has not improved for ``PATIENCE`` orders, or to ``highest``."""
+        """Fit orders from 0 until, near the noise, the criterion has not improved for ``PATIENCE`` orders."""
         orders = list(range(min(highest, EVERY_ORDER) + 1))
         orders += [n for n in range(EVERY_ORDER + 1, highest + 1) if (n - highest) % 2 == 0]
         chosen = lowest
@@ -142,7 +145,8 @@ class Search:
                 chosen = lowest = order
             if self.criterion(order) < self.criterion(chosen):
                 chosen = order
-            if order - chosen >= PATIENCE or self.reproduced(order) or self.flat(order, lowest):
+            tired = order - chosen >= PATIENCE and self.best[chosen].cost <= FAR * self.noise_power()
+            if tired or self.reproduced(order) or self.flat(order, lowest):
                 break
 
     def flat(self, order: int, lowest: int) -> bool:
@@ -205,7 +209,7 @@ def worthwhile(problem: Problem, small: Trial, large: Trial, noise: float) -> bo
 
     The criterion must be lower. Where the misfit of the smaller fit is well above the noise (real structures are not
     exactly rational, and their errors are alike on neighbouring lines, so that the criterion alone never stops), each
-    two poles must also take at least a third of the misfit power in excess of the noise (a tenth while the
+    two poles must also take at least a third of the misfit power in excess of the noise (none while the
     fit is poor).
     """
     if problem.criterion(large.order, large.cost) >= problem.criterion(small.order, small.cost):

@@ -235,14 +235,16 @@ class Model:
         """
         points = np.asarray(s, dtype=complex)
         flat = points.reshape(-1)
-        values = self.rational_part(flat)
-        if self.dead_time is not None:
-            total = self.dead_time.total
-            if self.time.sampled:
-                values = values * flat[:, None, None] ** -np.rint(total / self.time.seconds)
-            else:
-                values = values * np.exp(-flat[:, None, None] * total)
-        return values.reshape(points.shape + self.shape)
+        return self.delayed(self.rational_part(flat), flat).reshape(points.shape + self.shape)
+
+    def delayed(self, values: ComplexArray, points: ComplexArray) -> ComplexArray:
+        """Return values [k][outputs][inputs] at complex points [k] with the dead time of each channel put in."""
+        if self.dead_time is None:
+            return values
+        total = self.dead_time.total
+        if self.time.sampled:
+            return values * points[:, None, None] ** -np.rint(total / self.time.seconds)
+        return values * np.exp(-points[:, None, None] * total)
 
     def remembered(self, key: str, make: Callable[[], Any]) -> Any:
         """Return what was made before for this model under a key, or make it now; models never change."""

@@ -91,7 +91,8 @@ def fit(
     result = convert_model(task, route)
 
     part = misfit(source, result, keep)
-    claims: list[Claim] = [rms_misfit(part, given.get("rms-misfit")), worst_misfit(part, given.get("worst-misfit"))]
+    rms = rms_misfit(part, given.get("rms-misfit"))
+    claims: list[Claim] = [rms, worst_misfit(part, given.get("worst-misfit"))]
     if source.deviation is not None:
         weighted = weighted_misfit(part, source.deviation, given.get("weighted-misfit"))
     else:
@@ -99,7 +100,10 @@ def fit(
             "weighted-misfit",
             found.weighted,
             unit="1",
-            uncertainty=1e-9 * (1 + found.weighted),
+            # the same rounding as in the misfit itself, and that of the misfit that the noise was estimated from
+            uncertainty=None
+            if not rms.value or rms.uncertainty is None
+            else 10 * found.weighted * rms.uncertainty / rms.value,
             limit=given.get("weighted-misfit"),
             note=f"the deviation is {found.noise.basis}",
         )

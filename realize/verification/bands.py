@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from realize.verification.pair import Pair
 from realize.verification.search import LIGHT, Band, dynamic_band
@@ -12,15 +13,33 @@ from realize.verification.views import NO_DYNAMICS, Dynamics, View
 Interval = tuple[float, float, float | None]
 
 
+#: A steady-state gain below this share of the largest one is what rounding leaves of zero.
+ROUNDING = 1e-9
+
+
 def finite_at_zero(view: View) -> bool:
     """True where every channel is finite at zero frequency and some channel is not zero there."""
     poles = view.poles
     if poles.s.size and np.any(poles.s == 0):
         return False
     if view.fractions is None:
-        return bool(np.any(view.response(np.zeros(1)) != 0))
+        return bool(np.any(_above_rounding(view)))
     point = 0 if view.period is None else 1
     return any(n(point) != 0 for row in view.fractions for n, _ in row)
+
+
+def _above_rounding(view: View) -> NDArray[np.bool_]:
+    """Return which channels have a steady-state gain that doubles can tell from zero."""
+
+    def found() -> NDArray[np.bool_]:
+        sizes = view.poles.frequency[view.poles.frequency > 0]
+        w = np.unique(np.concatenate([[0.0], sizes]))[:200]
+        with np.errstate(all="ignore"):
+            values = np.abs(view.response(w))
+        values[~np.isfinite(values)] = 0.0
+        return values[0] > ROUNDING * values.max(axis=0)
+
+    return view.model.remembered("steady", found)
 
 
 def channel_band(view: View, i: int, j: int) -> Band:
@@ -29,7 +48,7 @@ def channel_band(view: View, i: int, j: int) -> Band:
     if view.fractions is not None:
         finite = not at_origin and view.fractions[i][j][0](0 if view.period is None else 1) != 0
     else:
-        finite = not at_origin and bool(view.response(np.zeros(1))[0, i, j] != 0)
+        finite = not at_origin and bool(_above_rounding(view)[i, j])
     return dynamic_band(zeros, poles, view.period, finite)
 
 

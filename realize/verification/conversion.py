@@ -182,7 +182,13 @@ def at_infinity(pair: Pair) -> tuple[float, float]:
 
     pairs = [(a, b) for one, two in zip(*pair.scaled, strict=True) for a, b in zip(one, two, strict=True)]
     difference = [limit(b[0] * a[1] - a[0] * b[1], a[1] * b[1]) for a, b in pairs]
-    return float(np.linalg.norm(difference)), float(np.linalg.norm([limit(*a) for a, _ in pairs]))
+    return _norm(difference), _norm([limit(*a) for a, _ in pairs])
+
+
+def _norm(values: list[float]) -> float:
+    """Return the root of the sum of squares, safe against overflow."""
+    top = max(values, default=0.0)
+    return top * float(np.linalg.norm(np.array(values) / top)) if 0 < top < np.inf else top
 
 
 def peak_error(pair: Pair, limit: float | None = None) -> Claim:

@@ -2,28 +2,33 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
 from realize.models import FrequencyResponse, Model
 from realize.schema import Claim, judge
+from realize.verification.fragility import fragility
+from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
 
 
 @dataclass(frozen=True)
 class Misfit:
-    """Model minus data at the data's lines: [k][outputs][inputs] complex, dead time included, with rounding bounds."""
+    """Model minus data at the lines that count, and a bound on its rounding: [k][outputs][inputs]."""
 
     data: FrequencyResponse
     difference: NDArray[np.complex128]
+    bound: Array | None
     keep: NDArray[np.bool_]
 
 
 def misfit(data: FrequencyResponse, model: Model, keep: NDArray[np.bool_] | None = None) -> Misfit:
-    """Evaluate the model at the data's lines.
+    """Evaluate the model at the data's lines, from exact fractions where affordable.
 
     Parameters
     ----------
@@ -31,10 +36,22 @@ def misfit(data: FrequencyResponse, model: Model, keep: NDArray[np.bool_] | None
         The lines that count; all unless given.
     """
     lines = np.ones(data.radians.size, dtype=bool) if keep is None else keep
+    w = data.radians[lines]
+    view = view_of(model)
     with np.errstate(all="ignore"):
         # a line at a pole of the model gives an infinite misfit
-        values = model.evaluate(model.time.points(data.radians[lines]))
-    return Misfit(data, values - data.response[lines], lines)
+        values = model.delayed(view.response(w), model.time.points(w))
+        size = np.abs(values) + np.abs(data.response[lines])
+    if view.fractions is not None:
+        turns = 0.0 if model.dead_time is None else float(w.max() * model.dead_time.total.max())
+        bound = _EPS * (8 + 2 * turns) * size
+    else:
+        fragile = fragility(model, w[w > 0]) if np.any(w > 0) else None
+        bound = None if fragile is None else (16 * fragile + 8 * _EPS) * size
+    return Misfit(data, values - data.response[lines], bound, lines)
+
+
+_EPS = float(np.finfo(float).eps)
 
 
 def _where(part: Misfit, index: tuple[int, ...]) -> dict[str, float | int]:
@@ -45,19 +62,34 @@ def _where(part: Misfit, index: tuple[int, ...]) -> dict[str, float | int]:
     return place
 
 
+def _norm(values: NDArray[Any]) -> float:
+    """Return the root of the sum of squares, safe against overflow."""
+    top = float(np.abs(values).max(initial=0.0))
+    if not np.isfinite(top) or top == 0:
+        return top
+    return float(np.sqrt(np.sum(np.abs(values / top) ** 2))) * top
+
+
+def _ratio(value: float, size: float) -> float:
+    return value / size if size > 0 else (0.0 if value == 0 else np.inf)
+
+
+def _hidden(part: Misfit, measure: Callable[[NDArray[Any]], float], value: float) -> float | None:
+    """Return what rounding in the evaluation and in the sums can hide."""
+    if part.bound is None:
+        return None
+    return measure(part.bound) + 1e-12 * value
+
+
 def rms_misfit(part: Misfit, limit: float | None = None) -> Claim:
     """Return the root mean square misfit relative to the root mean square response."""
-    H = part.data.response[part.keep]
-    top = float(np.abs(H).max()) or 1.0
-    size = float(np.sqrt(np.sum(np.abs(H / top) ** 2)))
-    error = float(np.sqrt(np.sum(np.abs(part.difference / top) ** 2)))
-    value = error / size if size > 0 else (0.0 if error == 0 else np.inf)
-    return judge("rms-misfit", value, limit=limit, uncertainty=_rounding(value))
+    size = _norm(part.data.response[part.keep])
 
+    def measure(values: NDArray[Any]) -> float:
+        return _ratio(_norm(values), size)
 
-def _rounding(value: float) -> float:
-    """Rounding of the evaluation and the sums: far below any measured misfit, never zero."""
-    return 1e-12 + 1e-9 * value
+    value = measure(part.difference)
+    return judge("rms-misfit", value, limit=limit, uncertainty=_hidden(part, measure, value))
 
 
 def worst_misfit(part: Misfit, limit: float | None = None) -> Claim:
@@ -65,10 +97,15 @@ def worst_misfit(part: Misfit, limit: float | None = None) -> Claim:
     H = np.abs(part.data.response[part.keep])
     peak = H.max(axis=0)
     peak = np.where(peak > 0, peak, H.max() or 1.0)
+
+    def measure(values: NDArray[Any]) -> float:
+        return float((np.abs(values) / peak).max())
+
     relative = np.abs(part.difference) / peak
     index = tuple(int(i) for i in np.unravel_index(int(np.argmax(relative)), relative.shape))
     value = float(relative[index])
-    return judge("worst-misfit", value, limit=limit, uncertainty=_rounding(value), where=_where(part, index))
+    hidden = _hidden(part, measure, value)
+    return judge("worst-misfit", value, limit=limit, uncertainty=hidden, where=_where(part, index))
 
 
 def weighted_misfit(part: Misfit, deviation: Array | None, limit: float | None = None, note: str = "") -> Claim | None:
@@ -79,9 +116,13 @@ def weighted_misfit(part: Misfit, deviation: Array | None, limit: float | None =
     usable = sigma > 0
     if not usable.any():
         return None
-    ratio = np.abs(part.difference[usable]) / sigma[usable]
-    value = float(np.sqrt(np.mean(ratio**2)))
-    return judge("weighted-misfit", value, limit=limit, unit="1", uncertainty=_rounding(value), note=note)
+
+    def measure(values: NDArray[Any]) -> float:
+        with np.errstate(over="ignore"):
+            return _norm(np.abs(values[usable]) / sigma[usable]) / float(np.sqrt(usable.sum()))
+
+    value = measure(part.difference)
+    return judge("weighted-misfit", value, limit=limit, unit="1", uncertainty=_hidden(part, measure, value), note=note)
 
 
 def data_claims(
