@@ -245,13 +245,13 @@ def examine(
     """Return the report of one generated model, of all steps and forms or of a random share of them."""
     started = time.perf_counter()
     tell("generation")
-    name, model, rng = generated(index, seed, family)
-    report = Report(index, name)
+    report = Report(index, family or "")
     try:
+        report.family, model, rng = generated(index, seed, family)
         Examination(report, model, rng, tell, share).all_steps()
     except Exception:
         report.crashed.append(f"the examination itself: {traceback.format_exc(limit=-4)}")
-    if report.crashed or any(finding.false for finding in report.findings):
+    if any(finding.false for finding in report.findings) or (report.crashed and "generated(" not in report.crashed[0]):
         report.model = as_text(model)
     report.seconds = time.perf_counter() - started
     return report
@@ -388,7 +388,9 @@ def main(arguments: list[str] | None = None) -> int:
     parser.add_argument("--first", type=int, default=0, help="index of the first model")
     parser.add_argument("--seed", type=int, default=1)
     parser.add_argument("--family", choices=list(FAMILIES))
-    parser.add_argument("--share", type=float, default=0.4, help="share of the kinds and forms that each model goes through")
+    parser.add_argument(
+        "--share", type=float, default=0.4, help="share of the kinds and forms that each model goes through"
+    )
     parser.add_argument("--processes", type=int, default=2)
     parser.add_argument("--limit", type=float, default=120.0, help="seconds for one model")
     options = parser.parse_args(arguments)
@@ -404,7 +406,9 @@ def main(arguments: list[str] | None = None) -> int:
                 print(text, flush=True)
         if time.perf_counter() - last > 30:
             last = time.perf_counter()
-            print(f"... {tally.models} models, {tally.claims} claims, {last - started:.0f} s", file=sys.stderr, flush=True)
+            print(
+                f"... {tally.models} models, {tally.claims} claims, {last - started:.0f} s", file=sys.stderr, flush=True
+            )
     tally.print()
     print(f"{time.perf_counter() - started:.0f} s in all")
     return 1 if tally.false or tally.faults else 0

@@ -74,6 +74,9 @@ class Judge:
             if spot.damping < 2 * LIGHT:
                 steps = LIGHT * np.array([-1 - 1e-7, -1 + 1e-7, -0.5, 0.5, 1 - 1e-7, 1 + 1e-7])
                 parts += [center * (1 + steps), spot.size * (1 + steps)]
+                if spot.on_axis:
+                    for margin in (EDGE, -EDGE):
+                        parts.append(np.array(self.around_axis([spot], margin)[0]))
         w = np.unique(np.concatenate(parts))
         return w[(w >= 0) & (w <= self.source.top)]
 
@@ -82,15 +85,20 @@ class Judge:
         return lambda w: not any(low < w < high for low, high in spans)
 
     @staticmethod
-    def around_axis(spots: Sequence[Spot]) -> list[tuple[float, float]]:
+    def around_axis(spots: Sequence[Spot], margin: float = EDGE) -> list[tuple[float, float]]:
+        """Return what is left out around poles on the axis: a trifle more for errors, less (-EDGE) for gains."""
         return [
-            (s.natural * (1 - LIGHT) * (1 - EDGE), s.natural * (1 + LIGHT) * (1 + EDGE))
+            (s.natural * (1 - LIGHT) * (1 - margin), s.natural * (1 + LIGHT) * (1 + margin))
             for s in spots
             if s.on_axis and s.natural > 0
         ]
 
     def largest(
-        self, error: Callable[[float], Any], inside: Callable[[float], bool], extra: Sequence[float] = (), turns: int = 14
+        self,
+        error: Callable[[float], Any],
+        inside: Callable[[float], bool],
+        extra: Sequence[float] = (),
+        turns: int = 14,
     ) -> tuple[Any, float | None]:
         """Return the largest value found and where: all frequencies, then golden sections around the highest three."""
         ws = [w for w in np.unique(np.concatenate([self.frequencies, np.array(extra)])).tolist() if inside(w)]
@@ -125,8 +133,18 @@ class Judge:
 
     # truths of the claims about a conversion
 
-    def gain(self, inside: Callable[[float], bool], extra: Sequence[float] = ()) -> Any:
-        return self.largest(lambda w: norm(self.truth.at(w)[1]), inside, extra, turns=40)[0]
+    def gain(self, low: float = 0.0, high: float = math.inf, zero: bool = True, extra: Sequence[float] = ()) -> Any:
+        """Return the largest gain of the source between two frequencies, axis poles left out; found once a source."""
+        key = low, high, zero
+        if key not in self.source.gains:
+            clear = self.outside(self.around_axis(self.source.all_poles, -EDGE))
+            self.source.gains[key] = self.largest(
+                lambda w: norm(self.truth.at(w)[1]),
+                lambda w: clear(w) and (low <= w <= high or (zero and w == 0)),
+                extra,
+                turns=40,
+            )[0]
+        return self.source.gains[key]
 
     def divided(self, zeros: Sequence[Spot], channel: int | None) -> Callable[[float], Any]:
         """Return |dG|/|G|, near light zeros over the larger |G| at the edges of their interval."""
@@ -167,7 +185,7 @@ class Judge:
         for k, (n, _) in enumerate(self.source.flat):
             if n.degree() < 0:
                 if gain is None:
-                    gain = self.gain(self.outside(self.around_axis(self.source.all_poles)), (math.inf,))
+                    gain = self.gain(zero=not self.source.pole_at_origin, extra=(math.inf,))
                 inside = self.within(self.source.band(), False, self.source.all_poles)
                 found, at = self.largest(lambda w, k=k: quotient(norm([self.truth.at(w)[0][k]]), gain), inside)  # type: ignore[misc]
             else:
@@ -188,15 +206,13 @@ class Judge:
         if self.improper:
             low, high = band or (0.1, 10.0)
             inside = self.within(band, not self.source.pole_at_origin, self.source.all_poles)
-            gain = self.gain(
-                lambda w: clear(w) and (low * (1 - EDGE) <= w <= high * (1 + EDGE) or w == 0),
-                [low * (1 - EDGE / 2), high * (1 + EDGE / 2)],
-            )
+            ends = low * (1 - EDGE), high * (1 + EDGE)
+            gain = self.gain(*ends, not self.source.pole_at_origin, ends)
             found, where = self.largest(lambda w: norm(self.truth.at(w)[0]), inside)
             return quotient(found, gain), where
         end = [math.inf] if self.source.period is None else []
         lower = start * (1 - EDGE)
-        gain = self.gain(lambda w: clear(w) and w >= lower, [*end, lower * (1 + EDGE / 2)])
+        gain = self.gain(lower, zero=not self.source.pole_at_origin, extra=[*end, lower])
         # what lies below the band does not count where there is a pole at the origin
         upper = start * (1 + 1e-12)
         found, where = self.largest(lambda w: norm(self.truth.at(w)[0]), lambda w: clear(w) and w >= upper, end)

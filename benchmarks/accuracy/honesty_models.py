@@ -30,14 +30,17 @@ def _pair(w: float, damping: float) -> Roots:
     return [complex(re, im), complex(re, -im)]
 
 
+def _expanded(roots: Roots) -> np.ndarray:
+    return np.atleast_1d(np.real(np.poly(roots)))
+
+
 def _kind(rng: Rng, zeros: Roots, poles: Roots, gain: float, time: TimeBase | None = None) -> Model:
     """Return a plant given by its factors as one of the kinds that can be written from them."""
     common: dict[str, Any] = {} if time is None else {"time": time}
     choice = rng.integers(4)
     if choice == 0:
         with np.errstate(all="ignore"):
-            numerator = gain * np.real(np.poly(zeros)) if zeros else np.array([gain])
-            denominator = np.real(np.poly(poles)) if poles else np.array([1.0])
+            numerator, denominator = gain * _expanded(zeros), _expanded(poles)
         fits = np.all(np.isfinite(numerator)) and np.all(np.isfinite(denominator)) and denominator[0] != 0
         if fits:
             return TransferFunction(numerator=numerator.tolist(), denominator=denominator.tolist(), **common)
@@ -217,8 +220,8 @@ def matrices(rng: Rng) -> Model:
     gain = np.where(dead, 0.0, units * rng.normal(size=(p, m)))
     cut = [[zeros[i][j][: len(chosen[i][j])] if gain[i, j] else [] for j in range(m)] for i in range(p)]
     if rng.random() < 0.4:
-        above = [[(gain[i, j] * np.real(np.poly(cut[i][j]))).reshape(-1).tolist() for j in range(m)] for i in range(p)]
-        below = [[np.real(np.poly(chosen[i][j])).reshape(-1).tolist() for j in range(m)] for i in range(p)]
+        above = [[(gain[i, j] * _expanded(cut[i][j])).tolist() for j in range(m)] for i in range(p)]
+        below = [[_expanded(chosen[i][j]).tolist() for j in range(m)] for i in range(p)]
         return TransferFunction(numerator=above, denominator=below, **common)
     return ZeroPoleGain(zeros=cut, poles=chosen, gain=gain.tolist(), **common)
 

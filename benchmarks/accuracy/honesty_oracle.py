@@ -256,6 +256,8 @@ class Side:
         self.flat = [pair for row in self.grid for pair in row]
         self._balls: dict[tuple[int, int], Any] = {}
         self._kept: list[Any] = []
+        #: Largest gains by range of frequencies, as they were found.
+        self.gains: dict[Any, Any] = {}
 
     @staticmethod
     def _cancelled(n: Poly, d: Poly) -> Pair:
@@ -309,8 +311,8 @@ class Side:
     def stable(self) -> bool:
         """True if every pole is inside; those of a state model include what no channel shows."""
         if isinstance(self.model, StateSpace):
-            return all(spot.inside for spot in _inside_or_not(self.full[0][0][1], self.period))
-        return all(spot.inside for _, d in self.flat for spot in _inside_or_not(d, self.period))
+            return all(spot.inside for spot in spots(self.full[0][0][1], self.period))
+        return all(spot.inside for row in self.poles for spot in row)
 
     def value(self, polynomial: Poly, z: Callable[[], acb], exact: Pair | None) -> acb:
         """Return a ball of at least 60 correct bits around a polynomial at a point; exactly 0 where it vanishes."""
@@ -326,10 +328,6 @@ class Side:
             if precision == 1024 and exact is not None and _at(polynomial, exact) == (0, 0):
                 return acb(0)
         return ball
-
-
-def _inside_or_not(polynomial: Poly, period: fmpq | None) -> list[Spot]:
-    return [spot for spot in spots(polynomial, period) if True]
 
 
 def _at(polynomial: Poly, point: Pair) -> Pair:
@@ -349,9 +347,7 @@ class Truth:
     def __init__(self, source: Side, result: Side) -> None:
         self.source, self.result = source, result
         self.shape = source.p, source.m
-        self.cross = [
-            (n2 * d1 - n1 * d2) for (n1, d1), (n2, d2) in zip(source.flat, result.flat, strict=True)
-        ]
+        self.cross = [(n2 * d1 - n1 * d2) for (n1, d1), (n2, d2) in zip(source.flat, result.flat, strict=True)]
         self._values: dict[float, tuple[list[Any], list[Any]]] = {}
 
     @property
