@@ -184,6 +184,8 @@ def pole_on_axis(view: View) -> float | None:
     minors = minors_in(view)
     if minors.poles.degree() < minors.degree:
         return math.inf if view.period is None else math.pi / view.period
+    if not minors.poles[0]:
+        return 0.0
     even, odd = even_odd(minors.poles)
     common = even.gcd(odd) if odd else even
     if common.degree() < 1:

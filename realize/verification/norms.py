@@ -72,7 +72,9 @@ def _gain_claim(view: View, note: str) -> Claim:
         axis = pole_on_axis(view)
         if axis is not None:
             found = Extreme(math.inf, axis, math.inf)
-            return extreme_claim("largest-gain", found, basis="proved", note="a pole on the axis, or improper")
+            return extreme_claim(
+                "largest-gain", found, basis="proved", note="improper" if axis == math.inf else "a pole on the axis"
+            )
         minors = minors_in(view)
         found = largest_of(gain_squares(minors), view.exact_period, [minors.poles])
         return extreme_claim("largest-gain", found, basis="measured" if note else None, note=note)
@@ -177,7 +179,7 @@ def h2_of_fractions(name: str, fractions: Any, sampled: bool) -> Claim:
         if d.degree() > 0 and inside_left_half_plane(d) < d.degree():
             return judge(name, None, unit="absolute", basis="proved", note="not stable")
     if infinite:
-        note = "a feed-through in continuous time"
+        note = "a feed-through in continuous time, or improper"
         return judge(name, math.inf, unit="absolute", basis="proved", note=note)
     total = fmpq(0)
     for d, numerators in groups.values():

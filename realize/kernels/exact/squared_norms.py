@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 
 from flint import fmpq, fmpq_poly
 
-from realize.kernels.exact.polynomials import ZERO, reduce_fraction
-from realize.kernels.exact.roots import roots
+from realize.kernels.exact.numbers import binary_exponent, power_of_two
+from realize.kernels.exact.polynomials import ZERO, reduce_fraction, stretched
 
 Fraction = tuple[fmpq_poly, fmpq_poly]
 
@@ -84,10 +85,35 @@ def hankel_polynomial(n: fmpq_poly, d: fmpq_poly) -> fmpq_poly:
 
 
 def hankel_norm(n: fmpq_poly, d: fmpq_poly) -> tuple[float, float]:
-    """Return the largest Hankel singular value of a stable n / d, correctly rounded, and a bound of that rounding."""
+    """Return the largest Hankel singular value of a stable n / d, rounded down, and the distance to the next double.
+
+    All roots t of the `hankel_polynomial` are real: they are below g if all coefficients in t - g are positive.
+    Bisection between the root mean square of the roots and its multiple by the root of their number.
+    """
     n, d = reduce_fraction(n, d)
     if d.degree() < 1 or not n % d:
         return 0.0, 0.0
-    found = roots(hankel_polynomial(n, d))
-    value = max(abs(root.value.real) for root in found)
-    return value, value * 2.0**-52
+    p = hankel_polynomial(n, d)
+    degree = p.degree()
+    mirrored = _mirrored(p) * (-1) ** degree
+
+    def all_below(g: float) -> bool:
+        level = fmpq_poly([fmpq(*g.as_integer_ratio()), 1])
+        return all(c > 0 for q in (p, mirrored) for c in q(level).coeffs())
+
+    # in units of a power of two, so that every trial is a double near 1
+    second = p[degree - 2] if degree > 1 else fmpq(0)
+    squares = p[degree - 1] * p[degree - 1] - 2 * second
+    unit = binary_exponent(squares) // 2
+    p, mirrored = (stretched(q, power_of_two(unit)) for q in (p, mirrored))
+    low, high = 0.25 / degree**0.5, 2.5
+    while math.nextafter(low, high) < high:
+        middle = (low + high) / 2
+        if all_below(middle):
+            high = middle
+        else:
+            low = middle
+    try:
+        return math.ldexp(low, unit), math.ldexp(high - low, unit)
+    except OverflowError:
+        return math.inf, 0.0

@@ -21,7 +21,7 @@ from realize.kernels.exact.polynomials import shifted
 from realize.kernels.exact.positivity import Counterexample, examined
 
 #: Relative distances above the largest value found at which a bound is tried, squares of gains.
-STEPS = (2.0**-26, 2.0**-12, 2.0**-8, 0.02, 0.2, 1.0, 4.0)
+STEPS = (2.0**-40, 2.0**-26, 2.0**-12, 2.0**-8, 0.02, 0.2, 1.0, 4.0)
 #: How often a place that exceeds the level starts the search again, and intervals a proof may look at.
 ROUNDS, INTERVALS = 40, 600
 #: First precision (bits) of values, accuracy asked of them, and the precision past which they are taken as they are.
@@ -113,10 +113,10 @@ class Curve:
         values = self._values(x)
         with precision(FIRST_BITS):
             s0, s1 = values[0].mid(), values[1].mid()
+            if not s0 > 0:
+                return None if any(value.mid() > 0 for value in values[1:]) else fmpq(0)
             if not s1 > 0:
                 return fmpq(0)
-            if not s0 > 0:
-                return None
             if len(values) == 2:
                 return exact_value(s1 / s0)
             # t = (S_1 / S_0) u with u between 1/q and 1, from above: Newton's method is monotonic there
@@ -259,6 +259,9 @@ def supremum(curve: Curve, intervals: Sequence[Interval] = ((fmpq(0), None),)) -
     if not any(p for p in curve.squares[1:]):
         return Supremum(fmpq(0), place, fmpq(0))
     if not square:
+        return Supremum(square, place, None)
+    if len(curve.squares) > 2 and any(examined(curve.squares[0], *ends, INTERVALS) is not True for ends in intervals):
+        # a pole between the ends, where two singular values could pass any level at once
         return Supremum(square, place, None)
     step = 0
     for _ in range(ROUNDS):
