@@ -207,48 +207,50 @@ def cascade_states(
     precise : mapping, optional
         What roots stand for to more digits.
     """
-    n = sum(len(section.poles) for section in sections)
-    A, B, C = np.zeros((n, n)), np.zeros((n, 1)), np.zeros((1, n))
     blocks = [_block(section, sampled, circle, precise) for section in sections]
+    n = sum(len(block.column) for block in blocks)
+    A = np.zeros((n, n))
+    start = 0
+    for block in blocks if gain == 0 else ():
+        part = slice(start, start + len(block.column))
+        A[part, part] = block.A
+        start = part.stop
     if gain == 0:
-        start = 0
-        for block in blocks:
-            part = slice(start, start + block.A.shape[0])
-            A[part, part] = block.A
-            start = part.stop
-        return A, B, C, np.zeros((1, 1))
-    if not sections:
-        return A, B, C, np.array([[to_double(gain)]])
-    mantissa, exponent = split(gain)
+        return A, np.zeros((n, 1)), np.zeros((1, n)), np.zeros((1, 1))
+    if not blocks:
+        return A, np.zeros((0, 1)), np.zeros((1, 0)), np.array([[to_double(gain)]])
+    fraction, exponent = split(gain)
+    mantissa = to_double(fraction)
     # blocks whose input column is no power of two come first: their output rows are powers of two
     blocks.sort(key=lambda block: not block.first)
-    exponent -= sum(block.gain_exponent for block in blocks)
-    shares = _spread_exponent(exponent, len(blocks))
-    row = np.zeros((1, n))  # the signal between sections as a function of the states so far
+    shares = _spread_exponent(exponent - sum(block.gain_exponent for block in blocks), len(blocks))
+    B: list[float] = []
+    row: list[float] = []  # the signal between sections as a function of the states so far
     through, entered = 1.0, False
-    start = 0
     for block, share in zip(blocks, shares, strict=True):
         if not entered and not block.first:
             # here the mantissa meets powers of two on both sides: no second rounding, and what cancels still cancels
-            row, through, entered = _scaled(row, to_double(mantissa)), through * to_double(mantissa), True
-        part = slice(start, start + block.A.shape[0])
+            row, through, entered = [_times(x, mantissa) for x in row], _times(through, mantissa), True
+        start = len(row)
+        part = slice(start, start + len(block.column))
         A[part, part] = block.A
-        A[part, :] += _product(block.B, row)
-        B[part, 0] += _scaled(block.B[:, 0], through)
-        row = _scaled(row, block.d, share)
-        row[0, part] = _scaled(block.C[0], 1.0, share)
-        through = float(_scaled(np.array([through]), block.d, share)[0])
-        start = part.stop
+        for k, entry in enumerate(block.column):
+            if entry:
+                A[start + k, :start] = [_times(entry, x) for x in row]
+        B += [_times(entry, through) for entry in block.column]
+        row = [_times(x, 1.0, share) for x in row] if block.d else [0.0] * start
+        row += [_times(x, 1.0, share) for x in block.row]
+        through = _times(through, block.d, share)
     if not entered:
-        row, through = _scaled(row, to_double(mantissa)), through * to_double(mantissa)
-    return A, B, row, np.array([[through]])
+        row, through = [_times(x, mantissa) for x in row], _times(through, mantissa)
+    return A, np.array(B)[:, None], np.array(row)[None, :], np.array([[through]])
 
 
 @dataclass(frozen=True)
 class _Block:
-    A: Array
-    B: Array
-    C: Array
+    A: list[list[float]]
+    column: list[float]
+    row: list[float]
     d: float
     gain_exponent: int
     first: bool = False
@@ -282,18 +284,19 @@ def _block(section: Section, sampled: bool, circle: Collection[complex], precise
     stiffness = Fraction(to_double(d0 / k))
     if sampled and section.poles[0].imag and (section.poles[0] in circle or _on_circle(section.poles[0])):
         # |p| = 1: with t = z - c the denominator is t^2 + d t + c d, whatever d is
-        stiffness = Fraction(to_double(damping * centre / k))
-    A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
+        d0 = damping * centre
+        stiffness = Fraction(to_double(d0 / k))
+    A = [[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]]
     zeros = len(section.zeros)
     b = Fraction(2) ** (e // 2)
     if zeros == 2 and sorted_alike(section.zeros, section.poles):
         # zeros on the poles themselves: nothing is left of the section but two states that no output sees
-        return _Block(A, _doubles([Fraction(0), b]).T, np.zeros((1, 2)), 1.0, 0)
+        return _Block(A, [0.0, to_double(b)], [0.0, 0.0], 1.0, 0)
     if zeros == 2 and exact_zeros and section.zeros[0].imag == 0:
         kept, other = sorted(section.zeros, key=lambda z: z not in (1, -1))
         column = [k * b, (corner - Fraction(other.real)) * b]
         row = [(centre - Fraction(kept.real)) / (k * b), 1 / b]
-        return _Block(A, _doubles(column).T, _doubles(row), 1.0, 0, True)
+        return _Block(A, _doubles(column), _doubles(row), 1.0, 0, True)
     # the numerator is formed against the rounded denominator, so that exact cancellations are exact
     column = [Fraction(0), b]
     if zeros == 2:
@@ -304,13 +307,13 @@ def _block(section: Section, sampled: bool, circle: Collection[complex], precise
             constant -= missed * (Fraction(section.zeros[0].real) - centre)
             k = _tuned(k, d0, constant)
             stiffness = Fraction(to_double(d0 / k))
-            A = np.array([[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]])
+            A = [[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]]
         row = [(constant / k - stiffness) / b, (above[1] - damping) / b]
-        return _Block(A, _doubles(column).T, _doubles(row), 1.0, 0)
+        return _Block(A, _doubles(column), _doubles(row), 1.0, 0)
     rest = Fraction(2) ** (e - e // 2)
     if zeros == 1:
-        return _Block(A, _doubles(column).T, _doubles([above[1] / k * rest, rest]), 0.0, e)
-    return _Block(A, _doubles(column).T, _doubles([rest, Fraction(0)]), 0.0, 2 * e)
+        return _Block(A, _doubles(column), _doubles([above[1] / k * rest, rest]), 0.0, e)
+    return _Block(A, _doubles(column), _doubles([rest, Fraction(0)]), 0.0, 2 * e)
 
 
 #: From this amplification of rounding near a zero the coupling of the two states is tuned.
@@ -341,6 +344,8 @@ def _tuned(k: Fraction, d0: Fraction, n0: Fraction) -> Fraction:
     """
     # in units of n0's and d0's common denominator, with k T/1024 in place of k: whole numbers all along
     unit = math.lcm(d0.denominator, n0.denominator)
+    if max(unit.bit_length(), d0.numerator.bit_length(), n0.numerator.bit_length()) > 400:
+        return k
     D, N = d0.numerator * (unit // d0.denominator), n0.numerator * (unit // n0.denominator)
     target = abs(to_double(n0 - d0)) * 2.0**-53 / 1024
     best, found = 1024, math.inf
@@ -363,7 +368,7 @@ def _first_order(section: Section, exact_zeros: bool) -> _Block:
     size = abs(section.poles[0])
     e = math.frexp(size)[1] if size > 0 else 0
     b = Fraction(2) ** (e // 2)
-    A = np.array([[to_double(pole)]])
+    A = [[to_double(pole)]]
     if section.zeros:
         return _Block(A, _doubles([b]), _doubles([(pole - Fraction(section.zeros[0].real)) / b]), 1.0, 0)
     return _Block(A, _doubles([b]), _doubles([Fraction(2) ** (e - e // 2)]), 0.0, e)
@@ -393,8 +398,8 @@ def _on_circle(pole: complex) -> bool:
     return re * re + im * im == 1
 
 
-def _doubles(values: list[Fraction]) -> Array:
-    return np.array([[to_double(value) for value in values]])
+def _doubles(values: list[Fraction]) -> list[float]:
+    return [to_double(value) for value in values]
 
 
 def _spread_exponent(exponent: int, count: int) -> list[int]:
@@ -423,22 +428,15 @@ def to_double(value: Fraction) -> float:
 _NORMAL = 2.0**-1022
 
 
-def _product(column: Array, row: Array) -> Array:
-    """Return the product of a column and a row, exact by construction; raises `BeyondDoubles` past the range."""
-    with np.errstate(over="ignore", under="ignore"):
-        result = column @ row
-    return _inside(result, (column != 0) @ (row != 0))
-
-
-def _scaled(values: Array, factor: float, exponent: int = 0) -> Array:
-    """Return values * factor * 2^exponent; raises `BeyondDoubles` past the range."""
-    with np.errstate(over="ignore", under="ignore"):
-        result = np.ldexp(values * factor, exponent)
-    return _inside(result, (values != 0) & (factor != 0))
-
-
-def _inside(result: Array, present: NDArray[np.bool_]) -> Array:
-    if not np.all(np.isfinite(result)) or np.any((np.abs(result) < _NORMAL) & present):
+def _times(value: float, factor: float, exponent: int = 0) -> float:
+    """Return value * factor * 2^exponent, exact by construction; raises `BeyondDoubles` past the range."""
+    if value == 0 or factor == 0:
+        return 0.0
+    try:
+        result = math.ldexp(value * factor, exponent) if exponent else value * factor
+    except OverflowError:
+        raise BeyondDoubles from None
+    if not _NORMAL <= abs(result) < math.inf:
         raise BeyondDoubles
     return result
 

@@ -153,7 +153,7 @@ def _total(claim: Claim) -> float:
 
 def peak_gain(pair: Pair) -> tuple[float, float]:
     """Return the largest Frobenius gain of the source found, and its frequency; the limit at infinity counts."""
-    band = whole_band(pair.source, other=pair.result)
+    band = pair.band
     w, _, size = pair.grid
     inside = band.contains(w)
     gain, where = largest(
@@ -200,7 +200,7 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     gain, _ = peak_gain(pair)
     end_difference, end_gain = at_infinity(pair)
     improper = not np.isfinite(end_gain)
-    band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source, other=pair.result)
+    band = whole_band(pair.source, 1.0) if improper else pair.band
     if improper:
         gain, _ = largest(lambda x: frobenius(pair.sizes(x)[1]), seeds(band, pair.source.poles), band)
     value, where = largest_error(pair, band, [], None, 1.0)

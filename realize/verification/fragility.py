@@ -46,6 +46,25 @@ def fragility(model: Model, frequency: Array) -> float | None:
     return float(value.max()) if value.size else None
 
 
+#: Coefficients and powers of frequency within these exponents of two need no scaling.
+_PLAIN = 400
+
+
+def _plain_growth(coefficients: Array, points: ComplexArray) -> Array | None:
+    """Return sum |c_k s^k| / |p(s)| by Horner's rule, or None where something could leave the range of doubles."""
+    present = np.abs(coefficients[coefficients != 0])
+    if present.size == 0 or not np.all(np.isfinite(coefficients)):
+        return None
+    sizes = np.abs(points)
+    reach = max(abs(np.log2(sizes.max(initial=1e-300))), abs(np.log2(max(sizes.min(initial=1.0), 1e-300))))
+    if reach * coefficients.size + max(abs(np.log2(present.max())), abs(np.log2(present.min()))) > _PLAIN:
+        return None
+    value, total = np.zeros(points.size, dtype=complex), np.zeros(points.size)
+    for c in coefficients.tolist():
+        value, total = value * points + c, total * sizes + abs(c)
+    return total / np.abs(value)
+
+
 def _growth(mantissa: Array, exponent: NDArray[np.int64], points: ComplexArray) -> Array:
     """Return sum |c_k s^k| / |p(s)|."""
     bound = scaled_polynomial((mantissa, exponent), points)[2]
@@ -61,6 +80,10 @@ def _relative(model: Model, points: ComplexArray) -> Array:
     p, m = model.shape
     if isinstance(model, StateSpace):
         return _states(model, points)
+    if isinstance(model, TransferFunction) and model.shape == (1, 1) and not model.decimals:
+        parts = [_plain_growth(line[0][0], points) for line in (model.numerator, model.denominator)]
+        if parts[0] is not None and parts[1] is not None:
+            return _U * (parts[0] + parts[1])
     if isinstance(model, Sections):
         total = np.full(points.size, 1.0)
         for section in model.sections:

@@ -4,14 +4,14 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.quick import Moduli
-from realize.verification.search import seeds
+from realize.verification.search import Band, seeds
 from realize.verification.views import View
 
 Array = NDArray[np.float64]
@@ -21,6 +21,17 @@ Array = NDArray[np.float64]
 _LOW = 1e-280
 #: Quick values with a larger bound on their relative error are replaced by exact ones.
 _DOUBTFUL = 0.01
+
+
+class _Rows(NamedTuple):
+    """Rows of the moduli of each channel's M, N1, D1, D2, which channels are zero, and the rows that must be good."""
+
+    M: NDArray[np.int64]
+    n1: NDArray[np.int64]
+    d1: NDArray[np.int64]
+    d2: NDArray[np.int64]
+    zero: NDArray[np.bool_]
+    always: NDArray[np.int64]
 
 
 @dataclass(frozen=True)
@@ -55,7 +66,7 @@ class Pair:
             degree += sum(distinct.values())
         return 2 * degree <= LARGEST_DEGREE
 
-    @property
+    @cached_property
     def exact(self) -> bool:
         """True where both are compared in exact arithmetic."""
         return self.source.fractions is not None and self.result.fractions is not None
@@ -126,11 +137,18 @@ class Pair:
         return np.abs(first - second), np.abs(first)
 
     @cached_property
+    def band(self) -> Band:
+        """The dynamics of both models and two decades beyond."""
+        from realize.verification.bands import whole_band
+
+        return whole_band(self.source, other=self.result)
+
+    @cached_property
     def grid(self) -> tuple[Array, Array, Array]:
         """Frequencies over the dynamics of both models and beyond, with `quick_sizes` there; one for all claims."""
-        from realize.verification.bands import all_bands, channel_zeros, whole_band
+        from realize.verification.bands import all_bands, channel_zeros
 
-        band = whole_band(self.source, other=self.result)
+        band = self.band
         edges = [edge for part in all_bands(self.source) for edge in part.edges]
         w = seeds(band, self.source.poles, self.result.rough_poles, *channel_zeros(self.source))
         w = np.unique(np.concatenate([w, np.array(edges), np.zeros(1)]))
@@ -151,7 +169,7 @@ class Pair:
         return self._proofs[key]
 
     @cached_property
-    def _quick(self) -> tuple[Moduli, list[list[tuple[int, int, int, int]]]]:
+    def _quick(self) -> tuple[Moduli, _Rows]:
         """Moduli of M, N1, D1, D2 of each channel, and the rows where they stand."""
         from realize.kernels.exact.polynomials import bilinear_image
 
@@ -170,13 +188,13 @@ class Pair:
         first, second = self.scaled
         degree = max(p.degree() for grid in (first, second) for line in grid for pair in line for p in pair)
         degree = max(degree, 0)
-        table = [
-            [
-                (row(n2 * d1 - n1 * d2, 2 * degree), row(n1, degree), row(d1, degree), row(d2, degree))
-                for (n1, d1), (n2, d2) in zip(one, two, strict=True)
-            ]
+        listed = [
+            (row(n2 * d1 - n1 * d2, 2 * degree), row(n1, degree), row(d1, degree), row(d2, degree), n1.degree() < 0)
             for one, two in zip(first, second, strict=True)
+            for (n1, d1), (n2, d2) in zip(one, two, strict=True)
         ]
+        M, n1s, d1s, d2s, zero = (np.array(column) for column in zip(*listed, strict=True))
+        table = _Rows(M, n1s, d1s, d2s, zero, np.unique(np.concatenate([M, d1s, d2s])))
         unit = 1.0 if self.source.period is not None else float(2.0 ** np.rint(np.log2(float(self._unit))))
         return Moduli(images, unit), table
 
@@ -189,18 +207,14 @@ class Pair:
         with np.errstate(over="ignore", invalid="ignore"):
             x = w / moduli.unit if self.source.period is None else np.abs(np.tan(w * self.source.period / 2))
         logarithm, bound = moduli(x)
-        difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
-        doubtful = ~np.isfinite(x)
         with np.errstate(over="ignore", under="ignore", invalid="ignore"):
-            for i in range(p):
-                for j in range(m):
-                    M, n1, d1, d2 = table[i][j]
-                    difference[:, i, j] = np.exp2(logarithm[M] - logarithm[d1] - logarithm[d2])
-                    size[:, i, j] = np.exp2(logarithm[n1] - logarithm[d1])
-                    zero = self.scaled[0][i][j][0].degree() < 0
-                    for k in (M, d1, d2) if zero else (M, n1, d1, d2):
-                        doubtful |= bound[k] > _DOUBTFUL
-                    doubtful |= ~np.isfinite(difference[:, i, j] + size[:, i, j]) | (size[:, i, j] < _LOW) & (not zero)
+            above = np.exp2(logarithm[table.M] - logarithm[table.d1] - logarithm[table.d2])
+            below = np.exp2(logarithm[table.n1] - logarithm[table.d1])
+            total = above + below
+        poor = bound > _DOUBTFUL
+        doubtful = ~np.isfinite(x) | poor[table.always].any(axis=0) | ~np.isfinite(total).all(axis=0)
+        doubtful |= (poor[table.n1] | (below < _LOW))[~table.zero].any(axis=0)
+        difference, size = above.T.reshape(w.size, p, m), below.T.reshape(w.size, p, m)
         if doubtful.any():
             difference[doubtful], size[doubtful] = self.sizes(w[doubtful])
         return difference, size
