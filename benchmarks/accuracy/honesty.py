@@ -34,10 +34,10 @@ import msgspec
 import numpy as np
 from honesty_claims import SLACK, Finding, Judge, held, misfits
 from honesty_models import FAMILIES, generated
-from honesty_oracle import INFINITE, Side
+from honesty_oracle import Side
 
 from realize.errors import RealizeError
-from realize.models import DeadTime, FrequencyResponse, Model, StateSpace
+from realize.models import DeadTime, FrequencyResponse, Model
 from realize.schema import FORMS, PARAMETRIC_KINDS, Claim
 from realize.steps import compare, convert, fit, reduce
 
@@ -124,7 +124,22 @@ class Examination:
                 self.report.findings.append(finding)
         self.report.truth_seconds += time.perf_counter() - started
 
+    def one_step(self) -> None:
+        """One conversion, reduction, comparison or fit, taken at random."""
+        chosen = int(self.rng.integers(6))
+        if chosen < 3:
+            self.conversions(self.model, "convert", 0.0)
+        elif chosen == 3:
+            self.decimals(self.model)
+        elif chosen == 4 or self.model.shape != (1, 1):
+            self.reductions(self.model)
+        else:
+            self.fitted(self.model)
+
     def all_steps(self) -> None:
+        if self.share == 0:
+            self.one_step()
+            return
         model, rng = self.model, self.rng
         results = self.conversions(model, "convert", self.share)
         if results:
@@ -219,7 +234,7 @@ class Examination:
             time=model.time,
             dead_time=dead,
         )
-        order: Any = "auto" if self.rng.random() < 0.3 else int(np.clip(model.order or 1, 1, 10))
+        order: Any = "auto" if self.rng.random() < 0.3 and self.share else int(np.clip(model.order or 1, 1, 10))
         to = str(self.rng.choice(["state-space", "pole-residue", "zero-pole-gain", "transfer-function"]))
         made = self.attempt("fit", lambda: fit(data, to=to, order=order))
         if made is None:

@@ -164,6 +164,10 @@ class Judge:
 
         return error
 
+    def absolute(self, k: int, gain: Any) -> Callable[[float], Any]:
+        """Return |dG| of one channel over a gain."""
+        return lambda w: quotient(norm([self.truth.at(w)[0][k]]), gain)
+
     def within(self, band: tuple[float, float] | None, zero: bool, poles: Sequence[Spot]) -> Callable[[float], bool]:
         low, high = band or (1.0, 1.0)
         clear = self.outside(self.around_axis(poles))
@@ -187,7 +191,7 @@ class Judge:
                 if gain is None:
                     gain = self.gain(zero=not self.source.pole_at_origin, extra=(math.inf,))
                 inside = self.within(self.source.band(), False, self.source.all_poles)
-                found, at = self.largest(lambda w, k=k: quotient(norm([self.truth.at(w)[0][k]]), gain), inside)  # type: ignore[misc]
+                found, at = self.largest(self.absolute(k, gain), inside)
             else:
                 inside = self.within(self.source.band(k), self.finite_at_zero(k), self.source.poles[k])
                 found, at = self.largest(self.divided(self.source.zeros[k], k), inside)

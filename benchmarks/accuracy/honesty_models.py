@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from fractions import Fraction
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -84,7 +85,7 @@ def modes(rng: Rng) -> Model:
     count = int(rng.integers(1, 6))
     w = np.sort(10.0 ** rng.uniform(0, 3, count)).tolist()
     poles = [z for f in w for z in _pair(f, _size(rng, -9, -1.5))]
-    zeros = [z for a, b in zip(w, w[1:], strict=False) for z in _pair((a * b) ** 0.5, _size(rng, -9, -1.5))]
+    zeros = [z for a, b in pairwise(w) for z in _pair((a * b) ** 0.5, _size(rng, -9, -1.5))]
     return _kind(rng, zeros, poles, _size(rng, -2, 6))
 
 
@@ -312,7 +313,7 @@ FAMILIES: dict[str, Callable[[Rng], Model]] = {
 
 
 def generated(index: int, seed: int, family: str | None = None) -> tuple[str, Model, Rng]:
-    """Return the family, the model, and the generator for what is done with it; the same for the same index and seed."""
+    """Return the family, the model, and the generator for what is done with it; index and seed decide all."""
     names = list(FAMILIES)
     name = family or names[index % len(names)]
     rng = np.random.default_rng([seed, index, names.index(name)])
