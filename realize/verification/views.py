@@ -164,8 +164,16 @@ class View:
         distinct = roots(polynomial)
         flags = [root.on_axis for root in distinct] if self.period is None else unit_circle(polynomial, distinct)
         counts = [root.multiplicity for root in distinct]
-        values = np.repeat(np.array([root.value for root in distinct], dtype=complex), counts)
-        return dynamics_of(values, np.repeat(np.array(flags, dtype=bool), counts), self.period)
+        axis = np.repeat(np.array(flags, dtype=bool), counts)
+        if self.period is None:
+            return dynamics_of(
+                np.repeat(np.array([root.value for root in distinct], dtype=complex), counts), axis, None
+            )
+        # a root at z = 0 has no continuous equivalent
+        keep = np.repeat(np.array([root.value != 0 for root in distinct], dtype=bool), counts)
+        s = np.repeat(np.array([_logarithm(root) if root.value else 0j for root in distinct], dtype=complex), counts)
+        s = s[keep] / self.period
+        return Dynamics(np.where(axis[keep], 1j * s.imag, s), axis[keep])
 
     @cached_property
     def poles(self) -> Dynamics:
@@ -232,6 +240,21 @@ class View:
 
         period = self.model.time.exact_period
         return fraction((period.numerator, period.denominator))
+
+
+def _logarithm(root: Any) -> complex:
+    """Return ln z of an exact root other than 0 to full relative accuracy, however near to 1 it is."""
+    from realize.kernels.exact.numbers import precision
+
+    if root.exact is not None and root.exact == 1:
+        return 0j
+    bits = 128
+    while True:
+        with precision(bits + 32):
+            logarithm = root.at(bits).log()
+        if logarithm.rel_accuracy_bits() >= 53 or bits > 1 << 14:
+            return complex(float(logarithm.real), float(logarithm.imag))
+        bits *= 2
 
 
 def predicted_cost(model: Model) -> float:
