@@ -26,7 +26,7 @@ if TYPE_CHECKING:
         ZeroPoleGain,
     )
     from realize.schema import Claim, Receipt
-    from realize.steps import Conversion, compare, convert, explain, fit, inspect, reduce
+    from realize.steps import Conversion, compare, convert, explain, fit, history, inspect, reduce
     from realize.verification.feedback import gap_distance, stability_margin
     from realize.verification.margins import LoopMargins, loop_margins
     from realize.verification.norms import h2_norm, hankel_norm, largest_gain
@@ -47,7 +47,7 @@ _HOMES = {
         "ZeroPoleGain",
     ),
     "realize.schema": ("Claim", "Receipt"),
-    "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "inspect", "reduce"),
+    "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "reduce"),
     "realize.verification.feedback": ("gap_distance", "stability_margin"),
     "realize.verification.margins": ("LoopMargins", "loop_margins"),
     "realize.verification.norms": ("h2_norm", "hankel_norm", "largest_gain"),

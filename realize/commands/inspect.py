@@ -3,17 +3,19 @@
 from __future__ import annotations
 
 from realize.commands.common import Context, load, print_record, write_log
-from realize.steps import inspect
+from realize.steps import history, inspect
 
 
-def execute(context: Context, model: str, columns: list[str] | None) -> int:
-    """Say what a model or data file holds."""
-    record = inspect(load(model, columns))
+def execute(context: Context, model: str, columns: list[str] | None, **options: bool) -> int:
+    """Say what a model or data file holds, or how it came about."""
+    source = load(model, columns)
+    history_only = options["history"]
+    record = history(source) if history_only else inspect(source)
     write_log(context, record)
     if context.json:
         print_record(record)
     else:
-        from realize.reports.tables import inspect_table
+        from realize.reports.tables import history_table, inspect_table
 
-        print(inspect_table(record))
+        print(history_table(record) if history_only else inspect_table(record))
     return 0

@@ -381,3 +381,49 @@ _CANDIDATE = (
     ("bound", "error bound", 3),
     ("criterion", "criterion", 6),
 )
+
+
+def history_table(record: Mapping[str, Any], *, page: Page = PLAIN) -> str:
+    """Return the record of ``inspect --history`` as text: one line a step, and whether the chain is whole."""
+    rows = []
+    for number, one in enumerate(record["history"], start=1):
+        error, total = one.get("error"), one.get("accumulated_error")
+        if not one.get("measure"):
+            words_for = "measured anew" if one["step"] in ("fit", "sample") else "-"
+        else:
+            words_for = "not bounded" if error is None else short(error)
+        rows.append(
+            [
+                str(number),
+                clean(one["step"]),
+                _place(one["source"]),
+                _place(one["result"]),
+                words_for,
+                "not bounded" if total is None else short(total),
+                ", ".join(one["failed"]) or "-",
+            ]
+        )
+    columns = [
+        ("", "right"),
+        ("step", "left"),
+        ("from", "left"),
+        ("to", "left"),
+        ("error", "right"),
+        ("so far", "right"),
+        ("failed claims", "left"),
+    ]
+    if not any(one["failed"] for one in record["history"]):
+        columns, rows = columns[:-1], [row[:-1] for row in rows]
+    nothing = "no receipts: nothing is known of how this model came about"
+    parts: list[Any] = [grid(columns, rows) if rows else words(nothing)]
+    edited = record.get("edited") or []
+    if edited:
+        parts += _cautions([f"Changed by other means {place}: the digests do not fit." for place in edited])
+    elif rows:
+        parts.append(words("Every digest fits: nothing was changed between the steps."))
+    return laid_out(parts, page)
+
+
+def _place(mark: Mapping[str, Any]) -> str:
+    order = "" if mark.get("order") is None else f", {mark['order']}"
+    return f"{clean(mark['kind'])}{order}"

@@ -111,7 +111,14 @@ VERBS: dict[str, Verb] = {
                 Option("method", "choice", "method", REDUCTION_METHODS, "auto"),
             ),
         ),
-        Verb("inspect", "Say what the plant is and what is wrong with it.", ("MODEL",), (COLUMNS,), False, False),
+        Verb(
+            "inspect",
+            "Say what the plant is and what is wrong with it.",
+            ("MODEL",),
+            (Option("history", "flag", "show the steps that led to this model instead"), COLUMNS),
+            False,
+            False,
+        ),
         Verb(
             "compare",
             "Measure the discrepancy between models, or between models and data.",

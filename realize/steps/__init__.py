@@ -16,16 +16,18 @@ if TYPE_CHECKING:
     from realize.steps.compare import compare
     from realize.steps.convert import convert, explain
     from realize.steps.fit import fit
+    from realize.steps.history import history
     from realize.steps.inspect import inspect
     from realize.steps.reduce import reduce
 
-__all__ = ["Conversion", "compare", "convert", "explain", "fit", "inspect", "model_of", "reduce"]
+__all__ = ["Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "model_of", "reduce"]
 
 _HOME_OF = {
     "compare": "compare",
     "convert": "convert",
     "explain": "convert",
     "fit": "fit",
+    "history": "history",
     "inspect": "inspect",
     "reduce": "reduce",
 }
