@@ -6,6 +6,9 @@ import json
 import math
 import os
 import sys
+import time
+from collections.abc import Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -119,3 +122,24 @@ def deliver(context: Context, conversion: Conversion, *more: str) -> int:
         say(f"realize: {what}; {where}")
         return 4
     return 0
+
+
+@contextmanager
+def showing_proofs(wanted: bool) -> Iterator[None]:
+    """Inside, the progress of proofs that take long appears on standard error, at most once in two seconds."""
+    if not wanted:
+        yield
+        return
+    from realize.verification.views import telling
+
+    started = last = time.monotonic()
+
+    def show(text: str) -> None:
+        nonlocal last
+        now = time.monotonic()
+        if now - last >= 2:
+            last = now
+            say(f"proving for {now - started:.0f} s: {text}")
+
+    with telling(show):
+        yield

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from realize.commands.common import Context, deliver, load, print_record, write_log
+from realize.commands.common import Context, deliver, load, print_record, showing_proofs, write_log
 from realize.errors import UsageError
 from realize.steps import convert, explain
 
@@ -17,6 +17,7 @@ def execute(
     common_denominator: bool,
     digits: int | None,
     arithmetic: str,
+    certify: bool,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
@@ -34,14 +35,16 @@ def execute(
         else:
             print("\n".join(lines))
         return 0
-    conversion = convert(
-        source,
-        to,
-        form=form,
-        common_denominator=common_denominator,
-        digits=digits,
-        arithmetic=arithmetic,
-        limits=context.limits,
-        second_opinion=context.second_opinion,
-    )
+    with showing_proofs(certify):
+        conversion = convert(
+            source,
+            to,
+            form=form,
+            common_denominator=common_denominator,
+            digits=digits,
+            arithmetic=arithmetic,
+            certify=certify,
+            limits=context.limits,
+            second_opinion=context.second_opinion,
+        )
     return deliver(context, conversion)

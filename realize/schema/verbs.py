@@ -53,6 +53,7 @@ class Verb:
 
 TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS, metavar="KIND")
 BAND = Option("band", "band", "use only these frequencies (120Hz, 2.4kHz, plain numbers are rad/s)", metavar="LOW,HIGH")
+CERTIFY = Option("certify", "flag", "prove the claims whatever it costs; progress is shown, Ctrl-C ends it")
 COLUMNS = Option(
     "columns",
     "columns",
@@ -97,6 +98,7 @@ VERBS: dict[str, Verb] = {
                     "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"
                 ),
                 ARITHMETIC,
+                CERTIFY,
                 Option("explain", "flag", "print the route and why, and stop"),
             ),
         ),
@@ -108,6 +110,7 @@ VERBS: dict[str, Verb] = {
                 Option("order", "integer", "number of states of the result", metavar="N"),
                 Option("error", "error", "largest error, relative to the largest gain (0.01 or 1%)", metavar="X"),
                 Option("absolute-error", "number", "largest error, in the units of the response", metavar="X"),
+                CERTIFY,
                 Option("method", "choice", "method", REDUCTION_METHODS, "auto"),
             ),
         ),
@@ -123,7 +126,7 @@ VERBS: dict[str, Verb] = {
             "compare",
             "Measure the discrepancy between models, or between models and data.",
             ("A", "B..."),
-            (BAND, COLUMNS),
+            (CERTIFY, BAND, COLUMNS),
             False,
             False,
         ),

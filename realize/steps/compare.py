@@ -19,6 +19,7 @@ from realize.verification.conversion import channel_error, dead_time_difference,
 from realize.verification.difference import h2_error, linf_error
 from realize.verification.feedback import gap_claim
 from realize.verification.misfit import data_claims
+from realize.verification.views import whatever_it_costs
 
 
 @refusing_singular()
@@ -26,6 +27,7 @@ def compare(
     reference: Model | Conversion,
     *others: Model | Conversion,
     band: tuple[float, float] | None = None,
+    certify: bool = False,
     names: Sequence[str] = (),
 ) -> dict[str, Any]:
     """Measure the discrepancy of models from the first one.
@@ -37,6 +39,8 @@ def compare(
     band : (low, high), optional
         Frequencies that count, rad/s: of data, the lines inside; of two parametric models, the claims are then measured
         over this band instead of those of their definitions.
+    certify : bool
+        Prove the claims whatever it costs.
     names : sequence of str, optional
         What to call them.
 
@@ -50,7 +54,10 @@ def compare(
         raise InputError("one model", "at least two models or data sets to compare")
     models = [model_of(reference), *(model_of(other) for other in others)]
     labels = list(names) or [f"model {k}" for k in range(len(models))]
-    rows = [_one(models[0], other, band, labels[0], label) for other, label in zip(models[1:], labels[1:], strict=True)]
+    with whatever_it_costs(certify):
+        rows = [
+            _one(models[0], other, band, labels[0], label) for other, label in zip(models[1:], labels[1:], strict=True)
+        ]
     return rows[0] | {"comparisons": rows}
 
 

@@ -72,6 +72,7 @@ def convert(
     common_denominator: bool = False,
     digits: int | None = None,
     arithmetic: str = "auto",
+    certify: bool = False,
     limits: dict[str, float] | None = None,
     second_opinion: bool = False,
 ) -> Conversion:
@@ -93,6 +94,8 @@ def convert(
     arithmetic : str
         "auto": exact where few enough operations are predicted; "exact": whatever it costs, claims too; "double":
         doubles alone make the result, and the claims say what that cost.
+    certify : bool
+        Prove the claims whatever it costs.
     limits : dict, optional
         Limits by claim name, instead of the defaults.
     second_opinion : bool
@@ -110,7 +113,8 @@ def convert(
     source = model_of(model)
     task = _task(source, to, form, common_denominator, digits, arithmetic)
     choice = choose_arithmetic(task)
-    with whatever_it_costs(arithmetic == "exact"), asking("convert", source, {"to": to}, second_opinion) as opinion:
+    lifted = certify or arithmetic == "exact"
+    with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:
         route = plan_route(task)
         result = convert_model(task, route)
         shape = _form_of(task, route)

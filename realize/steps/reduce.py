@@ -16,6 +16,7 @@ from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
 from realize.verification.reduction import reduction_claims
 from realize.verification.stability import order_claim, stability_claim
+from realize.verification.views import whatever_it_costs
 
 #: An E with a larger condition number is not divided out.
 HARMLESS_E = 1e8
@@ -66,6 +67,7 @@ def reduce(
     error: float | None = None,
     absolute_error: float | None = None,
     method: str = "auto",
+    certify: bool = False,
     limits: dict[str, float] | None = None,
     second_opinion: bool = False,
 ) -> Conversion:
@@ -84,6 +86,8 @@ def reduce(
         smallest order whose bound keeps it is taken.
     method : str
         "balanced-truncation" or "auto".
+    certify : bool
+        Prove the claims whatever it costs.
     limits : dict, optional
         Limits by claim name.
     second_opinion : bool
@@ -119,7 +123,7 @@ def reduce(
         method=method,
     )
     result = StateSpace(A=found.A, B=found.B, C=found.C, D=found.D, **source.common())
-    with asking("reduce", plain, {"order": found.order}, second_opinion) as opinion:
+    with whatever_it_costs(certify), asking("reduce", plain, {"order": found.order}, second_opinion) as opinion:
         limit = absolute_error
         if error is not None and found.largest_gain is not None:
             limit = error * found.largest_gain

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.quick import Moduli
 from realize.verification.search import Band, seeds
-from realize.verification.views import View
+from realize.verification.views import View, budget_lifted
 
 Array = NDArray[np.float64]
 
@@ -64,7 +64,7 @@ class Pair:
                 if d.degree() > 0:
                     distinct[str(d) if len(flat) > 1 else ""] = d.degree()
             degree += sum(distinct.values())
-        return 2 * degree <= LARGEST_DEGREE
+        return 2 * degree <= LARGEST_DEGREE or budget_lifted()
 
     @cached_property
     def exact(self) -> bool:

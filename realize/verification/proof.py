@@ -15,6 +15,8 @@ from collections.abc import Sequence
 from functools import cached_property
 from typing import Any
 
+from realize.verification.views import tell
+
 Grid = list[list[Any]]
 
 #: Factors by which the value found is raised until the inequality is proved.
@@ -221,6 +223,7 @@ class Proof:
         for factor in STEPS:
             error = math.nextafter(start * factor, math.inf)
             while position < len(intervals):
+                tell(f"degree {self.size // 2}: interval {position + 1} of {len(intervals)}, bound {error:.3g}")
                 if not self.within(error, *intervals[position]):
                     break
                 position += 1

@@ -8,7 +8,7 @@ point drawn from 2^61 with probability at most 2n/2^61 (Schwartz 1980; Zippel 19
 from __future__ import annotations
 
 import random
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from contextvars import ContextVar
 from dataclasses import dataclass
@@ -50,6 +50,32 @@ def whatever_it_costs(lifted: bool = True) -> Iterator[None]:
         yield
     finally:
         _allowed.reset(token)
+
+
+def budget_lifted() -> bool:
+    """True inside `whatever_it_costs`: proofs of any degree are tried too."""
+    return _allowed.get() == np.inf
+
+
+#: Called with words while long proofs go on.
+_listener: ContextVar[Callable[[str], None] | None] = ContextVar("listener", default=None)
+
+
+@contextmanager
+def telling(listener: Callable[[str], None] | None) -> Iterator[None]:
+    """Inside, the progress of proofs is told to a listener."""
+    token = _listener.set(listener)
+    try:
+        yield
+    finally:
+        _listener.reset(token)
+
+
+def tell(text: str) -> None:
+    """Say how far a proof is."""
+    listener = _listener.get()
+    if listener is not None:
+        listener(text)
 
 
 def view_of(model: Model) -> View:
