@@ -252,7 +252,7 @@ def h2_error(first: Model, second: Model) -> Claim | None:
     sampled = pair.source.period is not None
     if pair.exact:
         cross: Any = _cross(pair)
-        if max(max(n.degree(), d.degree()) for row in cross for n, d in row) <= 2 * H2_ORDER:
+        if max(max(n.degree(), d.degree()) for row in cross for n, d in row) <= H2_ORDER:
             factor = pair.exponent
             from realize.kernels.exact.numbers import power_of_two
 

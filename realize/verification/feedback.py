@@ -105,19 +105,12 @@ def _angles(one: View, two: View, *, controller: bool = False) -> Any:
 
 
 def _exact_gap(found: Any, period: Any, one: View, two: View) -> Claim:
-    from realize.kernels.exact.roots import inside_left_half_plane
-
     n1, n2 = found.degrees
     sines = found.sines
     if not any(sines[1:]):
         return judge("nu-gap", 0.0, basis="proved", uncertainty=0.0, where={"frequency": 0.0}, note=UNITS)
     closed = found.closed
-    # roots on the axis count as none on the left, and are none on the right
-    if (
-        closed.degree() != n1 + n2
-        or (n1 and inside_left_half_plane(closed) != n1)
-        or (n2 and inside_left_half_plane(_mirrored(closed)) != n2)
-    ):
+    if closed.degree() != n1 + n2 or _half_planes(closed) != (n1, n2):
         note = f"the winding number differs from that of equal plants; {UNITS}"
         return judge("nu-gap", 1.0, basis="proved", uncertainty=0.0, note=note)
     peak = largest_of(sines, period, [minors_in(one).poles, minors_in(two).poles])
@@ -126,10 +119,21 @@ def _exact_gap(found: Any, period: Any, one: View, two: View) -> Claim:
     return extreme_claim("nu-gap", Extreme(value, peak.frequency, bound), unit="relative", note=UNITS)
 
 
-def _mirrored(p: Any) -> Any:
-    from flint import fmpq_poly
+def _half_planes(p: Any) -> tuple[int, int]:
+    """Return how many roots are left and right of the axis, exactly."""
+    from realize.kernels.exact.roots import roots
 
-    return fmpq_poly([-c if k % 2 else c for k, c in enumerate(p.coeffs())])
+    if p.degree() < 1:
+        return 0, 0
+    left, right = 0, 0
+    for root in roots(p):
+        bits, ball = 128, root.ball
+        while not root.on_axis and not ball.real < 0 and not ball.real > 0:
+            bits *= 2
+            ball = root.at(bits)
+        if not root.on_axis:
+            left, right = (left + root.multiplicity, right) if ball.real < 0 else (left, right + root.multiplicity)
+    return left, right
 
 
 def chordal_distance(first: np.ndarray, second: np.ndarray) -> np.ndarray:
@@ -244,10 +248,8 @@ def _loop_of(P: Model, K: Model) -> None:
 
 def loop_is_stable(found: Any) -> bool:
     """Return whether the closed loop has all its roots inside, exactly: well-posed and internally stable."""
-    from realize.kernels.exact.roots import inside_left_half_plane
-
     degree = sum(found.degrees)
-    return found.closed.degree() == degree and (degree == 0 or inside_left_half_plane(found.closed) == degree)
+    return found.closed.degree() == degree and _half_planes(found.closed) == (degree, 0)
 
 
 __all__ = ["chordal_distance", "gap_claim", "gap_distance", "loop_is_stable", "stability_margin"]

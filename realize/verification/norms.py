@@ -23,11 +23,10 @@ from realize.verification.curves import (
     pole_on_axis,
     sampled_peak,
 )
-from realize.verification.proof import square_root
 from realize.verification.views import View, view_of
 
-#: Largest order whose H2 norm, and whose Hankel norm, is computed in exact rationals.
-H2_ORDER, HANKEL_ORDER = 60, 40
+#: Largest degree whose H2 norm, and whose Hankel norm, is proved.
+H2_ORDER, HANKEL_ORDER = 200, 40
 TOLERANCE = 1e-9
 
 
@@ -111,7 +110,7 @@ def h2_norm(model: Any) -> Claim:
     Returns
     -------
     Claim
-        ``h2-norm``, absolute; proved up to order 60 (exact rational arithmetic), measured beyond.
+        ``h2-norm``, absolute; proved up to order 200 (ball arithmetic), measured beyond.
     """
     model = model_in(model)
     return h2_claim("h2-norm", view_of(model))
@@ -149,11 +148,11 @@ def h2_of_states(name: str, A: Any, B: Any, C: Any, D: Any, sampled: bool) -> Cl
 
 def h2_of_fractions(name: str, fractions: Any, sampled: bool) -> Claim:
     """Return the H2 norm of exact fractions (numerator, denominator) [output][input]."""
-    from flint import fmpq, fmpq_poly
+    from flint import arb, fmpq_poly
 
     from realize.kernels.exact.graphs import continuous
+    from realize.kernels.exact.numbers import near_ball, precision
     from realize.kernels.exact.polynomials import reduce_fraction
-    from realize.kernels.exact.roots import inside_left_half_plane
     from realize.kernels.exact.squared_norms import squared_h2
 
     grid: Any = continuous(fractions) if sampled else fractions
@@ -175,17 +174,20 @@ def h2_of_fractions(name: str, fractions: Any, sampled: bool) -> Claim:
                 return judge(name, None, unit="absolute", note="not stable: a pole at z = -1")
             infinite |= improper
             groups.setdefault(str(d), (d, []))[1].append(n)
-    for d, _ in groups.values():
-        if d.degree() > 0 and inside_left_half_plane(d) < d.degree():
+    parts = [(d, [n for n in numerators if n.degree() < d.degree()]) for d, numerators in groups.values()]
+    found = []
+    for d, numerators in parts:
+        part = squared_h2(numerators, d)
+        if part is None:
             return judge(name, None, unit="absolute", basis="proved", note="not stable")
+        found.append(part)
     if infinite:
         note = "a feed-through in continuous time, or improper"
         return judge(name, math.inf, unit="absolute", basis="proved", note=note)
-    total = fmpq(0)
-    for d, numerators in groups.values():
-        total += squared_h2(numerators, d)
-    value = square_root(total * 2 if sampled else total)
-    return judge(name, value, unit="absolute", basis="proved", uncertainty=above(value * 2.0**-51))
+    with precision(128):
+        root = (sum(found, arb(0)) * (2 if sampled else 1)).sqrt()
+        value = near_ball(root)
+    return judge(name, value, unit="absolute", basis="proved", uncertainty=above(value * 2.0**-52))
 
 
 def hankel_norm(model: Any) -> Claim:

@@ -1,16 +1,15 @@
-"""Exact H2 norm and Hankel norm of rational functions."""
+"""H2 norm and Hankel norm of exact rational functions."""
 
 from __future__ import annotations
 
 import math
 from collections.abc import Sequence
 
-from flint import fmpq, fmpq_poly
+from flint import arb, fmpq, fmpq_poly
 
-from realize.kernels.exact.numbers import binary_exponent, power_of_two
-from realize.kernels.exact.polynomials import ZERO, reduce_fraction, stretched
-
-Fraction = tuple[fmpq_poly, fmpq_poly]
+from realize.kernels.exact.numbers import binary_exponent, power_of_two, precision
+from realize.kernels.exact.polynomials import reduce_fraction, stretched
+from realize.kernels.exact.roots import inside_left_half_plane
 
 
 def _mirrored(p: fmpq_poly) -> fmpq_poly:
@@ -26,32 +25,71 @@ def _inverse(p: fmpq_poly, modulus: fmpq_poly) -> fmpq_poly:
     return u / g[0]
 
 
-def squared_h2(numerators: Sequence[fmpq_poly], denominator: fmpq_poly) -> fmpq:
-    """Return the sum over the channels of (1 / 2 pi) times the integral over all w of |n(jw) / d(jw)|^2, exactly.
+#: First precision (bits), accuracy asked of the norm, and the precision from which roots are counted for stability.
+FIRST_BITS, NORM_BITS, COUNT_BITS = 128, 64, 1 << 14
 
-    With n(s) n(-s) = u(s) d(-s) + u(-s) d(s) the integral is u_(n-1) / d_n [1]_, and u = n(s) n(-s) / d(-s) modulo
-    d(s).
+
+def squared_h2(numerators: Sequence[fmpq_poly], denominator: fmpq_poly) -> arb | None:
+    """Return the sum over the channels of (1 / 2 pi) times the integral over all w of |n(jw) / d(jw)|^2, as a ball.
+
+    The recursion of [1]_: Routh's array of d, with n reduced along by its odd rows; the integral is
+    sum b_k^2 / (2 a_k), and the denominator is stable if and only if all a_k are positive. In ball arithmetic of rising
+    precision. None if a root of d is not in the open left half-plane.
 
     Parameters
     ----------
     numerators : sequence of polynomials
         Of lower degree than the denominator.
     denominator : polynomial
-        All roots in the open left half-plane (not checked).
 
     References
     ----------
-    .. [1] K. J. Astrom, Introduction to Stochastic Control Theory, Academic Press, 1970, chapter 5, where the same
-           integral is found by recursion.
+    .. [1] K. J. Astrom, Introduction to Stochastic Control Theory, Academic Press, 1970, section 5.2.
     """
     degree = denominator.degree()
-    above = ZERO
+    if degree < 1:
+        return arb(0)
+    bits, counted = FIRST_BITS, False
+    while True:
+        with precision(bits):
+            total, stable = _recursion(numerators, denominator)
+        if stable is False:
+            return None
+        if stable and (total.is_zero() or total.rel_accuracy_bits() >= NORM_BITS):
+            return total
+        bits *= 2
+        if bits >= COUNT_BITS and not stable and not counted:
+            if inside_left_half_plane(denominator) < degree:
+                return None
+            counted = True
+
+
+def _recursion(numerators: Sequence[fmpq_poly], denominator: fmpq_poly) -> tuple[arb, bool | None]:
+    """Return the integral, and whether the denominator is stable (None where the balls do not tell)."""
+    degree = denominator.degree()
+    lead = denominator.leading_coefficient()
+    a = [arb(c / lead) for c in reversed(denominator.coeffs())]
+    rows = []
     for n in numerators:
-        above = above + n * _mirrored(n)
-    if degree < 1 or not above:
-        return fmpq(0)
-    u = (above % denominator) * _inverse(_mirrored(denominator), denominator) % denominator
-    return u[degree - 1] / denominator[degree]
+        c = n.coeffs()
+        rows.append([arb(value / lead) for value in reversed(c + [fmpq(0)] * (degree - len(c)))])
+    total = arb(0)
+    for k in range(degree, 0, -1):
+        pivot = a[1]
+        if not pivot > 0:
+            return total, False if pivot < 0 or pivot.is_zero() else None
+        ratio = a[0] / pivot
+        for b in rows:
+            if not b[0].is_zero():
+                share = b[0] / pivot
+                total += share * share / (2 * ratio)
+                for i in range(2, k, 2):
+                    b[i] = b[i] - share * a[i + 1]
+            del b[0]
+        a = [a[1]] + [
+            (a[i + 1] - ratio * a[i + 2] if i + 2 <= k else a[i + 1]) if i % 2 else a[i + 1] for i in range(1, k)
+        ]
+    return total, True
 
 
 def hankel_polynomial(n: fmpq_poly, d: fmpq_poly) -> fmpq_poly:
