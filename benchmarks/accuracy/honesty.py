@@ -109,8 +109,9 @@ class Examination:
             elif claim.name in ("reduction-error", "reduction-bound", "linf-error"):
                 truth, where = judge.linf_error()
                 slack = 1e-13
-            elif claim.name == "steady-state-error":
-                truth, where = judge.steady_state_error()
+            elif claim.name in ("steady-state-error", "nu-gap", "h2-error"):
+                truth, where = getattr(judge, claim.name.replace("-", "_"))()
+                slack = 1e-15
             elif claim.name in ("stability", "order"):
                 expected = float(judge.stability()) if claim.name == "stability" else float(result.order or 0)
                 false = claim.value != expected and claim.basis != "measured"
@@ -173,6 +174,12 @@ class Examination:
                 continue
             self.judged(step, source, made.model, made.receipt.claims)
             results.append(made.model)
+        if self.rng.random() < share:
+            to, form = targets[0]
+            step = f"{name} {source.kind} to {to} {form or ''} in double arithmetic"
+            made = self.attempt(step, lambda: convert(source, to, form=form, arithmetic="double"))
+            if made is not None:
+                self.judged(step, source, made.model, made.receipt.claims)
         if source.shape != (1, 1) and self.rng.random() < share:
             step = f"{name} {source.kind} to transfer-function over a common denominator"
             made = self.attempt(step, lambda: convert(source, "transfer-function", common_denominator=True))
@@ -191,7 +198,7 @@ class Examination:
     def compared(self, model: Model, other: Model) -> None:
         made = self.attempt("compare", lambda: compare(model, other))
         if made is not None:
-            names = ("response-error", "channel-error", "peak-error", "linf-error")
+            names = ("response-error", "channel-error", "peak-error", "linf-error", "nu-gap", "h2-error")
             claims = [msgspec.convert(made[name], Claim) for name in names if name in made]
             self.judged("compare", model, other, claims)
 

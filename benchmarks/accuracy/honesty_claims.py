@@ -9,7 +9,7 @@ from functools import cached_property
 from typing import Any
 
 import numpy as np
-from flint import acb, arb, fmpq
+from flint import acb, arb, fmpq, fmpq_mat
 from honesty_oracle import (
     EDGE,
     INFINITE,
@@ -23,6 +23,7 @@ from honesty_oracle import (
     quotient,
     rational,
     singular,
+    spots,
 )
 
 from realize.models import FrequencyResponse, Model
@@ -270,8 +271,79 @@ class Judge:
         difference, gain = self.truth.at(0.0)
         return quotient(norm(difference), norm(gain)), 0.0
 
+    def nu_gap(self) -> tuple[Any, Any]:
+        """Return the largest chordal distance of two single channels: the nu-gap, or less where that is 1."""
+        if self.truth.shape != (1, 1):
+            return None, None
+        (n1, d1), (n2, d2) = self.source.flat[0], self.result.flat[0]
+
+        def distance(w: float) -> Any:
+            z, exact = self.truth.point(w)
+            sides = self.source, self.source, self.result, self.result
+            with bits(128):
+                a, b, c, d = (
+                    side.value(p, z, exact) if p.degree() >= 0 else acb(0)
+                    for side, p in zip(sides, (n1, d1, n2, d2), strict=True)
+                )
+                cross = self.truth.cross[0]
+                top = self.result.value(cross, z, exact) if cross.degree() >= 0 else acb(0)
+                return quotient(abs(top), norm([a, b]) * norm([c, d]))
+
+        return self.largest(distance, lambda w: True)
+
+    def h2_error(self) -> tuple[Any, Any]:
+        """Return the H2 norm of the difference: X(s) D(-s) + X(-s) D(s) = M(s) M(-s) solved for each channel."""
+        total = fmpq(0)
+        for (_, d1), (_, d2), cross in zip(self.source.flat, self.result.flat, self.truth.cross, strict=True):
+            if cross.degree() < 0:
+                continue
+            d = d1 * d2
+            common = cross.gcd(d)
+            square = _square_norm(cross // common, d // common, self.source.period)
+            if square is None:
+                return None, None
+            total += square
+        with bits(128):
+            return (arb(total).sqrt() if total else arb(0)), None
+
     def stability(self) -> bool:
         return self.result.stable
+
+
+def _square_norm(above: Any, below: Any, period: fmpq | None) -> fmpq | None:
+    """Return the squared H2 norm of a rational function, None where it is not finite or no solution is unique."""
+    if not all(spot.inside for spot in spots(below, period)):
+        return None
+    n = below.degree()
+    if period is None:
+        if above.degree() >= n:
+            return None
+
+        def other(p: Any) -> Any:
+            return type(p)([c if k % 2 == 0 else -c for k, c in enumerate(p.coeffs())])
+
+        unknowns, step = n, 2
+    else:
+        if above.degree() > n:
+            return None
+
+        def other(p: Any) -> Any:
+            return type(p)([p[n - k] for k in range(n + 1)])
+
+        unknowns, step = n + 1, 1
+    right = above * other(above)
+    columns = []
+    for k in range(unknowns):
+        x = type(above)([0] * k + [1])
+        columns.append(x * other(below) + other(x) * below)
+    # even powers in continuous time; in sampled time the coefficients are symmetric
+    rows = [[column[step * k] for column in columns] for k in range(unknowns)]
+    try:
+        solution = fmpq_mat(rows).solve(fmpq_mat([[right[step * k]] for k in range(unknowns)]))
+    except ZeroDivisionError:
+        return None
+    lead = solution[unknowns - 1, 0] / below[n]
+    return lead if period is None else 2 * lead
 
 
 def _multiplicity(polynomial: Any, point: int) -> int:
