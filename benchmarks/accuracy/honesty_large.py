@@ -2,7 +2,7 @@
 
     python benchmarks/accuracy/honesty_large.py --count 12 --seed 1
 
-The exact error at any frequency is a lower bound of the largest one. State models of 160 to 260 states, where claims come
+The exact error at any frequency is a lower bound of the largest. State models of 160 to 260 states, where claims come
 from doubles, are reduced and converted; at the frequency that a claim names, and at some of the least damped poles, the
 difference is computed in balls of 160 bits.
 """

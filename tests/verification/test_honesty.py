@@ -5,7 +5,6 @@ from __future__ import annotations
 from types import ModuleType
 
 import pytest
-from conftest import PLACE
 
 SEED = 20
 #: Steps of each of the twenty families.
@@ -58,7 +57,3 @@ def test_the_oracle_agrees_with_the_fractions_of_python(honesty: ModuleType, ora
                 above, below = _at(n, point), _at(d, point)
                 x, y = rational(value[0]), rational(value[1])
                 assert (below[0] * x - below[1] * y, below[0] * y + below[1] * x) == above
-
-
-def test_the_benchmark_is_where_the_page_says() -> None:
-    assert (PLACE / "honesty.py").is_file()
