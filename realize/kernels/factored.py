@@ -62,8 +62,7 @@ def polynomial_roots(polynomial: Scaled) -> ComplexArray:
     # groups of roots so far apart in size that neither moves the other by a rounding
     cuts = [0, *(1 + np.flatnonzero(-np.diff(slopes) > FAR_APART + 2 * n.bit_length())).tolist(), n]
     pieces = [
-        _group(m[i : j + 1] / m[i], e[i : j + 1] - e[i], hull[i : j + 1] - hull[i])
-        for i, j in itertools.pairwise(cuts)
+        _group(m[i : j + 1] / m[i], e[i : j + 1] - e[i], hull[i : j + 1] - hull[i]) for i, j in itertools.pairwise(cuts)
     ]
     found = np.concatenate(pieces)
     if np.any(found == 0):

@@ -77,7 +77,10 @@ def test_a_fault_is_caught_where_the_list_says(
     assert caught(fault.scenario, honesty) == fault.caught
 
 
-@pytest.mark.parametrize("scenario", {str(f.scenario): f.scenario for f in FAULTS}.values(), ids=str)
+SCENARIOS = list({str(fault.scenario): fault.scenario for fault in FAULTS}.values())
+
+
+@pytest.mark.parametrize("scenario", SCENARIOS, ids=[f"scenario {k}" for k in range(len(SCENARIOS))])
 def test_without_a_fault_nothing_is_found(scenario: Scenario, honesty: ModuleType) -> None:
     assert caught(scenario, honesty) == ""
 
@@ -86,7 +89,9 @@ def tenth(found: tuple[float, float]) -> tuple[float, float]:
     return found[0] / 10, found[1]
 
 
-@pytest.mark.parametrize("change", [after_first(conversion), after(conversion, "largest_error", tenth)], ids=str)
+@pytest.mark.parametrize(
+    "change", [after_first(conversion), after(conversion, "largest_error", tenth)], ids=["first frequency", "a tenth"]
+)
 def test_a_search_that_misses_the_peak_is_made_good_by_the_proof(
     change: Inject, honesty: ModuleType, monkeypatch: pytest.MonkeyPatch
 ) -> None:
