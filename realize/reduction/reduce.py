@@ -102,6 +102,11 @@ def reduce_states(
             count = min(count, prepared.available)
             part = chosen_method.project(prepared, count)
             rounding = rounding_term(prepared, part, count)
+        if not math.isfinite(rounding):
+            raise Refused(
+                "a pole lies on the boundary of stability to the last rounding, yet was not told from a stable one: no "
+                "error can be promised; give the model with that pole exactly on the axis, or ask for an order"
+            )
         if rounding > limit:
             raise Refused(
                 f"an error of {limit:.3g} is below the rounding of this model, about {rounding:.3g}; ask for more"
@@ -146,6 +151,9 @@ def rounding_term(prepared: Prepared, part: Projected, count: int) -> float:
     worst = 0.0
     for point in points:
         pencil = point * np.eye(count) - triangle
+        if np.any(np.diagonal(pencil) == 0):
+            # a pole of the result is on the boundary of stability: what rounding can do there has no bound
+            return math.inf
         state = basis @ scipy.linalg.solve_triangular(pencil, into, check_finite=False)
         costate = scipy.linalg.solve_triangular(pencil, out.T, trans=1, check_finite=False).T @ basis.conj().T
         x, y = np.linalg.norm(state, axis=1), np.linalg.norm(costate, axis=0)
