@@ -119,7 +119,8 @@ def _callback(verb: Verb) -> Callable[..., int]:
             output=options.pop("output", None),
             strict=options.pop("strict", False),
             limits=options.pop("limit", {}),
-            second_opinion=options.pop("second_opinion", False),
+            # None: asked where the claims leave something open
+            second_opinion=options.pop("second_opinion", None),
         )
         context.check()
         return module.execute(context, **options)

@@ -28,7 +28,7 @@ class Context:
     output: str | None = None
     strict: bool = False
     limits: dict[str, float] = field(default_factory=dict)
-    second_opinion: bool = False
+    second_opinion: bool | None = None
 
     def check(self) -> None:
         """Refuse what cannot work before any work is done."""

@@ -159,7 +159,11 @@ COMMON_OPTIONS: tuple[Option, ...] = (
 RECEIPT_OPTIONS: tuple[Option, ...] = (
     Option("strict", "flag", "write no output, and end with status 4, unless every limited claim holds"),
     Option("limit", "limit", "limit of a claim; may be given several times", metavar="NAME=VALUE"),
-    Option("second-opinion", "switch", "ask an independent library for the same step", default=True),
+    Option(
+        "second-opinion",
+        "switch",
+        "ask an independent library for the same step; unless said otherwise, where a limited claim is not proved",
+    ),
 )
 
 EXIT_STATUSES = {

@@ -74,7 +74,7 @@ def convert(
     arithmetic: str = "auto",
     certify: bool = False,
     limits: dict[str, float] | None = None,
-    second_opinion: bool = False,
+    second_opinion: bool | None = False,
 ) -> Conversion:
     """Write the same model as another kind, or in other coordinates.
 
@@ -98,8 +98,8 @@ def convert(
         Prove the claims whatever it costs.
     limits : dict, optional
         Limits by claim name, instead of the defaults.
-    second_opinion : bool
-        Ask an independent library, in a child process.
+    second_opinion : bool or None
+        Ask an independent library, in a child process; None: only where a limited claim is not proved.
 
     Returns
     -------

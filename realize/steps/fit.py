@@ -27,7 +27,7 @@ def fit(
     dead_time: float | None = None,
     band: tuple[float, float] | None = None,
     limits: dict[str, float] | None = None,
-    second_opinion: bool = False,
+    second_opinion: bool | None = False,
 ) -> Conversion:
     """Turn a measured frequency response into a model.
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
 from functools import cache
 from typing import Any
@@ -16,6 +16,7 @@ from realize.errors import Refused
 from realize.models import FrequencyResponse, Model, mark
 from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
+from realize.steps.second_opinion import Later, Opinion
 from realize.verification import fragility, view_of
 from realize.verification.bands import whole_band
 from realize.verification.search import seeds
@@ -127,6 +128,16 @@ def plain(value: Any) -> Any:
     return [plain(entry) for entry in value] if isinstance(value, (list, tuple)) else value
 
 
+def _arbiter(claims: list[Claim], by: str) -> str:
+    """Return who is right where the second opinion disagrees: exact arithmetic decides when it can."""
+    judged = [claim for claim in claims if claim.name in ("response-error", "peak-error") and claim.basis == "proved"]
+    if not judged:
+        return "Nothing here is proved: find out which of the two is right before relying on either."
+    if all(claim.holds for claim in judged if claim.limit is not None):
+        return f"Exact arithmetic proves this result right, so {by or 'the library'} is wrong here."
+    return "Exact arithmetic proves that this result is off by what the claims say."
+
+
 def finish(
     step: str,
     method: str,
@@ -137,7 +148,7 @@ def finish(
     *,
     started: float,
     cautions: Sequence[str] = (),
-    opinion: Callable[[Model], SecondOpinion] | None = None,
+    opinion: Opinion | Later | None = None,
     limits: dict[str, float] | None = None,
     details: dict[str, Any] | None = None,
     digits: int | None = None,
@@ -148,8 +159,8 @@ def finish(
     ----------
     started : float
         ``time.perf_counter()`` at the start of the step.
-    opinion : callable, optional
-        Waits for the second opinion about the result.
+    opinion : optional
+        Waits for the second opinion about the result, or asks for it where the claims leave something open.
     limits : dict, optional
         Limits by claim name that were asked for; none of them is passed over in silence.
     digits : int, optional
@@ -173,9 +184,12 @@ def finish(
     missing = [claim.name for claim in claims if claim.value is None and not claim.infinite and claim.limit is not None]
     if missing:
         notes.append(f"A limit was asked for, and there is no value to hold against it: {', '.join(missing)}.")
-    second = opinion(result) if opinion is not None else SecondOpinion()
+    if opinion is None:
+        second = SecondOpinion()
+    else:
+        second = opinion.about(result, claims) if isinstance(opinion, Later) else opinion(result)
     if second.status == "disagrees":
-        notes.append(f"The second opinion disagrees: {second.note}")
+        notes.append(f"The second opinion disagrees: {second.note}. {_arbiter(claims, second.by)}")
     notes.append(CLOSED_LOOP)
     receipt = Receipt(
         step=step,

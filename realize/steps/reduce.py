@@ -69,7 +69,7 @@ def reduce(
     method: str = "auto",
     certify: bool = False,
     limits: dict[str, float] | None = None,
-    second_opinion: bool = False,
+    second_opinion: bool | None = False,
 ) -> Conversion:
     """Find a smaller model, with the error known.
 

@@ -12,13 +12,14 @@ import sys
 import tempfile
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 import numpy as np
 
 from realize.models import FrequencyResponse, Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
-from realize.schema import SecondOpinion
+from realize.schema import Claim, SecondOpinion
 
 #: Seconds that the child may take, counted from its start.
 TIME_LIMIT = 30.0
@@ -68,8 +69,11 @@ Opinion = Callable[[Model], SecondOpinion]
 
 
 @contextmanager
-def asking(step: str, source: Model, options: dict[str, Any], wanted: bool) -> Iterator[Opinion | None]:
+def asking(step: str, source: Model, options: dict[str, Any], wanted: bool | None) -> Iterator[Opinion | Later | None]:
     """Start the child for a step; yield a function that waits for it and judges the result, None where not wanted.
+
+    With None for ``wanted`` the child of a conversion is started only when the claims leave something open: then a
+    `Later` is yielded.
 
     The child never outlives the step, whatever becomes of it.
 
@@ -80,9 +84,12 @@ def asking(step: str, source: Model, options: dict[str, Any], wanted: bool) -> I
     source : Model
     options : dict
         What the child needs to know of the step.
-    wanted : bool
+    wanted : bool or None
     """
-    if not wanted:
+    if wanted is None and step == "convert":
+        yield Later(step, source, options)
+        return
+    if wanted is False:
         yield None
         return
     opinion, close = _ask(step, source, options)
@@ -90,6 +97,26 @@ def asking(step: str, source: Model, options: dict[str, Any], wanted: bool) -> I
         yield opinion
     finally:
         close()
+
+
+@dataclass(frozen=True)
+class Later:
+    """A second opinion that is asked for only where the claims leave something open."""
+
+    step: str
+    source: Model
+    options: dict[str, Any]
+
+    def about(self, result: Model, claims: list[Claim]) -> SecondOpinion:
+        """Return the opinion, or say why none was asked for."""
+        limited = [claim for claim in claims if claim.limit is not None]
+        if limited and all(claim.basis == "proved" and claim.holds for claim in limited):
+            return SecondOpinion(status="not-asked", note="every limited claim is proved")
+        opinion, close = _ask(self.step, self.source, self.options)
+        try:
+            return opinion(result)
+        finally:
+            close()
 
 
 def _nothing() -> None:

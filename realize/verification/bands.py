@@ -136,7 +136,7 @@ def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Ba
     if other is not None:
         extra = dynamic_band(NO_DYNAMICS, other.rough_poles, view.period, True)
         if np.any(other.rough_poles.frequency > 0):
-            # a pole at the origin leaves out what is below the source's own band, wherever doubles put the result's pole
+            # a pole at the origin leaves out what is below the source's own band, wherever doubles put the result's
             low, high = low if at_origin else min(low, extra.low), max(high, extra.high)
     top = np.pi / view.period if view.period is not None else np.inf
     low = low / margin if not at_origin else low

@@ -53,7 +53,7 @@ DATA = {
 FILES = {"plant.json": PLANT, "smaller.json": SMALLER, "wide.json": WIDE, "data.json": DATA}
 
 RECORDS: dict[str, list[str]] = {
-    "convert": ["convert", "plant.json", "--to", "state-space", "--json", "-o", "out.json"],
+    "convert": ["convert", "plant.json", "--to", "state-space", "--json", "--second-opinion", "-o", "out.json"],
     "convert-quiet": ["convert", "plant.json", "--to", "zero-pole-gain", "--json", QUIET],
     "convert-several": ["convert", "wide.json", "--to", "pole-residue", "--json", QUIET],
     "convert-explain": ["convert", "plant.json", "--to", "sections", "--explain", "--json"],

@@ -156,3 +156,29 @@ def test_reduce_agrees_with_the_library() -> None:
     plant = StateSpace(A=np.diag(-np.arange(1.0, n + 1)) + np.eye(n, k=1), B=np.ones((n, 1)), C=np.ones((1, n)))
     opinion = reduce(plant, order=3, second_opinion=True).receipt.second_opinion
     assert opinion.status == "agrees" and "slycot" in opinion.by
+
+
+def test_none_is_asked_where_everything_is_proved() -> None:
+    """From the shell a conversion whose limited claims are all proved needs nobody else's word."""
+    plant = realize.TransferFunction(numerator=[1.0, 5.1], denominator=[1.0, 3.3, 2.7])
+    opinion = realize.convert(plant, "state-space", second_opinion=None).receipt.second_opinion
+    assert opinion.status == "not-asked" and opinion.note == "every limited claim is proved"
+
+
+def test_exact_arithmetic_says_who_is_right(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A library that answers 1 everywhere disagrees with 1/(s + 1); the claims are proved, so the library is wrong."""
+    child = tmp_path / "child.py"
+    child.write_text(
+        "import json, sys\n"
+        "r = json.load(sys.stdin)\n"
+        "n = len(r['frequency'])\n"
+        "one = [[[1.0]]] * n\n"
+        "json.dump({'by': 'a library', 'real': one, 'imaginary': [[[0.0]]] * n}, sys.stdout)\n"
+    )
+    monkeypatch.setattr("realize.steps.second_opinion.CHILD", child)
+    plant = realize.TransferFunction(numerator=[1.0], denominator=[1.0, 1.0])
+    receipt = realize.convert(plant, "state-space", second_opinion=True).receipt
+    assert receipt.second_opinion.status == "disagrees"
+    assert any(
+        "Exact arithmetic proves this result right, so a library is wrong here" in text for text in receipt.cautions
+    )
