@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+import realize
 from realize.errors import Refused
 from realize.models import FrequencyResponse, StateSpace, TransferFunction, digest
 from realize.steps import convert, fit, reduce, second_opinion
