@@ -20,6 +20,8 @@ from realize.verification.views import whatever_it_costs
 
 #: Kinds that `digits` goes with: every other holds matrices or samples in doubles.
 WITH_DIGITS = ("transfer-function", "zero-pole-gain", "pole-residue", "sections")
+#: Damping ratio below which an oscillation counts as one of a flexible structure.
+FLEXIBLE = 0.1
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
 GOOD = 1e-9
 
@@ -119,14 +121,20 @@ def convert(
         result = convert_model(task, route)
         shape = _form_of(task, route)
         claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
-        if form is None and shape == "modal" and _worst(claims) > GOOD:
-            # the default for several channels did not do: series connections, channel by channel
-            other = Task(source, to, "cascade", common_denominator, arithmetic=arithmetic)
-            second_route = plan_route(other)
-            second = convert_model(other, second_route)
-            second_claims = conversion_claims(source, second, True, limits)
-            if _worst(second_claims) < _worst(claims):
-                route, result, claims, shape = second_route, second, second_claims, "cascade"
+        rival = _rival(source, shape, claims) if form is None else ""
+        if rival:
+            other = Task(source, to, rival, common_denominator, arithmetic=arithmetic)
+            try:
+                second_route = plan_route(other)
+                second = convert_model(other, second_route)
+            except Refused:
+                second = None
+            if second is not None:
+                second_claims = conversion_claims(source, second, True, limits)
+                if _worst(second_claims) < _worst(claims) or (
+                    rival == "modal" and _worst(second_claims) <= _worst(claims)
+                ):
+                    route, result, claims, shape = second_route, second, second_claims, rival
         cautions = _cautions(source, result, to) + _costly(choice)
         return finish(
             "convert",
@@ -147,6 +155,23 @@ def convert(
             },
             digits=digits,
         )
+
+
+def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
+    """Return the other coordinates worth a try by default: '' for none.
+
+    Modal coordinates of several channels that lose one of them have the cascade as rival; the cascade of a flexible
+    structure (one channel, all poles lightly damped oscillations) has modal coordinates, which are what its user thinks
+    in, if they are at least as good.
+    """
+    if shape == "modal" and _worst(claims) > GOOD:
+        return "cascade"
+    if shape == "cascade" and source.shape == (1, 1):
+        poles = view_of(source).poles
+        oscillating = (poles.s.imag != 0) & (poles.damping < FLEXIBLE) & (poles.s.real < 0)
+        if poles.s.size and bool(np.all(oscillating)):
+            return "modal"
+    return ""
 
 
 def _method(choice: Choice) -> str:
