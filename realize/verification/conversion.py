@@ -22,7 +22,7 @@ from realize.verification.bands import (
     zero_channel,
 )
 from realize.verification.pair import Pair, frobenius
-from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds
+from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds, sharpened, summits
 from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
@@ -59,6 +59,12 @@ def largest_error(
     inside = band.contains(w)
     w = w[inside]
     start = _quotient(pair, w, (difference[inside], size[inside]), lines, channel, divisor)
+    if w.size and pair.provable(channel) and np.isfinite(start).all():
+        # the proof finds what the samples miss: near is near enough
+        def error(x: float) -> float:
+            return _exact_error(pair, x, lines, channel, divisor)
+
+        return sharpened(error, max((error(x), x) for x in summits(w, start, band)), band)
     found, where = largest(
         lambda x: _quotient(pair, x, pair.quick_sizes(x), lines, channel, divisor), w, band, rounds=2, values=start
     )
@@ -67,11 +73,18 @@ def largest_error(
     if not pair.provable(channel):
         at = np.array([where])
         return float(_quotient(pair, at, pair.sizes(at), lines, channel, divisor)[0]), where
+    return _exact_error(pair, where, lines, channel, divisor), where
+
+
+def _exact_error(
+    pair: Pair, frequency: float, lines: list[float], channel: tuple[int, int] | None, divisor: float
+) -> float:
+    """Return the error at one frequency from the proof's polynomials."""
     reference = divisor or None
     for line in lines:
-        if not divisor and abs(where - line) <= LIGHT * line:
+        if not divisor and abs(frequency - line) <= LIGHT * line:
             reference = pair.edge_gain(line * (1 - LIGHT), line * (1 + LIGHT), channel)
-    return pair.proof(channel).value_at(where, reference), where
+    return pair.proof(channel).value_at(frequency, reference)
 
 
 def _note(pair: Pair) -> str:
@@ -156,12 +169,14 @@ def peak_gain(pair: Pair) -> tuple[float, float]:
     band = pair.band
     w, _, size = pair.grid
     inside = band.contains(w)
-    gain, where = largest(
-        lambda x: frobenius(pair.quick_sizes(x)[1]), w[inside], band, rounds=2, values=frobenius(size[inside])
-    )
-    if np.isfinite(gain) and pair.provable(None):
-        gain = pair.proof(None).gain_at(where)
-    elif pair.exact and np.isfinite(gain):
+    gains = frobenius(size[inside])
+    if pair.provable(None) and np.isfinite(gains).all() and gains.size:
+        proof = pair.proof(None)
+        first = max((proof.gain_at(x), x) for x in summits(w[inside], gains, band))
+        gain, where = sharpened(proof.gain_at, first, band)
+    else:
+        gain, where = largest(lambda x: frobenius(pair.quick_sizes(x)[1]), w[inside], band, rounds=2, values=gains)
+    if pair.exact and not pair.provable(None) and np.isfinite(gain):
         gain = float(frobenius(pair.sizes(np.array([where]))[1])[0])
     limit = at_infinity(pair)[1]
     return (limit, np.inf) if np.isfinite(limit) and limit > gain else (gain, where)

@@ -20,7 +20,7 @@ from realize.verification.views import tell
 Grid = list[list[Any]]
 
 #: Factors by which the value found is raised until the inequality is proved.
-STEPS = (1 + 2**-9, 1.02, 1.1, 1.5, 3.0, 30.0, 1e3, 1e6)
+STEPS = (1 + 2**-9, 1.008, 1.02, 1.1, 1.5, 3.0, 30.0, 1e3, 1e6)
 #: A value that is this far below one rounding is raised to it first: nobody needs a proof of less.
 SMALLEST = 2.0**-60
 #: Largest degree of the inequality that is tried by default.

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -35,6 +36,11 @@ class Band:
         for low, high in self.left_out:
             inside &= ~((w > low) & (w < high))
         return inside
+
+    def holds(self, w: float) -> bool:
+        """Return whether one frequency is inside and not left out."""
+        inside = self.low <= w <= self.high or (self.zero and w == 0)
+        return inside and not any(low < w < high for low, high in self.left_out)
 
     def keep(self, w: Array) -> Array:
         """Return the frequencies that are inside and not left out."""
@@ -86,6 +92,54 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
         parts.append(np.array([low, high]))
     w = np.unique(np.concatenate(parts + ([np.zeros(1)] if band.zero else [])))
     return band.keep(w)
+
+
+def summits(w: Array, values: Array, band: Band, most: int = 3) -> list[float]:
+    """Return frequencies near the highest maxima of samples: samples, and vertices of parabolas through them."""
+    if values.size == 0:
+        return []
+    padded = np.concatenate([[-np.inf], values, [-np.inf]])
+    peaks = np.flatnonzero((values >= padded[:-2]) & (values >= padded[2:]))
+    peaks = peaks[np.argsort(-values[peaks], kind="stable")][:most]
+    top = float(values[peaks[0]])
+    found = []
+    for k in peaks.tolist():
+        if values[k] < 0.9 * top:
+            break
+        found.append(float(w[k]))
+        if 0 < k < w.size - 1 and w[k - 1] > 0:
+            place = vertex(w[k - 1 : k + 2].tolist(), values[k - 1 : k + 2].tolist())
+            if place is not None and band.holds(place):
+                found.append(place)
+    return found
+
+
+def vertex(w: list[float], values: list[float]) -> float | None:
+    """Return the vertex of the parabola through three samples over log w, within them; None without a maximum."""
+    before, after = math.log(w[0] / w[1]), math.log(w[2] / w[1])
+    left, right = (values[1] - values[0]) / -before, (values[2] - values[1]) / after
+    if not math.isfinite(left + right) or left <= right:
+        return None
+    return w[1] * math.exp(min(max((after * left - before * right) / (2 * (left - right)), before), after))
+
+
+#: Relative distances at which neighbours are looked at, one after the other.
+REACHES = (0.03, 0.004)
+
+
+def sharpened(error: Callable[[float], float], found: tuple[float, float], band: Band) -> tuple[float, float]:
+    """Return (value, frequency) moved to the vertex of a parabola through its neighbours, twice."""
+    for reach in REACHES:
+        value, place = found
+        around = [place * (1 - reach), place, place * (1 + reach)]
+        if place <= 0 or not math.isfinite(value) or not all(band.holds(x) for x in around):
+            return found
+        values = [error(around[0]), value, error(around[2])]
+        moved = vertex(around, values)
+        found = max(found, (values[0], around[0]), (values[2], around[2]))
+        if moved is not None and band.holds(moved):
+            found = max(found, (error(moved), moved))
+    return found
 
 
 def largest(
