@@ -7,11 +7,14 @@ from __future__ import annotations
 
 import json
 import os
+import select
 import subprocess
 import sys
 import tempfile
+import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
+from contextvars import ContextVar
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -119,6 +122,88 @@ class Later:
             close()
 
 
+class Worker:
+    """A child that answers many requests, one after the other: libraries are imported once.
+
+    It is started at the first request, and again after a request that it did not survive or answer in time.
+    """
+
+    def __init__(self) -> None:
+        self._child: subprocess.Popen[bytes] | None = None
+        self._asked = False
+
+    def send(self, request: dict[str, Any]) -> None:
+        """Hand over a request; an answer that nobody waited for ends the child first."""
+        if self._asked:
+            self.close()
+        try:
+            if self._child is None:
+                self._child = subprocess.Popen(
+                    [sys.executable, "-I", str(CHILD), str(MEMORY_LIMIT), str(int(TIME_LIMIT)), "serve"],
+                    stdin=subprocess.PIPE,
+                    stdout=subprocess.PIPE,
+                    stderr=subprocess.DEVNULL,
+                    env=_environment(),
+                )
+            assert self._child.stdin is not None
+            self._child.stdin.write(json.dumps(request).encode() + b"\n")
+            self._child.stdin.flush()
+            self._asked = True
+        except OSError:
+            self.close()
+
+    def receive(self) -> tuple[int | None, bytes]:
+        """Return (0, answer), (status, nothing) of a child that died, or (None, nothing) without an answer in time."""
+        child, self._asked = self._child, False
+        if child is None or child.stdout is None:
+            return 1, b""
+        deadline = time.monotonic() + TIME_LIMIT
+        answer = b""
+        while not answer.endswith(b"\n"):
+            left = deadline - time.monotonic()
+            ready = select.select([child.stdout], [], [], max(left, 0))[0] if left > 0 else []
+            if not ready or len(answer) > ANSWER_LIMIT:
+                self.close()
+                return None, b""
+            part = os.read(child.stdout.fileno(), 1 << 16)
+            if not part:
+                code = child.wait()
+                self.close()
+                return code, answer if code == 0 else b""
+            answer += part
+        return 0, answer
+
+    def close(self) -> None:
+        """End the child."""
+        child, self._child, self._asked = self._child, None, False
+        if child is not None:
+            child.kill()
+            for stream in (child.stdin, child.stdout):
+                if stream is not None:
+                    with suppress(OSError):
+                        stream.close()
+            child.wait()
+
+
+_kept: ContextVar[Worker | None] = ContextVar("kept", default=None)
+
+
+@contextmanager
+def one_worker() -> Iterator[Worker]:
+    """Inside, second opinions come from one child that stays: for many steps in a row."""
+    worker = Worker()
+    token = _kept.set(worker)
+    try:
+        yield worker
+    finally:
+        _kept.reset(token)
+        worker.close()
+
+
+def _environment() -> dict[str, str]:
+    return {**os.environ, "OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"}
+
+
 def _nothing() -> None:
     """Nothing was started."""
 
@@ -139,17 +224,20 @@ def _ask(step: str, source: Model, options: dict[str, Any]) -> tuple[Opinion, Ca
         return lambda result: _answer(
             "not-applicable", "the model is too large or beyond the range of doubles"
         ), _nothing
+    kept = _kept.get()
+    if kept is not None:
+        kept.send(request)
+        return lambda result: _verdict(*kept.receive(), frequency, result), _nothing
     files = tempfile.TemporaryFile(), tempfile.TemporaryFile()
     files[0].write(json.dumps(request).encode())
     files[0].seek(0)
-    environment = {**os.environ, "OMP_NUM_THREADS": "1", "OPENBLAS_NUM_THREADS": "1"}
     try:
         child = subprocess.Popen(
             [sys.executable, "-I", str(CHILD), str(MEMORY_LIMIT), str(int(TIME_LIMIT))],
             stdin=files[0],
             stdout=files[1],
             stderr=subprocess.DEVNULL,
-            env=environment,
+            env=_environment(),
         )
     except OSError as error:
         for file in files:
@@ -173,7 +261,13 @@ def _judge(child: subprocess.Popen[bytes], output: Any, frequency: np.ndarray, r
     except subprocess.TimeoutExpired:
         return SecondOpinion(status="failed", note=f"no answer within {TIME_LIMIT:g} s")
     output.seek(0)
-    text = output.read(ANSWER_LIMIT)
+    return _verdict(code, output.read(ANSWER_LIMIT), frequency, result)
+
+
+def _verdict(code: int | None, text: bytes, frequency: np.ndarray, result: Model) -> SecondOpinion:
+    """Judge an answer; a code of None stands for none in time."""
+    if code is None:
+        return SecondOpinion(status="failed", note=f"no answer within {TIME_LIMIT:g} s")
     if code != 0 or not text:
         what = f"died with signal {-code}" if code < 0 else f"ended with status {code}"
         return SecondOpinion(status="failed", note=f"the independent library {what}")

@@ -183,3 +183,39 @@ def test_exact_arithmetic_says_who_is_right(tmp_path: Path, monkeypatch: pytest.
     assert any(
         "Exact arithmetic proves this result right, so a library is wrong here" in text for text in receipt.cautions
     )
+
+
+def test_one_worker_serves_many_steps() -> None:
+    with second_opinion.one_worker() as worker:
+        first = convert(PLANT, "state-space", second_opinion=True).receipt.second_opinion
+        child = worker._child
+        second = convert(PLANT, "zero-pole-gain", second_opinion=True).receipt.second_opinion
+        assert first.status == second.status == "agrees"
+        assert child is not None and worker._child is child
+    assert child.poll() is not None
+
+
+@pytest.mark.parametrize(("name", "note"), [("segfault", "signal 11"), ("status", "status 3"), ("no JSON", "read")])
+def test_a_worker_that_dies_is_started_again(
+    name: str, note: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    good = second_opinion.CHILD
+    with second_opinion.one_worker():
+        _child(tmp_path, monkeypatch, "input()\n" + ANSWERS[name][0])
+        failed = convert(PLANT, "state-space", second_opinion=True).receipt.second_opinion
+        assert failed.status == "failed" and note in failed.note
+        monkeypatch.setattr(second_opinion, "CHILD", good)
+        second = convert(PLANT, "state-space", second_opinion=True).receipt.second_opinion
+        assert second.status in ("agrees", "failed")
+        assert convert(PLANT, "state-space", second_opinion=True).receipt.second_opinion.status == "agrees"
+
+
+def test_a_worker_that_hangs_is_ended(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    _child(tmp_path, monkeypatch, "import time; time.sleep(60)")
+    monkeypatch.setattr(second_opinion, "TIME_LIMIT", 0.5)
+    started = time.monotonic()
+    with second_opinion.one_worker() as worker:
+        opinion = convert(PLANT, "state-space", second_opinion=True).receipt.second_opinion
+        assert opinion.status == "failed" and "no answer" in opinion.note
+        assert worker._child is None
+    assert time.monotonic() - started < 10
