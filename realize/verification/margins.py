@@ -56,7 +56,7 @@ class LoopMargins:
     delay_margin : Claim
         Least dead time, s, that puts the loop on -1.
     largest_sensitivity, largest_complementary_sensitivity : Claim
-        sup |1 / (1 + L)| and sup |L / (1 + L)|.
+        Largest moduli of 1 / (1 + L) and of L / (1 + L).
     """
 
     stable: bool
@@ -73,7 +73,7 @@ class LoopMargins:
 def loop_margins(plant: Any, controller: Any = None) -> LoopMargins:
     """Return gain, phase and delay margin and largest sensitivities of the loop L = P K with u = -K y.
 
-    Continuous or sampled. Gain crossings are the roots of |N|^2 - |D|^2, phase crossings those of the imaginary part
+    Continuous or sampled. Gain crossings are the roots of N N~ - D D~, phase crossings those of the imaginary part
     of N D*, polynomials in x = w^2 (sampled: tan^2(w T / 2)), correctly rounded.
 
     Parameters
