@@ -131,9 +131,9 @@ def convert(
                 second = None
             if second is not None:
                 second_claims = conversion_claims(source, second, True, limits)
-                if _worst(second_claims) < _worst(claims) or (
-                    rival == "modal" and _worst(second_claims) <= _worst(claims)
-                ):
+                better = _worst(second_claims) < _worst(claims)
+                as_good = rival == "modal" and _worst(second_claims) <= _worst(claims)
+                if (better or as_good) and _failures(second_claims) <= _failures(claims):
                     route, result, claims, shape = second_route, second, second_claims, rival
         cautions = _cautions(source, result, to) + _costly(choice)
         return finish(
@@ -155,6 +155,11 @@ def convert(
             },
             digits=digits,
         )
+
+
+def _failures(claims: list[Claim]) -> set[str]:
+    """Return the names of the claims that failed."""
+    return {claim.name for claim in claims if claim.holds is False}
 
 
 def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
