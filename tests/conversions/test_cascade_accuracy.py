@@ -1,4 +1,4 @@
-"""A sample of benchmarks/accuracy/coefficients_to_states.py: limits of the exact response error, and plain evaluation."""
+"""A sample of benchmarks/accuracy/coefficients_to_states.py: exact response error and plain evaluation."""
 
 from __future__ import annotations
 
