@@ -197,7 +197,7 @@ def test_matrix_market(layout, number, symmetry, body, expected):
     scipy_io = pytest.importorskip("scipy.io")
     text = MTX.format(layout, number, symmetry, body).encode()
     assert matrix_market.parse(text).tolist() == expected
-    reference = scipy_io.mmread(io.BytesIO(text))
+    reference = scipy_io.mmread(io.BytesIO(text), spmatrix=False)
     assert np.array_equal(reference.toarray() if hasattr(reference, "toarray") else reference, expected)
 
 
