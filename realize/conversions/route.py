@@ -49,6 +49,18 @@ class Row:
     says: str
 
 
+#: Rows that stand in both tables: the work is the same in either arithmetic.
+GAIN_AS_IT_STANDS = Row(
+    "factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"
+)
+PAIRED_SECTIONS = Row(
+    "factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"
+)
+SECTIONS_IN_SERIES = Row(
+    "sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"
+)
+MODAL_BLOCKS = Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair")
+
 ROWS: tuple[Row, ...] = (
     Row("transfer-function", "exact-fractions", builders.fractions, True, "coefficients as exact rationals"),
     Row("zero-pole-gain", "exact-fractions", builders.fractions, True, "exact products of the factors"),
@@ -77,13 +89,11 @@ ROWS: tuple[Row, ...] = (
         False,
         "certified poles and residues, each rounded once",
     ),
-    Row("factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"),
-    Row("factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"),
+    GAIN_AS_IT_STANDS,
+    PAIRED_SECTIONS,
     Row("factors", "state-space:cascade", builders.cascade, False, "sections in series, each entry rounded once"),
-    Row(
-        "sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"
-    ),
-    Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
+    SECTIONS_IN_SERIES,
+    MODAL_BLOCKS,
     Row(
         "exact-fractions",
         "state-space:controllable-companion",
@@ -120,15 +130,13 @@ DOUBLE_ROWS: tuple[Row, ...] = (
     ),
     Row("pole-residue", "factors", doubles.factors_from_residues, False, "finite zeros of the modal state model"),
     Row("state-space", "pole-residue", doubles.residues_from_states, False, "eigenvalues and eigenvectors"),
-    Row("factors", "zero-pole-gain", builders.zero_pole_gain, True, "poles, zeros and gain as they stand"),
+    GAIN_AS_IT_STANDS,
     Row("factors", "transfer-function", doubles.transfer_function, False, "factors multiplied out"),
     Row("factors", "pole-residue", doubles.pole_residue, False, "products of differences of poles and zeros"),
-    Row("factors", "sections", builders.sections, False, "zeros paired with poles, each coefficient rounded once"),
+    PAIRED_SECTIONS,
     Row("factors", "state-space:cascade", doubles.cascade, False, "sections in series"),
-    Row(
-        "sections", "state-space:cascade", builders.cascade_of_sections, False, "the sections as they stand, in series"
-    ),
-    Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair"),
+    SECTIONS_IN_SERIES,
+    MODAL_BLOCKS,
     Row(
         "transfer-function",
         "state-space:controllable-companion",

@@ -14,7 +14,7 @@ from realize.errors import InputError, Refused
 from realize.models import FrequencyResponse, Model
 from realize.schema import Claim, judge
 from realize.verification.proof import square_root
-from realize.verification.views import View, view_of
+from realize.verification.views import View
 
 #: Number of minors times their degree up to which a transfer matrix is taken apart exactly.
 MOST_MINORS = 8000
@@ -228,7 +228,3 @@ def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: 
     w = seeds(band, view.rough_poles, *(other.rough_poles for other in others))
     value, where = largest(size, w, band)
     return Extreme(value, where, None)
-
-
-def views_of(*models: Model) -> list[View]:
-    return [view_of(model) for model in models]
