@@ -150,7 +150,7 @@ def _jacobi(product_left: Array, product_right: Array) -> tuple[Array, Array, Ar
     return Q @ v[:, order], values[order], u[:, order]
 
 
-def _product_svd(R: Array, L: Array) -> tuple[Array, Array, Array]:
+def product_svd(R: Array, L: Array) -> tuple[Array, Array, Array]:
     n = R.shape[0]
     if 1 < n <= JACOBI_ORDER:
         result = _jacobi(R, L)
@@ -194,14 +194,14 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
     L, R = roots.L, roots.R
     if n == 0:
         return HankelFactors(roots, np.zeros(0), L, R, np.zeros(0))
-    U, values, Z = _product_svd(R, L)
+    U, values, Z = product_svd(R, L)
     if n <= REPEATED_ORDER:
         # the dual with its states in another order: Gramians change places, rounding errors are drawn anew
         order = np.concatenate([np.arange(0, n, 2), np.arange(1, n, 2)])
         dual, Q = scipy.linalg.schur(np.ascontiguousarray(T.T[np.ix_(order, order)]), output="real", check_finite=False)
         try:
             other, own = schur_gramian_factors(dual, Q.T @ C.T[order], B.T[:, order] @ Q, sampled=sampled)
-            again = _product_svd(own, other)[1]
+            again = product_svd(own, other)[1]
         except ValueError:
             # a pole so close to the axis that the second Schur form has it on the other side
             again = np.zeros(n)
