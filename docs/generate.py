@@ -13,6 +13,7 @@ from realize.conversions.route import DOUBLE_ROWS, ROWS
 from realize.files.registry import FORMATS
 from realize.files.table_names import ROLES, UNITS
 from realize.fitting.registry import METHODS as FITTING
+from realize.forms.registry import TABLE
 from realize.reduction.registry import methods as reductions
 from realize.schema import (
     BASES,
@@ -204,6 +205,15 @@ def forms() -> str:
     return listed(FORMS) + "\n"
 
 
+def coordinate_forms() -> str:
+    """Return a table of the forms that are changes of coordinates."""
+    cells = [
+        (f":doc:`{form.name} <{form.page}>`", safe(form.says), safe(form.source), literal(form.instead))
+        for form in TABLE.values()
+    ]
+    return table(("form", "does", "source", "instead"), cells, (18, 40, 27, 15))
+
+
 def _rows(rows: Iterable[object]) -> str:
     cells = [(literal(r.source), literal(r.target), "exact" if r.exact else "rounding", safe(r.says)) for r in rows]  # type: ignore[attr-defined]
     return table(("from", "to", "row is", "does"), cells, (22, 28, 12, 38))
@@ -276,6 +286,7 @@ PARTS: dict[str, Callable[[], str]] = {
         bases,
         structured,
         forms,
+        coordinate_forms,
         conversions,
         double_conversions,
         reduction_methods,

@@ -18,6 +18,8 @@ def execute(
     digits: int | None,
     arithmetic: str,
     certify: bool,
+    ordering: str | None,
+    force: bool,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
@@ -26,7 +28,13 @@ def execute(
     source = load(model)
     if rest.pop("explain"):
         lines = explain(
-            source, to, form=form, common_denominator=common_denominator, digits=digits, arithmetic=arithmetic
+            source,
+            to,
+            form=form,
+            ordering=ordering,
+            common_denominator=common_denominator,
+            digits=digits,
+            arithmetic=arithmetic,
         )
         if context.json:
             record = {"step": "convert", "route": lines[:-1], "arithmetic": lines[-1]}
@@ -40,6 +48,8 @@ def execute(
             source,
             to,
             form=form,
+            ordering=ordering,
+            force=force,
             common_denominator=common_denominator,
             digits=digits,
             arithmetic=arithmetic,

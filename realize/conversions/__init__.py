@@ -1,6 +1,8 @@
 """Conversions between kinds: rows of two tables, a route that can be printed."""
 
+from realize.conversions.coordinates import Changed
 from realize.conversions.route import (
+    COORDINATE_ROWS,
     DOUBLE_ROWS,
     ROWS,
     Choice,
@@ -8,18 +10,22 @@ from realize.conversions.route import (
     Task,
     choose_arithmetic,
     convert_model,
+    coordinate_row,
     default_form,
     plan_route,
 )
 
 __all__ = [
+    "COORDINATE_ROWS",
     "DOUBLE_ROWS",
     "ROWS",
+    "Changed",
     "Choice",
     "Row",
     "Task",
     "choose_arithmetic",
     "convert_model",
+    "coordinate_row",
     "default_form",
     "plan_route",
 ]

@@ -9,18 +9,24 @@ from __future__ import annotations
 
 import heapq
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import partial
 from typing import Any
 
 from realize.conversions import builders, digits, doubles
+from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
+from realize.forms.registry import TABLE
 from realize.models import Model, StateSpace
 from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 
 @dataclass(frozen=True)
 class Task:
-    """What is wanted: source, target kind, coordinates, one denominator or not, decimal digits if any, arithmetic."""
+    """What is wanted: source, target kind, coordinates, one denominator or not, decimal digits if any, arithmetic.
+
+    `ordering` is that of the blocks of a form that leaves it open; `force` gives a form even where it ruins the model.
+    """
 
     model: Model
     to: str
@@ -28,6 +34,14 @@ class Task:
     common_denominator: bool = False
     digits: int | None = None
     arithmetic: str = "auto"
+    ordering: str | None = None
+    force: bool = False
+
+    @property
+    def changes_coordinates(self) -> bool:
+        """True where the form is a change of coordinates of a state model (`realize.forms.registry`)."""
+        form = TABLE.get(self.form or "")
+        return form is not None and (isinstance(self.model, StateSpace) or not form.from_states_only)
 
     @property
     def target(self) -> str:
@@ -147,6 +161,14 @@ DOUBLE_ROWS: tuple[Row, ...] = (
     Row("transfer-function", "state-space:observable-companion", doubles.observable, False, "coefficients as entries"),
 )
 
+#: Changes of coordinates: from the states of the source, and from the realizations that stand for other kinds.
+COORDINATE_ROWS: tuple[Row, ...] = tuple(
+    Row(source, f"state-space:{name}", partial(change, name=name, of_source=source == "state-space"), False, form.says)
+    for name, form in TABLE.items()
+    for source in ("state-space", "state-space:cascade", "state-space:modal")
+    if source == "state-space" or not form.from_states_only
+)
+
 #: Kinds and coordinates that doubles cannot carry at an order beyond the budget: used in doubles only when asked for.
 COEFFICIENTS = ("transfer-function", "state-space:controllable-companion", "state-space:observable-companion")
 
@@ -159,6 +181,7 @@ class Choice:
     asked: str
     predicted: float
     budget: float
+    note: str = ""
 
     @property
     def over(self) -> bool:
@@ -168,12 +191,17 @@ class Choice:
     @property
     def words(self) -> str:
         """The choice and why, as one sentence."""
+        if self.note:
+            return f"{self.arithmetic} arithmetic: {self.note}"
         numbers = f"about {self.predicted:.1e} predicted operations, budget {self.budget:.1e}"
         return f"{self.arithmetic} arithmetic, {'chosen' if self.asked == 'auto' else 'as asked'}: {numbers}"
 
 
 def choose_arithmetic(task: Task) -> Choice:
     """Return the arithmetic of a conversion, from sizes and bit lengths alone, never from the clock."""
+    if task.changes_coordinates and isinstance(task.model, StateSpace):
+        operations = 30.0 * task.model.A.shape[0] ** 3
+        return Choice("double", task.arithmetic, operations, EXACT_BUDGET, "new coordinates have no exact entries")
     predicted = predicted_cost(task.model)
     auto = "exact" if predicted <= EXACT_BUDGET else "double"
     return Choice(auto if task.arithmetic == "auto" else task.arithmetic, task.arithmetic, predicted, EXACT_BUDGET)
@@ -204,6 +232,11 @@ def plan_route(task: Task) -> list[Row]:
     """
     if task.form is not None and task.to != "state-space":
         raise UsageError(f"--form {task.form} goes with --to state-space, not with --to {task.to}")
+    if task.changes_coordinates:
+        if isinstance(task.model, StateSpace):
+            return [coordinate_row("state-space", task)]
+        base = plan_route(replace(task, form=None))
+        return [*base, coordinate_row(base[-1].target, task)]
     start, goal = task.model.kind, task.target
     if start == goal and not task.common_denominator and task.digits is None:
         return []
@@ -242,6 +275,11 @@ def plan_route(task: Task) -> list[Row]:
     )
 
 
+def coordinate_row(source: str, task: Task) -> Row:
+    """Return the row from a state model (`state-space`, or a realization by its form) to the form of the task."""
+    return next(row for row in COORDINATE_ROWS if (row.source, row.target) == (source, f"state-space:{task.form}"))
+
+
 def _rows(task: Task) -> tuple[Row, ...]:
     """Return the table that the arithmetic of the task allows."""
     if choose_arithmetic(task).arithmetic == "exact":
@@ -264,4 +302,4 @@ def convert_model(task: Task, route: list[Row]) -> Model:
         if task.digits is not None:
             apply = digits.BUILDERS.get((row.source, row.target), row.apply)
         value = apply(value, task)
-    return value
+    return value.model if isinstance(value, Changed) else value

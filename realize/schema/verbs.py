@@ -9,7 +9,15 @@ from dataclasses import dataclass
 
 from realize.schema.kinds import PARAMETRIC_KINDS
 
-FORMS = ("cascade", "modal", "controllable-companion", "observable-companion")
+FORMS = (
+    "cascade",
+    "modal",
+    "controllable-companion",
+    "observable-companion",
+    "scaled",
+    "schur",
+)
+ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "auto")
 FIT_METHODS = ("vector-fitting", "auto")
 ARITHMETICS = ("exact", "auto", "double")
@@ -93,6 +101,13 @@ VERBS: dict[str, Verb] = {
             (
                 TO_KIND,
                 Option("form", "choice", "coordinates of a state-space result", FORMS),
+                Option(
+                    "ordering",
+                    "choice",
+                    "order of the blocks of --form schur: slowest, least damped or unstable first; speed unless given",
+                    ORDERINGS,
+                ),
+                Option("force", "flag", "give a form even where it ruins the model; the claim then fails (status 4)"),
                 Option("common-denominator", "flag", "one denominator for all channels of a transfer function"),
                 Option(
                     "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 import time
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
 
-from realize.conversions import Choice, Task, choose_arithmetic, convert_model, plan_route
+from realize.conversions import Changed, Choice, Row, Task, choose_arithmetic, convert_model, coordinate_row, plan_route
 from realize.errors import Refused, UsageError
-from realize.models import FrequencyResponse, Model
+from realize.forms.registry import TABLE
+from realize.models import FrequencyResponse, Model, StateSpace
 from realize.models.checks import MAX_DIGITS
-from realize.schema import ARITHMETICS, FORMS, PARAMETRIC_KINDS, STRUCTURED, Claim
+from realize.schema import ARITHMETICS, CLAIMS, FORMS, ORDERINGS, PARAMETRIC_KINDS, STRUCTURED, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
@@ -26,8 +28,19 @@ FLEXIBLE = 0.1
 GOOD = 1e-9
 
 
+#: Forms whose blocks come in an order that can be chosen.
+ORDERED = ("schur",)
+
+
 def _task(
-    model: Model, to: str, form: str | None, common_denominator: bool, digits: int | None, arithmetic: str
+    model: Model,
+    to: str,
+    form: str | None,
+    common_denominator: bool,
+    digits: int | None,
+    arithmetic: str,
+    ordering: str | None,
+    force: bool = False,
 ) -> Task:
     if to not in PARAMETRIC_KINDS:
         raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
@@ -35,6 +48,10 @@ def _task(
         raise UsageError(f"no form {form!r}; there are: {', '.join(FORMS)}")
     if arithmetic not in ARITHMETICS:
         raise UsageError(f"no arithmetic {arithmetic!r}; there are: {', '.join(ARITHMETICS)}")
+    if ordering is not None and ordering not in ORDERINGS:
+        raise UsageError(f"no ordering {ordering!r}; there are: {', '.join(ORDERINGS)}")
+    if ordering is not None and form not in ORDERED:
+        raise UsageError(f"--ordering goes with --form {', '.join(ORDERED)}")
     if common_denominator and to != "transfer-function":
         raise UsageError("--common-denominator goes with --to transfer-function")
     if isinstance(model, FrequencyResponse):
@@ -46,7 +63,7 @@ def _task(
             raise UsageError(f"--digits {digits}: expected a whole number from 1 to {MAX_DIGITS}")
         if arithmetic == "double":
             raise UsageError("--digits needs exact arithmetic, and --arithmetic double was asked for")
-    return Task(model, to, form, common_denominator, digits, arithmetic)
+    return Task(model, to, form, common_denominator, digits, arithmetic, ordering, force)
 
 
 def explain(
@@ -54,12 +71,13 @@ def explain(
     to: str,
     *,
     form: str | None = None,
+    ordering: str | None = None,
     common_denominator: bool = False,
     digits: int | None = None,
     arithmetic: str = "auto",
 ) -> list[str]:
     """Return the route of a conversion in words, one line a row, and last the arithmetic and why."""
-    task = _task(model_of(model), to, form, common_denominator, digits, arithmetic)
+    task = _task(model_of(model), to, form, common_denominator, digits, arithmetic, ordering)
     route = plan_route(task)
     lines = [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
     return [*(lines or [f"{task.model.kind} stays as it is (exact)"]), choose_arithmetic(task).words]
@@ -71,6 +89,8 @@ def convert(
     to: str,
     *,
     form: str | None = None,
+    ordering: str | None = None,
+    force: bool = False,
     common_denominator: bool = False,
     digits: int | None = None,
     arithmetic: str = "auto",
@@ -87,7 +107,13 @@ def convert(
         A parametric kind.
     form : str, optional
         Coordinates of a state-space result; the default is a cascade for one channel, modal for several, and whatever
-        a state-space source has.
+        a state-space source has. The receipt's ``details["coordinates"]`` has the transform from the states of a
+        state-space source, its condition number, and the way back.
+    ordering : str, optional
+        Order of the blocks of the form "schur": "speed" (slowest first, the default), "damping" (least damped first)
+        or "stability" (unstable first).
+    force : bool
+        Give a form even where it ruins the model; the claim then fails.
     common_denominator : bool
         One denominator for all channels of a transfer function.
     digits : int, optional
@@ -113,38 +139,33 @@ def convert(
     """
     started = time.perf_counter()
     source = model_of(model)
-    task = _task(source, to, form, common_denominator, digits, arithmetic)
+    task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force)
     choice = choose_arithmetic(task)
     lifted = certify or arithmetic == "exact"
     with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:
-        route = plan_route(task)
-        result = convert_model(task, route)
-        shape = _form_of(task, route)
-        claims = conversion_claims(source, result, (shape or to) in STRUCTURED, limits)
-        rival = _rival(source, shape, claims) if form is None else ""
-        if rival:
-            other = Task(source, to, rival, common_denominator, arithmetic=arithmetic)
-            try:
-                second_route = plan_route(other)
-                second = convert_model(other, second_route)
-            except Refused:
-                second = None
-            if second is not None:
-                second_claims = conversion_claims(source, second, True, limits)
-                better = _worst(second_claims) < _worst(claims)
-                as_good = rival == "modal" and _worst(second_claims) <= _worst(claims)
-                if (better or as_good) and _failures(second_claims) <= _failures(claims):
-                    route, result, claims, shape = second_route, second, second_claims, rival
+        changed = None
+        if task.changes_coordinates:
+            route, changed = _change(task, limits)
+            result: Model = changed.model
+            shape = form or ""
+            claims = conversion_claims(source, result, shape in STRUCTURED, limits)
+            _refuse_ruin(task, claims, changed, limits)
+        elif form is None:
+            route, result, claims, shape = _default(task, limits)
+        else:
+            route = plan_route(task)
+            result, shape = convert_model(task, route), _form_of(task, route)
+            claims = conversion_claims(source, result, shape in STRUCTURED, limits)
         cautions = _cautions(source, result, to) + _costly(choice)
         return finish(
             "convert",
-            f"{_method(choice) if route else 'left as it was'}, {shape or to}",
+            f"{_method(choice, changed, source) if route else 'left as it was'}, {shape or to}",
             [row.target for row in route],
             source,
             result,
             claims,
             started=started,
-            cautions=cautions,
+            cautions=cautions + list(changed.cautions if changed else ()),
             opinion=opinion,
             limits=limits,
             details={
@@ -152,9 +173,60 @@ def convert(
                 "arithmetic": choice.arithmetic,
                 "predicted_operations": float(f"{choice.predicted:.3g}"),
                 "budget": choice.budget,
+                **({"coordinates": changed.record} if changed else {}),
             },
             digits=digits,
         )
+
+
+def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Model, list[Claim], str]:
+    """Return route, result, claims and coordinates ('' for none) of a conversion without a form asked for."""
+    source = task.model
+    route = plan_route(task)
+    result = convert_model(task, route)
+    shape = _form_of(task, route)
+    claims = conversion_claims(source, result, (shape or task.to) in STRUCTURED, limits)
+    rival = _rival(source, shape, claims)
+    if rival:
+        other = replace(task, form=rival)
+        try:
+            second_route = plan_route(other)
+            second = convert_model(other, second_route)
+        except Refused:
+            second = None
+        if second is not None:
+            second_claims = conversion_claims(source, second, True, limits)
+            better = _worst(second_claims) < _worst(claims)
+            as_good = rival == "modal" and _worst(second_claims) <= _worst(claims)
+            if (better or as_good) and _failures(second_claims) <= _failures(claims):
+                return second_route, second, second_claims, rival
+    return route, result, claims, shape
+
+
+def _change(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Changed]:
+    """Return route and result of a change of coordinates, from the source or from its default realization."""
+    if isinstance(task.model, StateSpace):
+        route = plan_route(task)
+        return route, route[-1].apply(task.model, task)
+    route, base, _, shape = _default(replace(task, form=None), limits)
+    row = coordinate_row(f"state-space:{shape}", task)
+    return [*route, row], row.apply(base, task)
+
+
+def _refuse_ruin(task: Task, claims: list[Claim], changed: Changed, limits: dict[str, float] | None) -> None:
+    """Raise `Refused` where the peak error exceeds its default limit (or a larger one that was asked for)."""
+    if task.force:
+        return
+    limit = max(CLAIMS["peak-error"].limits["convert"], (limits or {}).get("peak-error", 0.0))
+    claim = next((claim for claim in claims if claim.name == "peak-error"), None)
+    if claim is None or (not claim.infinite and (claim.value is None or claim.value <= limit)):
+        return
+    size = "infinite" if claim.infinite or claim.value is None else f"{claim.value:.1e}"
+    raise Refused(
+        f"{task.form} coordinates ruin this model: the peak error would be {size} (limit {limit:g}), "
+        f"with a transform of condition number {changed.condition:.1e}; "
+        f"use --form {TABLE[task.form or ''].instead} instead, or --force to have it all the same"
+    )
 
 
 def _failures(claims: list[Claim]) -> set[str]:
@@ -179,7 +251,9 @@ def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
     return ""
 
 
-def _method(choice: Choice) -> str:
+def _method(choice: Choice, changed: Changed | None, source: Model) -> str:
+    if changed is not None and choice.arithmetic == "exact" and not isinstance(source, StateSpace):
+        return "exact rational arithmetic, then double arithmetic"
     return "exact rational arithmetic" if choice.arithmetic == "exact" else "double arithmetic"
 
 
@@ -232,7 +306,8 @@ def _cautions(source: Model, result: Model, to: str) -> list[str]:
         and not any(s.name for s in getattr(result, "states", ()))
     ):
         notes.append("The states have new coordinates: their names and units are left behind.")
-    if source.offset is not None and source.offset.states is not None and result is not source:
+    carried = result.offset is not None and result.offset.states is not None
+    if source.offset is not None and source.offset.states is not None and not carried:
         notes.append("The operating point of the states is left behind with their coordinates.")
     if result.beyond_doubles:
         places = ", ".join(result.beyond_doubles[:3]) + (" ..." if len(result.beyond_doubles) > 3 else "")
