@@ -138,12 +138,19 @@ def _apply(steps: Steps, matrix: Array) -> None:
             matrix[k:] -= 2 * np.outer(vector, vector @ matrix[k:])
 
 
-def _deflate(A: Array, B: Array, C: Array, D: Array, tolerance: float) -> tuple[Array, Array, Array, Array]:
-    """Remove zeros at infinity until D has full row rank (Emami-Naeini & Van Dooren 1982, algorithm REDUCE)."""
+def _deflate(
+    A: Array, B: Array, C: Array, D: Array, tolerance: float, ranks: list[int] | None = None
+) -> tuple[Array, Array, Array, Array]:
+    """Remove zeros at infinity until D has full row rank (Emami-Naeini & Van Dooren 1982, algorithm REDUCE).
+
+    The rank of D at each step goes to the end of ``ranks``.
+    """
     A, B, C = A.copy(), B.copy(), C.copy()
+    ranks = [] if ranks is None else ranks
     while A.shape[0] and C.shape[0]:
         steps, D = _compress(D, tolerance)
         rank = len(steps)
+        ranks.append(rank)
         _apply(steps, C)
         if rank == C.shape[0]:
             break
@@ -208,6 +215,25 @@ def invariant_zeros(A: Array, B: Array, C: Array, D: Array) -> ComplexArray:
         a, c, b, d = _deflate(A.T, C.T, B.T, D.T, tolerance)
         A, B, C, D = a.T, b.T, c.T, d.T
     return _of_invertible(A, B, C, D)
+
+
+def infinite_structure(A: Array, B: Array, C: Array, D: Array) -> tuple[int, list[int]]:
+    """Return the normal rank of the transfer matrix, and the orders of its zeros at infinity from the smallest.
+
+    With sigma_k the rank of D after k steps of the deflation from the rows, sigma_k - sigma_(k-1) zeros at infinity have
+    order k [1]_. Ranks are decided as in `invariant_zeros`; the system is scaled as there.
+
+    References
+    ----------
+    .. [1] L. M. Silverman, Inversion of multivariable linear systems, IEEE Transactions on Automatic Control 14 (1969)
+           270-276 (from memory).
+    """
+    size = float(np.sqrt(sum(np.sum(part * part) for part in (A, B, C, D))))
+    tolerance = (A.shape[0] + B.shape[1] + C.shape[0]) * EPS * size
+    ranks: list[int] = []
+    D = _deflate(A, B, C, D, tolerance, ranks)[3]
+    ranks.append(_drop_rows(D, tolerance).shape[0])
+    return ranks[-1], [k for k in range(1, len(ranks)) for _ in range(ranks[k] - ranks[k - 1])]
 
 
 def _of_invertible(A: Array, B: Array, C: Array, D: Array) -> ComplexArray:
@@ -346,6 +372,12 @@ def poles(A: Array, E: Array | None) -> ComplexArray:
         return eigenvalues(A)
     n = A.shape[0]
     return zeros(A, np.zeros((n, 0)), np.zeros((0, n)), np.zeros((0, 0)), E)
+
+
+def structure_at_infinity(A: Array, B: Array, C: Array, D: Array) -> tuple[int, list[int]]:
+    """Return `infinite_structure` of a system in any units."""
+    with np.errstate(all="ignore"):
+        return infinite_structure(*scaled_system(A, B, C, D, None)[:4])
 
 
 def zeros(A: Array, B: Array, C: Array, D: Array, E: Array | None = None) -> ComplexArray:
