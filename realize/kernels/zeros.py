@@ -220,8 +220,8 @@ def invariant_zeros(A: Array, B: Array, C: Array, D: Array) -> ComplexArray:
 def infinite_structure(A: Array, B: Array, C: Array, D: Array) -> tuple[int, list[int]]:
     """Return the normal rank of the transfer matrix, and the orders of its zeros at infinity from the smallest.
 
-    With sigma_k the rank of D after k steps of the deflation from the rows, sigma_k - sigma_(k-1) zeros at infinity have
-    order k [1]_. Ranks are decided as in `invariant_zeros`; the system is scaled as there.
+    With sigma_k the rank of D after k steps of the deflation from the rows, sigma_k - sigma_(k-1) zeros at infinity
+    have order k [1]_. Ranks are decided as in `invariant_zeros`; the system is scaled as there.
 
     References
     ----------

@@ -8,6 +8,7 @@ import numpy as np
 
 from realize.models import FrequencyResponse, Model, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
+from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
 from realize.verification import View, view_of
 
@@ -25,7 +26,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     -------
     dict
         ``kind``, ``order``, ``minimal_order``, ``inputs``, ``outputs``, ``time``, ``poles`` and ``zeros`` as
-        [re, im, multiplicity] (zeros: one channel only, else channel by channel in ``channel_zeros``), ``stable``,
+        [re, im, multiplicity] (several channels: transmission zeros; those of each channel are ``channel_zeros``), what
+        `inspect_zeros.zeros_of` says (``transmission_zeros``, ``zeros_at_infinity``, ``normal_rank`` ...), ``stable``,
         ``hankel_singular_values`` (stable models), ``fragility``, ``digest``, ``cautions``. What is not known is None.
     """
     model = model_of(model)
@@ -48,9 +50,11 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     view = view_of(model)
     poles, zeros = _roots(view, cautions)
     record["poles"] = poles
-    record["zeros"] = zeros if p * m == 1 else None
+    matrix_zeros = zeros_of(view, cautions)
+    record["zeros"] = zeros if p * m == 1 else matrix_zeros["transmission_zeros"]
+    record |= matrix_zeros
     if p * m > 1 and view.fractions is not None:
-        record["channel_zeros"] = [[_listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
+        record["channel_zeros"] = [[listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
     record["minimal_order"] = _minimal_order(view, cautions)
     record["stable"] = _stable(view, poles)
     record["hankel_singular_values"] = _hankel(model, bool(record["stable"]), cautions)
@@ -62,14 +66,6 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     return record | {"cautions": cautions}
 
 
-def _listed(polynomial: Any) -> list[list[float]]:
-    from realize.kernels.exact.roots import roots
-
-    if polynomial.degree() < 1:
-        return []
-    return [[root.value.real, root.value.imag, root.multiplicity] for root in roots(polynomial)]
-
-
 def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None]:
     """Return poles of the whole model and zeros of a single channel; all that the model's own order has."""
     from realize.verification.views import double_poles, exact_fractions
@@ -78,21 +74,22 @@ def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None
     p, m = model.shape
     if view.fractions is None:
         values = double_poles(model)
-        cautions.append(
-            "Too large for exact arithmetic: poles are eigenvalues in double arithmetic, zeros are left out."
-        )
+        cautions.append("Too large for exact arithmetic: poles are eigenvalues in double arithmetic.")
         values = values[np.lexsort((-values.imag, values.real, np.abs(values)))]
         return [[value.real, value.imag, 1] for value in values.tolist()], None
     if isinstance(model, StateSpace):
         full = exact_fractions(model, cancel=False)[0][0][1]
-        return _listed(full), _listed(view.fractions[0][0][0]) if p * m == 1 else None
+        return listed(full), listed(view.fractions[0][0][0]) if p * m == 1 else None
     if p * m == 1:
         n, d = exact_fractions(model, cancel=False)[0][0]
-        return _listed(d), _listed(n)
+        return listed(d), listed(n)
+    counted = poles_of(view)
+    if counted is not None:
+        return counted, None
     merged: dict[tuple[float, float], int] = {}
     for row in view.fractions:
         for _, d in row:
-            for re, im, count in _listed(d):
+            for re, im, count in listed(d):
                 merged[re, im] = max(merged.get((re, im), 0), int(count))
     ordered = sorted(merged.items(), key=lambda item: (np.hypot(*item[0]), item[0][0], abs(item[0][1]), -item[0][1]))
     return [[re, im, count] for (re, im), count in ordered], None
@@ -105,6 +102,9 @@ def _minimal_order(view: View, cautions: list[str]) -> int | None:
     if view.model.shape == (1, 1):
         n, d = view.fractions[0][0]
         return max(n.degree(), d.degree(), 0)
+    form = smith_of(view)
+    if form is not None and form.proved:
+        return int(form.degree)
     from realize.kernels.exact.order import mcmillan_degree
 
     found = mcmillan_degree(

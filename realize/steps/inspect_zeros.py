@@ -6,7 +6,7 @@ from typing import Any
 
 import numpy as np
 
-from realize.models import Model, StateSpace
+from realize.models import StateSpace
 from realize.verification.views import View
 
 #: Most states, and most inputs or outputs, for which the Smith-McMillan form is formed exactly (about a second).
@@ -65,7 +65,8 @@ def zeros_of(view: View, cautions: list[str]) -> dict[str, Any]:
         if isinstance(model, StateSpace):
             from realize.kernels.exact.smith import decoupling_polynomials
 
-            found, invariant = decoupling_polynomials(*(model.exact(name) for name in "ABCDE"), form)
+            A, B, C, D, E = (model.exact(name) for name in "ABCDE")
+            found, invariant = decoupling_polynomials(A, B, C, D, E, form)
             record["invariant_zeros"] = listed(invariant)
             record["decoupling_zeros"] = {
                 "input": listed(found.input),
@@ -125,9 +126,3 @@ def poles_of(view: View) -> list[list[float]] | None:
     """Return the poles of a transfer matrix as often as its McMillan degree counts them; None where unknown."""
     form = smith_of(view)
     return None if form is None else listed(form.pole_polynomial)
-
-
-def size_note(model: Model) -> str:
-    """Return words about what was left out for a matrix too large for exact zeros."""
-    p, m = model.shape
-    return f"{p} outputs, {m} inputs and order {model.order}: too large for exact transmission zeros."

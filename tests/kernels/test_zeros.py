@@ -215,3 +215,30 @@ def test_inputs_are_left_alone() -> None:
     invariant_zeros(*given)
     zeros(*given, np.diag([1.0, 1.0, 0.0, 2.0]))
     assert all(np.array_equal(a, b) for a, b in zip(given, before, strict=True))
+
+
+def test_structure_at_infinity_against_the_exact_form() -> None:
+    """Orders and normal rank from deflation in doubles, units stretched, against the exact Smith-McMillan form."""
+    from realize.kernels.exact.smith import smith_mcmillan
+    from realize.kernels.zeros import structure_at_infinity
+
+    rng = np.random.default_rng(5)
+    for p, m, late in ((2, 2, 0), (3, 2, 1), (2, 2, 2), (2, 3, 1), (1, 1, 3)):
+        n = 5
+        A = rng.integers(-4, 5, (n, n)).astype(float)
+        B, C, D = rng.integers(-3, 4, (n, m)) + 0.0, rng.integers(-3, 4, (p, n)) + 0.0, np.zeros((p, m))
+        # integrators before one output push its zeros towards infinity
+        size = n + late
+        a, b, c = np.zeros((size, size)), np.zeros((size, m)), np.zeros((p, size))
+        a[:n, :n], b[:n], c[:, :n] = A, B, C
+        if late:
+            a[n, :n], c[0] = C[0], 0.0
+            for k in range(n, size - 1):
+                a[k + 1, k] = 1.0
+            c[0, size - 1] = 1.0
+        ratios = [[[float(x).as_integer_ratio() for x in row] for row in part] for part in (a, b, c, D)]
+        numerators, d = states.transfer_matrix(*ratios, None)
+        exact = smith_mcmillan([[(numerator, d) for numerator in row] for row in numerators])
+        units = 2.0 ** rng.integers(-20, 20, size)
+        a, b, c = a / units[:, None] * units * 2.0**30, b / units[:, None] * 2.0**-9, c * units
+        assert structure_at_infinity(a, b, c, D) == (exact.normal_rank, list(exact.zeros_at_infinity))

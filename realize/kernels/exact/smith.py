@@ -1,10 +1,10 @@
 """Smith-McMillan form of an exact transfer matrix, and decoupling zeros of exact state models.
 
-With D the least common denominator of the entries and N = D G, the determinantal divisor Delta_k is the greatest common
-divisor of all minors of N of order k; the invariant polynomials are Delta_k / Delta_(k-1), and each one over D, reduced,
-is epsilon_k / psi_k. Poles are the roots of the psi_k, transmission zeros those of the epsilon_k. At infinity the least
-relative degree v_k of the minors of order k takes the place of the divisor: the orders are v_k - v_(k-1), a zero where
-positive, a pole where negative.
+With D the least common denominator of the entries and N = D G, the determinantal divisor Delta_k is the greatest
+common divisor of all minors of N of order k; the invariant polynomials are Delta_k / Delta_(k-1), and each one over D,
+reduced, is epsilon_k / psi_k. Poles are the roots of the psi_k, transmission zeros those of the epsilon_k. At infinity the
+least relative degree v_k of the minors of order k takes the place of the divisor: the orders are v_k - v_(k-1), a zero
+where positive, a pole where negative.
 
 Where there are too many minors, determinants of a few random combinations of rows and columns (Cauchy and Binet) have
 the same greatest common divisor unless the drawn integers satisfy an equation, which has a probability of about 1e-9.
@@ -165,9 +165,7 @@ def _drawn_divisors(N: list[list[fmpq_poly]]) -> tuple[list[fmpq_poly], list[int
             left = [[draw.randint(1, DRAWN) for _ in range(p)] for _ in range(k)]
             right = [[draw.randint(1, DRAWN) for _ in range(k)] for _ in range(m)]
             half = [[sum((w * N[i][j] for i, w in enumerate(row)), ZERO) for j in range(m)] for row in left]
-            mixed = [
-                [sum((line[j] * right[j][c] for j in range(m)), ZERO) for c in range(k)] for line in half
-            ]
+            mixed = [[sum((line[j] * right[j][c] for j in range(m)), ZERO) for c in range(k)] for line in half]
             found.append(determinant(mixed))
         if not any(found):
             break
@@ -227,7 +225,7 @@ def decoupling_polynomials(
     .. [2] A. G. J. MacFarlane, N. Karcanias, Poles and zeros of linear multivariable systems, International Journal of
            Control 24 (1976) 33-74 (from memory).
     """
-    system = _System(*([[fraction(x) for x in row] for row in part] for part in (A, B, C, D)), E)
+    system = _System(_rational(A), _rational(B), _rational(C), _rational(D), E)
     modes = system.characteristic()
     if modes.degree() == form.pole_polynomial.degree():
         return Decoupling(ONE, ONE, ONE), form.zero_polynomial
@@ -270,7 +268,7 @@ class _System:
 
     def reduced(self, draw: random.Random, r: int) -> _System:
         """Return r inputs and outputs, the others added to states and signals with drawn weights."""
-        n, p, m = len(self.A), len(self.D), len(self.D[0]) if self.D else 0
+        n = len(self.A)
         rows = [a + b for a, b in zip(self.A, self.B, strict=True)]
         rows += [c + d for c, d in zip(self.C, self.D, strict=True)]
         P = _matrix(rows)
@@ -300,6 +298,10 @@ class _System:
         for _ in range(len(self.D) - 1):
             found = quotient(found, modes)
         return found
+
+
+def _rational(rows: Ratios) -> list[list[fmpq]]:
+    return [[fraction(x) for x in row] for row in rows]
 
 
 def _matrix(rows: list[list[fmpq]]) -> fmpq_mat:
