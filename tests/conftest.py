@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
 
 Gaussian = tuple[Fraction, Fraction]
 ZERO: Gaussian = (Fraction(0), Fraction(0))
@@ -131,12 +131,41 @@ class Oracle:
                         c = Fraction(float(model.C[i, k]))
                         value = _add(value, (c * x[k][j][0], c * x[k][j][1]))
                     grid[i][j] = value
+        elif isinstance(model, SecondOrder):
+            K, D, M = (cls._matrix(model, name) for name in ("stiffness", "damping", "mass"))
+            reads = [cls._matrix(model, f"{name}_output") for name in ("position", "velocity", "acceleration")]
+            F, direct = cls._matrix(model, "input"), cls._matrix(model, "direct")
+            powers = [ONE, s, _mul(s, s)]
+            rows = [
+                [cls._sum(powers, [part[i][k] for part in (K, D, M)]) for k in range(len(M))]
+                + [(value, Fraction(0)) for value in F[i]]
+                for i in range(len(M))
+            ]
+            x = cls._eliminate(rows)
+            for i in range(p):
+                for j in range(m):
+                    value = (direct[i][j], Fraction(0))
+                    for k in range(len(M)):
+                        value = _add(value, _mul(cls._sum(powers, [part[i][k] for part in reads]), x[k][j]))
+                    grid[i][j] = value
         else:
             raise TypeError(model.kind)
         return grid
 
+    @classmethod
+    def _matrix(cls, model: Model, name: str) -> list[list[Fraction]]:
+        entry = cls._entries(model, name)
+        return [[entry(value, i, j) for j, value in enumerate(row)] for i, row in enumerate(getattr(model, name))]
+
     @staticmethod
-    def _solve(model: StateSpace, s: Gaussian) -> list[list[Gaussian]]:
+    def _sum(powers: list[Gaussian], values: list[Fraction]) -> Gaussian:
+        total = ZERO
+        for power, value in zip(powers, values, strict=True):
+            total = _add(total, (power[0] * value, power[1] * value))
+        return total
+
+    @classmethod
+    def _solve(cls, model: StateSpace, s: Gaussian) -> list[list[Gaussian]]:
         """Gauss-Jordan elimination of (s E - A) X = B over the Gaussian rationals."""
         n, m = model.B.shape
         E = np.eye(n) if model.E is None else model.E
@@ -145,6 +174,12 @@ class Oracle:
             + [_number(float(model.B[i, j])) for j in range(m)]
             for i in range(n)
         ]
+        return cls._eliminate(rows)
+
+    @staticmethod
+    def _eliminate(rows: list[list[Gaussian]]) -> list[list[Gaussian]]:
+        """Return X of P X = Q from the rows of [P Q]."""
+        n = len(rows)
         for k in range(n):
             pivot = next((r for r in range(k, n) if rows[r][k] != ZERO), None)
             if pivot is None:

@@ -9,15 +9,15 @@ from __future__ import annotations
 
 import heapq
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
-from realize.conversions import builders, digits, doubles
+from realize.conversions import builders, digits, doubles, second_order
 from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
-from realize.models import Model, StateSpace
+from realize.models import Model, SecondOrder, StateSpace
 from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 
@@ -36,6 +36,9 @@ class Task:
     arithmetic: str = "auto"
     ordering: str | None = None
     force: bool = False
+    #: What the rows have to say: sentences for people, and details of the receipt.
+    notes: list[str] = field(default_factory=list, compare=False)
+    details: dict[str, Any] = field(default_factory=dict, compare=False)
 
     @property
     def changes_coordinates(self) -> bool:
@@ -75,7 +78,31 @@ SECTIONS_IN_SERIES = Row(
 )
 MODAL_BLOCKS = Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair")
 
+MASS_AS_IT_STANDS = Row(
+    "second-order",
+    "state-space",
+    second_order.states_from_second_order,
+    False,
+    "positions and velocities as states; the mass matrix inverted only where that is harmless",
+)
+BLOCKS_READ_OFF = Row(
+    "state-space",
+    "second-order",
+    second_order.second_order_from_states,
+    True,
+    "mass, damping and stiffness where they stand as blocks in E and A",
+)
+
 ROWS: tuple[Row, ...] = (
+    MASS_AS_IT_STANDS,
+    BLOCKS_READ_OFF,
+    Row(
+        "second-order",
+        "exact-fractions",
+        builders.fractions,
+        True,
+        "exact C adj(P) F + G det(P) over det(P), P = s^2 M + s D + K",
+    ),
     Row("transfer-function", "exact-fractions", builders.fractions, True, "coefficients as exact rationals"),
     Row("zero-pole-gain", "exact-fractions", builders.fractions, True, "exact products of the factors"),
     Row("pole-residue", "exact-fractions", builders.fractions, True, "exact sum of the partial fractions"),
@@ -126,6 +153,8 @@ ROWS: tuple[Row, ...] = (
 
 #: Rows in double arithmetic: nothing exact is formed.
 DOUBLE_ROWS: tuple[Row, ...] = (
+    MASS_AS_IT_STANDS,
+    BLOCKS_READ_OFF,
     Row("zero-pole-gain", "factors", doubles.factors_as_given, True, "poles, zeros and gain as they stand"),
     Row(
         "transfer-function",
@@ -210,10 +239,10 @@ def choose_arithmetic(task: Task) -> Choice:
 def default_form(model: Model) -> str:
     """Return the coordinates that are used unless others are asked for ('' = leave a state model as it is).
 
-    State models stay as they are. Partial fractions, and models with several channels, become modal; a single channel
-    becomes a cascade.
+    State models stay as they are, and second-order ones keep positions and velocities. Partial fractions, and models
+    with several channels, become modal; a single channel becomes a cascade.
     """
-    if isinstance(model, StateSpace):
+    if isinstance(model, (StateSpace, SecondOrder)):
         return ""
     if model.kind == "pole-residue" or model.shape != (1, 1):
         return "modal"
@@ -259,6 +288,8 @@ def plan_route(task: Task) -> list[Row]:
             if row.source == node and (row.target not in done or row.target == goal):
                 count += 1
                 heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
+    if task.to == "second-order":
+        raise Refused(second_order.STRUCTURE_NEEDED.format(kind=f"a {start} model"))
     if task.arithmetic != "auto":
         raise Refused(f"there is no way from {start} to {goal} in {task.arithmetic} arithmetic")
     raise Refused(
@@ -268,7 +299,7 @@ def plan_route(task: Task) -> list[Row]:
             "leave out --digits, or reduce the model first"
             if task.digits is not None
             else "ask for pole-residue, zero-pole-gain or state-space --form modal, or reduce the model first"
-            if isinstance(task.model, StateSpace)
+            if isinstance(task.model, (StateSpace, SecondOrder))
             else "split it into smaller plants, or give it as a state model"
         )
         + f"; --arithmetic exact{'' if task.digits is not None else ' or double'} does it all the same"

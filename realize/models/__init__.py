@@ -4,6 +4,7 @@ from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Signal, Tim
 from realize.models.digest import digest, mark
 from realize.models.frequency_response import FrequencyResponse
 from realize.models.pole_residue import PoleResidue
+from realize.models.second_order import SecondOrder
 from realize.models.sections import Sections
 from realize.models.state_space import StateSpace
 from realize.models.transfer_function import TransferFunction
@@ -11,7 +12,15 @@ from realize.models.zero_pole_gain import ZeroPoleGain
 
 MODEL_TYPES: dict[str, type[Model]] = {
     model.kind: model
-    for model in (TransferFunction, ZeroPoleGain, PoleResidue, Sections, StateSpace, FrequencyResponse)
+    for model in (
+        TransferFunction,
+        ZeroPoleGain,
+        PoleResidue,
+        Sections,
+        StateSpace,
+        SecondOrder,
+        FrequencyResponse,
+    )
 }
 
 __all__ = [
@@ -22,6 +31,7 @@ __all__ = [
     "Model",
     "Offset",
     "PoleResidue",
+    "SecondOrder",
     "Sections",
     "Signal",
     "StateSpace",

@@ -6,10 +6,12 @@ from typing import Any
 
 from realize.models.base import Model
 from realize.models.pole_residue import PoleResidue
+from realize.models.second_order import SecondOrder
 from realize.models.sections import Sections
 from realize.models.state_space import StateSpace
 from realize.models.transfer_function import TransferFunction
 from realize.models.zero_pole_gain import ZeroPoleGain
+from realize.schema import KINDS
 
 
 def form_fractions(model: Model) -> list[list[tuple[Any, Any]]]:
@@ -57,5 +59,11 @@ def _formed(model: Model) -> list[list[tuple[Any, Any]]]:
         return [[polynomials.from_sections(model.exact("sections"), model.exact("gain"))]]
     if isinstance(model, StateSpace):
         numerators, denominator = states.transfer_matrix(*(model.exact(name) for name in "ABCDE"))
+        return [[(numerators[i][j], denominator) for j in range(m)] for i in range(p)]
+    if isinstance(model, SecondOrder):
+        from realize.kernels.exact.second_order import transfer_matrix
+
+        fields = (model.exact(f.name) for f in KINDS[model.kind].fields)
+        numerators, denominator = transfer_matrix(*fields)
         return [[(numerators[i][j], denominator) for j in range(m)] for i in range(p)]
     raise TypeError(f"a {model.kind} has no exact fractions")

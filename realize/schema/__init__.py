@@ -1,7 +1,16 @@
 """The schema: kinds, fields, verbs, options, spellings, claims and records, in one place."""
 
 from realize.schema.claims import BASES, CLAIMS, STRUCTURED, ClaimDefinition
-from realize.schema.kinds import COMMON_FIELDS, FORMAT_VERSION, HOLDS, KINDS, PARAMETRIC_KINDS, Field, Kind
+from realize.schema.kinds import (
+    COMMON_FIELDS,
+    FORMAT_VERSION,
+    HOLDS,
+    KINDS,
+    PARAMETRIC_KINDS,
+    UNIVERSAL_KINDS,
+    Field,
+    Kind,
+)
 from realize.schema.records import (
     Claim,
     ModelMark,
@@ -43,6 +52,7 @@ __all__ = [
     "RECEIPT_OPTIONS",
     "REDUCTION_METHODS",
     "STRUCTURED",
+    "UNIVERSAL_KINDS",
     "VERBS",
     "Claim",
     "ClaimDefinition",

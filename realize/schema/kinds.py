@@ -51,6 +51,8 @@ class Kind:
     says: str
     fields: tuple[Field, ...]
     parametric: bool = True
+    #: False where only plants of a certain structure can be written in this kind.
+    universal: bool = True
 
 
 KINDS: dict[str, Kind] = {
@@ -108,6 +110,21 @@ KINDS: dict[str, Kind] = {
             ),
         ),
         Kind(
+            "second-order",
+            "M q'' + D q' + K q = F u, y = P q + V q' + W q'' + G u: mass, damping and stiffness; continuous time.",
+            (
+                Field("mass", "matrix", True, "M, coordinates x coordinates; may be singular"),
+                Field("damping", "matrix", False, "D, coordinates x coordinates; zero unless given"),
+                Field("stiffness", "matrix", True, "K, coordinates x coordinates"),
+                Field("input", "matrix", True, "F, coordinates x inputs"),
+                Field("position_output", "matrix", False, "P, outputs x coordinates; zero unless given"),
+                Field("velocity_output", "matrix", False, "V, outputs x coordinates; zero unless given"),
+                Field("acceleration_output", "matrix", False, "W, outputs x coordinates; zero unless given"),
+                Field("direct", "matrix", False, "G, outputs x inputs; zero unless given"),
+            ),
+            universal=False,
+        ),
+        Kind(
             "frequency-response",
             "Response at listed frequencies: measured or computed data.",
             (
@@ -123,6 +140,8 @@ KINDS: dict[str, Kind] = {
 }
 
 PARAMETRIC_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric)
+#: Kinds that can hold every rational plant.
+UNIVERSAL_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric and kind.universal)
 
 #: Fields that every kind has, beside its own.
 COMMON_FIELDS: dict[str, str] = {

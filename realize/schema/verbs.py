@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from realize.schema.kinds import PARAMETRIC_KINDS
+from realize.schema.kinds import PARAMETRIC_KINDS, UNIVERSAL_KINDS
 
 FORMS = (
     "cascade",
@@ -84,7 +84,7 @@ VERBS: dict[str, Verb] = {
             "Turn a measured frequency response into a model.",
             ("DATA",),
             (
-                Option("to", "choice", "kind of the result", PARAMETRIC_KINDS, "state-space", "KIND"),
+                Option("to", "choice", "kind of the result", UNIVERSAL_KINDS, "state-space", "KIND"),
                 Option(
                     "order", "order", "number of poles: N, a range A..B, or auto", default="auto", metavar="N|A..B|auto"
                 ),

@@ -156,7 +156,7 @@ def convert(
             route = plan_route(task)
             result, shape = convert_model(task, route), _form_of(task, route)
             claims = conversion_claims(source, result, shape in STRUCTURED, limits)
-        cautions = _cautions(source, result, to) + _costly(choice)
+        cautions = [*_cautions(source, result, to), *task.notes, *_costly(choice)]
         return finish(
             "convert",
             f"{_method(choice, changed, source) if route else 'left as it was'}, {shape or to}",
@@ -174,6 +174,7 @@ def convert(
                 "predicted_operations": float(f"{choice.predicted:.3g}"),
                 "budget": choice.budget,
                 **({"coordinates": changed.record} if changed else {}),
+                **task.details,
             },
             digits=digits,
         )

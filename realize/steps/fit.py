@@ -10,7 +10,7 @@ import numpy as np
 from realize.conversions import Task, convert_model, plan_route
 from realize.errors import InputError, UsageError
 from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue
-from realize.schema import FIT_METHODS, PARAMETRIC_KINDS, Claim, judge
+from realize.schema import FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish
 from realize.steps.second_opinion import asking
@@ -61,8 +61,8 @@ def fit(
     source = model_of(data)
     if not isinstance(source, FrequencyResponse):
         raise UsageError(f"fit takes a frequency response, and this is a {source.kind}; use convert or reduce")
-    if to not in PARAMETRIC_KINDS:
-        raise UsageError(f"no kind {to!r} to fit; there are: {', '.join(PARAMETRIC_KINDS)}")
+    if to not in UNIVERSAL_KINDS:
+        raise UsageError(f"no kind {to!r} to fit; there are: {', '.join(UNIVERSAL_KINDS)}")
     if method not in FIT_METHODS:
         raise UsageError(f"no method {method!r}; there are: {', '.join(FIT_METHODS)}")
     given = limits or {}

@@ -6,10 +6,11 @@ from typing import Any
 
 import numpy as np
 
-from realize.models import FrequencyResponse, Model, StateSpace, mark
+from realize.models import FrequencyResponse, Model, SecondOrder, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
+from realize.steps.structure import modes_of
 from realize.verification import View, view_of
 
 #: Poles this far apart in size, fastest over slowest, are worth a word.
@@ -27,7 +28,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     dict
         ``kind``, ``order``, ``minimal_order``, ``inputs``, ``outputs``, ``time``, ``poles`` and ``zeros`` as
         [re, im, multiplicity] (several channels: transmission zeros; those of each channel are ``channel_zeros``), what
-        `inspect_zeros.zeros_of` says (``transmission_zeros``, ``zeros_at_infinity``, ``normal_rank`` ...), ``stable``,
+        `inspect_zeros.zeros_of` says (``transmission_zeros``, ``zeros_at_infinity``, ``normal_rank`` ...),
+        ``modes`` of a second-order model, ``stable``,
         ``hankel_singular_values`` (stable models), ``fragility``, ``digest``, ``cautions``. What is not known is None.
     """
     model = model_of(model)
@@ -53,6 +55,9 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     matrix_zeros = zeros_of(view, cautions)
     record["zeros"] = zeros if p * m == 1 else matrix_zeros["transmission_zeros"]
     record |= matrix_zeros
+    modes = modes_of(model, poles)
+    if modes is not None:
+        record["modes"] = modes
     if p * m > 1 and view.fractions is not None:
         record["channel_zeros"] = [[listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
     record["minimal_order"] = _minimal_order(view, cautions)
@@ -77,7 +82,7 @@ def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None
         cautions.append("Too large for exact arithmetic: poles are eigenvalues in double arithmetic.")
         values = values[np.lexsort((-values.imag, values.real, np.abs(values)))]
         return [[value.real, value.imag, 1] for value in values.tolist()], None
-    if isinstance(model, StateSpace):
+    if isinstance(model, (StateSpace, SecondOrder)):
         full = exact_fractions(model, cancel=False)[0][0][1]
         return listed(full), listed(view.fractions[0][0][0]) if p * m == 1 else None
     if p * m == 1:
@@ -125,7 +130,7 @@ def _stable(view: View, poles: list[Any]) -> bool | None:
         from realize.verification.views import exact_fractions
 
         inside = inside_unit_circle if edge else inside_left_half_plane
-        if isinstance(view.model, StateSpace):
+        if isinstance(view.model, (StateSpace, SecondOrder)):
             polynomials = [exact_fractions(view.model, cancel=False)[0][0][1]]
         else:
             polynomials = [d for row in view.fractions for _, d in row]

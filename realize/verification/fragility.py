@@ -6,6 +6,8 @@ With u = 2^-53 and each number changed by at most u times itself, at one frequen
     zero-pole-gain       u (1 + sum (|Re z| + |Im z|) / |s - z| + the same for poles)
     pole-residue         u (sum |r| / |s - p|^k + k |r| (|Re p| + |Im p|) / |s - p|^(k+1) + sum |d_k s^k|) / |G|
     sections             the sum over the sections of the transfer function's formula
+    second order         u (|C X| (|s^2 M| + |s D| + |K|) |X F| + |C X| |F| + sum |s^k C_k| |X F| + |G|) / |G(s)|,
+                         X = (s^2 M + s D + K)^-1, C = P + s V + s^2 W
     state space          u (|C X| |B| + |C X| |A| |X B| + |C| |X B| + |D| (+ |s| |C X| |E| |X B|)) / |G|,
                          X = (sE - A)^-1
 
@@ -20,7 +22,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels.response import balanced_states, scaled_polynomial
-from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -80,6 +82,8 @@ def _relative(model: Model, points: ComplexArray) -> Array:
     p, m = model.shape
     if isinstance(model, StateSpace):
         return _states(model, points)
+    if isinstance(model, SecondOrder):
+        return _second_order(model, points)
     if isinstance(model, TransferFunction) and model.shape == (1, 1) and not model.decimals:
         parts = [_plain_growth(line[0][0], points) for line in (model.numerator, model.denominator)]
         if parts[0] is not None and parts[1] is not None:
@@ -151,6 +155,29 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
         if E is not None:
             change = change + abs(s) * (row @ np.abs(E) @ column)
         size = np.linalg.norm(value)
+        result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
+    return result
+
+
+def _second_order(model: SecondOrder, points: ComplexArray) -> Array:
+    M, D, K, F, outputs, direct = model.arguments
+    n = M.shape[0]
+    if n > 100:
+        points = points[:: max(1, points.size // 40)]
+    result = np.full(points.size, np.nan)
+    for k, s in enumerate(points.tolist()):
+        powers = [1.0, s, s * s]
+        P, C = (sum(w * part for w, part in zip(powers, parts, strict=True)) for parts in ((K, D, M), outputs))
+        p, c = (
+            sum(abs(w) * np.abs(part) for w, part in zip(powers, parts, strict=True)) for parts in ((K, D, M), outputs)
+        )
+        try:
+            right, left = np.linalg.solve(P, F.astype(complex)), np.linalg.solve(P.T, C.T).T
+        except np.linalg.LinAlgError:
+            continue
+        row, column = np.abs(left), np.abs(right)
+        change = row @ p @ column + row @ np.abs(F) + c @ column + np.abs(direct)
+        size = np.linalg.norm(C @ right + direct)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result
 

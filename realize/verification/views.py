@@ -7,7 +7,6 @@ point drawn from 2^61 with probability at most 2n/2^61 (Schwartz 1980; Zippel 19
 
 from __future__ import annotations
 
-import random
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from contextvars import ContextVar
@@ -18,8 +17,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
 from realize.models.fractions import form_fractions
+from realize.verification.formation import check_at_a_point
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -178,7 +178,7 @@ class View:
 
         if polynomial.degree() < 1:
             return NO_DYNAMICS
-        if isinstance(self.model, StateSpace) and polynomial.degree() > LARGE_DEGREE:
+        if isinstance(self.model, (StateSpace, SecondOrder)) and polynomial.degree() > LARGE_DEGREE:
             image = polynomial if self.period is None else bilinear_image(polynomial)
             even, odd = even_odd(image)
             common = even.gcd(odd) if odd else even
@@ -307,6 +307,10 @@ def _predicted_cost(model: Model) -> float:
         form = cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
         # each channel has its own numerator, whose roots are sought
         return form + (1 + p * m) * ROOT_COST * order**3
+    if isinstance(model, SecondOrder):
+        pencil = model.pencil
+        largest = StateSpace(A=pencil.A, B=pencil.B, C=pencil.C, D=pencil.D, E=pencil.E)
+        return predicted_cost(largest)
     if isinstance(model, TransferFunction):
         degrees = [
             n.size + d.size
@@ -354,6 +358,10 @@ def double_poles(model: Model) -> ComplexArray:
 
         values = scipy.linalg.eigvals(A, E)
         return values[np.isfinite(values)]
+    if isinstance(model, SecondOrder):
+        pencil = model.pencil
+        n = model.order
+        return double_poles(StateSpace(A=pencil.A[:n, :n], B=pencil.B[:n], C=np.zeros((1, n)), E=pencil.E[:n, :n]))
     if isinstance(model, PoleResidue):
         return np.asarray(model.poles)
     if isinstance(model, ZeroPoleGain):
@@ -380,101 +388,7 @@ def exact_fractions(model: Model, cancel: bool = True) -> list[list[tuple[Any, A
     from realize.kernels.exact import polynomials
 
     fractions = form_fractions(model)
-    _check_at_a_point(model, fractions)
+    check_at_a_point(model, fractions)
     if cancel:
         return [[polynomials.reduce_fraction(n, d) for n, d in row] for row in fractions]
     return fractions
-
-
-class FormationFault(RuntimeError):
-    """Exact fractions that do not agree with the model they were formed from: a bug."""
-
-
-def _check_at_a_point(model: Model, fractions: list[list[tuple[Any, Any]]]) -> None:
-    """Compare the fractions with the model's own structure at one random integer point, in exact arithmetic."""
-    from realize.kernels.exact.numbers import fraction
-
-    rng = random.Random(model.kind + str(model.shape) + str(model.order))
-    # a point of 20 bits where the structure costs an exact solve per point, of 61 bits else
-    for _ in range(8):
-        x = fraction((rng.getrandbits(61) | 1, 1 << 20))
-        values = _structural_value(model, x)
-        if values is None:
-            continue
-        for i, row in enumerate(fractions):
-            for j, (n, d) in enumerate(row):
-                below = d(x)
-                if below == 0:
-                    break
-                if n(x) != values[i][j] * below:
-                    raise FormationFault(f"channel output {i}, input {j}: fraction and structure disagree at {x}")
-        return
-
-
-def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
-    """Return the model at the rational point x by its own structure, or None where x is a pole."""
-    from realize.kernels.exact import states
-    from realize.kernels.exact.numbers import complex_fraction, fraction
-
-    p, m = model.shape
-    zero, one = fraction(0), fraction(1)
-
-    def horner(ratios: Any) -> Any:
-        value = zero
-        for ratio in ratios:
-            value = value * x + fraction(ratio)
-        return value
-
-    def product(roots: Any) -> Any:
-        re, im = one, zero
-        for root in roots:
-            a, b = complex_fraction(root)
-            a, b = x - a, -b
-            re, im = re * a - im * b, re * b + im * a
-        return re
-
-    if isinstance(model, TransferFunction):
-        above, under = model.exact("numerator"), model.exact("denominator")
-        pairs = [[(horner(above[i][j]), horner(under[i][j])) for j in range(m)] for i in range(p)]
-    elif isinstance(model, ZeroPoleGain):
-        zeros, poles, gain = model.exact("zeros"), model.exact("poles"), model.exact("gain")
-        pairs = [
-            [(product(zeros[i][j]) * fraction(gain[i][j]), product(poles[i][j])) for j in range(m)] for i in range(p)
-        ]
-    elif isinstance(model, Sections):
-        above, under = fraction(model.exact("gain")), one
-        for numerator, denominator in model.exact("sections"):
-            above, under = above * horner(numerator), under * horner(denominator)
-        pairs = [[(above, under)]]
-    elif isinstance(model, PoleResidue):
-        poles, residues, direct = model.exact("poles"), model.exact("residues"), model.exact("direct")
-        values = [[horner([matrix[i][j] for matrix in direct]) for j in range(m)] for i in range(p)]
-        for pole, residue, power in zip(poles, residues, model.powers, strict=True):
-            a, b = complex_fraction(pole)
-            a, b = x - a, -b
-            size = a * a + b * b
-            if size == 0:
-                return None
-            # 1 / (x - pole) = conj / |.|^2, then the power
-            u, v = a / size, -b / size
-            re, im = one, zero
-            for _ in range(int(power)):
-                re, im = re * u - im * v, re * v + im * u
-            for i in range(p):
-                for j in range(m):
-                    c, d = complex_fraction(residue[i][j])
-                    # imaginary parts cancel between conjugates
-                    values[i][j] += re * c - im * d
-        return values
-    elif isinstance(model, StateSpace):
-        A, B, C, D, E = (model.exact(name) for name in "ABCDE")
-        try:
-            response = states.response_at(A, B, C, D, E, x, zero)
-        except ZeroDivisionError:
-            return None
-        return [[value[0] for value in row] for row in response]
-    else:
-        raise TypeError(model.kind)
-    if any(under == 0 for row in pairs for _, under in row):
-        return None
-    return [[above / under for above, under in row] for row in pairs]

@@ -13,7 +13,7 @@ import pytest
 from realize.conversions import Task, choose_arithmetic, convert_model, plan_route
 from realize.errors import Refused, UsageError
 from realize.models import Model, PoleResidue, Sections, StateSpace, TimeBase, TransferFunction, ZeroPoleGain
-from realize.schema import PARAMETRIC_KINDS
+from realize.schema import UNIVERSAL_KINDS
 from realize.steps import convert, explain
 
 QUIET = "--no-second-opinion"
@@ -28,7 +28,7 @@ SOURCES: dict[str, Model] = {
         A=[[0.0, 1.0, 0.5], [-2.0, -3.0, 0.0], [0.25, 0.0, -4.0]], B=[[0.0], [1.0], [1.0]], C=[[1.0, 0.0, 2.0]]
     ),
 }
-FORMS = [(kind, None) for kind in PARAMETRIC_KINDS] + [
+FORMS = [(kind, None) for kind in UNIVERSAL_KINDS] + [
     ("state-space", form) for form in ("cascade", "modal", "controllable-companion", "observable-companion")
 ]
 
@@ -125,7 +125,7 @@ def test_exact_beyond_the_budget_is_done_and_cautioned(monkeypatch: pytest.Monke
     assert again.receipt.details["arithmetic"] == "double"
 
 
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 @pytest.mark.parametrize("size", [1e-300, 1e-150, 1e150, 1e300])
 def test_extremes_are_done_or_refused_in_words(size: float, to: str) -> None:
     plants: list[Model] = [

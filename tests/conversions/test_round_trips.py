@@ -19,7 +19,7 @@ import scipy.signal
 
 from realize.errors import Refused
 from realize.models import Model, StateSpace, TimeBase, TransferFunction, ZeroPoleGain
-from realize.schema import PARAMETRIC_KINDS
+from realize.schema import UNIVERSAL_KINDS
 from realize.steps import convert
 from realize.steps.receipts import probe_frequencies
 from realize.verification import Pair, View, fragility
@@ -107,7 +107,7 @@ def round_trip(source: Model, first: str, second: str) -> None:
         assert back.order == start.order
 
 
-@pytest.mark.parametrize(("first", "second"), list(permutations(PARAMETRIC_KINDS, 2)))
+@pytest.mark.parametrize(("first", "second"), list(permutations(UNIVERSAL_KINDS, 2)))
 @pytest.mark.parametrize("name", SINGLE)
 def test_single_channels(name: str, first: str, second: str) -> None:
     try:
@@ -118,7 +118,7 @@ def test_single_channels(name: str, first: str, second: str) -> None:
 
 
 @pytest.mark.parametrize(
-    ("first", "second"), [pair for pair in permutations(PARAMETRIC_KINDS, 2) if "sections" not in pair]
+    ("first", "second"), [pair for pair in permutations(UNIVERSAL_KINDS, 2) if "sections" not in pair]
 )
 @pytest.mark.parametrize("name", SEVERAL)
 def test_several_channels(name: str, first: str, second: str) -> None:

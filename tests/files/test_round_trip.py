@@ -86,6 +86,14 @@ def records(draw, kind):
             record["E"] = draw(matrix(n, n))
         if draw(st.booleans()):
             record["states"] = [{"name": f"x{k}", "unit": draw(SAFE)} for k in range(n)]
+    elif kind == "second-order":
+        n = max(n, 1)
+        record.update({name: draw(matrix(n, n)) for name in ("mass", "damping", "stiffness")}, input=draw(matrix(n, m)))
+        outputs = ("position_output", "velocity_output", "acceleration_output")
+        for name in draw(st.sets(st.sampled_from(outputs), min_size=1)):
+            record[name] = draw(matrix(p, n))
+        record["direct"] = draw(matrix(p, m))
+        record.pop("time", None)
     else:
         frequency = sorted(draw(st.sets(st.floats(0, 1e300), min_size=1, max_size=4)))
         record["frequency"] = frequency

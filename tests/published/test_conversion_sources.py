@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 
 from realize.models import Model, PoleResidue, Sections, StateSpace, TimeBase, TransferFunction, ZeroPoleGain
-from realize.schema import PARAMETRIC_KINDS
+from realize.schema import UNIVERSAL_KINDS
 from realize.steps import convert, inspect
 
 HARD = Path(__file__).parents[3] / "shared" / "data" / "hard-inputs.json"
@@ -35,7 +35,7 @@ def a_weighting() -> ZeroPoleGain:
     return ZeroPoleGain(zeros=[0.0] * 4, poles=[-f1, -f1, -f2, -f3, -f4, -f4], gain=f4**2 * 10**0.1)
 
 
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 def test_a_weighting_in_every_kind(to: str) -> None:
     """Four zeros at the origin under poles from 20 Hz to 12 kHz: 70 dB down at 10 Hz, where sums of residues cancel."""
     made = convert(a_weighting(), to)
@@ -48,7 +48,7 @@ RIAA = (3180e-6, 318e-6, 75e-6)
 RIAA_TABLE = {20: 19.3, 50: 16.9, 100: 13.1, 500: 2.6, 1000: 0.0, 2000: -2.6, 5000: -8.2, 10000: -13.7, 20000: -19.6}
 
 
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 def test_riaa_in_every_kind(to: str) -> None:
     t1, t2, t3 = RIAA
     source = TransferFunction(numerator=[t2, 1.0], denominator=[t1 * t3, t1 + t3, 1.0])
@@ -91,7 +91,7 @@ def k_weighting() -> Sections:
     )
 
 
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 def test_k_weighting_in_every_kind(to: str) -> None:
     """A double zero at z = 1 and poles at 0.995: 1e-16 in a coefficient is 1e-12 of the response at 20 Hz."""
     made = convert(k_weighting(), to)
@@ -152,7 +152,7 @@ def test_bessel_polynomials_come_back_from_their_companions_exactly(n: int) -> N
 @pytest.mark.parametrize(
     "coefficients", [[1, 2], [1, 6, 12], [1, 12, 60, 120], [1, 20, 180, 840, 1680]], ids=lambda c: str(len(c) - 1)
 )
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 def test_pade_approximations_stay_all_pass(coefficients: list[int], to: str) -> None:
     n = len(coefficients) - 1
     numerator = [float(c * (-1) ** (n - k)) for k, c in enumerate(coefficients)]
@@ -174,7 +174,7 @@ def test_kundur_machine_on_an_infinite_bus() -> None:
     poles = inspect(plant)["poles"]
     assert sorted(round(re, 2) for re, _, _ in poles) == [-0.2, -0.11, -0.11]
     assert sorted(round(im, 2) for _, im, _ in poles) == [-6.41, 0.0, 6.41]
-    for to in PARAMETRIC_KINDS:
+    for to in UNIVERSAL_KINDS:
         made = convert(plant, to)
         assert made.receipt.claim("response-error").value < 1e-12
     # trace and determinant by hand: s^3 + 0.4229 s^2 + 0.1092*376.99 s + 376.99 (0.1092*0.4229 - 0.1236*0.1938)

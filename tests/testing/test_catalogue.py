@@ -5,7 +5,7 @@ from __future__ import annotations
 import pytest
 
 import realize
-from realize.schema import PARAMETRIC_KINDS
+from realize.schema import UNIVERSAL_KINDS
 from realize.testing.catalogue import CATALOGUE, Known
 
 
@@ -19,7 +19,7 @@ def test_inspection_gives_the_known_answers(known: Known) -> None:
     assert found == pytest.approx(want)
 
 
-@pytest.mark.parametrize("to", PARAMETRIC_KINDS)
+@pytest.mark.parametrize("to", UNIVERSAL_KINDS)
 @pytest.mark.parametrize("known", CATALOGUE.values(), ids=list(CATALOGUE))
 def test_every_conversion_holds_or_is_known_to_fail(known: Known, to: str) -> None:
     model = known.make()

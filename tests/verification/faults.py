@@ -359,7 +359,7 @@ def block_diagonal(parts: Any) -> Any:
 
 
 def no_point_check(patch: Patch) -> None:
-    patch.setattr(views, "_check_at_a_point", lambda model, fractions: None)
+    patch.setattr(views, "check_at_a_point", lambda model, fractions: None)
     wrapped(states, "transfer_matrix", lambda f, A, B, C, D, E: f(A, B, C, [[(0, 1)] * len(r) for r in D], E))(patch)
 
 

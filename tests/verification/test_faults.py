@@ -15,7 +15,7 @@ from faults_of_claims import after_first
 
 from realize.models import FrequencyResponse
 from realize.verification import conversion
-from realize.verification.views import FormationFault
+from realize.verification.formation import FormationFault
 
 PAGE = Path(__file__).resolve().parents[2] / "docs" / "methods" / "faults.rst"
 
