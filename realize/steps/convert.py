@@ -210,7 +210,7 @@ def _change(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Cha
         route = plan_route(task)
         return route, route[-1].apply(task.model, task)
     route, base, _, shape = _default(replace(task, form=None), limits)
-    row = coordinate_row(f"state-space:{shape}", task)
+    row = coordinate_row(f"state-space:{shape}" if shape else "state-space", task)
     return [*route, row], row.apply(base, task)
 
 

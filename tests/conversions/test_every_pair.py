@@ -10,6 +10,7 @@ import numpy as np
 import pytest
 
 from realize.conversions import ROWS, Task, plan_route
+from realize.conversions.route import COORDINATE_ROWS
 from realize.errors import Refused, UsageError
 from realize.models import (
     DeadTime,
@@ -286,7 +287,7 @@ def test_every_row_of_the_table_is_reached() -> None:
     for model in PLANTS.values():
         for to, form in [*TARGETS, *([("second-order", None)] if model.kind == "state-space" else [])]:
             used.update((row.source, row.target) for row in plan_route(Task(model, to, form)))
-    assert used == {(row.source, row.target) for row in ROWS}
+    assert used == {(row.source, row.target) for row in (*ROWS, *COORDINATE_ROWS)}
 
 
 def test_exact_rows_are_exact(oracle: Any) -> None:
