@@ -3,8 +3,8 @@
 With D the least common denominator of the entries and N = D G, the determinantal divisor Delta_k is the greatest
 common divisor of all minors of N of order k; the invariant polynomials are Delta_k / Delta_(k-1), and each one over D,
 reduced, is epsilon_k / psi_k. Poles are the roots of the psi_k, transmission zeros those of the epsilon_k. At infinity
-the least relative degree v_k of the minors of order k takes the place of the divisor: the orders are v_k - v_(k-1), a zero
-where positive, a pole where negative.
+the least relative degree v_k of the minors of order k takes the place of the divisor: the orders are v_k - v_(k-1), a
+zero where positive, a pole where negative.
 
 Where there are too many minors, determinants of a few random combinations of rows and columns (Cauchy and Binet) have
 the same greatest common divisor unless the drawn integers satisfy an equation, which has a probability of about 1e-9.
