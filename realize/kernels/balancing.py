@@ -238,7 +238,7 @@ def tail_bounds(values: Array) -> Array:
     return bounds
 
 
-def _signs(rows: Array, columns: Array) -> Array:
+def state_signs(rows: Array, columns: Array) -> Array:
     """Return +1 or -1 per state: the first large entry of its row (of its column, if that is noise) gets positive."""
     sign = np.ones(rows.shape[0])
     for k, (row, column) in enumerate(zip(rows, columns, strict=True)):
@@ -292,7 +292,7 @@ def balanced_part(factors: HankelFactors, order: int) -> Balanced:
     below = (Z.T @ (roots.N @ Z)) * root[:, None] / root
     B = root[:, None] * (Z.T @ roots.input)
     C = (roots.output @ U) * root
-    sign = _signs(B, C.T)
+    sign = state_signs(B, C.T)
     A = (np.triu(above) + np.tril(below, -1)) * sign[:, None] * sign
     return Balanced(A, B * sign[:, None], C * sign, roots.R.T @ U / root * sign, roots.L @ Z / root * sign)
 
