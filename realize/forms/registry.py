@@ -28,7 +28,9 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass
 
+from realize.forms.balanced import balanced_form, input_normal_form, output_normal_form
 from realize.forms.coordinates import Array, Coordinates, Setting
+from realize.forms.linear_quadratic_balanced import linear_quadratic_balanced_form
 from realize.forms.scaled import scaled_states
 from realize.forms.schur import real_schur
 
@@ -65,7 +67,7 @@ class Form:
 
 
 #: Pages of forms that share one.
-PAGES: dict[str, str] = {}
+PAGES: dict[str, str] = {"input-normal": "balanced", "output-normal": "balanced"}
 
 TABLE: dict[str, Form] = {
     form.name: form
@@ -82,6 +84,34 @@ TABLE: dict[str, Form] = {
             real_schur,
             "Golub & Van Loan, Matrix Computations; Bai & Demmel 1993",
             "orthogonal rotation to real Schur form, blocks ordered",
+        ),
+        Form(
+            "balanced",
+            balanced_form,
+            "Moore 1981; Tombs & Postlethwaite 1987",
+            "both Gramians equal and diagonal, from their square roots",
+            "schur",
+        ),
+        Form(
+            "input-normal",
+            input_normal_form,
+            "Moore 1981",
+            "controllability Gramian I, observability Gramian diagonal",
+            "schur",
+        ),
+        Form(
+            "output-normal",
+            output_normal_form,
+            "Moore 1981",
+            "observability Gramian I, controllability Gramian diagonal",
+            "schur",
+        ),
+        Form(
+            "linear-quadratic-balanced",
+            linear_quadratic_balanced_form,
+            "Jonckheere & Silverman 1983",
+            "both Riccati solutions equal and diagonal; unstable models too",
+            "schur",
         ),
     )
 }

@@ -111,8 +111,8 @@ def block_diagonal(A: Array, limit: float) -> BlockDiagonal:
                 T[start:end, end:] = 0.0
                 break
             rest = schur_eigenvalues(T[end:, end:])
-            own = schur_eigenvalues(T[start:end, start:end])
-            mean, height = np.mean(own.real), np.mean(np.abs(own.imag))
+            inside = schur_eigenvalues(T[start:end, start:end])
+            mean, height = np.mean(inside.real), np.mean(np.abs(inside.imag))
             nearest = end + int(np.argmin(np.hypot(rest.real - mean, np.abs(rest.imag) - height)))
             if nearest > 0 and T[nearest, nearest - 1] != 0:
                 nearest -= 1

@@ -16,6 +16,10 @@ FORMS = (
     "observable-companion",
     "scaled",
     "schur",
+    "balanced",
+    "input-normal",
+    "output-normal",
+    "linear-quadratic-balanced",
 )
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "auto")
