@@ -69,9 +69,10 @@ def linear_quadratic_balanced_form(A: Array, B: Array, C: Array, D: Array, setti
     noise = n * EPS * float(np.linalg.norm(Z, 2) * np.linalg.norm(L, 2))
     lost = int(np.sum(values <= noise))
     if lost:
+        size = values[n - lost] / max(values[0], np.finfo(float).tiny)
         raise Refused(
             f"linear-quadratic balanced coordinates need a minimal model: the last {lost} of {n} characteristic values "
-            f"cannot be told from zero in doubles ({values[n - lost] / values[0]:.1e} of the largest one); take the "
+            f"cannot be told from zero in doubles ({size:.1e} of the largest one); take the "
             "minimal realization first"
         )
     root = np.sqrt(values)
