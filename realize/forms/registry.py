@@ -30,9 +30,11 @@ from dataclasses import dataclass
 
 from realize.forms.balanced import balanced_form, input_normal_form, output_normal_form
 from realize.forms.coordinates import Array, Coordinates, Setting
+from realize.forms.hessenberg import controller_hessenberg_states, observer_hessenberg_states
 from realize.forms.linear_quadratic_balanced import linear_quadratic_balanced_form
 from realize.forms.scaled import scaled_states
 from realize.forms.schur import real_schur
+from realize.forms.staircase import kalman_states, observable_staircase, reachable_staircase
 
 
 @dataclass(frozen=True)
@@ -67,7 +69,14 @@ class Form:
 
 
 #: Pages of forms that share one.
-PAGES: dict[str, str] = {"input-normal": "balanced", "output-normal": "balanced"}
+PAGES: dict[str, str] = {
+    "input-normal": "balanced",
+    "output-normal": "balanced",
+    "controller-hessenberg": "hessenberg",
+    "observer-hessenberg": "hessenberg",
+    "reachable-staircase": "staircase",
+    "observable-staircase": "staircase",
+}
 
 TABLE: dict[str, Form] = {
     form.name: form
@@ -84,6 +93,36 @@ TABLE: dict[str, Form] = {
             real_schur,
             "Golub & Van Loan, Matrix Computations; Bai & Demmel 1993",
             "orthogonal rotation to real Schur form, blocks ordered",
+        ),
+        Form(
+            "controller-hessenberg",
+            controller_hessenberg_states,
+            "Van Dooren & Verhaegen 1985",
+            "orthogonal rotation: B a triangle on top of zeros, A block Hessenberg",
+        ),
+        Form(
+            "observer-hessenberg",
+            observer_hessenberg_states,
+            "Van Dooren & Verhaegen 1985",
+            "orthogonal rotation: C a triangle behind zeros, A block Hessenberg",
+        ),
+        Form(
+            "reachable-staircase",
+            reachable_staircase,
+            "Varga 1981; Van Dooren 1981; Rosenbrock 1970",
+            "orthogonal rotation by what inputs reach in steps, unreachable states last",
+        ),
+        Form(
+            "observable-staircase",
+            observable_staircase,
+            "Varga 1981; Van Dooren 1981; Rosenbrock 1970",
+            "orthogonal rotation by what outputs see in steps, unobservable states last",
+        ),
+        Form(
+            "kalman",
+            kalman_states,
+            "Kalman 1963",
+            "four parts: reachable and observable, reachable only, observable only, neither",
         ),
         Form(
             "balanced",

@@ -197,6 +197,34 @@ def reachability_staircase(A: Array, B: Array, thresholds: tuple[float, float]) 
     )
 
 
+def decided_staircase(A: Array, B: Array, thresholds: tuple[float, float], band: float, gap: float) -> Staircase:
+    """Return the reachability staircase, doubtful decisions taken by the gap.
+
+    Singular values above a threshold by less than a factor `band` may be rounding as well as not. They are dropped if
+    the smallest one beyond the band is larger by `gap` times the band; otherwise the thresholds alone decide.
+
+    Parameters
+    ----------
+    A, B, thresholds
+        As in `reachability_staircase`.
+    band, gap : float
+
+    Returns
+    -------
+    Staircase
+        ``kept`` and ``dropped`` over the thresholds given, so that a value above 1 among those dropped, or below the
+        band among those kept, shows that the decision was doubtful.
+    """
+    strict = reachability_staircase(A, B, thresholds)
+    if strict.smallest_kept >= band:
+        return strict
+    wide = reachability_staircase(A, B, (band * thresholds[0], band * thresholds[1]))
+    if wide.smallest_kept < gap or wide.order == 0:
+        return strict
+    kept, dropped = (tuple(band * values for values in part) for part in (wide.kept, wide.dropped))
+    return Staircase(wide.A, wide.B, wide.Q, wide.sizes, kept, dropped)
+
+
 def _over(values: Array, limit: float) -> Array:
     """Return values over a threshold; over one of zero they are infinite, or 0 where they are zero too."""
     if limit > 0:

@@ -20,6 +20,11 @@ FORMS = (
     "input-normal",
     "output-normal",
     "linear-quadratic-balanced",
+    "controller-hessenberg",
+    "observer-hessenberg",
+    "reachable-staircase",
+    "observable-staircase",
+    "kalman",
 )
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "auto")

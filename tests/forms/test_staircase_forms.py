@@ -1,0 +1,165 @@
+"""Hessenberg, staircase and Kalman coordinates: exact zeros, dimensions, what the receipt says."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+from typing import Any
+
+import numpy as np
+import pytest
+
+import realize
+from realize.forms.coordinates import Setting
+from realize.forms.registry import TABLE
+from realize.models import StateSpace, TimeBase
+
+SAMPLED = TimeBase("sampled", period=0.5)
+
+
+def form(name: str, A: Any, B: Any, C: Any, period: float | None = None) -> Any:
+    A, B, C = (np.array(matrix, dtype=float) for matrix in (A, B, C))
+    return TABLE[name].apply(A, B, C, np.zeros((C.shape[0], B.shape[1])), Setting(period))
+
+
+def rotated(rng: np.random.Generator, *matrices: np.ndarray) -> tuple[np.ndarray, ...]:
+    """The model in other coordinates, rounded, in odd units."""
+    A, B, C = matrices
+    n = A.shape[0]
+    T = np.linalg.qr(rng.standard_normal((n, n)))[0] @ np.diag(rng.uniform(0.5, 2.0, n))
+    T = np.ldexp(T, rng.integers(-20, 21, n)[:, None])
+    S = np.linalg.inv(T)
+    inputs, outputs = np.ldexp(1.0, rng.integers(-20, 21, B.shape[1])), np.ldexp(1.0, rng.integers(-20, 21, C.shape[0]))
+    return T @ A @ S, T @ B * inputs, C @ S * outputs[:, None]
+
+
+def four_parts(
+    sizes: tuple[int, int, int, int], m: int, p: int, seed: int
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """A model in Kalman's pattern with well separated poles; -1, -2, ... from the first part to the last."""
+    rng = np.random.default_rng(seed)
+    n = sum(sizes)
+    part = np.repeat(np.arange(4), sizes)
+    A = rng.uniform(0.5, 1.0, (n, n)) * rng.choice([-1.0, 1.0], (n, n))
+    allowed = np.array([[1, 0, 1, 0], [1, 1, 1, 1], [0, 0, 1, 0], [0, 0, 1, 1]], dtype=bool)
+    A[~allowed[part[:, None], part[None, :]]] = 0.0
+    A[part[:, None] == part[None, :]] *= 0.3
+    A[np.arange(n), np.arange(n)] = -np.arange(1.0, n + 1)
+    B, C = rng.uniform(0.5, 1.0, (n, m)), rng.uniform(0.5, 1.0, (p, n))
+    B[part >= 2], C[:, part % 2 == 1] = 0.0, 0.0
+    return A, B, C
+
+
+@pytest.mark.parametrize(("m", "p"), [(1, 1), (2, 3), (3, 1), (7, 7)])
+def test_hessenberg_zeros(m: int, p: int) -> None:
+    A, B, C = rotated(np.random.default_rng(m), *four_parts((3, 0, 2, 0), m, p, 1))
+    new = form("controller-hessenberg", A, B, C)
+    assert not np.any(np.tril(new.A, -m - 1)) and not np.any(np.tril(new.B, -1))
+    assert new.details["subdiagonals"] == min(m, 4)
+    new = form("observer-hessenberg", A, B, C)
+    assert not np.any(np.tril(new.A, -p - 1))
+    # C is zero left of the triangle in its last columns
+    assert not np.any(new.C[:, ::-1][np.arange(p)[:, None] < np.arange(5)[None, :]])
+
+
+@pytest.mark.parametrize("name", ["reachable-staircase", "observable-staircase"])
+@pytest.mark.parametrize(("n", "hidden", "m"), [(5, 0, 1), (6, 2, 1), (6, 2, 2), (7, 3, 3), (1, 1, 2)])
+def test_staircases_set_apart_what_is_hidden(name: str, n: int, hidden: int, m: int) -> None:
+    reach = name.startswith("reach")
+    sizes = (n - hidden, 0, hidden, 0) if reach else (n - hidden, hidden, 0, 0)
+    A, B, C = rotated(np.random.default_rng(n), *four_parts(sizes, m, m, n))
+    new = form(name, A, B, C)
+    r = n - hidden
+    H, b = (new.A, new.B) if reach else (new.A.T, new.C.T)
+    assert not np.any(H[r:, :r])
+    steps = new.details["sizes"]
+    assert sum(steps) == r and all(one >= two for one, two in pairwise(steps))
+    edges = np.cumsum([0, *steps])
+    assert not np.any(b[edges[1] if steps else 0 :])
+    for k in range(len(steps) - 1):
+        assert not np.any(H[edges[k + 2] :, edges[k] : edges[k + 1]])
+        assert np.linalg.matrix_rank(H[edges[k + 1] : edges[k + 2], edges[k] : edges[k + 1]]) == steps[k + 1]
+    word = "reachable" if reach else "observable"
+    assert new.details[word] == r and new.details[f"un{word}"] == hidden
+    indices = new.details["controllability_indices" if reach else "observability_indices"]
+    assert len(indices) == m and sum(indices) == r
+    assert sum(1 if row["im"] == 0 else 2 for row in new.details["removed"]) == hidden
+    truth = np.linalg.eigvals(four_parts(sizes, m, m, n)[0][r:, r:])
+    assert np.allclose(
+        sorted(row["re"] for row in new.details["removed"]), sorted(truth.real[truth.imag >= 0]), rtol=1e-9
+    )
+    assert all(row["why"] == f"un{word}" for row in new.details["removed"])
+    _ambiguous_only_by_rounding(new, new.details["decisions"])
+    if hidden and n > hidden:
+        assert new.details["decisions"]["gap"] > 1e3
+
+
+def _ambiguous_only_by_rounding(new: Any, *decisions: Any) -> None:
+    """The arithmetic that made the plant left some roundings where zeros were: then, and only then, it is said."""
+    doubtful = any((told["largest_dropped"] or 0) > 1 for told in decisions)
+    assert doubtful == any(told["ambiguous"] for told in decisions) == bool(new.cautions)
+    assert all((told["largest_dropped"] or 0) < 20 for told in decisions)
+
+
+SIZES = [(2, 1, 1, 1), (3, 0, 0, 2), (1, 2, 2, 0), (2, 2, 0, 2), (0, 2, 2, 0), (0, 0, 0, 2), (4, 0, 0, 0), (1, 0, 3, 2)]
+
+
+@pytest.mark.parametrize("sizes", SIZES, ids=str)
+@pytest.mark.parametrize(("m", "p"), [(1, 1), (2, 3)])
+def test_kalman_finds_the_four_parts(sizes: tuple[int, int, int, int], m: int, p: int) -> None:
+    plain = four_parts(sizes, m, p, 3)
+    A, B, C = rotated(np.random.default_rng(9), *plain)
+    new = form("kalman", A, B, C)
+    assert tuple(new.details["dimensions"].values()) == sizes
+    part = np.repeat(np.arange(4), sizes)
+    zero = np.array([[0, 1, 0, 1], [0, 0, 0, 0], [1, 1, 0, 1], [1, 1, 0, 0]], dtype=bool)
+    assert not np.any(new.A[zero[part[:, None], part[None, :]]])
+    assert not np.any(new.B[part >= 2]) and not np.any(new.C[:, part % 2 == 1])
+    why = {1: "unobservable", 2: "unreachable", 3: "unreachable and unobservable"}
+    for k, words in why.items():
+        truth = np.linalg.eigvals(plain[0][np.ix_(part == k, part == k)])
+        found = [row for row in new.details["removed"] if row["why"] == words]
+        assert sum(1 if row["im"] == 0 else 2 for row in found) == sizes[k]
+        for row in found:
+            assert np.min(np.abs(truth - complex(row["re"], row["im"]))) <= 1e-8 * abs(complex(row["re"], row["im"]))
+            assert row["frequency"] == pytest.approx(np.hypot(row["re"], row["im"]), rel=1e-9)
+    assert new.condition >= 1
+    _ambiguous_only_by_rounding(new, *new.details["decisions"].values())
+
+
+def test_kalman_through_convert_keeps_the_response_and_says_what_is_hidden() -> None:
+    """x2 is driven by nothing and seen through x1 and by itself; x3 is driven and unseen."""
+    plant = StateSpace(
+        A=[[-1.0, 1.0, 0.0], [0.0, -2.0, 0.0], [0.5, 0.0, -3.0]], B=[[1.0], [0.0], [1.0]], C=[[1.0, 2.0, 0.0]]
+    )
+    done = realize.convert(plant, "state-space", form="kalman").require()
+    record = done.receipt.details["coordinates"]
+    assert tuple(record["dimensions"].values()) == (1, 1, 1, 0)
+    assert {(round(row["re"], 9), row["why"]) for row in record["removed"]} == {
+        (-3.0, "unobservable"),
+        (-2.0, "unreachable"),
+    }
+    assert done.receipt.claim("peak-error").value <= 1e-15
+    # the first part alone has the response
+    model = done.model
+    assert model.C[0, 0] * model.B[0, 0] == pytest.approx(1.0) and model.A[0, 0] == pytest.approx(-1.0)
+
+
+def test_a_mode_hidden_behind_a_reachable_one_takes_a_shear() -> None:
+    """w (pole -2, not driven) is cancelled at the output by what it makes of x1: unseen as x1 = X w with X = -1e3."""
+    plant = StateSpace(A=[[-1.0, 1e3], [0.0, -2.0]], B=[[1.0], [0.0]], C=[[1.0, 1e3]])
+    new = form("kalman", plant.A, plant.B, plant.C)
+    assert tuple(new.details["dimensions"].values()) == (1, 0, 0, 1)
+    assert new.A[0, 1] == 0 and new.C[0, 1] == 0 and new.condition > 1.1
+
+
+def test_sampled_modes_count_by_their_logarithm() -> None:
+    new = form("kalman", np.diag([0.5, 0.25, 0.0]), [[1.0], [0.0], [0.0]], [[1.0, 1.0, 1.0]], period=0.5)
+    first, second = sorted(new.details["removed"], key=lambda row: row["re"])
+    assert first["frequency"] is None and first["damping"] == 1.0
+    assert second["frequency"] == pytest.approx(np.log(4) / 0.5) and second["damping"] == 1.0
+
+
+def test_a_decision_near_its_threshold_is_called_ambiguous() -> None:
+    A = np.diag([1.0, 1e-13, 1.0], -1) + np.diag([1.0, 1.0, 1.0], 1) - np.diag([1.0, 2.0, 3.0, 4.0])
+    new = form("reachable-staircase", A, np.eye(4)[:, :1], np.ones((1, 4)))
+    assert new.details["decisions"]["ambiguous"] and "ambiguous" in new.cautions[0]
