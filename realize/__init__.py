@@ -28,6 +28,7 @@ if TYPE_CHECKING:
     )
     from realize.schema import Claim, Receipt
     from realize.steps import Conversion, compare, convert, explain, fit, history, inspect, reduce
+    from realize.steps.hankel import HankelValues, hankel_singular_values
     from realize.verification.feedback import gap_distance, stability_margin
     from realize.verification.margins import LoopMargins, loop_margins
     from realize.verification.norms import h2_norm, hankel_norm, largest_gain
@@ -50,6 +51,7 @@ _HOMES = {
     ),
     "realize.schema": ("Claim", "Receipt"),
     "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "reduce"),
+    "realize.steps.hankel": ("HankelValues", "hankel_singular_values"),
     "realize.verification.feedback": ("gap_distance", "stability_margin"),
     "realize.verification.margins": ("LoopMargins", "loop_margins"),
     "realize.verification.norms": ("h2_norm", "hankel_norm", "largest_gain"),
@@ -62,6 +64,7 @@ __all__ = [
     "Conversion",
     "DeadTime",
     "FrequencyResponse",
+    "HankelValues",
     "InputError",
     "LoopMargins",
     "Offset",
@@ -85,6 +88,7 @@ __all__ = [
     "gap_distance",
     "h2_norm",
     "hankel_norm",
+    "hankel_singular_values",
     "inspect",
     "largest_gain",
     "loop_margins",

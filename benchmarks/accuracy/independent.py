@@ -126,3 +126,30 @@ def control_coefficients(A: Any, B: Any, C: Any, D: Any) -> Any:
 
     made = control.ss2tf(control.StateSpace(A, B, C, D, remove_useless_states=False))
     return made.num[0][0], made.den[0][0]
+
+
+def gramian_values(A: Any, B: Any, C: Any) -> Any:
+    """Return the roots of the eigenvalues of the product of two Gramians by scipy.linalg."""
+    import numpy as np
+    import scipy.linalg
+
+    P = scipy.linalg.solve_continuous_lyapunov(A, -B @ B.T)
+    Q = scipy.linalg.solve_continuous_lyapunov(A.T, -C.T @ C)
+    return np.sort(np.sqrt(np.abs(scipy.linalg.eigvals(P @ Q))))[::-1]
+
+
+def control_values(A: Any, B: Any, C: Any) -> Any:
+    """Return control's Hankel singular values."""
+    import control
+    import numpy as np
+
+    made = control.StateSpace(A, B, C, np.zeros((C.shape[0], B.shape[1])), remove_useless_states=False)
+    return np.sort(np.asarray(control.hankel_singular_values(made)))[::-1]
+
+
+def slycot_values(A: Any, B: Any, C: Any) -> Any:
+    """Return the Hankel singular values of slycot's ab09ad, which works with Gramian factors of the scaled model."""
+    import slycot
+
+    n, m, p = A.shape[0], B.shape[1], C.shape[0]
+    return slycot.ab09ad("C", "B", "S", n, m, p, A.copy(), B.copy(), C.copy(), nr=None, tol=0.0)[-1]

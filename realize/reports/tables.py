@@ -239,6 +239,8 @@ _PLACED: tuple[str, ...] = (
 _PLACED += (
     "channel_zeros",
     "hankel_singular_values",
+    "hankel_errors",
+    "hankel_basis",
     "fragility",
     "cautions",
     "realize",

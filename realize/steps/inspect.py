@@ -6,8 +6,10 @@ from typing import Any
 
 import numpy as np
 
+from realize.errors import Refused
 from realize.models import FrequencyResponse, Model, SecondOrder, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
+from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
 from realize.steps.structure import modes_of
@@ -30,7 +32,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
         [re, im, multiplicity] (several channels: transmission zeros; those of each channel are ``channel_zeros``), what
         `inspect_zeros.zeros_of` says (``transmission_zeros``, ``zeros_at_infinity``, ``normal_rank`` ...),
         ``modes`` of a second-order model, ``stable``,
-        ``hankel_singular_values`` (stable models), ``fragility``, ``digest``, ``cautions``. What is not known is None.
+        ``hankel_singular_values`` (stable models) with ``hankel_errors`` and ``hankel_basis``, ``fragility``,
+        ``digest``, ``cautions``. What is not known is None.
     """
     model = model_of(model)
     p, m = model.shape
@@ -62,7 +65,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
         record["channel_zeros"] = [[listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
     record["minimal_order"] = _minimal_order(view, cautions)
     record["stable"] = _stable(view, poles)
-    record["hankel_singular_values"] = _hankel(model, bool(record["stable"]), cautions)
+    record |= {"hankel_singular_values": None, "hankel_errors": None, "hankel_basis": None}
+    record |= _hankel(model, bool(record["stable"]), cautions)
     value = fragility_of(model, probe_frequencies(model))
     record["fragility"] = value
     _remarks(model, record, view, cautions)
@@ -139,23 +143,21 @@ def _stable(view: View, poles: list[Any]) -> bool | None:
     return bool(np.all(np.abs(values) < 1) if edge else np.all(values.real < 0))
 
 
-def _hankel(model: Model, stable: bool, cautions: list[str]) -> list[float] | None:
+def _hankel(model: Model, stable: bool, cautions: list[str]) -> dict[str, Any]:
     if not stable:
-        return None
-    from realize.errors import RealizeError
-    from realize.steps.reduce import states_of
-
+        return {}
     try:
-        state_model, _ = states_of(model)
-        if state_model.order == 0:
-            return []
-        from realize.reduction import prepare
-
-        prepared = prepare(state_model.A, state_model.B, state_model.C, state_model.D, sampled=model.time.sampled)
-        return [prepared.in_gain(float(value)) for value in prepared.factors.values]
-    except RealizeError as error:
+        found = hankel_singular_values(model)
+    except Refused as error:
         cautions.append(f"No Hankel singular values: {error}")
-        return None
+        return {}
+    if found.note:
+        cautions.append(f"Hankel singular values: {found.note}.")
+    return {
+        "hankel_singular_values": found.values.tolist(),
+        "hankel_errors": found.errors.tolist(),
+        "hankel_basis": found.basis,
+    }
 
 
 def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[str]) -> None:

@@ -76,3 +76,20 @@ def evaluation_operations(degree: int, points: int, sampled: bool) -> float:
 def rank_operations(size: int, bits: int) -> float:
     """Return predicted operations of an exact rank of a square integer matrix."""
     return 3.0 * size**3 * (1 + size * bits / 62) + 1e3 * size**2
+
+
+def hankel_operations(degree: int, rows: int, columns: int, order: int, bits: int) -> float:
+    """Return predicted operations of one trial of `hankel_values` with so many bits, within a factor of two.
+
+    Parameters
+    ----------
+    degree : int
+        Of the common denominator.
+    rows, columns : int
+        The larger and the smaller number of outputs and inputs.
+    order : int
+        McMillan degree.
+    """
+    c = degree * columns
+    product = degree * rows * float(c) ** 2
+    return (80 + 0.1 * bits) * product + (400 + 0.3 * bits) * (float(order) ** 2 * c + 2e3)
