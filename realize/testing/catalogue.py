@@ -23,7 +23,7 @@ class Known:
         Gives the model.
     order, minimal_order : int
     poles : tuple of (complex, multiplicity)
-        Of the model as given, hidden ones included.
+        Of the model as given, hidden ones included; of a transfer matrix as often as the McMillan degree counts them.
     stable : bool
     fails : tuple of str
         Kinds whose doubles cannot carry it: a conversion to them ends with a failed claim.
@@ -141,7 +141,7 @@ CATALOGUE: dict[str, Known] = {
             lambda: TransferFunction(numerator=[[[1.0], [0.0]], [[0.0], [1e-18]]], denominator=[[[1.0, 1.0]] * 2] * 2),
             2,
             2,
-            ((-1 + 0j, 1),),
+            ((-1 + 0j, 2),),
             True,
         ),
     )
