@@ -27,7 +27,7 @@ if TYPE_CHECKING:
         ZeroPoleGain,
     )
     from realize.schema import Claim, Receipt
-    from realize.steps import Conversion, compare, convert, explain, fit, history, inspect, reduce
+    from realize.steps import Conversion, compare, convert, explain, fit, history, inspect, minimal, reduce
     from realize.steps.hankel import HankelValues, hankel_singular_values
     from realize.verification.feedback import gap_distance, stability_margin
     from realize.verification.margins import LoopMargins, loop_margins
@@ -50,7 +50,7 @@ _HOMES = {
         "ZeroPoleGain",
     ),
     "realize.schema": ("Claim", "Receipt"),
-    "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "reduce"),
+    "realize.steps": ("Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "minimal", "reduce"),
     "realize.steps.hankel": ("HankelValues", "hankel_singular_values"),
     "realize.verification.feedback": ("gap_distance", "stability_margin"),
     "realize.verification.margins": ("LoopMargins", "loop_margins"),
@@ -92,6 +92,7 @@ __all__ = [
     "inspect",
     "largest_gain",
     "loop_margins",
+    "minimal",
     "read",
     "reduce",
     "stability_margin",

@@ -34,7 +34,7 @@ class Context:
         """Refuse what cannot work before any work is done."""
         if self.json and self.output == "-":
             raise UsageError("--json and -o - both want standard output; give a file to one of them")
-        if self.verb in ("fit", "convert", "reduce") and self.output not in (None, "-"):
+        if self.verb in ("fit", "convert", "minimal", "reduce") and self.output not in (None, "-"):
             from realize.files import format_for_writing
 
             format_for_writing(self.output)

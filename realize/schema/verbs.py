@@ -127,6 +127,15 @@ VERBS: dict[str, Verb] = {
             ),
         ),
         Verb(
+            "minimal",
+            "Remove what no input reaches and no output sees.",
+            ("MODEL",),
+            (
+                Option("exact", "flag", "decide on the numbers as given; otherwise within their rounding"),
+                CERTIFY,
+            ),
+        ),
+        Verb(
             "reduce",
             "Find a smaller model, with the error known.",
             ("MODEL",),

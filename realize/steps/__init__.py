@@ -18,9 +18,10 @@ if TYPE_CHECKING:
     from realize.steps.fit import fit
     from realize.steps.history import history
     from realize.steps.inspect import inspect
+    from realize.steps.minimal import minimal
     from realize.steps.reduce import reduce
 
-__all__ = ["Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "model_of", "reduce"]
+__all__ = ["Conversion", "compare", "convert", "explain", "fit", "history", "inspect", "minimal", "model_of", "reduce"]
 
 _HOME_OF = {
     "compare": "compare",
@@ -29,6 +30,7 @@ _HOME_OF = {
     "fit": "fit",
     "history": "history",
     "inspect": "inspect",
+    "minimal": "minimal",
     "reduce": "reduce",
 }
 

@@ -141,6 +141,8 @@ WRONG_USAGE = [
     ["convert", "GOOD", "--to", "state-space", "--limit", "peak-error=nan"],
     ["convert", "GOOD", "--to", "state-space", "--limit", "peak-error=1e999"],
     ["convert", "GOOD", "--to", "state-space", "-o", "x.csv"],
+    ["minimal"],
+    ["minimal", "GOOD", "--order", "1"],
     ["reduce", "GOOD"],
     ["reduce", "GOOD", "--order", "1", "--error", "1%"],
     ["reduce", "GOOD", "--order", "-1"],
@@ -187,12 +189,15 @@ IMPROPER = _transfer("[1, 0, 0]", "[1, 1]")
 
 REFUSED: list[tuple[str, list[str], str]] = [
     (DATA, ["convert", "FILE", "--to", "state-space"], "fit"),
+    (DATA, ["minimal", "FILE"], "fit"),
     (DATA, ["reduce", "FILE", "--order", "1"], "fit"),
     (WIDE, ["convert", "FILE", "--to", "sections"], "zero-pole-gain"),
     (WIDE, ["convert", "FILE", "--to", "state-space", "--form", "controllable-companion"], "modal"),
     (WIDE, ["convert", "FILE", "--to", "state-space", "--form", "observable-companion"], "modal"),
     (SINGULAR, ["convert", "FILE", "--to", "transfer-function"], "singular"),
     (SINGULAR, ["inspect", "FILE"], "singular"),
+    (SINGULAR, ["minimal", "FILE"], "singular"),
+    (SINGULAR, ["minimal", "FILE", "--exact"], "singular"),
     (SINGULAR, ["reduce", "FILE", "--order", "0"], "singular"),
     (SINGULAR, ["compare", "FILE", "FILE"], "singular"),
     (IMPROPER, ["reduce", "FILE", "--order", "1"], "improper"),
@@ -206,7 +211,7 @@ def test_refused_with_a_way_out(
     content, arguments, words = case
     monkeypatch.chdir(tmp_path)
     Path("model.json").write_text(content)
-    writes = arguments[0] in ("convert", "reduce")
+    writes = arguments[0] in ("convert", "minimal", "reduce")
     done = run(*("model.json" if a == "FILE" else a for a in arguments), *(["-o", "out.json"] if writes else []))
     assert done.status == 5, done.err
     assert words in done.err

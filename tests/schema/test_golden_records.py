@@ -32,6 +32,7 @@ PLANT = {
     "numerator": [1, 2],
     "denominator": [1, 3, 5, 7],
 }
+HIDDEN = PLANT | {"numerator": [1, 3, 2], "denominator": [1, 6, 11, 6]}
 SMALLER = PLANT | {"denominator": [1, 3, 5, 7.5]}
 WIDE = {
     "realize": 1,
@@ -50,7 +51,7 @@ DATA = {
     "response": [[[[1 / (1 + w * w), -w / (1 + w * w)]]] for w in W],
     "deviation": [[[1e-3]] for _ in W],
 }
-FILES = {"plant.json": PLANT, "smaller.json": SMALLER, "wide.json": WIDE, "data.json": DATA}
+FILES = {"plant.json": PLANT, "hidden.json": HIDDEN, "smaller.json": SMALLER, "wide.json": WIDE, "data.json": DATA}
 
 RECORDS: dict[str, list[str]] = {
     "convert": ["convert", "plant.json", "--to", "state-space", "--json", "--second-opinion", "-o", "out.json"],
@@ -58,6 +59,7 @@ RECORDS: dict[str, list[str]] = {
     "convert-several": ["convert", "wide.json", "--to", "pole-residue", "--json", QUIET],
     "convert-explain": ["convert", "plant.json", "--to", "sections", "--explain", "--json"],
     "fit": ["fit", "data.json", "--order", "1..2", "--json", QUIET],
+    "minimal": ["minimal", "hidden.json", "--json", QUIET],
     "reduce": ["reduce", "plant.json", "--order", "2", "--json", QUIET],
     "reduce-error": ["reduce", "plant.json", "--error", "20%", "--json", QUIET],
     "inspect": ["inspect", "plant.json", "--json"],
@@ -148,7 +150,9 @@ def _claims_of(value: Any) -> list[dict[str, Any]]:
     return [claim for entry in value for claim in _claims_of(entry)] if isinstance(value, list) else []
 
 
-@pytest.mark.parametrize("name", ["convert-quiet", "convert-several", "fit", "reduce", "compare", "compare-data"])
+@pytest.mark.parametrize(
+    "name", ["convert-quiet", "convert-several", "fit", "minimal", "reduce", "compare", "compare-data"]
+)
 def test_claims_are_those_of_the_schema_and_consistent(
     name: str, run: Callable[..., Any], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -89,7 +89,7 @@ def test_defaults_are_those_of_the_schema(name: str) -> None:
             assert parameter.default == option.default
 
 
-@pytest.mark.parametrize("name", ["convert", "reduce", "fit", "inspect", "compare"])
+@pytest.mark.parametrize("name", ["convert", "minimal", "reduce", "fit", "inspect", "compare"])
 def test_python_functions_take_the_options_of_the_schema(name: str) -> None:
     given = set(inspect.signature(getattr(realize, name)).parameters)
     shell_only = {"explain", "columns", "history"}  # explain and history are functions of their own

@@ -294,7 +294,11 @@ def _singular(
     halves = np.array([math.sqrt(abs(near_ball(raised(pivot, -first)))) for pivot in pivots])
     if halves.min() > SMALLEST_ROOT:
         sign = np.array([1.0 if pivot > 0 else -1.0 for pivot in pivots])
-        U, s, Z = product_svd(_rounded(X) * halves * sign, halves[:, None] * _rounded(Y))
+        # orthogonal factors first: columns keep their grading, and the product becomes square
+        left_axes, x = np.linalg.qr(_rounded(X) * halves * sign)
+        right_axes, y = np.linalg.qr(_rounded(Y).T * halves)
+        U, s, Z = product_svd(x, y.T)
+        U, Z = left_axes @ U, right_axes @ Z
         U, s, Z = U[:, :order], s[:order], Z[:, :order]
         if np.all(np.isfinite(s)) and s[-1] > 0:
             return _from_doubles(U), _from_doubles(Z), [float(np.log2(value)) + first for value in s]

@@ -1,0 +1,273 @@
+"""Modes of a state model that an elementwise relative change of its own numbers makes unreachable or unobservable.
+
+A mode s with left vector w is unreachable after a change |dA| <= eta |A|, |dB| <= eta |B| (zeros stay zero) exactly if
+w' [A + dA - s I, B + dB] = 0. For given s and w the smallest such eta is the elementwise backward error ::
+
+    eta(s, w) = max_j |r_j| / (|w|' |[A, B]|)_j,    r = w' [A - s I, B],
+
+for complex changes (Oettli & Prager 1964, applied to one row); it does not depend on the units of states, inputs and
+time. It is made small over s and w from every eigenvalue on, by singular vectors of the columns weighted with the
+denominators [2]_ [3]_. Modes found are taken out one after the other: the next w is orthogonal to the span F of those
+before, and its residual may use their rows, so that clusters and chains of generalised vectors are no exception.
+
+Of a vector nearly parallel to those before only what is orthogonal to them counts, so that one mode is not counted
+twice. Unobservable modes are those of the dual, within the reachable subspace.
+
+.. [1] W. Oettli, W. Prager, Compatibility of approximate solution of linear equations with given error bounds for
+       coefficients and right-hand sides, Numer. Math. 6 (1964) 405-409.
+.. [2] R. Eising, Between controllable and uncontrollable, Syst. Control Lett. 4 (1984) 263-264.
+.. [3] C. C. Paige, Properties of numerical algorithms related to computing controllability, IEEE Trans. Automat.
+       Control 26 (1981) 130-138.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+import scipy.linalg
+from numpy.typing import NDArray
+
+Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
+
+#: Smallest denominators, relative to the largest, in the steps of the search over s and w.
+FLOORS = (1e-6, 1e-6, 1e-9, 1e-9, 1e-12, 1e-12, 1e-15, 1e-15)
+#: Steps without gain that end the search.
+PATIENCE = 3
+#: Entries of w this small, relative to the largest, are tried as zeros: rounding leaves something where nothing is.
+CLEARED = (0.0, 1e-13, 1e-10, 1e-7)
+#: Models of at most this order have every mode searched; larger ones those whose own vectors are nearest to hidden.
+ALL_MODES = 100
+SOME_MODES = 8
+#: A first guess this many times the threshold is not worth a search in a large model.
+PROMISING = 1e6
+#: Vectors of which less than this is orthogonal to those before are judged by that part, less than that are the same.
+APART, SAME = 0.1, 1e-8
+#: Pairs with a smaller imaginary part, relative to their size, are tried as two real modes.
+NEARLY_REAL = 1e-2
+#: Denominators of zero columns, relative to the largest: what has no number cannot be changed.
+NO_NUMBER = 1e-30
+
+
+@dataclass(frozen=True)
+class Side:
+    """Modes hidden on one side.
+
+    Attributes
+    ----------
+    vectors : (n, k) array
+        Real basis F of the hidden vectors, in the coordinates of the model given.
+    modes : list of complex
+        Their eigenvalues; k of them.
+    errors : list of float
+        Backward error of each mode.
+    kept : float
+        Smallest backward error found among the modes that are left; infinite for none.
+    kept_mode : complex or None
+    """
+
+    vectors: Array
+    modes: list[complex] = field(default_factory=list)
+    errors: list[float] = field(default_factory=list)
+    kept: float = math.inf
+    kept_mode: complex | None = None
+
+
+def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = None) -> Side:
+    """Return the modes that a relative change of at most the threshold makes unreachable.
+
+    Parameters
+    ----------
+    A : (n, n) array
+    B : (n, m) array
+        Scaled so that rows of A are of like size: the search is orthogonal, the decision does not depend on it.
+    threshold : float
+        Largest relative change of an entry.
+    within : (n, q) array, optional
+        Orthonormal basis of an invariant subspace of A' in which the vectors lie; everything unless given.
+    """
+    n = A.shape[0]
+    space = np.eye(n) if within is None else within
+    M, sizes = np.hstack([A, B]), np.hstack([np.abs(A), np.abs(B)])
+    modes: list[complex] = []
+    errors: list[float] = []
+    F = np.zeros((n, 0))
+    while True:
+        # each mode by itself first, then what is left beside those found
+        free = space if not F.shape[1] else _complement(space, F)
+        poles, vectors = _left_vectors(free.T @ A @ free)
+        guesses = [_first_guess(free @ vectors[:, k], B, sizes[:, n:]) for k in range(poles.size)]
+        kept, kept_mode = math.inf, None
+        accepted, searched = False, 0
+        for k in np.argsort(guesses, kind="stable"):
+            s = complex(poles[k])
+            if s.imag < 0:
+                continue
+            if n > ALL_MODES and (searched >= SOME_MODES or guesses[k] > PROMISING * threshold):
+                kept, kept_mode = min((kept, kept_mode), (guesses[k], s), key=lambda pair: pair[0])
+                break
+            searched += 1
+            for at, w in _starts(s, free @ vectors[:, k]):
+                error, at, w = _judged(M, sizes, space, F, at, w, threshold)
+                wider = _orthonormal(F, _real_basis(at, w)) if error <= threshold else None
+                if wider is not None:
+                    F, accepted = wider, True
+                    modes += [at, at.conjugate()] if at.imag else [at]
+                    errors += [error] * (2 if at.imag else 1)
+                    break
+                if threshold < error < kept:
+                    kept, kept_mode = error, at
+        if not accepted or F.shape[1] >= space.shape[1]:
+            break
+    return Side(F, modes, errors, kept, kept_mode)
+
+
+def _starts(s: complex, w: ComplexArray) -> list[tuple[complex, ComplexArray]]:
+    """Return where to search from: a pair near the real axis may be two real modes that rounding drove apart."""
+    if s.imag and abs(s.imag) < NEARLY_REAL * abs(s):
+        return [(complex(s.real), w.real.astype(complex)), (complex(s.real), w.imag.astype(complex)), (s, w)]
+    return [(s, w)]
+
+
+def _real_basis(s: complex, w: ComplexArray) -> Array:
+    return np.column_stack([w.real, w.imag]) if s.imag else w.real[:, None]
+
+
+def _judged(
+    M: Array, sizes: Array, space: Array, F: Array, s: complex, w: ComplexArray, threshold: float
+) -> tuple[float, complex, ComplexArray]:
+    """Return backward error, eigenvalue and vector from a start: by itself, or beside those found that are near."""
+    first = w
+    error, at, w = _search(M, sizes, space, np.zeros((F.shape[0], 0)), s, w, threshold)
+    if not F.shape[1]:
+        return error, at, w
+    rest = _rest(F, w)
+    if error > threshold or rest < APART:
+        # not far from those before: what is orthogonal to them decides
+        again, at = (w, at) if rest > SAME else (first, s)
+        error, at, w = _search(M, sizes, _complement(space, F), F, at, again, threshold)
+    return error, at, w
+
+
+def _left_vectors(A: Array) -> tuple[ComplexArray, ComplexArray]:
+    """Return eigenvalues and vectors w with w' A = s w' (not conjugated), columns of unit length."""
+    poles, vectors = scipy.linalg.eig(A.T, check_finite=False)
+    return poles, vectors
+
+
+def _first_guess(w: ComplexArray, B: Array, sizes: Array) -> float:
+    """Return the relative change of B alone that makes a left eigenvector see nothing of it."""
+    above, below = np.abs(w @ B), np.abs(w) @ sizes
+    ratio = np.divide(above, below, out=np.zeros(above.shape), where=below > 0)
+    return float(ratio.max(initial=0.0))
+
+
+def _complement(space: Array, F: Array) -> Array:
+    """Return an orthonormal basis of what of the space is orthogonal to F, which lies in it."""
+    inside = space.T @ F
+    q, _ = np.linalg.qr(inside, mode="complete")
+    return space @ q[:, F.shape[1] :]
+
+
+def _rest(F: Array, w: ComplexArray) -> float:
+    """Return what part of a vector is orthogonal to the vectors before."""
+    return float(np.linalg.norm(w - F @ (F.T @ w)) / np.linalg.norm(w))
+
+
+def _orthonormal(F: Array, more: Array) -> Array | None:
+    """Return an orthonormal basis of both, or None where there is nothing new in a column."""
+    for column in more.T:
+        size = np.linalg.norm(column)
+        for _ in range(2):
+            column = column - F @ (F.T @ column)
+        rest = np.linalg.norm(column)
+        if not rest > SAME * size:
+            return None
+        column = column / rest
+        F = np.column_stack([F, np.where(np.abs(column) > CLEARED[1], column, 0.0)])
+    return F
+
+
+def _search(
+    M: Array, sizes: Array, free: Array, F: Array, s: complex, w: ComplexArray, threshold: float
+) -> tuple[float, complex, ComplexArray]:
+    """Return the smallest backward error found from a start, with its s and w."""
+    n = M.shape[0]
+    real = s.imag == 0
+    w = w.real.astype(complex) if real and np.linalg.norm(w.real) > 0.5 * np.linalg.norm(w) else w
+    best, best_s, best_w = math.inf, s, w
+    # a w that is orthogonal to these lies in the free space
+    outside = np.linalg.qr(free, mode="complete")[0][:, free.shape[1] :] if free.shape[1] < n else np.zeros((n, 0))
+    unit = np.eye(n, M.shape[1])
+    idle = 0
+    for floor in FLOORS:
+        before = best
+        for small in CLEARED:
+            trial = np.where(np.abs(w) > small * np.abs(w).max(), w, 0.0)
+            error, trial_s = _backward_error(M, sizes, F, trial, real)
+            if error < best:
+                best, best_s, best_w = error, trial_s, trial
+        idle = idle + 1 if best > 0.5 * before else 0
+        if best <= threshold / 64 or idle == PATIENCE or not np.isfinite(best):
+            break
+        w, s = best_w, best_s
+        D = np.abs(w) @ sizes
+        D = np.maximum(D, floor * D.max())
+        N, lean = (M - s * unit) / D, np.concatenate([w, np.zeros(M.shape[1] - n)]) / D
+        if F.shape[1]:
+            span = _allowed_rows(F, D)
+            N, lean = N - (N @ span) @ span.T, lean - span @ (span.T @ lean)
+        # Gauss & Newton for w and s together; w moves orthogonally to itself and to what was found before
+        N = np.hstack([N, outside, w.conj()[:, None]])
+        # rows of like size, so that rounding of the large ones does not drown the others
+        size = np.abs(N).max(axis=1)
+        scale = 1 / np.where(size > 0, size, 1.0)
+        edge = float(np.abs(lean).max()) or 1.0
+        table = np.vstack([N * scale[:, None], np.pad(-lean / edge, (0, N.shape[1] - lean.size))])
+        right = -(w @ N)
+        right[-1] = 0.0
+        if real:
+            table, right = table.real, right.real
+        move = scipy.linalg.lstsq(table.T, right, lapack_driver="gelsy", check_finite=False)[0]
+        w = w + move[:-1] * scale
+        w = w / np.linalg.norm(w)
+        s = s + move[-1] / edge
+    return best, best_s, best_w.astype(complex)
+
+
+def _allowed_rows(F: Array, D: Array) -> Array:
+    """Return an orthonormal basis of the weighted rows of F'[I, 0], which a residual may have a share of."""
+    rows = np.zeros((D.size, F.shape[1]))
+    rows[: F.shape[0]] = F
+    basis: Array = np.linalg.qr(rows / D[:, None])[0]
+    return basis
+
+
+def _backward_error(M: Array, sizes: Array, F: Array, w: ComplexArray, real: bool) -> tuple[float, complex]:
+    """Return the elementwise backward error of a left vector, and the eigenvalue that fits it best."""
+    n = M.shape[0]
+    D = np.abs(w) @ sizes
+    top = D.max(initial=0.0)
+    if top == 0:
+        # nothing there depends on this state, and it on nothing
+        return 0.0, 0j
+    weight = np.maximum(D, NO_NUMBER * top)
+    a, b = w @ M, np.concatenate([w, np.zeros(M.shape[1] - n)])
+    noise = 4 * np.finfo(float).eps * np.abs(b)
+    if F.shape[1]:
+        span = _allowed_rows(F, weight)
+        scaled = np.stack([a / weight, b / weight])
+        a, b = (scaled - (scaled @ span) @ span.T) * weight
+    x, y = a / weight, b / weight
+    below = np.vdot(y, y).real
+    s = complex(np.vdot(y, x) / below) if below > 0 else 0j
+    s = complex(s.real, 0.0) if real else s
+    r = np.abs(a - s * b)
+    # where there is no number to change, the residual has to be nothing but rounding
+    r = np.where((D == 0) & (r <= noise * abs(s)), 0.0, r)
+    if np.any((D == 0) & (r > 0)):
+        return math.inf, s
+    error = np.divide(r, D, out=np.zeros(r.shape), where=D > 0)
+    return float(error.max()), s
