@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
-from realize.conversions import builders, digits, doubles, second_order
+from realize.conversions import builders, descriptor, digits, doubles, second_order
 from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
@@ -91,6 +91,15 @@ BLOCKS_READ_OFF = Row(
     second_order.second_order_from_states,
     True,
     "mass, damping and stiffness where they stand as blocks in E and A",
+)
+
+#: From a state model to one in the same or fewer states: used by itself, never on the way to anything else.
+SMALLEST_DESCRIPTOR = Row(
+    "state-space",
+    "state-space",
+    descriptor.smallest_descriptor,
+    False,
+    "algebraic states eliminated, E divided out where that is harmless, a polynomial part by itself",
 )
 
 ROWS: tuple[Row, ...] = (
@@ -267,6 +276,8 @@ def plan_route(task: Task) -> list[Row]:
         base = plan_route(replace(task, form=None))
         return [*base, coordinate_row(base[-1].target, task)]
     start, goal = task.model.kind, task.target
+    if start == goal and descriptor.has_descriptor(task.model):
+        return [SMALLEST_DESCRIPTOR]
     if start == goal and not task.common_denominator and task.digits is None:
         return []
     rows = _rows(task)

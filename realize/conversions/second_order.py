@@ -19,7 +19,8 @@ STRUCTURE_NEEDED = (
 )
 
 
-def _words(what: str, verdict: Verdict, inverted: bool) -> str:
+def verdict_words(what: str, verdict: Verdict, inverted: bool) -> str:
+    """Return what became of a mass or descriptor matrix, as one sentence."""
     if inverted:
         if verdict.kind == "diagonal":
             return f"{what} is diagonal and was divided out."
@@ -38,7 +39,7 @@ def states_from_second_order(model: Model, task: Task) -> StateSpace:
     pencil, inverted, verdict = states_of_pencil(model.pencil, model.mass)
     n = model.mass.shape[0]
     if verdict.kind != "identity":
-        task.notes.append(_words("The mass matrix", verdict, inverted))
+        task.notes.append(verdict_words("The mass matrix", verdict, inverted))
         if inverted and pencil.A.shape[0] < model.pencil.A.shape[0]:
             task.notes.append(
                 "Outputs that read accelerations are differences of rounded terms now: far below the first mode, where "

@@ -79,8 +79,14 @@ def growth(E: Array, right: Sequence[Array], solved: Sequence[Array]) -> float:
     return worst
 
 
-def divided_out(E: Array, right: Sequence[Array]) -> tuple[Verdict, list[Array] | None]:
-    """Return what E is, and E^-1 R for each R where that is harmless: condition and growth at most HARMLESS."""
+def divided_out(E: Array, right: Sequence[Array], *, rows_count: bool = True) -> tuple[Verdict, list[Array] | None]:
+    """Return what E is, and E^-1 R for each R where that is harmless: condition and growth at most HARMLESS.
+
+    Parameters
+    ----------
+    rows_count : bool
+        False where the rows are mixtures already (after an orthogonal transform): the condition alone decides.
+    """
     verdict = judged(E)
     if not verdict.harmless:
         return verdict, None
@@ -88,7 +94,7 @@ def divided_out(E: Array, right: Sequence[Array]) -> tuple[Verdict, list[Array] 
     if solved is None:
         return verdict, None
     grown = growth(E, right, solved)
-    if grown > HARMLESS:
+    if rows_count and grown > HARMLESS:
         return Verdict("ill-conditioned", grown), None
     return verdict, solved
 

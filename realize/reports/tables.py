@@ -276,6 +276,8 @@ def _further(record: Mapping[str, Any]) -> list[tuple[str, Any]]:
             rows.append((title, short(value, 4)))
         elif isinstance(value, str):
             rows.append((title, clean(value, 200)))
+        elif name == "descriptor":
+            rows.append((title, ", ".join(f"{part} {number}" for part, number in value.items() if part != "regular")))
     return rows
 
 

@@ -12,7 +12,7 @@ from realize.steps.conversion import Conversion, model_of
 from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
 from realize.steps.receipts import FRAGILE, fragility_of, probe_frequencies, refusing_singular
-from realize.steps.structure import modes_of
+from realize.steps.structure import descriptor_of, modes_of
 from realize.verification import View, view_of
 
 #: Poles this far apart in size, fastest over slowest, are worth a word.
@@ -31,7 +31,7 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
         ``kind``, ``order``, ``minimal_order``, ``inputs``, ``outputs``, ``time``, ``poles`` and ``zeros`` as
         [re, im, multiplicity] (several channels: transmission zeros; those of each channel are ``channel_zeros``), what
         `inspect_zeros.zeros_of` says (``transmission_zeros``, ``zeros_at_infinity``, ``normal_rank`` ...),
-        ``modes`` of a second-order model, ``stable``,
+        ``modes`` of a second-order model, index and counts of a ``descriptor``, ``stable``,
         ``hankel_singular_values`` (stable models) with ``hankel_errors`` and ``hankel_basis``, ``fragility``,
         ``digest``, ``cautions``. What is not known is None.
     """
@@ -61,6 +61,9 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     modes = modes_of(model, poles)
     if modes is not None:
         record["modes"] = modes
+    descriptor = descriptor_of(model)
+    if descriptor is not None:
+        record["descriptor"] = descriptor
     if p * m > 1 and view.fractions is not None:
         record["channel_zeros"] = [[listed(view.fractions[i][j][0]) for j in range(m)] for i in range(p)]
     record["minimal_order"] = _minimal_order(view, cautions)

@@ -1,4 +1,4 @@
-"""What `inspect` says of the structure of a model: modes of a second-order one."""
+"""What `inspect` says of the structure of a model: modes of a second-order one, index of a descriptor."""
 
 from __future__ import annotations
 
@@ -6,7 +6,9 @@ from typing import Any
 
 import numpy as np
 
-from realize.models import Model, SecondOrder
+from realize.conversions.descriptor import counts, has_descriptor, structure_of
+from realize.forms.inversion import equilibrated
+from realize.models import Model, SecondOrder, StateSpace
 
 
 def modes_of(model: Model, poles: list[Any]) -> list[dict[str, float]] | None:
@@ -28,3 +30,25 @@ def modes_of(model: Model, poles: list[Any]) -> list[dict[str, float]] | None:
         if im >= 0
     ]
     return sorted(modes, key=lambda mode: (mode["frequency"], mode["damping"]))
+
+
+def descriptor_of(model: Model) -> dict[str, Any] | None:
+    """Return index and counts of a descriptor model, None without E, with E = I or beyond 1000 states.
+
+    ``regular``, ``index``, ``finite`` and ``infinite`` eigenvalues, ``impulsive`` modes: the rank of E less the finite
+    ones. A second-order model counts where its mass matrix is singular.
+
+    Raises
+    ------
+    SingularPencil
+    """
+    if isinstance(model, SecondOrder):
+        pencil = model.pencil
+        model = StateSpace(A=pencil.A, B=pencil.B, C=pencil.C, D=pencil.D, E=pencil.E)
+        if np.linalg.matrix_rank(equilibrated(pencil.E)) == pencil.E.shape[0]:
+            return None
+    if not has_descriptor(model):
+        return None
+    assert isinstance(model, StateSpace)
+    found = structure_of(model)
+    return None if found is None else counts(found)

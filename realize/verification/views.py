@@ -36,6 +36,8 @@ CLUSTERED = 1.5e3
 CHANNEL_COST = 2e6
 #: State models whose channels have a larger degree get approximate roots: they only say where to look.
 LARGE_DEGREE = 30
+#: The finite eigenvalues of descriptors are counted exactly up to this many states.
+LARGEST_DESCRIPTOR = 1000
 
 
 #: Predicted operations that views of models may take; lifted where exact arithmetic is asked for whatever it costs.
@@ -357,7 +359,7 @@ def double_poles(model: Model) -> ComplexArray:
         import scipy.linalg
 
         values = scipy.linalg.eigvals(A, E)
-        return values[np.isfinite(values)]
+        return finite_ones(model, values[np.isfinite(values)])
     if isinstance(model, SecondOrder):
         pencil = model.pencil
         n = model.order
@@ -375,6 +377,16 @@ def double_poles(model: Model) -> ComplexArray:
     if isinstance(model, Sections):
         return np.concatenate([np.roots(section[1]) for section in model.sections] or [np.zeros(0)])
     raise TypeError(model.kind)
+
+
+def finite_ones(model: StateSpace, values: ComplexArray) -> ComplexArray:
+    """Return the smallest eigenvalues of a pencil, as many as are finite by an exact count: the others are rounding."""
+    from realize.kernels.exact.descriptor import structure
+
+    if model.order > LARGEST_DESCRIPTOR:
+        return values
+    count = structure(model.exact("A"), model.exact("E")).finite
+    return values[np.argsort(np.abs(values))[:count]]
 
 
 def exact_fractions(model: Model, cancel: bool = True) -> list[list[tuple[Any, Any]]]:
