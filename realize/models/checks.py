@@ -88,9 +88,9 @@ def array(
             values = values.reshape(values.shape + (0,) * (dimensions - values.ndim))
         else:
             raise InputError(f"{values.ndim} dimensions", f"{dimensions} dimensions", field=name)
-    bad = np.argwhere(~np.isfinite(values))
-    if bad.size:
-        for row in bad:
+    finite = np.isfinite(values)
+    if not finite.all():
+        for row in np.argwhere(~finite):
             index = tuple(int(i) for i in row)
             if not (allow and any(key[: len(index)] == index for key in allow)):
                 raise InputError(f"{values[index]}", "a finite number", field=place_of(name, index))
@@ -184,8 +184,10 @@ def exact_tree(value: Any, decimals: Mapping[tuple[int, ...], str], index: tuple
     if value is None:
         return None
     if isinstance(value, (tuple, list)) or (isinstance(value, np.ndarray) and value.ndim > 0):
-        if not decimals and isinstance(value, np.ndarray) and value.ndim == 1 and value.dtype.kind == "f":
-            return [entry.as_integer_ratio() for entry in value.tolist()]
+        if not decimals and isinstance(value, np.ndarray) and value.dtype.kind == "f" and value.ndim <= 2:
+            if value.ndim == 1:
+                return [entry.as_integer_ratio() for entry in value.tolist()]
+            return [[entry.as_integer_ratio() for entry in row] for row in value.tolist()]
         return [exact_tree(entry, decimals, (*index, k)) for k, entry in enumerate(value)]
     if isinstance(value, (complex, np.complexfloating)):
         return [exact_tree(value.real, decimals, (*index, 0)), exact_tree(value.imag, decimals, (*index, 1))]

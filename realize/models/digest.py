@@ -11,46 +11,50 @@ from realize.models.base import Model
 from realize.schema import ModelMark
 
 
-def _feed(hasher: Any, value: Any) -> None:
-    """Add a value to the hash with its type and shape, so that no two values share a byte stream."""
+def _feed(parts: list[bytes], value: Any) -> None:
+    """Add a value to what is hashed with its type and shape, so that no two values share a byte stream."""
     if value is None:
-        hasher.update(b"n;")
+        parts.append(b"n;")
     elif isinstance(value, np.ndarray):
         kind = {"f": "<f8", "c": "<c16", "i": "<i8"}[value.dtype.kind]
         # adding zero turns -0.0 into 0.0: the two are the same number
         data = np.ascontiguousarray(value.astype(kind) + np.zeros((), dtype=kind))
-        hasher.update(f"a{value.dtype.kind}{value.shape};".encode())
-        hasher.update(data.tobytes())
+        parts.append(f"a{value.dtype.kind}{value.shape};".encode())
+        parts.append(data.tobytes())
     elif isinstance(value, (tuple, list)):
-        hasher.update(f"l{len(value)};".encode())
+        parts.append(f"l{len(value)};".encode())
         for entry in value:
-            _feed(hasher, entry)
+            _feed(parts, entry)
     elif isinstance(value, float):
-        hasher.update(f"f{(value + 0.0).hex()};".encode())
+        parts.append(f"f{(value + 0.0).hex()};".encode())
     else:
         text = str(value)
-        hasher.update(f"s{len(text)}:{text};".encode())
+        parts.append(f"s{len(text)}:{text};".encode())
 
 
 def digest(model: Model) -> str:
     """Return ``sha256:`` and 64 hexadecimal digits over kind, time, signals, dead time, operating point and numbers."""
-    hasher = hashlib.sha256()
-    _feed(hasher, ["realize model 1", model.kind])
+    return model.remembered("digest", lambda: _digest(model))  # type: ignore[no-any-return]
+
+
+def _digest(model: Model) -> str:
+    parts: list[bytes] = []
+    _feed(parts, ["realize model 1", model.kind])
     time = model.time
-    _feed(hasher, [time.domain, str(time.exact_period) if time.sampled else ""])
+    _feed(parts, [time.domain, str(time.exact_period) if time.sampled else ""])
     for signals in (model.inputs, model.outputs, getattr(model, "states", ())):
-        _feed(hasher, [[signal.name, signal.unit] for signal in signals])
+        _feed(parts, [[signal.name, signal.unit] for signal in signals])
     dead = model.dead_time
-    _feed(hasher, None if dead is None else [dead.inputs, dead.outputs, dead.channels])
+    _feed(parts, None if dead is None else [dead.inputs, dead.outputs, dead.channels])
     offset = model.offset
-    _feed(hasher, None if offset is None else [offset.inputs, offset.outputs, offset.states])
+    _feed(parts, None if offset is None else [offset.inputs, offset.outputs, offset.states])
     for name, value in model.parameters().items():
         if name != "states":
-            _feed(hasher, [name, value])
+            _feed(parts, [name, value])
     for name in sorted(model.decimals):
         rows = model.decimals[name]
-        _feed(hasher, [name, [[list(index), rows[index]] for index in sorted(rows)]])
-    return "sha256:" + hasher.hexdigest()
+        _feed(parts, [name, [[list(index), rows[index]] for index in sorted(rows)]])
+    return "sha256:" + hashlib.sha256(b"".join(parts)).hexdigest()
 
 
 def mark(model: Model) -> ModelMark:

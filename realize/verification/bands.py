@@ -127,10 +127,16 @@ def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Ba
     other : View, optional
         The band covers the poles and zeros of this model too.
     """
+    if other is None:
+        return view.model.remembered(f"whole band {margin}", lambda: _whole_band(view, margin, None))
+    return _whole_band(view, margin, other)
+
+
+def _whole_band(view: View, margin: float, other: View | None) -> Band:
     zeros, poles = NO_DYNAMICS, view.poles
     for part in channel_zeros(view):
-        zeros = zeros.merged(part)
-    at_origin = bool(np.any(poles.s == 0))
+        zeros = part if zeros is NO_DYNAMICS else zeros.merged(part)
+    at_origin = bool((poles.s == 0).any())
     band = dynamic_band(zeros, poles, view.period, not at_origin)
     low, high = band.low, band.high
     if other is not None:

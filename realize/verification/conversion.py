@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
+from functools import partial
 from typing import Any
 
 import numpy as np
@@ -21,11 +22,19 @@ from realize.verification.bands import (
     whole_band,
     zero_channel,
 )
+from realize.verification.glance import Found
 from realize.verification.pair import Pair, frobenius
+from realize.verification.proof import SMALLEST
 from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds, sharpened, summits
 from realize.verification.views import view_of
 
 Array = NDArray[np.float64]
+#: A search of the largest error: `glanced_error`, or the careful one.
+Search = Callable[..., Found | None]
+#: Degree of the inequality (in frequency) up to which a quick look comes first.
+GLANCED = 80
+#: A proof that leaves more than this share of the value open sends the careful search.
+LOOSE = 0.1
 
 
 def _quotient(
@@ -49,6 +58,15 @@ def _quotient(
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         error = above / below
     return np.where(above == 0, 0.0, error)
+
+
+def glanced_error(
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None, divisor: float = 0.0
+) -> Found | None:
+    """Return the largest error of a quick look where a proof can follow, None elsewhere."""
+    if not lines and pair.provable(channel) and pair.proof(channel).size <= GLANCED:
+        return pair.glance(channel).error(band, divisor)
+    return None
 
 
 def largest_error(
@@ -99,6 +117,7 @@ def _claimed(
     limit: float | None,
     intervals: Sequence[Interval],
     channel: tuple[int, int] | None = None,
+    near: Sequence[Any] = (),
 ) -> Claim:
     """Return the claim, proved on the intervals where that is affordable, measured otherwise."""
     if pair.identical:
@@ -107,7 +126,7 @@ def _claimed(
         proof = pair.proof(channel)
         if proof.identical:
             return judge(name, 0.0, limit=limit, basis="proved", uncertainty=0.0, where={})
-        bound = proof.bound(value, intervals)
+        bound = proof.bound(value, intervals, near)
         if bound is not None:
             hidden = float(np.nextafter(max(bound - value, 0.0), np.inf))
             return judge(name, value, limit=limit, basis="proved", uncertainty=hidden, where=where)
@@ -121,9 +140,14 @@ def response_error(pair: Pair, limit: float | None = None) -> Claim:
     band = Band(min(b.low for b in bands), max(b.high for b in bands), finite_at_zero(view), axis_intervals(view.poles))
     zeros = common_zeros(view)
     lines = light_zeros(zeros)
-    value, where = largest_error(pair, band, lines, None)
     intervals = intervals_of(pair, band, lines, None) if pair.exact else []
-    return _claimed("response-error", pair, value, {"frequency": where}, limit, intervals)
+
+    def claim(found: Found) -> Claim:
+        return _claimed(
+            "response-error", pair, found.value, {"frequency": found.where}, limit, intervals, near=found.near
+        )
+
+    return _looked(claim, lambda search: search(pair, band, lines, None))
 
 
 def channel_error(pair: Pair, limit: float | None = None) -> Claim:
@@ -148,13 +172,43 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 band = channel_band(view, i, j)
                 lines = light_zeros(view.channel_roots[i][j][0])
                 intervals = intervals_of(pair, band, lines, (i, j)) if pair.exact else []
-            value, where = largest_error(pair, band, lines, (i, j), reference)
-            place = {"frequency": where, "output": i, "input": j}
-            claim = _claimed("channel-error", pair, value, place, limit, intervals, (i, j))
+
+            def of_channel(
+                found: Found, channel: tuple[int, int] = (i, j), intervals: list[Interval] = intervals
+            ) -> Claim:
+                place = {"frequency": found.where, "output": channel[0], "input": channel[1]}
+                return _claimed("channel-error", pair, found.value, place, limit, intervals, channel, found.near)
+
+            claim = _looked(of_channel, partial(_search_channel, pair, band, lines, (i, j), reference))
             if worst is None or _total(claim) > _total(worst):
                 worst = claim
     assert worst is not None
     return worst
+
+
+def _search_channel(
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int], reference: float, search: Search
+) -> Found | None:
+    return search(pair, band, lines, channel, reference)
+
+
+def _carefully(
+    pair: Pair, band: Band, lines: list[float], channel: tuple[int, int] | None, divisor: float = 0.0
+) -> Found:
+    return Found(*largest_error(pair, band, lines, channel, divisor))
+
+
+def _looked(claim: Callable[[Found], Claim], look: Callable[[Search], Found | None]) -> Claim:
+    """Return the claim about what a quick look found, or a careful search where a proof has to go far beyond that."""
+    found = look(glanced_error)
+    if found is not None:
+        made = claim(found)
+        if made.basis == "proved" and made.value is not None and made.uncertainty is not None:
+            if made.uncertainty <= LOOSE * max(made.value, SMALLEST):
+                return made
+    found = look(_carefully)
+    assert found is not None
+    return claim(found)
 
 
 def _total(claim: Claim) -> float:
@@ -166,6 +220,11 @@ def _total(claim: Claim) -> float:
 
 def peak_gain(pair: Pair) -> tuple[float, float]:
     """Return the largest Frobenius gain of the source found, and its frequency; the limit at infinity counts."""
+    if pair.provable(None) and pair.proof(None).size <= GLANCED:
+        seen = pair.glance(None).gain(whole_band(pair.source))
+        if seen is not None and 0 < seen[0] < np.inf:
+            limit = at_infinity(pair)[1]
+            return (limit, np.inf) if np.isfinite(limit) and limit > seen[0] else seen
     band = pair.band
     w, _, size = pair.grid
     inside = band.contains(w)
@@ -215,14 +274,9 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
     gain, _ = peak_gain(pair)
     end_difference, end_gain = at_infinity(pair)
     improper = not np.isfinite(end_gain)
-    band = whole_band(pair.source, 1.0) if improper else pair.band
+    band = whole_band(pair.source, 1.0) if improper else whole_band(pair.source)
     if improper:
         gain, _ = largest(lambda x: frobenius(pair.sizes(x)[1]), seeds(band, pair.source.poles), band)
-    value, where = largest_error(pair, band, [], None, 1.0)
-    place: dict[str, Any] = {"frequency": where}
-    if not improper and end_difference > value:
-        value, place = end_difference, {"frequency": None}
-    error = value / gain if gain > 0 else (0.0 if value == 0 else np.inf)
     if improper or gain == 0:
         intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in intervals_of(pair, band, [], None)]
     else:
@@ -232,9 +286,22 @@ def peak_error(pair: Pair, limit: float | None = None) -> Claim:
         intervals = [(low, high, gain * (1 - 2.0**-30)) for low, high, _ in intervals_of(pair, full, [], None)]
     if not np.isfinite(gain):
         intervals = []
-    return _claimed(
-        "peak-error", pair, error, place, limit, intervals if pair.exact and gain > 0 else [(0.0, 0.0, 1.0)]
-    )
+    if not (pair.exact and gain > 0):
+        intervals = [(0.0, 0.0, 1.0)]
+
+    def claim(found: Found) -> Claim:
+        value = found.value
+        place: dict[str, Any] = {"frequency": found.where}
+        if not improper and end_difference > value:
+            value, place = end_difference, {"frequency": None}
+        error = value / gain if gain > 0 else (0.0 if value == 0 else np.inf)
+        return _claimed("peak-error", pair, error, place, limit, intervals, near=found.near)
+
+    def look(search: Search) -> Found | None:
+        # a careful search looks beside the result's own poles too
+        return search(pair, band if improper or search is glanced_error else pair.band, [], None, 1.0)
+
+    return _looked(claim, look)
 
 
 def end_behaviour(pair: Pair, limit: float | None = None) -> Claim | None:

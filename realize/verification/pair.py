@@ -9,6 +9,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.verification.glance import Glance
 from realize.verification.proof import LARGEST_DEGREE, Proof
 from realize.verification.quick import Moduli
 from realize.verification.search import Band, seeds
@@ -154,6 +155,19 @@ class Pair:
         w = np.unique(np.concatenate([w, np.array(edges), np.zeros(1)]))
         difference, size = self.quick_sizes(w)
         return w, difference, size
+
+    def glance(self, channel: tuple[int, int] | None) -> Glance:
+        """Return the quick look at all channels together, or at one, over `band` without the result's own poles."""
+        from realize.verification.bands import all_bands, channel_zeros, whole_band
+
+        if self.source.model.shape == (1, 1):
+            channel = None
+        key = ("glance", channel)
+        if key not in self._proofs:
+            dynamics = (self.source.poles, *channel_zeros(self.source))
+            edges = [edge for part in all_bands(self.source) for edge in part.edges]
+            self._proofs[key] = Glance(self.proof(channel), whole_band(self.source), dynamics, edges)
+        return self._proofs[key]
 
     def edge_gain(self, low: float, high: float, channel: tuple[int, int] | None) -> float:
         """Return the larger gain of the source at the two ends of an interval, in units of 2^exponent."""

@@ -132,8 +132,11 @@ class Proof:
         """Degree of the inequalities in w."""
         return 2 * (self.d1.degree() + self.d2.degree())
 
-    def place(self, frequency: float, up: bool) -> Any:
-        """Return x for an angular frequency, rounded up or down if it is not exact; None for infinity."""
+    def place(self, frequency: float, up: bool, bits: int = 120) -> Any:
+        """Return x for an angular frequency, rounded up or down if it is not exact; None for infinity.
+
+        Sampled models: to so many bits.
+        """
         from realize.kernels.exact.numbers import fraction
 
         if not math.isfinite(frequency):
@@ -141,9 +144,9 @@ class Proof:
         if self.period is None:
             w = fraction(float(frequency).as_integer_ratio()) / self.unit
             return w * w
-        return self._tangent(frequency, up)
+        return self._tangent(frequency, up, bits)
 
-    def _tangent(self, frequency: float, up: bool) -> Any:
+    def _tangent(self, frequency: float, up: bool, bits: int) -> Any:
         from flint import arb
 
         from realize.kernels.exact.numbers import exact_value, fraction, precision
@@ -156,6 +159,8 @@ class Proof:
                 return None
             tangent = half.tan()
             value = tangent * tangent
+        with precision(bits):
+            value = +value
             return exact_value(value.upper() if up else value.lower())
 
     def value_at(self, frequency: float, reference: float | None) -> float:
@@ -182,21 +187,29 @@ class Proof:
         """Sum of |N1|^2 over the channels and |D1|^2, in x."""
         return self._sum(self.n1, self.degree), self._modulus(self.d1, self.degree)
 
-    def within(self, error: float, low: float, high: float, reference: float | None) -> bool:
-        """Return True if the error is proved on [low, high] (rad/s): relative to |G1|, or to a reference gain."""
+    def within(self, error: float, low: float, high: float, reference: float | None, near: Sequence[Any] = ()) -> bool:
+        """Return True if the error is proved on [low, high] (rad/s): relative to |G1|, or to a reference gain.
+
+        The ends are moved outwards to short numbers. ``near`` are places where the error is almost as large.
+        """
         from realize.kernels.exact.numbers import fraction
         from realize.kernels.exact.positivity import positive
 
-        e = fraction(error.as_integer_ratio())
         if reference is None:
             difference, bound = self.relative_pair
         else:
             difference, bound = self.absolute_pair
-            e = e * fraction(reference.as_integer_ratio())
-        left = self.place(low, up=False)
+            error = error * reference
+        error = shortened(error, up=False)
+        if not (0 < error < math.inf):
+            return False
+        e = fraction(error.as_integer_ratio())
+        ends = (low, high) if self.period is not None or low == high else (shortened(low, False), shortened(high, True))
+        left = self.place(ends[0], up=False, bits=END_BITS)
         if left is None:
             return True
-        return positive(bound * (e * e) - difference, left, self.place(high, up=True))
+        right = self.place(ends[1], up=True, bits=END_BITS)
+        return positive(bound * (e * e) - difference, left, right, near)
 
     @cached_property
     def relative_pair(self) -> tuple[Any, Any]:
@@ -208,7 +221,9 @@ class Proof:
         """|M|^2 and |D1 D2|^2 without what they have in common."""
         return _without_common(self.error_square, self.denominator_square)
 
-    def bound(self, value: float, intervals: Sequence[tuple[float, float, float | None]]) -> float | None:
+    def bound(
+        self, value: float, intervals: Sequence[tuple[float, float, float | None]], near: Sequence[Any] = ()
+    ) -> float | None:
         """Return the smallest tried bound, at least the value, that holds on all intervals; None if none was proved.
 
         Parameters
@@ -217,6 +232,8 @@ class Proof:
             The largest value found.
         intervals : sequence of (low, high, reference)
             rad/s; reference None for the relative error, else the gain to divide by (a lower bound of it).
+        near : sequence of fmpq, rising
+            Values of the variable x where the error is almost as large as it gets, if known: the proof is shorter.
         """
         start = max(value, SMALLEST)
         position = 0
@@ -224,13 +241,26 @@ class Proof:
             error = math.nextafter(start * factor, math.inf)
             while position < len(intervals):
                 tell(f"degree {self.size // 2}: interval {position + 1} of {len(intervals)}, bound {error:.3g}")
-                if not self.within(error, *intervals[position]):
+                if not self.within(error, *intervals[position], near=near):
                     break
                 position += 1
             else:
                 return error
             # what was proved with less holds with more: only the rest is left
         return None
+
+
+#: Bits of the ends of intervals and of bounds: short numbers make short proofs.
+END_BITS = 30
+
+
+def shortened(value: float, up: bool) -> float:
+    """Return a positive double of few bits just above or just below; zero, infinity and the smallest stay."""
+    if not 1e-300 < value < math.inf:
+        return value
+    mantissa, exponent = math.frexp(value)
+    whole = math.ldexp(mantissa, END_BITS)
+    return math.ldexp(math.ceil(whole) if up else math.floor(whole), exponent - END_BITS)
 
 
 def _root_at(above: Any, below: Any, x: Any) -> float | None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Sequence
 from typing import Any
 
@@ -30,6 +31,17 @@ def _doubles(polynomial: Any) -> tuple[list[float], float]:
     e = e.astype(np.int64) + np.array(exponents, dtype=np.int64)
     top = int(e[m != 0].max())
     return np.ldexp(m, e - top).tolist(), top - float(np.log2(float(below >> shift)) + shift)
+
+
+def _against_largest(polynomial: Any) -> list[float]:
+    """Return coefficients (lowest power first) over a power of two above the largest.
+
+    What is 2^-1000 of the largest counts as zero.
+    """
+    whole = [int(c) for c in polynomial.numer().coeffs()] or [0]
+    top = max(abs(c) for c in whole).bit_length()
+    shift = max(top - 1000, 0)
+    return [math.ldexp(float(c >> shift), shift - top) for c in whole]
 
 
 class Moduli:
@@ -96,3 +108,40 @@ def _horner(halves: tuple[Array, Array, Array, Array], y: Array) -> tuple[Array,
             value = value * square + coefficients[:, k : k + 1]
         sums.append(value)
     return np.hypot(sums[0], y * sums[1]), sums[2] + y * sums[3]
+
+
+#: Binary exponents of values and powers of x beyond which no quick look is taken.
+_RANGE = 900
+
+
+class Squares:
+    """Several exact polynomials in x = w^2 >= 0 at once, by Horner's rule in doubles: where to look, no claim.
+
+    Parameters
+    ----------
+    polynomials : sequence of exact polynomials
+        Each is divided by a power of two near its largest coefficient: quotients of two are right up to a factor.
+    """
+
+    def __init__(self, polynomials: Sequence[Any]) -> None:
+        lists = [_against_largest(p) for p in polynomials]
+        self.degree = max(len(c) for c in lists) - 1
+        self.columns = [np.array([[c[k] if k < len(c) else 0.0] for c in lists]) for k in range(self.degree, -1, -1)]
+        self.count = len(lists)
+
+    def reach(self, x: Array) -> bool:
+        """Return whether no power of x leaves the range of doubles."""
+        top, bottom = float(x.max(initial=1.0)), float(x[x > 0].min(initial=1.0))
+        return bool(max(np.log2(top), -np.log2(bottom)) * self.degree < _RANGE)
+
+    def __call__(self, x: Array) -> Array:
+        """Return the values [polynomial][k] at x [k]."""
+        value = np.zeros((self.count, x.size))
+        for column in self.columns:
+            value = value * x + column
+        return value
+
+    def root_of_quotient(self, values: Array, above: int, below: int) -> Array:
+        """Return the square root of the quotient of two of the polynomials, up to a constant factor."""
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            return np.sqrt(np.abs(values[above] / values[below]))

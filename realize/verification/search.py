@@ -17,6 +17,9 @@ Array = NDArray[np.float64]
 LIGHT = 1e-4
 PER_DECADE = 12
 MOST_SEEDS = 2000
+#: The thinner grid of what a proof checks afterwards, and distances beside a root in units of its damping.
+FEW_PER_DECADE = 8
+_BESIDE = np.array([[0.0], [0.3], [1.0], [3.0]])
 
 
 @dataclass(frozen=True)
@@ -54,7 +57,7 @@ class Band:
 
 def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_at_zero: bool) -> Band:
     """Return 1/10 of the smallest to 10 times the largest nonzero |pole| or |zero|; about 1 rad/s without any."""
-    sizes = zeros.merged(poles).frequency
+    sizes = np.concatenate([zeros.frequency, poles.frequency])
     sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
     top = np.pi / period if period is not None else np.inf
     if sizes.size == 0:
@@ -68,6 +71,8 @@ def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_
 
 def axis_intervals(poles: Dynamics) -> tuple[tuple[float, float], ...]:
     """Return the intervals around poles on the axis, of relative half-width `LIGHT`."""
+    if not poles.on_axis.any():
+        return ()
     frequencies = np.unique(np.abs(poles.s[poles.on_axis].imag))
     return tuple((w * (1 - LIGHT), w * (1 + LIGHT)) for w in frequencies.tolist() if w > 0)
 
@@ -92,6 +97,20 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
         parts.append(np.array([low, high]))
     w = np.unique(np.concatenate(parts + ([np.zeros(1)] if band.zero else [])))
     return band.keep(w)
+
+
+def few_seeds(band: Band, *lists: Dynamics) -> Array:
+    """Return a thinner grid than `seeds`, rising, with the ends of what is left out: for what a proof checks."""
+    count = max(int(FEW_PER_DECADE * math.log10(band.high / band.low)), 12) if band.low else 12
+    ends = [band.low, band.high, *(end for pair in band.left_out for end in pair)]
+    parts = [np.exp(np.linspace(math.log(band.low), math.log(band.high), count)), np.array(ends)]
+    for roots in lists:
+        size = roots.frequency
+        if size.size:
+            spread = 1 + np.minimum(roots.damping, 0.3) * _BESIDE
+            parts += [(size * spread).reshape(-1), (size / spread).reshape(-1), np.abs(roots.s.imag)]
+    w = np.unique(np.concatenate([np.zeros(1), *parts]))
+    return w[np.isfinite(w)]
 
 
 def summits(w: Array, values: Array, band: Band, most: int = 3) -> list[float]:

@@ -28,6 +28,8 @@ ComplexArray = NDArray[np.complex128]
 EXACT_BUDGET = 5e9
 #: The integers of larger state models are not looked at: their bits are counted from exponents alone.
 LARGEST_COUNTED = 160
+#: The integers of smaller ones are not looked at either: they are never longer than the range of doubles.
+SMALL, DOUBLE_BITS = 12, 2100
 #: Predicted operations of isolating the roots of degree n, over n^3: long coefficients of dense state models.
 ROOT_COST = 5.0e2
 #: The same for other kinds, whose roots may be clustered.
@@ -100,12 +102,12 @@ class Dynamics:
         """Return both lists together."""
         return Dynamics(np.concatenate([self.s, other.s]), np.concatenate([self.on_axis, other.on_axis]))
 
-    @property
+    @cached_property
     def frequency(self) -> Array:
         """|s| in rad/s."""
         return np.abs(self.s)
 
-    @property
+    @cached_property
     def damping(self) -> Array:
         """Damping ratio |Re s| / |s|; 1 at the origin, 0 where exactly on the axis."""
         size = np.abs(self.s)
@@ -305,7 +307,10 @@ def _predicted_cost(model: Model) -> float:
     p, m = model.shape
     order = model.order or 0
     if isinstance(model, StateSpace):
-        bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
+        if order <= SMALL and not model.decimals:
+            bits = DOUBLE_BITS
+        else:
+            bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
         form = cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
         # each channel has its own numerator, whose roots are sought
         return form + (1 + p * m) * ROOT_COST * order**3

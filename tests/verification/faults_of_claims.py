@@ -295,7 +295,7 @@ VERIFICATION = [
         "everything is positive",
         "verification.Proof.within",
         proof_of_less,
-        method(Proof, "within", lambda self, *a: True),
+        method(Proof, "within", lambda self, *a, **k: True),
         "consistency",
     ),
     Fault(
@@ -309,7 +309,7 @@ VERIFICATION = [
         "tangent of the whole angle",
         "verification.Proof.place",
         differing_sampled,
-        wrapped_method(Proof, "place", lambda f, s, w, up: f(s, w / 2, up)),
+        wrapped_method(Proof, "place", lambda f, s, w, up, bits=120: f(s, w / 2, up, bits)),
         EXACT,
     ),
     Fault(

@@ -7,12 +7,14 @@ from typing import Any
 
 from flint import acb, acb_poly, arb, arb_poly, fmpq, fmpq_poly, fmpz_poly, nmod_poly
 
-from realize.kernels.exact.numbers import precision, scaled_ball, simplest_in
+from realize.kernels.exact.numbers import conjugate, precision, scaled_ball, simplest_in
 from realize.kernels.exact.pencils import prime
 from realize.kernels.exact.polynomials import even_odd, in_square, monic, quotient
 
 #: Relative accuracy (bits) of the balls that isolation returns.
 ISOLATION_BITS = 128
+#: Largest degree for which rough roots and this many steps of Newton's iteration are tried first.
+SIMPLE_DEGREE, NEWTON_STEPS = 12, 3
 #: Rational roots are looked for completely up to this size (bits) of leading coefficient and root.
 RATIONAL_CAP = 20_000
 #: From this size on, primes are asked first whether a rational root is possible.
@@ -62,6 +64,80 @@ def complex_roots(f: Any) -> list[acb]:
     return [root for root, _ in f.complex_roots()]
 
 
+def _separated(f: fmpz_poly) -> list[acb]:
+    """Return the same with about `ISOLATION_BITS` bits, by the shortest way."""
+    found = None
+    if f.degree() == 2:
+        found = _two_roots(f)
+    elif 2 < f.degree() <= SIMPLE_DEGREE:
+        found = _simple_roots(f)
+    if found is not None:
+        return found
+    with precision(ISOLATION_BITS + 8):
+        return complex_roots(f)
+
+
+def _two_roots(f: fmpz_poly) -> list[acb] | None:
+    """Return the roots of a polynomial of degree two by the quadratic formula, or None where the balls meet."""
+    c, b, a = (int(value) for value in f.coeffs())
+    square = b * b - 4 * a * c
+    with precision(ISOLATION_BITS + 32):
+        if square < 0:
+            upper = acb(arb(-b) / (2 * a), arb(-square).sqrt() / abs(2 * a))
+            return [upper, conjugate(upper)]
+        if not c:
+            return None
+        larger = -(b + (arb(square).sqrt() if b >= 0 else -arb(square).sqrt())) / 2
+        first, second = acb(larger / a), acb(c / larger)
+        return None if first.overlaps(second) else [first, second]
+
+
+def _simple_roots(f: fmpz_poly) -> list[acb] | None:
+    """Return the same from rough balls and Newton's iteration, or None where that is no proof.
+
+    A disc of radius n |f / f'| holds a root (Henrici, Applied and Computational Complex Analysis 1, 1974, theorem
+    6.4g), so n disjoint discs hold one each. One around a real point holds a real root, since it is its own mirror
+    image.
+    """
+    n = f.degree()
+    c = [int(value) for value in f.coeffs()]
+    if not c[0]:
+        return None
+    # in a unit in which the roots are about one, and monic up to a power of two: the rough roots are quicker then
+    step = (abs(c[0]).bit_length() - abs(c[n]).bit_length()) // n
+    top = c[n].bit_length()
+    real: list[acb] = []
+    upper: list[acb] = []
+    with precision(ISOLATION_BITS + 32):
+        scaled = arb_poly([arb(value) * arb(2) ** ((k - n) * step - top) for k, value in enumerate(c)])
+        complex_value, complex_rate = acb_poly(scaled), acb_poly(scaled.derivative())
+        try:
+            starts = complex_value.roots(maxprec=256)
+        except ValueError:
+            return None
+        tiny = arb(2) ** (-ISOLATION_BITS - 16)
+        for start in starts:
+            if start.imag < 0:
+                continue
+            on_line = not start.imag > 0
+            value, rate = (scaled, scaled.derivative()) if on_line else (complex_value, complex_rate)
+            x: Any = start.real.mid() if on_line else start.mid()
+            for _ in range(NEWTON_STEPS):
+                x = (x - value(x) / rate(x)).mid()
+            disc = _disc(x, (n * (value(x) / rate(x))).abs_upper() + abs(x) * tiny, on_line)
+            # a division by zero leaves no accuracy
+            if disc.rel_accuracy_bits() < ISOLATION_BITS - 16 or not (on_line or disc.imag > 0):
+                return None
+            (real if on_line else upper).append(disc * arb(2) ** step)
+    apart = real + upper
+    if len(real) + 2 * len(upper) != n or any(
+        ball.overlaps(other) for k, ball in enumerate(apart) for other in apart[:k]
+    ):
+        return None
+    # balls of the upper half-plane and their mirror images do not meet
+    return real + [each for ball in upper for each in (ball, conjugate(ball))]
+
+
 def _square_root(square: acb, signs: tuple[int, int]) -> acb:
     re, im = signs
     if im == 0:
@@ -100,11 +176,10 @@ def isolate(f: fmpq_poly) -> list[Isolated]:
                         found.append(Isolated(Origin(whole, x, (sign, 1)), ball, False, False))
     if f.degree() > 0:
         whole = integer_polynomial(f)
-        with precision(ISOLATION_BITS + 8):
-            for root in complex_roots(whole):
-                real = root.imag.is_zero()
-                if real or root.imag > 0:
-                    found.append(Isolated(Origin(whole, root, (0, 0)), root, False, real))
+        for root in _separated(whole):
+            real = root.imag.is_zero()
+            if real or root.imag > 0:
+                found.append(Isolated(Origin(whole, root, (0, 0)), root, False, real))
     return found
 
 
@@ -125,7 +200,10 @@ def refined(f: fmpz_poly, ball: acb, bits: int) -> acb:
             value, rate = (arb_poly(f), arb_poly(slope)) if real else (acb_poly(f), acb_poly(slope))
             x: Any = ball.real.mid() if real else acb(ball.real.mid(), ball.imag.mid())
             for _ in range(4 + bits.bit_length()):
-                step = value(x) / rate(x)
+                height = value(x)
+                if height.is_zero() and ball.contains(x):
+                    return acb(x)
+                step = height / rate(x)
                 if not step.is_finite():
                     break
                 # the last step of an exact hit is zero; any radius then serves

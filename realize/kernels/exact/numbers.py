@@ -7,8 +7,7 @@ from __future__ import annotations
 
 import math
 import sys
-from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
+from collections.abc import Sequence
 from typing import Any
 
 import flint
@@ -20,15 +19,20 @@ Ratio = Sequence[int] | fmpq | int
 _TINY = -1200
 
 
-@contextmanager
-def precision(bits: int) -> Iterator[None]:
+class precision:
     """Set the working precision of ball arithmetic (bits) for a block, and restore it whatever happens."""
-    before = flint.ctx.prec
-    flint.ctx.prec = int(bits)
-    try:
-        yield
-    finally:
-        flint.ctx.prec = before
+
+    __slots__ = ("before", "bits")
+
+    def __init__(self, bits: int) -> None:
+        self.bits = int(bits)
+
+    def __enter__(self) -> None:
+        self.before = flint.ctx.prec
+        flint.ctx.prec = self.bits
+
+    def __exit__(self, *_: object) -> None:
+        flint.ctx.prec = self.before
 
 
 def fraction(ratio: Ratio) -> fmpq:

@@ -7,6 +7,9 @@ inside it, and is zero on intervals that are small against the distance of the n
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+from itertools import pairwise
+from math import gcd
 from typing import Literal, NamedTuple
 
 from flint import fmpq, fmpq_poly, fmpz, fmpz_poly
@@ -39,26 +42,38 @@ def _changes(p: fmpz_poly) -> int:
 _SHIFT = fmpz_poly([1, 1])
 
 
-def _to_half_line(p: fmpz_poly, low: fmpq, high: fmpq | None) -> fmpz_poly:
-    """Return a polynomial whose roots in (0, inf) are those of p in (low, high); infinite where high is None.
+class _OnIntervals:
+    """A polynomial seen on intervals whose ends are multiples of 1/q: q^n p(y/q) is kept for each q that is used."""
 
-    x = low + t for an infinite interval; x = (low + high t) / (1 + t) otherwise.
-    """
-    n = p.degree()
-    q = int(low.q)
-    shifted = fmpz_poly([int(c) * q ** (n - k) for k, c in enumerate(p.coeffs())]) if q != 1 else p
-    # now in units of 1/q: shifted(y) = q^n p(y / q)
-    if low.p:
-        shifted = shifted(fmpz_poly([low.p, 1]))
-    if high is None:
-        return shifted
-    width = (high - low) * q
-    a, b = int(width.p), int(width.q)
-    c = shifted.coeffs()
-    c = list(c) + [fmpz(0)] * (n + 1 - len(c))
-    # y = width u, u in (0, 1); then reverse and shift: u = 1 / (1 + t) covers the same interval
-    scaled = [ck * fmpz(a) ** k * fmpz(b) ** (n - k) for k, ck in enumerate(c)]
-    return fmpz_poly(list(reversed(scaled)))(_SHIFT)
+    def __init__(self, p: fmpz_poly) -> None:
+        self.coefficients = p.coeffs()
+        self._known = {1: p}
+
+    def _in_units(self, q: int) -> fmpz_poly:
+        if q not in self._known:
+            n = len(self.coefficients) - 1
+            power, listed = 1, []
+            for c in reversed(self.coefficients):
+                listed.append(c * power)
+                power *= q
+            assert len(listed) == n + 1
+            self._known[q] = fmpz_poly(listed[::-1])
+        return self._known[q]
+
+    def half_line(self, low: fmpq, high: fmpq | None) -> fmpz_poly:
+        """Return a polynomial whose roots in (0, inf) are those of p in (low, high); infinite where high is None.
+
+        x = low + t for an infinite interval; x = (low + high t) / (1 + t) otherwise.
+        """
+        q = int(low.q)
+        if high is None:
+            return self._in_units(q)(fmpz_poly([low.p, 1]))
+        q = q * int(high.q) // gcd(q, int(high.q))
+        start = low.p * (q // int(low.q))
+        # y = start + width u, u in (0, 1); then reverse and shift: u = 1 / (1 + t) covers the same interval
+        c = self._in_units(q)(fmpz_poly([start, high.p * (q // int(high.q)) - start])).coeffs()
+        c += [fmpz(0)] * (len(self.coefficients) - len(c))
+        return fmpz_poly(c[::-1])(_SHIFT)
 
 
 class Counterexample(NamedTuple):
@@ -67,7 +82,7 @@ class Counterexample(NamedTuple):
     x: fmpq | None
 
 
-def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
+def positive(p: fmpq_poly, low: fmpq, high: fmpq | None, near: Sequence[fmpq] = ()) -> bool:
     """Return True if p(x) > 0 is proved for all low <= x <= high (high None: to infinity, the limit included).
 
     Parameters
@@ -76,23 +91,26 @@ def positive(p: fmpq_poly, low: fmpq, high: fmpq | None) -> bool:
     low : fmpq
         Not negative.
     high : fmpq or None
+    near : sequence of fmpq, rising
+        Places where p is small against its surroundings: an interval that ends at one needs no halving towards it,
+        since the disc over the interval leaves out a pair of roots beside its own end (Obreschkoff's circle).
 
     Returns
     -------
     bool
         False where p is not positive or the proof was not found within `MOST_INTERVALS` intervals.
     """
-    return examined(p, low, high) is True
+    return examined(p, low, high, near=near) is True
 
 
 def examined(
-    p: fmpq_poly, low: fmpq, high: fmpq | None, most: int = MOST_INTERVALS
+    p: fmpq_poly, low: fmpq, high: fmpq | None, most: int = MOST_INTERVALS, near: Sequence[fmpq] = ()
 ) -> Literal[True] | Counterexample | None:
     """Return True if p > 0 is proved on an interval, a place where it is not, or None if neither was found.
 
     Parameters
     ----------
-    p, low, high
+    p, low, high, near
         As for `positive`.
     most : int
         Intervals looked at before giving up.
@@ -110,12 +128,20 @@ def examined(
         return Counterexample(high)
     if low == high:
         return True
-    waiting: list[tuple[fmpq, fmpq | None]] = [(low, high)]
+    ends: list[fmpq | None] = [low]
+    for place in near:
+        if low < place and (high is None or place < high):
+            if p(place) <= 0:
+                return Counterexample(place)
+            ends.append(place)
+    ends.append(high)
+    waiting: list[tuple[fmpq, fmpq | None]] = list(pairwise(ends))  # type: ignore[arg-type]
+    seen = _OnIntervals(f)
     for _ in range(most):
         if not waiting:
             return True
         a, b = waiting.pop()
-        changes = _changes(_to_half_line(f, a, b))
+        changes = _changes(seen.half_line(a, b))
         if changes == 0:
             # no root inside, and positive at the lower end
             continue

@@ -7,18 +7,21 @@ a point comes from one linear solve. The two share no code, so that one can chec
 from __future__ import annotations
 
 from collections.abc import Sequence
+from math import lcm
 from typing import Any
 
 import numpy as np
-from flint import acb, acb_mat, arb, fmpq, fmpq_mat, fmpq_poly
+from flint import acb, acb_mat, arb, fmpq, fmpq_mat, fmpq_poly, fmpz_mat
 
-from realize.kernels.exact.integer_scaling import Integers, integer_states
+from realize.kernels.exact.integer_scaling import Integers, integer_states, pair
 from realize.kernels.exact.numbers import fraction, precision
 from realize.kernels.exact.pencils import SingularPencil, pencil_transfer
 from realize.kernels.exact.polynomials import ONE, Complex, product
 
 __all__ = ["SingularPencil", "characteristic_polynomial", "response_at", "response_ball", "transfer_matrix"]
 
+#: Up to this order the integers are not made short first.
+SMALL_ORDER = 8
 #: A matrix as nested lists of integer ratios (p, q).
 Ratios = Sequence[Sequence[Any]]
 
@@ -54,6 +57,8 @@ def transfer_matrix(
         return [[fmpq_poly([entry]) for entry in row] for row in direct], ONE
     if E is not None and not _is_identity(E):
         return pencil_transfer(A, B, C, direct, E)
+    if n <= SMALL_ORDER:
+        return _small_transfer(A, B, C, direct)
     denominator = characteristic_polynomial(A)
     if p == 0 or m == 0:
         return [[] for _ in range(p)], denominator
@@ -69,6 +74,44 @@ def transfer_matrix(
             c = (upper * series).coeffs()[:n]
             c = c + [fmpq(0)] * (n - len(c))
             row.append(fmpq_poly(c[::-1]) + direct[i][j] * denominator if direct[i][j] else fmpq_poly(c[::-1]))
+        numerators.append(row)
+    return numerators, denominator
+
+
+def _over_common(matrix: Ratios) -> tuple[fmpz_mat, int]:
+    """Return integers and the common denominator that they stand over."""
+    pairs = [[pair(entry) for entry in row] for row in matrix]
+    common = lcm(*{q for row in pairs for _, q in row})
+    return fmpz_mat([[p * (common // q) for p, q in row] for row in pairs]), common
+
+
+def _small_transfer(
+    A: Ratios, B: Ratios, C: Ratios, direct: list[list[fmpq]]
+) -> tuple[list[list[fmpq_poly]], fmpq_poly]:
+    """Return the same for few states: one common denominator for each matrix, no scaling and no blocks."""
+    n, p, m = len(A), len(direct), len(direct[0]) if direct else 0
+    a, below = _over_common(A)
+    denominator = _unscaled(a.charpoly().coeffs(), fmpq(below))
+    if p == 0 or m == 0:
+        return [[] for _ in range(p)], denominator
+    b, b_below = _over_common(B)
+    c, c_below = _over_common(C)
+    upper = fmpq_poly(denominator.coeffs()[1:][::-1])
+    series, power = [], b_below * c_below
+    for k in range(n):
+        values = c * b
+        series.append([[fmpq(values[i, j], power) for j in range(m)] for i in range(p)])
+        if k < n - 1:
+            b = a * b
+            power *= below
+    numerators = []
+    for i in range(p):
+        row = []
+        for j in range(m):
+            found = (upper * fmpq_poly([entry[i][j] for entry in series])).coeffs()[:n]
+            found += [fmpq(0)] * (n - len(found))
+            numerator = fmpq_poly(found[::-1])
+            row.append(numerator + direct[i][j] * denominator if direct[i][j] else numerator)
         numerators.append(row)
     return numerators, denominator
 
