@@ -47,7 +47,7 @@ class Factors:
     #: Sampled models: those of them that are exactly on the unit circle, whatever their doubles are.
     circle: frozenset[complex] = field(default=frozenset(), kw_only=True)
     #: Sampled models: what they stand for to more digits, since what counts is their distance from z = 1 and -1.
-    precise: dict[complex, tuple[Fraction, Fraction]] = field(default_factory=dict, kw_only=True)
+    precise: dict[complex, tuple[Any, Any]] = field(default_factory=dict, kw_only=True)
 
 
 def _python(value: Any) -> Fraction:
@@ -144,7 +144,7 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
     from realize.kernels.exact.roots import roots, unit_circle
 
     on_circle: set[complex] = set()
-    precise: dict[complex, tuple[Fraction, Fraction]] = {}
+    precise: dict[complex, tuple[Any, Any]] = {}
 
     def listed(polynomial: Any) -> list[complex]:
         if polynomial.degree() < 1:
@@ -155,7 +155,7 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
             on_circle.update(root.value for root, flag in zip(distinct, flags, strict=True) if flag)
             for root in distinct:
                 ball = root.at(PRECISE_BITS)
-                precise[root.value] = (_python(exact_value(ball.real)), _python(exact_value(ball.imag)))
+                precise[root.value] = (exact_value(ball.real), exact_value(ball.imag))
         found = [root.value for root in distinct for _ in range(root.multiplicity)]
         for value in found:
             if not (np.isfinite(value.real) and np.isfinite(value.imag)):

@@ -25,9 +25,13 @@ import math
 from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from fractions import Fraction
+from itertools import accumulate, pairwise
 
 import numpy as np
+from flint import fmpq
 from numpy.typing import NDArray
+
+from realize.kernels.exact.numbers import exact, power_of_two
 
 Array = NDArray[np.float64]
 
@@ -41,12 +45,10 @@ class Section:
 
 
 #: Roots to more digits than their doubles have: real and imaginary part.
-Precise = Mapping[complex, tuple[Fraction, Fraction]]
+Precise = Mapping[complex, tuple[fmpq, fmpq]]
 
 
-def monic(
-    roots: tuple[complex, ...], circle: Collection[complex] = (), precise: Precise | None = None
-) -> list[Fraction]:
+def monic(roots: tuple[complex, ...], circle: Collection[complex] = (), precise: Precise | None = None) -> list[fmpq]:
     """Return the coefficients, highest power first, of the monic polynomial with one or two given roots.
 
     Parameters
@@ -57,20 +59,20 @@ def monic(
         What roots stand for to more digits; the doubles themselves where they are not listed.
     """
     if not roots:
-        return [Fraction(1)]
+        return [exact(1)]
 
-    def parts(root: complex) -> tuple[Fraction, Fraction]:
+    def parts(root: complex) -> tuple[fmpq, fmpq]:
         known = None if precise is None else precise.get(root)
-        return (Fraction(root.real), Fraction(root.imag)) if known is None else known
+        return (exact(root.real), exact(root.imag)) if known is None else known
 
     if len(roots) == 1:
-        return [Fraction(1), -parts(roots[0])[0]]
+        return [exact(1), -parts(roots[0])[0]]
     first, second = roots
     re, im = parts(first)
     if first.imag != 0:
-        return [Fraction(1), -2 * re, Fraction(1) if first in circle else re * re + im * im]
+        return [exact(1), -2 * re, exact(1) if first in circle else re * re + im * im]
     q = parts(second)[0]
-    return [Fraction(1), -(re + q), re * q]
+    return [exact(1), -(re + q), re * q]
 
 
 def _size(root: complex, sampled: bool) -> float:
@@ -187,7 +189,7 @@ def group_roots(zeros: list[complex], poles: list[complex], sampled: bool = Fals
 
 def cascade_states(
     sections: list[Section],
-    gain: Fraction,
+    gain: fmpq | Fraction,
     sampled: bool = False,
     circle: Collection[complex] = (),
     precise: Precise | None = None,
@@ -198,7 +200,7 @@ def cascade_states(
     ----------
     sections : list of Section
         In the order of the signal, apart from those that have to come first.
-    gain : Fraction
+    gain : fmpq or Fraction
         Ratio of the leading coefficients of numerator and denominator.
     sampled : bool
         The roots are those of polynomials in z.
@@ -207,6 +209,7 @@ def cascade_states(
     precise : mapping, optional
         What roots stand for to more digits.
     """
+    gain = exact(gain)
     blocks = [_block(section, sampled, circle, precise) for section in sections]
     n = sum(len(block.column) for block in blocks)
     A = np.zeros((n, n))
@@ -253,23 +256,24 @@ def _graded(A: Array, B: Array, C: Array, sizes: list[int], sampled: bool) -> tu
     Elimination with row exchanges, as any library solves (sI - A) x = B, then keeps to the order of the sections: time
     scales twelve decades apart do not mix.
     """
-    ends = np.cumsum([0, *sizes]).tolist()
-    scale = np.zeros(A.shape[0], dtype=np.int64)
+    ends = [0, *accumulate(sizes)]
+    rows = A.tolist()
+    powers: list[int] = []
     speed: list[float] = []
-    for k in range(len(sizes)):
-        part = slice(ends[k], ends[k + 1])
+    for k, (start, stop) in enumerate(pairwise(ends)):
         # what counts is the distance from the axis: from z = 1 or -1 in sampled time
-        own = A[part, part] - np.eye(sizes[k]) * (round(float(A[ends[k], ends[k]])) if sampled else 0)
-        speed.append(float(np.abs(own).max()) or 1.0)
+        shift = round(rows[start][start]) if sampled else 0
+        own = [abs(rows[i][j] - shift * (i == j)) for i in range(start, stop) for j in range(start, stop)]
+        speed.append(max(own) or 1.0)
         needed = [
-            math.frexp(coupling)[1] + int(scale[ends[j]]) - math.frexp(speed[j])[1] + 1
+            math.frexp(coupling)[1] + powers[j] - math.frexp(speed[j])[1] + 1
             for j in range(k)
-            if (coupling := float(np.abs(A[part, ends[j] : ends[j + 1]]).max())) > 0
+            if (coupling := max(abs(x) for row in rows[start:stop] for x in row[ends[j] : ends[j + 1]])) > 0
         ]
-        if needed:
-            scale[part] = max(needed)
-    if not np.any(scale) or int(np.abs(scale).max()) > 400:
+        powers.append(max(needed, default=0))
+    if not any(powers) or max(abs(power) for power in powers) > 400:
         return A, B, C
+    scale = np.repeat(np.array(powers, dtype=np.int64), sizes)
     with np.errstate(over="ignore", under="ignore"):
         made = (
             np.ldexp(A, scale[None, :] - scale[:, None]),
@@ -294,11 +298,11 @@ class _Block:
 
 
 #: Diagonal entries of sampled sections with a zero at -1 or 1 are multiples of this, so that entry +- 1 is exact.
-_GRID = Fraction(1, 2**52)
+_GRID = power_of_two(-52)
 
 
-def _on_grid(value: Fraction) -> Fraction:
-    return Fraction(round(value / _GRID)) * _GRID
+def _on_grid(value: fmpq) -> fmpq:
+    return (value / _GRID + exact(0.5)).floor() * _GRID
 
 
 def _block(section: Section, sampled: bool, circle: Collection[complex], precise: Precise | None) -> _Block:
@@ -306,51 +310,51 @@ def _block(section: Section, sampled: bool, circle: Collection[complex], precise
     exact_zeros = sampled and any(zero in (1, -1) for zero in section.zeros)
     if len(section.poles) == 1:
         return _first_order(section, exact_zeros)
-    centre = Fraction(0)
+    centre = exact(0)
     if sampled:
-        centre = Fraction(1 if section.poles[0].real + section.poles[1].real >= 0 else -1)
+        centre = exact(1 if section.poles[0].real + section.poles[1].real >= 0 else -1)
     below = _shifted(monic(section.poles, circle, precise), centre)
     above = _shifted(monic(section.zeros, circle, precise), centre)
     d1, d0 = below[1], below[2]
     size = math.sqrt(abs(to_double(d0))) or abs(to_double(d1)) if sampled else max(abs(p) for p in section.poles)
     e = math.frexp(size)[1] if size > 0 else 0
-    k = Fraction(2) ** e
+    k = power_of_two(e)
     corner = centre - d1
-    corner = _on_grid(corner) if exact_zeros else Fraction(to_double(corner))
+    corner = _on_grid(corner) if exact_zeros else exact(to_double(corner))
     damping = centre - corner
-    stiffness = Fraction(to_double(d0 / k))
+    stiffness = exact(to_double(d0 / k))
     if sampled and section.poles[0].imag and (section.poles[0] in circle or _on_circle(section.poles[0])):
         # |p| = 1: with t = z - c the denominator is t^2 + d t + c d, whatever d is
         d0 = damping * centre
-        stiffness = Fraction(to_double(d0 / k))
+        stiffness = exact(to_double(d0 / k))
     A = [[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]]
     zeros = len(section.zeros)
-    b = Fraction(2) ** (e // 2)
+    b = power_of_two(e // 2)
     if zeros == 2 and sorted_alike(section.zeros, section.poles):
         # zeros on the poles themselves: nothing is left of the section but two states that no output sees
         return _Block(A, [0.0, to_double(b)], [0.0, 0.0], 1.0, 0)
     if zeros == 2 and exact_zeros and section.zeros[0].imag == 0:
         kept, other = sorted(section.zeros, key=lambda z: z not in (1, -1))
-        column = [k * b, (corner - Fraction(other.real)) * b]
-        row = [(centre - Fraction(kept.real)) / (k * b), 1 / b]
+        column = [k * b, (corner - exact(other.real)) * b]
+        row = [(centre - exact(kept.real)) / (k * b), 1 / b]
         return _Block(A, _doubles(column), _doubles(row), 1.0, 0, True)
     # the numerator is formed against the rounded denominator, so that exact cancellations are exact
-    column = [Fraction(0), b]
+    column = [exact(0), b]
     if zeros == 2:
         constant = above[2]
         if _amplification(section.poles, section.zeros, sampled) > TUNE_FROM or _near_end(section, sampled):
             # what rounding does to the linear term is made good, at the zero, by the constant term
-            missed = damping + Fraction(to_double(above[1] - damping)) - above[1]
-            constant -= missed * (Fraction(section.zeros[0].real) - centre)
+            missed = damping + exact(to_double(above[1] - damping)) - above[1]
+            constant -= missed * (exact(section.zeros[0].real) - centre)
             k = _tuned(k, d0, constant)
-            stiffness = Fraction(to_double(d0 / k))
+            stiffness = exact(to_double(d0 / k))
             A = [[to_double(centre), to_double(k)], [-to_double(stiffness), to_double(corner)]]
         row = [(constant / k - stiffness) / b, (above[1] - damping) / b]
         return _Block(A, _doubles(column), _doubles(row), 1.0, 0)
-    rest = Fraction(2) ** (e - e // 2)
+    rest = power_of_two(e - e // 2)
     if zeros == 1:
         return _Block(A, _doubles(column), _doubles([above[1] / k * rest, rest]), 0.0, e)
-    return _Block(A, _doubles(column), _doubles([rest, Fraction(0)]), 0.0, 2 * e)
+    return _Block(A, _doubles(column), _doubles([rest, exact(0)]), 0.0, 2 * e)
 
 
 #: From this amplification of rounding near a zero the coupling of the two states is tuned.
@@ -365,7 +369,7 @@ def _near_end(section: Section, sampled: bool) -> bool:
     return sampled and abs(zero + 1) < 0.5
 
 
-def _tuned(k: Fraction, d0: Fraction, n0: Fraction) -> Fraction:
+def _tuned(k: fmpq, d0: fmpq, n0: fmpq) -> fmpq:
     """Return a coupling k for which the rounded constant term of the numerator is nearly exact.
 
     That term is k (s + b c0) with s = d0/k and b c0 = n0/k - s both rounded: its error is a different fraction of a
@@ -374,14 +378,14 @@ def _tuned(k: Fraction, d0: Fraction, n0: Fraction) -> Fraction:
 
     Parameters
     ----------
-    k : Fraction
+    k : fmpq
         A power of two.
-    d0, n0 : Fraction
+    d0, n0 : fmpq
         Constant terms of denominator and numerator.
     """
     # in units of n0's and d0's common denominator, with k T/1024 in place of k: whole numbers all along
-    unit = math.lcm(d0.denominator, n0.denominator)
-    D, N = d0.numerator * (unit // d0.denominator), n0.numerator * (unit // n0.denominator)
+    unit = math.lcm(int(d0.q), int(n0.q))
+    D, N = int(d0 * unit), int(n0 * unit)
     if max(D.bit_length(), N.bit_length()) > 900:
         return k
     target = abs(to_double(n0 - d0)) * 2.0**-53 / 1024
@@ -395,29 +399,29 @@ def _tuned(k: Fraction, d0: Fraction, n0: Fraction) -> Fraction:
             best, found = T, error
             if found <= target:
                 break
-    return k * Fraction(best, 1024)
+    return k * best / 1024
 
 
 def _first_order(section: Section, exact_zeros: bool) -> _Block:
-    pole = Fraction(section.poles[0].real)
+    pole = exact(section.poles[0].real)
     if exact_zeros:
         pole = _on_grid(pole)
     size = abs(section.poles[0])
     e = math.frexp(size)[1] if size > 0 else 0
-    b = Fraction(2) ** (e // 2)
+    b = power_of_two(e // 2)
     A = [[to_double(pole)]]
     if section.zeros:
-        return _Block(A, _doubles([b]), _doubles([(pole - Fraction(section.zeros[0].real)) / b]), 1.0, 0)
-    return _Block(A, _doubles([b]), _doubles([Fraction(2) ** (e - e // 2)]), 0.0, e)
+        return _Block(A, _doubles([b]), _doubles([(pole - exact(section.zeros[0].real)) / b]), 1.0, 0)
+    return _Block(A, _doubles([b]), _doubles([power_of_two(e - e // 2)]), 0.0, e)
 
 
-def _shifted(polynomial: list[Fraction], centre: Fraction) -> list[Fraction]:
+def _shifted(polynomial: list[fmpq], centre: fmpq) -> list[fmpq]:
     """Return the coefficients of p(t + centre) for degree at most two."""
     if centre == 0 or len(polynomial) == 1:
         return polynomial
     if len(polynomial) == 2:
-        return [Fraction(1), polynomial[1] + centre]
-    return [Fraction(1), polynomial[1] + 2 * centre, polynomial[2] + polynomial[1] * centre + centre * centre]
+        return [exact(1), polynomial[1] + centre]
+    return [exact(1), polynomial[1] + 2 * centre, polynomial[2] + polynomial[1] * centre + centre * centre]
 
 
 def sorted_alike(first: tuple[complex, ...], second: tuple[complex, ...]) -> bool:
@@ -431,11 +435,11 @@ def sorted_alike(first: tuple[complex, ...], second: tuple[complex, ...]) -> boo
 
 def _on_circle(pole: complex) -> bool:
     """True where |p| of the doubles is exactly 1."""
-    re, im = Fraction(pole.real), Fraction(pole.imag)
+    re, im = exact(pole.real), exact(pole.imag)
     return re * re + im * im == 1
 
 
-def _doubles(values: list[Fraction]) -> list[float]:
+def _doubles(values: list[fmpq]) -> list[float]:
     return [to_double(value) for value in values]
 
 
@@ -451,13 +455,14 @@ class BeyondDoubles(ArithmeticError):
     """An entry of a form lies beyond the range of doubles."""
 
 
-def to_double(value: Fraction) -> float:
+def to_double(value: fmpq | Fraction) -> float:
     """Return the nearest double; raises `BeyondDoubles` where there is none with full accuracy."""
+    value = exact(value)
     try:
-        number = value.numerator / value.denominator
+        number = int(value.p) / int(value.q)
     except OverflowError:
         raise BeyondDoubles from None
-    if abs(number) < _NORMAL and Fraction(number) != value:
+    if abs(number) < _NORMAL and exact(number) != value:
         raise BeyondDoubles
     return number
 
@@ -478,7 +483,7 @@ def _times(value: float, factor: float, exponent: int = 0) -> float:
     return result
 
 
-def split(value: Fraction) -> tuple[Fraction, int]:
+def split(value: fmpq) -> tuple[fmpq, int]:
     """Return mantissa in [0.5, 2) and exponent with value = mantissa * 2^exponent."""
-    exponent = abs(value.numerator).bit_length() - value.denominator.bit_length()
-    return value / Fraction(2) ** exponent, exponent
+    exponent = abs(int(value.p)).bit_length() - int(value.q).bit_length()
+    return value / power_of_two(exponent), exponent

@@ -19,7 +19,7 @@ from realize.steps.conversion import Conversion
 from realize.steps.second_opinion import Later, Opinion
 from realize.verification import fragility, view_of
 from realize.verification.bands import whole_band
-from realize.verification.search import seeds
+from realize.verification.search import few_seeds
 
 CLOSED_LOOP = (
     "Check the closed loop on the full plant model, and on the hardware with limits in place, "
@@ -68,7 +68,8 @@ def probe_frequencies(model: Model, count: int = 40) -> np.ndarray:
         w = model.radians[model.radians > 0]
     else:
         view = view_of(model)
-        w = seeds(whole_band(view, margin=1.0), view.poles)
+        band = whole_band(view, margin=1.0)
+        w = band.keep(few_seeds(band, view.poles))
         w = w[w > 0]
     if w.size > count:
         w = w[np.unique(np.linspace(0, w.size - 1, count).astype(int))]

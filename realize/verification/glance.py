@@ -89,7 +89,7 @@ class Glance:
             return None
         found = np.array(summits(self.w[inside], values, band))
         sizes = self.squares.root_of_quotient(self.squares(self._x(found)), above, below)
-        return [found[k] for k in np.argsort(-sizes, kind="stable").tolist()]
+        return [float(found[k]) for k in np.argsort(-sizes, kind="stable").tolist()]
 
     def error(self, band: Band, divisor: float) -> Found | None:
         """Return the largest error found, relative to the source (divisor 0) or to a gain; None for no look."""

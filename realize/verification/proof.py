@@ -56,6 +56,11 @@ class Proof:
                     common = common * polynomials.quotient(d, common.gcd(d))
             lists.append([n if d == common else n * polynomials.quotient(common, d) for n, d in flat])
             commons.append(common)
+        # frequencies are counted in a power of two near the middle of the dynamics
+        self.unit = self._middle(commons[0])
+        if self.unit != 1:
+            commons = [polynomials.stretched(p, self.unit) for p in commons]
+            lists = [[polynomials.stretched(p, self.unit) for p in listed] for listed in lists]
         self.d1, self.d2 = commons
         self.n1, self.n2 = lists
 
@@ -75,21 +80,15 @@ class Proof:
 
         if self.period is not None:
             polynomial = bilinear_image(polynomial, degree)
-        return square_modulus(self._scaled(polynomial))
+        return square_modulus(polynomial)
 
-    def _scaled(self, polynomial: Any) -> Any:
-        from realize.kernels.exact.polynomials import stretched
-
-        return stretched(polynomial, self.unit) if self.unit != 1 else polynomial
-
-    @cached_property
-    def unit(self) -> Any:
-        """A power of two near the middle of the dynamics: frequencies are counted in it."""
+    def _middle(self, denominator: Any) -> Any:
+        """Return a power of two near the middle of the poles, 1 for sampled models."""
         from realize.kernels.exact.numbers import binary_exponent, power_of_two
 
         if self.period is not None:
             return power_of_two(0)
-        c = self.d1.coeffs()
+        c = denominator.coeffs()
         low = next((k for k, value in enumerate(c) if value), 0)
         n = len(c) - 1
         if n == low:

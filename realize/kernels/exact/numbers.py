@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 import sys
 from collections.abc import Sequence
+from fractions import Fraction
 from typing import Any
 
 import flint
@@ -43,6 +44,17 @@ def fraction(ratio: Ratio) -> fmpq:
         return fmpq(ratio)
     p, q = ratio
     return fmpq(p, q)
+
+
+def exact(value: float | Fraction | fmpq | fmpz) -> fmpq:
+    """Return the rational that a number is: a double, an integer, a fraction of either library."""
+    if isinstance(value, fmpq):
+        return value
+    if isinstance(value, float):
+        return fmpq(*value.as_integer_ratio())
+    if isinstance(value, Fraction):
+        return fmpq(value.numerator, value.denominator)
+    return fmpq(value)
 
 
 def complex_fraction(value: Any) -> tuple[fmpq, fmpq]:
