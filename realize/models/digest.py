@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import hashlib
+from functools import lru_cache
 from typing import Any
 
 import numpy as np
 
-from realize.models.base import Model
+from realize.models.base import Model, Signal
 from realize.schema import ModelMark
 
 
@@ -38,12 +39,9 @@ def digest(model: Model) -> str:
 
 
 def _digest(model: Model) -> str:
-    parts: list[bytes] = []
-    _feed(parts, ["realize model 1", model.kind])
     time = model.time
-    _feed(parts, [time.domain, str(time.exact_period) if time.sampled else ""])
-    for signals in (model.inputs, model.outputs, getattr(model, "states", ())):
-        _feed(parts, [[signal.name, signal.unit] for signal in signals])
+    period = str(time.exact_period) if time.sampled else ""
+    parts = [_head(model.kind, time.domain, period, model.inputs, model.outputs, getattr(model, "states", ()))]
     dead = model.dead_time
     _feed(parts, None if dead is None else [dead.inputs, dead.outputs, dead.channels])
     offset = model.offset
@@ -55,6 +53,17 @@ def _digest(model: Model) -> str:
         rows = model.decimals[name]
         _feed(parts, [name, [[list(index), rows[index]] for index in sorted(rows)]])
     return "sha256:" + hashlib.sha256(b"".join(parts)).hexdigest()
+
+
+@lru_cache(maxsize=64)
+def _head(kind: str, domain: str, period: str, *lists: tuple[Signal, ...]) -> bytes:
+    """Return what is hashed of kind, time and signals; thousands of models in a row share it."""
+    parts: list[bytes] = []
+    _feed(parts, ["realize model 1", kind])
+    _feed(parts, [domain, period])
+    for signals in lists:
+        _feed(parts, [[signal.name, signal.unit] for signal in signals])
+    return b"".join(parts)
 
 
 def mark(model: Model) -> ModelMark:

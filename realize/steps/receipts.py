@@ -129,6 +129,16 @@ def plain(value: Any) -> Any:
     return [plain(entry) for entry in value] if isinstance(value, (list, tuple)) else value
 
 
+def _plain_claim(claim: Claim) -> Claim:
+    """Return the claim with Python's own numbers in place of numpy's."""
+    changed = {
+        field: plain(value)
+        for field in claim.__struct_fields__
+        if isinstance(value := getattr(claim, field), np.generic) or (type(value) is dict and value)
+    }
+    return msgspec.structs.replace(claim, **changed) if changed else claim
+
+
 def _arbiter(claims: list[Claim], by: str) -> str:
     """Return who is right where the second opinion disagrees: exact arithmetic decides when it can."""
     judged = [claim for claim in claims if claim.name in ("response-error", "peak-error") and claim.basis == "proved"]
@@ -167,10 +177,7 @@ def finish(
     digits : int, optional
         Decimal digits of the result's numbers, where they are no doubles: its fragility is that of one rounding there.
     """
-    claims = [
-        msgspec.structs.replace(claim, **{field: plain(getattr(claim, field)) for field in claim.__struct_fields__})
-        for claim in with_limits(claims, limits or {})
-    ]
+    claims = [_plain_claim(claim) for claim in with_limits(claims, limits or {})]
     frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
     values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
     if digits is not None and values["result"] is not None:
