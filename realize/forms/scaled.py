@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import numpy as np
 
-from realize.forms.coordinates import Array, Coordinates, Setting, take_units_out
+from realize.forms.coordinates import Array, Coordinates, Setting, Units, take_units_out
+from realize.kernels.response import balancing_scale
 
 
 def _spread(*matrices: Array) -> float:
@@ -41,11 +42,26 @@ def scaled_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
     .. [1] B. N. Parlett, C. Reinsch, Balancing a matrix for calculation of eigenvalues and eigenvectors, Numer. Math.
            13 (1969) 293-304 (from memory).
     """
+    n, m, p = A.shape[0], B.shape[1], C.shape[0]
     units = take_units_out(A, B, C, setting)
-    n = A.shape[0]
     result = units.restored(units.A, units.B, units.C, D, np.eye(n), np.eye(n))
-    result.details.update(
-        exponents=units.states.tolist(),
-        spread={"before": _spread(A, B, C), "after": _spread(result.A, result.B, result.C)},
+    exponents, after = units.states, _spread(result.A, result.B, result.C)
+    # the same with A, B and C weighed as they are: which of the two is more even depends on the plant
+    border = np.zeros((n + m + p, n + m + p))
+    border[:n, :n], border[:n, n : n + m], border[n + m :, :n] = np.abs(A), np.abs(B), np.abs(C)
+    other = np.frexp(balancing_scale(border)[:n])[1].astype(np.int64) - 1
+    plain = Units(
+        np.ldexp(A, other[None, :] - other[:, None]),
+        np.ldexp(B, -other[:, None]),
+        np.ldexp(C, other[None, :]),
+        other,
+        0,
+        0,
     )
+    if all(np.all(np.isfinite(matrix)) for matrix in (plain.A, plain.B, plain.C)):
+        spread = _spread(plain.A, plain.B, plain.C)
+        if spread < after:
+            exponents, after = other, spread
+            result = plain.restored(plain.A, plain.B, plain.C, D, np.eye(n), np.eye(n))
+    result.details.update(exponents=exponents.tolist(), spread={"before": _spread(A, B, C), "after": after})
     return result
