@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from functools import cached_property
 from typing import Any, NamedTuple
@@ -97,9 +98,8 @@ class Pair:
 
         if self.source.period is not None:
             return fraction(1)
-        sizes = self.source.poles.frequency
-        sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
-        middle = float(np.exp(np.mean(np.log(sizes)))) if sizes.size else 1.0
+        sizes = [size for size in self.source.poles.frequency.tolist() if 0 < size < math.inf]
+        middle = math.exp(sum(map(math.log, sizes)) / len(sizes)) if sizes else 1.0
         return fraction(middle.as_integer_ratio())
 
     @cached_property

@@ -292,8 +292,10 @@ def _without_common(first: Any, second: Any) -> tuple[Any, Any]:
     Both are sums of squares on x >= 0, so that a common root x > 0 has even multiplicity, and one at x = 0 is at the
     edge: what is cancelled is not negative.
     """
-    from realize.kernels.exact.polynomials import quotient
+    from realize.kernels.exact.polynomials import coprime, quotient
 
+    if coprime(first, second):
+        return first, second
     common = first.gcd(second)
     if common.degree() < 1:
         return first, second

@@ -10,8 +10,7 @@ from flint import fmpq, fmpq_mat, fmpq_poly, fmpz, fmpz_mat, nmod_mat
 from numpy.typing import NDArray
 
 from realize.kernels.exact.cost import affordable
-from realize.kernels.exact.numbers import fraction, nearest
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import fraction, nearest, prime
 
 Array = NDArray[np.float64]
 Ratios = Sequence[Sequence[Any]]

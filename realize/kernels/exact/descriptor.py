@@ -14,7 +14,8 @@ from typing import Any, NamedTuple
 
 from flint import fmpq, fmpq_mat, nmod_mat
 
-from realize.kernels.exact.pencils import SingularPencil, prime
+from realize.kernels.exact.numbers import prime
+from realize.kernels.exact.pencils import SingularPencil
 
 Ratios = Sequence[Sequence[Any]]
 Rational = list[list[fmpq]]

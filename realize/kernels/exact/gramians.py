@@ -43,8 +43,7 @@ from realize.kernels.exact.dense_balls import (
     triangular_factors,
 )
 from realize.kernels.exact.integer_scaling import integer_states, split, state_shifts
-from realize.kernels.exact.numbers import binary_exponent, fraction, near_ball, nearest, power_of_two, precision
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import binary_exponent, fraction, near_ball, nearest, power_of_two, precision, prime
 
 Array = NDArray[np.float64]
 Ratios = Sequence[Sequence[Any]]

@@ -14,8 +14,7 @@ from typing import Any
 from flint import fmpq, fmpq_mat, fmpq_poly, nmod_mat
 
 from realize.kernels.exact.integer_scaling import integer_states
-from realize.kernels.exact.numbers import fraction
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import fraction, prime
 from realize.kernels.exact.polynomials import ONE, quotient
 from realize.kernels.exact.roots import roots
 

@@ -7,8 +7,7 @@ from typing import Any
 
 from flint import acb, acb_poly, arb, arb_poly, fmpq, fmpq_poly, fmpz_poly, nmod_poly
 
-from realize.kernels.exact.numbers import conjugate, precision, scaled_ball, simplest_in
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import conjugate, precision, prime, scaled_ball, simplest_in
 from realize.kernels.exact.polynomials import even_odd, in_square, monic, quotient
 
 #: Relative accuracy (bits) of the balls that isolation returns.

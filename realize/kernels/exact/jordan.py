@@ -21,8 +21,7 @@ from numpy.typing import NDArray
 
 from realize.kernels.exact.bases import BeyondRange, RationalStates, beside, krylov, modular_matrix, rounded_matrix
 from realize.kernels.exact.isolation import integer_polynomial
-from realize.kernels.exact.numbers import near_ball, nearest_ball, precision
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import near_ball, nearest_ball, precision, prime
 from realize.kernels.exact.polynomials import monic, quotient, squarefree
 from realize.kernels.exact.roots import Root, roots
 from realize.kernels.exact.states import characteristic_polynomial

@@ -20,6 +20,19 @@ Ratio = Sequence[int] | fmpq | int
 _TINY = -1200
 
 
+_PRIMES: list[int] = []
+
+
+def prime(k: int) -> int:
+    """Return the k-th prime below 2^62, counted downwards from 0."""
+    while len(_PRIMES) <= k:
+        candidate = (_PRIMES[-1] if _PRIMES else (1 << 62) + 1) - 2
+        while not fmpz(candidate).is_prime():
+            candidate -= 2
+        _PRIMES.append(candidate)
+    return _PRIMES[k]
+
+
 class precision:
     """Set the working precision of ball arithmetic (bits) for a block, and restore it whatever happens."""
 

@@ -10,8 +10,7 @@ from flint import fmpq, fmpq_poly, fmpz_mat, nmod_mat, nmod_poly
 
 from realize.kernels.exact.cost import BUDGET, affordable, rank_operations
 from realize.kernels.exact.integer_scaling import integer_states
-from realize.kernels.exact.numbers import fraction
-from realize.kernels.exact.pencils import prime
+from realize.kernels.exact.numbers import fraction, prime
 from realize.kernels.exact.polynomials import ONE, reduce_fraction, reversed_polynomial, shifted
 from realize.kernels.exact.states import transfer_matrix
 

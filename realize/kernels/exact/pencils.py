@@ -9,24 +9,13 @@ import numpy as np
 from flint import fmpq, fmpq_poly, fmpz, fmpz_mat, nmod_mat, nmod_poly
 
 from realize.kernels.exact.integer_scaling import split
-from realize.kernels.exact.numbers import power_of_two
+from realize.kernels.exact.numbers import power_of_two, prime
 
 Ratios = Sequence[Sequence[Any]]
-_PRIMES: list[int] = []
 
 
 class SingularPencil(ValueError):
     """det(sE - A) is identically zero: the descriptor equations have no unique solution."""
-
-
-def prime(k: int) -> int:
-    """Return the k-th prime below 2^62, counted downwards from 0."""
-    while len(_PRIMES) <= k:
-        candidate = (_PRIMES[-1] if _PRIMES else (1 << 62) + 1) - 2
-        while not fmpz(candidate).is_prime():
-            candidate -= 2
-        _PRIMES.append(candidate)
-    return _PRIMES[k]
 
 
 def _integer_rows(blocks: list[list[list[Any]]], column_shifts: list[np.ndarray]) -> tuple[list[list[list[int]]], fmpq]:

@@ -5,9 +5,9 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from typing import Any
 
-from flint import fmpq, fmpq_poly, fmpz_poly
+from flint import fmpq, fmpq_poly, fmpz_poly, nmod_poly
 
-from realize.kernels.exact.numbers import Ratio, complex_fraction, fraction
+from realize.kernels.exact.numbers import Ratio, complex_fraction, fraction, prime
 
 #: The polynomials 0, 1 and the variable.
 ZERO = fmpq_poly([])
@@ -45,6 +45,21 @@ def gcd(p: fmpq_poly, q: fmpq_poly) -> fmpq_poly:
     return p.gcd(q)
 
 
+def coprime(p: fmpq_poly, q: fmpq_poly) -> bool:
+    """Return True only if two polynomials have no common factor: they have none modulo a prime that divides no leader.
+
+    False where a factor in common was not ruled out that way.
+    """
+    modulus = prime(0)
+    images = []
+    for one in (p, q):
+        c = [int(value) % modulus for value in one.numer().coeffs()]
+        if not c or not c[-1]:
+            return False
+        images.append(nmod_poly(c, modulus))
+    return bool(images[0].gcd(images[1]).degree() == 0)
+
+
 def reduce_fraction(n: fmpq_poly, d: fmpq_poly) -> tuple[fmpq_poly, fmpq_poly]:
     """Return the same fraction with the common factors cancelled and a monic denominator; zero is 0 / 1.
 
@@ -57,9 +72,10 @@ def reduce_fraction(n: fmpq_poly, d: fmpq_poly) -> tuple[fmpq_poly, fmpq_poly]:
         raise ZeroDivisionError("the denominator is identically zero")
     if not n:
         return ZERO, ONE
-    common = n.gcd(d)
-    if common.degree() > 0:
-        n, d = quotient(n, common), quotient(d, common)
+    if not coprime(n, d):
+        common = n.gcd(d)
+        if common.degree() > 0:
+            n, d = quotient(n, common), quotient(d, common)
     lead = d.leading_coefficient()
     return n / lead, d / lead
 
