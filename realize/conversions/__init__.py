@@ -1,5 +1,6 @@
 """Conversions between kinds: rows of two tables, a route that can be printed."""
 
+from realize.conversions import minimal_states
 from realize.conversions.coordinates import Changed
 from realize.conversions.route import (
     COORDINATE_ROWS,
@@ -27,5 +28,6 @@ __all__ = [
     "convert_model",
     "coordinate_row",
     "default_form",
+    "minimal_states",
     "plan_route",
 ]

@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
-from realize.conversions import builders, descriptor, digits, doubles, second_order
+from realize.conversions import builders, descriptor, digits, doubles, minimal_states, second_order
 from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
@@ -52,6 +52,8 @@ class Task:
         if self.to != "state-space":
             return self.to
         form = self.form or default_form(self.model)
+        if form == "minimal" and choose_arithmetic(self).arithmetic == "double":
+            form = "modal"
         return f"state-space:{form}" if form else "state-space"
 
 
@@ -78,6 +80,7 @@ SECTIONS_IN_SERIES = Row(
 )
 MODAL_BLOCKS = Row("pole-residue", "state-space:modal", builders.modal, False, "one block for each pole or pair")
 
+MINIMAL = "minimal states of each pole, exactly of the McMillan degree; modal, cascade or balanced as proves best"
 MASS_AS_IT_STANDS = Row(
     "second-order",
     "state-space",
@@ -158,6 +161,8 @@ ROWS: tuple[Row, ...] = (
         False,
         "coefficients as entries, each rounded once",
     ),
+    Row("exact-fractions", "state-space:minimal", minimal_states.minimal_modal, False, MINIMAL),
+    Row("pole-residue", "state-space:minimal", minimal_states.minimal_modal, False, MINIMAL),
 )
 
 #: Rows in double arithmetic: nothing exact is formed.
@@ -203,7 +208,7 @@ DOUBLE_ROWS: tuple[Row, ...] = (
 COORDINATE_ROWS: tuple[Row, ...] = tuple(
     Row(source, f"state-space:{name}", partial(change, name=name, of_source=source == "state-space"), False, form.says)
     for name, form in TABLE.items()
-    for source in ("state-space", "state-space:cascade", "state-space:modal")
+    for source in ("state-space", "state-space:cascade", "state-space:modal", "state-space:minimal")
     if source == "state-space" or not form.from_states_only
 )
 
@@ -248,14 +253,15 @@ def choose_arithmetic(task: Task) -> Choice:
 def default_form(model: Model) -> str:
     """Return the coordinates that are used unless others are asked for ('' = leave a state model as it is).
 
-    State models stay as they are, and second-order ones keep positions and velocities. Partial fractions, and models
-    with several channels, become modal; a single channel becomes a cascade.
+    State models stay as they are, and second-order ones keep positions and velocities. Partial fractions of one channel
+    become modal, and any other single channel a cascade; several channels get the McMillan degree in the coordinates
+    that prove best ("minimal"; modal in double arithmetic).
     """
     if isinstance(model, (StateSpace, SecondOrder)):
         return ""
-    if model.kind == "pole-residue" or model.shape != (1, 1):
-        return "modal"
-    return "cascade"
+    if model.shape != (1, 1):
+        return "minimal"
+    return "modal" if model.kind == "pole-residue" else "cascade"
 
 
 def plan_route(task: Task) -> list[Row]:

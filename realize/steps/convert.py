@@ -8,12 +8,22 @@ from typing import Any
 
 import numpy as np
 
-from realize.conversions import Changed, Choice, Row, Task, choose_arithmetic, convert_model, coordinate_row, plan_route
+from realize.conversions import (
+    Changed,
+    Choice,
+    Task,
+    choose_arithmetic,
+    convert_model,
+    coordinate_row,
+    minimal_states,
+    plan_route,
+)
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
 from realize.models import FrequencyResponse, Model, StateSpace
 from realize.models.checks import MAX_DIGITS
 from realize.schema import ARITHMETICS, CLAIMS, FORMS, ORDERINGS, PARAMETRIC_KINDS, STRUCTURED, Claim
+from realize.steps.candidates import choose_states
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
@@ -106,9 +116,9 @@ def convert(
     to : str
         A parametric kind.
     form : str, optional
-        Coordinates of a state-space result; the default is a cascade for one channel, modal for several, and whatever
-        a state-space source has. The receipt's ``details["coordinates"]`` has the transform from the states of a
-        state-space source, its condition number, and the way back.
+        Coordinates of a state-space result; the default is a cascade for one channel, the best of several minimal ones
+        for more, and whatever a state-space source has. The receipt's ``details["coordinates"]`` has the transform from
+        the states of a state-space source, its condition number, and the way back.
     ordering : str, optional
         Order of the blocks of the form "schur": "speed" (slowest first, the default), "damping" (least damped first)
         or "stability" (unstable first).
@@ -153,14 +163,15 @@ def convert(
         elif form is None:
             route, result, claims, shape = _default(task, limits)
         else:
-            route = plan_route(task)
-            result, shape = convert_model(task, route), _form_of(task, route)
+            rows = plan_route(task)
+            route = [row.target for row in rows]
+            result, shape = convert_model(task, rows), _form_of(task, rows)
             claims = conversion_claims(source, result, shape in STRUCTURED, limits)
         cautions = [*_cautions(source, result, to), *task.notes, *_costly(choice)]
         return finish(
             "convert",
             f"{_method(choice, changed, source) if route else 'left as it was'}, {shape or to}",
-            [row.target for row in route],
+            route,
             source,
             result,
             claims,
@@ -180,12 +191,17 @@ def convert(
         )
 
 
-def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Model, list[Claim], str]:
+def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[str], Model, list[Claim], str]:
     """Return route, result, claims and coordinates ('' for none) of a conversion without a form asked for."""
     source = task.model
     route = plan_route(task)
     result = convert_model(task, route)
     shape = _form_of(task, route)
+    if shape == "minimal" and isinstance(result, StateSpace):
+        best = choose_states(task, result, [row.target for row in route], limits)
+        task.details.update(minimal_states.decision(task))
+        return best.route, best.model, best.claims, best.name
+    nodes = [row.target for row in route]
     claims = conversion_claims(source, result, (shape or task.to) in STRUCTURED, limits)
     rival = _rival(source, shape, claims)
     if rival:
@@ -200,18 +216,19 @@ def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Mo
             better = _worst(second_claims) < _worst(claims)
             as_good = rival == "modal" and _worst(second_claims) <= _worst(claims)
             if (better or as_good) and _failures(second_claims) <= _failures(claims):
-                return second_route, second, second_claims, rival
-    return route, result, claims, shape
+                return [row.target for row in second_route], second, second_claims, rival
+    return nodes, result, claims, shape
 
 
-def _change(task: Task, limits: dict[str, float] | None) -> tuple[list[Row], Changed]:
+def _change(task: Task, limits: dict[str, float] | None) -> tuple[list[str], Changed]:
     """Return route and result of a change of coordinates, from the source or from its default realization."""
     if isinstance(task.model, StateSpace):
-        route = plan_route(task)
-        return route, route[-1].apply(task.model, task)
-    route, base, _, shape = _default(replace(task, form=None), limits)
-    row = coordinate_row(f"state-space:{shape}" if shape else "state-space", task)
-    return [*route, row], row.apply(base, task)
+        rows = plan_route(task)
+        return [row.target for row in rows], rows[-1].apply(task.model, task)
+    route, base, _, _ = _default(replace(task, form=None), limits)
+    # the function is the same from any realization that stands for the source
+    row = coordinate_row("state-space:minimal", task)
+    return [*route, row.target], row.apply(base, task)
 
 
 def _refuse_ruin(task: Task, claims: list[Claim], changed: Changed, limits: dict[str, float] | None) -> None:
@@ -238,7 +255,8 @@ def _failures(claims: list[Claim]) -> set[str]:
 def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
     """Return the other coordinates worth a try by default: '' for none.
 
-    Modal coordinates of several channels that lose one of them have the cascade as rival; the cascade of a flexible
+    Modal coordinates that lose a channel (partial fractions, or several channels in doubles) have the cascade as rival;
+    the cascade of a flexible
     structure (one channel, all poles lightly damped oscillations) has modal coordinates, which are what its user thinks
     in, if they are at least as good.
     """

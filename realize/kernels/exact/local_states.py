@@ -1,8 +1,8 @@
 """Minimal realizations of an exact transfer matrix pole by pole, in high precision.
 
 Around a pole r of multiplicity at most k, G = sum R_j / (s - r)^j + regular part. The block Hankel matrix
-H = [R_(i+j-1)], i, j = 1..k, has as its rank the McMillan degree of the pole [2]_ [3]_. With rows I and columns J of H such
-that M = H[I, J] is invertible and of that rank (complete pivoting), the states that belong to the columns J have ::
+H = [R_(i+j-1)], i, j = 1..k, has as its rank the McMillan degree of the pole [2]_ [3]_. With rows I and columns J of H
+such that M = H[I, J] is invertible and of that rank (complete pivoting), the states that belong to columns J have ::
 
     N = M^-1 H'[I, J],   B = M^-1 H[I, first block],   C = H[first block, J],   A = r I + N,
 
@@ -20,15 +20,16 @@ N in this order make it strictly triangular with exact zeros, and the pole keeps
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
-from flint import acb, acb_mat, acb_poly, arb, fmpq, fmpq_poly
+from flint import acb, acb_mat, acb_poly, arb, fmpq, fmpq_mat, fmpq_poly
 from numpy.typing import NDArray
 
 from realize.kernels.exact.dense_balls import NOTHING, exponent
-from realize.kernels.exact.numbers import exact_value, near_ball, nearest, power_of_two, precision
+from realize.kernels.exact.numbers import complex_fraction, exact_value, near_ball, nearest, power_of_two, precision
 from realize.kernels.exact.polynomials import ONE, quotient
 from realize.kernels.exact.roots import Root, roots
 
@@ -74,6 +75,11 @@ class Expansion:
     real: bool
     multiplicity: int
     terms: list[Table]
+
+    @property
+    def rough(self) -> complex:
+        """The pole in doubles."""
+        return complex(near_ball(self.pole.real), near_ball(self.pole.imag))
 
 
 def expansions(grid: Sequence[Sequence[tuple[fmpq_poly, fmpq_poly]]]) -> list[tuple[Root, Expansion]]:
@@ -176,13 +182,7 @@ def local_block(expansion: Expansion, rank: int) -> Block:
 
 def _pivots(H: Table, rank: int) -> tuple[list[int], list[int]]:
     """Return rows and columns of the largest pivots of elimination with complete pivoting, units taken out."""
-    sizes = np.array([[size(entry) for entry in row] for row in H], dtype=np.int64)
-    present = sizes > NOTHING
-    r, c = np.zeros(len(H), dtype=np.int64), np.zeros(len(H[0]), dtype=np.int64)
-    for _ in range(3):
-        for axis, shift in ((1, r), (0, c)):
-            now = np.where(present, sizes - r[:, None] - c[None, :], NOTHING).max(axis=axis)
-            shift += np.where(now > NOTHING // 2, now, 0)
+    r, c = _units(H)
     rest = [list(row) for row in H]
     rows, columns = list(range(len(H))), list(range(len(H[0])))
     chosen: tuple[list[int], list[int]] = ([], [])
@@ -345,19 +345,103 @@ def rational_matrices(blocks: Sequence[Block], p: int, m: int) -> tuple[list[lis
         return tuple([[exact_value(x) for x in row] for row in part] for part in parts)
 
 
-def scaled_terms(expansion: Expansion) -> tuple[NDArray[np.complex128], NDArray[np.int64], NDArray[np.int64]]:
-    """Return R_1 in doubles with rows and columns divided by powers of two, and the exponents of rows and columns."""
+def infinite_block(terms: Mapping[int, Any]) -> tuple[tuple[Array, Array, Array], int]:
+    """Return N, B, C with sum s^k P_k = C (I - s N)^-1 B for k >= 1, and the McMillan degree of the pole at infinity.
+
+    The coefficients stand for Laurent terms at the origin of 1 / s: P_k of power k + 1, the one of power 1 being zero.
+
+    Parameters
+    ----------
+    terms : mapping from k to exact [output][input]
+    """
+    degree = hankel_rank(terms)
+    expansion = expansion_of(fmpq(0), {k + 1: matrix for k, matrix in terms.items()})
+    block = local_block(expansion, hankel_rank({k + 1: matrix for k, matrix in terms.items()}))
+    p, m = len(block.C), len(block.B[0])
+    return modal_matrices([block], p, m), degree
+
+
+def multiplicities(found: Sequence[Root], polynomials: Sequence[fmpq_poly]) -> list[int]:
+    """Return how often each root occurs in the product of polynomials, decided exactly.
+
+    Parameters
+    ----------
+    found : sequence of `Root`
+        Roots of one polynomial, each with its squarefree factor.
+    """
+    counts = []
+    shared: dict[tuple[int, int, int], fmpq_poly] = {}
+    for root in found:
+        at, total = root.at(BITS), 0
+        for k, polynomial in enumerate(polynomials):
+            order, derived = 0, polynomial
+            while derived.degree() > 0:
+                key = (id(root.factor), k, order)
+                if key not in shared:
+                    shared[key] = quotient(root.factor, derived.gcd(root.factor))
+                # a root of the squarefree factor is one of the common part unless it is one of the rest
+                with precision(BITS):
+                    if acb_poly(shared[key])(at).contains(0):
+                        break
+                total, order, derived = total + 1, order + 1, derived.derivative()
+        counts.append(total)
+    return counts
+
+
+def expansion_of(pole: Any, terms: Mapping[int, Any]) -> Expansion:
+    """Return the expansion of given residues: [output][input] of exact complex numbers by power."""
+    with precision(BITS):
+        x, y = complex_fraction(pole)
+        k = max(terms)
+        some = next(iter(terms.values()))
+        zero = [[acb(0) for _ in row] for row in some]
+        listed = [
+            [[_ball(*complex_fraction(entry)) for entry in row] for row in terms[j]] if j in terms else zero
+            for j in range(1, k + 1)
+        ]
+        return Expansion(_ball(x, y), not y, k, listed)
+
+
+def _ball(real: fmpq, imaginary: fmpq) -> acb:
+    return acb(arb(real).mid(), arb(imaginary).mid())
+
+
+def hankel_rank(terms: Mapping[int, Any]) -> int:
+    """Return the exact rank of the block Hankel matrix of residues given as exact complex numbers."""
+    k = max(terms)
+    some = next(iter(terms.values()))
+    p, m = len(some), len(some[0])
+    zero = (fmpq(0), fmpq(0))
+    H = [
+        [complex_fraction(terms[a + b + 1][i][j]) if a + b + 1 in terms else zero for b in range(k) for j in range(m)]
+        for a in range(k)
+        for i in range(p)
+    ]
+    # a complex matrix X + jY as the real [[X, -Y], [Y, X]] of twice the rank
+    rows = [[x for x, _ in row] + [-y for _, y in row] for row in H]
+    rows += [[y for _, y in row] + [x for x, _ in row] for row in H]
+    return int(fmpq_mat(rows).rref()[1]) // 2
+
+
+def scaled_residue(expansion: Expansion) -> tuple[NDArray[np.complex128], Array]:
+    """Return R_1 in doubles with rows and columns divided by powers of two, and the sizes of its entries."""
     table = expansion.terms[0]
-    sizes = np.array([[size(x) for x in row] for row in table], dtype=np.int64)
+    r, c = _units(table)
+    values = np.zeros((len(table), len(table[0])), dtype=complex)
+    for i, row in enumerate(table):
+        for j, entry in enumerate(row):
+            scale = arb(power_of_two(-int(r[i] + c[j])))
+            values[i, j] = complex(near_ball(entry.real * scale), near_ball(entry.imag * scale))
+    return values, np.abs(values)
+
+
+def _units(table: Table) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Return exponents of rows and columns that bring the entries of a matrix near one."""
+    sizes = np.array([[size(entry) for entry in row] for row in table], dtype=np.int64)
     present = sizes > NOTHING
     r, c = np.zeros(len(table), dtype=np.int64), np.zeros(len(table[0]), dtype=np.int64)
     for _ in range(3):
         for axis, shift in ((1, r), (0, c)):
             now = np.where(present, sizes - r[:, None] - c[None, :], NOTHING).max(axis=axis)
             shift += np.where(now > NOTHING // 2, now, 0)
-    values = np.zeros(sizes.shape, dtype=complex)
-    for i, row in enumerate(table):
-        for j, entry in enumerate(row):
-            scale = arb(power_of_two(-int(r[i] + c[j])))
-            values[i, j] = complex(near_ball(entry.real * scale), near_ball(entry.imag * scale))
-    return values, r, c
+    return r, c
