@@ -18,7 +18,7 @@ from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
 from realize.models import Model, SecondOrder, StateSpace
-from realize.verification.views import EXACT_BUDGET, predicted_cost
+from realize.verification.views import EXACT_BUDGET, forming_cost, predicted_cost
 
 
 @dataclass(frozen=True)
@@ -246,6 +246,9 @@ def choose_arithmetic(task: Task) -> Choice:
         operations = 30.0 * task.model.A.shape[0] ** 3
         return Choice("double", task.arithmetic, operations, EXACT_BUDGET, "new coordinates have no exact entries")
     predicted = predicted_cost(task.model)
+    if task.to == "transfer-function" and isinstance(task.model, StateSpace):
+        # coefficients need no roots; what the claims need is their own affair
+        predicted = min(predicted, forming_cost(task.model))
     auto = "exact" if predicted <= EXACT_BUDGET else "double"
     return Choice(auto if task.arithmetic == "auto" else task.arithmetic, task.arithmetic, predicted, EXACT_BUDGET)
 

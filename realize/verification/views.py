@@ -301,19 +301,24 @@ def _bits_of(model: StateSpace) -> int:
     return 53 + (int(used.max()) - int(used.min()) if used.size else 0)
 
 
-def _predicted_cost(model: Model) -> float:
+def forming_cost(model: StateSpace) -> float:
+    """Return the predicted operations of forming the exact transfer matrix of a state model, its roots left alone."""
     from realize.kernels.exact import cost
 
+    (p, m), order = model.shape, model.order
+    if order <= SMALL and not model.decimals:
+        bits = DOUBLE_BITS
+    else:
+        bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
+    return cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
+
+
+def _predicted_cost(model: Model) -> float:
     p, m = model.shape
     order = model.order or 0
     if isinstance(model, StateSpace):
-        if order <= SMALL and not model.decimals:
-            bits = DOUBLE_BITS
-        else:
-            bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
-        form = cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
         # each channel has its own numerator, whose roots are sought
-        return form + (1 + p * m) * ROOT_COST * order**3
+        return forming_cost(model) + (1 + p * m) * ROOT_COST * order**3
     if isinstance(model, SecondOrder):
         pencil = model.pencil
         largest = StateSpace(A=pencil.A, B=pencil.B, C=pencil.C, D=pencil.D, E=pencil.E)

@@ -92,6 +92,11 @@ PLANTS: dict[str, Model] = {
         position_output=[[0.0, 1.0]],
         velocity_output=[[0.5, 0.0]],
     ),
+    "several residues": PoleResidue(
+        poles=[-1.0, -2.0 + 3.0j, -2.0 - 3.0j],
+        residues=[[[1.0, 2.0], [0.5, 1.0]], [[1.0j, 1.0], [2.0, 1.0]], [[-1.0j, 1.0], [2.0, 1.0]]],
+        direct=[[0.0, 1.0], [0.0, 0.0]],
+    ),
     "several states": StateSpace(
         A=[[0.0, 1.0, 0.0], [-2.0, -3.0, 1.0], [0.0, 0.0, -4.0]],
         B=[[0.0, 1.0], [1.0, 0.0], [1.0, 1.0]],
