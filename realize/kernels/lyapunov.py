@@ -31,6 +31,8 @@ Array = NDArray[np.float64]
 
 #: Up to this size the level-2 library routine beats the recursion (measured between 24 and 64: flat).
 LEAF = 40
+#: Columns up to this length are treated as plain numbers at the leaves.
+SHORT = 8
 
 
 class NotStable(ValueError):
@@ -124,6 +126,38 @@ def schur_eigenvalues(T: Array) -> NDArray[np.complex128]:
     return values
 
 
+def shifted_solutions(T: Array, points: NDArray[np.complex128], F: Array) -> Array:
+    """Return the Frobenius norms of (point I - T)^-1 F at some points, in one blocked substitution.
+
+    Parameters
+    ----------
+    T : (n, n) array
+        Real Schur form.
+    points : (k,) complex array
+    F : (n, m) array
+
+    Returns
+    -------
+    (k,) array
+
+    Raises
+    ------
+    ValueError
+        If a point is an eigenvalue of T to working precision.
+    """
+    k, m = points.size, F.shape[1]
+    # (x + i y)(a + i b) - T (x + i y) = f: two real columns stand for a complex one, blocks [a b; -b a] for a + i b
+    shifts = np.zeros((2 * k * m, 2 * k * m))
+    even = np.arange(0, 2 * k * m, 2)
+    repeated = np.repeat(points, m)
+    shifts[even, even] = shifts[even + 1, even + 1] = -repeated.real
+    shifts[even, even + 1], shifts[even + 1, even] = -repeated.imag, repeated.imag
+    right = np.zeros((T.shape[0], 2 * k * m))
+    right[:, even] = -np.tile(F, (1, k))
+    solved = quasi_triangular_sylvester(T, shifts, right, transposed=False, sign=1)
+    return np.sqrt(np.square(solved).sum(axis=0).reshape(k, 2 * m).sum(axis=1))
+
+
 def observability_factor(T: Array, C: Array) -> tuple[Array, Array, Array]:
     """Return (R, V, M) with T'X + X T + C'C = 0, X = R'R, C = V R, R T = M R, for a stable upper quasi-triangular T.
 
@@ -188,7 +222,7 @@ def _factor(T: Array, C: Array, R: Array, V: Array, M: Array, low: int, high: in
 def _real_block(T: Array, C: Array, R: Array, V: Array, M: Array, j: int) -> None:
     pole = float(T[j, j])
     column = C[:, j]
-    size = float(np.linalg.norm(column))
+    size = math.hypot(*column.tolist()) if column.size <= SHORT else float(np.linalg.norm(column))
     M[j, j] = pole
     if size > 0.0:
         speed = math.sqrt(-2.0 * pole)
@@ -202,26 +236,32 @@ def _pair_block(T: Array, C: Array, R: Array, V: Array, M: Array, j: int) -> Non
     With w = c1 + i c2 and S = sum |w|^2, Z = sum w^2 the Gramian has trace S / (-2 a), axis difference
     -Z / (2 (a + i mu)) and determinant (4 a^2 |c1 x c2|^2 + S^2 mu^2) / (16 a^2 |a + i mu|^2): sums of positive terms.
     """
+    basis, part = None, C[:, j : j + 2]
+    if part.shape[0] > SHORT:
+        basis, part = np.linalg.qr(part)
     a = 0.5 * (float(T[j, j]) + float(T[j + 1, j + 1]))
     b, c = float(T[j, j + 1]), float(T[j + 1, j])
     mu = math.copysign(math.sqrt(abs(b)) * math.sqrt(abs(c)), b)
     ratio = math.sqrt(abs(c)) / math.sqrt(abs(b))
-    one, two = C[:, j], C[:, j + 1] * ratio
-    size = math.hypot(float(np.linalg.norm(one)), float(np.linalg.norm(two)))
+    # a few plain numbers: faster than arrays of length one or two
+    one, two = part[:, 0].tolist(), [ratio * x for x in part[:, 1].tolist()]
+    size = math.hypot(*one, *two)
+    M[j, j] = M[j + 1, j + 1] = a
     if size == 0.0:
-        M[j, j] = M[j + 1, j + 1] = a
         M[j, j + 1], M[j + 1, j] = mu, -mu
         return
-    one, two = one / size, two / size
-    square = float(one @ one) - float(two @ two) + 2j * float(one @ two)
+    one, two = [x / size for x in one], [x / size for x in two]
+    square = _dot(one, one) - _dot(two, two) + 2j * _dot(one, two)
     difference = -square / (2.0 * complex(a, mu))
     half = 0.5 * math.atan2(difference.imag, difference.real)
     cosine, sine = math.cos(half), math.sin(half)
-    first, second = cosine * one + sine * two, cosine * two - sine * one
+    first = [cosine * x + sine * y for x, y in zip(one, two, strict=True)]
+    second = [cosine * y - sine * x for x, y in zip(one, two, strict=True)]
+    lengths = math.hypot(*first), math.hypot(*second)
     # |c1 x c2| through the part of one vector that is orthogonal to the longer one
-    long, short = (first, second) if first @ first >= second @ second else (second, first)
-    length = float(np.linalg.norm(long))
-    across = length * float(np.linalg.norm(short - long * (float(long @ short) / length**2)))
+    long, short, length = (first, second, lengths[0]) if lengths[0] >= lengths[1] else (second, first, lengths[1])
+    along = _dot(long, short) / length**2
+    across = length * math.hypot(*(y - x * along for x, y in zip(long, short, strict=True)))
     modulus = math.hypot(a, mu)
     large = 0.5 * (1.0 / (-2.0 * a) + abs(difference))
     root_determinant = math.hypot(2.0 * (a / modulus) * across, mu / modulus) / (-4.0 * a)
@@ -230,12 +270,15 @@ def _pair_block(T: Array, C: Array, R: Array, V: Array, M: Array, j: int) -> Non
     speed = math.sqrt(-2.0 * a)
     R[j, j], R[j, j + 1] = size * root_one * cosine, size * root_one * sine / ratio
     R[j + 1, j], R[j + 1, j + 1] = -size * root_two * sine, size * root_two * cosine / ratio
-    for k, part in ((j, first), (j + 1, second)):
-        norm = float(np.linalg.norm(part))
+    for k, vector, norm in ((j, first, lengths[0]), (j + 1, second, lengths[1])):
         if norm > 0.0:
-            V[:, k] = part / norm * speed
-    M[j, j] = M[j + 1, j + 1] = a
+            turned = [x / norm * speed for x in vector]
+            V[:, k] = turned if basis is None else basis @ turned
     M[j, j + 1], M[j + 1, j] = mu * root_one / root_two, -mu * root_two / root_one
+
+
+def _dot(one: list[float], two: list[float]) -> float:
+    return sum(x * y for x, y in zip(one, two, strict=True))
 
 
 def bilinear_schur(T: Array, B: Array, C: Array) -> tuple[Array, Array, Array, float]:
