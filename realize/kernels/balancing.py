@@ -174,22 +174,23 @@ def _rounding_of_large(T: Array, B: Array, C: Array, roots: SquareRoots, sampled
 
     Two models whose responses differ by at most d have Hankel singular values that differ by at most d (Weyl's
     inequality for Hankel operators). A Schur form is exact for a matrix within 4 n^1/2 eps |A| of A (Frobenius norm;
-    measured: 3 n^1/2 at n = 250 and 1000), which moves the response by |C (sI - A)^-1| |(sI - A)^-1 B| times that. The
-    product of the factors adds n^1/2 eps |R| |L|.
+    measured: 3 n^1/2 at n = 250 and 1000). A change of that norm without a direction of its own moves the response by
+    n^-1/2 at most of |C (sI - A)^-1| |(sI - A)^-1 B| times it (n^-1 for independent entries). The product of the
+    factors adds n^1/2 eps |R| |L|.
     """
     n = T.shape[0]
     product = math.sqrt(n) * EPS * float(np.linalg.norm(roots.R)) * float(np.linalg.norm(roots.L))
     poles = schur_eigenvalues(T)
     distance = np.abs(np.abs(poles) - 1) if sampled else np.abs(poles.real)
     near = poles[poles.imag >= 0][np.argsort(distance[poles.imag >= 0], kind="stable")[:SENSITIVE_FREQUENCIES]]
-    points = np.exp(1j * np.angle(near)) if sampled else 1j * near.imag
+    points = np.asarray(np.exp(1j * np.angle(near)) if sampled else 1j * near.imag, dtype=complex)
     try:
         state = shifted_solutions(T, points, B)
         costate = shifted_solutions(np.ascontiguousarray(T.T[::-1, ::-1]), points, C.T[::-1])
     except ValueError:
         # a pole on the axis to working precision: nothing is known
         return math.inf
-    return product + 4 * math.sqrt(n) * EPS * float(np.linalg.norm(T)) * float(np.max(state * costate))
+    return product + 4 * EPS * float(np.linalg.norm(T)) * float(np.max(state * costate))
 
 
 def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFactors:

@@ -87,14 +87,25 @@ def leading_part(M: Array, tolerance: float) -> Leading:
     if not basis:
         return Leading(np.zeros((M.shape[0], 0)), _tail(rest, size), np.zeros((M.shape[1], 0)), rest)
     W, values, Zt = scipy.linalg.svd(np.vstack(rows), full_matrices=False, check_finite=False)
-    # values that do not stand above what was left out join it
+    return trimmed(np.hstack(basis) @ W, values, Zt.T, rest, size)
+
+
+def trimmed(left: Array, values: Array, right: Array, rest: float, size: int) -> Leading:
+    """Return the values that stand above what was left out; the others join it.
+
+    Parameters
+    ----------
+    left, values, right : (n, k), (k,), (m, k) arrays
+    rest : float
+        Frobenius norm of what was left out so far.
+    size : int
+        How many values there are altogether.
+    """
     left_out = np.sqrt(np.cumsum(np.append(values, rest)[::-1] ** 2)[::-1])
     clear = np.flatnonzero(values >= left_out[1:])
     kept = int(clear[-1]) + 1 if clear.size else 0
     rest = float(left_out[kept])
-    return Leading(
-        np.hstack(basis) @ W[:, :kept], np.append(values[:kept], _tail(rest, size - kept)), Zt[:kept].T, rest
-    )
+    return Leading(left[:, :kept], np.append(values[:kept], _tail(rest, size - kept)), right[:, :kept], rest)
 
 
 def _tail(rest: float, count: int) -> Array:

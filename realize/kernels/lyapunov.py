@@ -361,14 +361,27 @@ def square_roots(T: Array, B: Array, C: Array, *, sampled: bool) -> SquareRoots:
     dual, inputs, K = observability_factor(np.ascontiguousarray(T.T[::-1, ::-1]), np.ascontiguousarray(B.T[:, ::-1]))
     if sampled:
         # back through the map: contractive because M + M' <= 0
-        M, output = _back(M, output, sign)
-        K, inputs = _back(K, inputs, sign)
+        M, output = cayley_back(M, output, sign, triangular=True)
+        K, inputs = cayley_back(K, inputs, sign, triangular=True)
     return SquareRoots(np.ascontiguousarray(dual.T[::-1]), R, K.T, inputs.T, M, output)
 
 
-def _back(M: Array, V: Array, sign: float) -> tuple[Array, Array]:
+def cayley_back(M: Array, V: Array, sign: float = 1.0, *, triangular: bool) -> tuple[Array, Array]:
+    """Return the companions of a sampled model from those of its continuous image: sign (I - M)^-1 (I + M), and for V.
+
+    Parameters
+    ----------
+    M : (k, k) array
+        M + M' <= 0, so that I - M is well away from singular.
+    V : (p, k) array
+    sign : {1, -1}
+    triangular : bool
+        M is upper quasi-triangular, and so is the result.
+    """
     identity = np.eye(M.shape[0])
-    inner = _quasi_triangular(np.linalg.solve(identity - M, identity + M).astype(float), M)
+    inner = np.linalg.solve(identity - M, identity + M).astype(float)
+    if triangular:
+        inner = _quasi_triangular(inner, M)
     return sign * inner, V @ (inner + identity) / math.sqrt(2.0)
 
 

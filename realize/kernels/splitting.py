@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import scipy.linalg
@@ -28,10 +29,11 @@ class Split:
     Attributes
     ----------
     stable, kept : tuple of arrays (T, B, C)
-        The two parts; T upper quasi-triangular (the kept one has its integrators as a strictly triangular block).
+        The two parts; T upper quasi-triangular (the kept one has its integrators as a strictly triangular block),
+        unless nothing was split (`whole`).
     right, left : (n, n) arrays
         ``left @ A @ right`` is block diagonal, ``left @ right`` the identity.
-    stable_poles, kept_poles : complex arrays
+    kept_poles : complex array
     marginal : bool array
         Which of the kept poles lie on the axis (unit circle) within the rounding of A's entries.
     coupling : float
@@ -46,11 +48,31 @@ class Split:
     kept: tuple[Array, Array, Array]
     right: Array
     left: Array
-    stable_poles: ComplexArray
     kept_poles: ComplexArray
     marginal: NDArray[np.bool_]
     coupling: float
     separation: float
+
+    @cached_property
+    def stable_poles(self) -> ComplexArray:
+        """Poles of the stable part: the eigenvalues of its quasi-triangular T, or of a T that was left as it is."""
+        T = self.stable[0]
+        below = np.diagonal(T, -1) != 0
+        if np.any(np.tril(T, -2)) or np.any(below[1:] & below[:-1]):
+            return np.linalg.eigvals(T).astype(complex)
+        return schur_eigenvalues(T)
+
+
+def whole(A: Array, B: Array, C: Array) -> Split:
+    """Return the split of a model that is known to be stable: nothing is kept, the coordinates stay.
+
+    Parameters
+    ----------
+    A, B, C : arrays (n, n), (n, m), (p, n)
+    """
+    empty = np.zeros((0, 0)), np.zeros((0, B.shape[1])), np.zeros((C.shape[0], 0))
+    same = np.eye(A.shape[0])
+    return Split((A, B, C), empty, same, same, np.zeros(0, dtype=complex), np.zeros(0, dtype=bool), 0.0, np.inf)
 
 
 def matrix_norm(A: Array) -> float:
@@ -275,12 +297,12 @@ def split_stable(A: Array, B: Array, C: Array, *, sampled: bool) -> Split:
     empty = (np.zeros((0, 0)), np.zeros((0, B.shape[1])), np.zeros((C.shape[0], 0)))
     none = np.zeros(0, dtype=complex)
     if n == 0:
-        return Split(empty, empty, np.eye(0), np.eye(0), none, none, np.zeros(0, dtype=bool), 0.0, np.inf)
+        return Split(empty, empty, np.eye(0), np.eye(0), none, np.zeros(0, dtype=bool), 0.0, np.inf)
     T, Q = scipy.linalg.schur(A, output="real", check_finite=False)
     poles = schur_eigenvalues(T)
     kept, marginal, corners = _classify(A, T, Q, poles, sampled)
     if not kept.any():
-        return Split((T, Q.T @ B, C @ Q), empty, Q, Q.T, poles, none, np.zeros(0, dtype=bool), 0.0, np.inf)
+        return Split((T, Q.T @ B, C @ Q), empty, Q, Q.T, none, np.zeros(0, dtype=bool), 0.0, np.inf)
     order = np.concatenate([np.flatnonzero(~kept), np.flatnonzero(kept)])
     separation, count = np.inf, 0
     if not kept.all():
@@ -301,7 +323,6 @@ def split_stable(A: Array, B: Array, C: Array, *, sampled: bool) -> Split:
         (settled, left[count:] @ B, C @ right[:, count:]),
         right,
         left,
-        schur_eigenvalues(stable[0]),
         schur_eigenvalues(settled),
         _on_axis(schur_eigenvalues(settled), marginal[order][count:], sampled),
         float(np.linalg.norm(Y)) if Y.size else 0.0,

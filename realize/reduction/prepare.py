@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 
 from realize.errors import InputError, Refused
 from realize.kernels.balancing import HankelFactors, Scaled, equal_groups, hankel_factors, scale_model, tail_bounds
+from realize.kernels.low_rank_balancing import low_rank_factors
 from realize.kernels.norms import Peak, peak_gain
-from realize.kernels.splitting import Split, split_stable
+from realize.kernels.splitting import Split, split_stable, whole
 
 Array = NDArray[np.float64]
 
@@ -46,7 +47,7 @@ class Prepared:
 
     @property
     def stable_order(self) -> int:
-        return self.split.stable_poles.size
+        return self.split.stable[0].shape[0]
 
     @cached_property
     def available(self) -> int:
@@ -88,13 +89,16 @@ class Prepared:
         return Peak(self.in_gain(found.value), frequency, upper, found.basis)
 
 
-def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> Prepared:
+def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, triangular: bool = True) -> Prepared:
     """Scale a state model, separate its stable part and factor the Gramians of that.
 
     Parameters
     ----------
     A, B, C, D : arrays (n, n), (n, m), (p, n), (p, m)
     sampled : bool
+    triangular : bool
+        The stable part is wanted in real Schur form; else a large model whose Gramians have a low rank goes without,
+        and its stable part is the scaled model itself.
 
     Returns
     -------
@@ -118,6 +122,10 @@ def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> Prepare
         if not np.all(np.isfinite(matrix)):
             raise InputError("an entry that is not a finite number", "finite numbers", field=name)
     scaled = scale_model(A, B, C, sampled=sampled)
+    if not triangular:
+        found = low_rank_factors(scaled.A, scaled.B, scaled.C, sampled=sampled)
+        if found is not None:
+            return Prepared(scaled, whole(scaled.A, scaled.B, scaled.C), found, D, sampled)
     try:
         split = split_stable(scaled.A, scaled.B, scaled.C, sampled=sampled)
         factors = hankel_factors(*split.stable, sampled=sampled)

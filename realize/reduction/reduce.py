@@ -66,7 +66,9 @@ def reduce_states(
     """
     if sum(option is not None for option in (order, absolute_error, relative_error)) != 1:
         raise UsageError("give exactly one of: an order, an absolute error, a relative error")
-    prepared = prepare(A, B, C, D, sampled=sampled)
+    # balancing needs no Schur form where there is a shorter way
+    triangular = method not in ("auto", "balanced-truncation")
+    prepared = prepare(A, B, C, D, sampled=sampled, triangular=triangular)
     chosen_method = method_named(automatic(prepared) if method == "auto" else method)
     notes: list[str] = []
     if prepared.kept_order:
@@ -173,7 +175,7 @@ def _assembled(
     """Put the reduced stable part and the kept part together, in the model's own units."""
     scaled, split = prepared.scaled, prepared.split
     kept_a, kept_b, kept_c = split.kept
-    stable = split.stable_poles.size
+    stable = prepared.stable_order
     # half the difference of the units of input and output goes to the states, so that balanced stays balanced
     half = (scaled.input + scaled.output) // 2
     shift = (scaled.input - scaled.output) // 2
