@@ -14,7 +14,6 @@ from realize.kernels.leading_part import leading_part
 from realize.kernels.lyapunov import (
     SquareRoots,
     schur_eigenvalues,
-    schur_gramian_factors,
     shifted_solutions,
     square_roots,
 )
@@ -25,7 +24,7 @@ Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
 #: Up to this order the Hankel singular values come from one-sided Jacobi rotations, accurate far below the largest.
 JACOBI_ORDER = 200
-#: How many frequencies, those of the poles nearest to the axis, tell what rounding in a large A does to the response.
+#: How many frequencies, those of the poles nearest to the axis, tell what rounding in A does to the response.
 SENSITIVE_FREQUENCIES = 24
 
 
@@ -119,6 +118,9 @@ class HankelFactors:
         R L = U diag(values) Z' but for rounding; k = n up to order 200, and beyond as many as stand above rounding.
     errors : (n,) array
         Estimated absolute error of each value.
+    response_error : float
+        Estimated largest gain of the difference between the model and the one whose exact factors these are: the
+        backward error of the Schur form, before any value or entry is rounded further.
     """
 
     roots: SquareRoots
@@ -126,6 +128,7 @@ class HankelFactors:
     left: Array
     right: Array
     errors: Array
+    response_error: float
 
 
 def _jacobi(product_left: Array, product_right: Array) -> tuple[Array, Array, Array] | None:
@@ -169,17 +172,14 @@ def product_svd(R: Array, L: Array) -> tuple[Array, Array, Array]:
     return U, values, Zt.T
 
 
-def _rounding_of_large(T: Array, B: Array, C: Array, roots: SquareRoots, sampled: bool) -> float:
-    """Return the estimated error of all Hankel singular values of a large model.
+def _response_error(T: Array, B: Array, C: Array, sampled: bool) -> float:
+    """Return the estimated effect of the backward error of the Schur form on the response.
 
     Two models whose responses differ by at most d have Hankel singular values that differ by at most d (Weyl's
     inequality for Hankel operators). A Schur form is exact for a matrix within 4 n^1/2 eps |A| of A (Frobenius norm;
     measured: 3 n^1/2 at n = 250 and 1000). A change of that norm without a direction of its own moves the response by
-    n^-1/2 at most of |C (sI - A)^-1| |(sI - A)^-1 B| times it (n^-1 for independent entries). The product of the
-    factors adds n^1/2 eps |R| |L|.
+    n^-1/2 at most of |C (sI - A)^-1| |(sI - A)^-1 B| times it (n^-1 for independent entries).
     """
-    n = T.shape[0]
-    product = math.sqrt(n) * EPS * float(np.linalg.norm(roots.R)) * float(np.linalg.norm(roots.L))
     poles = schur_eigenvalues(T)
     distance = np.abs(np.abs(poles) - 1) if sampled else np.abs(poles.real)
     near = poles[poles.imag >= 0][np.argsort(distance[poles.imag >= 0], kind="stable")[:SENSITIVE_FREQUENCIES]]
@@ -190,17 +190,15 @@ def _rounding_of_large(T: Array, B: Array, C: Array, roots: SquareRoots, sampled
     except ValueError:
         # a pole on the axis to working precision: nothing is known
         return math.inf
-    return product + 4 * EPS * float(np.linalg.norm(T)) * float(np.max(state * costate))
+    return 4 * EPS * float(np.linalg.norm(T)) * float(np.max(state * costate))
 
 
 def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFactors:
     """Return Gramian factors and Hankel singular values of a stable model in real Schur form.
 
-    The values are the singular values of R L [1]_. Up to order 200 they are computed once more from the dual model,
-    whose rounding errors are independent; three times the largest difference among neighbours is the estimated error,
-    and at least 4 n eps of the value. Beyond, only values that stand above the rounding of the product are computed,
-    the others are bounded, and all share one error: what the backward error of the Schur form does to the response,
-    the rounding of the product, and what was left of it.
+    The values are the singular values of R L [1]_, up to order 200 by one-sided Jacobi rotations. Beyond, only values
+    that stand above the rounding of the product are computed, and the others are bounded. All share one estimated
+    error: what the backward error of the Schur form does to the response, and n^1/2 eps |R| |L| for their product.
 
     Parameters
     ----------
@@ -228,26 +226,15 @@ def hankel_factors(T: Array, B: Array, C: Array, *, sampled: bool) -> HankelFact
     roots = square_roots(T, B, C, sampled=sampled)
     L, R = roots.L, roots.R
     if n == 0:
-        return HankelFactors(roots, np.zeros(0), L, R, np.zeros(0))
-    if n > JACOBI_ORDER:
-        rounding = _rounding_of_large(T, B, C, roots, sampled)
-        product = R @ L
-        tolerance = math.sqrt(n) * EPS * float(np.linalg.norm(R)) * float(np.linalg.norm(L))
-        found = leading_part(product, tolerance)
-        return HankelFactors(roots, found.values, found.left, found.right, np.full(n, rounding + found.rest))
-    U, values, Z = product_svd(R, L)
-    # the dual with its states in another order: Gramians change places, rounding errors are drawn anew
-    order = np.concatenate([np.arange(0, n, 2), np.arange(1, n, 2)])
-    dual, Q = scipy.linalg.schur(np.ascontiguousarray(T.T[np.ix_(order, order)]), output="real", check_finite=False)
-    try:
-        other, own = schur_gramian_factors(dual, Q.T @ C.T[order], B.T[:, order] @ Q, sampled=sampled)
-        again = product_svd(own, other)[1]
-    except ValueError:
-        # a pole so close to the axis that the second Schur form has it on the other side
-        again = np.zeros(n)
-    difference = np.abs(values - again)
-    window = np.max([np.roll(np.pad(difference, 2), k)[2:-2] for k in range(-2, 3)], axis=0)
-    return HankelFactors(roots, values, U, Z, 3 * window + 4 * n * EPS * values)
+        return HankelFactors(roots, np.zeros(0), L, R, np.zeros(0), 0.0)
+    response = _response_error(T, B, C, sampled)
+    product = math.sqrt(n) * EPS * float(np.linalg.norm(R)) * float(np.linalg.norm(L))
+    if n <= JACOBI_ORDER:
+        U, values, Z = product_svd(R, L)
+        return HankelFactors(roots, values, U, Z, response + product + 4 * n * EPS * values, response)
+    found = leading_part(R @ L, product)
+    errors = np.full(n, response + product + found.rest)
+    return HankelFactors(roots, found.values, found.left, found.right, errors, response)
 
 
 def equal_groups(values: Array) -> NDArray[np.int64]:

@@ -90,9 +90,10 @@ def low_rank_factors(A: Array, B: Array, C: Array, *, sampled: bool) -> HankelFa
     roots = SquareRoots(L, R, N, inputs, M, outputs)
     U, values, Zt = np.linalg.svd(R @ L, full_matrices=False)
     short = trimmed(U, values, Zt.T, product + left_out, n)
-    factors = HankelFactors(roots, short.values, short.left, short.right, np.zeros(n))
-    rounding = product + left_out + short.rest + 4 * EPS * _sensitivity(factors, own, sampled)
-    return HankelFactors(roots, short.values, short.left, short.right, np.full(n, rounding))
+    factors = HankelFactors(roots, short.values, short.left, short.right, np.zeros(n), 0.0)
+    response = 4 * EPS * _sensitivity(factors, own, sampled)
+    errors = np.full(n, product + left_out + short.rest + response)
+    return HankelFactors(roots, short.values, short.left, short.right, errors, response)
 
 
 def _mapped(A: Array, B: Array, C: Array) -> tuple[Array, Array, Array]:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from realize.errors import InputError, Refused
 from realize.kernels.balancing import HankelFactors, Scaled, equal_groups, hankel_factors, scale_model, tail_bounds
+from realize.kernels.hankel_estimates import estimated_values
 from realize.kernels.low_rank_balancing import low_rank_factors
 from realize.kernels.norms import Peak, peak_gain
 from realize.kernels.splitting import Split, split_stable, whole
@@ -18,6 +19,8 @@ from realize.kernels.splitting import Split, split_stable, whole
 Array = NDArray[np.float64]
 
 EPS = float(np.finfo(float).eps)
+#: Up to this order the error of each value is measured by computing it several times, which costs about as often.
+DRAWN_ORDER = 200
 
 
 @dataclass(frozen=True)
@@ -60,8 +63,15 @@ class Prepared:
 
     @cached_property
     def tails(self) -> Array:
-        """Twice the sum of the distinct values beyond the first r, r = 0..n (scaled unit)."""
-        return tail_bounds(self.factors.values)
+        """Twice the sum of the distinct values beyond the first r, r = 0..n (scaled unit).
+
+        Values that drown in rounding are too small by their error at most: it comes from one backward error, and so is
+        added once for all of them.
+        """
+        bounds = tail_bounds(self.factors.values)
+        if self.available < self.factors.values.size:
+            bounds = bounds + self.factors.errors[self.available]
+        return bounds
 
     @cached_property
     def groups(self) -> NDArray[np.int64]:
@@ -87,6 +97,20 @@ class Prepared:
         upper = self.in_gain(found.upper) if math.isfinite(found.upper) else math.inf
         frequency = math.ldexp(found.frequency, self.scaled.time) if math.isfinite(found.frequency) else math.inf
         return Peak(self.in_gain(found.value), frequency, upper, found.basis)
+
+
+def _drawn(factors: HankelFactors, scaled: Scaled, split: Split, sampled: bool) -> HankelFactors:
+    """Return the factors with each value's error from drawing its rounding errors anew, several times."""
+    model = scaled.A, scaled.B, scaled.C
+    if split.kept_poles.size:
+        # the Schur form of the whole model had full matrices to round: so does that of the turned stable part
+        T, B, C = split.stable
+        turn = np.linalg.qr(np.random.default_rng(T.shape[0]).standard_normal(T.shape))[0]
+        model = turn.T @ T @ turn, turn.T @ B, C @ turn
+    values, errors, exponent = estimated_values(*model, sampled=sampled)
+    with np.errstate(under="ignore"):
+        values, errors = np.ldexp(values, exponent), np.ldexp(errors, exponent)
+    return replace(factors, errors=errors + np.abs(values - factors.values))
 
 
 def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, triangular: bool = True) -> Prepared:
@@ -129,6 +153,8 @@ def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, triangular
     try:
         split = split_stable(scaled.A, scaled.B, scaled.C, sampled=sampled)
         factors = hankel_factors(*split.stable, sampled=sampled)
+        if 0 < split.stable[0].shape[0] <= DRAWN_ORDER:
+            factors = _drawn(factors, scaled, split, sampled)
     except ValueError as reason:
         raise Refused(f"the stable part cannot be separated from the poles on or beyond the axis: {reason}") from None
     return Prepared(scaled, split, factors, D, sampled)
