@@ -8,10 +8,10 @@ import numpy as np
 
 from realize.forms.coordinates import Array, Coordinates, Setting, Units, modes, take_units_out
 from realize.kernels.kalman import elementwise_distances, kalman_decomposition
+from realize.kernels.separation import separated
 from realize.kernels.staircase import (
     Staircase,
     controllability_indices,
-    decided_staircase,
     observability_indices,
 )
 
@@ -20,6 +20,8 @@ EPS = float(np.finfo(float).eps)
 AMBIGUOUS = 1e3
 #: Ambiguous values are dropped where the next one is larger by this times the factor: rounding has no such gap.
 GAP = 1e4
+#: Up to this order each mode is tried by itself as well as by the staircase.
+SEARCHED = 60
 
 
 def rounding(order: int) -> float:
@@ -90,7 +92,7 @@ def _staircase(A: Array, B: Array) -> tuple[Staircase, Array]:
     even, exponents = _even(B, 0)
     small = rounding(A.shape[0])
     limits = small * float(np.linalg.norm(even)), small * float(np.linalg.norm(A))
-    found = decided_staircase(A, even, limits, AMBIGUOUS, GAP)
+    found = separated(A, even, limits, small, AMBIGUOUS, GAP, SEARCHED)
     return found, np.ldexp(found.B, exponents)
 
 
@@ -224,7 +226,7 @@ def kalman_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
     n = A.shape[0]
     even_b, exponents_b = _even(units.B, 0)
     even_c, exponents_c = _even(units.C, 1)
-    parts = kalman_decomposition(units.A, even_b, even_c, rounding(n), AMBIGUOUS, GAP)
+    parts = kalman_decomposition(units.A, even_b, even_c, rounding(n), AMBIGUOUS, GAP, SEARCHED)
     edges = np.cumsum([0, *parts.sizes])
     scale = np.ldexp(1.0, units.time)
     removed: list[dict[str, Any]] = []

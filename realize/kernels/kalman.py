@@ -8,7 +8,9 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
-from realize.kernels.staircase import Staircase, decided_staircase
+from realize.kernels.separation import separated
+from realize.kernels.staircase import Staircase
+from realize.kernels.within_rounding import hidden_side
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -48,7 +50,9 @@ class Kalman:
     decisions: dict[str, Staircase]
 
 
-def kalman_decomposition(A: Array, B: Array, C: Array, tolerance: float, band: float, gap: float) -> Kalman:
+def kalman_decomposition(
+    A: Array, B: Array, C: Array, tolerance: float, band: float, gap: float, searched: int
+) -> Kalman:
     """Split a state model into its four parts [1]_ by staircases, orthogonal but for one shear.
 
     The reachable states come from a staircase of (A, B), those of them that are observable from one of the dual, both
@@ -67,6 +71,8 @@ def kalman_decomposition(A: Array, B: Array, C: Array, tolerance: float, band: f
         Singular values up to this times the Frobenius norm of A (of B, of C) count as zero.
     band, gap : float
         How doubtful decisions are taken (`decided_staircase`).
+    searched : int
+        Largest order for which each mode is tried by itself as well (`separated`).
 
     Returns
     -------
@@ -81,11 +87,17 @@ def kalman_decomposition(A: Array, B: Array, C: Array, tolerance: float, band: f
     """
     n = A.shape[0]
     small_a, small_b, small_c = (tolerance * float(np.linalg.norm(matrix)) for matrix in (A, B, C))
-    first = decided_staircase(A, B, (small_b, small_a), band, gap)
+    first = separated(A, B, (small_b, small_a), tolerance, band, gap, searched)
     r = first.order
     Q, output = first.Q, C @ first.Q
-    second = decided_staircase(
-        np.ascontiguousarray(first.A[:r, :r].T), np.ascontiguousarray(output[:, :r].T), (small_c, small_a), band, gap
+    second = separated(
+        np.ascontiguousarray(first.A[:r, :r].T),
+        np.ascontiguousarray(output[:, :r].T),
+        (small_c, small_a),
+        tolerance,
+        band,
+        gap,
+        searched,
     )
     o = second.order
     decisions = {"reachable": first, "observable": second}
@@ -101,12 +113,24 @@ def kalman_decomposition(A: Array, B: Array, C: Array, tolerance: float, band: f
         return Kalman(new_a, new_b, new_c, T, T.T.copy(), (o, r - o, 0, 0), 1.0, decisions)
     rest = np.concatenate([np.arange(o), np.arange(r, n)])
     inner = new_a[np.ix_(rest, rest)]
-    third = decided_staircase(
-        np.ascontiguousarray(inner.T), np.ascontiguousarray(new_c[:, rest].T), (small_c, small_a), band, gap
+    third = separated(
+        np.ascontiguousarray(inner.T),
+        np.ascontiguousarray(new_c[:, rest].T),
+        (small_c, small_a),
+        tolerance,
+        band,
+        gap,
+        searched,
     )
     decisions["observable_of_all"] = third
     hidden = min(rest.size - third.order, n - r)
     unseen = third.Q[:, rest.size - hidden :]
+    if 1 < n <= searched:
+        # the numbers as they were given decide: rotations have spread their rounding
+        every = hidden_side(A.T.copy(), C.T.copy(), tolerance).vectors
+        more = min(every.shape[1] - (r - o), n - r)
+        if more > hidden:
+            hidden, unseen = more, scipy.linalg.svd((T.T @ every)[rest], full_matrices=False)[0][:, :more]
     # a basis of the unseen states: X w beside w = W, orthonormal
     full, upper = scipy.linalg.qr(unseen[o:], check_finite=False)
     Z = np.hstack([full[:, hidden:], full[:, :hidden]])

@@ -163,3 +163,50 @@ def test_a_decision_near_its_threshold_is_called_ambiguous() -> None:
     A = np.diag([1.0, 1e-13, 1.0], -1) + np.diag([1.0, 1.0, 1.0], 1) - np.diag([1.0, 2.0, 3.0, 4.0])
     new = form("reachable-staircase", A, np.eye(4)[:, :1], np.ones((1, 4)))
     assert new.details["decisions"]["ambiguous"] and "ambiguous" in new.cautions[0]
+
+
+def exact_dimensions(A: np.ndarray, B: np.ndarray, C: np.ndarray) -> tuple[int, ...]:
+    """The four dimensions from exact ranks of the controllability and observability matrices."""
+    import flint
+
+    def exact(matrix: np.ndarray) -> Any:
+        ratios = [flint.fmpq(*float(x).as_integer_ratio()) for x in matrix.reshape(-1)]
+        return flint.fmpq_mat(*matrix.shape, ratios)
+
+    n, m, p = A.shape[0], B.shape[1], C.shape[0]
+    a, reach, see = exact(A), [exact(B)], [exact(C)]
+    for _ in range(n - 1):
+        reach.append(a * reach[-1])
+        see.append(see[-1] * a)
+    K = flint.fmpq_mat(n, n * m, [reach[j // m][i, j % m] for i in range(n) for j in range(n * m)])
+    Ob = flint.fmpq_mat(n * p, n, [see[i // p][i % p, j] for i in range(n * p) for j in range(n)])
+    r, o, both = K.rank(), Ob.rank(), (Ob * K).rank()
+    return both, r - both, o - both, n - r - o + both
+
+
+@pytest.mark.parametrize("seed", range(6))
+def test_kalman_finds_what_shears_and_units_hide(seed: int) -> None:
+    """Integers in Kalman's pattern, sheared by integers to a condition of 1e5 and given odd units: all of it exact."""
+    rng = np.random.default_rng(seed)
+    sizes = tuple(int(k) for k in rng.integers(1, 4, 4))
+    m, p = (int(k) for k in rng.integers(1, 3, 2))
+    A, B, C = (np.rint(3 * matrix) for matrix in four_parts(sizes, m, p, seed))  # type: ignore[arg-type]
+    n = A.shape[0]
+    T = np.eye(n)
+    while np.linalg.cond(T) < 1e5:
+        i, j = rng.permutation(n)[:2]
+        factor = float(rng.integers(-2, 3))
+        A[i] += factor * A[j]
+        A[:, j] -= factor * A[:, i]
+        B[i] += factor * B[j]
+        C[:, j] -= factor * C[:, i]
+        T[i] += factor * T[j]
+    assert np.abs(A).max() < 2.0**50
+    truth = exact_dimensions(A, B, C)
+    units = np.ldexp(1.0, rng.integers(-20, 21, n))
+    new = form("kalman", 1024.0 * A * units[:, None] / units, B * units[:, None], C / units)
+    # right, or called ambiguous
+    if tuple(new.details["dimensions"].values()) != truth:
+        assert any("ambiguous" in words for words in new.cautions)
+        assert any(told["ambiguous"] for told in new.details["decisions"].values())
+        assert seed in (1, 4)
