@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from realize import StateSpace, TransferFunction, inspect
+from realize import StateSpace, TransferFunction, convert, inspect
 
 DATA = Path(__file__).parents[3] / "shared" / "data"
 TEXTBOOKS = DATA / "papers" / "mimo_minimal_zeros.json"
@@ -90,3 +90,36 @@ def test_slycot_finds_the_same_zeros(seed: int) -> None:
         theirs = scipy.linalg.eigvals(af[:count, :count], bf[:count, :count])
         gap = np.abs(own[:, None] - theirs[None, :]).min(axis=1)
         assert np.all(gap <= 1e-8 * np.maximum(np.abs(own), 1))
+
+
+@pytest.mark.parametrize("case", textbook_cases())
+def test_textbook_matrices_as_states(case: dict[str, Any]) -> None:
+    made = convert(matrix_of(case), "state-space")
+    assert made.model.order == case["minimal_order"] == made.receipt.details["mcmillan_degree"]
+    assert made.receipt.claim("peak-error").value <= 1e-15
+    poles = np.linalg.eigvals(made.model.A)
+    assert np.allclose(np.sort(poles.real), sorted(case["poles"]), rtol=1e-14)
+
+
+def test_states_of_the_td04ad_example() -> None:
+    """The printed matrices (4 decimals) and ours have the same response."""
+    given, expected = (example("TD04AD")[key] for key in ("input", "expected"))
+    numerator, denominator = given["UCOEFF"], [[row, row] for row in given["DCOEFF"]]
+    made = convert(TransferFunction(numerator=numerator, denominator=denominator), "state-space")
+    printed = StateSpace(**{name: expected[name] for name in "ABCD"})
+    points = 1j * np.array([0.1, 1.0, 3.0, 10.0])
+    assert made.model.order == expected["order"]
+    assert np.abs(made.model.evaluate(points) - printed.evaluate(points)).max() < 2e-3
+
+
+def test_coefficients_of_the_tb04ad_example() -> None:
+    given, expected = (example("TB04AD")[key] for key in ("input", "expected"))
+    made = convert(StateSpace(**{name: given[name] for name in "ABCD"}), "transfer-function").model
+    for name, entry in expected["transfer"].items():
+        i, j = (int(part) - 1 for part in name.split(","))
+        n, d = np.trim_zeros(entry["num_desc"], "b"), np.trim_zeros(entry["den_desc"], "b")
+        points = np.array([0.5, 2.0, 7.0])
+        theirs = np.polyval(entry["num_desc"], points) / np.polyval(entry["den_desc"], points)
+        own = np.polyval(made.numerator[i][j], points) / np.polyval(made.denominator[i][j], points)
+        assert np.allclose(own, theirs, rtol=1e-14), (n, d)
+        assert len(made.denominator[i][j]) <= len(d)

@@ -240,8 +240,10 @@ def _triangular(B: Table, C: Table, N: Table, index: int) -> tuple[Table, Table,
     basis: list[list[acb]] = []
     edges = []
     for power in reversed(powers):
+        floor = max(size(x) for x in power.entries()) + SPAN
         for column in power.transpose().tolist():
-            grown = _outside(column, basis)
+            # what should be zero is the rounding of the working precision
+            grown = _outside(column, basis) if max(size(x) for x in column) > floor else None
             if grown is not None and len(basis) < r:
                 basis.append(grown)
         edges.append(len(basis))
