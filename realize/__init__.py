@@ -11,11 +11,14 @@ from typing import TYPE_CHECKING, Any
 from realize._version import __version__
 
 if TYPE_CHECKING:
+    from realize.conversions.matrix_fraction import bezout_identity
     from realize.errors import ClaimFailed, InputError, RealizeError, Refused, UsageError
     from realize.files import read, write
+    from realize.forms.coprime_factors import CoprimeFactors, coprime_factors
     from realize.models import (
         DeadTime,
         FrequencyResponse,
+        MatrixFraction,
         Offset,
         PoleResidue,
         SecondOrder,
@@ -34,11 +37,14 @@ if TYPE_CHECKING:
     from realize.verification.norms import h2_norm, hankel_norm, largest_gain
 
 _HOMES = {
+    "realize.conversions.matrix_fraction": ("bezout_identity",),
+    "realize.forms.coprime_factors": ("CoprimeFactors", "coprime_factors"),
     "realize.errors": ("ClaimFailed", "InputError", "RealizeError", "Refused", "UsageError"),
     "realize.files": ("read", "write"),
     "realize.models": (
         "DeadTime",
         "FrequencyResponse",
+        "MatrixFraction",
         "Offset",
         "PoleResidue",
         "SecondOrder",
@@ -62,11 +68,13 @@ __all__ = [
     "Claim",
     "ClaimFailed",
     "Conversion",
+    "CoprimeFactors",
     "DeadTime",
     "FrequencyResponse",
     "HankelValues",
     "InputError",
     "LoopMargins",
+    "MatrixFraction",
     "Offset",
     "PoleResidue",
     "RealizeError",
@@ -81,8 +89,10 @@ __all__ = [
     "UsageError",
     "ZeroPoleGain",
     "__version__",
+    "bezout_identity",
     "compare",
     "convert",
+    "coprime_factors",
     "explain",
     "fit",
     "gap_distance",

@@ -16,7 +16,16 @@ from typing import Any
 import numpy as np
 import pytest
 
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 
 Gaussian = tuple[Fraction, Fraction]
 ZERO: Gaussian = (Fraction(0), Fraction(0))
@@ -131,6 +140,14 @@ class Oracle:
                         c = Fraction(float(model.C[i, k]))
                         value = _add(value, (c * x[k][j][0], c * x[k][j][1]))
                     grid[i][j] = value
+        elif isinstance(model, MatrixFraction):
+            N, D = (cls._polynomial_matrix(model, name, s) for name in ("numerator", "denominator"))
+            if model.side == "right":
+                flipped = cls._eliminate(
+                    [[*a, *b] for a, b in zip(zip(*D, strict=True), zip(*N, strict=True), strict=True)]
+                )
+                return [list(column) for column in zip(*flipped, strict=True)]
+            return cls._eliminate([[*a, *b] for a, b in zip(D, N, strict=True)])
         elif isinstance(model, SecondOrder):
             K, D, M = (cls._matrix(model, name) for name in ("stiffness", "damping", "mass"))
             reads = [cls._matrix(model, f"{name}_output") for name in ("position", "velocity", "acceleration")]
@@ -151,6 +168,16 @@ class Oracle:
         else:
             raise TypeError(model.kind)
         return grid
+
+    @classmethod
+    def _polynomial_matrix(cls, model: Model, name: str, s: Gaussian) -> list[list[Gaussian]]:
+        entry, values = cls._entries(model, name), getattr(model, name)
+        total = [[ZERO] * values.shape[2] for _ in range(values.shape[1])]
+        for k, matrix in enumerate(values):
+            for i, row in enumerate(matrix):
+                for j, value in enumerate(row):
+                    total[i][j] = _add(_mul(total[i][j], s), (entry(value, k, i, j), Fraction(0)))
+        return total
 
     @classmethod
     def _matrix(cls, model: Model, name: str) -> list[list[Fraction]]:

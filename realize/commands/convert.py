@@ -20,6 +20,7 @@ def execute(
     certify: bool,
     ordering: str | None,
     force: bool,
+    side: str | None,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
@@ -50,6 +51,7 @@ def execute(
             form=form,
             ordering=ordering,
             force=force,
+            side=side,
             common_denominator=common_denominator,
             digits=digits,
             arithmetic=arithmetic,

@@ -20,7 +20,16 @@ from realize.forms import (
     observable_companion,
 )
 from realize.forms.cascade import BeyondDoubles, Section, monic
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 from realize.models.checks import MAX_EXPONENT
 from realize.models.fractions import form_fractions
 
@@ -65,7 +74,11 @@ def fractions(model: Model, task: Task) -> Grid:
         raise Refused(
             "the pencil sE - A is singular: det(sE - A) is zero for every s, so no transfer function exists"
         ) from None
-    if isinstance(model, (StateSpace, SecondOrder)) and not task.common_denominator and task.to != "state-space":
+    if (
+        isinstance(model, (StateSpace, SecondOrder, MatrixFraction))
+        and not task.common_denominator
+        and task.to != "state-space"
+    ):
         return [[reduce_fraction(n, d) for n, d in row] for row in formed]
     if task.common_denominator:
         return _over_common_denominator(formed)

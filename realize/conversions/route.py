@@ -13,11 +13,11 @@ from dataclasses import dataclass, field, replace
 from functools import partial
 from typing import Any
 
-from realize.conversions import builders, descriptor, digits, doubles, minimal_states, second_order
+from realize.conversions import builders, descriptor, digits, doubles, matrix_fraction, minimal_states, second_order
 from realize.conversions.coordinates import Changed, change
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
-from realize.models import Model, SecondOrder, StateSpace
+from realize.models import MatrixFraction, Model, SecondOrder, StateSpace
 from realize.verification.views import EXACT_BUDGET, forming_cost, predicted_cost
 
 
@@ -36,6 +36,7 @@ class Task:
     arithmetic: str = "auto"
     ordering: str | None = None
     force: bool = False
+    side: str | None = None
     #: What the rows have to say: sentences for people, and details of the receipt.
     notes: list[str] = field(default_factory=list, compare=False)
     details: dict[str, Any] = field(default_factory=dict, compare=False)
@@ -106,6 +107,21 @@ SMALLEST_DESCRIPTOR = Row(
 )
 
 ROWS: tuple[Row, ...] = (
+    Row("matrix-fraction", "exact-fractions", builders.fractions, True, "exact N adj(D) (or adj(D) N) over det(D)"),
+    Row(
+        "exact-fractions",
+        "matrix-fraction",
+        matrix_fraction.matrix_fraction,
+        False,
+        "coprime and reduced, from the dependent columns of the Hankel matrix; each coefficient rounded once",
+    ),
+    Row(
+        "matrix-fraction",
+        "state-space",
+        matrix_fraction.states_from_fraction,
+        False,
+        "controller form (right) or observer form (left) of the coprime, reduced fraction",
+    ),
     MASS_AS_IT_STANDS,
     BLOCKS_READ_OFF,
     Row(
@@ -260,7 +276,7 @@ def default_form(model: Model) -> str:
     become modal, and any other single channel a cascade; several channels get the McMillan degree in the coordinates
     that prove best ("minimal"; modal in double arithmetic).
     """
-    if isinstance(model, (StateSpace, SecondOrder)):
+    if isinstance(model, (StateSpace, SecondOrder, MatrixFraction)):
         return ""
     if model.shape != (1, 1):
         return "minimal"
@@ -287,7 +303,7 @@ def plan_route(task: Task) -> list[Row]:
     start, goal = task.model.kind, task.target
     if start == goal and descriptor.has_descriptor(task.model):
         return [SMALLEST_DESCRIPTOR]
-    if start == goal and not task.common_denominator and task.digits is None:
+    if start == goal and not task.common_denominator and task.digits is None and task.side is None:
         return []
     rows = _rows(task)
     if task.digits is not None:

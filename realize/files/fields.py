@@ -226,7 +226,7 @@ def _from_file(value: Any, place: str, reading: Reading) -> Any:
         raise InputError(f"{detail}: {error.found}", error.expected, field=place) from None
 
 
-def _frequency_unit(value: Any, place: str, reading: Reading) -> str:
+def _word(value: Any, place: str, reading: Reading) -> str:
     return text(value, place)
 
 
@@ -244,7 +244,9 @@ READERS: dict[str, Callable[[Any, str, Reading], Any]] = {
     "matrix": _matrix,
     "signal-list": signals,
     "frequency-list": _block(1, False, "frequency-list"),
-    "frequency-unit": _frequency_unit,
+    "frequency-unit": _word,
+    "side": _word,
+    "polynomial-matrix": _block(3, False, "polynomial-matrix"),
     "response": _block(3, True, "response"),
     "real-response": _block(3, False, "real-response"),
 }

@@ -29,7 +29,7 @@ from realize.models import Model
 from realize.schema import COMMON_FIELDS, FORMAT_VERSION, KINDS
 
 RAGGED = ("polynomials", "roots")
-TEXTS = ("signal-list", "frequency-unit")
+TEXTS = ("signal-list", "frequency-unit", "side")
 
 
 def sniff(head: bytes) -> bool:
@@ -89,7 +89,7 @@ def _header(arrays: Arrays) -> dict[str, Any]:
             continue
         if name in header:
             raise InputError("given in the array model too", "each field once", field=name)
-        if name in ("kind", "frequency_unit"):
+        if name in ("kind", "frequency_unit", "side"):
             header[name] = arrays.text(name)
         elif name == "realize":
             version = arrays.raw(name)
@@ -241,7 +241,7 @@ def write(model: Model, stream: BinaryIO) -> None:
         if f.holds == "signal-list":
             if any(signal.name or signal.unit for signal in value):
                 header[f.name] = signals_to_record(value)
-        elif f.holds == "frequency-unit":
+        elif f.holds in TEXTS:
             header[f.name] = value
         elif f.holds in RAGGED:
             arrays[f"{f.name}_values"] = np.concatenate([part for row in value for part in row])

@@ -3,6 +3,7 @@
 from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Signal, TimeBase
 from realize.models.digest import digest, mark
 from realize.models.frequency_response import FrequencyResponse
+from realize.models.matrix_fraction import MatrixFraction
 from realize.models.pole_residue import PoleResidue
 from realize.models.second_order import SecondOrder
 from realize.models.sections import Sections
@@ -17,6 +18,7 @@ MODEL_TYPES: dict[str, type[Model]] = {
         ZeroPoleGain,
         PoleResidue,
         Sections,
+        MatrixFraction,
         StateSpace,
         SecondOrder,
         FrequencyResponse,
@@ -28,6 +30,7 @@ __all__ = [
     "MODEL_TYPES",
     "DeadTime",
     "FrequencyResponse",
+    "MatrixFraction",
     "Model",
     "Offset",
     "PoleResidue",

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Any
 
 from realize.models.base import Model
+from realize.models.matrix_fraction import MatrixFraction
 from realize.models.pole_residue import PoleResidue
 from realize.models.second_order import SecondOrder
 from realize.models.sections import Sections
@@ -59,6 +60,19 @@ def _formed(model: Model) -> list[list[tuple[Any, Any]]]:
         return [[polynomials.from_sections(model.exact("sections"), model.exact("gain"))]]
     if isinstance(model, StateSpace):
         numerators, denominator = states.transfer_matrix(*(model.exact(name) for name in "ABCDE"))
+        return [[(numerators[i][j], denominator) for j in range(m)] for i in range(p)]
+    if isinstance(model, MatrixFraction):
+        from realize.errors import InputError
+        from realize.kernels.exact.matrix_fractions import ZeroDeterminant, multiplied_out
+
+        try:
+            numerators, denominator = multiplied_out(
+                model.polynomials("numerator"), model.polynomials("denominator"), model.side
+            )
+        except ZeroDeterminant:
+            raise InputError(
+                "a determinant that is zero for every s", "a denominator that can be inverted", field="denominator"
+            ) from None
         return [[(numerators[i][j], denominator) for j in range(m)] for i in range(p)]
     if isinstance(model, SecondOrder):
         from realize.kernels.exact.second_order import transfer_matrix

@@ -7,7 +7,16 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 
 ComplexArray = NDArray[np.complex128]
 #: Beyond this many states a drawing does without transmission zeros; the grid is refined by the response itself.
@@ -96,6 +105,10 @@ def poles_of(model: Model) -> ComplexArray:
             roots = _section_roots(model, 1)
         case StateSpace():
             roots = _pencil_roots(model.A, model.E)
+        case MatrixFraction():
+            from realize.verification.views import double_poles
+
+            roots = double_poles(model)
         case SecondOrder():
             n = model.order
             roots = _pencil_roots(model.pencil.A[:n, :n], model.pencil.E[:n, :n])

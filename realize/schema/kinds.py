@@ -21,6 +21,8 @@ HOLDS = {
     "direct": "[outputs][inputs], or a polynomial part [power][outputs][inputs], highest power first; real",
     "section-list": '[k] of {"numerator": [b2, b1, b0], "denominator": [a2, a1, a0]}; real',
     "number": "one real number",
+    "side": '"left" or "right"',
+    "polynomial-matrix": "[power][rows][columns]; real, highest power first",
     "matrix": "[rows][columns]; real",
     "signal-list": '[n] of {"name": text, "unit": text}',
     "frequency-list": "[k]; real, not negative, strictly increasing",
@@ -95,6 +97,15 @@ KINDS: dict[str, Kind] = {
             (
                 Field("sections", "section-list", True, "the sections in the order of the signal"),
                 Field("gain", "number", False, "factor in front of the product; 1 unless given"),
+            ),
+        ),
+        Kind(
+            "matrix-fraction",
+            "numerator times inverse of denominator (right), or inverse of denominator times numerator (left).",
+            (
+                Field("side", "side", True, "side of the denominator"),
+                Field("numerator", "polynomial-matrix", True, "outputs x inputs for each power"),
+                Field("denominator", "polynomial-matrix", True, "square: inputs (right) or outputs (left)"),
             ),
         ),
         Kind(

@@ -29,6 +29,7 @@ FORMS = (
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "auto")
 FIT_METHODS = ("vector-fitting", "auto")
+SIDES = ("left", "right")
 ARITHMETICS = ("exact", "auto", "double")
 
 
@@ -121,6 +122,7 @@ VERBS: dict[str, Verb] = {
                 Option(
                     "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"
                 ),
+                Option("side", "choice", "side of the denominator of a matrix fraction; right unless said", SIDES),
                 ARITHMETIC,
                 CERTIFY,
                 Option("explain", "flag", "print the route and why, and stop"),

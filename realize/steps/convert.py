@@ -22,7 +22,7 @@ from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
 from realize.models import FrequencyResponse, Model, StateSpace
 from realize.models.checks import MAX_DIGITS
-from realize.schema import ARITHMETICS, CLAIMS, FORMS, ORDERINGS, PARAMETRIC_KINDS, STRUCTURED, Claim
+from realize.schema import ARITHMETICS, CLAIMS, FORMS, ORDERINGS, PARAMETRIC_KINDS, SIDES, STRUCTURED, Claim
 from realize.steps.candidates import choose_states
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
@@ -51,6 +51,7 @@ def _task(
     arithmetic: str,
     ordering: str | None,
     force: bool = False,
+    side: str | None = None,
 ) -> Task:
     if to not in PARAMETRIC_KINDS:
         raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
@@ -62,6 +63,8 @@ def _task(
         raise UsageError(f"no ordering {ordering!r}; there are: {', '.join(ORDERINGS)}")
     if ordering is not None and form not in ORDERED:
         raise UsageError(f"--ordering goes with --form {', '.join(ORDERED)}")
+    if side is not None and (to != "matrix-fraction" or side not in SIDES):
+        raise UsageError(f"--side goes with --to matrix-fraction, and is one of: {', '.join(SIDES)}")
     if common_denominator and to != "transfer-function":
         raise UsageError("--common-denominator goes with --to transfer-function")
     if isinstance(model, FrequencyResponse):
@@ -73,7 +76,7 @@ def _task(
             raise UsageError(f"--digits {digits}: expected a whole number from 1 to {MAX_DIGITS}")
         if arithmetic == "double":
             raise UsageError("--digits needs exact arithmetic, and --arithmetic double was asked for")
-    return Task(model, to, form, common_denominator, digits, arithmetic, ordering, force)
+    return Task(model, to, form, common_denominator, digits, arithmetic, ordering, force, side)
 
 
 def explain(
@@ -101,6 +104,7 @@ def convert(
     form: str | None = None,
     ordering: str | None = None,
     force: bool = False,
+    side: str | None = None,
     common_denominator: bool = False,
     digits: int | None = None,
     arithmetic: str = "auto",
@@ -122,6 +126,9 @@ def convert(
     ordering : str, optional
         Order of the blocks of the form "schur": "speed" (slowest first, the default), "damping" (least damped first)
         or "stability" (unstable first).
+    side : str, optional
+        Side of the denominator of a matrix fraction, "right" (the default) or "left". One that is a matrix fraction
+        already is made coprime and reduced if a side is asked for.
     force : bool
         Give a form even where it ruins the model; the claim then fails.
     common_denominator : bool
@@ -149,7 +156,7 @@ def convert(
     """
     started = time.perf_counter()
     source = model_of(model)
-    task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force)
+    task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force, side)
     choice = choose_arithmetic(task)
     lifted = certify or arithmetic == "exact"
     with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:

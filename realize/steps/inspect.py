@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 
 from realize.errors import Refused
-from realize.models import FrequencyResponse, Model, SecondOrder, StateSpace, mark
+from realize.models import FrequencyResponse, MatrixFraction, Model, SecondOrder, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
@@ -89,7 +89,7 @@ def _roots(view: View, cautions: list[str]) -> tuple[list[Any], list[Any] | None
         cautions.append("Too large for exact arithmetic: poles are eigenvalues in double arithmetic.")
         values = values[np.lexsort((-values.imag, values.real, np.abs(values)))]
         return [[value.real, value.imag, 1] for value in values.tolist()], None
-    if isinstance(model, (StateSpace, SecondOrder)):
+    if isinstance(model, (StateSpace, SecondOrder, MatrixFraction)):
         full = exact_fractions(model, cancel=False)[0][0][1]
         return listed(full), listed(view.fractions[0][0][0]) if p * m == 1 else None
     if p * m == 1:
@@ -137,7 +137,7 @@ def _stable(view: View, poles: list[Any]) -> bool | None:
         from realize.verification.views import exact_fractions
 
         inside = inside_unit_circle if edge else inside_left_half_plane
-        if isinstance(view.model, (StateSpace, SecondOrder)):
+        if isinstance(view.model, (StateSpace, SecondOrder, MatrixFraction)):
             polynomials = [exact_fractions(view.model, cancel=False)[0][0][1]]
         else:
             polynomials = [d for row in view.fractions for _, d in row]

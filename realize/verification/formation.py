@@ -5,7 +5,16 @@ from __future__ import annotations
 import random
 from typing import Any
 
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 from realize.schema import KINDS
 
 
@@ -96,6 +105,8 @@ def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
         except ZeroDivisionError:
             return None
         return [[value[0] for value in row] for row in response]
+    elif isinstance(model, MatrixFraction):
+        return _fraction_at(model, x)
     elif isinstance(model, SecondOrder):
         from realize.kernels.exact.second_order import value_at
 
@@ -108,3 +119,25 @@ def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:
     if any(under == 0 for row in pairs for _, under in row):
         return None
     return [[above / under for above, under in row] for row in pairs]
+
+
+def _fraction_at(model: MatrixFraction, x: Any) -> list[list[Any]] | None:
+    """Return a matrix fraction at a rational point by one exact solve, None at a pole."""
+    from flint import fmpq_mat
+
+    from realize.kernels.exact.numbers import fraction
+
+    def at(name: str) -> fmpq_mat:
+        parts = [fmpq_mat([[fraction(entry) for entry in row] for row in matrix]) for matrix in model.exact(name)]
+        total = parts[0]
+        for part in parts[1:]:
+            total = total * x + part
+        return total
+
+    N, D = at("numerator"), at("denominator")
+    try:
+        value = D.solve(N) if model.side == "left" else D.transpose().solve(N.transpose()).transpose()
+    except ZeroDivisionError:
+        return None
+    table: list[list[Any]] = value.tolist()
+    return table

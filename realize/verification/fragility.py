@@ -6,6 +6,7 @@ With u = 2^-53 and each number changed by at most u times itself, at one frequen
     zero-pole-gain       u (1 + sum (|Re z| + |Im z|) / |s - z| + the same for poles)
     pole-residue         u (sum |r| / |s - p|^k + k |r| (|Re p| + |Im p|) / |s - p|^(k+1) + sum |d_k s^k|) / |G|
     sections             the sum over the sections of the transfer function's formula
+    matrix fraction      u (sum |s^k N_k| + |G| sum |s^k D_k|) |D^-1| / |G|, right; a left one likewise
     second order         u (|C X| (|s^2 M| + |s D| + |K|) |X F| + |C X| |F| + sum |s^k C_k| |X F| + |G|) / |G(s)|,
                          X = (s^2 M + s D + K)^-1, C = P + s V + s^2 W
     state space          u (|C X| |B| + |C X| |A| |X B| + |C| |X B| + |D| (+ |s| |C X| |E| |X B|)) / |G|,
@@ -22,7 +23,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels.response import balanced_states, scaled_polynomial
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -82,6 +92,8 @@ def _relative(model: Model, points: ComplexArray) -> Array:
     p, m = model.shape
     if isinstance(model, StateSpace):
         return _states(model, points)
+    if isinstance(model, MatrixFraction):
+        return _fraction(model, points)
     if isinstance(model, SecondOrder):
         return _second_order(model, points)
     if isinstance(model, TransferFunction) and model.shape == (1, 1) and not model.decimals:
@@ -154,6 +166,28 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
         change = row @ b + row @ a @ column + c @ column + np.abs(model.D)
         if E is not None:
             change = change + abs(s) * (row @ np.abs(E) @ column)
+        size = np.linalg.norm(value)
+        result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
+    return result
+
+
+def _fraction(model: MatrixFraction, points: ComplexArray) -> Array:
+    result = np.full(points.size, np.nan)
+    right = model.side == "right"
+    for k, s in enumerate(points):
+        (N, n), (D, d) = (
+            (
+                sum(M * s**e for e, M in zip(range(len(P) - 1, -1, -1), P, strict=True)),
+                sum(np.abs(M) * abs(s) ** e for e, M in zip(range(len(P) - 1, -1, -1), P, strict=True)),
+            )
+            for P in (model.numerator, model.denominator)
+        )
+        try:
+            inverse = np.linalg.inv(D)
+        except np.linalg.LinAlgError:
+            continue
+        value = N @ inverse if right else inverse @ N
+        change = (n + np.abs(value) @ d) @ np.abs(inverse) if right else np.abs(inverse) @ (n + d @ np.abs(value))
         size = np.linalg.norm(value)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result

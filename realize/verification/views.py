@@ -17,7 +17,16 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.models import Model, PoleResidue, SecondOrder, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 from realize.models.fractions import form_fractions
 from realize.verification.formation import check_at_a_point
 
@@ -182,7 +191,7 @@ class View:
 
         if polynomial.degree() < 1:
             return NO_DYNAMICS
-        if isinstance(self.model, (StateSpace, SecondOrder)) and polynomial.degree() > LARGE_DEGREE:
+        if isinstance(self.model, (StateSpace, SecondOrder, MatrixFraction)) and polynomial.degree() > LARGE_DEGREE:
             image = polynomial if self.period is None else bilinear_image(polynomial)
             even, odd = even_odd(image)
             common = even.gcd(odd) if odd else even
@@ -370,6 +379,10 @@ def double_poles(model: Model) -> ComplexArray:
 
         values = scipy.linalg.eigvals(A, E)
         return finite_ones(model, values[np.isfinite(values)])
+    if isinstance(model, MatrixFraction):
+        determinant = form_fractions(model)[0][0][1]
+        roots = approximate_roots(determinant) if determinant.degree() > 0 else None
+        return np.zeros(0, dtype=complex) if roots is None else roots
     if isinstance(model, SecondOrder):
         pencil = model.pencil
         n = model.order

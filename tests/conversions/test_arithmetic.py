@@ -28,7 +28,7 @@ SOURCES: dict[str, Model] = {
         A=[[0.0, 1.0, 0.5], [-2.0, -3.0, 0.0], [0.25, 0.0, -4.0]], B=[[0.0], [1.0], [1.0]], C=[[1.0, 0.0, 2.0]]
     ),
 }
-FORMS = [(kind, None) for kind in UNIVERSAL_KINDS] + [
+FORMS = [(kind, None) for kind in UNIVERSAL_KINDS if kind != "matrix-fraction"] + [
     ("state-space", form) for form in ("cascade", "modal", "controllable-companion", "observable-companion")
 ]
 
@@ -49,6 +49,13 @@ def flexible(order: int, seed: int = 1) -> StateSpace:
     B, C = np.zeros((order, 2)), np.zeros((1, order))
     B[1::2], C[0, ::2] = rng.standard_normal((n, 2)), rng.standard_normal(n)
     return StateSpace(A=turn.T @ A @ turn, B=turn.T @ B, C=C @ turn)
+
+
+@pytest.mark.parametrize("start", SOURCES)
+def test_matrix_fractions_are_exact_or_not_at_all(start: str) -> None:
+    with pytest.raises(Refused, match="matrix-fraction in double arithmetic"):
+        convert(SOURCES[start], "matrix-fraction", arithmetic="double")
+    assert convert(SOURCES[start], "matrix-fraction").receipt.claim("peak-error").holds
 
 
 @pytest.mark.parametrize("start", SOURCES)

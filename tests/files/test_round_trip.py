@@ -86,6 +86,13 @@ def records(draw, kind):
             record["E"] = draw(matrix(n, n))
         if draw(st.booleans()):
             record["states"] = [{"name": f"x{k}", "unit": draw(SAFE)} for k in range(n)]
+    elif kind == "matrix-fraction":
+        side = record["side"] = draw(st.sampled_from(["left", "right"]))
+        size = m if side == "right" else p
+        record["numerator"] = draw(st.lists(matrix(p, m), min_size=1, max_size=3))
+        # a leading zero matrix would be dropped
+        record["denominator"] = [np.eye(size).tolist(), *draw(st.lists(matrix(size, size), max_size=2))]
+        record["numerator"][0][0][0] = 1.5
     elif kind == "second-order":
         n = max(n, 1)
         record.update({name: draw(matrix(n, n)) for name in ("mass", "damping", "stiffness")}, input=draw(matrix(n, m)))
