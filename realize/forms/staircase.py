@@ -16,10 +16,12 @@ from realize.kernels.staircase import (
 )
 
 EPS = float(np.finfo(float).eps)
-#: A rank decision is ambiguous where a singular value that was kept is within this factor of its threshold.
+#: A singular value above its threshold by less than this factor may be dropped.
 AMBIGUOUS = 1e3
 #: Ambiguous values are dropped where the next one is larger by this times the factor: rounding has no such gap.
 GAP = 1e4
+#: What was kept within this factor of its threshold is ambiguous: a chain of steps magnifies rounding by as much.
+BLIND = 1e7
 #: Up to this order each mode is tried by itself as well as by the staircase.
 SEARCHED = 60
 
@@ -48,7 +50,7 @@ def decision(found: Staircase) -> dict[str, Any]:
         "smallest_kept": _number(kept),
         "largest_dropped": dropped,
         "gap": _number(kept / dropped) if dropped > 0 else None,
-        "ambiguous": bool(kept < AMBIGUOUS or dropped > 1),
+        "ambiguous": bool(kept < BLIND or dropped > 1),
         "steps": [
             {
                 "kept": int(up.size),
@@ -73,8 +75,8 @@ def _cautions(what: str, ambiguous: bool, removed: list[dict[str, Any]], order: 
     notes = []
     if ambiguous:
         notes.append(
-            f"The number of {what} states is ambiguous: a rank decision lies within a factor {AMBIGUOUS:.0e} of its "
-            "threshold (details: decisions)."
+            f"The number of {what} states is ambiguous: a rank decision is too near to its threshold to be told from "
+            "magnified rounding (details: decisions)."
         )
     doubtful = [row for row in removed if row["elementwise_change"] > AMBIGUOUS * rounding(order)]
     if doubtful:

@@ -15,6 +15,9 @@ from realize.kernels.within_rounding import hidden_side
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
+#: A shear larger than this leaves doubles no digit in eight.
+LARGEST_SHEAR = 1e8
+
 
 @dataclass(frozen=True)
 class Kalman:
@@ -131,6 +134,10 @@ def kalman_decomposition(
         more = min(every.shape[1] - (r - o), n - r)
         if more > hidden:
             hidden, unseen = more, scipy.linalg.svd((T.T @ every)[rest], full_matrices=False)[0][:, :more]
+    # states that are observable by one decision and unseen by the other stay observable
+    _, parts, mixed = scipy.linalg.svd(unseen[o:], full_matrices=False)
+    apart = parts > LARGEST_SHEAR**-1
+    hidden, unseen = int(apart.sum()), unseen @ mixed[apart].T
     # a basis of the unseen states: X w beside w = W, orthonormal
     full, upper = scipy.linalg.qr(unseen[o:], check_finite=False)
     Z = np.hstack([full[:, hidden:], full[:, :hidden]])
