@@ -45,8 +45,12 @@ SOME_MODES = 8
 PROMISING = 1e6
 #: Vectors of which less than this is orthogonal to those before are judged by that part, less than that are the same.
 APART, SAME = 0.1, 1e-8
-#: Pairs with a smaller imaginary part, relative to their size, are tried as two real modes.
-NEARLY_REAL = 1e-2
+#: Eigenvalues that differ by more than this, relative to their size, are two modes, however near their vectors are.
+OTHER = 1e-3
+#: Eigenvalues this near to each other, relative to their size, may be one that rounding drove apart.
+CLUSTER = 1e-2
+#: Singular vectors tried at the centre of a cluster.
+CENTRED = 2
 #: Denominators of zero columns, relative to the largest: what has no number cannot be changed.
 NO_NUMBER = 1e-30
 
@@ -109,8 +113,9 @@ def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = Non
                 kept, kept_mode = min((kept, kept_mode), (guesses[k], s), key=lambda pair: pair[0])
                 break
             searched += 1
-            for at, w in _starts(s, free @ vectors[:, k]):
-                error, at, w = _judged(M, sizes, space, F, at, w, threshold)
+            starts = _starts(s, free @ vectors[:, k], poles, A, B, free)
+            for at, w in starts:
+                error, at, w = _judged(M, sizes, space, F, at, w, threshold, modes)
                 wider = _orthonormal(F, _real_basis(at, w)) if error <= threshold else None
                 if wider is not None:
                     F, accepted = wider, True
@@ -124,11 +129,26 @@ def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = Non
     return Side(F, modes, errors, kept, kept_mode)
 
 
-def _starts(s: complex, w: ComplexArray) -> list[tuple[complex, ComplexArray]]:
-    """Return where to search from: a pair near the real axis may be two real modes that rounding drove apart."""
-    if s.imag and abs(s.imag) < NEARLY_REAL * abs(s):
-        return [(complex(s.real), w.real.astype(complex)), (complex(s.real), w.imag.astype(complex)), (s, w)]
-    return [(s, w)]
+def _starts(
+    s: complex, w: ComplexArray, poles: ComplexArray, A: Array, B: Array, space: Array
+) -> list[tuple[complex, ComplexArray]]:
+    """Return where to search from.
+
+    A pair near the real axis may be two real modes that rounding drove apart; and in a cluster the vectors of the
+    eigenvalues say little: the smallest singular vectors of [A - s I, B] at its centre are better.
+    """
+    found: list[tuple[complex, ComplexArray]] = []
+    near = poles[np.abs(poles - s) <= CLUSTER * abs(s)]
+    if near.size > 1:
+        centre = complex(near.mean())
+        centre = complex(centre.real) if abs(centre.imag) <= 1e-6 * abs(centre) else centre
+        table = space.T @ np.hstack([A - centre * np.eye(A.shape[0]), B])
+        table = table.real if centre.imag == 0 else table
+        vectors = np.linalg.svd(table)[0][:, ::-1].conj()
+        found += [(centre, (space @ vectors[:, k]).astype(complex)) for k in range(min(near.size, CENTRED))]
+    if s.imag and abs(s.imag) < CLUSTER * abs(s):
+        found += [(complex(s.real), w.real.astype(complex)), (complex(s.real), w.imag.astype(complex))]
+    return [*found, (s, w)]
 
 
 def _real_basis(s: complex, w: ComplexArray) -> Array:
@@ -136,7 +156,14 @@ def _real_basis(s: complex, w: ComplexArray) -> Array:
 
 
 def _judged(
-    M: Array, sizes: Array, space: Array, F: Array, s: complex, w: ComplexArray, threshold: float
+    M: Array,
+    sizes: Array,
+    space: Array,
+    F: Array,
+    s: complex,
+    w: ComplexArray,
+    threshold: float,
+    modes: list[complex],
 ) -> tuple[float, complex, ComplexArray]:
     """Return backward error, eigenvalue and vector from a start: by itself, or beside those found that are near."""
     first = w
@@ -144,7 +171,8 @@ def _judged(
     if not F.shape[1]:
         return error, at, w
     rest = _rest(F, w)
-    if error > threshold or rest < APART:
+    other = all(abs(at - mode) > OTHER * max(abs(at), abs(mode)) for mode in modes)
+    if error > threshold or not (rest >= APART or (other and rest >= SAME)):
         # not far from those before: what is orthogonal to them decides
         again, at = (w, at) if rest > SAME else (first, s)
         error, at, w = _search(M, sizes, _complement(space, F), F, at, again, threshold)
@@ -221,17 +249,19 @@ def _search(
             N, lean = N - (N @ span) @ span.T, lean - span @ (span.T @ lean)
         # Gauss & Newton for w and s together; w moves orthogonally to itself and to what was found before
         N = np.hstack([N, outside, w.conj()[:, None]])
-        # rows of like size, so that rounding of the large ones does not drown the others
-        size = np.abs(N).max(axis=1)
+        # entries that are zero stay zero; rows of like size, so that rounding of the large ones drowns no others
+        live = w != 0
+        size = np.abs(N).max(axis=1)[live]
         scale = 1 / np.where(size > 0, size, 1.0)
         edge = float(np.abs(lean).max()) or 1.0
-        table = np.vstack([N * scale[:, None], np.pad(-lean / edge, (0, N.shape[1] - lean.size))])
+        table = np.vstack([N[live] * scale[:, None], np.pad(-lean / edge, (0, N.shape[1] - lean.size))])
         right = -(w @ N)
         right[-1] = 0.0
         if real:
             table, right = table.real, right.real
         move = scipy.linalg.lstsq(table.T, right, lapack_driver="gelsy", check_finite=False)[0]
-        w = w + move[:-1] * scale
+        w = w.astype(complex)
+        w[live] += move[:-1] * scale
         w = w / np.linalg.norm(w)
         s = s + move[-1] / edge
     return best, best_s, best_w.astype(complex)
