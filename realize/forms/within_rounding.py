@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
 from realize.kernels.balancing import scale_model
-from realize.kernels.within_rounding import hidden_side
+from realize.kernels.within_rounding import hidden_side, spectra
 
 Array = NDArray[np.float64]
 #: Up to this order the model is truncated in balanced coordinates of high precision.
@@ -79,9 +79,12 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
     A, B = _plain(A, B, E)
     columns, rows = _channels(B, C)
     scaled = scale_model(A, B * columns, C * rows[:, None], sampled=sampled)
-    first = hidden_side(scaled.A, scaled.B, threshold)
-    rest = _orthogonal_to(first.vectors)
-    second = hidden_side(scaled.A.T, scaled.C.T, threshold, rest)
+    left, right = spectra(scaled.A)
+    first = hidden_side(scaled.A, scaled.B, threshold, spectrum=left)
+    if first.modes:
+        second = hidden_side(scaled.A.T, scaled.C.T, threshold, _orthogonal_to(first.vectors))
+    else:
+        second = hidden_side(scaled.A.T, scaled.C.T, threshold, spectrum=right)
     modes = []
     unit = math.ldexp(1.0, scaled.time)
     for pole, change in zip(first.modes, first.errors, strict=True):
@@ -89,7 +92,7 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
     for pole, change in zip(second.modes, second.errors, strict=True):
         modes.append(Mode(pole * unit, UNOBSERVABLE, change))
     if first.modes:
-        every = hidden_side(scaled.A.T, scaled.C.T, threshold)
+        every = hidden_side(scaled.A.T, scaled.C.T, threshold, spectrum=right)
         both = len(every.modes) - len(second.modes)
         spare = [pole * unit for pole in every.modes]
         for pole in second.modes:

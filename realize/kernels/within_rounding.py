@@ -79,7 +79,12 @@ class Side:
     kept_mode: complex | None = None
 
 
-def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = None) -> Side:
+Spectrum = tuple[ComplexArray, ComplexArray]
+
+
+def hidden_side(
+    A: Array, B: Array, threshold: float, within: Array | None = None, spectrum: Spectrum | None = None
+) -> Side:
     """Return the modes that a relative change of at most the threshold makes unreachable.
 
     Parameters
@@ -91,6 +96,8 @@ def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = Non
         Largest relative change of an entry.
     within : (n, q) array, optional
         Orthonormal basis of an invariant subspace of A' in which the vectors lie; everything unless given.
+    spectrum : (n,) and (n, n) arrays, optional
+        Eigenvalues and left vectors of A, where they are known and ``within`` is not given.
     """
     n = A.shape[0]
     space = np.eye(n) if within is None else within
@@ -101,8 +108,11 @@ def hidden_side(A: Array, B: Array, threshold: float, within: Array | None = Non
     while True:
         # each mode by itself first, then what is left beside those found
         free = space if not F.shape[1] else _complement(space, F)
-        poles, vectors = _left_vectors(free.T @ A @ free)
-        guesses = [_first_guess(free @ vectors[:, k], B, sizes[:, n:]) for k in range(poles.size)]
+        if spectrum is not None and not F.shape[1]:
+            poles, vectors = spectrum
+        else:
+            poles, vectors = _left_vectors(free.T @ A @ free)
+        guesses = _first_guesses(free @ vectors, B, sizes[:, n:])
         kept, kept_mode = math.inf, None
         accepted, searched = False, 0
         for k in np.argsort(guesses, kind="stable"):
@@ -185,11 +195,18 @@ def _left_vectors(A: Array) -> tuple[ComplexArray, ComplexArray]:
     return poles, vectors
 
 
-def _first_guess(w: ComplexArray, B: Array, sizes: Array) -> float:
-    """Return the relative change of B alone that makes a left eigenvector see nothing of it."""
-    above, below = np.abs(w @ B), np.abs(w) @ sizes
+def spectra(A: Array) -> tuple[Spectrum, Spectrum]:
+    """Return eigenvalues with left vectors of A, and with those of A', from one decomposition."""
+    poles, left, right = scipy.linalg.eig(A, left=True, right=True, check_finite=False)
+    return (poles, left.conj()), (poles, right)
+
+
+def _first_guesses(W: ComplexArray, B: Array, sizes: Array) -> Array:
+    """Return for each left eigenvector the relative change of B alone that makes it see nothing of it."""
+    above, below = np.abs(W.T @ B), np.abs(W).T @ sizes
     ratio = np.divide(above, below, out=np.zeros(above.shape), where=below > 0)
-    return float(ratio.max(initial=0.0))
+    guesses: Array = ratio.max(axis=1, initial=0.0)
+    return guesses
 
 
 def _complement(space: Array, F: Array) -> Array:

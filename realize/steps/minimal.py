@@ -80,7 +80,7 @@ def minimal(
             rows = plan_route(task)
             work, route = convert_model(task, rows), [row.target for row in rows]
         decision = _in_place(work, exact) if isinstance(work, IN_PLACE) else decide(work, exact)
-        allowed = _allowed(source, exact, asked)
+        allowed = _allowed(source, decision, asked)
         result, claims, shape = _best(source, work, decision, allowed)
         claims = [_order_claim(decision, asked) if claim.name == "order" else claim for claim in claims]
         details = _details(source, result, decision)
@@ -127,9 +127,9 @@ def _in_place(model: Model, exact: bool) -> Decision:
     )
 
 
-def _allowed(source: Model, exact: bool, asked: dict[str, float]) -> dict[str, float]:
-    """Return limits: what was asked for; within rounding at least what changes of 4 n eps may do to the response."""
-    if exact:
+def _allowed(source: Model, decision: Decision, asked: dict[str, float]) -> dict[str, float]:
+    """Return limits: what was asked for; where numbers had to change, at least what changes of 4 n eps may do."""
+    if decision.hidden is None and decision.dropped == 0:
         return asked
     fragile = fragility_of(source, probe_frequencies(source)) or 0.0
     # fragility is the effect of one rounding, eps / 2
