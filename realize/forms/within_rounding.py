@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
 from realize.kernels.balancing import scale_model
-from realize.kernels.within_rounding import hidden_side, spectra
+from realize.kernels.within_rounding import CLUSTER, hidden_side, spectra
 
 Array = NDArray[np.float64]
 #: Up to this order the model is truncated in balanced coordinates of high precision.
@@ -39,6 +39,8 @@ class Hidden:
         Smallest relative change of the numbers found that would hide one more mode.
     unreachable, unobservable : arrays (n, k)
         Left and right vectors of what goes, in the model's own coordinates.
+    clustered : int
+        Poles of the largest cluster: among three and more the search may miss what is hidden.
     """
 
     order: int
@@ -46,6 +48,7 @@ class Hidden:
     kept: float
     unreachable: Array
     unobservable: Array
+    clustered: int
 
 
 def _plain(A: Array, B: Array, E: Array | None) -> tuple[Array, Array]:
@@ -109,7 +112,13 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
         min(first.kept, second.kept),
         first.vectors / size[:, None],
         second.vectors * size[:, None],
+        _largest_cluster(left[0]),
     )
+
+
+def _largest_cluster(poles: NDArray[np.complex128]) -> int:
+    near = np.abs(poles[:, None] - poles) <= CLUSTER * np.abs(poles)[:, None]
+    return int(near.sum(axis=1).max(initial=0))
 
 
 def _orthogonal_to(vectors: Array) -> Array:

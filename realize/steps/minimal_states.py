@@ -22,6 +22,8 @@ from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
+#: So many poles near each other make the search for hidden ones unsure.
+CROWD = 3
 #: Exact coordinates of larger state models would take minutes.
 LARGEST_EXACT = 150
 
@@ -311,6 +313,7 @@ def _within(model: StateSpace, threshold: float, exact_order: int) -> Decision |
         if decision is None:
             decision = Decision(model.order, False, threshold, 0.0, found.kept, made=model)
         decision.kept = found.kept
+        decision.notes += _clustered(found.clustered)
         return decision
     gone = [{"pole": m.pole, "states": 1, "why": m.why, "change": m.change} for m in found.modes]
     return Decision(
@@ -321,7 +324,17 @@ def _within(model: StateSpace, threshold: float, exact_order: int) -> Decision |
         found.kept,
         gone,
         hidden=(found.unreachable, found.unobservable),
+        notes=_clustered(found.clustered),
     )
+
+
+def _clustered(count: int) -> list[str]:
+    if count < CROWD:
+        return []
+    return [
+        f"{count} poles lie within 1 % of each other: a mode hidden among them may have been missed, and "
+        "the order be too large. Use --exact if the numbers are exact."
+    ]
 
 
 def candidates(model: StateSpace, decision: Decision) -> Iterator[tuple[Model, str, bool]]:

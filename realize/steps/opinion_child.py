@@ -35,7 +35,8 @@ def answered(request):
         import numpy as np
 
         with np.errstate(all="ignore"):
-            answer["by"], response = {"convert": convert, "reduce": reduce}[request["step"]](request)
+            verbs = {"convert": convert, "minimal": minimal, "reduce": reduce}
+            answer["by"], response = verbs[request["step"]](request)
         answer["real"], answer["imaginary"] = response.real.tolist(), response.imag.tolist()
     except Inapplicable as error:
         answer.update(error=str(error), inapplicable=True)
@@ -161,6 +162,41 @@ def through(signal, kind, data, to, s):
             value = value * np.polyval(row[:3], s) / np.polyval(row[3:], s)
         return value
     return np.polyval(n, s) / np.polyval(d, s)
+
+
+def minimal(request):
+    """Return the response of slycot's minimal realization (TB01PD), or of control's for one channel of coefficients."""
+    import numpy as np
+
+    s = points(request)
+    p, m = request["shape"]
+    if request["kind"] == "transfer-function" and p * m == 1:
+        import control
+
+        n, d = (np.array(request["fields"][name][0][0], dtype=float) for name in ("numerator", "denominator"))
+        if len(n) > len(d):
+            raise Inapplicable("the independent routine is not called for improper models")
+        made = control.TransferFunction(n, d).minreal()
+        above, below = made.num[0][0], made.den[0][0]
+        by = f"control minreal (order {len(below) - 1})"
+        return by, (np.polyval(above, s) / np.polyval(below, s))[:, None, None]
+    if request["kind"] != "state-space":
+        raise Inapplicable("the independent routines take state models and single transfer functions")
+    A, B, C, D, E = arrays(request["fields"])
+    n = A.shape[0]
+    if E is not None:
+        raise Inapplicable("the independent routine has no descriptor models")
+    if n < 3:
+        raise Inapplicable("the independent routine is not called for orders below 3")
+    try:
+        import slycot
+    except ImportError:
+        raise Inapplicable("slycot is not installed") from None
+    size = max(m, p)
+    b, c = np.zeros((n, size)), np.zeros((size, n))
+    b[:, :m], c[:p] = B, C
+    Ar, Br, Cr, nr = slycot.tb01pd(n, m, p, A, b, c, job="M", equil="S", tol=0.0)[:4]
+    return f"slycot TB01PD (order {nr})", states(Ar[:nr, :nr], Br[:nr, :m], Cr[:p, :nr], D, None, s)
 
 
 def reduce(request):

@@ -89,7 +89,7 @@ def asking(step: str, source: Model, options: dict[str, Any], wanted: bool | Non
         What the child needs to know of the step.
     wanted : bool or None
     """
-    if wanted is None and step == "convert":
+    if wanted is None and step in ("convert", "minimal"):
         yield Later(step, source, options)
         return
     if wanted is False:
@@ -214,7 +214,7 @@ def _answer(status: str, note: str, by: str = "") -> SecondOpinion:
 
 def _ask(step: str, source: Model, options: dict[str, Any]) -> tuple[Opinion, Callable[[], None]]:
     """Start the child; return the function that judges, and the one that ends the child."""
-    if step not in ("convert", "reduce"):
+    if step not in ("convert", "minimal", "reduce"):
         return lambda result: _answer("not-applicable", "no independent routine for this step"), _nothing
     from realize.steps.receipts import probe_frequencies
 

@@ -329,3 +329,32 @@ def test_data_is_refused() -> None:
     data = realize.FrequencyResponse(frequency=[1.0], frequency_unit="Hz", response=[[[1.0 + 0j]]])
     with pytest.raises(realize.Refused, match="fit"):
         realize.minimal(data)
+
+
+def test_the_second_opinion_names_the_order_it_found() -> None:
+    pytest.importorskip("slycot")
+    A, B, C, _ = sheared(1, 6, 4, 1, 1, 6)
+    second = realize.minimal(StateSpace(A=A, B=B, C=C), second_opinion=True).receipt.second_opinion
+    assert second.by == "slycot TB01PD (order 4)" and second.status == "agrees"
+    plant = TransferFunction(numerator=[1.0, 3.0, 2.0], denominator=[1.0, 6.0, 11.0, 6.0])
+    second = realize.minimal(plant, second_opinion=True).receipt.second_opinion
+    assert second.by == "control minreal (order 1)" and second.status == "agrees"
+
+
+@pytest.mark.parametrize("seed", range(12))
+def test_orders_within_rounding_of_larger_models(seed: int) -> None:
+    from realize.forms.within_rounding import hidden_within
+
+    n, visible = 14 + seed, 9 + seed // 2
+    A, B, C, condition = sheared(100 + seed, n, visible, 1 + seed % 3, 1 + seed % 2, 2 * n)
+    exact = realize.minimal(StateSpace(A=A, B=B, C=C), exact=True).receipt.details["order"]
+    d = np.random.default_rng(seed).uniform(0.5, 2, n)
+    found = hidden_within(0.1 * A * d[:, None] / d, 0.3 * B * d[:, None], C / d / 7, None, 4 * n * EPS, sampled=False)
+    assert condition < 1e6
+    assert found.order == exact
+
+
+def test_crowded_poles_are_a_caution() -> None:
+    A, B, C, _ = sheared(103, 12, 8, 1, 1, 12, distinct=False)
+    made = realize.minimal(StateSpace(A=0.1 * A, B=B, C=C))
+    assert any("within 1 % of each other" in caution for caution in made.receipt.cautions)
