@@ -13,6 +13,7 @@ from realize.conversions.route import (
     convert_model,
     coordinate_row,
     default_form,
+    follow,
     plan_route,
 )
 
@@ -28,6 +29,7 @@ __all__ = [
     "convert_model",
     "coordinate_row",
     "default_form",
+    "follow",
     "minimal_states",
     "plan_route",
 ]

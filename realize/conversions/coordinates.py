@@ -7,8 +7,9 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from realize.conversions.exact_coordinates import exact_matrices, refuse_beyond, setting_of
 from realize.errors import Refused
-from realize.forms.coordinates import Array, Coordinates, Setting
+from realize.forms.coordinates import Array, Coordinates
 from realize.forms.registry import TABLE, Form
 from realize.models import Offset, Signal, StateSpace
 
@@ -62,15 +63,15 @@ def change(model: StateSpace, task: Task, name: str, *, of_source: bool) -> Chan
         If E is singular within rounding, numbers lie beyond the range of doubles, or the form does not exist.
     """
     form = TABLE[name]
-    if model.beyond_doubles:
-        raise Refused(
-            f"{model.beyond_doubles[0]} lies beyond the range of doubles, and {name} coordinates are in doubles; "
-            "scale time and gain first"
-        )
-    explicit = _explicit(model, name)
-    setting = Setting(model.time.seconds if model.time.sampled else None, task.ordering or "speed", task.force)
-    with np.errstate(all="ignore"):
-        new = form.apply(explicit.A, explicit.B, explicit.C, model.D, setting)
+    if form.exact:
+        states, finite, says = exact_matrices(model, task, name)
+        explicit = _Explicit(model.A, model.B, model.C, finite, 1.0, says)
+        new = form.apply(states.A, states.B, states.C, states.D, setting_of(task))
+    else:
+        refuse_beyond(model, name)
+        explicit = _explicit(model, name)
+        with np.errstate(all="ignore"):
+            new = form.apply(explicit.A, explicit.B, explicit.C, model.D, setting_of(task))
     _check(new, name)
     condition = max(float(new.condition), explicit.condition)
     result = _assembled(model, explicit, new)
@@ -82,7 +83,7 @@ def _explicit(model: StateSpace, name: str) -> _Explicit:
     n = model.A.shape[0]
     if model.E is None or np.array_equal(model.E, np.eye(n)):
         return _Explicit(model.A, model.B, model.C, n, 1.0, "")
-    finite = _finite_states(model)
+    finite = finite_states(model)
     if finite is not None:
         return _Explicit(
             model.A[:finite, :finite],
@@ -122,7 +123,7 @@ def _exponents(sizes: Array) -> Any:
     return np.where(sizes > 0, np.frexp(sizes)[1], 0).astype(np.int64)
 
 
-def _finite_states(model: StateSpace) -> int | None:
+def finite_states(model: StateSpace) -> int | None:
     """Return n where E = diag(I_n, N), A = diag(A_n, I) with N strictly upper triangular; None for any other E."""
     E, A, size = model.E, model.A, model.A.shape[0]
     zero = np.flatnonzero(np.diagonal(E) == 0)
@@ -180,14 +181,20 @@ def _names(model: StateSpace, new: Coordinates) -> tuple[Signal, ...]:
 
 
 def _record(form: Form, new: Coordinates, explicit: _Explicit, of_source: bool) -> dict[str, Any]:
+    record = record_of(form, new, of_source)
+    if explicit.says:
+        record["descriptor"] = explicit.says
+        record["descriptor_condition"] = explicit.condition
+    return record
+
+
+def record_of(form: Form, new: Coordinates, of_source: bool) -> dict[str, Any]:
+    """Return what the receipt says of a change of coordinates."""
     record: dict[str, Any] = {
         "form": form.name,
         "condition": float(new.condition) if np.isfinite(new.condition) else None,
         "against": "states of the source" if of_source else "states of the default realization, not of the source",
     }
-    if explicit.says:
-        record["descriptor"] = explicit.says
-        record["descriptor_condition"] = explicit.condition
     if not of_source:
         record["note"] = "the source has no states to go back to: the way back is a conversion to its kind"
     elif new.A.shape[0] <= MATRICES_UP_TO:

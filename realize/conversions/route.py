@@ -15,6 +15,7 @@ from typing import Any
 
 from realize.conversions import builders, descriptor, digits, doubles, matrix_fraction, minimal_states, second_order
 from realize.conversions.coordinates import Changed, change
+from realize.conversions.exact_coordinates import exact_cost, form_of_fractions
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
 from realize.models import MatrixFraction, Model, SecondOrder, StateSpace
@@ -37,6 +38,8 @@ class Task:
     ordering: str | None = None
     force: bool = False
     side: str | None = None
+    #: The form is to come from the response of a state model, because there is no transform from its states.
+    without_transform: bool = False
     #: What the rows have to say: sentences for people, and details of the receipt.
     notes: list[str] = field(default_factory=list, compare=False)
     details: dict[str, Any] = field(default_factory=dict, compare=False)
@@ -45,7 +48,9 @@ class Task:
     def changes_coordinates(self) -> bool:
         """True where the form is a change of coordinates of a state model (`realize.forms.registry`)."""
         form = TABLE.get(self.form or "")
-        return form is not None and (isinstance(self.model, StateSpace) or not form.from_states_only)
+        if form is None or self.without_transform:
+            return False
+        return isinstance(self.model, StateSpace) or not form.from_states_only
 
     @property
     def target(self) -> str:
@@ -181,6 +186,19 @@ ROWS: tuple[Row, ...] = (
     Row("pole-residue", "state-space:minimal", minimal_states.minimal_modal, False, MINIMAL),
 )
 
+#: Forms of exact matrices, from exact fractions; the companion forms have rows of their own.
+EXACT_FORMS = ("jordan", "multi-input-companion", "controllability", "observability")
+ROWS += tuple(
+    Row(
+        "exact-fractions",
+        f"state-space:{name}",
+        partial(form_of_fractions, name=name),
+        False,
+        f"exact realization; {TABLE[name].says}",
+    )
+    for name in EXACT_FORMS
+)
+
 #: Rows in double arithmetic: nothing exact is formed.
 DOUBLE_ROWS: tuple[Row, ...] = (
     MASS_AS_IT_STANDS,
@@ -259,6 +277,9 @@ class Choice:
 def choose_arithmetic(task: Task) -> Choice:
     """Return the arithmetic of a conversion, from sizes and bit lengths alone, never from the clock."""
     if task.changes_coordinates and isinstance(task.model, StateSpace):
+        if TABLE[task.form or ""].exact:
+            predicted = exact_cost(task.model, task.form or "")
+            return Choice("exact", task.arithmetic, predicted, EXACT_BUDGET, "the numbers as given, each rounded once")
         operations = 30.0 * task.model.A.shape[0] ** 3
         return Choice("double", task.arithmetic, operations, EXACT_BUDGET, "new coordinates have no exact entries")
     predicted = predicted_cost(task.model)
@@ -363,10 +384,16 @@ def _rows(task: Task) -> tuple[Row, ...]:
 
 def convert_model(task: Task, route: list[Row]) -> Model:
     """Follow a route and return the model at its end, without receipts."""
+    value = follow(task, route)
+    return value.model if isinstance(value, Changed) else value
+
+
+def follow(task: Task, route: list[Row]) -> Model | Changed:
+    """Follow a route and return what stands at its end: a model, or one with the record of a change of coordinates."""
     value: Any = task.model
     for row in route:
         apply = row.apply
         if task.digits is not None:
             apply = digits.BUILDERS.get((row.source, row.target), row.apply)
         value = apply(value, task)
-    return value.model if isinstance(value, Changed) else value
+    return value  # type: ignore[no-any-return]

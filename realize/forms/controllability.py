@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.errors import Refused
-from realize.forms.coordinates import Coordinates
+from realize.forms.coordinates import Coordinates, NoTransform, Setting
 
 if TYPE_CHECKING:
     from realize.kernels.exact.bases import Basis, RationalStates
@@ -62,7 +62,7 @@ def spanned_companion(states: RationalStates, side: Side = "input") -> tuple[Bas
 
     Raises
     ------
-    Refused
+    NoTransform
         If the model is not controllable (observable).
     """
     from realize.kernels.exact.bases import SingularBasis, companion_basis, crate
@@ -75,7 +75,7 @@ def spanned_companion(states: RationalStates, side: Side = "input") -> tuple[Bas
             if side == "input"
             else ("observable", "seen", "observable-staircase")
         )
-        raise Refused(
+        raise NoTransform(
             f"the model is not {adjective}: {error.rank} of its {error.states} states can be {verb} from the {side}s "
             f"(decided exactly), so that no transform leads to this form; use --form {stairs}, or take its minimal "
             "realization first"
@@ -90,7 +90,7 @@ def _one(states: RationalStates, side: Side, form: str) -> None:
         raise Refused(f"the {form} form needs one {side} and there are {count}; use {other}")
 
 
-def controllability_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
+def controllability_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:
     """Return the controllability form of a model with one input: the basis b, A b, ..., A^(n-1) b.
 
         A = [0 0 -a_n; 1 0 ...; 0 1 -a_1],   B = e_1,   C = [C b, C A b, ..., C A^(n-1) b]
@@ -102,6 +102,8 @@ def controllability_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
     ----------
     A : (n, n), B : (n, 1), C : (p, n), D : (p, 1)
         Arrays, nested lists of integer ratios, or rational matrices.
+    setting : Setting
+        Not used: continuous and sampled models have the same form.
 
     Returns
     -------
@@ -125,7 +127,7 @@ def controllability_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
     return rounded_coordinates(controllability_basis(states, companion), {"controllability_indices": indices})
 
 
-def observability_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
+def observability_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:
     """Return the observability form of a model with one output: the new states are y, y', ..., without the inputs.
 
         A = [0 1 0; 0 0 1; -a_n ... -a_1],   B = [C B; C A B; ...],   C = e_1'
@@ -144,7 +146,7 @@ def observability_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
     return rounded_coordinates(basis, {"observability_indices": indices})
 
 
-def controllable_companion_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
+def controllable_companion_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:
     """Return the controllable companion form [-a; I 0], e_1 of a model with one input, with its transform.
 
     Parameters, results and exceptions are those of `controllability_form`.
@@ -157,7 +159,7 @@ def controllable_companion_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
     return rounded_coordinates(basis, {"controllability_indices": indices})
 
 
-def observable_companion_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
+def observable_companion_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:
     """Return the observable companion form [-a', [I; 0]], e_1' of a model with one output, with its transform.
 
     Parameters, results and exceptions are those of `observability_form`.
@@ -170,7 +172,7 @@ def observable_companion_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
     return rounded_coordinates(dual_basis(basis), {"observability_indices": indices})
 
 
-def multi_input_companion_form(A: Any, B: Any, C: Any, D: Any) -> Coordinates:
+def multi_input_companion_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:
     """Return the companion form of several inputs, with the controllability indices as sizes of its blocks.
 
     From the crate diagram of b_1..b_m, A b_1, ... the first independent columns are taken, k_j of them for input j. The

@@ -14,6 +14,10 @@ from realize.kernels.balancing import Scaled, scale_model
 Array = NDArray[np.float64]
 
 
+class NoTransform(Refused):
+    """No change of coordinates leads from the states of this model to the form; its response may still have it."""
+
+
 @dataclass(frozen=True)
 class Setting:
     """What a form needs to know beside the matrices.

@@ -18,7 +18,7 @@ def modal_form(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> Coor
 
     The scaled A is split by ordered Schur forms and Sylvester equations [1]_; eigenvalues that only a transform beyond
     1e4 would tell apart share an upper quasi-triangular block. The columns of each block are orthonormal before each
-    block is scaled by a power of two that makes its inputs and outputs of like size. The first large entry of a row of
+    block is scaled until its largest column of B is as long as its largest row of C. The first large entry of a row of
     B is positive; of a pair, where its second entry is zero.
 
     Parameters
@@ -53,10 +53,11 @@ def modal_form(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> Coor
     for block in order:
         part = slice(start, start + block.size)
         turn = _turn(new_B[part], new_C[:, part], block)
-        into, out = float(np.max(np.abs(new_B[part]))), float(np.max(np.abs(new_C[:, part])))
-        shift = (int(np.frexp(into)[1]) - int(np.frexp(out)[1])) // 2 if into > 0 and out > 0 else 0
-        factor = turn * float(np.ldexp(1.0, shift))
-        inverse = turn.T * float(np.ldexp(1.0, -shift))
+        into = float(np.max(np.linalg.norm(new_B[part], axis=0)))
+        out = float(np.max(np.linalg.norm(new_C[:, part], axis=1)))
+        # lengths that no rotation inside the block changes, so that units of states leave nothing behind
+        size = float(np.sqrt(into) / np.sqrt(out)) if into > 0 and out > 0 else 1.0
+        factor, inverse = turn * size, turn.T / size
         right[:, part], left[part] = right[:, part] @ factor, inverse @ left[part]
         new_B[part], new_C[:, part] = inverse @ new_B[part], new_C[:, part] @ factor
         if block.size > 2 or (block.size == 2 and np.all(block.eigenvalues.imag == 0)):
@@ -76,6 +77,22 @@ def modal_form(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> Coor
         for entry in clusters[:3]
     )
     return units.restored(new_A, new_B, new_C, D, right, left, condition, {"blocks": listed}, cautions)
+
+
+def listed_blocks(A: Array, period: float | None) -> list[dict[str, Any]]:
+    """Return first state, size and mode of each block of a modal form that was made from partial fractions."""
+    n = A.shape[0]
+    listed: list[dict[str, Any]] = []
+    start = 0
+    while start < n:
+        end = start + 1
+        while end < n and (np.any(A[start:end, end:]) or np.any(A[end:, start:end])):
+            end += 1
+        pair = end - start > 1 and A[start + 1, start] != 0
+        value = complex(A[start, start], abs(A[start + 1, start]) if pair else 0.0)
+        listed.append({"first": start, "size": end - start, "modes": modes(np.array([value]), period)})
+        start = end
+    return listed
 
 
 def _rank(block: Block, sampled: bool) -> tuple[float, float, float]:

@@ -27,11 +27,21 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 from realize.forms.balanced import balanced_form, input_normal_form, output_normal_form
-from realize.forms.coordinates import Array, Coordinates, Setting
+from realize.forms.controllability import (
+    controllability_form,
+    controllable_companion_form,
+    multi_input_companion_form,
+    observability_form,
+    observable_companion_form,
+)
+from realize.forms.coordinates import Coordinates, Setting
 from realize.forms.hessenberg import controller_hessenberg_states, observer_hessenberg_states
+from realize.forms.jordan import jordan_form
 from realize.forms.linear_quadratic_balanced import linear_quadratic_balanced_form
+from realize.forms.modal_blocks import modal_form
 from realize.forms.scaled import scaled_states
 from realize.forms.schur import real_schur
 from realize.forms.staircase import kalman_states, observable_staircase, reachable_staircase
@@ -53,14 +63,21 @@ class Form:
         The form that is named where this one is refused.
     from_states_only : bool
         True where other kinds reach the form by a row of the conversion table.
+    exact : bool
+        True where the function takes exact matrices (nested lists of integer ratios, or rational ones) as well.
+    otherwise : bool
+        True where a state model that has no transform to the form (`NoTransform`) still gets it from its response, by
+        the rows of the conversion table.
     """
 
     name: str
-    apply: Callable[[Array, Array, Array, Array, Setting], Coordinates]
+    apply: Callable[[Any, Any, Any, Any, Setting], Coordinates]
     source: str
     says: str
     instead: str = "scaled"
     from_states_only: bool = False
+    exact: bool = False
+    otherwise: bool = False
 
     @property
     def page(self) -> str:
@@ -76,6 +93,9 @@ PAGES: dict[str, str] = {
     "observer-hessenberg": "hessenberg",
     "reachable-staircase": "staircase",
     "observable-staircase": "staircase",
+    "controllable-companion": "companion",
+    "observable-companion": "companion",
+    "observability": "controllability",
 }
 
 TABLE: dict[str, Form] = {
@@ -151,6 +171,74 @@ TABLE: dict[str, Form] = {
             "Jonckheere & Silverman 1983",
             "both Riccati solutions equal and diagonal; unstable models too",
             "schur",
+        ),
+        Form(
+            "modal",
+            modal_form,
+            "Bavely & Stewart 1979; from partial fractions Gilbert 1963",
+            "one block for each oscillation, clusters kept together",
+            "schur",
+            from_states_only=True,
+            otherwise=True,
+        ),
+        Form(
+            "jordan",
+            jordan_form,
+            "Gantmacher 1959, The Theory of Matrices",
+            "real Jordan form, multiplicities decided exactly",
+            "modal",
+            from_states_only=True,
+            exact=True,
+        ),
+        Form(
+            "controllable-companion",
+            controllable_companion_form,
+            "Kailath 1980, Linear Systems",
+            "coefficients as entries, each rounded once; one input",
+            "cascade",
+            from_states_only=True,
+            exact=True,
+            otherwise=True,
+        ),
+        Form(
+            "observable-companion",
+            observable_companion_form,
+            "Kailath 1980, Linear Systems",
+            "coefficients as entries, each rounded once; one output",
+            "cascade",
+            from_states_only=True,
+            exact=True,
+            otherwise=True,
+        ),
+        Form(
+            "multi-input-companion",
+            multi_input_companion_form,
+            "Luenberger 1967; Kailath 1980",
+            "a companion block for each input, sizes are the controllability indices",
+            "schur",
+            from_states_only=True,
+            exact=True,
+            otherwise=True,
+        ),
+        Form(
+            "controllability",
+            controllability_form,
+            "Kailath 1980, Linear Systems",
+            "basis B, A B, ...: Markov parameters in C; one input",
+            "cascade",
+            from_states_only=True,
+            exact=True,
+            otherwise=True,
+        ),
+        Form(
+            "observability",
+            observability_form,
+            "Kailath 1980, Linear Systems",
+            "basis dual to C, C A, ...: Markov parameters in B; one output",
+            "cascade",
+            from_states_only=True,
+            exact=True,
+            otherwise=True,
         ),
     )
 }

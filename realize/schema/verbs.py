@@ -25,6 +25,10 @@ FORMS = (
     "reachable-staircase",
     "observable-staircase",
     "kalman",
+    "jordan",
+    "multi-input-companion",
+    "controllability",
+    "observability",
 )
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "auto")

@@ -15,10 +15,13 @@ from realize.conversions import (
     choose_arithmetic,
     convert_model,
     coordinate_row,
+    follow,
     minimal_states,
     plan_route,
 )
 from realize.errors import Refused, UsageError
+from realize.forms.coordinates import NoTransform
+from realize.forms.modal_blocks import listed_blocks
 from realize.forms.registry import TABLE
 from realize.models import FrequencyResponse, Model, StateSpace
 from realize.models.checks import MAX_DIGITS
@@ -34,6 +37,8 @@ from realize.verification.views import whatever_it_costs
 WITH_DIGITS = ("transfer-function", "zero-pole-gain", "pole-residue", "sections")
 #: Damping ratio below which an oscillation counts as one of a flexible structure.
 FLEXIBLE = 0.1
+#: Modal coordinates of states that keep the response to this need no rival.
+MODAL_GOOD = 1e-10
 #: The default coordinates of several channels are changed for a cascade where a channel is off by more than this.
 GOOD = 1e-9
 
@@ -161,19 +166,16 @@ def convert(
     lifted = certify or arithmetic == "exact"
     with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:
         changed = None
-        if task.changes_coordinates:
-            route, changed = _change(task, limits)
-            result: Model = changed.model
-            shape = form or ""
-            claims = conversion_claims(source, result, shape in STRUCTURED, limits)
-            _refuse_ruin(task, claims, changed, limits)
-        elif form is None:
+        if form is None:
             route, result, claims, shape = _default(task, limits)
         else:
-            rows = plan_route(task)
-            route = [row.target for row in rows]
-            result, shape = convert_model(task, rows), _form_of(task, rows)
+            route, value, choice = _in_form(task, choice, limits)
+            changed = value if isinstance(value, Changed) else None
+            result = value.model if isinstance(value, Changed) else value
+            shape = form
             claims = conversion_claims(source, result, shape in STRUCTURED, limits)
+            if changed is not None and form not in STRUCTURED:
+                _refuse_ruin(task, claims, changed, limits)
         cautions = [*_cautions(source, result, to), *task.notes, *_costly(choice)]
         return finish(
             "convert",
@@ -227,15 +229,84 @@ def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[str], Mo
     return nodes, result, claims, shape
 
 
-def _change(task: Task, limits: dict[str, float] | None) -> tuple[list[str], Changed]:
-    """Return route and result of a change of coordinates, from the source or from its default realization."""
-    if isinstance(task.model, StateSpace):
+def _in_form(task: Task, choice: Choice, limits: dict[str, float] | None) -> tuple[list[str], Model | Changed, Choice]:
+    """Return route, result and arithmetic of a conversion to a form that was asked for."""
+    if not task.changes_coordinates:
         rows = plan_route(task)
-        return [row.target for row in rows], rows[-1].apply(task.model, task)
-    route, base, _, _ = _default(replace(task, form=None), limits)
-    # the function is the same from any realization that stands for the source
-    row = coordinate_row("state-space:minimal", task)
-    return [*route, row.target], row.apply(base, task)
+        return [row.target for row in rows], follow(task, rows), choice
+    if not isinstance(task.model, StateSpace):
+        route, base, _, _ = _default(replace(task, form=None), limits)
+        # the function is the same from any realization that stands for the source
+        row = coordinate_row("state-space:minimal", task)
+        return [*route, row.target], row.apply(base, task), choice
+    form = TABLE[task.form or ""]
+    rows = plan_route(task)
+    route = [row.target for row in rows]
+    try:
+        changed: Changed = rows[-1].apply(task.model, task)
+    except Refused as reason:
+        if not form.otherwise or not (isinstance(reason, NoTransform) or form.name == "modal"):
+            raise
+        return _from_response(task, str(reason))
+    if form.name == "modal":
+        return _modal(task, route, changed, choice, limits)
+    return route, changed, choice
+
+
+def _from_response(task: Task, reason: str) -> tuple[list[str], Changed, Choice]:
+    """Return a form of a state model that comes from its response alone, with the reason why."""
+    other = replace(task, without_transform=True)
+    rows = plan_route(other)
+    route = [row.target for row in rows]
+    value = follow(other, rows)
+    record: dict[str, Any] = {
+        "form": task.form,
+        "condition": None,
+        "against": "the response of the source, not its states",
+        "note": f"there is no transform: {reason}",
+    }
+    caution = f"The form stands for the response alone, without a transform from the states of the source: {reason}."
+    if isinstance(value, Changed):
+        kept = {key: entry for key, entry in value.record.items() if key not in record}
+        return (
+            route,
+            replace(value, record=record | kept, cautions=(*value.cautions, caution)),
+            choose_arithmetic(other),
+        )
+    assert isinstance(value, StateSpace)
+    if task.form == "modal":
+        record["blocks"] = listed_blocks(value.A, value.time.seconds if value.time.sampled else None)
+    return route, Changed(value, record, (caution,), float("inf")), choose_arithmetic(other)
+
+
+def _modal(
+    task: Task, route: list[str], changed: Changed, choice: Choice, limits: dict[str, float] | None
+) -> tuple[list[str], Changed, Choice]:
+    """Return block diagonal coordinates of the states, or the modal form of the partial fractions where that is better.
+
+    It is better where it splits what the states could only keep together, or where their peak error is above
+    1e-10 and that of the partial fractions smaller by a factor of four; and where it fails no claim more.
+    """
+    clusters = any("separation" in block for block in changed.record["blocks"])
+    claims = conversion_claims(task.model, changed.model, False, limits)
+    if not clusters and _peak(claims) <= MODAL_GOOD:
+        return route, changed, choice
+    reason = "partial fractions keep the response better than a transform of the states"
+    try:
+        second, other, arithmetic = _from_response(task, reason)
+    except Refused:
+        return route, changed, choice
+    rival = conversion_claims(task.model, other.model, False, limits)
+    good = _failures(rival) <= _failures(claims)
+    if good and (_peak(rival) < _peak(claims) / 4 or (clusters and _peak(rival) <= MODAL_GOOD)):
+        return second, other, arithmetic
+    return route, changed, choice
+
+
+def _peak(claims: list[Claim]) -> float:
+    """Return the peak error, infinite where there is none."""
+    claim = next((claim for claim in claims if claim.name == "peak-error"), None)
+    return np.inf if claim is None or claim.infinite or claim.value is None else claim.value
 
 
 def _refuse_ruin(task: Task, claims: list[Claim], changed: Changed, limits: dict[str, float] | None) -> None:
@@ -247,9 +318,11 @@ def _refuse_ruin(task: Task, claims: list[Claim], changed: Changed, limits: dict
     if claim is None or (not claim.infinite and (claim.value is None or claim.value <= limit)):
         return
     size = "infinite" if claim.infinite or claim.value is None else f"{claim.value:.1e}"
+    condition = ""
+    if np.isfinite(changed.condition):
+        condition = f", with a transform of condition number {changed.condition:.1e}"
     raise Refused(
-        f"{task.form} coordinates ruin this model: the peak error would be {size} (limit {limit:g}), "
-        f"with a transform of condition number {changed.condition:.1e}; "
+        f"{task.form} coordinates ruin this model: the peak error would be {size} (limit {limit:g}){condition}; "
         f"use --form {TABLE[task.form or ''].instead} instead, or --force to have it all the same"
     )
 
@@ -278,7 +351,8 @@ def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
 
 
 def _method(choice: Choice, changed: Changed | None, source: Model) -> str:
-    if changed is not None and choice.arithmetic == "exact" and not isinstance(source, StateSpace):
+    form = TABLE.get(changed.record["form"]) if changed is not None else None
+    if form is not None and choice.arithmetic == "exact" and not form.exact and not isinstance(source, StateSpace):
         return "exact rational arithmetic, then double arithmetic"
     return "exact rational arithmetic" if choice.arithmetic == "exact" else "double arithmetic"
 

@@ -164,6 +164,12 @@ DENSE = {
     "observable-staircase": {"overflowing gain", "near z = 1"},
     "kalman": {"wide", "overflowing gain", "near z = 1"},
 }
+#: Forms whose entries are exact, and the plants that they ruin all the same.
+RUINED = {
+    "multi-input-companion": {"near z = 1"},
+    "controllability": {"near z = 1", "wide"},
+    "observability": {"near z = 1", "wide"},
+}
 TARGETS = [(kind, None) for kind in UNIVERSAL_KINDS] + [("state-space", form) for form in FORMS]
 
 
@@ -180,9 +186,9 @@ def _allowed(name: str, to: str, form: str | None) -> bool:
     p, m = PLANTS[name].shape
     if to == "sections":
         return p * m == 1
-    if form == "controllable-companion":
+    if form in ("controllable-companion", "controllability"):
         return m == 1
-    return p == 1 if form == "observable-companion" else True
+    return p == 1 if form in ("observable-companion", "observability") else True
 
 
 CASES = [(name, to, form) for name in PLANTS for to, form in TARGETS]
@@ -199,7 +205,13 @@ def test_the_response_is_kept_and_the_claims_are_honest(name: str, to: str, form
         with pytest.raises(Refused, match=r"minimal|stable|ruin|Riccati"):
             convert(source, to, form=form)
         return
-    beyond = name == "overflowing gain" and (form or "").endswith("companion")
+    if name in RUINED.get(form or "", ()):
+        with pytest.raises(Refused, match=r"coordinates ruin this model.*--force"):
+            convert(source, to, form=form)
+        return
+    beyond = name == "overflowing gain" and (
+        (form or "").endswith("companion") or form in ("controllability", "observability")
+    )
     if beyond:
         with pytest.raises(Refused, match="range of doubles"):
             convert(source, to, form=form)
@@ -325,7 +337,7 @@ def test_states_leave_their_names_behind_and_the_receipt_says_so() -> None:
     )
     same = convert(source, "state-space")
     assert same.model.states == source.states and same.model.offset == source.offset
-    made = convert(source, "state-space", form="modal")
+    made = convert(source, "state-space", form="cascade")
     assert made.model.offset == Offset((1.0,), (2.0,))
     assert sum("left behind" in caution for caution in made.receipt.cautions) == 2
 

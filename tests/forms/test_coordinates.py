@@ -72,10 +72,14 @@ def test_transform_and_way_back_belong_together(form: str, name: str) -> None:
 @pytest.mark.parametrize("form", TABLE)
 def test_every_kind_has_every_form(form: str) -> None:
     """The response stays, whatever the kind of the source; a transform appears against states only."""
+    residues = np.array([[[1.0, 2.0]], [[3.0, -1.0]]])
+    if form in ("controllable-companion", "controllability"):
+        # these need one input
+        residues = residues.transpose(0, 2, 1)
     sources = [
         realize.TransferFunction(numerator=[1, 3], denominator=[1, 4, 8, 6]),
         ZeroPoleGain(zeros=[-3.0], poles=[-1.0, -2 + 1j, -2 - 1j], gain=2.0, time=realize.TimeBase()),
-        PoleResidue(poles=[-1.0, -2.0], residues=[[[1.0, 2.0]], [[3.0, -1.0]]]),
+        PoleResidue(poles=[-1.0, -2.0], residues=residues),
         Sections(sections=[[[0, 1, 3], [1, 0.5, 9]], [[0, 0, 1], [0, 1, 2]]]),
         PLANTS["one channel"],
     ]

@@ -9,7 +9,6 @@ import numpy as np
 from flint import fmpq, fmpq_mat, fmpq_poly, fmpz, fmpz_mat, nmod_mat
 from numpy.typing import NDArray
 
-from realize.kernels.exact.cost import affordable
 from realize.kernels.exact.numbers import fraction, nearest, prime
 
 Array = NDArray[np.float64]
@@ -72,6 +71,8 @@ def rational_states(A: Any, B: Any, C: Any, D: Any, E: Any = None) -> RationalSt
     ZeroDivisionError
         If E is singular.
     """
+    if isinstance(A, fmpq_mat):
+        return RationalStates(A, B, C, D)
     n, p, m = len(A), len(D), len(D[0])
     a, b = rational_matrix(A, n, n), rational_matrix(B, n, m)
     if E is not None and n:
@@ -96,18 +97,12 @@ def rounded_matrix(matrix: fmpq_mat) -> Array:
     values = np.array([nearest(x) for x in matrix.entries()], dtype=float).reshape(matrix.nrows(), matrix.ncols())
     small = np.abs(values) < _SMALLEST
     if not np.all(np.isfinite(values)):
-        raise BeyondRange("an entry beyond the largest double")
+        raise BeyondRange("an entry beyond the range of doubles (too large)")
     if small.any():
         for i, j in np.argwhere(small):
             if matrix[int(i), int(j)] != fmpq(*float(values[i, j]).as_integer_ratio()):
-                raise BeyondRange("an entry below the smallest double")
+                raise BeyondRange("an entry beyond the range of doubles (too small)")
     return values
-
-
-def bits_of(matrix: fmpq_mat) -> int:
-    """Return the length (bits) of the longest integer over the common denominator."""
-    above, below = matrix.numer_denom()
-    return max((int(x).bit_length() for x in above.entries()), default=0) + int(fmpz(below)).bit_length()
 
 
 def basis_operations(states: int, bits: int) -> float:
@@ -116,10 +111,9 @@ def basis_operations(states: int, bits: int) -> float:
     return 5e5 + 1e4 * states**2 + 700.0 * states**2 * length * (1 + states / 60)
 
 
-def affordable_basis(states: RationalStates, budget: float) -> bool:
-    """Say whether a change to a Krylov basis stays within a budget of predicted operations."""
-    n = states.A.nrows()
-    return affordable(basis_operations(n, max(bits_of(states.A), 1) if n else 1), budget)
+def jordan_operations(states: int, bits: int) -> float:
+    """Return predicted operations of the Jordan form; repeated factors with long entries take more."""
+    return 5e6 + 6e3 * states**3 * (1 + bits / 500) * (1 + states / 100)
 
 
 def solved(matrix: fmpq_mat, right: fmpq_mat) -> fmpq_mat:

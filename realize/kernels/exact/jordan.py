@@ -19,9 +19,9 @@ import numpy as np
 from flint import acb, acb_mat, arb, arb_mat, fmpq, fmpq_mat, fmpq_poly, fmpz_poly
 from numpy.typing import NDArray
 
-from realize.kernels.exact.bases import BeyondRange, RationalStates, beside, krylov, modular_matrix, rounded_matrix
+from realize.kernels.exact.bases import BeyondRange, RationalStates, beside, krylov, modular_matrix
 from realize.kernels.exact.isolation import integer_polynomial
-from realize.kernels.exact.numbers import near_ball, nearest_ball, precision, prime
+from realize.kernels.exact.numbers import near_ball, nearest_ball, precision, prime, scaled_ball
 from realize.kernels.exact.polynomials import monic, quotient, squarefree
 from realize.kernels.exact.roots import Root, roots
 from realize.kernels.exact.states import characteristic_polynomial
@@ -33,6 +33,10 @@ FIRST_BITS, LAST_BITS = 256, 1 << 16
 ZERO_BITS = 160
 #: Bits to which an entry is known when no double is nearest to its whole ball: then it is one of the two next to it.
 ENTRY_BITS = 90
+
+
+class Unsettled(ArithmeticError):
+    """The largest precision leaves a number of the transform undecided."""
 
 
 class Cyclic(NamedTuple):
@@ -213,7 +217,7 @@ def jordan_form(states: RationalStates) -> JordanForm:
     ------
     BeyondRange
         If a number lies beyond the range of doubles.
-    ArithmeticError
+    Unsettled
         If 65,536 bits do not settle a number.
     """
     n = states.A.nrows()
@@ -243,7 +247,7 @@ def jordan_form(states: RationalStates) -> JordanForm:
             B, C, T, S = found
             return JordanForm(blocks, real_jordan(blocks), B, C, T, S)
         bits *= 2
-    raise ArithmeticError(f"{LAST_BITS} bits do not settle the transform to the Jordan form")
+    raise Unsettled(f"{LAST_BITS} bits do not settle the transform to the Jordan form")
 
 
 def real_jordan(blocks: list[Block]) -> Array:
@@ -295,8 +299,8 @@ def _at_precision(
     doubles_T, doubles_S = _doubles(T, _sizes(T)), _doubles(S, _sizes(S))
     if doubles_T is None or doubles_S is None:
         return None
-    right = _doubles(S * B, _absolute_product(doubles_S, rounded_matrix(states.B)))
-    out = _doubles(C * T, _absolute_product(rounded_matrix(states.C), doubles_T))
+    right = _doubles(S * B, _absolute_product(_settled(doubles_S), B))
+    out = _doubles(C * T, _absolute_product(C, _settled(doubles_T)))
     if right is None or out is None:
         return None
     return right, out, doubles_T, doubles_S
@@ -323,28 +327,29 @@ def _factor_of(inputs: list[list[arb]], outputs: list[list[arb]], width: int) ->
     last, first = rows[-1], [outs[i][0] for i in range(p)]
 
     def size(values: list[acb]) -> list[float]:
-        return [near_ball(x.abs_lower()) if x.is_finite() else float("nan") for x in values]
+        return [_logarithm(x.abs_lower()) if x.is_finite() else float("nan") for x in values]
 
     all_in, all_out = size([x for row in rows for x in row]), size([x for row in outs for x in row])
-    if not np.all(np.isfinite(all_in + all_out)):
+    if np.any(np.isnan(all_in + all_out)):
         return None
-    lead = 0
-    from_input = max(size(last), default=0.0) > 0
+    none = float("-inf")
+    from_input = max(size(last), default=none) > none
     values = last if from_input else first
     sizes = size(values)
     phase = acb(1)
-    if max(sizes, default=0.0) > 0:
-        lead = next(k for k, x in enumerate(sizes) if x >= 0.999 * max(sizes))
+    if max(sizes, default=none) > none:
+        # within a thousandth of the largest one counts as largest
+        lead = next(k for k, x in enumerate(sizes) if x >= max(sizes) - 0.0015)
         unit = values[lead] / abs(values[lead])
         # z = T^-1 x: the rows of B are divided by the factor, the columns of C multiplied; -Im turns the sense there
         phase = unit if from_input else (1 / unit if width == 1 else unit)
-    into, out = max(all_in, default=0.0), max(all_out, default=0.0)
-    if into > 0 and out > 0:
-        exponent = (int(np.frexp(into)[1]) - int(np.frexp(out)[1])) // 2
-    elif into > 0:
-        exponent = int(np.frexp(into)[1])
+    into, out = max(all_in, default=none), max(all_out, default=none)
+    if into > none and out > none:
+        exponent = int(np.floor((into - out) / 2))
+    elif into > none:
+        exponent = int(np.floor(into))
     else:
-        exponent = -int(np.frexp(out)[1]) if out > 0 else 0
+        exponent = -int(np.floor(out)) if out > none else 0
     return phase * acb(arb(2) ** exponent)
 
 
@@ -363,11 +368,21 @@ def _largest(values: list[arb]) -> arb:
     return best
 
 
-def _absolute_product(left: Array, right: Array) -> Callable[[int, int], arb]:
+def _logarithm(value: arb) -> float:
+    """Return the binary logarithm of the midpoint, minus infinity for zero."""
+    mantissa, exponent = scaled_ball(value)
+    return float(np.log2(abs(mantissa))) + exponent if mantissa else float("-inf")
+
+
+def _absolute_product(left: arb_mat, right: arb_mat) -> Callable[[int, int], arb]:
     """Sizes of the sums behind the entries of a product; zero where every term is."""
-    with np.errstate(over="ignore", under="ignore"):
-        table = np.abs(left) @ np.abs(right)
-    return lambda i, j: arb(float(min(table[i, j], 1e300)))
+    parts = [arb_mat(m.nrows(), m.ncols(), [abs(x).mid() for x in m.entries()]) for m in (left, right)]
+    table = (parts[0] * parts[1]).tolist()
+    return lambda i, j: table[i][j].mid()
+
+
+def _settled(matrix: Array) -> arb_mat:
+    return arb_mat(matrix.shape[0], matrix.shape[1], [arb(x) for x in matrix.reshape(-1).tolist()])
 
 
 def _doubles(matrix: arb_mat, size: Callable[[int, int], Any]) -> Array | None:
