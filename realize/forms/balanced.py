@@ -27,7 +27,7 @@ def _factored(A: Array, B: Array, C: Array, setting: Setting, form: Kind) -> tup
             f"{form} coordinates need a stable model, and {error}: its Gramians do not exist; "
             "use --form linear-quadratic-balanced, which unstable models have too"
         ) from None
-    lost = int(np.sum(factors.values <= np.maximum(factors.errors, A.shape[0] * EPS * factors.values[0] * EPS)))
+    lost = int(np.sum(factors.values <= _scatter(T, Q.T @ units.B, units.C @ Q, factors.values, setting)))
     if lost:
         kept = A.shape[0] - lost
         raise Refused(
@@ -38,12 +38,35 @@ def _factored(A: Array, B: Array, C: Array, setting: Setting, form: Kind) -> tup
     return units, Q, factors
 
 
+def _scatter(T: Array, B: Array, C: Array, values: Array, setting: Setting) -> Array:
+    """Return how far each value moves when it is computed anew from the dual, whose rounding errors are others.
+
+    Three times the largest difference among neighbours, and 4 n eps of the value: a value that is no larger is noise.
+    The bound that comes with the values counts every change of A by rounding, and so condemns small values that the
+    structure of a plant (unlike units, separate channels) protects.
+    """
+    n = values.size
+    order = np.concatenate([np.arange(0, n, 2), np.arange(1, n, 2)])
+    turned, Q = scipy.linalg.schur(np.ascontiguousarray(T.T[np.ix_(order, order)]), output="real", check_finite=False)
+    try:
+        again = hankel_factors(turned, Q.T @ C.T[order], B.T[:, order] @ Q, sampled=setting.sampled).values
+    except NotStable:
+        # a pole so close to the axis that the second Schur form has it on the other side
+        return np.full(n, np.inf)
+    difference = np.abs(values - again)
+    near = np.max([np.roll(np.pad(difference, 2), k)[2:-2] for k in range(-2, 3)], axis=0)
+    return np.asarray(3 * near + 4 * n * EPS * values)
+
+
 def _said(units: Units, factors: HankelFactors) -> tuple[dict[str, Any], tuple[str, ...]]:
     """Return details and cautions: Hankel singular values in the model's own units, and which of them are equal."""
     exponent = 2 * units.gain - units.time
     with np.errstate(over="ignore", under="ignore"):
         values, errors = np.ldexp(factors.values, exponent), np.ldexp(factors.errors, exponent)
-    details = {"hankel_singular_values": values.tolist(), "hankel_errors": errors.tolist()}
+    details: dict[str, Any] = {
+        "hankel_singular_values": values.tolist(),
+        "hankel_errors": [error if np.isfinite(error) else None for error in errors.tolist()],
+    }
     groups = equal_groups(factors.values)
     counts = np.bincount(groups) if groups.size else np.zeros(0, dtype=int)
     if not np.any(counts > 1):
@@ -74,7 +97,8 @@ def balanced_form(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
     Returns
     -------
     Coordinates
-        `details` holds ``hankel_singular_values`` and ``hankel_errors`` (estimated), in the units of the response.
+        `details` holds ``hankel_singular_values`` and ``hankel_errors`` (estimated; None where unknown), in the units
+        of the response.
 
     Raises
     ------

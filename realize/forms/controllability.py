@@ -87,7 +87,7 @@ def _one(states: RationalStates, side: Side, form: str) -> None:
     count = states.B.ncols() if side == "input" else states.C.nrows()
     if count != 1:
         other = "multi-input-companion" if side == "input" else "observable-staircase"
-        raise Refused(f"the {form} form needs one {side} and there are {count}; use {other}")
+        raise Refused(f"the {form} form needs one {side} and there are {count}; use modal or {other}")
 
 
 def controllability_form(A: Any, B: Any, C: Any, D: Any, setting: Setting) -> Coordinates:

@@ -145,7 +145,7 @@ NOT_BALANCED = {
 DENSE = {
     "balanced": NOT_BALANCED,
     "input-normal": NOT_BALANCED,
-    "output-normal": NOT_BALANCED,
+    "output-normal": NOT_BALANCED - {"overflowing gain"},
     "linear-quadratic-balanced": {
         "zero",
         "huge gain",
