@@ -85,7 +85,8 @@ def _poles(draw: random.Random, family: str, count: int) -> list[tuple[Any, int]
         return [(fmpq_poly([k, 1]), 1) for k in draw.sample(range(1, 25), count)]
     if family == "six decades":
         steps = draw.sample(range(-30, 31), count)
-        return [(fmpq_poly([fmpq(round(10 ** (3 + step / 10)), 1000), 1]), 1) for step in steps]
+        # four digits keep neighbouring steps apart
+        return [(fmpq_poly([fmpq(round(10 ** (6 + step / 10)), 10**6), 1]), 1) for step in steps]
     if family == "repeated":
         return [(fmpq_poly([k, 1]), draw.choice([1, 1, 2, 3])) for k in draw.sample(range(1, 12), min(count, 5))]
     made = []
