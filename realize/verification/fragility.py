@@ -139,6 +139,8 @@ def _relative(model: Model, points: ComplexArray) -> Array:
 
 
 def _norm(values: Array) -> Array:
+    if values.shape[1:] == (1, 1):
+        return values[:, 0, 0]
     top = values.max(axis=(1, 2), keepdims=True)
     scale = np.where(top > 0, top, 1.0)
     return np.sqrt(np.sum((values / scale) ** 2, axis=(1, 2))) * scale[:, 0, 0]
@@ -150,7 +152,9 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
         return np.full(points.size, _U)
     if n > 200:
         points = points[:: max(1, points.size // 40)]
-    A, B, C, E = balanced_states(model.A, model.B, model.C, model.E)
+    A, B, C, E = model.A, model.B, model.C, model.E
+    if n > SMALL or E is not None or not _even(A):
+        A, B, C, E = balanced_states(A, B, C, E)
     if n <= SMALL:
         together = _together(A, B, C, model.D, E, points)
         if together is not None:
@@ -214,6 +218,12 @@ def _second_order(model: SecondOrder, points: ComplexArray) -> Array:
         size = np.linalg.norm(C @ right + direct)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result
+
+
+def _even(A: Array) -> bool:
+    """Return whether the entries of a small matrix are so near in size that elimination needs no balancing."""
+    sizes = [abs(entry) for row in A.tolist() for entry in row if entry]
+    return not sizes or max(sizes) < 2.0**20 * min(sizes)
 
 
 def _together(A: Array, B: Array, C: Array, D: Array, E: Array | None, points: ComplexArray) -> Array | None:
