@@ -101,7 +101,7 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
 
 def few_seeds(band: Band, *lists: Dynamics) -> Array:
     """Return a thinner grid than `seeds`, rising, with the ends of what is left out: for what a proof checks."""
-    count = max(int(FEW_PER_DECADE * math.log10(band.high / band.low)), 12) if band.low else 12
+    count = max(int(FEW_PER_DECADE * (math.log10(band.high) - math.log10(band.low))), 12) if band.low else 12
     ends = [band.low, band.high, *(end for pair in band.left_out for end in pair)]
     parts = [np.exp(np.linspace(math.log(band.low), math.log(band.high), count)), np.array(ends)]
     for roots in lists:

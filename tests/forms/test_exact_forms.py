@@ -286,3 +286,14 @@ def test_several_channels_become_minimal(form: str, sampled: bool) -> None:
 def test_companions_stay_structured_and_dense_forms_do_not() -> None:
     assert "controllable-companion" in STRUCTURED
     assert not {"jordan", "controllability", "balanced"} & set(STRUCTURED)
+
+
+@pytest.mark.parametrize("form", ["schur", "observability", "controllable-companion", "multi-input-companion"])
+def test_poles_six_hundred_decades_apart_are_an_answer_or_a_refusal(form: str) -> None:
+    plant = StateSpace(A=[[-1e300, 1.0], [0.0, -1e-300]], B=[[1.0], [1.0]], C=[[1.0, 1.0]])
+    try:
+        done = realize.convert(plant, "state-space", form=form)
+    except Refused as refusal:
+        assert "use --form" in str(refusal) or "scale" in str(refusal)
+    else:
+        assert all(np.all(np.isfinite(getattr(done.model, name))) for name in "ABCD")
