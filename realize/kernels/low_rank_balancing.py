@@ -9,7 +9,7 @@ import scipy.linalg.lapack
 from numpy.typing import NDArray
 
 from realize.kernels.alternating_directions import LowRankFactor, low_rank_factor
-from realize.kernels.balancing import EPS, HankelFactors, balanced_part
+from realize.kernels.balancing import EPS, HankelFactors, backward_error, balanced_part
 from realize.kernels.hessenberg import ShiftedHessenberg
 from realize.kernels.leading_part import trimmed
 from realize.kernels.lyapunov import SquareRoots, cayley_back
@@ -91,7 +91,7 @@ def low_rank_factors(A: Array, B: Array, C: Array, *, sampled: bool) -> HankelFa
     U, values, Zt = np.linalg.svd(R @ L, full_matrices=False)
     short = trimmed(U, values, Zt.T, product + left_out, n)
     factors = HankelFactors(roots, short.values, short.left, short.right, np.zeros(n), 0.0)
-    response = 4 * EPS * _sensitivity(factors, own, sampled)
+    response = _sensitivity(factors, own, sampled)
     errors = np.full(n, product + left_out + short.rest + response)
     return HankelFactors(roots, short.values, short.left, short.right, errors, response)
 
@@ -119,7 +119,7 @@ def _turned(reduced: Array, tau: Array, columns: Array, *, back: bool) -> Array:
 
 
 def _sensitivity(factors: HankelFactors, model: tuple[Array, Array, Array], sampled: bool) -> float:
-    """Return |A| times the largest |C (sI - A)^-1| |(sI - A)^-1 B|, through the balanced states that stand clear."""
+    """Return what the backward error does to the response, seen by the balanced states that stand clear."""
     values = factors.values
     clear = int(np.count_nonzero(values[: factors.left.shape[1]] > values[0] * 1e-12)) if values.size else 0
     if clear == 0:
@@ -140,4 +140,4 @@ def _sensitivity(factors: HankelFactors, model: tuple[Array, Array, Array], samp
         np.sqrt(np.maximum(np.einsum("kim,ij,kjm->k", x.conj(), one, x).real, 0.0))
         for x, one in ((state, gram[0]), (costate, gram[1]))
     ]
-    return float(np.linalg.norm(model[0])) * float(np.max(sizes[0] * sizes[1], initial=0.0))
+    return backward_error(model[0]) * float(np.max(sizes[0] * sizes[1], initial=0.0))

@@ -1,4 +1,4 @@
-"""Norms of state models: largest gain over all frequencies, H2 norm, steady-state gain.
+"""Norms of state models: largest gain over all frequencies, H2 norm.
 
 The largest gain is found from values of C (sI - A)^-1 B + D and confirmed by the eigenvalues of a Hamiltonian matrix;
 nothing here shares a computation with balancing.
@@ -401,9 +401,3 @@ def squared_norm(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> fl
 def _exponent(matrix: Array) -> int:
     largest = float(np.max(np.abs(matrix), initial=0.0))
     return int(np.frexp(largest)[1]) if largest > 0 else 0
-
-
-def steady_state_gain(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> Array:
-    """Return D - C A^-1 B (sampled: D + C (I - A)^-1 B); infinite throughout where A (I - A) is singular."""
-    point = np.array([1.0 + 0j if sampled else 0j])
-    return np.ascontiguousarray(state_response(A, B, C, D, None, point)[0].real)

@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from realize.errors import InputError
 from realize.kernels.response import state_evaluator
+from realize.kernels.schur_response import SchurResponse, suits
 from realize.models import checks
 from realize.models.base import ComplexArray, Model, Signal
 
@@ -86,8 +87,17 @@ class StateSpace(Model):
         return self.A.shape[0]
 
     def rational_part(self, points: ComplexArray) -> ComplexArray:
+        large = self.large_response()
+        if large is not None:
+            return large.values(points) + self.D
         evaluator = self.remembered("evaluator", lambda: state_evaluator(self.A, self.B, self.C, self.D, self.E))
         return evaluator(points)
+
+    def large_response(self) -> SchurResponse | None:
+        """Return the Schur form of a large dense model with its poles, made once; None for other models."""
+        return self.remembered(
+            "large response", lambda: SchurResponse(self.A, self.B, self.C) if suits(self.A, self.E) else None
+        )
 
 
 def is_identity(E: np.ndarray | None) -> bool:

@@ -8,6 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels import norms
+from realize.kernels.schur_response import thinned
 from realize.models import Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import Claim, judge
@@ -22,9 +23,12 @@ from realize.verification.search import Band, axis_intervals, largest, seeds
 from realize.verification.views import NO_DYNAMICS, Dynamics, view_of
 
 Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
 
 #: Relative tolerance of the peak search; the interval it leaves is part of the uncertainty.
 TOLERANCE = 1e-9
+#: Samples of a large model are no closer than this fraction of the distance to the nearest pole.
+APART = 0.2
 
 
 def difference_states(first: StateSpace, second: StateSpace) -> tuple[Array, Array, Array, Array]:
@@ -228,6 +232,9 @@ def _confirmed(pair: Pair, first: Model, second: Model, value: float, gain: floa
 def _in_doubles(pair: Pair, first: Model, second: Model, band: Band) -> tuple[float, float, float | None, float]:
     """Return value, frequency, bound (None where nothing is confirmed) and largest gain of the source."""
     w = seeds(band, pair.source.poles, pair.result.rough_poles)
+    if isinstance(first, StateSpace) and first.large_response() is not None:
+        direct = second.D - first.D if isinstance(second, StateSpace) else None
+        return _of_large(pair, band, w, direct)
     gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band, rounds=2)
     if both_states(first, second) and not band.left_out and band.zero:
         assert isinstance(first, StateSpace) and isinstance(second, StateSpace)
@@ -238,6 +245,22 @@ def _in_doubles(pair: Pair, first: Model, second: Model, band: Band) -> tuple[fl
             where = peak.frequency / period if period is not None else peak.frequency
             return peak.value, where, peak.upper + rounding if peak.basis == "bounded" else None, gain
     value, where = largest(lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band)
+    return value, where, None, gain
+
+
+def _of_large(pair: Pair, band: Band, w: Array, direct: Array | None) -> tuple[float, float, float | None, float]:
+    """The same for a large source: no Hamiltonian, and no two frequencies closer than the response can tell apart."""
+    poles: ComplexArray = np.concatenate([view.rough_poles.s for view in (pair.source, pair.result)])
+    w = thinned(w, np.asarray(1j * w, dtype=complex), poles, APART)
+    source = pair.source.response(w)
+    difference = norms.gains(pair.result.response(w) - source)
+    gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band, rounds=2, values=norms.gains(source))
+    value, where = largest(
+        lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band, rounds=6, values=difference
+    )
+    end = 0.0 if direct is None else float(norms.gains(direct[None].astype(complex))[0])
+    if pair.source.period is None and end > value:
+        value, where = end, np.inf
     return value, where, None, gain
 
 

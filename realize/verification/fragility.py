@@ -23,6 +23,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels.response import balanced_states, scaled_polynomial
+from realize.kernels.schur_response import SchurResponse
 from realize.models import (
     MatrixFraction,
     Model,
@@ -152,6 +153,9 @@ def _states(model: StateSpace, points: ComplexArray) -> Array:
         return np.full(points.size, _U)
     if n > 200:
         points = points[:: max(1, points.size // 40)]
+    large = model.large_response()
+    if large is not None:
+        return _large(large, model.D, points)
     A, B, C, E = model.A, model.B, model.C, model.E
     if n > SMALL or E is not None or not _even(A):
         A, B, C, E = balanced_states(A, B, C, E)
@@ -195,6 +199,18 @@ def _fraction(model: MatrixFraction, points: ComplexArray) -> Array:
         size = np.linalg.norm(value)
         result[k] = _U * np.linalg.norm(change) / size if size > 0 else np.nan
     return result
+
+
+def _large(large: SchurResponse, D: Array, points: ComplexArray) -> Array:
+    """Return the relative changes of a large model, all points in the same products."""
+    A, B, C = large.scaled
+    right, left = large.solutions(points)
+    (k, p, n), m = left.shape, right.shape[1]
+    row, column = np.abs(left), np.abs(right).transpose(0, 2, 1)
+    through = (row.reshape(k * p, n) @ np.abs(A)).reshape(k, p, n)
+    change = row @ np.abs(B) + through @ column + np.abs(C) @ column + np.abs(D)
+    size = np.linalg.norm((C @ right.transpose(0, 2, 1) + D).reshape(k, p * m), axis=1)
+    return np.where(size > 0, _U * np.linalg.norm(change.reshape(k, p * m), axis=1) / size, np.nan)
 
 
 def _second_order(model: SecondOrder, points: ComplexArray) -> Array:

@@ -372,6 +372,9 @@ def double_poles(model: Model) -> ComplexArray:
     if isinstance(model, StateSpace):
         from realize.kernels.response import balanced_states
 
+        large = model.large_response()
+        if large is not None:
+            return large.poles
         A, _, _, E = balanced_states(model.A, model.B, model.C, model.E)
         if E is None:
             return np.linalg.eigvals(A).astype(complex)

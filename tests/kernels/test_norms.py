@@ -10,7 +10,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from realize.kernels.lyapunov import NotStable
-from realize.kernels.norms import gains, peak_gain, refined_peak, squared_norm, steady_state_gain
+from realize.kernels.norms import gains, peak_gain, refined_peak, squared_norm
 from realize.kernels.response import state_response
 
 
@@ -97,15 +97,11 @@ def test_without_states(sampled, capfd):
     found = peak(*nothing, sampled)
     assert found.value == pytest.approx(5, rel=1e-15) and found.upper >= 5
     assert squared_norm(*nothing, sampled=sampled) == (pytest.approx(5) if sampled else math.inf)
-    assert np.array_equal(steady_state_gain(*nothing, sampled=sampled), [[3.0, 4.0]])
     assert "".join(capfd.readouterr()) == ""
 
 
 def test_pole_on_the_axis_is_infinite():
     assert peak([[0.0]], [[1.0]], [[1.0]], [[0.0]]).value == math.inf
-    assert np.isinf(
-        steady_state_gain(np.zeros((1, 1)), np.ones((1, 1)), np.ones((1, 1)), np.zeros((1, 1)), sampled=False)
-    )
 
 
 def test_many_states_are_measured():
