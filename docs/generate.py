@@ -44,6 +44,7 @@ WRITTEN = {
     "order": "``N``, ``A..B`` or ``auto``",
     "time": "seconds, or with a suffix: ``0.002``, ``2ms``, ``150us``",
     "columns": "names with commas between them",
+    "weights": "positive numbers with commas between them",
     "path": "name of a file",
     "limit": "``NAME=VALUE``, a claim and a number; may be given several times",
 }

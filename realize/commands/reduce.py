@@ -8,8 +8,17 @@ from realize.commands.common import Context, deliver, load, showing_proofs
 from realize.steps import reduce
 
 
-def execute(context: Context, model: str, **options: Any) -> int:
+def execute(context: Context, model: str, controller: str | None, plant: str | None, **options: Any) -> int:
     """Reduce a model file."""
+    others: dict[str, Any] = {
+        name: load(path) for name, path in (("controller", controller), ("plant", plant)) if path is not None
+    }
     with showing_proofs(options["certify"]):
-        conversion = reduce(load(model), limits=context.limits, second_opinion=context.second_opinion, **options)
-    return deliver(context, conversion)
+        conversion = reduce(
+            load(model), limits=context.limits, second_opinion=context.second_opinion, **others, **options
+        )
+    if context.json:
+        return deliver(context, conversion)
+    from realize.reports.reductions import reduction_table
+
+    return deliver(context, conversion, reduction_table(conversion.receipt.details))

@@ -117,6 +117,11 @@ def columns(text: str) -> list[str]:
     return names
 
 
+def weights(text: str) -> list[float]:
+    """Return a list of finite numbers greater than zero."""
+    return [positive(entry) for entry in text.split(",")]
+
+
 def limits(texts: tuple[str, ...]) -> dict[str, float]:
     """Return limits by claim name."""
     result: dict[str, float] = {}
@@ -140,5 +145,6 @@ PARSERS: dict[str, Callable[[Any], Any]] = {
     "order": order,
     "time": seconds,
     "columns": columns,
+    "weights": weights,
     "limit": limits,
 }

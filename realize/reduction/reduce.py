@@ -3,23 +3,22 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
+from dataclasses import replace
 
 import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.errors import Refused, UsageError
-from realize.kernels.norms import pole_frequencies
-from realize.reduction import choice
+from realize.reduction import choice, kept_states
+from realize.reduction.measure import Meter
+from realize.reduction.plan import Loop, Request
 from realize.reduction.prepare import Prepared, prepare
 from realize.reduction.registry import automatic, method_named
 from realize.reduction.result import Projected, Reduction
 
 Array = NDArray[np.float64]
-
-EPS = float(np.finfo(float).eps)
-#: The sensitivity of a result with more states than this is sampled at fewer frequencies.
-SAMPLED_FREQUENCIES = 60
 
 
 def reduce_states(
@@ -33,8 +32,13 @@ def reduce_states(
     absolute_error: float | None = None,
     relative_error: float | None = None,
     method: str = "auto",
+    measured: bool = False,
+    band: tuple[float, float] | None = None,
+    keep_steady_state: bool = False,
+    keep_states: Sequence[int] = (),
+    loop: Loop | None = None,
 ) -> Reduction:
-    """Reduce a state model to an order, or to the smallest order whose guaranteed error keeps a limit.
+    """Reduce a state model to an order, or to the smallest order whose error keeps a limit.
 
     The stable part is reduced; unstable poles and poles on the axis are kept as they are. Exactly one of `order`,
     `absolute_error`, `relative_error` is given.
@@ -52,6 +56,16 @@ def reduce_states(
         The same relative to the largest gain of the (stable part of the) model.
     method : str
         "auto" or a name from `realize.reduction.methods`.
+    measured : bool
+        Choose the order by the largest error found instead of the guaranteed bound.
+    band : (low, high), optional
+        The error counts at these frequencies only (rad/s, sampled rad per sample), and is measured there.
+    keep_steady_state : bool
+        The gain at zero frequency stays as it is: where the method does not see to it, through the feed-through.
+    keep_states : sequence of int
+        Indices of states that stay states of the result, the first ones.
+    loop : Loop, optional
+        The controller, or the plant, around the model.
 
     Returns
     -------
@@ -66,10 +80,17 @@ def reduce_states(
     """
     if sum(option is not None for option in (order, absolute_error, relative_error)) != 1:
         raise UsageError("give exactly one of: an order, an absolute error, a relative error")
+    for error in (absolute_error, relative_error):
+        if error is not None and not error >= 0:
+            raise UsageError(f"an error of {error}: it must not be negative")
+    request = Request(
+        order, absolute_error, relative_error, measured, band, keep_steady_state, tuple(keep_states), loop
+    )
+    name, reason = automatic(request) if method == "auto" else (method, "asked for")
+    chosen = method_named(name)
     # balancing needs no Schur form where there is a shorter way
-    triangular = method not in ("auto", "balanced-truncation")
+    triangular = name != "balanced-truncation" or bool(request.keep_states)
     prepared = prepare(A, B, C, D, sampled=sampled, triangular=triangular)
-    chosen_method = method_named(automatic(prepared) if method == "auto" else method)
     notes: list[str] = []
     if prepared.kept_order:
         on_axis = int(np.count_nonzero(prepared.split.marginal))
@@ -77,33 +98,29 @@ def reduce_states(
             f"kept as they are: {choice.states(prepared.kept_order - on_axis)} of unstable poles and "
             f"{choice.states(on_axis)} of poles on the boundary of stability"
         )
-    largest: float | None = None
-    limit: float | None = None
-    if order is not None:
-        count = choice.by_order(prepared, order, notes)
+    for state in request.keep_states:
+        if not 0 <= state < prepared.scaled.A.shape[0]:
+            raise UsageError(f"no state {state} to keep; there are {choice.states(prepared.scaled.A.shape[0])}, from 0")
+    if request.keep_states:
+        plan = kept_states.plan(prepared, request, name)
     else:
-        limit = absolute_error
-        if relative_error is not None:
-            peak = prepared.largest_gain()
-            largest = peak.value
-            limit = relative_error * largest
-            if prepared.kept_order:
-                notes.append("the relative error refers to the largest gain of the stable part")
-        assert limit is not None
-        count = choice.by_error(prepared, limit, notes)
-    part = chosen_method.project(prepared, count)
-    rounding = rounding_term(prepared, part, count)
-    if limit is not None:
+        plan = chosen.plan(prepared, request)
+    meter = Meter(prepared, band, whole_model=plan.whole_model)
+    steady = (keep_steady_state or chosen.keeps_steady_state) and (not plan.whole_model or not _integrates(prepared))
+    offer = choice.Offer(prepared, plan, meter, steady)
+    count, largest, limit = _chosen(offer, request, notes)
+    count = _without_objection(offer, count, notes)
+    part, change = offer.with_steady_state(plan.project(count))
+    rounding = plan.rounding(count, part)
+    if limit is not None and request.by_bound:
+        assert plan.tails is not None
         # rounding may use up what the tail leaves: a few more states make room, if anything can
         for _ in range(3):
-            if prepared.in_gain(float(prepared.tails[count])) + rounding <= limit or count >= prepared.available:
+            if prepared.in_gain(float(plan.tails[count]) + change) + rounding <= limit or count >= plan.available:
                 break
-            count += 1
-            while not prepared.cut_allowed(count):
-                count += 1
-            count = min(count, prepared.available)
-            part = chosen_method.project(prepared, count)
-            rounding = rounding_term(prepared, part, count)
+            count = plan.next_cut(count + 1)
+            part, change = offer.with_steady_state(plan.project(count))
+            rounding = plan.rounding(count, part)
         if not math.isfinite(rounding):
             raise Refused(
                 "a pole lies on the boundary of stability to the last rounding, yet was not told from a stable one: no "
@@ -113,57 +130,60 @@ def reduce_states(
             raise Refused(
                 f"an error of {limit:.3g} is below the rounding of this model, about {rounding:.3g}; ask for more"
             )
-    return _assembled(prepared, part, count, chosen_method.name, rounding, largest, notes)
+    tail = None if plan.tails is None else prepared.in_gain(float(plan.tails[count]) + change)
+    assemble = _assembled_whole if plan.whole_model else _assembled
+    found = assemble(prepared, part, count, chosen.name, rounding, largest, tail, notes)
+    return replace(
+        found,
+        candidates=choice.candidates(offer, count, looked=measured or band is not None),
+        algorithm=plan.algorithm(count),
+        reason=reason,
+    )
 
 
-def rounding_term(prepared: Prepared, part: Projected, count: int) -> float:
-    """Return what rounding may add to the theorem's bound (absolute, in the model's own unit).
+def _integrates(prepared: Prepared) -> bool:
+    """Say whether a pole is kept at zero frequency."""
+    return bool(np.any(prepared.split.kept_poles == (1.0 if prepared.sampled else 0.0)))
 
-    Twice the estimated errors of the values that were cut, and the first-order effect of errors in the entries of the
-    result, |dG| <= |C (sI - A)^-1| |dA| |(sI - A)^-1 B| + |C (sI - A)^-1| |dB| + |dC| |(sI - A)^-1 B|, largest over the
-    frequencies of the result's poles. The error of an entry is n^1/2 eps times the size of the products it is summed
-    from, which are graded by the Hankel singular values (the root is the usual statistical growth: Higham, Accuracy
-    and Stability of Numerical Algorithms, 2002, section 2.8), and the relative errors of the two values it belongs to.
-    Instead of the latter the backward error of the Schur form may count once, by what it does to the response: the
-    balanced model is exact for a model that near. The smaller of the two estimates stands.
-    """
-    factors = prepared.factors
-    n = factors.values.size
-    cut = 2 * float(factors.errors[count : prepared.available].sum()) if count < n else 0.0
-    if count == 0 or n == 0:
-        return prepared.in_gain(cut)
-    unit = EPS * math.sqrt(n)
-    root = np.sqrt(factors.values[:count])
-    uncertain = factors.errors[:count] / factors.values[:count] / 2
-    # sizes of the sums behind each entry, form by form as in `balanced_part`
-    left, right = np.abs(factors.left[:, :count]), np.abs(factors.right[:, :count])
-    roots = factors.roots
-    above = (left.T @ (np.abs(roots.M) @ left)) / root[:, None] * root
-    below = (right.T @ (np.abs(roots.N) @ right)) * root[:, None] / root
-    change_a = unit * (np.triu(above) + np.tril(below, -1))
-    sums_b = root * np.linalg.norm(right.T @ np.abs(roots.input), axis=1)
-    sums_c = root * np.linalg.norm(np.abs(roots.output) @ left, axis=0)
-    doubt_a = np.abs(part.A) * (uncertain[:, None] + uncertain)
-    doubt_b, doubt_c = uncertain * np.linalg.norm(part.B, axis=1), uncertain * np.linalg.norm(part.C, axis=0)
-    poles = np.linalg.eigvals(part.A).astype(complex)
-    frequencies = pole_frequencies(poles, sampled=prepared.sampled)
-    points = np.exp(1j * frequencies) if prepared.sampled else 1j * frequencies
-    distance = np.min(np.abs(points[:, None] - poles[None, :]), axis=1)
-    points = points[np.argsort(distance, kind="stable")[:SAMPLED_FREQUENCIES]]
-    triangle, basis = scipy.linalg.schur(part.A.astype(complex), output="complex")
-    into, out = basis.conj().T @ part.B, part.C @ basis
-    worst, doubt = 0.0, 0.0
-    for point in points:
-        pencil = point * np.eye(count) - triangle
-        if np.any(np.diagonal(pencil) == 0):
-            # a pole of the result is on the boundary of stability: what rounding can do there has no bound
-            return math.inf
-        state = basis @ scipy.linalg.solve_triangular(pencil, into, check_finite=False)
-        costate = scipy.linalg.solve_triangular(pencil, out.T, trans=1, check_finite=False).T @ basis.conj().T
-        x, y = np.linalg.norm(state, axis=1), np.linalg.norm(costate, axis=0)
-        worst = max(worst, float(y @ change_a @ x + unit * (y @ sums_b + sums_c @ x)))
-        doubt = max(doubt, float(y @ doubt_a @ x + y @ doubt_b + doubt_c @ x))
-    return prepared.in_gain(cut + worst + min(doubt, factors.response_error))
+
+def _without_objection(offer: choice.Offer, count: int, notes: list[str]) -> int:
+    """Return the first number of states from `count` on that the method does not object to."""
+    plan = offer.plan
+    if plan.objection is None:
+        return count
+    first, reason = count, ""
+    while True:
+        words = plan.objection(count, offer.with_steady_state(plan.project(count))[0])
+        if not words:
+            break
+        reason = reason or words
+        if count >= plan.available:
+            notes.append(f"{reason} at order {first + offer.kept_order}, and no larger order is free of that")
+            return first
+        count = plan.next_cut(count + 1)
+    if count != first:
+        notes.append(
+            f"{reason} at order {first + offer.kept_order}; the next order without that was taken, "
+            f"{count + offer.kept_order}"
+        )
+    return count
+
+
+def _chosen(offer: choice.Offer, request: Request, notes: list[str]) -> tuple[int, float | None, float | None]:
+    """Return the number of stable states, the largest gain where it was needed, and the limit of the error."""
+    prepared = offer.prepared
+    if request.order is not None:
+        return choice.by_order(offer, request.order, notes), None, None
+    largest, limit = None, request.absolute_error
+    if request.relative_error is not None:
+        largest = prepared.in_gain(offer.meter.largest()) if request.band else prepared.largest_gain().value
+        limit = request.relative_error * largest
+        if prepared.kept_order:
+            notes.append("the relative error refers to the largest gain of the stable part")
+    assert limit is not None
+    if request.by_bound:
+        return choice.by_bound(offer, limit, notes), largest, limit
+    return choice.by_measured(offer, limit, notes, banded=request.band is not None), largest, limit
 
 
 def _assembled(
@@ -173,6 +193,7 @@ def _assembled(
     method: str,
     rounding: float,
     largest: float | None,
+    tail: float | None,
     notes: list[str],
 ) -> Reduction:
     """Put the reduced stable part and the kept part together, in the model's own units."""
@@ -191,37 +212,82 @@ def _assembled(
         W = np.vstack([part.W.T @ split.left[:stable], split.left[stable:]])
         right = np.ldexp(V, (scaled.states + shift)[:, None])
         left = np.ldexp(W, -(scaled.states + shift)[None, :]).T
+    order = count + prepared.kept_order
+    matrices = A.reshape(order, order), B, C, D
+    return _reduction(prepared, matrices, (left, right), count, method, rounding, largest, tail, notes)
+
+
+def _assembled_whole(
+    prepared: Prepared,
+    part: Projected,
+    count: int,
+    method: str,
+    rounding: float,
+    largest: float | None,
+    tail: float | None,
+    notes: list[str],
+) -> Reduction:
+    """Put a reduced whole model back into its own units; kept states count in theirs."""
+    scaled = prepared.scaled
+    # rows of W with a single entry 1 are physical states
+    exponents = np.full(count, (scaled.output - scaled.input) // 2, dtype=np.int64)
+    for k, row in enumerate(part.W.T):
+        place = np.flatnonzero(row)
+        if place.size == 1 and row[place[0]] == 1.0:
+            exponents[k] = scaled.states[place[0]]
+    with np.errstate(over="ignore", under="ignore"):
+        A = np.ldexp(part.A, scaled.time + exponents[:, None] - exponents[None, :])
+        B = np.ldexp(part.B, scaled.input + exponents[:, None])
+        C = np.ldexp(part.C, scaled.output - exponents[None, :])
+        D = prepared.D + np.ldexp(part.D_change, scaled.gain)
+        left = np.ldexp(part.W, exponents[None, :] - scaled.states[:, None])
+        right = np.ldexp(part.V, scaled.states[:, None] - exponents[None, :])
+    stable = max(count - prepared.kept_order, 0)
+    return _reduction(prepared, (A, B, C, D), (left, right), stable, method, rounding, largest, tail, notes)
+
+
+def _reduction(
+    prepared: Prepared,
+    matrices: tuple[Array, Array, Array, Array],
+    projections: tuple[Array, Array],
+    stable: int,
+    method: str,
+    rounding: float,
+    largest: float | None,
+    tail: float | None,
+    notes: list[str],
+) -> Reduction:
+    """Return the record of a result with that many stable states."""
+    scaled, split = prepared.scaled, prepared.split
+    with np.errstate(over="ignore", under="ignore"):
         values = np.ldexp(prepared.factors.values, scaled.gain)
         errors = np.ldexp(prepared.factors.errors, scaled.gain)
-    A = A.reshape(count + prepared.kept_order, count + prepared.kept_order)
-    for matrix in (A, B, C, D, values):
+    for matrix in (*matrices, values):
         if not np.all(np.isfinite(matrix)):
             raise Refused("the result does not fit into doubles in these units; use units nearer to the model's size")
-    tail = prepared.in_gain(float(prepared.tails[count]))
-    if count < prepared.stable_order:
-        lower = max(0.0, float(values[count] - errors[count]))
-    else:
-        lower = 0.0
+    lower = max(0.0, float(values[stable] - errors[stable])) if stable < values.size else 0.0
+    A, B, C, D = matrices
     return Reduction(
         A=A,
         B=B,
         C=C,
         D=D,
         method=method,
-        order=count + prepared.kept_order,
+        order=A.shape[0],
         kept_order=prepared.kept_order,
         kept_poles=np.ldexp(split.kept_poles.real, scaled.time) + 1j * np.ldexp(split.kept_poles.imag, scaled.time),
         hankel_singular_values=values,
         hankel_errors=errors,
-        bound=tail + rounding,
+        bound=None if tail is None else tail + rounding,
         tail_bound=tail,
         rounding=rounding,
         lower_bound=lower,
         largest_gain=largest,
-        candidates=choice.candidates(prepared, count),
+        candidates=(),
         notes=tuple(notes),
-        left=left,
-        right=right,
+        left=projections[0],
+        right=projections[1],
         separation=split.separation,
         coupling=split.coupling,
+        marginal=int(np.count_nonzero(split.marginal)),
     )

@@ -6,8 +6,8 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 
 from realize.errors import UsageError
+from realize.reduction.plan import Plan, Request
 from realize.reduction.prepare import Prepared
-from realize.reduction.result import Projected
 
 
 @dataclass(frozen=True)
@@ -24,8 +24,8 @@ class Method:
     claim : str
         The formula of its bound on the largest gain of the difference; empty if it has none.
     keeps_steady_state : bool
-    project : callable
-        Prepared model and number of stable states to the reduced stable part.
+    plan : callable
+        Prepared model and request to the orders there are.
     """
 
     name: str
@@ -33,7 +33,7 @@ class Method:
     source: tuple[str, ...]
     claim: str
     keeps_steady_state: bool
-    project: Callable[[Prepared, int], Projected] = field(repr=False)
+    plan: Callable[[Prepared, Request], Plan] = field(repr=False)
 
 
 _METHODS: dict[str, Method] = {}
@@ -59,6 +59,20 @@ def method_named(name: str) -> Method:
     return _METHODS[name]
 
 
-def automatic(prepared: Prepared) -> str:
-    """Return the method that "auto" stands for: balanced truncation, for every dense model."""
-    return "balanced-truncation"
+def automatic(request: Request) -> tuple[str, str]:
+    """Return the method that "auto" stands for, and why, in words.
+
+    The rules look at what was asked only, the first that fits decides:
+
+    1. states to keep: singular perturbation, which sets the others to their steady state;
+    2. a steady state to keep: singular perturbation, whose bound is that of balanced truncation;
+    3. a loop around the model and no error that only a bound can promise: frequency-weighted;
+    4. everything else: balanced truncation.
+    """
+    if request.keep_states:
+        return "singular-perturbation", "states are kept, and the others are set to their steady state"
+    if request.keep_steady_state:
+        return "singular-perturbation", "the steady state is kept, under the bound of balanced truncation"
+    if request.loop is not None and not request.by_bound:
+        return "frequency-weighted", "a loop is given, and its frequencies are the ones that count"
+    return "balanced-truncation", "its error is guaranteed beforehand"

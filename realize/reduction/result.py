@@ -24,10 +24,14 @@ class Projected:
 
 @dataclass(frozen=True)
 class Candidate:
-    """One order that could be chosen, and the bound on the largest gain of the difference there (absolute)."""
+    """One order that could be chosen: bound on the largest gain of the difference, and the largest found (absolute).
+
+    None: the method has no bound; the error was not looked for, because the source is large.
+    """
 
     order: int
-    bound: float
+    bound: float | None
+    error: float | None = None
 
 
 @dataclass(frozen=True)
@@ -46,10 +50,11 @@ class Reduction:
     kept_poles : complex array
     hankel_singular_values, hankel_errors : arrays
         Of the stable part, decreasing, in the unit of the gain; estimated absolute error of each.
-    bound : float
-        The largest gain of the difference is at most this: the theorem's bound plus `rounding` (absolute).
-    tail_bound : float
-        The theorem's bound alone: 2 * sum of the distinct values that were cut.
+    bound : float or None
+        The largest gain of the difference is at most this: the theorem's bound plus `rounding` (absolute). None for a
+        method without one.
+    tail_bound : float or None
+        The theorem's bound alone, such as 2 * sum of the distinct values that were cut.
     rounding : float
         What rounding in the values cut and in the projected matrices may add.
     lower_bound : float
@@ -64,6 +69,12 @@ class Reduction:
         W (n, order) and V (n, order) with W'V = I: A = W'A_source V and so on (for methods that project).
     separation, coupling : float
         How well stable and kept parts could be told apart; see `realize.kernels.splitting.Split`.
+    marginal : int
+        How many of the kept poles lie on the boundary of stability.
+    algorithm : str
+        How it was computed, in words.
+    reason : str
+        Why this method.
     """
 
     A: Array
@@ -76,8 +87,8 @@ class Reduction:
     kept_poles: NDArray[np.complex128]
     hankel_singular_values: Array
     hankel_errors: Array
-    bound: float
-    tail_bound: float
+    bound: float | None
+    tail_bound: float | None
     rounding: float
     lower_bound: float
     largest_gain: float | None
@@ -87,3 +98,6 @@ class Reduction:
     right: Array
     separation: float
     coupling: float
+    marginal: int = 0
+    algorithm: str = ""
+    reason: str = ""

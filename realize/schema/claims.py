@@ -74,6 +74,17 @@ CLAIMS: dict[str, ClaimDefinition] = {
             "absolute",
             "the method's bound on the reduction error plus the rounding term; null for methods without one",
         ),
+        ClaimDefinition(
+            "band-error",
+            "absolute",
+            "largest singular value of the difference over the band that was asked for; relative to the source's "
+            "largest there beside it",
+        ),
+        ClaimDefinition(
+            "weighted-error",
+            "absolute",
+            "L-infinity norm of the difference with the stated input and output weights, or the weights of a loop",
+        ),
         ClaimDefinition("steady-state-error", "relative", "difference at zero frequency relative to the source there"),
         ClaimDefinition(
             "weighted-misfit", "1", "root mean square of misfit / standard deviation; 1 = as large as the noise"

@@ -31,7 +31,7 @@ FORMS = (
     "observability",
 )
 ORDERINGS = ("speed", "damping", "stability")
-REDUCTION_METHODS = ("balanced-truncation", "auto")
+REDUCTION_METHODS = ("balanced-truncation", "singular-perturbation", "modal", "frequency-weighted", "auto")
 FIT_METHODS = ("vector-fitting", "auto")
 SIDES = ("left", "right")
 ARITHMETICS = ("exact", "auto", "double")
@@ -43,7 +43,7 @@ class Option:
 
     ``takes`` is what the value is: ``flag``, ``choice``, ``text``, ``number``, ``integer``, ``error`` (0.01 or 1%),
     ``band`` (LOW,HIGH with unit suffixes), ``order`` (N, A..B or auto), ``time`` (seconds), ``columns`` (LIST),
-    ``path``, ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
+    ``weights`` (numbers above zero), ``path``, ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
     """
 
     name: str
@@ -149,8 +149,26 @@ VERBS: dict[str, Verb] = {
                 Option("order", "integer", "number of states of the result", metavar="N"),
                 Option("error", "error", "largest error, relative to the largest gain (0.01 or 1%)", metavar="X"),
                 Option("absolute-error", "number", "largest error, in the units of the response", metavar="X"),
-                CERTIFY,
+                Option("measured", "flag", "choose the order by the error found, not by the guaranteed bound"),
                 Option("method", "choice", "method", REDUCTION_METHODS, "auto"),
+                Option(
+                    "band",
+                    "band",
+                    "the error counts at these frequencies only, and is measured there (120Hz, 2.4kHz, plain: rad/s)",
+                    metavar="LOW,HIGH",
+                ),
+                Option("keep-steady-state", "flag", "the gain at zero frequency stays as it is"),
+                Option(
+                    "keep-states",
+                    "columns",
+                    "names or numbers (from 0) of states that stay states",
+                    metavar="LIST",
+                ),
+                Option("controller", "path", "controller around the plant, u = -K y", metavar="FILE"),
+                Option("plant", "path", "plant around the model, which is the controller K", metavar="FILE"),
+                Option("input-weight", "weights", "one factor for each input, or one for all", metavar="LIST"),
+                Option("output-weight", "weights", "one factor for each output, or one for all", metavar="LIST"),
+                CERTIFY,
             ),
         ),
         Verb(

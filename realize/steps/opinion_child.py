@@ -200,13 +200,15 @@ def minimal(request):
 
 
 def reduce(request):
-    """Return the response of slycot's balanced truncation (AB09AD) of the same order."""
+    """Return the response of slycot's balanced truncation (AB09AD) or singular perturbation (AB09BD), same order."""
     import numpy as np
 
     if request["kind"] != "state-space":
         raise Inapplicable("the independent routine takes state models only")
     A, B, C, D, E = arrays(request["fields"])
-    order = request["options"]["order"]
+    order, method = request["options"]["order"], request["options"]["method"]
+    if method not in ("balanced-truncation", "singular-perturbation"):
+        raise Inapplicable(f"no independent routine for {method}")
     if E is not None:
         raise Inapplicable("the independent routine has no descriptor models")
     n = A.shape[0]
@@ -220,6 +222,11 @@ def reduce(request):
         import slycot
     except ImportError:
         raise Inapplicable("slycot is not installed") from None
+    if method == "singular-perturbation":
+        # slycot's wrapper of AB09BD: order, A, B, C, D, Hankel singular values
+        made = slycot.ab09bd("D" if sampled else "C", "B", "N", n, B.shape[1], C.shape[0], A, B, C, D, nr=order)
+        nr, Ar, Br, Cr, Dr = made[:5]
+        return "slycot AB09BD", states(Ar[:nr, :nr], Br[:nr], Cr[:, :nr], Dr, None, points(request))
     made = slycot.ab09ad("D" if sampled else "C", "B", "N", n, B.shape[1], C.shape[0], A, B, C, nr=order)
     nr, Ar, Br, Cr = made[:4]
     return "slycot AB09AD", states(Ar[:nr, :nr], Br[:nr], Cr[:, :nr], D, None, points(request))

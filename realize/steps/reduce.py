@@ -2,61 +2,29 @@
 
 from __future__ import annotations
 
+import math
 import time
+from collections.abc import Sequence
+from typing import TYPE_CHECKING, Any
 
-import numpy as np
+import msgspec
 
-from realize.conversions import Task, convert_model, plan_route
 from realize.errors import Refused, UsageError
-from realize.models import FrequencyResponse, Model, StateSpace
-from realize.models.state_space import is_identity
-from realize.schema import REDUCTION_METHODS
+from realize.models import Model, Signal, StateSpace
+from realize.schema import REDUCTION_METHODS, Claim
 from realize.steps.conversion import Conversion, model_of
+from realize.steps.ordinary import states_of
 from realize.steps.receipts import finish, refusing_singular
+from realize.steps.reduction_loop import Around, Weights, around, loop_cautions, loop_details, weights_of
 from realize.steps.second_opinion import asking
-from realize.verification.reduction import reduction_claims
+from realize.verification.difference import linf_error
+from realize.verification.licence import Licence, gap_of_reduction, licence, widened
+from realize.verification.reduction import band_claim, reduction_claims
 from realize.verification.stability import order_claim, stability_claim
 from realize.verification.views import whatever_it_costs
 
-#: An E with a larger condition number is not divided out.
-HARMLESS_E = 1e8
-
-
-def states_of(model: Model) -> tuple[StateSpace, list[str]]:
-    """Return a model as ordinary state space (without E), and the route in words.
-
-    Raises
-    ------
-    Refused
-        If E is singular or nearly so, or the plant is improper.
-    """
-    if isinstance(model, FrequencyResponse):
-        raise Refused("a frequency response is data; fit a model first")
-    route: list[str] = []
-    if not isinstance(model, StateSpace):
-        task = Task(model, "state-space")
-        rows = plan_route(task)
-        made = convert_model(task, rows)
-        assert isinstance(made, StateSpace)
-        model, route = made, [row.target for row in rows]
-    if is_identity(model.E):
-        return (model if model.E is None else model.with_(E=None)), route
-    scale = np.abs(model.E).max(axis=1)
-    if np.any(scale == 0):
-        raise Refused(
-            "E is singular: the model is improper or has algebraic states, which reduction does not split off"
-        )
-    power = np.ldexp(1.0, -np.frexp(scale)[1])[:, None]
-    condition = float(np.linalg.cond(power * model.E))
-    if not condition < HARMLESS_E:
-        raise Refused(
-            f"E has condition number {condition:.1e}: dividing it out would spoil the model, and the parts "
-            "belonging to poles near infinity are not split off"
-        )
-    solved = np.linalg.solve(power * model.E, power * np.hstack([model.A, model.B]))
-    n = model.A.shape[0]
-    plain = model.with_(A=solved[:, :n], B=solved[:, n:], E=None, decimals={})
-    return plain, [*route, f"E divided out (condition number {condition:.1e})"]
+if TYPE_CHECKING:
+    from realize.reduction import Reduction
 
 
 @refusing_singular()
@@ -66,7 +34,15 @@ def reduce(
     order: int | None = None,
     error: float | None = None,
     absolute_error: float | None = None,
+    measured: bool = False,
     method: str = "auto",
+    band: tuple[float, float] | None = None,
+    keep_steady_state: bool = False,
+    keep_states: Sequence[int | str] | None = None,
+    controller: Model | Conversion | None = None,
+    plant: Model | Conversion | None = None,
+    input_weight: Sequence[float] | None = None,
+    output_weight: Sequence[float] | None = None,
     certify: bool = False,
     limits: dict[str, float] | None = None,
     second_opinion: bool | None = False,
@@ -84,8 +60,23 @@ def reduce(
     error, absolute_error : float, optional
         Largest L-infinity norm of the difference, relative to the largest gain or in the units of the response; the
         smallest order whose bound keeps it is taken.
+    measured : bool
+        Take the smallest order whose error, as it is found, keeps the limit.
     method : str
-        "balanced-truncation" or "auto".
+        A name from `realize.reduction.methods`, or "auto".
+    band : (low, high), optional
+        rad/s: the error counts there only, and is measured.
+    keep_steady_state : bool
+        The gain at zero frequency stays as it is.
+    keep_states : sequence of names or indices, optional
+        States that stay states of the result, the first ones.
+    controller : Model or Conversion, optional
+        Controller of the plant, u = -K y: the loop is looked at with the full plant and with the reduced one.
+    plant : Model or Conversion, optional
+        The model is a controller, and this is its plant.
+    input_weight, output_weight : sequence of float, optional
+        One factor for each input and output (or one for all): diag(output_weight) P diag(input_weight) is reduced, and
+        errors, nu-gap and margins are those of the weighted plant.
     certify : bool
         Prove the claims whatever it costs.
     limits : dict, optional
@@ -95,7 +86,8 @@ def reduce(
     Returns
     -------
     Conversion
-        A state-space model; ``receipt.details`` holds the Hankel singular values and the candidate orders.
+        A state-space model; ``receipt.details`` holds the Hankel singular values, the candidate orders, the loops and
+        the licence.
 
     Raises
     ------
@@ -107,28 +99,54 @@ def reduce(
         raise UsageError(f"no method {method!r}; there are: {', '.join(REDUCTION_METHODS)}")
     if sum(value is not None for value in (order, error, absolute_error)) != 1:
         raise UsageError("give exactly one of --order, --error and --absolute-error")
+    loop = around(source, controller, plant)
+    weights = weights_of(source, input_weight, output_weight)
     plain, route = states_of(source)
-
-    from realize.reduction import reduce_states
-
-    found = reduce_states(
-        plain.A,
-        plain.B,
-        plain.C,
-        plain.D,
-        sampled=source.time.sampled,
-        order=order,
-        absolute_error=absolute_error,
-        relative_error=error,
-        method=method,
-    )
-    result = StateSpace(A=found.A, B=found.B, C=found.C, D=found.D, **source.common())
-    with whatever_it_costs(certify), asking("reduce", plain, {"order": found.order}, second_opinion) as opinion:
-        limit = absolute_error
-        if error is not None and found.largest_gain is not None:
-            limit = error * found.largest_gain
-        claims = reduction_claims(source, plain, result, bound=found.bound, limit=limit, limits=limits or {})
+    keep = kept_indices(source, plain, keep_states)
+    asked = {
+        "measured": measured,
+        "band": _in_samples(band, plain),
+        "keep_steady_state": keep_steady_state,
+        "keep_states": keep,
+        "loop": _loop_of(loop, weights, method),
+    }
+    weighted = weights.applied(plain)
+    found = _reduced(weighted, method, asked, order=order, absolute_error=absolute_error, relative_error=error)
+    limit = absolute_error
+    if error is not None and found.largest_gain is not None:
+        limit = error * found.largest_gain
+    for _ in range(3):
+        # a look at more frequencies may find more than the search for the order did
+        if not measured or limit is None or band is not None or keep:
+            break
+        small = _model(found, weighted, plain, keep)
+        if reduction_claims(weighted, weighted, small, bound=None, limit=limit, limits={})[0].holds is not False:
+            break
+        larger = _reduced(weighted, method, asked, order=found.order + 1)
+        if larger.order <= found.order:
+            break
+        found = _passed_over(larger, found)
+    small = _model(found, weighted, plain, keep)
+    result = _unweighted(small, weights, source)
+    # the independent routines know nothing of weights, kept states and steady states put into D
+    ordinary = not (weights.given or keep or (keep_steady_state and found.method != "singular-perturbation"))
+    opinion_method = found.method if ordinary else f"{found.method} with options"
+    with (
+        whatever_it_costs(certify),
+        asking("reduce", plain, {"order": found.order, "method": opinion_method}, second_opinion) as opinion,
+    ):
+        claims = _claims(source, plain, weighted, small, result, found, weights, limit, measured, band, limits or {})
         claims += [order_claim(result, (limits or {}).get("order")), stability_claim(result)]
+        gap, permit = _consequences(source, plain, weighted, small, found, weights, claims)
+        claims.append(gap)
+        details = _details(found, weights, band, plain)
+        details["licence"] = {"given": permit.given, "margin": permit.margin, "sentence": permit.sentence}
+        cautions = list(found.notes)
+        if loop is not None and loop.dead_time:
+            cautions.append("The loop was not looked at: a loop with dead time is not rational.")
+        elif loop is not None:
+            details["closed_loop"] = loop_details(loop, plain, result, weights)
+            cautions += loop_cautions(details["closed_loop"], permit.margin)
         return finish(
             "reduce",
             found.method,
@@ -137,13 +155,197 @@ def reduce(
             result,
             claims,
             started=started,
-            cautions=list(found.notes),
+            cautions=cautions,
             opinion=opinion,
             limits=limits,
-            details={
-                "hankel_singular_values": [float(value) for value in found.hankel_singular_values[:200]],
-                "candidates": [{"order": c.order, "bound": float(c.bound)} for c in found.candidates],
-                "kept_order": found.kept_order,
-                "lower_bound": float(found.lower_bound),
-            },
+            details=details,
         )
+
+
+def kept_indices(source: Model, plain: StateSpace, keep: Sequence[int | str] | None) -> tuple[int, ...]:
+    """Return the indices of states named by number or by name.
+
+    Raises
+    ------
+    UsageError
+        If there is no such state, or it is named twice.
+    """
+    if not keep:
+        return ()
+    if not isinstance(source, StateSpace) or plain.order != source.order:
+        raise UsageError(
+            f"--keep-states: a {source.kind} has no states of its own here; convert it to state-space without E first"
+        )
+    names = [signal.name for signal in source.states]
+    found = []
+    for entry in keep:
+        text = str(entry).strip()
+        if text in names and text:
+            if names.count(text) > 1:
+                raise UsageError(f"--keep-states: the name {text!r} stands for several states; use numbers")
+            found.append(names.index(text))
+        elif text.isascii() and text.isdigit() and int(text) < source.order:
+            found.append(int(text))
+        else:
+            known = ", ".join(name for name in names if name) or "none has a name"
+            raise UsageError(
+                f"--keep-states: no state {text!r}; there are {source.order}, numbered from 0 (names: {known})"
+            )
+    if len(set(found)) != len(found):
+        raise UsageError("--keep-states: a state is listed twice")
+    return tuple(found)
+
+
+def _in_samples(band: tuple[float, float] | None, plain: StateSpace) -> tuple[float, float] | None:
+    if band is None:
+        return None
+    low, high = band
+    if not 0 <= low < high or not math.isfinite(high):
+        raise UsageError(f"a band from {low} to {high}: the lower frequency must be below the higher one")
+    if not plain.time.sampled:
+        return low, high
+    period = plain.time.seconds
+    if low * period >= math.pi:
+        raise UsageError(f"the band lies above half the sampling rate, {math.pi / period:.6g} rad/s")
+    return low * period, min(high * period, math.pi)
+
+
+def _loop_of(loop: Around | None, weights: Weights, method: str) -> Any:
+    from realize.reduction import Loop
+
+    if loop is None:
+        return None
+    if loop.dead_time:
+        if method == "frequency-weighted":
+            raise Refused("a loop with dead time gives no weights: it is not rational; use another method")
+        return None
+    other = weights.on_controller(loop.model)
+    return Loop(other.A, other.B, other.C, other.D, controller=loop.controller)
+
+
+def _reduced(weighted: StateSpace, method: str, asked: dict[str, Any], **choice: Any) -> Reduction:
+    from realize.reduction import reduce_states
+
+    return reduce_states(
+        weighted.A, weighted.B, weighted.C, weighted.D, sampled=weighted.time.sampled, method=method, **choice, **asked
+    )
+
+
+def _passed_over(larger: Reduction, asked: Reduction) -> Reduction:
+    """Return the larger result with what was known of the request."""
+    from dataclasses import replace
+
+    note = f"order {asked.order} was passed over: a closer look found a larger error there"
+    return replace(
+        larger, largest_gain=asked.largest_gain, reason=asked.reason, notes=(*asked.notes, note), method=asked.method
+    )
+
+
+def _model(found: Reduction, weighted: StateSpace, plain: StateSpace, keep: tuple[int, ...]) -> StateSpace:
+    """Return the reduced weighted model."""
+    names: tuple[Signal, ...] = ()
+    if keep and plain.states:
+        others = tuple(Signal(f"rest {k + 1}") for k in range(found.order - len(keep)))
+        names = tuple(plain.states[k] for k in keep) + others
+    common = weighted.common() | {"receipts": ()}
+    return StateSpace(A=found.A, B=found.B, C=found.C, D=found.D, states=names, **common)
+
+
+def _unweighted(small: StateSpace, weights: Weights, source: Model) -> StateSpace:
+    if not weights.given:
+        return small.with_(receipts=source.receipts)
+    inverse = Weights(1 / weights.inputs, 1 / weights.outputs, True, True)
+    return inverse.applied(small).with_(receipts=source.receipts)
+
+
+def _claims(
+    source: Model,
+    plain: StateSpace,
+    weighted: StateSpace,
+    small: StateSpace,
+    result: StateSpace,
+    found: Reduction,
+    weights: Weights,
+    limit: float | None,
+    measured: bool,
+    band: tuple[float, float] | None,
+    limits: dict[str, float],
+) -> list[Claim]:
+    """Return the claims on errors: in the source's units, and weighted or over the band where that was asked."""
+    everywhere = None if band is not None else limit
+    bound_limit = None if measured else everywhere
+    own = None if weights.given else everywhere
+    bound = None if found.bound is None else found.bound / weights.least
+    claims = reduction_claims(
+        source, plain, result, bound=bound, limit=own, limits=limits, bound_limit=None if weights.given else bound_limit
+    )
+    if weights.given:
+        inner = reduction_claims(
+            weighted, weighted, small, bound=found.bound, limit=everywhere, limits={}, bound_limit=bound_limit
+        )[0]
+        inner = msgspec.structs.replace(inner, name="weighted-error", note="with the stated weights")
+        claims.append(widened(inner, _lost(source, plain, weights)))
+    if band is not None:
+        high = min(band[1], math.pi / plain.time.seconds) if plain.time.sampled else band[1]
+        claims.append(band_claim(weighted, small, (band[0], high), limits.get("band-error", limit)))
+    return claims
+
+
+def _consequences(
+    source: Model,
+    plain: StateSpace,
+    weighted: StateSpace,
+    small: StateSpace,
+    found: Reduction,
+    weights: Weights,
+    claims: list[Claim],
+) -> tuple[Claim, Licence]:
+    """Return the nu-gap and the licence."""
+    by_name = {claim.name: claim for claim in claims}
+    error = by_name["weighted-error" if weights.given else "reduction-error"]
+    bound = None
+    if found.bound is not None and not weights.given:
+        bound = by_name["reduction-bound"].value if by_name["reduction-bound"].basis == "bounded" else None
+    full = weighted if weights.given else source
+    gap = gap_of_reduction(full, small, error, bound, found.kept_order, found.marginal)
+    if weights.given:
+        gap = widened(gap, _lost(source, plain, weights))
+    return gap, licence(gap, weighted=weights.stated, dead_time=plain.dead_time is not None)
+
+
+def _lost(source: Model, plain: StateSpace, weights: Weights) -> float | None:
+    """Return what the conversion to states cost, weighted; None where that is measured only."""
+    if plain is source:
+        return 0.0
+    lost = linf_error(source, plain)
+    if lost.value is None or lost.uncertainty is None:
+        return None
+    return (lost.value + lost.uncertainty) * float(weights.inputs.max() * weights.outputs.max())
+
+
+def _details(found: Reduction, weights: Weights, band: tuple[float, float] | None, plain: StateSpace) -> dict[str, Any]:
+    details: dict[str, Any] = {
+        "hankel_singular_values": [float(value) for value in found.hankel_singular_values[:200]],
+        "candidates": [
+            {
+                "order": c.order,
+                "bound": c.bound,
+                "error": c.error,
+                "nu_gap_bound": None if c.bound is None or not math.isfinite(c.bound) else min(1.0, c.bound),
+                "kept": c.order == found.order,
+            }
+            for c in found.candidates
+        ],
+        "kept_order": found.kept_order,
+        "lower_bound": float(found.lower_bound),
+        "algorithm": found.algorithm,
+        "reason": found.reason,
+    }
+    if found.kept_order:
+        separation = found.separation if math.isfinite(found.separation) else None
+        details["split"] = {"separation": separation, "coupling": float(found.coupling)}
+    if weights.given:
+        details["weights"] = {"inputs": weights.inputs.tolist(), "outputs": weights.outputs.tolist()}
+    if band is not None:
+        details["band"] = list(band)
+    return details

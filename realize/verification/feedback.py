@@ -68,7 +68,7 @@ def gap_distance(first: Any, second: Any) -> Claim:
 
 def gap_claim(first: Model, second: Model) -> Claim:
     """Return the nu-gap of two models of one shape and time base; not available where dead times stand in the way."""
-    if not _same_outer_delays(first, second):
+    if not same_outer_delays(first, second):
         return judge("nu-gap", None, note="not available: dead times differ, or differ between channels")
     one, two = view_of(first), view_of(second)
     if one is two:
@@ -79,7 +79,7 @@ def gap_claim(first: Model, second: Model) -> Claim:
     return _gap_in_doubles(one, two)
 
 
-def _same_outer_delays(first: Model, second: Model) -> bool:
+def same_outer_delays(first: Model, second: Model) -> bool:
     """True where both have the same dead times, and they are those of inputs and outputs alone (or of one channel)."""
     if first.dead_time is None and second.dead_time is None:
         return True

@@ -59,6 +59,12 @@ def fragility(model: Model, frequency: Array) -> float | None:
     return float(value.max()) if value.size else None
 
 
+def fragility_at(model: Model, frequency: Array) -> Array:
+    """Return the relative first-order response change at each frequency (rad/s); not a number at a pole on the axis."""
+    with np.errstate(all="ignore"):
+        return _relative(model, model.time.points(frequency))
+
+
 #: Coefficients and powers of frequency within these exponents of two need no scaling.
 _PLAIN = 400
 

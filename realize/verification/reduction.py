@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+from numpy.typing import NDArray
 
 from realize.kernels.norms import gains
 from realize.models import Model, StateSpace
@@ -12,10 +13,12 @@ from realize.schema import Claim, judge
 from realize.schema.records import Basis
 from realize.verification.bands import whole_band
 from realize.verification.difference import linf_error
-from realize.verification.fragility import fragility
+from realize.verification.fragility import fragility_at
 from realize.verification.proof import square_root
-from realize.verification.search import Band, seeds
+from realize.verification.search import Band, largest, seeds
 from realize.verification.views import view_of
+
+Array = NDArray[np.float64]
 
 
 def reduction_claims(
@@ -26,6 +29,7 @@ def reduction_claims(
     bound: float | None,
     limit: float | None,
     limits: dict[str, float],
+    bound_limit: float | None = None,
 ) -> list[Claim]:
     """Return reduction error, bound and steady-state error, all against the source as it was given.
 
@@ -39,6 +43,8 @@ def reduction_claims(
         The method's bound on the difference of plain and result; None for methods without one.
     limit : float or None
         What was asked of the error (absolute).
+    bound_limit : float or None
+        What was asked of the bound.
     limits : dict
         Limits by claim name; they come before `limit`.
     """
@@ -86,7 +92,7 @@ def reduction_claims(
         bound,
         unit="absolute",
         basis=basis,
-        limit=limits.get("reduction-bound", limit),
+        limit=limits.get("reduction-bound", None if bound is None else bound_limit),
         uncertainty=0.0 if basis == "bounded" else None,
         relative=relative,
         note="; ".join(notes),
@@ -94,18 +100,40 @@ def reduction_claims(
     return [error, claim, _steady_state(source, result, limits.get("steady-state-error"))]
 
 
+def band_claim(source: Model, result: Model, band: tuple[float, float], limit: float | None) -> Claim:
+    """Return the largest gain of the difference found over a band (rad/s), relative to the source's largest there."""
+    one, two = view_of(source), view_of(result)
+    left_out = whole_band(one).left_out
+    inside = Band(max(band[0], 1e-300), band[1], band[0] == 0, left_out)
+    w = np.unique(np.concatenate([seeds(inside, one.poles, two.rough_poles), inside.keep(np.array(inside.edges))]))
+
+    def difference(x: Array) -> Array:
+        return gains(two.response(x) - one.response(x))
+
+    value, where = largest(difference, w, inside, rounds=5)
+    gain, _ = largest(lambda x: gains(one.response(x)), w, inside, rounds=5)
+    return judge(
+        "band-error",
+        value,
+        unit="absolute",
+        limit=limit,
+        where={"frequency": where},
+        relative=value / gain if 0 < gain < math.inf else None,
+        note=f"from {band[0]:.6g} to {band[1]:.6g} rad/s, the largest value found",
+    )
+
+
 def _rounding(result: StateSpace) -> float:
-    """Return the fragility of the result times its largest gain: what one rounding of its numbers can do."""
+    """Return the largest product of the result's fragility and gain: what one rounding of its numbers can do."""
     view = view_of(result)
     band = whole_band(view, margin=1.0)
     w = seeds(Band(band.low, band.high, False, band.left_out), view.poles)
     if w.size > 60:
         w = w[np.unique(np.linspace(0, w.size - 1, 60).astype(int))]
-    value = fragility(result, w)
     with np.errstate(all="ignore"):
-        gain = gains(result.rational_part(result.time.points(w)))
-    gain = gain[np.isfinite(gain)]
-    return (value or 0.0) * float(gain.max(initial=0.0))
+        gain = np.linalg.norm(result.rational_part(result.time.points(w)), axis=(1, 2))
+        change = fragility_at(result, w) * gain
+    return float(change[np.isfinite(change)].max(initial=0.0))
 
 
 def _steady_state(source: Model, result: StateSpace, limit: float | None) -> Claim:

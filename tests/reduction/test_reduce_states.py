@@ -51,6 +51,8 @@ def test_every_method_keeps_its_claim(n, shape, seed, sampled, data):
     model = random_model(n, shape[1], shape[0], seed, sampled)
     order = data.draw(st.integers(0, n))
     for method in methods():
+        if not method.claim:
+            continue
         small = reduce_states(*model, sampled=sampled, order=order, method=method.name)
         error = difference(model, small, sampled)
         assert small.lower_bound * (1 - 1e-9) - small.rounding <= error <= small.bound
@@ -60,6 +62,8 @@ def test_every_method_keeps_its_claim(n, shape, seed, sampled, data):
         assert np.all(np.abs(poles) < 1) if sampled else np.all(poles.real < 0)
         if small.order:
             assert np.abs(small.left.T @ small.right - np.eye(small.order)).max() <= 1e-6
+            if method.keeps_steady_state:
+                continue  # no projection: what is left out acts on at rest
             assert np.abs(small.left.T @ model[0] @ small.right - small.A).max() <= 1e-6 * np.abs(model[0]).max()
 
 

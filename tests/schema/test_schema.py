@@ -125,6 +125,9 @@ def test_every_form_is_accepted(form: str, run: Callable[..., Any], tmp_path: Pa
 def test_every_reduction_method_is_accepted(method: str, run: Callable[..., Any], tmp_path: Path) -> None:
     (tmp_path / "plant.json").write_text(PLANT)
     arguments = ["reduce", tmp_path / "plant.json", "--order", "2", "--method", method, "--no-second-opinion"]
+    if method == "frequency-weighted":
+        (tmp_path / "loop.json").write_text(PLANT)
+        arguments += ["--controller", tmp_path / "loop.json"]
     assert run(*arguments).status == 0
 
 
@@ -140,6 +143,9 @@ def test_every_fit_method_is_accepted(method: str, run: Callable[..., Any], tmp_
     }
     (tmp_path / "data.json").write_text(json.dumps(record))
     arguments = ["fit", tmp_path / "data.json", "--order", "1", "--method", method, "--no-second-opinion"]
+    if method == "frequency-weighted":
+        (tmp_path / "loop.json").write_text(PLANT)
+        arguments += ["--controller", tmp_path / "loop.json"]
     assert run(*arguments).status == 0
 
 
