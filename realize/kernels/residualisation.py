@@ -75,3 +75,13 @@ def residualised(
         C[:, :count] + C[:, count:] @ X,
         D + C[:, count:] @ Y,
     )
+
+
+def steady_state_gain(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> Array:
+    """Return D - C A^-1 B (sampled: D + C (I - A)^-1 B); infinite throughout where A (I - A) is singular."""
+    if A.shape[0] == 0:
+        return D
+    try:
+        return residualised(A, B, C, D, 0, sampled=sampled)[3]
+    except NoSteadyState:
+        return np.full(D.shape, np.inf)

@@ -10,7 +10,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels.balancing import balanced_part
-from realize.kernels.norms import gains, pole_frequencies, response_evaluator, steady_state_gain
+from realize.kernels.norms import gains, pole_frequencies, response_evaluator
+from realize.kernels.residualisation import steady_state_gain
 from realize.reduction.prepare import Prepared
 from realize.reduction.result import Projected
 

@@ -8,7 +8,7 @@ from scipy.linalg import block_diag
 
 from realize.errors import Refused, UsageError
 from realize.kernels.algebraic_states import without_descriptor
-from realize.kernels.norms import steady_state_gain
+from realize.kernels.residualisation import steady_state_gain
 from realize.kernels.response import state_response
 from realize.kernels.spectral_blocks import spectral_blocks
 from realize.reduction import Loop, Request, automatic, reduce_states
