@@ -41,6 +41,7 @@ WRITTEN = {
     "integer": "a whole number",
     "error": "a number, or per cent: ``0.01`` or ``1%``",
     "band": "two frequencies: ``1Hz,2.4kHz``, or plain numbers in rad/s",
+    "frequencies": "frequencies with commas between them: ``10Hz,2.4kHz``, or plain numbers in rad/s",
     "order": "``N``, ``A..B`` or ``auto``",
     "time": "seconds, or with a suffix: ``0.002``, ``2ms``, ``150us``",
     "columns": "names with commas between them",

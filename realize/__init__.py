@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from realize.models import (
         DeadTime,
         FrequencyResponse,
+        ImpulseResponse,
         MatrixFraction,
         Offset,
         PoleResidue,
@@ -44,6 +45,7 @@ _HOMES = {
     "realize.models": (
         "DeadTime",
         "FrequencyResponse",
+        "ImpulseResponse",
         "MatrixFraction",
         "Offset",
         "PoleResidue",
@@ -72,6 +74,7 @@ __all__ = [
     "DeadTime",
     "FrequencyResponse",
     "HankelValues",
+    "ImpulseResponse",
     "InputError",
     "LoopMargins",
     "MatrixFraction",

@@ -21,6 +21,10 @@ def execute(
     ordering: str | None,
     force: bool,
     side: str | None,
+    frequencies: list[float] | None,
+    band: tuple[float, float] | None,
+    count: int | None,
+    period: float | None,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
@@ -52,6 +56,10 @@ def execute(
             ordering=ordering,
             force=force,
             side=side,
+            frequencies=frequencies,
+            band=band,
+            count=count,
+            period=period,
             common_denominator=common_denominator,
             digits=digits,
             arithmetic=arithmetic,

@@ -67,6 +67,11 @@ def band(text: str) -> tuple[float, float]:
     return low, high
 
 
+def frequencies(text: str) -> list[float]:
+    """Return a list of frequencies in rad/s."""
+    return [frequency(part) for part in text.split(",")]
+
+
 def order(text: str) -> str | int | tuple[int, int]:
     """Return N, (A, B) or "auto"."""
     if text == "auto":
@@ -142,6 +147,7 @@ PARSERS: dict[str, Callable[[Any], Any]] = {
     "integer": integer,
     "error": error,
     "band": band,
+    "frequencies": frequencies,
     "order": order,
     "time": seconds,
     "columns": columns,

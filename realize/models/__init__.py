@@ -3,6 +3,7 @@
 from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Signal, TimeBase
 from realize.models.digest import digest, mark
 from realize.models.frequency_response import FrequencyResponse
+from realize.models.impulse_response import ImpulseResponse, is_data
 from realize.models.matrix_fraction import MatrixFraction
 from realize.models.pole_residue import PoleResidue
 from realize.models.second_order import SecondOrder
@@ -22,6 +23,7 @@ MODEL_TYPES: dict[str, type[Model]] = {
         StateSpace,
         SecondOrder,
         FrequencyResponse,
+        ImpulseResponse,
     )
 }
 
@@ -30,6 +32,7 @@ __all__ = [
     "MODEL_TYPES",
     "DeadTime",
     "FrequencyResponse",
+    "ImpulseResponse",
     "MatrixFraction",
     "Model",
     "Offset",
@@ -42,5 +45,6 @@ __all__ = [
     "TransferFunction",
     "ZeroPoleGain",
     "digest",
+    "is_data",
     "mark",
 ]

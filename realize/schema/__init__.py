@@ -3,6 +3,7 @@
 from realize.schema.claims import BASES, CLAIMS, STRUCTURED, ClaimDefinition
 from realize.schema.kinds import (
     COMMON_FIELDS,
+    DATA_KINDS,
     FORMAT_VERSION,
     HOLDS,
     KINDS,
@@ -42,6 +43,7 @@ __all__ = [
     "CLAIMS",
     "COMMON_FIELDS",
     "COMMON_OPTIONS",
+    "DATA_KINDS",
     "EXIT_STATUSES",
     "FIT_METHODS",
     "FORMAT_VERSION",

@@ -28,6 +28,7 @@ HOLDS = {
     "frequency-list": "[k]; real, not negative, strictly increasing",
     "frequency-unit": '"Hz" or "rad/s"',
     "response": "[k][outputs][inputs]; complex numbers [re, im]",
+    "samples": "[k][outputs][inputs]; real",
     "real-response": "[k][outputs][inputs]; real, not negative",
 }
 
@@ -147,10 +148,21 @@ KINDS: dict[str, Kind] = {
             ),
             parametric=False,
         ),
+        Kind(
+            "impulse-response",
+            "Impulse response at 0, period, 2 period, ...; Markov parameters where time is sampled.",
+            (
+                Field("period", "number", True, "step of time, s; the sampling period where time is sampled"),
+                Field("samples", "samples", True, "values, real"),
+            ),
+            parametric=False,
+        ),
     )
 }
 
 PARAMETRIC_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric)
+#: Kinds that hold data: targets of a conversion, never sources.
+DATA_KINDS = tuple(name for name, kind in KINDS.items() if not kind.parametric)
 #: Kinds that can hold every rational plant.
 UNIVERSAL_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric and kind.universal)
 

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from realize.schema.kinds import PARAMETRIC_KINDS, UNIVERSAL_KINDS
+from realize.schema.kinds import DATA_KINDS, PARAMETRIC_KINDS, UNIVERSAL_KINDS
 
 FORMS = (
     "cascade",
@@ -43,7 +43,8 @@ class Option:
 
     ``takes`` is what the value is: ``flag``, ``choice``, ``text``, ``number``, ``integer``, ``error`` (0.01 or 1%),
     ``band`` (LOW,HIGH with unit suffixes), ``order`` (N, A..B or auto), ``time`` (seconds), ``columns`` (LIST),
-    ``weights`` (numbers above zero), ``path``, ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
+    ``frequencies`` (LIST with unit suffixes), ``weights`` (numbers above zero), ``path``,
+    ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
     """
 
     name: str
@@ -73,7 +74,7 @@ class Verb:
     makes_receipt: bool = True
 
 
-TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS, metavar="KIND")
+TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS + DATA_KINDS, metavar="KIND")
 BAND = Option("band", "band", "use only these frequencies (120Hz, 2.4kHz, plain numbers are rad/s)", metavar="LOW,HIGH")
 CERTIFY = Option("certify", "flag", "prove the claims whatever it costs; progress is shown, Ctrl-C ends it")
 COLUMNS = Option(
@@ -126,6 +127,15 @@ VERBS: dict[str, Verb] = {
                 Option(
                     "digits", "integer", "decimals with N correct digits in place of doubles, up to 2000", metavar="N"
                 ),
+                Option(
+                    "frequencies",
+                    "frequencies",
+                    "grid of a frequency response (120Hz, 2.4kHz, plain numbers are rad/s)",
+                    metavar="LIST",
+                ),
+                Option("band", "band", "range of the grid of a frequency response", metavar="LOW,HIGH"),
+                Option("count", "integer", "points of the grid, or samples of an impulse response", metavar="N"),
+                Option("period", "time", "step of an impulse response, seconds", metavar="X"),
                 Option("side", "choice", "side of the denominator of a matrix fraction; right unless said", SIDES),
                 ARITHMETIC,
                 CERTIFY,

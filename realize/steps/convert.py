@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -23,9 +24,9 @@ from realize.errors import Refused, UsageError
 from realize.forms.coordinates import NoTransform
 from realize.forms.modal_blocks import listed_blocks
 from realize.forms.registry import TABLE
-from realize.models import FrequencyResponse, Model, StateSpace
+from realize.models import Model, StateSpace, is_data
 from realize.models.checks import MAX_DIGITS
-from realize.schema import ARITHMETICS, CLAIMS, FORMS, ORDERINGS, PARAMETRIC_KINDS, SIDES, STRUCTURED, Claim
+from realize.schema import ARITHMETICS, CLAIMS, DATA_KINDS, FORMS, KINDS, ORDERINGS, SIDES, STRUCTURED, Claim
 from realize.steps.candidates import choose_states
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
@@ -58,8 +59,10 @@ def _task(
     force: bool = False,
     side: str | None = None,
 ) -> Task:
-    if to not in PARAMETRIC_KINDS:
-        raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(PARAMETRIC_KINDS)}")
+    if to not in KINDS:
+        raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(KINDS)}")
+    if to in DATA_KINDS and (form is not None or ordering is not None or arithmetic == "double"):
+        raise UsageError(f"--to {to} takes no form, ordering or arithmetic double")
     if form is not None and form not in FORMS:
         raise UsageError(f"no form {form!r}; there are: {', '.join(FORMS)}")
     if arithmetic not in ARITHMETICS:
@@ -72,8 +75,11 @@ def _task(
         raise UsageError(f"--side goes with --to matrix-fraction, and is one of: {', '.join(SIDES)}")
     if common_denominator and to != "transfer-function":
         raise UsageError("--common-denominator goes with --to transfer-function")
-    if isinstance(model, FrequencyResponse):
-        raise Refused("a frequency response has no exact conversion to a model; use fit")
+    if is_data(model):
+        raise Refused(
+            f"the data of a model of kind {model.kind} have no exact conversion to a model; "
+            "fit takes frequency responses"
+        )
     if digits is not None:
         if to not in WITH_DIGITS:
             raise UsageError(f"--digits goes with --to {', '.join(WITH_DIGITS)}, not with --to {to}")
@@ -96,6 +102,8 @@ def explain(
 ) -> list[str]:
     """Return the route of a conversion in words, one line a row, and last the arithmetic and why."""
     task = _task(model_of(model), to, form, common_denominator, digits, arithmetic, ordering)
+    if to in DATA_KINDS:
+        return [f"{task.model.kind} -> {to}: exact values where they are affordable, each rounded once"]
     route = plan_route(task)
     lines = [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
     return [*(lines or [f"{task.model.kind} stays as it is (exact)"]), choose_arithmetic(task).words]
@@ -110,6 +118,10 @@ def convert(
     ordering: str | None = None,
     force: bool = False,
     side: str | None = None,
+    frequencies: Sequence[float] | None = None,
+    band: tuple[float, float] | None = None,
+    count: int | None = None,
+    period: float | None = None,
     common_denominator: bool = False,
     digits: int | None = None,
     arithmetic: str = "auto",
@@ -134,6 +146,14 @@ def convert(
     side : str, optional
         Side of the denominator of a matrix fraction, "right" (the default) or "left". One that is a matrix fraction
         already is made coprime and reduced if a side is asked for.
+    frequencies : sequence of float, optional
+        Grid of a frequency response, rad/s; the default is dense around the resonances.
+    band : (low, high), optional
+        Range of that grid, rad/s.
+    count : int, optional
+        Points of the grid, evenly spaced on a log scale; samples of an impulse response.
+    period : float, optional
+        Step of an impulse response of a continuous model, s.
     force : bool
         Give a form even where it ruins the model; the claim then fails.
     common_denominator : bool
@@ -162,6 +182,14 @@ def convert(
     started = time.perf_counter()
     source = model_of(model)
     task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force, side)
+    wanted: dict[str, Any] = {"frequencies": frequencies, "band": band, "count": count, "period": period}
+    if to in DATA_KINDS:
+        from realize.steps.tabulate import tabulated
+
+        with whatever_it_costs(certify or arithmetic == "exact"):
+            return tabulated(source, to, **wanted, limits=limits, second_opinion=second_opinion)
+    if any(value is not None for value in wanted.values()):
+        raise UsageError("--frequencies, --band, --count and --period go with --to " + " or ".join(DATA_KINDS))
     choice = choose_arithmetic(task)
     lifted = certify or arithmetic == "exact"
     with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:

@@ -7,7 +7,7 @@ from typing import Any
 import numpy as np
 
 from realize.errors import Refused
-from realize.models import FrequencyResponse, MatrixFraction, Model, SecondOrder, StateSpace, mark
+from realize.models import FrequencyResponse, ImpulseResponse, MatrixFraction, Model, SecondOrder, StateSpace, mark
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_zeros import listed, poles_of, smith_of, zeros_of
@@ -51,6 +51,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
         record["dead_time"] = model.dead_time.total.tolist()
     if isinstance(model, FrequencyResponse):
         return record | _data(model)
+    if isinstance(model, ImpulseResponse):
+        return record | _samples(model)
     cautions: list[str] = []
     view = view_of(model)
     poles, zeros = _roots(view, cautions)
@@ -199,6 +201,15 @@ def _remarks(model: Model, record: dict[str, Any], view: View, cautions: list[st
         cautions.append(
             f"{len(model.beyond_doubles)} numbers are beyond the range of doubles; they are kept as decimals."
         )
+
+
+def _samples(model: ImpulseResponse) -> dict[str, Any]:
+    return {
+        "step_of_time": model.period,
+        "samples": int(model.samples.shape[0]),
+        "largest_value": float(np.abs(model.samples).max()),
+        "cautions": [],
+    }
 
 
 def _data(model: FrequencyResponse) -> dict[str, Any]:

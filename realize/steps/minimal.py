@@ -13,7 +13,7 @@ import numpy as np
 from realize.conversions import Task, convert_model, plan_route
 from realize.conversions.cancelling import cancelled
 from realize.errors import RealizeError, Refused
-from realize.models import FrequencyResponse, Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain, is_data
 from realize.schema import Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.minimal_states import EPS, Decision, candidates, decide
@@ -69,7 +69,7 @@ def minimal(
     """
     started = time.perf_counter()
     source = model_of(model)
-    if isinstance(source, FrequencyResponse):
+    if is_data(source):
         raise Refused("a frequency response is data and has no minimal realization; fit a model first")
     asked = dict(limits or {})
     with whatever_it_costs(certify), asking("minimal", source, {}, second_opinion) as opinion:

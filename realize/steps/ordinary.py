@@ -6,7 +6,7 @@ import numpy as np
 
 from realize.conversions import Task, convert_model, plan_route
 from realize.errors import Refused
-from realize.models import FrequencyResponse, Model, StateSpace
+from realize.models import Model, StateSpace, is_data
 from realize.models.state_space import is_identity
 
 
@@ -18,8 +18,8 @@ def states_of(model: Model) -> tuple[StateSpace, list[str]]:
     Refused
         If the plant is improper, or E has an index above 1 or singular values that are neither large nor zero.
     """
-    if isinstance(model, FrequencyResponse):
-        raise Refused("a frequency response is data; fit a model first")
+    if is_data(model):
+        raise Refused(f"a model of kind {model.kind} is data; fit a model first")
     route: list[str] = []
     if not isinstance(model, StateSpace):
         task = Task(model, "state-space")

@@ -13,7 +13,7 @@ import numpy as np
 
 from realize._version import __version__
 from realize.errors import Refused
-from realize.models import FrequencyResponse, Model, mark
+from realize.models import FrequencyResponse, Model, is_data, mark
 from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
 from realize.steps.second_opinion import Later, Opinion
@@ -59,7 +59,7 @@ def versions() -> dict[str, str]:
 
 def fragility_of(model: Model, frequency: np.ndarray) -> float | None:
     """Return the fragility over the frequencies, None for data."""
-    return None if isinstance(model, FrequencyResponse) else fragility(model, frequency)
+    return None if is_data(model) else fragility(model, frequency)
 
 
 def probe_frequencies(model: Model, count: int = 40) -> np.ndarray:
@@ -178,7 +178,7 @@ def finish(
         Decimal digits of the result's numbers, where they are no doubles: its fragility is that of one rounding there.
     """
     claims = [_plain_claim(claim) for claim in with_limits(claims, limits or {})]
-    frequency = probe_frequencies(source if not isinstance(source, FrequencyResponse) else result)
+    frequency = probe_frequencies(source if not is_data(source) else result)
     values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
     if digits is not None and values["result"] is not None:
         # half a unit of the last digit in place of half a unit of the last bit; numbers that are doubles stay doubles

@@ -21,7 +21,7 @@ from typing import Any
 
 import numpy as np
 
-from realize.models import FrequencyResponse, Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain, is_data
 from realize.schema import Claim, SecondOpinion
 
 #: Seconds that the child may take, counted from its start.
@@ -51,7 +51,7 @@ def _plain(value: Any) -> Any:
 
 
 def _request(step: str, source: Model, options: dict[str, Any], frequency: np.ndarray) -> dict[str, Any] | None:
-    if isinstance(source, FrequencyResponse) or source.beyond_doubles or (source.order or 0) > LARGEST_ORDER:
+    if is_data(source) or source.beyond_doubles or (source.order or 0) > LARGEST_ORDER:
         return None
     known = (TransferFunction, ZeroPoleGain, PoleResidue, Sections, StateSpace)
     if not isinstance(source, known):
@@ -218,7 +218,7 @@ def _ask(step: str, source: Model, options: dict[str, Any]) -> tuple[Opinion, Ca
         return lambda result: _answer("not-applicable", "no independent routine for this step"), _nothing
     from realize.steps.receipts import probe_frequencies
 
-    frequency = probe_frequencies(source, FREQUENCIES) if not isinstance(source, FrequencyResponse) else np.ones(1)
+    frequency = probe_frequencies(source, FREQUENCIES) if not is_data(source) else np.ones(1)
     request = _request(step, source, options, frequency)
     if request is None:
         return lambda result: _answer(

@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from realize.errors import InputError, Refused
-from realize.models import FrequencyResponse, Model
+from realize.models import Model, is_data
 from realize.schema import Claim, judge
 from realize.verification.proof import square_root
 from realize.verification.views import View
@@ -58,7 +58,7 @@ def model_in(value: Any, what: str = "model") -> Model:
     model = getattr(value, "model", value)
     if not isinstance(model, Model):
         raise InputError(f"{what}: {type(value).__name__}", "a model or a Conversion")
-    if isinstance(model, FrequencyResponse):
+    if is_data(model):
         raise Refused(f"the {what} is data: between its lines nothing is known; fit a model first")
     return model
 

@@ -17,6 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.errors import Refused
 from realize.models import (
     MatrixFraction,
     Model,
@@ -28,6 +29,7 @@ from realize.models import (
     ZeroPoleGain,
 )
 from realize.models.fractions import form_fractions
+from realize.models.impulse_response import is_data
 from realize.verification.formation import check_at_a_point
 
 Array = NDArray[np.float64]
@@ -93,6 +95,8 @@ def tell(text: str) -> None:
 
 def view_of(model: Model) -> View:
     """Return the view of a model, made once: exact fractions and roots are not formed twice."""
+    if is_data(model):
+        raise Refused(f"the data of a model of kind {model.kind} say nothing between their points; fit a model first")
     budget = _allowed.get()
     if budget != EXACT_BUDGET and predicted_cost(model) > EXACT_BUDGET:
         # kept apart, so that what other steps choose does not depend on this one

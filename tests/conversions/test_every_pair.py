@@ -378,8 +378,6 @@ def test_forms_and_kinds_that_do_not_exist() -> None:
         convert(PLANTS["wide"], "state-space", form="nothing")
     with pytest.raises(UsageError):
         convert(PLANTS["wide"], "nothing")
-    with pytest.raises(UsageError):
-        convert(PLANTS["wide"], "frequency-response")
 
 
 def test_the_source_is_not_touched() -> None:

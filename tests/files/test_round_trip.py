@@ -93,6 +93,10 @@ def records(draw, kind):
         # a leading zero matrix would be dropped
         record["denominator"] = [np.eye(size).tolist(), *draw(st.lists(matrix(size, size), max_size=2))]
         record["numerator"][0][0][0] = 1.5
+    elif kind == "impulse-response":
+        record["period"] = draw(st.floats(1e-300, 1e300))
+        record.pop("time", None)
+        record["samples"] = draw(st.lists(matrix(p, m, REALS), min_size=1, max_size=4))
     elif kind == "second-order":
         n = max(n, 1)
         record.update({name: draw(matrix(n, n)) for name in ("mass", "damping", "stiffness")}, input=draw(matrix(n, m)))

@@ -1,0 +1,59 @@
+"""Samples of an impulse response at equal steps of time."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Any, ClassVar
+
+from realize.errors import InputError, Refused
+from realize.models import checks
+from realize.models.base import ComplexArray, Model
+
+
+@dataclass(frozen=True, eq=False, kw_only=True, repr=False)
+class ImpulseResponse(Model):
+    """Impulse response: values at 0, period, 2 period, ...; Markov parameters where time is sampled.
+
+    Parameters
+    ----------
+    period : float
+        Step of time, s; the model's own sampling period where time is sampled.
+    samples : [k][outputs][inputs] float
+    """
+
+    kind: ClassVar[str] = "impulse-response"
+    period: float
+    samples: Any
+
+    def _normalise(self) -> None:
+        period = checks.array([self.period], "period", 1)[0]
+        if not period > 0:
+            raise InputError(f"{period}", "a number of seconds greater than zero", field="period")
+        if self.time.sampled and float(period) != self.time.seconds:
+            raise InputError(f"{period} s", f"the sampling period, {self.time.seconds} s", field="period")
+        samples = checks.array(self.samples, "samples", 3)
+        if 0 in samples.shape:
+            raise InputError("no samples", "at least one, of at least one input and output", field="samples")
+        self._put("period", float(period))
+        self._put("samples", samples)
+
+    @property
+    def shape(self) -> tuple[int, int]:
+        return self.samples.shape[1], self.samples.shape[2]
+
+    @property
+    def order(self) -> None:
+        return None
+
+    def evaluate(self, s: Any) -> ComplexArray:
+        raise Refused("an impulse response is data: it has values at its own times only")
+
+    def rational_part(self, points: ComplexArray) -> ComplexArray:
+        raise Refused("an impulse response is data: it has values at its own times only")
+
+
+def is_data(model: Model) -> bool:
+    """True for kinds that hold data in place of parameters."""
+    from realize.schema import KINDS
+
+    return not KINDS[model.kind].parametric
