@@ -163,7 +163,8 @@ def _quick_error(model: StateSpace, result: StateSpace, parts: Parts) -> float:
     error = np.abs(after - before).max(axis=(1, 2))
     with np.errstate(divide="ignore", invalid="ignore"):
         worst = np.where(error == 0, 0.0, error / size)
-    return float(worst.max())
+    # an integrator that is seen at the output grows there anyway: the claims judge it from the dynamic band on
+    return float(worst[1:].max() if size[0] > 1e3 * size[1:].max() else worst.max())
 
 
 def _exact_polynomial(model: StateSpace) -> list[Any] | None:
