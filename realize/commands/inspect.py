@@ -15,7 +15,11 @@ def execute(context: Context, model: str, columns: list[str] | None, **options: 
     if context.json:
         print_record(record)
     else:
-        from realize.reports.tables import history_table, inspect_table
+        import sys
 
-        print(history_table(record) if history_only else inspect_table(record))
+        from realize.reports.inspection import inspect_table
+        from realize.reports.look import page_for
+        from realize.reports.tables import history_table
+
+        print(history_table(record) if history_only else inspect_table(record, page=page_for(sys.stdout)))
     return 0

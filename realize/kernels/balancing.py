@@ -79,6 +79,8 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
     Scaled
     """
     n, m, p = A.shape[0], B.shape[1], C.shape[0]
+    # the states on their own first: units that are far off would hide what counts at inputs and outputs
+    alone, A, B, C = _balanced_alone(A, B, C)
     states = np.zeros(n, dtype=np.int64)
     time = 0 if sampled else _top(A)
     inputs, outputs = _top(B), _top(C)
@@ -101,7 +103,26 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             inputs, outputs = inputs + _top(first), outputs + _top(last)
             inputs += (inputs + outputs) % 2
             B, C = _power(B, -states[:, None] - inputs), _power(C, states[None, :] - outputs)
-    return Scaled(A, B, C, states, time, inputs, outputs)
+    return Scaled(A, B, C, states + alone, time, inputs, outputs)
+
+
+def _balanced_alone(A: Array, B: Array, C: Array) -> tuple[NDArray[np.int64], Array, Array, Array]:
+    """Return exponents of states that balance A by itself, and the model in them; zeros where numbers would be lost."""
+    n = A.shape[0]
+    nothing = np.zeros(n, dtype=np.int64)
+    if n == 0 or not np.all(np.isfinite(A)):
+        return nothing, A, B, C
+    with np.errstate(under="ignore", over="ignore"):
+        states = np.frexp(balancing_scale(np.ldexp(np.abs(A), -_top(A))))[1].astype(np.int64) - 1
+        made = (
+            _power(A, states[None, :] - states[:, None]),
+            _power(B, np.broadcast_to(-states[:, None], B.shape)),
+            _power(C, np.broadcast_to(states[None, :], C.shape)),
+        )
+    for before, after in zip((A, B, C), made, strict=True):
+        if not np.all(np.isfinite(after)) or np.any((after == 0) != (before == 0)):
+            return nothing, A, B, C
+    return states, *made
 
 
 @dataclass(frozen=True)

@@ -9,16 +9,18 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from realize.reports.inspection import inspect_table
     from realize.reports.look import PLAIN, Page, page_for
     from realize.reports.plots import draw
     from realize.reports.root_lists import poles_table
-    from realize.reports.tables import compare_table, fit_table, inspect_table, receipt_table
+    from realize.reports.tables import compare_table, fit_table, receipt_table
 
 _HOMES = {
     "realize.reports.look": ("PLAIN", "Page", "page_for"),
     "realize.reports.plots": ("draw",),
     "realize.reports.root_lists": ("poles_table",),
-    "realize.reports.tables": ("compare_table", "fit_table", "inspect_table", "receipt_table"),
+    "realize.reports.inspection": ("inspect_table",),
+    "realize.reports.tables": ("compare_table", "fit_table", "receipt_table"),
 }
 _HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 

@@ -32,13 +32,13 @@ def poles_table(
     return laid_out([roots_grid(poles, period, name)], page)
 
 
-def roots_grid(poles: Iterable[tuple[complex, int]], period: float | None, name: str) -> Any:
+def roots_grid(poles: Iterable[tuple[complex, int]], period: float | None, name: str, most: int = MOST_ROWS) -> Any:
     """Return the table of `poles_table` before it is laid out."""
     from rich.console import Group
 
     listed = _paired([(complex(value), int(count)) for value, count in poles])
     rows = []
-    for value, count, paired in listed[:MOST_ROWS]:
+    for value, count, paired in listed[:most]:
         equivalent = _equivalent(value, period)
         size = abs(equivalent)
         number = short(value.real, 4)
@@ -69,8 +69,8 @@ def roots_grid(poles: Iterable[tuple[complex, int]], period: float | None, name:
     if not any(row[5] for row in rows):
         columns, rows = columns[:5], [row[:5] for row in rows]
     table = grid(columns, rows)
-    if len(listed) > MOST_ROWS:
-        return Group(table, words(f"... and {len(listed) - MOST_ROWS} more rows, by size"))
+    if len(listed) > most:
+        return Group(table, words(f"... and {len(listed) - most} more rows, by size"))
     return table
 
 

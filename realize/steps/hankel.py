@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from realize.errors import RealizeError, Refused
 from realize.kernels.exact.cost import BUDGET, affordable, hankel_operations
 from realize.models import Model
+from realize.schema import PARAMETRIC_KINDS
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.inspect_zeros import smith_of
 from realize.steps.receipts import probe_frequencies
@@ -67,8 +68,8 @@ def hankel_singular_values(model: Model | Conversion) -> HankelValues:
     .. [1] B. C. Moore, Principal component analysis in linear systems, IEEE Trans. Automat. Control 26 (1981) 17-32.
     """
     model = model_of(model)
-    if model.kind == "frequency-response":
-        raise Refused("a frequency response is data and has no Hankel singular values; fit a model first")
+    if model.kind not in PARAMETRIC_KINDS:
+        raise Refused("data has no Hankel singular values; fit a model first")
     view = view_of(model)
     exact = None if view.fractions is None else _in_balls(view)
     found = _in_doubles(model) if exact is None else exact

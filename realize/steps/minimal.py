@@ -101,14 +101,14 @@ def minimal(
 
 def _in_place(model: Model, exact: bool) -> Decision:
     """Return the decision about a model in coefficients, roots, residues or sections."""
-    from realize.steps.inspect import _minimal_order
+    from realize.steps.inspect_poles import minimal_order_of
 
     found = cancelled(model, lambda n: 0.0 if exact else 4 * max(n, 1) * EPS)
     view = view_of(found.model)
     order, proved = found.model.order or 0, True
     notes: list[str] = []
     if model.shape != (1, 1):
-        degree = _minimal_order(view, notes)
+        degree = minimal_order_of(view, notes)
         order, proved = (order, False) if degree is None else (degree, not notes)
     gone: list[dict[str, Any]] = []
     for pole, count, why, place in found.gone:

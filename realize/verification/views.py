@@ -214,7 +214,7 @@ class View:
             )
         # a root at z = 0 has no continuous equivalent
         keep = np.repeat(np.array([root.value != 0 for root in distinct], dtype=bool), counts)
-        s = np.repeat(np.array([_logarithm(root) if root.value else 0j for root in distinct], dtype=complex), counts)
+        s = np.repeat(np.array([logarithm(root) if root.value else 0j for root in distinct], dtype=complex), counts)
         s = s[keep] / self.period
         return Dynamics(np.where(axis[keep], 1j * s.imag, s), axis[keep])
 
@@ -285,7 +285,7 @@ class View:
         return fraction((period.numerator, period.denominator))
 
 
-def _logarithm(root: Any) -> complex:
+def logarithm(root: Any) -> complex:
     """Return ln z of an exact root other than 0 to full relative accuracy, however near to 1 it is."""
     from realize.kernels.exact.numbers import precision
 

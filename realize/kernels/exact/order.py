@@ -106,7 +106,7 @@ def mcmillan_degree(numerators: Sequence[Sequence[fmpq_poly]], denominators: Seq
         return Order(0, True)
 
     def sequence(q: int) -> list[list[int]]:
-        channels = [_series(n, d, 2 * bound, q)[1:] for row in proper for n, d in row]
+        channels = [series_modulo(n, d, 2 * bound, q)[1:] for row in proper for n, d in row]
         return [list(values) for values in zip(*channels, strict=True)]
 
     rank = _modular_rank(sequence, bound, p, m)
@@ -125,7 +125,7 @@ def _residue(value: fmpq, q: int) -> int:
     return int(value.p % q) * pow(int(value.q % q), -1, q) % q
 
 
-def _series(n: fmpq_poly, d: fmpq_poly, count: int, q: int) -> list[int]:
+def series_modulo(n: fmpq_poly, d: fmpq_poly, count: int, q: int) -> list[int]:
     """Return the coefficients of n / d in powers 0, -1, -2, ... of the variable, modulo a prime; deg n <= deg d."""
     degree = d.degree()
     above = nmod_poly([_residue(c, q) for c in reversed_polynomial(n, degree).coeffs()], q)
