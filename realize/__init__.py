@@ -5,10 +5,10 @@ Everything is imported when it is first used, so that ``import realize`` costs n
 
 from __future__ import annotations
 
-from importlib import import_module
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
 
 from realize._version import __version__
+from realize.later import names_at_home
 
 if TYPE_CHECKING:
     from realize.conversions.matrix_fraction import bezout_identity
@@ -64,7 +64,6 @@ _HOMES = {
     "realize.verification.margins": ("LoopMargins", "loop_margins"),
     "realize.verification.norms": ("h2_norm", "hankel_norm", "largest_gain"),
 }
-_HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 
 __all__ = [
     "Claim",
@@ -113,11 +112,7 @@ __all__ = [
 ]
 
 
-def __getattr__(name: str) -> Any:
-    home = _HOME_OF.get(name)
-    if home is None:
-        raise AttributeError(f"module 'realize' has no attribute {name!r}")
-    return getattr(import_module(home), name)
+__getattr__ = names_at_home(__name__, _HOMES)
 
 
 def __dir__() -> list[str]:

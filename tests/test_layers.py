@@ -23,6 +23,7 @@ MODULES = sorted(PACKAGE.rglob("*.py"))
 RANKS = {
     "_version": 0,
     "errors": 0,
+    "later": 0,
     "schema": 0,
     "kernels": 1,
     "models": 2,

@@ -1,7 +1,6 @@
 """Conversions between kinds: rows of two tables, a route that can be printed."""
 
-from realize.conversions import minimal_states
-from realize.conversions.coordinates import Changed
+from realize.conversions.changed import Changed
 from realize.conversions.route import (
     COORDINATE_ROWS,
     DOUBLE_ROWS,
@@ -30,6 +29,5 @@ __all__ = [
     "coordinate_row",
     "default_form",
     "follow",
-    "minimal_states",
     "plan_route",
 ]

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from realize.conversions.changed import Changed
 from realize.conversions.exact_coordinates import exact_matrices, refuse_beyond, setting_of
 from realize.errors import Refused
 from realize.forms.coordinates import Array, Coordinates
@@ -18,16 +19,6 @@ if TYPE_CHECKING:
 
 #: Transforms of more states than this stay out of the receipt.
 MATRICES_UP_TO = 200
-
-
-@dataclass(frozen=True)
-class Changed:
-    """A state model in new coordinates, the record for the receipt, and cautions."""
-
-    model: StateSpace
-    record: dict[str, Any]
-    cautions: tuple[str, ...]
-    condition: float
 
 
 @dataclass(frozen=True)

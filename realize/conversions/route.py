@@ -11,15 +11,25 @@ import heapq
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 from functools import partial
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-from realize.conversions import builders, descriptor, digits, doubles, matrix_fraction, minimal_states, second_order
-from realize.conversions.coordinates import Changed, change
-from realize.conversions.exact_coordinates import exact_cost, form_of_fractions
+from realize.conversions import builders
+from realize.conversions.changed import Changed
 from realize.errors import Refused, UsageError
 from realize.forms.registry import TABLE
+from realize.later import FunctionsOf, Later
 from realize.models import MatrixFraction, Model, SecondOrder, StateSpace
 from realize.verification.views import EXACT_BUDGET, forming_cost, predicted_cost
+
+if TYPE_CHECKING:
+    from realize.conversions import descriptor, doubles, matrix_fraction, minimal_states, second_order
+else:
+    # what a conversion does not use is not imported
+    descriptor = FunctionsOf("realize.conversions.descriptor")
+    doubles = FunctionsOf("realize.conversions.doubles")
+    matrix_fraction = FunctionsOf("realize.conversions.matrix_fraction")
+    minimal_states = FunctionsOf("realize.conversions.minimal_states")
+    second_order = FunctionsOf("realize.conversions.second_order")
 
 
 @dataclass(frozen=True)
@@ -192,7 +202,7 @@ ROWS += tuple(
     Row(
         "exact-fractions",
         f"state-space:{name}",
-        partial(form_of_fractions, name=name),
+        partial(Later("realize.conversions.exact_coordinates", "form_of_fractions"), name=name),
         False,
         f"exact realization; {TABLE[name].says}",
     )
@@ -240,7 +250,13 @@ DOUBLE_ROWS: tuple[Row, ...] = (
 
 #: Changes of coordinates: from the states of the source, and from the realizations that stand for other kinds.
 COORDINATE_ROWS: tuple[Row, ...] = tuple(
-    Row(source, f"state-space:{name}", partial(change, name=name, of_source=source == "state-space"), False, form.says)
+    Row(
+        source,
+        f"state-space:{name}",
+        partial(Later("realize.conversions.coordinates", "change"), name=name, of_source=source == "state-space"),
+        False,
+        form.says,
+    )
     for name, form in TABLE.items()
     for source in ("state-space", "state-space:cascade", "state-space:modal", "state-space:minimal")
     if source == "state-space" or not form.from_states_only
@@ -278,6 +294,8 @@ def choose_arithmetic(task: Task) -> Choice:
     """Return the arithmetic of a conversion, from sizes and bit lengths alone, never from the clock."""
     if task.changes_coordinates and isinstance(task.model, StateSpace):
         if TABLE[task.form or ""].exact:
+            from realize.conversions.exact_coordinates import exact_cost
+
             predicted = exact_cost(task.model, task.form or "")
             return Choice("exact", task.arithmetic, predicted, EXACT_BUDGET, "the numbers as given, each rounded once")
         operations = 30.0 * task.model.A.shape[0] ** 3
@@ -322,7 +340,7 @@ def plan_route(task: Task) -> list[Row]:
         base = plan_route(replace(task, form=None))
         return [*base, coordinate_row(base[-1].target, task)]
     start, goal = task.model.kind, task.target
-    if start == goal and descriptor.has_descriptor(task.model):
+    if start == goal and getattr(task.model, "E", None) is not None and descriptor.has_descriptor(task.model):
         return [SMALLEST_DESCRIPTOR]
     if start == goal and not task.common_denominator and task.digits is None and task.side is None:
         return []
@@ -346,7 +364,9 @@ def plan_route(task: Task) -> list[Row]:
                 count += 1
                 heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
     if task.to == "second-order":
-        raise Refused(second_order.STRUCTURE_NEEDED.format(kind=f"a {start} model"))
+        from realize.conversions.second_order import STRUCTURE_NEEDED
+
+        raise Refused(STRUCTURE_NEEDED.format(kind=f"a {start} model"))
     if task.arithmetic != "auto":
         raise Refused(f"there is no way from {start} to {goal} in {task.arithmetic} arithmetic")
     raise Refused(
@@ -394,6 +414,8 @@ def follow(task: Task, route: list[Row]) -> Model | Changed:
     for row in route:
         apply = row.apply
         if task.digits is not None:
+            from realize.conversions import digits
+
             apply = digits.BUILDERS.get((row.source, row.target), row.apply)
         value = apply(value, task)
     return value  # type: ignore[no-any-return]

@@ -9,7 +9,6 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.errors import Refused
-from realize.kernels.balancing import Scaled, scale_model
 
 Array = NDArray[np.float64]
 
@@ -153,7 +152,9 @@ def take_units_out(A: Array, B: Array, C: Array, setting: Setting) -> Units:
     Refused
         If the range of doubles does not hold the scaled model.
     """
-    own: Scaled = scale_model(A, B, C, sampled=setting.sampled)
+    from realize.kernels.balancing import scale_model
+
+    own = scale_model(A, B, C, sampled=setting.sampled)
     # what inputs and outputs have is shared out evenly, so that B and C are of like size in the end
     shift, gain = (own.input - own.output) // 2, (own.input + own.output) // 2
     if not all(np.all(np.isfinite(matrix)) for matrix in (own.A, own.B, own.C)):

@@ -27,24 +27,12 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
-from realize.forms.balanced import balanced_form, input_normal_form, output_normal_form
-from realize.forms.controllability import (
-    controllability_form,
-    controllable_companion_form,
-    multi_input_companion_form,
-    observability_form,
-    observable_companion_form,
-)
-from realize.forms.coordinates import Coordinates, Setting
-from realize.forms.hessenberg import controller_hessenberg_states, observer_hessenberg_states
-from realize.forms.jordan import jordan_form
-from realize.forms.linear_quadratic_balanced import linear_quadratic_balanced_form
-from realize.forms.modal_blocks import modal_form
-from realize.forms.scaled import scaled_states
-from realize.forms.schur import real_schur
-from realize.forms.staircase import kalman_states, observable_staircase, reachable_staircase
+from realize.later import Later
+
+if TYPE_CHECKING:
+    from realize.forms.coordinates import Coordinates, Setting
 
 
 @dataclass(frozen=True)
@@ -103,78 +91,78 @@ TABLE: dict[str, Form] = {
     for form in (
         Form(
             "scaled",
-            scaled_states,
+            Later("realize.forms.scaled", "scaled_states"),
             "Parlett & Reinsch 1969",
             "each state in a unit of its own, a power of two",
             "cascade",
         ),
         Form(
             "schur",
-            real_schur,
+            Later("realize.forms.schur", "real_schur"),
             "Golub & Van Loan, Matrix Computations; Bai & Demmel 1993",
             "orthogonal rotation to real Schur form, blocks ordered",
         ),
         Form(
             "controller-hessenberg",
-            controller_hessenberg_states,
+            Later("realize.forms.hessenberg", "controller_hessenberg_states"),
             "Van Dooren & Verhaegen 1985",
             "orthogonal rotation: B a triangle on top of zeros, A block Hessenberg",
         ),
         Form(
             "observer-hessenberg",
-            observer_hessenberg_states,
+            Later("realize.forms.hessenberg", "observer_hessenberg_states"),
             "Van Dooren & Verhaegen 1985",
             "orthogonal rotation: C a triangle behind zeros, A block Hessenberg",
         ),
         Form(
             "reachable-staircase",
-            reachable_staircase,
+            Later("realize.forms.staircase", "reachable_staircase"),
             "Varga 1981; Van Dooren 1981; Rosenbrock 1970",
             "orthogonal rotation by what inputs reach in steps, unreachable states last",
         ),
         Form(
             "observable-staircase",
-            observable_staircase,
+            Later("realize.forms.staircase", "observable_staircase"),
             "Varga 1981; Van Dooren 1981; Rosenbrock 1970",
             "orthogonal rotation by what outputs see in steps, unobservable states last",
         ),
         Form(
             "kalman",
-            kalman_states,
+            Later("realize.forms.staircase", "kalman_states"),
             "Kalman 1963",
             "four parts: reachable and observable, reachable only, observable only, neither",
         ),
         Form(
             "balanced",
-            balanced_form,
+            Later("realize.forms.balanced", "balanced_form"),
             "Moore 1981; Tombs & Postlethwaite 1987",
             "both Gramians equal and diagonal, from their square roots",
             "schur",
         ),
         Form(
             "input-normal",
-            input_normal_form,
+            Later("realize.forms.balanced", "input_normal_form"),
             "Moore 1981",
             "controllability Gramian I, observability Gramian diagonal",
             "schur",
         ),
         Form(
             "output-normal",
-            output_normal_form,
+            Later("realize.forms.balanced", "output_normal_form"),
             "Moore 1981",
             "observability Gramian I, controllability Gramian diagonal",
             "schur",
         ),
         Form(
             "linear-quadratic-balanced",
-            linear_quadratic_balanced_form,
+            Later("realize.forms.linear_quadratic_balanced", "linear_quadratic_balanced_form"),
             "Jonckheere & Silverman 1983",
             "both Riccati solutions equal and diagonal; unstable models too",
             "schur",
         ),
         Form(
             "modal",
-            modal_form,
+            Later("realize.forms.modal_blocks", "modal_form"),
             "Bavely & Stewart 1979; from partial fractions Gilbert 1963",
             "one block for each oscillation, clusters kept together",
             "schur",
@@ -183,7 +171,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "jordan",
-            jordan_form,
+            Later("realize.forms.jordan", "jordan_form"),
             "Gantmacher 1959, The Theory of Matrices",
             "real Jordan form, multiplicities decided exactly",
             "modal",
@@ -192,7 +180,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "controllable-companion",
-            controllable_companion_form,
+            Later("realize.forms.controllability", "controllable_companion_form"),
             "Kailath 1980, Linear Systems",
             "coefficients as entries, each rounded once; one input",
             "cascade",
@@ -202,7 +190,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "observable-companion",
-            observable_companion_form,
+            Later("realize.forms.controllability", "observable_companion_form"),
             "Kailath 1980, Linear Systems",
             "coefficients as entries, each rounded once; one output",
             "cascade",
@@ -212,7 +200,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "multi-input-companion",
-            multi_input_companion_form,
+            Later("realize.forms.controllability", "multi_input_companion_form"),
             "Luenberger 1967; Kailath 1980",
             "a companion block for each input, sizes are the controllability indices",
             "schur",
@@ -222,7 +210,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "controllability",
-            controllability_form,
+            Later("realize.forms.controllability", "controllability_form"),
             "Kailath 1980, Linear Systems",
             "basis B, A B, ...: Markov parameters in C; one input",
             "cascade",
@@ -232,7 +220,7 @@ TABLE: dict[str, Form] = {
         ),
         Form(
             "observability",
-            observability_form,
+            Later("realize.forms.controllability", "observability_form"),
             "Kailath 1980, Linear Systems",
             "basis dual to C, C A, ...: Markov parameters in B; one output",
             "cascade",

@@ -5,8 +5,9 @@ Everything is imported when it is first used: a table does not pay for pictures.
 
 from __future__ import annotations
 
-from importlib import import_module
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING
+
+from realize.later import names_at_home
 
 if TYPE_CHECKING:
     from realize.reports.inspection import inspect_table
@@ -22,7 +23,6 @@ _HOMES = {
     "realize.reports.inspection": ("inspect_table",),
     "realize.reports.tables": ("compare_table", "fit_table", "receipt_table"),
 }
-_HOME_OF = {name: home for home, names in _HOMES.items() for name in names}
 
 __all__ = [
     "PLAIN",
@@ -37,11 +37,7 @@ __all__ = [
 ]
 
 
-def __getattr__(name: str) -> Any:
-    home = _HOME_OF.get(name)
-    if home is None:
-        raise AttributeError(f"module 'realize.reports' has no attribute {name!r}")
-    return getattr(import_module(home), name)
+__getattr__ = names_at_home(__name__, _HOMES)
 
 
 def __dir__() -> list[str]:

@@ -17,17 +17,14 @@ from realize.conversions import (
     convert_model,
     coordinate_row,
     follow,
-    minimal_states,
     plan_route,
 )
 from realize.errors import Refused, UsageError
 from realize.forms.coordinates import NoTransform
-from realize.forms.modal_blocks import listed_blocks
 from realize.forms.registry import TABLE
 from realize.models import Model, StateSpace, is_data
 from realize.models.checks import MAX_DIGITS
 from realize.schema import ARITHMETICS, CLAIMS, DATA_KINDS, FORMS, KINDS, ORDERINGS, SIDES, STRUCTURED, Claim
-from realize.steps.candidates import choose_states
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
@@ -235,6 +232,9 @@ def _default(task: Task, limits: dict[str, float] | None) -> tuple[list[str], Mo
     result = convert_model(task, route)
     shape = _form_of(task, route)
     if shape == "minimal" and isinstance(result, StateSpace):
+        from realize.conversions import minimal_states
+        from realize.steps.candidates import choose_states
+
         best = choose_states(task, result, [row.target for row in route], limits)
         task.details.update(minimal_states.decision(task))
         return best.route, best.model, best.claims, best.name
@@ -303,6 +303,8 @@ def _from_response(task: Task, reason: str) -> tuple[list[str], Changed, Choice]
         )
     assert isinstance(value, StateSpace)
     if task.form == "modal":
+        from realize.forms.modal_blocks import listed_blocks
+
         record["blocks"] = listed_blocks(value.A, value.time.seconds if value.time.sampled else None)
     return route, Changed(value, record, (caution,), float("inf")), choose_arithmetic(other)
 
