@@ -125,8 +125,8 @@ def deliver(context: Context, conversion: Conversion, *more: str) -> int:
 
 
 @contextmanager
-def showing_proofs(wanted: bool) -> Iterator[None]:
-    """Inside, the progress of proofs that take long appears on standard error, at most once in two seconds."""
+def showing_proofs(wanted: bool, doing: str = "proving") -> Iterator[None]:
+    """Inside, the progress of long proofs and other long work appears on standard error, at most every two seconds."""
     if not wanted:
         yield
         return
@@ -139,7 +139,7 @@ def showing_proofs(wanted: bool) -> Iterator[None]:
         now = time.monotonic()
         if now - last >= 2:
             last = now
-            say(f"proving for {now - started:.0f} s: {text}")
+            say(f"{doing} for {now - started:.0f} s: {text}")
 
     with telling(show):
         yield

@@ -13,7 +13,7 @@ def execute(context: Context, model: str, controller: str | None, plant: str | N
     others: dict[str, Any] = {
         name: load(path) for name, path in (("controller", controller), ("plant", plant)) if path is not None
     }
-    with showing_proofs(options["certify"]):
+    with showing_proofs(True, "proving" if options["certify"] else "reducing"):
         conversion = reduce(
             load(model), limits=context.limits, second_opinion=context.second_opinion, **others, **options
         )

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -51,6 +52,8 @@ def leading_part(M: Array, tolerance: float) -> Leading:
     tolerance : float
         In the unit of M; not below the rounding of its entries.
 
+    M is overwritten.
+
     Returns
     -------
     Leading
@@ -65,11 +68,13 @@ def leading_part(M: Array, tolerance: float) -> Leading:
     remainder = np.array(M)
     basis: list[Array] = []
     rows: list[Array] = []
-    rest = float(np.linalg.norm(remainder))
+    rest = whole = float(np.linalg.norm(remainder))
     while rest > tolerance:
-        if (len(basis) + 1) * DRAWN > FRACTION * size:
-            U, values, Zt = scipy.linalg.svd(M, full_matrices=False, check_finite=False)
-            return Leading(U, values, Zt.T, 0.0)
+        if _slow(len(basis), rest / whole, tolerance / whole, FRACTION * size / DRAWN):
+            del remainder, basis, rows
+            # the transpose is in the order of columns that the routine may overwrite
+            Z, values, Ut = scipy.linalg.svd(M.T, full_matrices=False, check_finite=False, overwrite_a=True)
+            return Leading(Ut.T, values, Z, 0.0)
         # the remainder is orthogonal to the basis but for rounding: once more, before the basis grows
         block = remainder @ rng.standard_normal((M.shape[1], DRAWN))
         block = scipy.linalg.qr(block, mode="economic", check_finite=False, overwrite_a=True)[0]
@@ -88,6 +93,13 @@ def leading_part(M: Array, tolerance: float) -> Leading:
         return Leading(np.zeros((M.shape[0], 0)), _tail(rest, size), np.zeros((M.shape[1], 0)), rest)
     W, values, Zt = scipy.linalg.svd(np.vstack(rows), full_matrices=False, check_finite=False)
     return trimmed(np.hstack(basis) @ W, values, Zt.T, rest, size)
+
+
+def _slow(blocks: int, rest: float, tolerance: float, most: float) -> bool:
+    """Say whether the decay so far, in proportion, leads beyond the number of blocks that pays."""
+    if blocks + 1 > most:
+        return True
+    return blocks >= 2 and math.log(max(tolerance, 1e-300)) < 2 * math.log(rest) * most / blocks
 
 
 def trimmed(left: Array, values: Array, right: Array, rest: float, size: int) -> Leading:

@@ -65,7 +65,9 @@ class Offer:
         """Return the theorem's bound of a number of states (scaled unit), None without one."""
         if self.plan.tails is None:
             return None
-        return float(self.plan.tails[count]) + self.with_steady_state(self.plan.outline(count))[1]
+        tail = float(self.plan.tails[count])
+        # the part itself is needed for its steady state alone
+        return tail + self.with_steady_state(self.plan.outline(count))[1] if self.steady else tail
 
     def error(self, count: int) -> float:
         """Return the largest difference found for a number of states (scaled unit)."""

@@ -15,6 +15,7 @@ from realize.kernels.hankel_estimates import estimated_values
 from realize.kernels.low_rank_balancing import low_rank_factors
 from realize.kernels.norms import Peak, peak_gain
 from realize.kernels.splitting import Split, split_stable, whole
+from realize.verification.views import tell
 
 Array = NDArray[np.float64]
 
@@ -145,13 +146,17 @@ def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, triangular
     for name, matrix in zip("ABCD", (A, B, C, D), strict=True):
         if not np.all(np.isfinite(matrix)):
             raise InputError("an entry that is not a finite number", "finite numbers", field=name)
+    tell(f"{n} states: units taken out")
     scaled = scale_model(A, B, C, sampled=sampled)
     if not triangular:
+        tell(f"{n} states: Gramians of low rank sought")
         found = low_rank_factors(scaled.A, scaled.B, scaled.C, sampled=sampled)
         if found is not None:
             return Prepared(scaled, whole(scaled.A, scaled.B, scaled.C), found, D, sampled)
     try:
+        tell(f"{n} states: real Schur form")
         split = split_stable(scaled.A, scaled.B, scaled.C, sampled=sampled)
+        tell(f"{n} states: Gramian factors and Hankel singular values")
         factors = hankel_factors(*split.stable, sampled=sampled)
         if 0 < split.stable[0].shape[0] <= DRAWN_ORDER:
             factors = _drawn(factors, scaled, split, sampled)

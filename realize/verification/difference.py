@@ -20,7 +20,7 @@ from realize.verification.fragility import fragility
 from realize.verification.norms import H2_ORDER, h2_of_fractions, h2_of_states
 from realize.verification.pair import Pair
 from realize.verification.search import Band, axis_intervals, largest, seeds
-from realize.verification.views import NO_DYNAMICS, Dynamics, view_of
+from realize.verification.views import NO_DYNAMICS, Dynamics, tell, view_of
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -252,6 +252,7 @@ def _of_large(pair: Pair, band: Band, w: Array, direct: Array | None) -> tuple[f
     """The same for a large source: no Hamiltonian, and no two frequencies closer than the response can tell apart."""
     poles: ComplexArray = np.concatenate([view.rough_poles.s for view in (pair.source, pair.result)])
     w = thinned(w, np.asarray(1j * w, dtype=complex), poles, APART)
+    tell(f"response of {pair.source.model.order} states at {w.size} frequencies")
     source = pair.source.response(w)
     difference = norms.gains(pair.result.response(w) - source)
     gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band, rounds=2, values=norms.gains(source))

@@ -78,7 +78,7 @@ _listener: ContextVar[Callable[[str], None] | None] = ContextVar("listener", def
 
 @contextmanager
 def telling(listener: Callable[[str], None] | None) -> Iterator[None]:
-    """Inside, the progress of proofs is told to a listener."""
+    """Inside, the progress of proofs and of other long work is told to a listener."""
     token = _listener.set(listener)
     try:
         yield
@@ -87,7 +87,7 @@ def telling(listener: Callable[[str], None] | None) -> Iterator[None]:
 
 
 def tell(text: str) -> None:
-    """Say how far a proof is."""
+    """Say how far a proof, or other work that may take long, is."""
     listener = _listener.get()
     if listener is not None:
         listener(text)

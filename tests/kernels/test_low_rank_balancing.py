@@ -121,7 +121,7 @@ def test_leading_part(n):
     U, V = (np.linalg.qr(rng.standard_normal((n, n)))[0] for _ in range(2))
     exact = 10.0 ** -np.arange(n, dtype=float)
     M = (U * exact) @ V.T
-    found = leading_part(M, 1e-12)
+    found = leading_part(M.copy(), 1e-12)
     k = found.left.shape[1]
     assert np.all(np.diff(found.values) <= 0) and found.values.size == n
     assert np.all(np.abs(found.values - exact) <= found.rest + 100 * EPS)

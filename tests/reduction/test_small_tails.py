@@ -55,3 +55,13 @@ def test_receipt_of_a_ladder_says_why_the_order_is_smaller():
     claims = {claim.name: claim for claim in found.receipt.claims}
     assert found.model.order < 23 and any("rounding" in caution for caution in found.receipt.cautions)
     assert claims["reduction-error"].value <= claims["reduction-bound"].value
+
+
+def test_progress_is_told():
+    from realize.verification.views import telling
+
+    said = []
+    A, B, C = ladder(5)
+    with telling(said.append):
+        reduce_states(A, B, C, np.zeros((1, 1)), sampled=False, order=2)
+    assert any("Schur form" in line for line in said) and all("5 states" in line for line in said)
