@@ -138,6 +138,10 @@ def reduce(
         claims = _claims(source, plain, weighted, small, result, found, weights, limit, measured, band, limits or {})
         claims += [order_claim(result, (limits or {}).get("order")), stability_claim(result)]
         gap, permit = _consequences(source, plain, weighted, small, found, weights, claims)
+        if loop is not None and not loop.controller:
+            permit = Licence(
+                False, None, "The model is a controller: no other is licensed. Its own loop was looked at."
+            )
         claims.append(gap)
         details = _details(found, weights, band, plain)
         details["licence"] = {"given": permit.given, "margin": permit.margin, "sentence": permit.sentence}

@@ -51,7 +51,8 @@ def loop_record(plant: StateSpace, controller: StateSpace) -> dict[str, Any]:
     dict
         ``stable``, ``worst_pole`` ([re, im], the one nearest to instability or beyond), ``stability_margin`` (b(P, K),
         0 where not stable) with ``basis`` and ``lower`` (what it does not fall below, None where not confirmed),
-        ``largest_sensitivity``, and for a single loop ``gain_margin``, ``phase_margin`` (degrees), ``margins_basis``.
+        ``largest_sensitivity``, and for a single loop ``gain_margin``, ``phase_margin`` (degrees), ``margins_basis``; ``infinite``
+        lists the names of what is infinite.
     """
     sampled = plant.time.sampled
     try:
@@ -80,6 +81,8 @@ def loop_record(plant: StateSpace, controller: StateSpace) -> dict[str, Any]:
         record["largest_sensitivity"] = _sensitivity(made, plant, sampled)
     if plant.shape == (1, 1):
         record |= _classical(plant, controller, stable)
+    # a record has no infinite numbers: their names are listed
+    record["infinite"] = [name for name, value in record.items() if isinstance(value, float) and math.isinf(value)]
     return record
 
 
