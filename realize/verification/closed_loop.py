@@ -51,8 +51,8 @@ def loop_record(plant: StateSpace, controller: StateSpace) -> dict[str, Any]:
     dict
         ``stable``, ``worst_pole`` ([re, im], the one nearest to instability or beyond), ``stability_margin`` (b(P, K),
         0 where not stable) with ``basis`` and ``lower`` (what it does not fall below, None where not confirmed),
-        ``largest_sensitivity``, and for a single loop ``gain_margin``, ``phase_margin`` (degrees), ``margins_basis``; ``infinite``
-        lists the names of what is infinite.
+        ``largest_sensitivity``, and for a single loop ``gain_margin``, ``phase_margin`` (degrees), ``margins_basis``;
+        ``infinite`` lists the names of what is infinite.
     """
     sampled = plant.time.sampled
     try:
