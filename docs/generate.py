@@ -9,6 +9,8 @@ from __future__ import annotations
 import sys
 from collections.abc import Callable, Iterable, Sequence
 
+from realize.batch.jobs import JOB_FIELDS, STEP_FIELDS, verbs_of_jobs
+from realize.batch.naming import PLACEHOLDERS
 from realize.conversions.route import DOUBLE_ROWS, ROWS
 from realize.files.registry import FORMATS
 from realize.files.table_names import ROLES, UNITS
@@ -272,6 +274,48 @@ def column_units() -> str:
     return table(("unit", "spellings"), [(unit, listed(words)) for unit, words in spellings.items()], (20, 80))
 
 
+#: What a field of a job file takes -> how its value is written.
+IN_JOBS = {
+    "patterns": "a text, or a list of texts",
+    "failure": "one of ``stop``, ``set-aside``, ``keep``",
+    "seconds": 'seconds, or a text with a suffix: ``0.5``, ``"200ms"``',
+    "memory": 'a text such as ``"512MiB"`` or ``"2GiB"``',
+    "limits": "a table of claims and numbers",
+    "steps": "tables ``[[steps]]``",
+    "pattern": "a text",
+}
+
+
+def _job_table(fields: dict[str, tuple[str, str]]) -> str:
+    rows = [
+        (literal(name), safe(says), IN_JOBS.get(takes, WRITTEN.get(takes, "")))
+        for name, (takes, says) in fields.items()
+    ]
+    return table(("field", "means", "holds"), rows, (20, 50, 30))
+
+
+def job_fields() -> str:
+    """Return a table of the fields of a job file."""
+    return _job_table(JOB_FIELDS)
+
+
+def step_fields() -> str:
+    """Return a table of the fields of a step beside the options of its verb."""
+    return _job_table(STEP_FIELDS)
+
+
+def job_verbs() -> str:
+    """Return the verbs that a job file may use."""
+    return listed(verbs_of_jobs()) + "\n"
+
+
+def placeholders() -> str:
+    """Return a table of what the name of an output may hold."""
+    return table(
+        ("text", "stands for"), [(literal(f"{{{name}}}"), safe(says)) for name, says in PLACEHOLDERS.items()], (20, 80)
+    )
+
+
 PARTS: dict[str, Callable[[], str]] = {
     function.__name__.replace("_", "-"): function
     for function in (
@@ -296,6 +340,10 @@ PARTS: dict[str, Callable[[], str]] = {
         formats,
         column_names,
         column_units,
+        job_fields,
+        step_fields,
+        job_verbs,
+        placeholders,
     )
 }
 

@@ -11,6 +11,7 @@ from realize._version import __version__
 from realize.later import names_at_home
 
 if TYPE_CHECKING:
+    from realize.batch import Summary, run
     from realize.conversions.matrix_fraction import bezout_identity
     from realize.errors import ClaimFailed, InputError, RealizeError, Refused, UsageError
     from realize.files import read, write
@@ -38,6 +39,7 @@ if TYPE_CHECKING:
     from realize.verification.norms import h2_norm, hankel_norm, largest_gain
 
 _HOMES = {
+    "realize.batch": ("Summary", "run"),
     "realize.conversions.matrix_fraction": ("bezout_identity",),
     "realize.forms.coprime_factors": ("CoprimeFactors", "coprime_factors"),
     "realize.errors": ("ClaimFailed", "InputError", "RealizeError", "Refused", "UsageError"),
@@ -86,6 +88,7 @@ __all__ = [
     "Sections",
     "Signal",
     "StateSpace",
+    "Summary",
     "TimeBase",
     "TransferFunction",
     "UsageError",
@@ -107,6 +110,7 @@ __all__ = [
     "minimal",
     "read",
     "reduce",
+    "run",
     "stability_margin",
     "write",
 ]

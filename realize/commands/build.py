@@ -8,9 +8,8 @@ from typing import Any
 
 import click
 
-from realize.commands import values
 from realize.commands.common import Context
-from realize.schema import EXIT_STATUSES, KINDS, VERBS, Option, Verb, options_of
+from realize.schema import EXIT_STATUSES, KINDS, VERBS, Option, Verb, options_of, values
 
 
 def build_app(arguments: list[str]) -> click.Group:

@@ -2,17 +2,19 @@
 
 from __future__ import annotations
 
+import io
 import os
 import re
 import sys
 from collections.abc import Sequence
+from pathlib import Path
 
 from realize.errors import InputError, Refused, UsageError
 from realize.files.json_model import JSON
 from realize.files.json_model import write as write_json
 from realize.files.registry import FORMATS, Format, ReadOptions, by_suffix
 from realize.files.replacing import replacing
-from realize.files.sources import Source, open_source, reason
+from realize.files.sources import HEAD, Source, open_source, reason
 from realize.models import Model
 
 _LOOKS = (
@@ -91,7 +93,32 @@ def read(
     Refused
         When the model cannot be held.
     """
-    source = open_source(path)
+    return read_source(open_source(path), columns, allow_outside, columns_for_tables)
+
+
+def read_bytes(
+    data: bytes,
+    name: str,
+    *,
+    folder: str | os.PathLike[str] | None = None,
+    columns: Sequence[str] | None = None,
+    allow_outside: bool = False,
+) -> Model:
+    """Read a model or a table from the bytes of a file; ``folder`` is where matrix files beside it are looked for."""
+    source = Source(
+        name,
+        None if folder is None else Path(folder),
+        io.BytesIO(data),
+        True,
+        data[:HEAD],
+        os.path.splitext(name)[1].lower(),
+        len(data),
+    )
+    return read_source(source, columns, allow_outside, True)
+
+
+def read_source(source: Source, columns: Sequence[str] | None, allow_outside: bool, columns_for_tables: bool) -> Model:
+    """Read a model or a table from an open source, and close it; see `read`."""
     try:
         row = recognise(source)
         if columns_for_tables and row.name != "table":

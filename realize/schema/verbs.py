@@ -206,6 +206,19 @@ VERBS: dict[str, Verb] = {
             False,
         ),
         Verb(
+            "run",
+            "Do the steps of a job file with many files.",
+            ("JOBS",),
+            (
+                Option("processes", "integer", "worker processes; one a core unless given", metavar="N"),
+                Option("cluster", "text", "do the work on the cluster of this scheduler address", metavar="ADDRESS"),
+                Option("retry", "flag", "try again what was set aside before"),
+                Option("allow-outside", "flag", "allow inputs and an output folder outside the job file's folder"),
+            ),
+            False,
+            False,
+        ),
+        Verb(
             "demo",
             "Do the whole job on an invented example, in a fresh folder.",
             (),

@@ -15,7 +15,6 @@ import pytest
 
 import realize
 from realize.commands.build import build_app
-from realize.commands.values import PARSERS
 from realize.errors import ClaimFailed, InputError, RealizeError, Refused, UsageError
 from realize.models import MODEL_TYPES
 from realize.schema import (
@@ -39,6 +38,7 @@ from realize.schema import (
     receipt_from_record,
     receipt_to_record,
 )
+from realize.schema.values import PARSERS
 
 APP = build_app([])
 

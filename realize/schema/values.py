@@ -7,7 +7,7 @@ import re
 from collections.abc import Callable
 from typing import Any
 
-from realize.schema import CLAIMS
+from realize.schema.claims import CLAIMS
 
 _UNITS = {
     "hz": 2 * math.pi,
