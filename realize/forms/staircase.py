@@ -7,23 +7,21 @@ from typing import Any
 import numpy as np
 
 from realize.forms.coordinates import Array, Coordinates, Setting, Units, modes, take_units_out
-from realize.kernels.kalman import elementwise_distances, kalman_decomposition
+from realize.kernels.hidden_spaces import SEARCHED, Spaces, Unreached, hidden_spaces
+from realize.kernels.kalman import Kalman, kalman_decomposition, nearest_hidden
 from realize.kernels.separation import separated
 from realize.kernels.staircase import (
     Staircase,
     controllability_indices,
     observability_indices,
 )
+from realize.kernels.within_rounding import Side
 
 EPS = float(np.finfo(float).eps)
 #: A singular value above its threshold by less than this factor may be dropped.
 AMBIGUOUS = 1e3
 #: Ambiguous values are dropped where the next one is larger by this times the factor: rounding has no such gap.
 GAP = 1e4
-#: What was kept within this factor of its threshold is ambiguous: a chain of steps magnifies rounding by as much.
-BLIND = 1e7
-#: Up to this order each mode is tried by itself as well as by the staircase.
-SEARCHED = 60
 
 
 def rounding(order: int) -> float:
@@ -43,23 +41,40 @@ def _number(value: float) -> float | None:
     return float(value) if np.isfinite(value) else None
 
 
-def decision(found: Staircase) -> dict[str, Any]:
-    """Return what the sizes of a staircase rest on, singular values over their threshold."""
-    dropped, kept = found.largest_dropped, found.smallest_kept
+def decided(side: Side, threshold: float) -> dict[str, Any]:
+    """Return what a number of hidden modes rests on: changes of the numbers over the threshold.
+
+    Clear is what stays only with a change of a thousand times the threshold, while what went takes less than a quarter
+    of it, or there is a gap between them that rounding does not make.
+    """
+    dropped, kept = max(side.errors, default=0.0) / threshold, side.kept / threshold
     return {
+        "hidden": int(side.vectors.shape[1]),
         "smallest_kept": _number(kept),
         "largest_dropped": dropped,
         "gap": _number(kept / dropped) if dropped > 0 else None,
-        "ambiguous": bool(kept < BLIND or dropped > 1),
-        "steps": [
-            {
-                "kept": int(up.size),
-                "smallest_kept": _number(float(up[-1])) if up.size else None,
-                "largest_dropped": _number(float(down[0])) if down.size else None,
-            }
-            for up, down in zip(found.kept, found.dropped, strict=True)
-        ],
+        "ambiguous": bool(kept < AMBIGUOUS or (dropped > 0.25 and kept < AMBIGUOUS * GAP)),
     }
+
+
+def _changes(values: Any, side: Side) -> Array:
+    """Return for each mode the change that hides it: that of the nearest mode of the decision."""
+    if not side.modes:
+        return np.zeros(len(values))
+    found = np.array(side.modes)
+    return np.array([side.errors[int(np.argmin(np.abs(found - value)))] for value in values])
+
+
+def _steps(found: Staircase) -> list[dict[str, Any]]:
+    """Return the rank decisions of the steps, singular values over their threshold."""
+    return [
+        {
+            "kept": int(up.size),
+            "smallest_kept": _number(float(up[-1])) if up.size else None,
+            "largest_dropped": _number(float(down[0])) if down.size else None,
+        }
+        for up, down in zip(found.kept, found.dropped, strict=True)
+    ]
 
 
 def _listed(own: Any, changes: Array, period: float | None, why: str) -> list[dict[str, Any]]:
@@ -71,31 +86,21 @@ def _listed(own: Any, changes: Array, period: float | None, why: str) -> list[di
     return rows
 
 
-def _cautions(what: str, ambiguous: bool, removed: list[dict[str, Any]], order: int) -> tuple[str, ...]:
-    notes = []
-    if ambiguous:
-        notes.append(
-            f"The number of {what} states is ambiguous: a rank decision is too near to its threshold to be told from "
-            "magnified rounding (details: decisions)."
-        )
-    doubtful = [row for row in removed if row["elementwise_change"] > AMBIGUOUS * rounding(order)]
-    if doubtful:
-        worst = max(row["elementwise_change"] for row in doubtful)
-        notes.append(
-            f"{len(doubtful)} of the modes set apart as not {what} are so within the rounding of the largest numbers "
-            f"only: number by number it takes a relative change of {worst:.1e}, and one rounding is "
-            f"{rounding(order):.1e}. The number is ambiguous."
-        )
-    return tuple(notes)
+def _doubt(own: dict[str, Any], threshold: float) -> str:
+    """Return why a decision is ambiguous."""
+    kept = own["smallest_kept"]
+    if kept is not None and kept < AMBIGUOUS:
+        return f"numbers changed by {kept:.2g} times the threshold of {threshold:.1e} would hide one mode more"
+    return "what is hidden lies close to the threshold"
 
 
-def _staircase(A: Array, B: Array) -> tuple[Staircase, Array]:
+def _staircase(A: Array, B: Array) -> tuple[Staircase, Unreached, Array]:
     """Return the staircase of (A, B), inputs of like size for the decisions, and B in the new coordinates."""
     even, exponents = _even(B, 0)
     small = rounding(A.shape[0])
     limits = small * float(np.linalg.norm(even)), small * float(np.linalg.norm(A))
-    found = separated(A, even, limits, small, AMBIGUOUS, GAP, SEARCHED)
-    return found, np.ldexp(found.B, exponents)
+    found, decision = separated(A, even, limits, small, AMBIGUOUS, GAP)
+    return found, decision, np.ldexp(found.B, exponents)
 
 
 def reachable_staircase(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> Coordinates:
@@ -128,8 +133,8 @@ def reachable_staircase(A: Array, B: Array, C: Array, D: Array, setting: Setting
            (1981) 111-129 (from memory).
     """
     units = take_units_out(A, B, C, setting)
-    found, b = _staircase(units.A, units.B)
-    details, cautions = _told(units, found, units.A, units.B, setting, reach=True, channels=B.shape[1])
+    found, own, b = _staircase(units.A, units.B)
+    details, cautions = _told(units, found, own, setting, reach=True, channels=B.shape[1])
     return units.restored(
         found.A, b, units.C @ found.Q, D, found.Q, found.Q.T.copy(), details=details, cautions=cautions
     )
@@ -160,8 +165,8 @@ def observable_staircase(A: Array, B: Array, C: Array, D: Array, setting: Settin
     """
     units = take_units_out(A, B, C, setting)
     dual_a, dual_b = units.A.T.copy(), units.C.T.copy()
-    found, c = _staircase(dual_a, dual_b)
-    details, cautions = _told(units, found, dual_a, dual_b, setting, reach=False, channels=C.shape[0])
+    found, own, c = _staircase(dual_a, dual_b)
+    details, cautions = _told(units, found, own, setting, reach=False, channels=C.shape[0])
     return units.restored(
         found.A.T.copy(),
         found.Q.T @ units.B,
@@ -175,24 +180,44 @@ def observable_staircase(A: Array, B: Array, C: Array, D: Array, setting: Settin
 
 
 def _told(
-    units: Units, found: Staircase, A: Array, B: Array, setting: Setting, *, reach: bool, channels: int
+    units: Units, found: Staircase, own: Unreached, setting: Setting, *, reach: bool, channels: int
 ) -> tuple[dict[str, Any], tuple[str, ...]]:
-    n, r = A.shape[0], found.order
+    n, r = found.A.shape[0], found.order
     what = "reachable" if reach else "observable"
-    own, changes = elementwise_distances(A, B, found.A[r:, r:], found.Q[:, r:])
-    removed = _listed(own * np.ldexp(1.0, units.time), changes, setting.period, f"un{what}")
-    told = decision(found)
+    threshold = rounding(n)
+    values = np.linalg.eigvals(found.A[r:, r:]).astype(complex)
+    removed = _listed(values * np.ldexp(1.0, units.time), _changes(values, own.side), setting.period, f"un{what}")
+    told = decided(own.side, threshold)
     indices = controllability_indices if reach else observability_indices
     details = {
         "sizes": list(found.sizes),
         what: r,
         f"un{what}": n - r,
         ("controllability_indices" if reach else "observability_indices"): list(indices(found.sizes, channels)),
+        "decided": "exactly" if own.exactly else "within rounding",
         "removed": removed,
-        "threshold": rounding(n),
-        "decisions": told,
+        "threshold": threshold,
+        "decisions": told | {"steps": _steps(found)},
     }
-    return details, _cautions(what, told["ambiguous"], removed, n)
+    notes = []
+    if told["ambiguous"]:
+        notes.append(f"The number of {what} states is ambiguous: {_doubt(told, threshold)} (details: decisions).")
+    if own.blind:
+        notes.append(_CROWDED.format(f"number of {what} states is"))
+    if r != n - own.side.vectors.shape[1]:
+        notes.append(
+            f"The number of {what} states is ambiguous: the steps end before the modes do that can be told apart."
+        )
+    smallest = found.smallest_kept
+    if smallest < AMBIGUOUS and n - r == own.side.vectors.shape[1]:
+        notes.append(
+            f"The sizes of the steps are ambiguous: a singular value of {smallest:.1e} times its threshold was kept "
+            "(details: decisions, steps)."
+        )
+    return details, tuple(notes)
+
+
+_CROWDED = "The {} ambiguous: some poles are equal within rounding, and a mode hidden among them may have been missed."
 
 
 PARTS = ("reachable_and_observable", "reachable_only", "observable_only", "neither")
@@ -203,7 +228,8 @@ def kalman_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
 
     In this order A has the block pattern [* 0 * 0; * * * *; 0 0 * 0; 0 0 * *], B = [*; *; 0; 0], C = [* 0 * 0], zeros
     exact; the first part alone has the response of the plant. The transform is orthogonal unless unreachable states are
-    seen through reachable ones. Ranks are decided as in `reachable_staircase`.
+    seen through reachable ones. The dimensions are the exact ones, or, if those hide more, those that a relative change
+    of every number by at most 4 n eps makes.
 
     Parameters
     ----------
@@ -216,8 +242,9 @@ def kalman_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
     Returns
     -------
     Coordinates
-        Details: ``dimensions`` of the four parts; ``removed``: the modes of the last three, with frequency (rad/s),
-        damping ratio and why; ``decisions`` of each staircase; ``threshold`` (4 n eps).
+        Details: ``dimensions`` of the four parts; ``decided``; ``removed``: the modes of the last three, with frequency
+        (rad/s), damping ratio and why; ``decisions`` about what inputs reach and outputs see; ``threshold`` (4 n eps);
+        ``cleared``.
 
     References
     ----------
@@ -228,29 +255,30 @@ def kalman_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
     n = A.shape[0]
     even_b, exponents_b = _even(units.B, 0)
     even_c, exponents_c = _even(units.C, 1)
-    parts = kalman_decomposition(units.A, even_b, even_c, rounding(n), AMBIGUOUS, GAP, SEARCHED)
+    threshold = rounding(n)
+    spaces = hidden_spaces(units.A, even_b, even_c, threshold)
+    parts = kalman_decomposition(units.A, even_b, even_c, spaces)
     edges = np.cumsum([0, *parts.sizes])
     scale = np.ldexp(1.0, units.time)
     removed: list[dict[str, Any]] = []
     for k, why in ((1, "unobservable"), (2, "unreachable"), (3, "unreachable and unobservable")):
-        part = slice(int(edges[k]), int(edges[k + 1]))
-        own = parts.A[part, part]
-        if k == 1:
-            values, changes = elementwise_distances(units.A.T, units.C.T, own.T, parts.T[:, part])
-        else:
-            # the rows of S span with those of the other unreachable part what no input reaches
-            tail = slice(int(edges[2]), n)
-            values, changes = elementwise_distances(units.A, units.B, parts.A[tail, tail], parts.S[tail].T)
-            values, changes = _of_part(values, changes, own)
+        own = parts.A[edges[k] : edges[k + 1], edges[k] : edges[k + 1]]
+        values = np.linalg.eigvals(own).astype(complex)
+        changes = _changes(values, spaces.reachable_only if k == 1 else spaces.unreachable)
         removed += _listed(values * scale, changes, setting.period, why)
-    decisions = {name: decision(found) for name, found in parts.decisions.items()}
+    told = {
+        "reachable": decided(spaces.unreachable, threshold),
+        "observable": decided(spaces.reachable_only, threshold),
+        "observable_of_all": decided(spaces.unobservable, threshold),
+    }
     details = {
         "dimensions": dict(zip(PARTS, parts.sizes, strict=True)),
+        "decided": "exactly" if spaces.exactly else "within rounding",
         "removed": removed,
-        "threshold": rounding(n),
-        "decisions": decisions,
+        "threshold": threshold,
+        "cleared": parts.cleared,
+        "decisions": told,
     }
-    ambiguous = any(told["ambiguous"] for told in decisions.values())
     return units.restored(
         parts.A,
         np.ldexp(parts.B, exponents_b),
@@ -260,12 +288,31 @@ def kalman_states(A: Array, B: Array, C: Array, D: Array, setting: Setting) -> C
         parts.S,
         parts.condition,
         details,
-        _cautions("reachable and observable", ambiguous, removed, n),
+        _kalman_cautions(told, spaces, parts, threshold),
     )
 
 
-def _of_part(values: Any, changes: Array, own: Array) -> tuple[Any, Array]:
-    """Return the modes of a diagonal block, each with the change of the nearest mode of the whole."""
-    mine = np.linalg.eigvals(own) if own.size else np.zeros(0)
-    nearest = [int(np.argmin(np.abs(values - value))) for value in mine]
-    return mine.astype(complex), changes[nearest] if nearest else np.zeros(0)
+def _kalman_cautions(told: dict[str, Any], spaces: Spaces, parts: Kalman, threshold: float) -> tuple[str, ...]:
+    notes = []
+    for name, what in (("reachable", "reachable"), ("observable", "observable among the reachable")):
+        own = told[name]
+        if own["ambiguous"]:
+            notes.append(
+                f"The number of states that are {what} is ambiguous: {_doubt(own, threshold)} (details: decisions)."
+            )
+    if not notes and told["observable_of_all"]["ambiguous"]:
+        notes.append("Which of the unreachable states are observable is ambiguous (details: decisions).")
+    if spaces.blind:
+        notes.append(_CROWDED.format("dimensions are"))
+    if parts.cleared > AMBIGUOUS * threshold:
+        notes.append(
+            f"The dimensions are ambiguous: the blocks set to zero held {parts.cleared:.1e} of the matrices, which is "
+            "more than rounding makes."
+        )
+    searched = not spaces.proved and len(parts.A) <= SEARCHED
+    if not notes and searched and nearest_hidden(parts) < AMBIGUOUS * threshold:
+        notes.append(
+            "The dimensions are ambiguous: among the states that count as reachable, or as observable, a mode is "
+            "hidden within magnified rounding."
+        )
+    return tuple(notes)
