@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
+from realize.reports.coordinates import coordinates_rows
 from realize.reports.look import PLAIN, Page, bullets, facts, grid, laid_out, words
 from realize.reports.numbers import clean, hertz, prefixed, short
 from realize.schema import Claim, ModelMark, Receipt
@@ -34,6 +35,7 @@ def receipt_table(conversion: Any, *, page: Page = PLAIN) -> str:
     head.append(("to", _mark(receipt.result)))
     if len(receipt.route) > 2:
         head.append(("route", " → ".join(clean(stop) for stop in receipt.route)))
+    head += coordinates_rows(receipt.details)
     parts: list[Any] = [facts(head)]
     if receipt.claims:
         parts += [words(""), claims_grid(receipt.claims)]
