@@ -24,6 +24,8 @@ Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
 #: Up to this order the Hankel singular values come from one-sided Jacobi rotations, accurate far below the largest.
 JACOBI_ORDER = 200
+#: Binary digits that A must lose in size before its loops alone scale the states.
+WORTH_IT = 3
 #: How many frequencies, those of the poles nearest to the axis, tell what rounding in A does to the response.
 SENSITIVE_FREQUENCIES = 24
 
@@ -60,11 +62,56 @@ def _power(matrix: Array, exponents: NDArray[np.int64] | int) -> Array:
     return np.ldexp(matrix, np.clip(exponents, -5000, 5000).astype(np.int64) if np.ndim(exponents) else exponents)
 
 
+def _exponents(factors: Array) -> NDArray[np.int64]:
+    return np.frexp(factors)[1].astype(np.int64) - 1
+
+
+def _size(A: Array, states: NDArray[np.int64]) -> int:
+    """Return the exponent of the largest entry of A with its states in units 2^states."""
+    mantissa, exponent = np.frexp(np.abs(A))
+    return int(np.max((exponent + states[None, :] - states[:, None])[mantissa > 0], initial=-5000))
+
+
+def _scale_of_loops(pattern: Array, n: int) -> NDArray[np.int64] | None:
+    """Return exponents of states that are balanced by their loops alone; None where there is no loop of two states.
+
+    What inputs reach and outputs see scales the states of a strongly connected part by one common factor: where it had
+    a say inside, a chain between a large B and a small C could pull loops apart, with A far larger than its
+    eigenvalues.
+
+    Parameters
+    ----------
+    pattern : (N, N) array
+        Sizes of the entries of [A B 0; 0 0 0; C 0 0].
+    n : int
+        Number of states.
+    """
+    from scipy.sparse.csgraph import connected_components
+
+    count, label = connected_components(pattern[:n, :n] > 0, directed=True, connection="strong")
+    if count == n:
+        return None
+    same = label[:, None] == label[None, :]
+    inner = balancing_scale(np.where(same, pattern[:n, :n], 0.0))
+    states = _exponents(inner)
+    whole = np.concatenate([states, np.zeros(pattern.shape[0] - n, dtype=np.int64)])
+    even = np.ldexp(pattern, whole[None, :] - whole[:, None])
+    if not np.all(np.isfinite(even)):
+        return None
+    # the parts, then inputs and outputs, each as one
+    parts = np.concatenate([label, count + np.arange(pattern.shape[0] - n)])
+    outer = np.zeros((parts.max() + 1, parts.max() + 1))
+    np.maximum.at(outer, (parts[:, None], parts[None, :]), even)
+    return states + _exponents(balancing_scale(outer)[:count])[label]
+
+
 def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
     """Take units of time, inputs, outputs and states out of a model in powers of two.
 
     The states are balanced on the bordered matrix [A B; C 0], so that inputs and outputs count too; all inputs share
-    one factor and all outputs another, because balanced truncation depends on the weights between them.
+    one factor and all outputs another, because balanced truncation depends on the weights between them. Where that
+    makes A larger by more than a factor of eight than balancing by its loops does, strongly connected parts are
+    balanced by themselves first (a companion form with coefficients far from 1).
 
     Parameters
     ----------
@@ -90,8 +137,11 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             border[:n, :n], border[:n, n : n + m] = np.ldexp(A, -time), np.ldexp(B, -inputs)
             border[n + m :, :n] = np.ldexp(C, -outputs)
             # inputs have no row and outputs no column, so they are left alone
-            factor = balancing_scale(np.abs(border))
-            states = np.frexp(factor[:n])[1].astype(np.int64) - 1
+            pattern = np.abs(border)
+            states = _exponents(balancing_scale(pattern)[:n])
+            by_loops = _scale_of_loops(pattern, n)
+            if by_loops is not None and _size(A, by_loops) + WORTH_IT < _size(A, states):
+                states = by_loops
             between = states[None, :] - states[:, None]
             own = _power(A, between)
             if not np.all(np.isfinite(own)):

@@ -312,6 +312,9 @@ def balancing_scale(pattern: Array) -> Array:
             break
         for i in np.flatnonzero(worst > 2).tolist():
             row, column = float(work[i].max()), float(work[:, i].max())
+            if not (row > 0 and column > 0):
+                # what stood there has left the range of doubles meanwhile
+                continue
             # row / f and column * f meet at f = sqrt(row / column); logarithms first: the quotient may overflow
             step = round((math.log2(row) - math.log2(column)) / 2)
             if step:
