@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from realize.conversions.changed import Changed
-from realize.conversions.exact_coordinates import exact_matrices, refuse_beyond, setting_of
+from realize.conversions.exact_coordinates import exact_matrices, in_doubles, refuse_beyond, setting_of
 from realize.errors import Refused
 from realize.forms.coordinates import Array, Coordinates
 from realize.forms.registry import TABLE, Form
@@ -22,7 +22,7 @@ MATRICES_UP_TO = 200
 
 
 @dataclass(frozen=True)
-class _Explicit:
+class Explicit:
     """Matrices without E: those of the finite part, and what is put back beside it afterwards."""
 
     A: Array
@@ -54,13 +54,18 @@ def change(model: StateSpace, task: Task, name: str, *, of_source: bool) -> Chan
         If E is singular within rounding, numbers lie beyond the range of doubles, or the form does not exist.
     """
     form = TABLE[name]
-    if form.exact:
+    if form.in_doubles is not None and in_doubles(model, name, task.arithmetic):
+        refuse_beyond(model, name)
+        explicit = explicit_states(model, name)
+        with np.errstate(all="ignore"):
+            new = form.in_doubles(explicit.A, explicit.B, explicit.C, model.D, setting_of(task))
+    elif form.exact:
         states, finite, says = exact_matrices(model, task, name)
-        explicit = _Explicit(model.A, model.B, model.C, finite, 1.0, says)
+        explicit = Explicit(model.A, model.B, model.C, finite, 1.0, says)
         new = form.apply(states.A, states.B, states.C, states.D, setting_of(task))
     else:
         refuse_beyond(model, name)
-        explicit = _explicit(model, name)
+        explicit = explicit_states(model, name)
         with np.errstate(all="ignore"):
             new = form.apply(explicit.A, explicit.B, explicit.C, model.D, setting_of(task))
     _check(new, name)
@@ -69,14 +74,14 @@ def change(model: StateSpace, task: Task, name: str, *, of_source: bool) -> Chan
     return Changed(result, _record(form, new, explicit, of_source), new.cautions, condition)
 
 
-def _explicit(model: StateSpace, name: str) -> _Explicit:
+def explicit_states(model: StateSpace, name: str) -> Explicit:
     """Return A, B, C with E solved, or with the chain of a polynomial part set aside."""
     n = model.A.shape[0]
     if model.E is None or np.array_equal(model.E, np.eye(n)):
-        return _Explicit(model.A, model.B, model.C, n, 1.0, "")
+        return Explicit(model.A, model.B, model.C, n, 1.0, "")
     finite = finite_states(model)
     if finite is not None:
-        return _Explicit(
+        return Explicit(
             model.A[:finite, :finite],
             model.B[:finite],
             model.C[:, :finite],
@@ -100,7 +105,7 @@ def _explicit(model: StateSpace, name: str) -> _Explicit:
         )
     right = np.ldexp(np.hstack([model.A, model.B]), -rows[:, None])
     solved = np.ldexp(scipy.linalg.solve(own, right, check_finite=False), -columns[:, None])
-    return _Explicit(
+    return Explicit(
         solved[:, :n],
         solved[:, n:],
         model.C,
@@ -139,7 +144,7 @@ def _check(new: Coordinates, name: str) -> None:
             )
 
 
-def _assembled(model: StateSpace, explicit: _Explicit, new: Coordinates) -> StateSpace:
+def _assembled(model: StateSpace, explicit: Explicit, new: Coordinates) -> StateSpace:
     common = model.common()
     n, size = explicit.finite, model.A.shape[0]
     A, B, C, E = new.A, new.B, new.C, None
@@ -171,7 +176,7 @@ def _names(model: StateSpace, new: Coordinates) -> tuple[Signal, ...]:
     )
 
 
-def _record(form: Form, new: Coordinates, explicit: _Explicit, of_source: bool) -> dict[str, Any]:
+def _record(form: Form, new: Coordinates, explicit: Explicit, of_source: bool) -> dict[str, Any]:
     record = record_of(form, new, of_source)
     if explicit.says:
         record["descriptor"] = explicit.says

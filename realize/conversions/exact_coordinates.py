@@ -43,6 +43,13 @@ def _exact_cost(model: StateSpace, name: str) -> float:
     return jordan_operations(n, bits) if name == "jordan" else basis_operations(n, bits)
 
 
+def in_doubles(model: StateSpace, name: str, arithmetic: str) -> bool:
+    """Say whether a form of exact matrices is computed in doubles: where it can be, if asked or beyond the budget."""
+    if TABLE[name].in_doubles is None or arithmetic == "exact":
+        return False
+    return arithmetic == "double" or (exact_cost(model, name) > EXACT_BUDGET and not budget_lifted())
+
+
 def exact_matrices(model: StateSpace, task: Task, name: str) -> tuple[Any, int, str]:
     """Return the exact matrices of a state model, the number of its finite states, and what became of E.
 

@@ -294,9 +294,11 @@ def choose_arithmetic(task: Task) -> Choice:
     """Return the arithmetic of a conversion, from sizes and bit lengths alone, never from the clock."""
     if task.changes_coordinates and isinstance(task.model, StateSpace):
         if TABLE[task.form or ""].exact:
-            from realize.conversions.exact_coordinates import exact_cost
+            from realize.conversions.exact_coordinates import exact_cost, in_doubles
 
             predicted = exact_cost(task.model, task.form or "")
+            if in_doubles(task.model, task.form or "", task.arithmetic):
+                return Choice("double", task.arithmetic, predicted, EXACT_BUDGET)
             return Choice("exact", task.arithmetic, predicted, EXACT_BUDGET, "the numbers as given, each rounded once")
         operations = 30.0 * task.model.A.shape[0] ** 3
         return Choice("double", task.arithmetic, operations, EXACT_BUDGET, "new coordinates have no exact entries")

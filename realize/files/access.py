@@ -8,6 +8,7 @@ import re
 import sys
 from collections.abc import Sequence
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from realize.errors import InputError, Refused, UsageError
 from realize.files.json_model import JSON
@@ -16,6 +17,9 @@ from realize.files.registry import FORMATS, Format, ReadOptions, by_suffix
 from realize.files.replacing import replacing
 from realize.files.sources import HEAD, Source, open_source, reason
 from realize.models import Model
+
+if TYPE_CHECKING:
+    from realize.steps.conversion import Conversion
 
 _LOOKS = (
     (b"\x89PNG", "a PNG picture"),
@@ -141,8 +145,8 @@ def read_source(source: Source, columns: Sequence[str] | None, allow_outside: bo
             source.stream.close()
 
 
-def write(model: Model, path: str | os.PathLike[str]) -> None:
-    """Write a model, whole or not at all; the suffix chooses the format, ``-`` is standard output in JSON.
+def write(model: Model | Conversion, path: str | os.PathLike[str]) -> None:
+    """Write a model, or that of a conversion, whole or not at all; the suffix chooses the format, ``-`` is standard output in JSON.
 
     Raises
     ------
@@ -151,6 +155,9 @@ def write(model: Model, path: str | os.PathLike[str]) -> None:
     InputError
         When the file cannot be written.
     """
+    from realize.steps.conversion import model_of
+
+    model = model_of(model)
     name = os.fspath(path)
     if name == "-":
         write_json(model, sys.stdout.buffer)

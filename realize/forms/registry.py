@@ -32,7 +32,7 @@ from typing import TYPE_CHECKING, Any
 from realize.later import Later
 
 if TYPE_CHECKING:
-    from realize.forms.coordinates import Coordinates, Setting
+    from realize.forms.coordinates import Array, Coordinates, Setting
 
 
 @dataclass(frozen=True)
@@ -56,6 +56,8 @@ class Form:
     otherwise : bool
         True where a state model that has no transform to the form (`NoTransform`) still gets it from its response, by
         the rows of the conversion table.
+    in_doubles : function, optional
+        The same form in doubles, for matrices beyond the budget of exact arithmetic.
     """
 
     name: str
@@ -66,6 +68,7 @@ class Form:
     from_states_only: bool = False
     exact: bool = False
     otherwise: bool = False
+    in_doubles: Callable[[Array, Array, Array, Array, Setting], Coordinates] | None = None
 
     @property
     def page(self) -> str:
@@ -207,6 +210,7 @@ TABLE: dict[str, Form] = {
             from_states_only=True,
             exact=True,
             otherwise=True,
+            in_doubles=Later("realize.forms.luenberger", "luenberger_form"),
         ),
         Form(
             "controllability",

@@ -199,7 +199,7 @@ def convert(
             result = value.model if isinstance(value, Changed) else value
             shape = form
             claims = conversion_claims(source, result, shape in STRUCTURED, limits)
-            if changed is not None and form not in STRUCTURED:
+            if changed is not None and (form not in STRUCTURED or isinstance(source, StateSpace)):
                 _refuse_ruin(task, claims, changed, limits)
         cautions = [*_cautions(source, result, to), *task.notes, *_costly(choice)]
         return finish(
@@ -303,9 +303,9 @@ def _from_response(task: Task, reason: str) -> tuple[list[str], Changed, Choice]
         )
     assert isinstance(value, StateSpace)
     if task.form == "modal":
-        from realize.forms.modal_blocks import listed_blocks
+        from realize.conversions.modal_states import modal_by_eigenvectors
 
-        record["blocks"] = listed_blocks(value.A, value.time.seconds if value.time.sampled else None)
+        return route, modal_by_eigenvectors(task, value, record, caution, reason), choose_arithmetic(other)
     return route, Changed(value, record, (caution,), float("inf")), choose_arithmetic(other)
 
 
@@ -340,21 +340,30 @@ def _peak(claims: list[Claim]) -> float:
 
 
 def _refuse_ruin(task: Task, claims: list[Claim], changed: Changed, limits: dict[str, float] | None) -> None:
-    """Raise `Refused` where the peak error exceeds its default limit (or a larger one that was asked for)."""
+    """Raise `Refused` where a claim exceeds its default limit (or a larger one that was asked for).
+
+    Dense coordinates are judged by the peak error; companion forms of a state model, whose coefficients may be ruined
+    by their one rounding, by the response error and the end behaviour as well.
+    """
     if task.force:
         return
-    limit = max(CLAIMS["peak-error"].limits["convert"], (limits or {}).get("peak-error", 0.0))
-    claim = next((claim for claim in claims if claim.name == "peak-error"), None)
-    if claim is None or (not claim.infinite and (claim.value is None or claim.value <= limit)):
-        return
-    size = "infinite" if claim.infinite or claim.value is None else f"{claim.value:.1e}"
-    condition = ""
-    if np.isfinite(changed.condition):
-        condition = f", with a transform of condition number {changed.condition:.1e}"
-    raise Refused(
-        f"{task.form} coordinates ruin this model: the peak error would be {size} (limit {limit:g}){condition}; "
-        f"use --form {TABLE[task.form or ''].instead} instead, or --force to have it all the same"
-    )
+    for claim in claims:
+        defaults = CLAIMS[claim.name].limits
+        default = defaults.get("convert", defaults.get("convert:structured") if task.form in STRUCTURED else None)
+        if default is None:
+            continue
+        limit = max(default, (limits or {}).get(claim.name, 0.0))
+        if not claim.infinite and (claim.value is None or claim.value <= limit):
+            continue
+        size = "infinite" if claim.infinite or claim.value is None else f"{claim.value:.1e}"
+        condition = ""
+        if np.isfinite(changed.condition):
+            condition = f", with a transform of condition number {changed.condition:.1e}"
+        raise Refused(
+            f"{task.form} coordinates ruin this model: the {claim.name.replace('-', ' ')} would be {size} (limit "
+            f"{limit:g}){condition}; use --form {TABLE[task.form or ''].instead} instead, or --force to have it all "
+            "the same"
+        )
 
 
 def _failures(claims: list[Claim]) -> set[str]:

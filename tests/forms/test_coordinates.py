@@ -269,3 +269,37 @@ def test_the_table_is_part_of_the_schema() -> None:
     assert set(TABLE) <= set(FORMS)
     for name, form in TABLE.items():
         assert form.name == name and form.says and form.source and form.instead in FORMS and form.instead != name
+
+
+@pytest.mark.parametrize("seed", range(30))
+def test_scaling_a_scaled_model_changes_nothing(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    n, m, p = rng.integers(1, 12), rng.integers(1, 4), rng.integers(1, 4)
+    spread = rng.choice([1, 6, 30, 150, 300])
+
+    def drawn(rows: int, columns: int) -> Any:
+        size = rng.standard_normal((rows, columns)) * 10.0 ** rng.uniform(-spread, spread, (rows, columns))
+        return np.where(rng.random((rows, columns)) < rng.random(), 0.0, size)
+
+    given = drawn(n, n), drawn(n, m), drawn(p, n), np.zeros((p, m))
+    setting = Setting(period=None if seed % 2 else 1.0)
+    with np.errstate(all="ignore"):
+        one = TABLE["scaled"].apply(*given, setting)
+        two = TABLE["scaled"].apply(one.A, one.B, one.C, one.D, setting)
+    assert not any(two.details["exponents"]) and np.array_equal(one.A, two.A)
+    k = np.array(one.details["exponents"])
+    # nothing was rounded
+    for new, old in ((np.ldexp(one.A, k[:, None] - k), given[0]), (np.ldexp(one.B, k[:, None]), given[1])):
+        assert np.array_equal(new, old)
+
+
+def test_a_filter_in_companion_form_far_from_1_has_every_form() -> None:
+    """12th order at 1 kHz: coefficients up to 1e45, poles all of one size, a chain from a large B to a small C."""
+    poles = 2e3 * np.pi * np.exp(1j * np.pi * (2 * np.arange(12) + 13) / 24)
+    a = np.real(np.poly(poles))
+    A = np.vstack([-a[1:], np.eye(12)[:-1]])
+    plant = StateSpace(A=A, B=np.eye(12)[:, :1], C=a[-1] * np.eye(12)[-1:])
+    for form in TABLE:
+        done = realize.convert(plant, "state-space", form=form).require()
+        assert done.receipt.claim("peak-error").value < 1e-12, form
+        assert "transform" in done.receipt.details["coordinates"], form
