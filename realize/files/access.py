@@ -146,7 +146,9 @@ def read_source(source: Source, columns: Sequence[str] | None, allow_outside: bo
 
 
 def write(model: Model | Conversion, path: str | os.PathLike[str]) -> None:
-    """Write a model, or that of a conversion, whole or not at all; the suffix chooses the format, ``-`` is standard output in JSON.
+    """Write a model, or that of a conversion, whole or not at all.
+
+    The suffix chooses the format; ``-`` is standard output in JSON.
 
     Raises
     ------
