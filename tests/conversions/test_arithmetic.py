@@ -115,7 +115,7 @@ def test_coefficients_of_such_an_order_are_refused_unless_asked_for(to: str, for
     source = flexible(200)
     one = StateSpace(A=source.A, B=source.B[:, :1], C=source.C)
     with pytest.raises(Refused, match="--arithmetic exact or double"):
-        plan_route(Task(one, to, form))
+        convert(one, to, form=form)
     assert plan_route(Task(one, to, form, arithmetic="double"))[-1].target.endswith(form or to)
     assert plan_route(Task(one, to, form, arithmetic="exact"))
 
