@@ -64,6 +64,12 @@ class Step:
         """True where the step hands on another model."""
         return VERBS[self.verb].makes_model
 
+    @property
+    def files(self) -> list[str]:
+        """Paths of the files that the options name, such as a controller."""
+        names = [option.keyword for option in VERBS[self.verb].options if option.takes == "path"]
+        return [self.options[name] for name in names if name in self.options]
+
     def plain(self) -> dict[str, Any]:
         """Return all that decides the result, ready for JSON; without the line."""
         names = ("verb", "options", "limits", "output", "strict", "second_opinion")
@@ -281,9 +287,19 @@ class _Reader:
         if option.name not in given:
             return None
         try:
-            return value_of(option.takes, given[option.name], option.choices)
+            found = value_of(option.takes, given[option.name], option.choices)
+            return self.beside(found) if option.takes == "path" else found
         except ValueError as error:
             raise self.wrong(str(error), option.says, *path, option.name) from None
+
+    def beside(self, name: str) -> str:
+        """Return the path of a file that a step needs; raises ValueError where it is absent or lies outside."""
+        path = os.path.realpath(self.folder / name)
+        if not self.allow_outside and not Path(path).is_relative_to(os.path.realpath(self.folder)):
+            raise ValueError(f"{name!r} leads out of the job file's folder; --allow-outside allows it")
+        if not os.path.isfile(path):
+            raise ValueError(f"no file {name!r}")
+        return path
 
     def check(self, step: Step, verb: Verb, *here: str | int) -> None:
         """Check what goes together: the name of the result, and options of a verb with each other."""

@@ -8,6 +8,7 @@ import os
 import re
 import stat
 from collections.abc import Iterator
+from functools import cache
 from pathlib import Path
 from typing import Any
 
@@ -73,12 +74,18 @@ def _named(data: bytes) -> Iterator[str]:
             continue
 
 
+@cache
+def digest_of_file(path: str) -> str:
+    """Return the digest of a file that a step needs; it is taken to stay as it is while a run goes on."""
+    return take_input(path)[0]
+
+
 def chain(job: Job, input_digest: str) -> list[str]:
     """Return the key of every step for an input: a digest of input, steps so far, options and version."""
     keys = []
     key = f"realize {__version__}, job 1\n{input_digest}\n{job.second_opinion_every}"
     for step in job.steps:
-        text = json.dumps(step.plain(), sort_keys=True)
+        text = json.dumps(step.plain(), sort_keys=True) + "".join(digest_of_file(path) for path in step.files)
         key = hashlib.sha256(f"{key}\n{text}".encode()).hexdigest()
         keys.append(key)
     return keys

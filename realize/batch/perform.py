@@ -29,9 +29,21 @@ def _takes(verb: str) -> frozenset[str]:
     return frozenset(inspect.signature(getattr(verbs, verb)).parameters)
 
 
+@cache
+def _loaded(path: str) -> Any:
+    from realize.files import read
+
+    return read(path)
+
+
 def apply(step: Step, model: Any, options: dict[str, Any], second_opinion: bool | None) -> Conversion:
     """Return the result of a step that makes a model."""
-    given = {name: value for name, value in options.items() if name in _takes(step.verb)}
+    files = step.files
+    given = {
+        name: _loaded(value) if value in files else value
+        for name, value in options.items()
+        if name in _takes(step.verb)
+    }
     made = getattr(verbs, step.verb)(model, **given, limits=step.limits or None, second_opinion=second_opinion)
     assert isinstance(made, Conversion)
     return made

@@ -79,6 +79,7 @@ class _Run:
     def run(self) -> Summary:
         job = self.job
         self.started = time.monotonic()
+        keys.digest_of_file.cache_clear()
         items = list_inputs(job)
         root = str(job.output)
         try:

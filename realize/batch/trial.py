@@ -19,7 +19,7 @@ def contradiction(step: Step) -> str:
     if step.verb == "convert" and "to" not in step.options:
         return "convert needs to = KIND"
     try:
-        apply(step, _plant(step.verb), step.options, second_opinion=False)
+        apply(step, small_plant(step.verb), step.options, second_opinion=False)
     except UsageError as error:
         return str(error)
     except (RealizeError, ArithmeticError):
@@ -27,7 +27,8 @@ def contradiction(step: Step) -> str:
     return ""
 
 
-def _plant(verb: str) -> Any:
+def small_plant(verb: str) -> Any:
+    """Return the smallest model or data set that a verb takes."""
     from realize.models import FrequencyResponse, TransferFunction
 
     if verb != "fit":

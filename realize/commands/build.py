@@ -121,7 +121,12 @@ def _callback(verb: Verb) -> Callable[..., int]:
             # None: asked where the claims leave something open
             second_opinion=options.pop("second_opinion", None),
         )
-        context.check()
+        lines = options.pop("lines", False)
+        context.check(lines=lines)
+        if lines:
+            from realize.commands.lines import execute
+
+            return execute(context, options)
         return module.execute(context, **options)
 
     return call

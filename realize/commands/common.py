@@ -30,11 +30,11 @@ class Context:
     limits: dict[str, float] = field(default_factory=dict)
     second_opinion: bool | None = None
 
-    def check(self) -> None:
+    def check(self, *, lines: bool = False) -> None:
         """Refuse what cannot work before any work is done."""
         if self.json and self.output == "-":
             raise UsageError("--json and -o - both want standard output; give a file to one of them")
-        if self.verb in ("fit", "convert", "minimal", "reduce") and self.output not in (None, "-"):
+        if not lines and self.verb in ("fit", "convert", "minimal", "reduce") and self.output not in (None, "-"):
             from realize.files import format_for_writing
 
             format_for_writing(self.output)

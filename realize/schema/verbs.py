@@ -244,6 +244,7 @@ RECEIPT_OPTIONS: tuple[Option, ...] = (
         "switch",
         "ask an independent library for the same step; unless said otherwise, where a limited claim is not proved",
     ),
+    Option("lines", "flag", "read one model in JSON a line, and write one a line; a bad line gives an error record"),
 )
 
 EXIT_STATUSES = {

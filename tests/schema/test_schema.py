@@ -210,7 +210,7 @@ def test_statuses_and_exceptions() -> None:
     statuses = {error.exit_status for error in (RealizeError, UsageError, InputError, ClaimFailed, Refused)}
     assert statuses == {1, 2, 3, 4, 5}
     assert statuses | {0, 130} == set(EXIT_STATUSES)
-    assert {option.name for option in RECEIPT_OPTIONS} == {"strict", "limit", "second-opinion"}
+    assert {option.name for option in RECEIPT_OPTIONS} == {"strict", "limit", "second-opinion", "lines"}
 
 
 @pytest.mark.parametrize(
