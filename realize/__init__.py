@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from realize.errors import ClaimFailed, InputError, RealizeError, Refused, UsageError
     from realize.files import read, write
     from realize.forms.coprime_factors import CoprimeFactors, coprime_factors
+    from realize.interop import from_library, to_arrays, to_library
     from realize.models import (
         DeadTime,
         FrequencyResponse,
@@ -44,6 +45,7 @@ _HOMES = {
     "realize.forms.coprime_factors": ("CoprimeFactors", "coprime_factors"),
     "realize.errors": ("ClaimFailed", "InputError", "RealizeError", "Refused", "UsageError"),
     "realize.files": ("read", "write"),
+    "realize.interop": ("from_library", "to_arrays", "to_library"),
     "realize.models": (
         "DeadTime",
         "FrequencyResponse",
@@ -100,6 +102,7 @@ __all__ = [
     "coprime_factors",
     "explain",
     "fit",
+    "from_library",
     "gap_distance",
     "h2_norm",
     "hankel_norm",
@@ -112,6 +115,8 @@ __all__ = [
     "reduce",
     "run",
     "stability_margin",
+    "to_arrays",
+    "to_library",
     "write",
 ]
 

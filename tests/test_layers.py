@@ -128,12 +128,14 @@ def test_imports_point_one_way(path: Path) -> None:
 @pytest.mark.parametrize("library", ["slycot", "control"])
 def test_independent_libraries_are_imported_in_the_child_alone(library: str) -> None:
     users = {
-        str(path.relative_to(PACKAGE))
+        (str(path.relative_to(PACKAGE)), found.at_top)
         for path in MODULES
         for found in imports_of(path)
         if found.module.partition(".")[0] == library
     }
-    assert users <= {CHILD}
+    # objects of control go in and out where somebody has them: imported there, inside the functions
+    allowed = {(CHILD, True), (CHILD, False)} | ({("interop/objects.py", False)} if library == "control" else set())
+    assert users <= allowed
     for path in MODULES:
         for node in ast.walk(tree_of(path)):
             if isinstance(node, ast.Call) and getattr(node.func, "id", getattr(node.func, "attr", "")) in (

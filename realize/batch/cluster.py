@@ -83,7 +83,7 @@ def cluster_workers(job: Job, address: str) -> Iterator[Any]:
 
 
 def _work(client: Any, job: Job, tasks: Iterator[Task]) -> Iterator[tuple[Task, Reply] | None]:
-    from distributed import FIRST_COMPLETED, wait
+    from distributed import wait
 
     text = json.dumps(job_to_record(job))
     flying: dict[Any, list[Task]] = {}
@@ -111,7 +111,7 @@ def _work(client: Any, job: Job, tasks: Iterator[Task]) -> Iterator[tuple[Task, 
                 continue
             return
         try:
-            done = wait(list(flying), timeout=1, return_when=FIRST_COMPLETED).done
+            done = wait(list(flying), timeout=1, return_when="FIRST_COMPLETED").done
         except TimeoutError:
             if client.status != "running":
                 raise RuntimeError("the scheduler of the cluster has gone") from None

@@ -66,8 +66,10 @@ def _run(arguments: list[str]) -> int:
         return 5
     except (KeyboardInterrupt, BrokenPipeError):
         raise
-    except SystemExit:  # click's own way of ending when whoever read standard output has gone
-        raise BrokenPipeError from None
+    except SystemExit:
+        if "_REALIZE_COMPLETE" in os.environ:  # click's own way of having answered a shell that completes
+            return 0
+        raise BrokenPipeError from None  # and of ending when whoever read standard output has gone
     except Exception as error:  # the last line of defence: whatever is left is a bug, and is said to be one
         traceback.print_exc()
         _report(f"internal fault (a bug): {type(error).__name__}: {error}", 1, as_json)

@@ -123,6 +123,15 @@ class Offset:
     states: tuple[float, ...] | None = None
 
 
+def _freeze(value: Any) -> None:
+    """Make the arrays of a copied model read-only again, also those in nested tuples."""
+    if isinstance(value, np.ndarray):
+        value.flags.writeable = False
+    elif isinstance(value, tuple) and value and isinstance(value[0], (tuple, np.ndarray)):
+        for entry in value:
+            _freeze(entry)
+
+
 @dataclass(frozen=True, eq=False, kw_only=True)
 class Model:
     """Base of every kind of model: frozen, validated, with read-only arrays.
@@ -255,6 +264,11 @@ class Model:
 
     def __getstate__(self) -> dict[str, Any]:
         return {name: value for name, value in self.__dict__.items() if name != "_memory"}
+
+    def __setstate__(self, state: dict[str, Any]) -> None:
+        for value in state.values():
+            _freeze(value)
+        self.__dict__.update(state)
 
     def parameters(self) -> dict[str, Any]:
         """Return the kind's own fields by name, in the order of the schema, None for those not given."""

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import Self
+from importlib import import_module
+from typing import Any, Self
 
 from realize.errors import ClaimFailed
 from realize.models import Model
@@ -54,6 +55,16 @@ def _worded(claim: Claim) -> str:
     return "not available" if claim.value is None else f"{claim.value:.3g}"
 
 
-def model_of(value: Model | Conversion) -> Model:
-    """Return the model of a model or a conversion."""
-    return value.model if isinstance(value, Conversion) else value
+#: Reads what is neither a model nor a conversion: objects of other libraries, and arrays. It stands in a layer above
+#: the verbs, and is looked up by name when it is needed.
+OTHERS = ("realize.interop", "from_library")
+
+
+def model_of(value: Any) -> Model:
+    """Return the model of a model, a conversion, an object of another library, or a tuple of arrays."""
+    if isinstance(value, Conversion):
+        return value.model
+    if isinstance(value, Model):
+        return value
+    home, name = OTHERS
+    return getattr(import_module(home), name)(value)  # type: ignore[no-any-return]
