@@ -111,7 +111,8 @@ def _work(client: Any, job: Job, tasks: Iterator[Task]) -> Iterator[tuple[Task, 
                 continue
             return
         try:
-            done = wait(list(flying), timeout=1, return_when="FIRST_COMPLETED").done
+            with client.as_current():
+                done = wait(list(flying), timeout=1, return_when="FIRST_COMPLETED").done
         except TimeoutError:
             if client.status != "running":
                 raise RuntimeError("the scheduler of the cluster has gone") from None

@@ -54,12 +54,12 @@ def _from_control(value: Any) -> Model:
     kept = carried(value, (value.noutputs, value.ninputs), count)
     common: dict[str, Any] = {
         "time": time_of(value.dt, kept),
-        "inputs": signals(value.input_labels, "u", kept and kept.inputs),
-        "outputs": signals(value.output_labels, "y", kept and kept.outputs),
-        "offset": kept and kept.offset,
+        "inputs": signals(value.input_labels, "u", kept.inputs if kept else None),
+        "outputs": signals(value.output_labels, "y", kept.outputs if kept else None),
+        "offset": kept.offset if kept else None,
     }
     if isinstance(value, control.StateSpace):
-        states = signals(value.state_labels, "x", kept and kept.states)
+        states = signals(value.state_labels, "x", kept.states if kept else None)
         return StateSpace(A=value.A, B=value.B, C=value.C, D=value.D, states=states, **common)
     if isinstance(value, control.TransferFunction):
         return TransferFunction(numerator=value.num_list, denominator=value.den_list, **common)
