@@ -16,6 +16,8 @@ LARGE = 400
 BLOCK = 32
 #: Points treated together.
 POINTS = 48
+#: Samples are no closer than this fraction of the distance to the nearest pole.
+SHARE = 0.2
 
 
 class SchurResponse:

@@ -9,9 +9,11 @@ from functools import cached_property
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.errors import Refused
 from realize.kernels.balancing import balanced_part
 from realize.kernels.norms import gains, pole_frequencies, response_evaluator
 from realize.kernels.residualisation import steady_state_gain
+from realize.kernels.schur_response import SHARE, thinned
 from realize.reduction.prepare import Prepared
 from realize.reduction.result import Projected
 
@@ -54,9 +56,16 @@ class Meter:
         self.order = model[0].shape[0]
         self._band = band
         none = np.zeros(prepared.D.shape)
-        self._direct = np.ldexp(prepared.D, -prepared.scaled.gain)
         self._model = *model, none
         self._ends = band is None and not prepared.sampled
+
+    @cached_property
+    def _direct(self) -> Array:
+        with np.errstate(over="ignore"):
+            direct = np.ldexp(self._prepared.D, -self._prepared.scaled.gain)
+        if not np.all(np.isfinite(direct)):
+            raise Refused("the feed-through is too large beside the rest of the response; ask for an absolute error")
+        return direct
 
     @cached_property
     def _reference(self) -> Callable[[NDArray[np.complex128]], NDArray[np.complex128]]:
@@ -79,6 +88,8 @@ class Meter:
             inside = seeds[(seeds > low) & (seeds < high)]
             seeds = np.unique(np.concatenate([[low, high], inside, np.geomspace(start, high, SPREAD)]))
         most = MANY if self.order <= FULL else FEW
+        if self.order:
+            seeds = thinned(seeds, self._points(seeds), poles, SHARE / 2)
         if seeds.size > most:
             seeds = seeds[np.unique(np.linspace(0, seeds.size - 1, most).astype(int))]
         return self._away_from_axis_poles(seeds) if self._whole else seeds

@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from realize.errors import InputError, Refused
-from realize.models import Model, is_data
+from realize.models import Model, StateSpace, is_data
 from realize.schema import Claim, judge
 from realize.verification.proof import square_root
 from realize.verification.views import View
@@ -226,5 +226,10 @@ def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: 
 
     band = whole_band(view, other=others[0] if others else None)
     w = seeds(band, view.rough_poles, *(other.rough_poles for other in others))
+    if isinstance(view.model, StateSpace) and view.model.large_response() is not None:
+        from realize.kernels.schur_response import SHARE, thinned
+
+        poles = np.concatenate([one.rough_poles.s for one in (view, *others)])
+        w = thinned(w, np.asarray(1j * w, dtype=complex), poles, SHARE)
     value, where = largest(size, w, band)
     return Extreme(value, where, None)

@@ -8,7 +8,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels import norms
-from realize.kernels.schur_response import thinned
+from realize.kernels.schur_response import SHARE, thinned
 from realize.models import Model, StateSpace
 from realize.models.state_space import is_identity
 from realize.schema import Claim, judge
@@ -27,8 +27,6 @@ ComplexArray = NDArray[np.complex128]
 
 #: Relative tolerance of the peak search; the interval it leaves is part of the uncertainty.
 TOLERANCE = 1e-9
-#: Samples of a large model are no closer than this fraction of the distance to the nearest pole.
-APART = 0.2
 
 
 def difference_states(first: StateSpace, second: StateSpace) -> tuple[Array, Array, Array, Array]:
@@ -251,7 +249,7 @@ def _in_doubles(pair: Pair, first: Model, second: Model, band: Band) -> tuple[fl
 def _of_large(pair: Pair, band: Band, w: Array, direct: Array | None) -> tuple[float, float, float | None, float]:
     """The same for a large source: no Hamiltonian, and no two frequencies closer than the response can tell apart."""
     poles: ComplexArray = np.concatenate([view.rough_poles.s for view in (pair.source, pair.result)])
-    w = thinned(w, np.asarray(1j * w, dtype=complex), poles, APART)
+    w = thinned(w, np.asarray(1j * w, dtype=complex), poles, SHARE)
     tell(f"response of {pair.source.model.order} states at {w.size} frequencies")
     source = pair.source.response(w)
     difference = norms.gains(pair.result.response(w) - source)

@@ -49,7 +49,8 @@ def gap_of_reduction(
     """
     if not same_outer_delays(plant, result):
         return judge("nu-gap", None, note="not available: dead times differ between channels")
-    single = plant.with_(dead_time=None), result.with_(dead_time=None)
+    # the same object where there is nothing to take off: what it remembers is not made again
+    single = tuple(model if model.dead_time is None else model.with_(dead_time=None) for model in (plant, result))
     small = (plant.order or 0) <= EXACT_ORDER and plant.shape[0] * plant.shape[1] <= EXACT_CHANNELS
     if small and all(minors_affordable(view_of(model)) for model in single):
         exact = gap_claim(*single)
