@@ -12,11 +12,14 @@ from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
 from realize.kernels.balancing import scale_model
-from realize.kernels.within_rounding import CLUSTER, hidden_side, spectra
+from realize.kernels.within_rounding import Part, Side, hidden_side, spectra
 
 Array = NDArray[np.float64]
+EPS = float(np.finfo(float).eps)
 #: Up to this order the model is truncated in balanced coordinates of high precision.
 HIGH_PRECISION = 120
+#: A step in the singular values of F' V this large makes their rank clear.
+CLEAR = 1e3
 
 
 class Mode(NamedTuple):
@@ -39,8 +42,9 @@ class Hidden:
         Smallest relative change of the numbers found that would hide one more mode.
     unreachable, unobservable : arrays (n, k)
         Left and right vectors of what goes, in the model's own coordinates.
-    clustered : int
-        Poles of the largest cluster: among three and more the search may miss what is hidden.
+    doubtful : bool
+        How many modes of a group of near eigenvalues are hidden on both sides was no clear decision, or a mode among
+        them may have been missed.
     """
 
     order: int
@@ -48,7 +52,7 @@ class Hidden:
     kept: float
     unreachable: Array
     unobservable: Array
-    clustered: int
+    doubtful: bool
 
 
 def _plain(A: Array, B: Array, E: Array | None) -> tuple[Array, Array]:
@@ -83,47 +87,74 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
     columns, rows = _channels(B, C)
     scaled = scale_model(A, B * columns, C * rows[:, None], sampled=sampled)
     left, right = spectra(scaled.A)
-    first = hidden_side(scaled.A, scaled.B, threshold, spectrum=left)
-    if first.modes:
-        second = hidden_side(scaled.A.T, scaled.C.T, threshold, _orthogonal_to(first.vectors))
-    else:
-        second = hidden_side(scaled.A.T, scaled.C.T, threshold, spectrum=right)
-    modes = []
+    first = hidden_side(scaled.A, scaled.B, threshold, left)
+    second = hidden_side(scaled.A.T, scaled.C.T, threshold, right)
     unit = math.ldexp(1.0, scaled.time)
-    for pole, change in zip(first.modes, first.errors, strict=True):
-        modes.append(Mode(pole * unit, UNREACHABLE, change))
-    for pole, change in zip(second.modes, second.errors, strict=True):
-        modes.append(Mode(pole * unit, UNOBSERVABLE, change))
-    if first.modes:
-        every = hidden_side(scaled.A.T, scaled.C.T, threshold, spectrum=right)
-        both = len(every.modes) - len(second.modes)
-        spare = [pole * unit for pole in every.modes]
-        for pole in second.modes:
-            spare.pop(int(np.argmin([abs(pole * unit - other) for other in spare])) if spare else 0)
-        for other in spare[: max(both, 0)]:
-            near = [k for k, mode in enumerate(modes) if mode.why == UNREACHABLE]
-            if near:
-                k = min(near, key=lambda k: abs(modes[k].pole - other))
-                modes[k] = Mode(modes[k].pole, BOTH, modes[k].change)
+    modes = []
+    doubtful, both = first.doubtful or second.doubtful, 0
+    for unreachable, unobservable, poles in _blocks(first, second):
+        count, clear = _shared(unreachable, unobservable, poles)
+        doubtful, both = doubtful or not clear, both + count
+        change = max((part.error for part in (*unreachable, *unobservable)), default=0.0)
+        for k, pole in enumerate(pole for part in unreachable for pole in part.modes):
+            modes.append(Mode(pole * unit, BOTH if k < count else UNREACHABLE, change))
+        for pole in [pole for part in unobservable for pole in part.modes][count:]:
+            modes.append(Mode(pole * unit, UNOBSERVABLE, change))
     size = np.ldexp(1.0, scaled.states)
     return Hidden(
-        A.shape[0] - len(first.modes) - len(second.modes),
+        A.shape[0] - len(modes),
         sorted(modes, key=lambda mode: (abs(mode.pole), mode.pole.real, -mode.pole.imag)),
         min(first.kept, second.kept),
         first.vectors / size[:, None],
-        second.vectors * size[:, None],
-        _largest_cluster(left[0]),
+        _reachable(first.vectors, second.vectors, both) * size[:, None],
+        doubtful,
     )
 
 
-def _largest_cluster(poles: NDArray[np.complex128]) -> int:
-    near = np.abs(poles[:, None] - poles) <= CLUSTER * np.abs(poles)[:, None]
-    return int(near.sum(axis=1).max(initial=0))
+def _blocks(first: Side, second: Side) -> list[tuple[list[Part], list[Part], int]]:
+    """Return unreachable and unobservable parts that share eigenvalues together, and how many eigenvalues that are."""
+    blocks: list[tuple[list[Part], list[Part], frozenset[int]]] = []
+    for side, parts in enumerate((first.parts, second.parts)):
+        for part in parts:
+            near = [block for block in blocks if block[2] & part.places]
+            merged: tuple[list[Part], list[Part]] = [], []
+            places = part.places
+            for block in near:
+                merged[0].extend(block[0])
+                merged[1].extend(block[1])
+                places = places | block[2]
+            merged[side].append(part)
+            blocks = [block for block in blocks if not any(block is other for other in near)]
+            blocks.append((*merged, places))
+    return [(unreachable, unobservable, len(places)) for unreachable, unobservable, places in blocks]
 
 
-def _orthogonal_to(vectors: Array) -> Array:
-    n, k = vectors.shape
-    return np.linalg.qr(vectors, mode="complete")[0][:, k:] if k else np.eye(n)
+def _shared(unreachable: list[Part], unobservable: list[Part], size: int) -> tuple[int, bool]:
+    """Return how many modes of a block of eigenvalues are hidden on both sides, and whether that is clear.
+
+    As many as the rank of F' V, F the left and V the right vectors: of k states of which a are unreachable and b
+    unobservable, at least a + b - k. Between vectors of one eigenvalue that stands alone it is one.
+    """
+    if not unreachable or not unobservable:
+        return 0, True
+    F, V = (np.hstack([part.vectors for part in side]) for side in (unreachable, unobservable))
+    least, most = max(F.shape[1] + V.shape[1] - size, 0), min(F.shape[1], V.shape[1])
+    if least == most:
+        return most, True
+    F, V = np.linalg.qr(F)[0], np.linalg.qr(V)[0]
+    floor = EPS * float(F.shape[0])
+    values = np.maximum(np.linalg.svd(F.T @ V, compute_uv=False), floor)
+    steps = np.concatenate([[1.0], values, [floor]])
+    ratios = steps[least : most + 1] / steps[least + 1 : most + 2]
+    return least + int(np.argmax(ratios)), bool(ratios.max() >= CLEAR)
+
+
+def _reachable(F: Array, V: Array, both: int) -> Array:
+    """Return an orthonormal basis of the unobservable states that are reachable."""
+    if not F.shape[1] or not V.shape[1]:
+        return V
+    W = V @ np.linalg.svd(F.T @ V)[2][both:].T
+    return np.linalg.qr(W - F @ (F.T @ W))[0]
 
 
 def truncated(

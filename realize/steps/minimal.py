@@ -224,7 +224,7 @@ def _details(source: Model, result: Model, decision: Decision) -> dict[str, Any]
     kept = decision.kept
     # clear is: what went needs less than a quarter of the threshold, and what stays a thousand times more
     near = bool(decision.gone) and decision.dropped > decision.threshold / 4
-    ambiguous = decision.threshold > 0 and (near or kept < AMBIGUOUS * decision.threshold)
+    ambiguous = decision.threshold > 0 and (near or decision.doubtful or kept < AMBIGUOUS * decision.threshold)
     return {
         "order": decision.order,
         "source_order": source.order,
@@ -273,6 +273,8 @@ def _cautions(source: Model, result: Model, decision: Decision, details: dict[st
                 f"numbers changed by {ratio:.2g} times the threshold of {decision.threshold:.1e} "
                 f"would bring it to {decision.order - 1}"
                 if ratio is not None and ratio < AMBIGUOUS
+                else "how many modes are hidden among poles near each other is no clear decision"
+                if decision.doubtful
                 else "what was removed lies close to the threshold"
             )
             + ". Use --exact if the numbers are exact, or look at the removed modes and at runner_up_cost."

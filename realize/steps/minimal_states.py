@@ -22,8 +22,6 @@ from realize.verification.views import EXACT_BUDGET, predicted_cost
 
 Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
-#: So many poles near each other make the search for hidden ones unsure.
-CROWD = 3
 #: Exact coordinates of larger state models would take minutes.
 LARGEST_EXACT = 150
 
@@ -46,8 +44,10 @@ class Decision:
         The exact minimal realization, where the order is its order.
     hidden : (unreachable, unobservable) arrays, optional
         Bases of what goes within rounding, in the source's coordinates.
-    rest : object, optional
+    polynomial : array, optional
         Polynomial part of a descriptor model, [power][p][m], and feed-through.
+    doubtful : bool
+        The number of modes hidden among poles near each other was no clear decision.
     """
 
     order: int
@@ -61,6 +61,7 @@ class Decision:
     hidden: tuple[Array, Array] | None = None
     polynomial: Array | None = None
     notes: list[str] = field(default_factory=list)
+    doubtful: bool = False
 
 
 def decide(model: Model, exact: bool) -> Decision:
@@ -313,7 +314,7 @@ def _within(model: StateSpace, threshold: float, exact_order: int) -> Decision |
         if decision is None:
             decision = Decision(model.order, False, threshold, 0.0, found.kept, made=model)
         decision.kept = found.kept
-        decision.notes += _clustered(found.clustered)
+        decision.doubtful = found.doubtful
         return decision
     gone = [{"pole": m.pole, "states": 1, "why": m.why, "change": m.change} for m in found.modes]
     return Decision(
@@ -324,17 +325,8 @@ def _within(model: StateSpace, threshold: float, exact_order: int) -> Decision |
         found.kept,
         gone,
         hidden=(found.unreachable, found.unobservable),
-        notes=_clustered(found.clustered),
+        doubtful=found.doubtful,
     )
-
-
-def _clustered(count: int) -> list[str]:
-    if count < CROWD:
-        return []
-    return [
-        f"{count} poles lie within 1 % of each other: a mode hidden among them may have been missed, and "
-        "the order be too large. Use --exact if the numbers are exact."
-    ]
 
 
 def candidates(model: StateSpace, decision: Decision) -> Iterator[tuple[Model, str, bool]]:

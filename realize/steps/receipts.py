@@ -179,7 +179,8 @@ def finish(
     """
     claims = [_plain_claim(claim) for claim in with_limits(claims, limits or {})]
     frequency = probe_frequencies(source if not is_data(source) else result)
-    values = {"source": fragility_of(source, frequency), "result": fragility_of(result, frequency)}
+    values = {"source": fragility_of(source, frequency)}
+    values["result"] = values["source"] if result is source else fragility_of(result, frequency)
     if digits is not None and values["result"] is not None:
         # half a unit of the last digit in place of half a unit of the last bit; numbers that are doubles stay doubles
         values["result"] *= 0.5 * 10.0 ** max(1 - digits, -300) / (np.finfo(float).eps / 2)

@@ -352,9 +352,3 @@ def test_orders_within_rounding_of_larger_models(seed: int) -> None:
     found = hidden_within(0.1 * A * d[:, None] / d, 0.3 * B * d[:, None], C / d / 7, None, 4 * n * EPS, sampled=False)
     assert condition < 1e6
     assert found.order == exact
-
-
-def test_crowded_poles_are_a_caution() -> None:
-    A, B, C, _ = sheared(103, 12, 8, 1, 1, 12, distinct=False)
-    made = realize.minimal(StateSpace(A=0.1 * A, B=B, C=C))
-    assert any("within 1 % of each other" in caution for caution in made.receipt.cautions)
