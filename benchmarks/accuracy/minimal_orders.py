@@ -1,8 +1,8 @@
 """Orders of minimal realizations: exact and within rounding, beside control's and slycot's answers.
 
 Models of order 11 to 40 with hidden modes of every kind, repeated ones among them, whose order is known by construction
-(`realize.testing.hidden_states`): integer shears up to a condition number of 1e6, units of states and channels changed by
-2^+-20, time by 1e+-6, a quarter of them sampled. Within rounding: the same in units that are no powers of two, each
+(`realize.testing.hidden_states`): integer shears up to a condition number of 1e6, units of states and channels changed
+by 2^+-20, time by 1e+-6, a quarter of them sampled. Within rounding: the same in units that are no powers of two, each
 number rounded once, without and with repeated poles. Run with the number of models, and of those within rounding:
 
     OMP_NUM_THREADS=1 python benchmarks/accuracy/minimal_orders.py 500 50
@@ -51,9 +51,8 @@ def libraries(A: Array, B: Array, C: Array) -> tuple[int | None, int | None]:
 def main(count: int, rounded: int) -> None:
     """Print one line a kind of question."""
     kinds = {"exact": count, "within rounding, simple poles": rounded, "within rounding, repeated poles": rounded}
-    print(
-        f"{'right orders':<34}{'models':>8}{'realize':>9}{'slycot':>8}{'control':>9}{'ambiguous':>11}{'silent':>8}{'s':>7}"
-    )
+    heads = ("models", "realize", "slycot", "control", "ambiguous", "silent", "s")
+    print(f"{'right orders':<34}" + "".join(f"{head:>10}" for head in heads))
     for name, models in kinds.items():
         right, ambiguous, silent, spent = [0, 0, 0], 0, 0, 0.0
         for seed in range(models):
@@ -78,9 +77,8 @@ def main(count: int, rounded: int) -> None:
             if own != known.order:
                 silent += not doubtful
                 print(f"seed {seed}: order {known.order}, found {own}, condition {known.condition:.0e}, {doubtful}")
-        print(
-            f"{name:<34}{models:>8}{right[0]:>9}{right[1]:>8}{right[2]:>9}{ambiguous:>11}{silent:>8}{spent / models:>7.2f}"
-        )
+        counts = (models, *right, ambiguous, silent)
+        print(f"{name:<34}" + "".join(f"{value:>10}" for value in counts) + f"{spent / models:>10.2f}")
 
 
 if __name__ == "__main__":

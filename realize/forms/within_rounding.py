@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
 from realize.kernels.balancing import scale_model
-from realize.kernels.within_rounding import Part, Side, hidden_side, spectra
+from realize.kernels.hidden_modes import Part, Side, hidden_side, spectra
 
 Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)

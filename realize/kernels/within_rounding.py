@@ -1,58 +1,58 @@
 """Modes of a state model that an elementwise relative change of its own numbers makes unreachable or unobservable.
 
-Eigenvalues far from each other are tried one by one: the vector of the eigenvalue is where the search for the smallest
-change starts (`single_mode`). Eigenvalues near each other may be one that rounding drove apart, and their vectors say
-little: of the invariant subspace of such a group, the directions that the inputs reach least are tried, as many as
-possible first. In the end all that was found is judged together, by one change of the numbers (`joint_change`).
+A mode s with left vector w is unreachable after a change |dA| <= eta |A|, |dB| <= eta |B| (zeros stay zero) exactly if
+w' [A + dA - s I, B + dB] = 0. For given s and w the smallest such eta is the elementwise backward error ::
+
+    eta(s, w) = max_j |r_j| / (|w|' |[A, B]|)_j,    r = w' [A - s I, B],
+
+for complex changes (Oettli & Prager 1964, applied to one row); it does not depend on the units of states, inputs and
+time. It is made small over s and w from every eigenvalue on, by singular vectors of the columns weighted with the
+denominators [2]_ [3]_. Modes found are taken out one after the other: the next w is orthogonal to the span F of those
+before, and its residual may use their rows, so that clusters and chains of generalised vectors are no exception.
+
+Of a vector nearly parallel to those before only what is orthogonal to them counts, so that one mode is not counted
+twice. Unobservable modes are those of the dual, within the reachable subspace.
+
+.. [1] W. Oettli, W. Prager, Compatibility of approximate solution of linear equations with given error bounds for
+       coefficients and right-hand sides, Numer. Math. 6 (1964) 405-409.
+.. [2] R. Eising, Between controllable and uncontrollable, Syst. Control Lett. 4 (1984) 263-264.
+.. [3] C. C. Paige, Properties of numerical algorithms related to computing controllability, IEEE Trans. Automat.
+       Control 26 (1981) 130-138.
 """
 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator
 from dataclasses import dataclass, field
-from typing import NamedTuple
 
 import numpy as np
 import scipy.linalg
-import scipy.linalg.lapack
 from numpy.typing import NDArray
-
-from realize.kernels.joint_change import joint_change
-from realize.kernels.single_mode import nearest_mode
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
-EPS = float(np.finfo(float).eps)
 
+#: Smallest denominators, relative to the largest, in the steps of the search over s and w.
+FLOORS = (1e-6, 1e-6, 1e-9, 1e-9, 1e-12, 1e-12, 1e-15, 1e-15)
+#: Steps without gain that end the search.
+PATIENCE = 3
+#: Entries of w this small, relative to the largest, are tried as zeros: rounding leaves something where nothing is.
+CLEARED = (0.0, 1e-13, 1e-10, 1e-7)
 #: Models of at most this order have every mode searched; larger ones those whose own vectors are nearest to hidden.
 ALL_MODES = 100
 SOME_MODES = 8
 #: A first guess this many times the threshold is not worth a search in a large model.
 PROMISING = 1e6
-#: Columns of which less than this is not in the span of those before are the same.
-SAME = 1e-9
+#: Vectors of which less than this is orthogonal to those before are judged by that part, less than that are the same.
+APART, SAME = 0.1, 1e-8
+#: Eigenvalues that differ by more than this, relative to their size, are two modes, however near their vectors are.
+OTHER = 1e-3
 #: Eigenvalues this near to each other, relative to their size, may be one that rounding drove apart.
 CLUSTER = 1e-2
-#: A search that ends at a mode this near to where it began, relative to its size, joins both.
-NEIGHBOURS = 0.2
-#: So do those whose own uncertainties overlap, if these stay below this part of the size of A.
-UNCERTAIN = 1e-2
-#: Roundings that the uncertainty of an eigenvalue is made of.
-ROUNDINGS = 16
-#: A change below this many times the rounding of one number ends a search.
-ENOUGH = 0.5
-#: Larger groups of near eigenvalues are taken apart by their own vectors only.
-LARGEST_GROUP = 16
-
-
-class Part(NamedTuple):
-    """Hidden vectors of one group of eigenvalues, given by their places in the spectrum."""
-
-    places: frozenset[int]
-    vectors: Array
-    modes: list[complex]
-    error: float
+#: Singular vectors tried at the centre of a cluster.
+CENTRED = 2
+#: Denominators of zero columns, relative to the largest: what has no number cannot be changed.
+NO_NUMBER = 1e-30
 
 
 @dataclass(frozen=True)
@@ -66,71 +66,25 @@ class Side:
     modes : list of complex
         Their eigenvalues; k of them.
     errors : list of float
-        Change of the numbers that each takes.
+        Backward error of each mode.
     kept : float
-        Smallest change found that would hide one more; infinite for none.
-    parts : list of Part
-        The same group by group.
-    doubtful : bool
-        A group was too large for its invariant subspace, or vectors of two groups are the same: a mode may
-        have been missed.
+        Smallest backward error found among the modes that are left; infinite for none.
+    kept_mode : complex or None
     """
 
     vectors: Array
     modes: list[complex] = field(default_factory=list)
     errors: list[float] = field(default_factory=list)
     kept: float = math.inf
-    parts: list[Part] = field(default_factory=list)
-    doubtful: bool = False
+    kept_mode: complex | None = None
 
 
-class Spectrum(NamedTuple):
-    """Eigenvalues, vectors w with w' A = s w' in columns of unit length, and how uncertain the eigenvalues are."""
-
-    poles: ComplexArray
-    vectors: ComplexArray
-    uncertain: Array
+Spectrum = tuple[ComplexArray, ComplexArray]
 
 
-def spectra(A: Array) -> tuple[Spectrum, Spectrum]:
-    """Return the spectrum of A, and that of A', from one decomposition."""
-    if not A.size:
-        none = Spectrum(np.zeros(0, dtype=complex), np.zeros((0, 0), dtype=complex), np.zeros(0))
-        return none, none
-    poles, left, right = scipy.linalg.eig(A, left=True, right=True, check_finite=False)
-    norm = float(np.linalg.norm(A))
-    cosines = np.abs(np.sum(left.conj() * right, axis=0))
-    with np.errstate(divide="ignore", over="ignore"):
-        uncertain = ROUNDINGS * EPS * norm / cosines
-    uncertain = np.minimum(uncertain, UNCERTAIN * norm)
-    return Spectrum(poles, left.conj(), uncertain), Spectrum(poles, right, uncertain)
-
-
-def groups(spectrum: Spectrum) -> list[NDArray[np.intp]]:
-    """Return the places of eigenvalues near each other, with their conjugates, group by group.
-
-    A pair of conjugates that is near nothing else, and apart by itself, is a group of two.
-    """
-    poles = spectrum.poles
-    size, uncertain = CLUSTER * np.abs(poles), 2 * spectrum.uncertain
-    # rounding drives apart what is sensitive on both sides
-    reach = np.maximum(np.maximum(size[:, None], size), np.minimum(uncertain[:, None], uncertain))
-    near = np.abs(poles[:, None] - poles) <= reach
-    # conjugates stay together; LAPACK lists them side by side
-    up = np.flatnonzero(poles.imag > 0)
-    near[up, up + 1] = near[up + 1, up] = True
-    count, labels = _components(near)
-    return [np.flatnonzero(labels == k) for k in range(count)]
-
-
-def _components(near: NDArray[np.bool_]) -> tuple[int, NDArray[np.int64]]:
-    from scipy.sparse.csgraph import connected_components
-
-    count, labels = connected_components(near, directed=False)
-    return int(count), labels
-
-
-def hidden_side(A: Array, B: Array, threshold: float, spectrum: Spectrum | None = None) -> Side:
+def hidden_side(
+    A: Array, B: Array, threshold: float, within: Array | None = None, spectrum: Spectrum | None = None
+) -> Side:
     """Return the modes that a relative change of at most the threshold makes unreachable.
 
     Parameters
@@ -140,198 +94,227 @@ def hidden_side(A: Array, B: Array, threshold: float, spectrum: Spectrum | None 
         Scaled so that rows of A are of like size: the search is orthogonal, the decision does not depend on it.
     threshold : float
         Largest relative change of an entry.
-    spectrum : Spectrum, optional
-        That of A, where it is known.
+    within : (n, q) array, optional
+        Orthonormal basis of an invariant subspace of A' in which the vectors lie; everything unless given.
+    spectrum : (n,) and (n, n) arrays, optional
+        Eigenvalues and left vectors of A, where they are known and ``within`` is not given.
     """
     n = A.shape[0]
-    if n == 0:
-        return Side(np.zeros((0, 0)))
-    M = np.hstack([A, B])
-    spectrum = spectra(A)[0] if spectrum is None else spectrum
-    guesses = _first_guesses(spectrum.vectors, M, n)
-    left = sorted(groups(spectrum), key=lambda places: float(guesses[places].min()))
-    invariant = _Invariant(A)
-    kept, doubtful = math.inf, False
-    parts: list[Part] = []
-    searched = 0
-    while left:
-        places = left.pop(0)
-        if n > ALL_MODES:
-            guess = float(guesses[places].min())
-            if (searched >= SOME_MODES and not parts) or guess > PROMISING * threshold:
-                kept = min(kept, max(guess, threshold))
+    space = np.eye(n) if within is None else within
+    M, sizes = np.hstack([A, B]), np.hstack([np.abs(A), np.abs(B)])
+    modes: list[complex] = []
+    errors: list[float] = []
+    F = np.zeros((n, 0))
+    while True:
+        # each mode by itself first, then what is left beside those found
+        free = space if not F.shape[1] else _complement(space, F)
+        if spectrum is not None and not F.shape[1]:
+            poles, vectors = spectrum
+        else:
+            poles, vectors = _left_vectors(free.T @ A @ free)
+        guesses = _first_guesses(free @ vectors, B, sizes[:, n:])
+        kept, kept_mode = math.inf, None
+        accepted, searched = False, 0
+        for k in np.argsort(guesses, kind="stable"):
+            s = complex(poles[k])
+            if s.imag < 0:
+                continue
+            if n > ALL_MODES and (searched >= SOME_MODES or guesses[k] > PROMISING * threshold):
+                kept, kept_mode = min((kept, kept_mode), (guesses[k], s), key=lambda pair: pair[0])
                 break
-        searched += 1
-        part, following, elsewhere = _group(M, spectrum, places, threshold, invariant)
-        joined: set[int] = set() if elsewhere is None else _joined(spectrum, places, elsewhere, left, parts)
-        if joined:
-            # the search ended at a mode of other groups near by: together they are one
-            parts = [other for other in parts if not other.places & joined]
-            left = [others for others in left if not joined & set(others.tolist())]
-            left.insert(0, np.array(sorted({*joined, *places.tolist()})))
-            continue
-        doubtful = doubtful or places.size > LARGEST_GROUP
-        kept = min(kept, following)
-        if part is not None:
-            parts.append(part)
-    return _all(n, parts, kept, doubtful)
+            searched += 1
+            starts = _starts(s, free @ vectors[:, k], poles, A, B, free)
+            for at, w in starts:
+                error, at, w = _judged(M, sizes, space, F, at, w, threshold, modes)
+                wider = _orthonormal(F, _real_basis(at, w)) if error <= threshold else None
+                if wider is not None:
+                    F, accepted = wider, True
+                    modes += [at, at.conjugate()] if at.imag else [at]
+                    errors += [error] * (2 if at.imag else 1)
+                    break
+                if threshold < error < kept:
+                    kept, kept_mode = error, at
+        if not accepted or F.shape[1] >= space.shape[1]:
+            break
+    return Side(F, modes, errors, kept, kept_mode)
 
 
-def _joined(
-    spectrum: Spectrum, places: NDArray[np.intp], modes: ComplexArray, left: list[NDArray[np.intp]], parts: list[Part]
-) -> set[int]:
-    """Return the places of other groups that modes belong to, where those are not far from the group's own."""
-    poles = spectrum.poles
-    nearest = np.abs(modes[:, None] - poles).argmin(axis=1)
-    others = {int(k) for k in nearest} - set(places.tolist())
-    apart = np.abs(poles[list(others)][:, None] - poles[places]).min(axis=1)
-    if np.any(apart > NEIGHBOURS * np.abs(poles[list(others)])):
-        return set()
-    found: set[int] = set()
-    for group in [*(frozenset(group.tolist()) for group in left), *(part.places for part in parts)]:
-        if others & group:
-            found |= group
-    return found if len(found) + places.size <= LARGEST_GROUP else set()
+def _starts(
+    s: complex, w: ComplexArray, poles: ComplexArray, A: Array, B: Array, space: Array
+) -> list[tuple[complex, ComplexArray]]:
+    """Return where to search from.
+
+    A pair near the real axis may be two real modes that rounding drove apart; and in a cluster the vectors of the
+    eigenvalues say little: the smallest singular vectors of [A - s I, B] at its centre are better.
+    """
+    found: list[tuple[complex, ComplexArray]] = []
+    near = poles[np.abs(poles - s) <= CLUSTER * abs(s)]
+    if near.size > 1:
+        centre = complex(near.mean())
+        centre = complex(centre.real) if abs(centre.imag) <= 1e-6 * abs(centre) else centre
+        table = space.T @ np.hstack([A - centre * np.eye(A.shape[0]), B])
+        table = table.real if centre.imag == 0 else table
+        vectors = np.linalg.svd(table)[0][:, ::-1].conj()
+        found += [(centre, (space @ vectors[:, k]).astype(complex)) for k in range(min(near.size, CENTRED))]
+    if s.imag and abs(s.imag) < CLUSTER * abs(s):
+        found += [(complex(s.real), w.real.astype(complex)), (complex(s.real), w.imag.astype(complex))]
+    return [*found, (s, w)]
 
 
-def _first_guesses(W: ComplexArray, M: Array, n: int) -> Array:
+def _real_basis(s: complex, w: ComplexArray) -> Array:
+    return np.column_stack([w.real, w.imag]) if s.imag else w.real[:, None]
+
+
+def _judged(
+    M: Array,
+    sizes: Array,
+    space: Array,
+    F: Array,
+    s: complex,
+    w: ComplexArray,
+    threshold: float,
+    modes: list[complex],
+) -> tuple[float, complex, ComplexArray]:
+    """Return backward error, eigenvalue and vector from a start: by itself, or beside those found that are near."""
+    first = w
+    error, at, w = _search(M, sizes, space, np.zeros((F.shape[0], 0)), s, w, threshold)
+    if not F.shape[1]:
+        return error, at, w
+    rest = _rest(F, w)
+    other = all(abs(at - mode) > OTHER * max(abs(at), abs(mode)) for mode in modes)
+    if error > threshold or not (rest >= APART or (other and rest >= SAME)):
+        # not far from those before: what is orthogonal to them decides
+        again, at = (w, at) if rest > SAME else (first, s)
+        error, at, w = _search(M, sizes, _complement(space, F), F, at, again, threshold)
+    return error, at, w
+
+
+def _left_vectors(A: Array) -> tuple[ComplexArray, ComplexArray]:
+    """Return eigenvalues and vectors w with w' A = s w' (not conjugated), columns of unit length."""
+    poles, vectors = scipy.linalg.eig(A.T, check_finite=False)
+    return poles, vectors
+
+
+def spectra(A: Array) -> tuple[Spectrum, Spectrum]:
+    """Return eigenvalues with left vectors of A, and with those of A', from one decomposition."""
+    poles, left, right = scipy.linalg.eig(A, left=True, right=True, check_finite=False)
+    return (poles, left.conj()), (poles, right)
+
+
+def _first_guesses(W: ComplexArray, B: Array, sizes: Array) -> Array:
     """Return for each left eigenvector the relative change of B alone that makes it see nothing of it."""
-    above, below = np.abs(W.T @ M[:, n:]), np.abs(W).T @ np.abs(M[:, n:])
+    above, below = np.abs(W.T @ B), np.abs(W).T @ sizes
     ratio = np.divide(above, below, out=np.zeros(above.shape), where=below > 0)
     guesses: Array = ratio.max(axis=1, initial=0.0)
     return guesses
 
 
-class _Invariant:
-    """Left invariant subspaces of A for chosen eigenvalues, from one real Schur form."""
-
-    def __init__(self, A: Array) -> None:
-        self.A = A
-        self.schur: tuple[Array, Array, ComplexArray] | None = None
-
-    def basis(self, poles: ComplexArray) -> Array | None:
-        """Return an orthonormal basis for as many eigenvalues as given, those nearest to them; None without success."""
-        if self.schur is None:
-            T, Z = scipy.linalg.schur(self.A.T, check_finite=False)
-            none = np.zeros(T.shape[0], dtype=np.int32)
-            _, _, re, im, *_ = scipy.linalg.lapack.dtrsen(none, T, Z, job=b"N")
-            self.schur = T, Z, re + 1j * im
-        T, Z, own = self.schur
-        select = np.zeros(own.size, dtype=np.int32)
-        for pole in poles:
-            k = int(np.argmin(np.where(select == 0, np.abs(own - pole), np.inf)))
-            select[k] = 1
-            if own[k].imag:
-                select[k + (1 if own[k].imag > 0 else -1)] = 1
-        _, Q, _, _, count, _, _, info = scipy.linalg.lapack.dtrsen(select, T, Z, job=b"N")
-        found: Array = Q[:, : int(count)]
-        return found if info == 0 else None
+def _complement(space: Array, F: Array) -> Array:
+    """Return an orthonormal basis of what of the space is orthogonal to F, which lies in it."""
+    inside = space.T @ F
+    q, _ = np.linalg.qr(inside, mode="complete")
+    return space @ q[:, F.shape[1] :]
 
 
-def _group(
-    M: Array, spectrum: Spectrum, places: NDArray[np.intp], threshold: float, invariant: _Invariant
-) -> tuple[Part | None, float, ComplexArray | None]:
-    """Return what is hidden of a group, the smallest change found that is too large, and modes met elsewhere."""
-    kept = math.inf
-    elsewhere: ComplexArray | None = None
-    for F in _starts(M, spectrum, places, threshold, invariant):
-        error, F, S = joint_change(M, F, ENOUGH * EPS)
-        if not math.isfinite(error):
-            continue
-        modes: ComplexArray = np.linalg.eigvals(S).astype(complex)
-        own = np.isin(np.abs(modes[:, None] - spectrum.poles).argmin(axis=1), places).all()
-        if own and error <= threshold:
-            return Part(frozenset(places.tolist()), F, [complex(x) for x in modes], error), kept, None
-        if own:
-            kept = min(kept, error)
-        elif error <= threshold and elsewhere is None:
-            elsewhere = modes
-    return None, kept, elsewhere
+def _rest(F: Array, w: ComplexArray) -> float:
+    """Return what part of a vector is orthogonal to the vectors before."""
+    return float(np.linalg.norm(w - F @ (F.T @ w)) / np.linalg.norm(w))
 
 
-def _starts(
-    M: Array, spectrum: Spectrum, places: NDArray[np.intp], threshold: float, invariant: _Invariant
-) -> Iterator[Array]:
-    """Yield bases of what may be hidden of a group, the largest first."""
-    n = M.shape[0]
-    poles = spectrum.poles[places]
-    found: list[tuple[float, Array]] = []
-    for k in places:
-        s = complex(spectrum.poles[k])
-        if s.imag >= 0:
-            error, at, w = nearest_mode(M, s, spectrum.vectors[:, k], ENOUGH * EPS)
-            found.append((error, _real_basis(at, w)))
-    if places.size == 1 or (places.size == 2 and poles[0].imag and abs(poles[0].imag) > CLUSTER * abs(poles[0])):
-        yield from (F for _, F in found)
-        return
-    W = invariant.basis(poles) if places.size <= LARGEST_GROUP else None
-    if W is not None:
-        centre = float(poles.real.mean())
-        inner, inputs = W.T @ M[:, :n] @ W - centre * np.eye(W.shape[1]), W.T @ M[:, n:]
-        found += _at_centre(M, W, poles)
-    found = [entry for entry in sorted(found, key=lambda entry: entry[0]) if math.isfinite(entry[0])]
-    good = _span([F for error, F in found if error <= threshold], n)
-    for size in range(places.size, 0, -1):
-        if W is not None and size <= W.shape[1]:
-            yield W @ _least_reached(inner, inputs, size)
-        if good.shape[1] >= size:
-            yield good[:, :size]
-    if found and found[0][0] > threshold:
-        yield found[0][1]
-
-
-def _at_centre(M: Array, W: Array, poles: ComplexArray) -> list[tuple[float, Array]]:
-    """Return single modes searched from the smallest singular vectors at the centre of a group."""
-    n = M.shape[0]
-    centre = complex(poles[poles.imag >= 0].mean())
-    centre = complex(centre.real) if np.any(poles.imag == 0) or abs(centre.imag) <= CLUSTER * abs(centre) else centre
-    table = W.T @ (M - centre * np.eye(n, M.shape[1]))
-    vectors = np.linalg.svd(table.real if centre.imag == 0 else table)[0][:, ::-1].conj()
-    found = []
-    for k in range(min(2, vectors.shape[1])):
-        error, at, w = nearest_mode(M, centre, (W @ vectors[:, k]).astype(complex), ENOUGH * EPS)
-        found.append((error, _real_basis(at, w)))
-    return found
-
-
-def _least_reached(A: Array, B: Array, size: int) -> Array:
-    """Return as many directions of a small model as wanted, those that its inputs reach least."""
-    scale = float(np.linalg.norm(A, 2)) or 1.0
-    columns = [B]
-    for _ in range(A.shape[0] - 1):
-        columns.append(A @ columns[-1] / scale)
-    return np.linalg.svd(np.hstack(columns))[0][:, -size:]
-
-
-def _real_basis(s: complex, w: ComplexArray) -> Array:
-    if s.imag:
-        return np.column_stack([w.real, w.imag])
-    return (w.real if np.linalg.norm(w.real) >= np.linalg.norm(w.imag) else w.imag)[:, None]
-
-
-def _span(bases: list[Array], n: int) -> Array:
-    """Return orthonormal columns of all bases, one after the other, without what is there already."""
-    F = np.zeros((n, 0))
-    for basis in bases:
-        for column in basis.T:
-            rest = column / np.linalg.norm(column)
-            for _ in range(2):
-                rest = rest - F @ (F.T @ rest)
-            size = float(np.linalg.norm(rest))
-            if size > SAME:
-                F = np.column_stack([F, rest / size])
+def _orthonormal(F: Array, more: Array) -> Array | None:
+    """Return an orthonormal basis of both, or None where there is nothing new in a column."""
+    for column in more.T:
+        size = np.linalg.norm(column)
+        for _ in range(2):
+            column = column - F @ (F.T @ column)
+        rest = np.linalg.norm(column)
+        if not rest > SAME * size:
+            return None
+        column = column / rest
+        F = np.column_stack([F, np.where(np.abs(column) > CLEARED[1], column, 0.0)])
     return F
 
 
-def _all(n: int, parts: list[Part], kept: float, doubtful: bool) -> Side:
-    """Return all that was found, without what is found twice."""
-    F = np.zeros((n, 0))
-    chosen = []
-    for part in sorted(parts, key=lambda part: part.error):
-        wider = _span([F, part.vectors], n)
-        if wider.shape[1] == F.shape[1] + part.vectors.shape[1]:
-            F = wider
-            chosen.append(part)
-    modes = [mode for part in chosen for mode in part.modes]
-    errors = [part.error for part in chosen for _ in part.modes]
-    return Side(F, modes, errors, kept, chosen, doubtful or len(chosen) < len(parts))
+def _search(
+    M: Array, sizes: Array, free: Array, F: Array, s: complex, w: ComplexArray, threshold: float
+) -> tuple[float, complex, ComplexArray]:
+    """Return the smallest backward error found from a start, with its s and w."""
+    n = M.shape[0]
+    real = s.imag == 0
+    w = w.real.astype(complex) if real and np.linalg.norm(w.real) > 0.5 * np.linalg.norm(w) else w
+    best, best_s, best_w = math.inf, s, w
+    # a w that is orthogonal to these lies in the free space
+    outside = np.linalg.qr(free, mode="complete")[0][:, free.shape[1] :] if free.shape[1] < n else np.zeros((n, 0))
+    unit = np.eye(n, M.shape[1])
+    idle = 0
+    for floor in FLOORS:
+        before = best
+        for small in CLEARED:
+            trial = np.where(np.abs(w) > small * np.abs(w).max(), w, 0.0)
+            error, trial_s = _backward_error(M, sizes, F, trial, real)
+            if error < best:
+                best, best_s, best_w = error, trial_s, trial
+        idle = idle + 1 if best > 0.5 * before else 0
+        if best <= threshold / 64 or idle == PATIENCE or not np.isfinite(best):
+            break
+        w, s = best_w, best_s
+        D = np.abs(w) @ sizes
+        D = np.maximum(D, floor * D.max())
+        N, lean = (M - s * unit) / D, np.concatenate([w, np.zeros(M.shape[1] - n)]) / D
+        if F.shape[1]:
+            span = _allowed_rows(F, D)
+            N, lean = N - (N @ span) @ span.T, lean - span @ (span.T @ lean)
+        # Gauss & Newton for w and s together; w moves orthogonally to itself and to what was found before
+        N = np.hstack([N, outside, w.conj()[:, None]])
+        # entries that are zero stay zero; rows of like size, so that rounding of the large ones drowns no others
+        live = w != 0
+        size = np.abs(N).max(axis=1)[live]
+        scale = 1 / np.where(size > 0, size, 1.0)
+        edge = float(np.abs(lean).max()) or 1.0
+        table = np.vstack([N[live] * scale[:, None], np.pad(-lean / edge, (0, N.shape[1] - lean.size))])
+        right = -(w @ N)
+        right[-1] = 0.0
+        if real:
+            table, right = table.real, right.real
+        move = scipy.linalg.lstsq(table.T, right, lapack_driver="gelsy", check_finite=False)[0]
+        w = w.astype(complex)
+        w[live] += move[:-1] * scale
+        w = w / np.linalg.norm(w)
+        s = s + move[-1] / edge
+    return best, best_s, best_w.astype(complex)
+
+
+def _allowed_rows(F: Array, D: Array) -> Array:
+    """Return an orthonormal basis of the weighted rows of F'[I, 0], which a residual may have a share of."""
+    rows = np.zeros((D.size, F.shape[1]))
+    rows[: F.shape[0]] = F
+    basis: Array = np.linalg.qr(rows / D[:, None])[0]
+    return basis
+
+
+def _backward_error(M: Array, sizes: Array, F: Array, w: ComplexArray, real: bool) -> tuple[float, complex]:
+    """Return the elementwise backward error of a left vector, and the eigenvalue that fits it best."""
+    n = M.shape[0]
+    D = np.abs(w) @ sizes
+    top = D.max(initial=0.0)
+    if top == 0:
+        # nothing there depends on this state, and it on nothing
+        return 0.0, 0j
+    weight = np.maximum(D, NO_NUMBER * top)
+    a, b = w @ M, np.concatenate([w, np.zeros(M.shape[1] - n)])
+    noise = 4 * np.finfo(float).eps * np.abs(b)
+    if F.shape[1]:
+        span = _allowed_rows(F, weight)
+        scaled = np.stack([a / weight, b / weight])
+        a, b = (scaled - (scaled @ span) @ span.T) * weight
+    x, y = a / weight, b / weight
+    below = np.vdot(y, y).real
+    s = complex(np.vdot(y, x) / below) if below > 0 else 0j
+    s = complex(s.real, 0.0) if real else s
+    r = np.abs(a - s * b)
+    # where there is no number to change, the residual has to be nothing but rounding
+    r = np.where((D == 0) & (r <= noise * abs(s)), 0.0, r)
+    if np.any((D == 0) & (r > 0)):
+        return math.inf, s
+    error = np.divide(r, D, out=np.zeros(r.shape), where=D > 0)
+    return float(error.max()), s
