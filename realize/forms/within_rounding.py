@@ -44,7 +44,7 @@ class Hidden:
         Left and right vectors of what goes, in the model's own coordinates.
     doubtful : bool
         How many modes of a group of near eigenvalues are hidden on both sides was no clear decision, or a mode among
-        them may have been missed.
+        them may have been missed; or the numbers span more than doubles hold.
     """
 
     order: int
@@ -86,6 +86,10 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
     A, B = _plain(A, B, E)
     columns, rows = _channels(B, C)
     scaled = scale_model(A, B * columns, C * rows[:, None], sampled=sampled)
+    if any(np.count_nonzero(a) != np.count_nonzero(b) for a, b in ((A, scaled.A), (B, scaled.B), (C, scaled.C))):
+        # what is lost by underflow could hide a mode: nothing is decided
+        n = A.shape[0]
+        return Hidden(n, [], math.inf, np.zeros((n, 0)), np.zeros((n, 0)), doubtful=True)
     left, right = spectra(scaled.A)
     first = hidden_side(scaled.A, scaled.B, threshold, left)
     second = hidden_side(scaled.A.T, scaled.C.T, threshold, right)

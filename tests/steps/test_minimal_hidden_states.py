@@ -51,3 +51,10 @@ def test_units_do_not_change_the_order_within_rounding(seed: int) -> None:
     made = realize.minimal(StateSpace(A=A * x[:, None] / x * 2.0**20, B=B * x[:, None] * u, C=C / x * y[:, None]))
     assert made.model.order == made.receipt.details["order"] == known.order
     assert not made.receipt.failed and not made.receipt.details["ambiguous"]
+
+
+def test_what_scaling_would_lose_hides_nothing() -> None:
+    model = StateSpace(A=[[-1e300, 1e300], [0.0, -2e300]], B=[[1e300], [1e-300]], C=[[1e-300, 1e300]], D=[[0.0]])
+    made = realize.minimal(model)
+    assert made.model.order == made.receipt.details["order"] == 2
+    assert made.receipt.details["ambiguous"] and not made.receipt.failed
