@@ -273,7 +273,7 @@ def _cautions(source: Model, result: Model, decision: Decision, details: dict[st
                 f"numbers changed by {ratio:.2g} times the threshold of {decision.threshold:.1e} "
                 f"would bring it to {decision.order - 1}"
                 if ratio is not None and ratio < AMBIGUOUS
-                else "how many modes are hidden among poles near each other, or with numbers of such a span, is not clear"
+                else "how many modes are hidden among near poles, or by numbers of such a span, is not clear"
                 if decision.doubtful
                 else "what was removed lies close to the threshold"
             )
