@@ -16,7 +16,7 @@ from realize.batch.lock import Lock
 from realize.batch.pool import Pool, Reply, Task, set_aside
 from realize.batch.record import RecordFile, Records, stands
 from realize.batch.summary import Summary
-from realize.errors import InputError, Refused
+from realize.errors import InputError, UsageError
 from realize.files.sources import available_memory, reason
 
 Event = dict[str, Any]
@@ -64,7 +64,7 @@ def run(
     """
     wanted = job if isinstance(job, Job) else read_job(job, allow_outside=allow_outside)
     if processes is not None and processes < 1:
-        raise InputError(f"{processes} processes", "at least one")
+        raise UsageError(f"{processes} processes; at least one is needed")
     return _Run(wanted, processes, cluster, retry, on_event or (lambda event: None)).run()
 
 
@@ -262,4 +262,4 @@ def _local(pool: Pool) -> Iterator[Any]:
         yield pool.work
 
 
-__all__ = ["Event", "Refused", "run"]
+__all__ = ["Event", "run"]

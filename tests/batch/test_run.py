@@ -274,6 +274,30 @@ def test_a_full_disk_stops_with_words_and_goes_on_later(folder: Make, monkeypatc
     assert (again.status, again.done, again.earlier) == (0, 3, 1)
 
 
+def test_inputs_that_vanish(folder: Make) -> None:
+    root = folder(3)
+    gone = root / "plants" / "p0001.json"
+    text = gone.read_text()
+
+    def lose_a_file(event: dict[str, Any]) -> None:
+        if event["event"] == "started" and gone.exists():
+            gone.unlink()
+
+    def lose_the_folder(event: dict[str, Any]) -> None:
+        if event["event"] == "started":
+            (root / "plants").rename(root / "away")
+
+    made = go(root, on_event=lose_a_file)
+    assert (made.status, made.done, made.aside[0]["why"]) == (4, 2, "vanished")
+    gone.write_text(text)
+    assert [getattr(go(root), name) for name in ("status", "done")] == [0, 3]
+    shutil.rmtree(root / "made")
+    made = go(root, on_event=lose_the_folder)
+    assert made.status == 5 and made.set_aside == 0 and "vanished" in made.stopped
+    (root / "away").rename(root / "plants")
+    assert go(root).status == 0
+
+
 def test_inputs_that_are_missing_or_collide(folder: Make) -> None:
     root = folder(2, HEAD.replace("plants/*", "plants/q*") + CONVERT)
     with pytest.raises(InputError, match=r"line 2.*no file matches"):
