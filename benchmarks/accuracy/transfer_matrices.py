@@ -103,6 +103,13 @@ def generated(count: int, alone: bool) -> None:
         worst_peak[known.family] = max(worst_peak.get(known.family, 0.0), found["peak-error"])
         ratio = found["response-error"] / max(1e-13, 8 * EPS / damping)
         worst_ratio[known.family] = max(worst_ratio.get(known.family, 0.0), ratio)
+        if (seed + 1) % 50 == 0:
+            print(
+                f"{seed + 1} of {count}: degree right in {sum(right.values())}, peak error up to "
+                f"{max(worst_peak.values()):.1e}, response / limit up to {max(worst_ratio.values()):.2e}, "
+                f"{sum(spent.values()):.0f} s CPU",
+                flush=True,
+            )
         if alone or seed % 10 >= len(FAMILIES) or seed // 10 % len(FAMILIES) != seed % len(FAMILIES):
             continue
         plain = [[np.array(c) for c in row] for row in known.model.numerator]

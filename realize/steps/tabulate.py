@@ -14,8 +14,9 @@ from realize.models import FrequencyResponse, ImpulseResponse, Model
 from realize.schema import CLAIMS, Claim, SecondOpinion, judge
 from realize.steps.conversion import Conversion
 from realize.steps.receipts import finish
-from realize.verification import fragility, view_of
+from realize.verification import view_of
 from realize.verification.bands import channel_zeros, whole_band
+from realize.verification.evaluation import evaluation_error
 from realize.verification.search import Band, seeds
 from realize.verification.views import View
 
@@ -116,6 +117,17 @@ def _grid(view: View, frequencies: Any, band: tuple[float, float] | None, count:
     return w[(w >= low) & (w <= high)]
 
 
+def _norms(values: ComplexArray | Array) -> Array:
+    """Return the Frobenius norm [k] of values [k][outputs][inputs], squares kept inside of the range of doubles."""
+    sizes = np.abs(values)
+    # a power of two changes no digit
+    shift = np.frexp(sizes.max(axis=(1, 2), initial=0.0))[1]
+    with np.errstate(under="ignore", over="ignore"):
+        scaled = np.ldexp(sizes, -shift[:, None, None])
+        result: Array = np.ldexp(np.sqrt(np.sum(scaled**2, axis=(1, 2))), shift)
+    return result
+
+
 def _coverage(view: View, w: Array) -> tuple[dict[str, Any], list[str]]:
     """Return how many points lie in the half-power band of each resonance inside of the grid's range."""
     poles = view.poles
@@ -158,6 +170,7 @@ def _frequency_response(
     if frequencies is not None and poles.any():
         raise Refused(f"no finite response at {w[poles][0]:.17g} rad/s: a pole, or beyond the doubles; leave it out")
     w, values, bound = w[~poles], values[~poles], bound[~poles]
+    rational = values
     if w.size == 0:
         raise Refused("no frequency with a finite response is left; give others with --frequencies")
     if model.dead_time is not None:
@@ -167,8 +180,7 @@ def _frequency_response(
         bound = bound + np.abs(values) * (np.abs(angle) * 2.0**-52 + 2.0**-50)
     details, cautions = _coverage(view, w)
     if view.fractions is not None:
-        size = np.sqrt(np.sum(np.abs(values) ** 2, axis=(1, 2)))
-        error = np.sqrt(np.sum(bound**2, axis=(1, 2)))
+        size, error = _norms(values), _norms(bound)
         with np.errstate(divide="ignore", invalid="ignore"):
             relative = np.where(error == 0, 0.0, error / size)
         worst = int(np.argmax(relative))
@@ -184,9 +196,10 @@ def _frequency_response(
     else:
         claim = judge(
             "response-error",
-            fragility(model, w[w > 0][:: max(1, w.size // 40)]),
+            evaluation_error(model, w, rational),
             limit=limit,
-            note="evaluated in double arithmetic: the value is what one rounding of the model's numbers makes",
+            note="evaluated in double arithmetic; measured at a few points beside refined solutions, and scaled up by "
+            "the fragility of the others",
         )
     common = model.common() | {"dead_time": None}
     result = FrequencyResponse(frequency=w, frequency_unit="rad/s", response=values, **common)
@@ -255,8 +268,7 @@ def _impulse_response(view: View, count: int | None, period: float | None, limit
                 values[:, i, j], bound[:, i, j] = values_at_steps(n, d, step, number)
     if not np.all(np.isfinite(values)):
         raise Refused("a sample lies beyond the range of doubles: the plant is unstable; lower --count or --period")
-    peak = float(np.sqrt(np.sum(values**2, axis=(1, 2))).max())
-    error = np.sqrt(np.sum(bound**2, axis=(1, 2)))
+    peak, error = float(_norms(values).max()), _norms(bound)
     worst = int(np.argmax(error))
     value = 0.0 if error[worst] == 0 else (float(error[worst]) / peak if peak > 0 else np.inf)
     claim = judge(

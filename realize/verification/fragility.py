@@ -40,6 +40,8 @@ ComplexArray = NDArray[np.complex128]
 _U = np.finfo(float).eps / 2
 #: From this order one Schur form serves all frequencies.
 SCHUR_FROM = 60
+#: Up to this many frequencies a descriptor is factored at each of them: a QZ decomposition costs more than so many.
+FACTORED = 60
 #: Up to this order all frequencies are solved at once.
 SMALL = 12
 
@@ -281,6 +283,15 @@ def _solutions(
         return
     import scipy.linalg
 
+    if E is not None and points.size <= FACTORED:
+        for s in points.tolist():
+            lu, order, info = scipy.linalg.lapack.zgetrf(s * E - A)
+            if info != 0:
+                yield s, None, None
+                continue
+            right = scipy.linalg.lapack.zgetrs(lu, order, B)[0]
+            yield s, right, scipy.linalg.lapack.zgetrs(lu, order, C.T, trans=1)[0].T
+        return
     if E is None:
         T, Q = scipy.linalg.schur(A.astype(complex), output="complex")
         Z, S = Q, None

@@ -415,7 +415,9 @@ def finite_ones(model: StateSpace, values: ComplexArray) -> ComplexArray:
 
     if model.order > LARGEST_DESCRIPTOR:
         return values
-    count = structure(model.exact("A"), model.exact("E")).finite
+    # the same memory as that of the conversions: the count takes seconds at some hundred states
+    found = model.remembered("structure", lambda: structure(model.exact("A"), model.exact("E")))
+    count: int = found.finite
     return values[np.argsort(np.abs(values))[:count]]
 
 

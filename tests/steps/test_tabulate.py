@@ -12,7 +12,16 @@ import pytest
 
 from realize.errors import RealizeError, Refused, UsageError
 from realize.files import read, write
-from realize.models import DeadTime, FrequencyResponse, ImpulseResponse, Model, TimeBase, TransferFunction, digest
+from realize.models import (
+    DeadTime,
+    FrequencyResponse,
+    ImpulseResponse,
+    Model,
+    StateSpace,
+    TimeBase,
+    TransferFunction,
+    digest,
+)
 from realize.steps import compare, convert, explain, fit, inspect, reduce
 
 RESONANT = TransferFunction(numerator=[1.0, 2.0], denominator=[1.0, 0.02, 4.0, 1.0])
@@ -171,3 +180,53 @@ def test_from_the_shell(tmp_path: Path, run: Callable[..., Any]) -> None:
         write(made, tmp_path / f"samples.{suffix}")
         assert digest(read(tmp_path / f"samples.{suffix}")) == digest(made)
     assert explain(RESONANT, "impulse-response")
+
+
+@pytest.mark.parametrize("gain", [1e300, 1e-300])
+def test_gains_near_the_ends_of_the_doubles(gain: float) -> None:
+    plant = TransferFunction(
+        numerator=[[[gain], [1.0]], [[1.0], [gain]]], denominator=[[[1.0, 1.0], [1.0, 2.0]], [[1.0, 1.0], [1.0, 3.0]]]
+    )
+    for to, name in (("frequency-response", "response-error"), ("impulse-response", "peak-error")):
+        claim = convert(plant, to, count=5).receipt.claim(name)
+        assert claim.holds and 0 < claim.value < 1e-15
+
+
+def chain(masses: int) -> StateSpace:
+    """Equal masses and springs in a row, force on the first and position of the last: a steep roll-off."""
+    K = 2 * np.eye(masses) - np.eye(masses, k=1) - np.eye(masses, k=-1)
+    zero, first = np.zeros((masses, masses)), np.eye(2 * masses)[:, masses : masses + 1]
+    A = np.block([[zero, np.eye(masses)], [-K, -1e-3 * K]])
+    return StateSpace(A=A, B=first, C=np.eye(2 * masses)[masses - 1 : masses])
+
+
+def chain_value(masses: int, w: float) -> complex:
+    """The same response from the recursion of the continuant, without elimination: no difference cancels much."""
+    from flint import acb, ctx
+
+    before, ctx.prec = ctx.prec, 2000
+    try:
+        s = acb(0, w)
+        k = s * acb(1e-3) + 1
+        a = s * s + 2 * k
+        last, now = acb(1), a
+        for _ in range(masses - 1):
+            last, now = now, a * now - k * k * last
+        return complex(k ** (masses - 1) / now)
+    finally:
+        ctx.prec = before
+
+
+def test_doubles_claim_no_less_than_they_lose() -> None:
+    plant = chain(115)
+    low = convert(plant, "frequency-response", frequencies=[0.01, 0.2, 0.3])
+    claim = low.receipt.claim("response-error")
+    assert low.receipt.details["grid"]["points"] == 3 and claim.basis == "measured"
+    for w, value in zip(low.model.frequency.tolist(), low.model.response[:, 0, 0].tolist(), strict=True):
+        truth = chain_value(115, w)
+        # the damping of the model is 1e-3 K rounded: each entry is 1e-3 or 2e-3 to the last bit
+        assert abs(value - truth) <= claim.value * abs(truth)
+    assert claim.holds is not True and claim.value < 1e-9
+    # the roll-off there is beyond what doubles resolve: nothing is known of the digits
+    high = convert(plant, "frequency-response", frequencies=[0.2, 20.0]).receipt.claim("response-error")
+    assert high.infinite and high.holds is False
