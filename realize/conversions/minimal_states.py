@@ -16,12 +16,16 @@ import numpy as np
 from realize.conversions.builders import Grid, fractions, rounded, state_model
 from realize.errors import Refused
 from realize.models import Model, PoleResidue, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models.fractions import form_fractions
 
 if TYPE_CHECKING:
     from realize.conversions.route import Task
 
 #: Largest order for which Gramians in high precision are tried (seconds), and largest sum of degrees in all minors.
 LARGEST_DENSE, LARGEST_MINORS = 48, 400
+#: Largest degree of a minor over the common denominator: where channels share poles it is far below that sum; and the
+#: most inputs or outputs for which that limit counts.
+LARGEST_COMMON, COMMON_SIDE = 200, 8
 #: Numbers with at most this many significant digits were typed; longer ones were computed and rounded.
 TYPED_DIGITS = 12
 #: Units of rounding by which each number may be off, over the order.
@@ -67,7 +71,27 @@ def exactly_minimal(model: Model) -> bool:
     p, m = model.shape
     if isinstance(model, PoleResidue):
         return True
-    return min(p, m) * (model.order or 0) <= LARGEST_MINORS and max(p, m) <= 12
+    if max(p, m) > 12:
+        return False
+    if min(p, m) * (model.order or 0) <= LARGEST_MINORS:
+        return True
+    return max(p, m) <= COMMON_SIDE and min(p, m) * _common_degree(model) <= LARGEST_COMMON
+
+
+def _common_degree(model: Model) -> int:
+    """Return the degree of the least common denominator of all channels."""
+
+    def degree() -> int:
+        from realize.kernels.exact.polynomials import ONE, quotient, reduce_fraction
+
+        common = ONE
+        for row in form_fractions(model):
+            for n, d in row:
+                own = reduce_fraction(n, d)[1]
+                common = common * quotient(own, common.gcd(own))
+        return int(common.degree())
+
+    return int(model.remembered("common degree", degree))
 
 
 def minimal_modal(value: Any, task: Task) -> StateSpace:

@@ -112,6 +112,14 @@ BLOCKS_READ_OFF = Row(
     "mass, damping and stiffness where they stand as blocks in E and A",
 )
 
+MODES = Row(
+    "pole-residue",
+    "second-order",
+    second_order.second_order_from_residues,
+    False,
+    "a coordinate for each mode: unit mass, diagonal damping and stiffness",
+)
+
 #: From a state model to one in the same or fewer states: used by itself, never on the way to anything else.
 SMALLEST_DESCRIPTOR = Row(
     "state-space",
@@ -139,6 +147,7 @@ ROWS: tuple[Row, ...] = (
     ),
     MASS_AS_IT_STANDS,
     BLOCKS_READ_OFF,
+    MODES,
     Row(
         "second-order",
         "exact-fractions",
@@ -213,6 +222,7 @@ ROWS += tuple(
 DOUBLE_ROWS: tuple[Row, ...] = (
     MASS_AS_IT_STANDS,
     BLOCKS_READ_OFF,
+    MODES,
     Row("zero-pole-gain", "factors", doubles.factors_as_given, True, "poles, zeros and gain as they stand"),
     Row(
         "transfer-function",

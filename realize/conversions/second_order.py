@@ -4,18 +4,21 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from realize.errors import Refused
 from realize.forms.inversion import Verdict
 from realize.forms.second_order import NoStructure, second_order_parts, states_of_pencil
-from realize.models import Model, SecondOrder, Signal, StateSpace
+from realize.models import Model, PoleResidue, SecondOrder, Signal, StateSpace
 
 if TYPE_CHECKING:
     from realize.conversions.route import Task
 
 #: What a refusal says when a plant of another kind is to become a second-order model.
 STRUCTURE_NEEDED = (
-    "a second-order model is read off a state model whose states are positions and velocities; from {kind} there is no "
-    "such structure: convert to state-space --form modal to see the modes instead"
+    "a second-order model is read off a state model whose states are positions and velocities, or made of the modes of "
+    "a pole-residue model; from {kind} neither way is open: reduce the model first, or convert it to pole-residue and "
+    "that to second-order"
 )
 
 
@@ -69,10 +72,50 @@ def second_order_from_states(model: Model, task: Task) -> SecondOrder:
     except NoStructure as reason:
         raise Refused(
             f"no second-order structure: {reason}; bring the states into positions q and velocities v with q' = v, or "
-            "use --to state-space --form modal"
+            "convert --to pole-residue and that --to second-order, for the modes as coordinates"
         ) from None
     labels = [model.states[k].name or f"state {k}" for k in parts.positions]
     task.details["positions"] = labels
+    return SecondOrder(
+        mass=parts.mass,
+        damping=parts.damping,
+        stiffness=parts.stiffness,
+        input=parts.input,
+        position_output=parts.outputs[0],
+        velocity_output=parts.outputs[1],
+        direct=parts.direct,
+        **task.model.common(),
+    )
+
+
+def second_order_from_residues(model: Model, task: Task) -> SecondOrder:
+    """Modes as coordinates: unit mass, diagonal damping and stiffness; refused where poles are no pairs."""
+    from realize.forms.second_order_modes import modal_coordinates
+
+    assert isinstance(model, PoleResidue)
+    if model.time.sampled:
+        raise Refused("a second-order model is in continuous time, and this one is sampled")
+    if model.direct.shape[0] > 1:
+        raise Refused(
+            f"a polynomial part of degree {model.direct.shape[0] - 1} has no place in modal second-order coordinates; "
+            "take it off first, or use --to state-space"
+        )
+    try:
+        with np.errstate(over="ignore", under="ignore", invalid="ignore"):
+            parts = modal_coordinates(model.poles, model.residues, model.powers, model.direct[0])
+    except NoStructure as reason:
+        raise Refused(
+            f"no modal second-order coordinates: {reason}; use --to state-space --form modal, which takes poles of any "
+            "kind"
+        ) from None
+    n = parts.mass.shape[0]
+    task.details["modes"] = n
+    distinct = sum(1 for pole in set(model.poles.tolist()) if pole.imag > 0)
+    if n > 0 and 2 * distinct == model.poles.size and n > distinct:
+        task.notes.append(
+            f"{n} coordinates stand for {distinct} pairs of poles: a pair whose mode shape is not real, or whose "
+            "residue has a rank above one, takes a coordinate for each."
+        )
     return SecondOrder(
         mass=parts.mass,
         damping=parts.damping,

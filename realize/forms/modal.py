@@ -18,7 +18,7 @@ def _powers(exponents: NDArray[np.int64]) -> Array:
     return np.ldexp(1.0, exponents)
 
 
-def _factor(residue: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+def factor(residue: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
     """Return columns c and rows b with residue = c b, of the numerical rank of the residue, balanced in size.
 
     Rows and columns are first scaled by powers of two, so that the rank does not depend on units.
@@ -72,7 +72,7 @@ def modal_states(
         members = np.flatnonzero(poles == pole)
         highest = int(powers[members].max())
         if highest == 1:
-            c, b = _factor(residues[members[0]])
+            c, b = factor(residues[members[0]])
             blocks.append((pole * np.eye(c.shape[1]), b, c))
             continue
         laurent = np.zeros((highest, p, m), dtype=complex)

@@ -287,3 +287,76 @@ def test_three_coupled_chains() -> None:
 def lambda_upper(values: np.ndarray) -> np.ndarray:
     """Return which eigenvalues are listed: one of each pair."""
     return np.asarray(values.imag >= 0)
+
+
+MODAL: dict[str, tuple[TransferFunction, int]] = {
+    "oscillator": (TransferFunction(numerator=[1.0], denominator=[1.0, 0.125, 4.0]), 1),
+    "position and velocity": (TransferFunction(numerator=[2.0, 1.0], denominator=[1.0, 0.125, 4.0]), 1),
+    "rigid body": (TransferFunction(numerator=[1.0, 3.0], denominator=[1.0, 0.0, 0.0]), 1),
+    "two real poles": (TransferFunction(numerator=[1.0], denominator=[1.0, 3.0, 2.0]), 1),
+    "feed-through": (TransferFunction(numerator=[1.0, 0.0, 1.0], denominator=[1.0, 0.125, 4.0]), 1),
+    "huge": (TransferFunction(numerator=[1e300], denominator=[1.0, 1e150, 1e300]), 1),
+    "two modes, a zero channel": (
+        TransferFunction(
+            numerator=[[[1.0], [0.0]], [[2.0, 1.0], [5.0]]],
+            denominator=[[[1.0, 0.125, 4.0], [1.0]], [[1.0, 0.125, 4.0], [1.0, 0.0, 9.0]]],
+        ),
+        2,
+    ),
+}
+
+
+@pytest.mark.parametrize("name", MODAL)
+def test_modes_as_coordinates(name: str, oracle: Any) -> None:
+    source, modes = MODAL[name]
+    made = convert(source, "second-order")
+    model = made.model
+    assert isinstance(model, SecondOrder) and made.receipt.details["modes"] == modes == model.mass.shape[0]
+    assert np.array_equal(model.mass, np.eye(modes))
+    for matrix in (model.damping, model.stiffness):
+        assert np.array_equal(matrix, np.diag(np.diag(matrix)))
+    scale = 1e150 if name == "huge" else 1.0
+    error = oracle.error(source, model, [scale * w for w in (0.03, 0.5, 1.1, 2.0, 3.3)])
+    claim = made.receipt.claim("peak-error")
+    assert error < 1e-13 and claim.holds and claim.value < 1e-14
+    if name == "oscillator":
+        assert not model.velocity_output.any()
+    if name == "two modes, a zero channel":
+        assert np.all(model.evaluate(1j)[0, 1] == 0)
+
+
+def test_a_structure_in_other_coordinates_comes_back_as_its_modes(oracle: Any) -> None:
+    source = chain(FULL, damping=0.0625 * STIFF, velocity_output=None, acceleration_output=None, direct=None)
+    turn = np.array([[1.0, 2.0, 0.0], [0.0, 1.0, 3.0], [1.0, 0.0, 1.0]])
+    states = convert(source, "state-space").model
+    T = np.kron(np.eye(2), turn) + np.eye(6, k=3)
+    mixed = StateSpace(A=np.linalg.solve(T, states.A @ T), B=np.linalg.solve(T, states.B), C=states.C @ T)
+    with pytest.raises(Refused, match="pole-residue"):
+        convert(mixed, "second-order")
+    back = convert(convert(mixed, "pole-residue"), "second-order")
+    assert back.model.mass.shape == (3, 3)
+    assert oracle.error(source, back.model, W[1:5]) < 1e-11
+    modes = inspect(source)["modes"]
+    assert np.sqrt(np.sort(np.diag(back.model.stiffness))) == pytest.approx(
+        [mode["frequency"] for mode in modes], rel=1e-12, abs=1e-7
+    )
+    # damping that is not proportional: the mode shapes are complex, and each mode takes two coordinates
+    general = convert(convert(chain(FULL), "pole-residue"), "second-order")
+    assert general.model.mass.shape[0] > 3
+    assert any("mode shape is not real" in text for text in general.receipt.cautions)
+    assert oracle.error(chain(FULL), general.model, W[1:5]) < 1e-11
+
+
+@pytest.mark.parametrize(
+    ("numerator", "denominator", "match"),
+    [
+        ([1.0], [1.0, 1.0], "real poles are no pairs"),
+        ([1.0], [1.0, 4.0, 6.0, 4.0, 1.0], "repeats 4 times"),
+        ([1.0, 0.0, 0.0, 1.0], [1.0, 0.125, 4.0], "polynomial part of degree 1"),
+        ([3.0], [2.0], "at least one coordinate"),
+        ([1e-300], [1.0, 1e-160, 1e-320], "scale time"),
+    ],
+)
+def test_what_has_no_modes_in_pairs_is_refused(numerator: Any, denominator: Any, match: str) -> None:
+    with pytest.raises(Refused, match=match):
+        convert(TransferFunction(numerator=numerator, denominator=denominator), "second-order")

@@ -16,7 +16,11 @@ def value(claim: object) -> float:
     return np.inf if found is None else float(found)
 
 
-@pytest.mark.parametrize("seed", range(3 * len(FAMILIES)))
+#: Many channels that share few poles: the sum of their orders says nothing about the degree.
+SHARED = [207, 219, 351, 459, 482, 490]
+
+
+@pytest.mark.parametrize("seed", [*range(3 * len(FAMILIES)), *SHARED])
 def test_degree_and_errors_of_generated_matrices(seed: int) -> None:
     known = known_matrix(seed)
     made = convert(known.model, "state-space")
