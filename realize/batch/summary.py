@@ -78,7 +78,8 @@ class Summary:
         row["files"] += 1
         row["failed"] += claim["holds"] is False
         before = math.inf if row["infinite"] else row["value"]
-        if before is None or value > before:
+        # stability is 1 where it is kept and 0 where it is lost; every other claim is worse where it is larger
+        if before is None or (value < before if claim["name"] == "stability" else value > before):
             row.update(
                 value=None if math.isinf(value) else value,
                 infinite=math.isinf(value),

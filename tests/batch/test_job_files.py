@@ -172,3 +172,18 @@ def test_the_verbs_of_job_files_are_those_of_the_schema() -> None:
 )
 def test_values(takes: str, value: Any, result: Any) -> None:
     assert value_of(takes, value) == result
+
+
+def test_the_worst_claim_of_a_summary() -> None:
+    from realize.batch import Summary
+
+    def claim(name: str, value: float | None, infinite: bool = False) -> dict[str, Any]:
+        more = {"limit": 1.0, "holds": None, "basis": "proved", "unit": "relative"}
+        return {"name": name, "value": value, "infinite": infinite, **more}
+
+    found = Summary("j", "o", "r")
+    for k, (error, stable) in enumerate([(0.5, 1.0), (0.75, 0.0), (None, 1.0)]):
+        claims = [claim("peak-error", error, error is None), claim("stability", stable), claim("order", 3.0)]
+        found.add([{"file": f"f{k}", "step": 1, "verb": "reduce", "status": "done", "claims": claims}], earlier=False)
+    worst = {row["name"]: (row["value"], row["infinite"], row["file"], row["files"]) for row in found.worst}
+    assert worst == {"peak-error": (None, True, "f2", 3), "stability": (0.0, False, "f1", 3)}
