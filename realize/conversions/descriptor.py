@@ -142,8 +142,8 @@ def _joined(
 def _left_alone(model: StateSpace, task: Task, why: str) -> StateSpace:
     task.notes.append(
         f"The model keeps its E: doubles do not tell its finite and infinite modes apart ({why}). Conversions to "
-        "transfer-function and zero-pole-gain are exact where they are affordable, and the verb minimal takes modes out "
-        "that no input reaches or no output shows, such as those of a constraint that was differentiated."
+        "transfer-function and zero-pole-gain are exact where they are affordable, and the verb minimal takes modes "
+        "out that no input reaches or no output shows, such as those of a constraint that was differentiated."
     )
     return model
 
