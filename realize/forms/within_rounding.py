@@ -11,13 +11,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
-from realize.kernels.balancing import scale_model
+from realize.kernels import many_modes
+from realize.kernels.balancing import Scaled, scale_model
 from realize.kernels.hidden_modes import Part, Side, hidden_side, spectra
 
 Array = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
 EPS = float(np.finfo(float).eps)
 #: Up to this order the model is truncated in balanced coordinates of high precision.
-HIGH_PRECISION = 120
+HIGH_PRECISION = 60
+#: Above this order all modes are tried at once, unless their eigenvalues are crowded.
+TOGETHER_FROM = 60
 #: A step in the singular values of F' V this large makes their rank clear.
 CLEAR = 1e3
 
@@ -90,6 +94,10 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
         # what is lost by underflow could hide a mode: nothing is decided
         n = A.shape[0]
         return Hidden(n, [], math.inf, np.zeros((n, 0)), np.zeros((n, 0)), doubtful=True)
+    if A.shape[0] > TOGETHER_FROM:
+        vectors = many_modes.decomposition(scaled.A)
+        if not many_modes.crowded(vectors[0]):
+            return _together(scaled, threshold, *vectors)
     left, right = spectra(scaled.A)
     first = hidden_side(scaled.A, scaled.B, threshold, left)
     second = hidden_side(scaled.A.T, scaled.C.T, threshold, right)
@@ -112,6 +120,28 @@ def hidden_within(A: Array, B: Array, C: Array, E: Array | None, threshold: floa
         first.vectors / size[:, None],
         _reachable(first.vectors, second.vectors, both) * size[:, None],
         doubtful,
+    )
+
+
+def _together(scaled: Scaled, threshold: float, poles: ComplexArray, W: ComplexArray, X: ComplexArray) -> Hidden:
+    """Return the same for a large model whose eigenvalues are apart: all of them tried at once."""
+    first, unreached = many_modes.hidden_modes(scaled.A, scaled.B, threshold, poles, W, X)
+    second, unseen = many_modes.hidden_modes(scaled.A.T, scaled.C.T, threshold, poles, X, W)
+    unit = math.ldexp(1.0, scaled.time)
+    why = {(True, True): BOTH, (True, False): UNREACHABLE, (False, True): UNOBSERVABLE}
+    change = max([*first.errors, *second.errors], default=0.0)
+    modes = [
+        Mode(complex(poles[k]) * unit, why[bool(unreached[k]), bool(unseen[k])], change)
+        for k in np.flatnonzero(unreached | unseen).tolist()
+    ]
+    size = np.ldexp(1.0, scaled.states)
+    return Hidden(
+        poles.size - len(modes),
+        sorted(modes, key=lambda mode: (abs(mode.pole), mode.pole.real, -mode.pole.imag)),
+        min(first.kept, second.kept),
+        first.vectors / size[:, None],
+        _reachable(first.vectors, second.vectors, int(np.sum(unreached & unseen))) * size[:, None],
+        False,
     )
 
 
