@@ -13,13 +13,23 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from fractions import Fraction
-from functools import cached_property
+from functools import cached_property, partial
 from typing import Any
 
+import honesty_polynomials
 import numpy as np
 from flint import acb, acb_poly, arb, ctx, fmpq, fmpq_mat, fmpq_poly
 
-from realize.models import Model, PoleResidue, Sections, StateSpace, TransferFunction, ZeroPoleGain
+from realize.models import (
+    MatrixFraction,
+    Model,
+    PoleResidue,
+    SecondOrder,
+    Sections,
+    StateSpace,
+    TransferFunction,
+    ZeroPoleGain,
+)
 
 Poly = Any
 Pair = tuple[Any, Any]
@@ -206,6 +216,10 @@ def fractions_of(model: Model) -> list[list[Pair]]:
             above, below = (fmpq_poly([entry.real(section[w, c], k, w, c) for c in (2, 1, 0)]) for w in (0, 1))
             n, d = n * above, d * below
         return [[(n, d)]]
+    if isinstance(model, MatrixFraction):
+        return honesty_polynomials.matrix_fraction(model, partial(_Numbers, model))
+    if isinstance(model, SecondOrder):
+        return honesty_polynomials.second_order(model, partial(_Numbers, model))
     raise TypeError(model.kind)
 
 
