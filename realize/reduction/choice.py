@@ -17,6 +17,8 @@ Array = NDArray[np.float64]
 
 #: Length of the table of candidates.
 CANDIDATES = 20
+#: Up to this order of the source the table has errors that nothing depends on: beyond they cost more than the reduction.
+LISTED = 100
 
 
 def states(count: int) -> str:
@@ -147,8 +149,8 @@ def by_measured(offer: Offer, error: float, notes: list[str], *, first: int = 0,
 def candidates(offer: Offer, chosen: int, *, looked: bool) -> tuple[Candidate, ...]:
     """Return up to twenty orders with bound and error: all of them, or the steepest ones beside the chosen order.
 
-    Errors are looked for where the source has at most 300 states behind it; beyond, the chosen order's if the order was
-    chosen by errors (`looked`).
+    Errors are looked for where the source has at most 100 states, or at most 300 if the order was chosen by errors
+    (`looked`); beyond, the chosen order's alone, if it was chosen by them.
     """
     prepared, plan = offer.prepared, offer.plan
     allowed = sorted({*plan.cuts(), chosen})
@@ -167,12 +169,13 @@ def candidates(offer: Offer, chosen: int, *, looked: bool) -> tuple[Candidate, .
         ranked = sorted((order for order in allowed if order not in fixed), key=lambda order: (gap[order], order))
         allowed = sorted(fixed | set(ranked[: CANDIDATES - len(fixed)]))
     cheap = offer.meter.order <= FULL
+    all_errors = cheap and (looked or prepared.scaled.A.shape[0] <= LISTED)
     rows = []
     for order in allowed:
         found = bound = None
         if plan.tails is not None and (cheap or not offer.steady or order == chosen):
             bound = prepared.in_gain(offer.bound(order) or 0.0)
-        if cheap or (looked and order == chosen):
+        if all_errors or (looked and order == chosen):
             found = prepared.in_gain(offer.error(order))
         rows.append(Candidate(order + offer.kept_order, bound, found))
     return tuple(rows)

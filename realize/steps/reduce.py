@@ -144,6 +144,9 @@ def reduce(
             )
         claims.append(gap)
         details = _details(found, weights, band, plain)
+        for row in details["candidates"]:
+            if row["kept"] and row["error"] is None and band is None:
+                row["error"] = _found_error(claims, weights)
         details["licence"] = {"given": permit.given, "margin": permit.margin, "sentence": permit.sentence}
         cautions = list(found.notes)
         if loop is not None and loop.dead_time:
@@ -315,6 +318,13 @@ def _consequences(
     if weights.given:
         gap = widened(gap, _lost(source, plain, weights))
     return gap, licence(gap, weighted=weights.stated, dead_time=plain.dead_time is not None)
+
+
+def _found_error(claims: list[Claim], weights: Weights) -> float | None:
+    """Return the error of the order that was taken, as the claim found it."""
+    name = "weighted-error" if weights.given else "reduction-error"
+    value = next(claim.value for claim in claims if claim.name == name)
+    return value if value is not None and math.isfinite(value) else None
 
 
 def _lost(source: Model, plain: StateSpace, weights: Weights) -> float | None:

@@ -172,6 +172,16 @@ def test_table_of_candidates():
     assert bounds == sorted(bounds, reverse=True) and small.tail_bound in bounds
 
 
+def test_errors_in_the_table_where_they_are_cheap_or_choose_the_order():
+    few, many = random_model(30, 1, 1, 4, False), random_model(110, 1, 1, 4, False)
+    small = reduce_states(*few, sampled=False, order=7)
+    assert all(one.error is not None and one.error <= one.bound + small.rounding for one in small.candidates)
+    large = reduce_states(*many, sampled=False, order=7)
+    assert all(one.error is None and one.bound is not None for one in large.candidates)
+    looked = reduce_states(*many, sampled=False, absolute_error=large.bound, measured=True)
+    assert all(one.error is not None for one in looked.candidates) and looked.order <= 7
+
+
 def test_two_runs_agree_bit_by_bit():
     model = random_model(12, 2, 2, 9, False)
     kept = [matrix.copy() for matrix in model]
