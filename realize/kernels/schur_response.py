@@ -13,7 +13,7 @@ ComplexArray = NDArray[np.complex128]
 #: From this order on it takes the place of the complex Schur form, and its poles that of a second QR algorithm.
 LARGE = 400
 #: States solved for together.
-BLOCK = 32
+BLOCK = 16
 #: Points treated together.
 POINTS = 48
 #: Samples are no closer than this fraction of the distance to the nearest pole.
@@ -23,8 +23,8 @@ SHARE = 0.2
 class SchurResponse:
     """(sI - A)^-1 B, C (sI - A)^-1 and their product C (sI - A)^-1 B at complex points.
 
-    The states are scaled by powers of two first. With Q'A Q = T quasi-triangular the last block of states is solved for
-    at all points, taken off the rows above in one product, and so on: Golub & Van Loan, Matrix Computations, 4th ed.
+    The states are scaled by powers of two first. With Q'A Q = T quasi-triangular the last half of the states is solved
+    for at all points, taken off the rows above in one product, and each half likewise: Golub & Van Loan, Matrix Computations, 4th ed.
     (2013), section 3.1.
 
     Parameters
@@ -69,27 +69,54 @@ class SchurResponse:
         right = self._solved(self._T, self._b, points, self._blocks)
         turned = np.ascontiguousarray(self._T.T[::-1, ::-1])
         left = self._solved(turned, np.ascontiguousarray(self._c.T[::-1]), points, _cuts(turned))[:, :, ::-1]
-        return right @ self._Q.T, left @ self._Q.T
+        return _real_product(right, self._Q.T), _real_product(left, self._Q.T)
 
     @staticmethod
     def _solved(T: Array, b: Array, points: ComplexArray, blocks: list[tuple[int, int]]) -> ComplexArray:
         n, m = b.shape
         g = points.size
-        # real parts of all points and columns, then imaginary parts
-        left = np.zeros((2, g * m, n))
-        left[0] = np.tile(b.T, (g, 1))
-        x = np.empty((g, m, n), dtype=complex)
-        for low, high in reversed(blocks):
-            size = high - low
-            pencil = points[:, None, None] * np.eye(size) - T[low:high, low:high]
-            right = (left[0, :, low:high] + 1j * left[1, :, low:high]).reshape(g, m, size)
-            found = _each_solved(pencil, right.transpose(0, 2, 1)).transpose(0, 2, 1)
-            x[:, :, low:high] = found
-            if low:
-                with np.errstate(invalid="ignore"):
-                    flat = np.stack([found.real, found.imag]).reshape(2 * g * m, size)
-                    left[:, :, :low] += (flat @ T[:low, low:high].T).reshape(2, g * m, low)
-        return x
+        # a row for each state: real parts of all points and columns, then imaginary parts
+        x = np.zeros((n, 2 * g * m))
+        x[:, : g * m] = np.tile(b, (1, g))
+
+        def solve(first: int, last: int) -> None:
+            low, high = blocks[first][0], blocks[last - 1][1]
+            if last - first == 1:
+                size = high - low
+                pencil = points[:, None, None] * np.eye(size) - T[low:high, low:high]
+                right = _joined(x[low:high]).reshape(size, g, m)
+                found = _each_solved(pencil, right.transpose(1, 0, 2)).transpose(1, 0, 2).reshape(size, g * m)
+                x[low:high, : g * m], x[low:high, g * m :] = found.real, found.imag
+                return
+            middle = (first + last) // 2
+            solve(middle, last)
+            cut = blocks[middle][0]
+            with np.errstate(invalid="ignore"):
+                x[low:cut] += T[low:cut, cut:high] @ x[cut:high]
+            solve(first, middle)
+
+        if blocks:
+            solve(0, len(blocks))
+        return np.ascontiguousarray(_joined(x).reshape(n, g, m).transpose(1, 2, 0))
+
+
+def _joined(x: Array) -> ComplexArray:
+    """Return the complex numbers whose real parts are the first half of the columns."""
+    half = x.shape[1] // 2
+    result = np.empty((x.shape[0], half), dtype=complex)
+    # parts one by one: an infinite one times 1j would not be a number
+    result.real, result.imag = x[:, :half], x[:, half:]
+    return result
+
+
+def _real_product(values: ComplexArray, matrix: Array) -> ComplexArray:
+    """Return values @ matrix for a real matrix, real and imaginary parts in one product."""
+    flat = values.reshape(-1, values.shape[-1])
+    with np.errstate(invalid="ignore"):
+        product = np.vstack([flat.real, flat.imag]) @ matrix
+    result = np.empty((flat.shape[0], matrix.shape[1]), dtype=complex)
+    result.real, result.imag = product[: flat.shape[0]], product[flat.shape[0] :]
+    return result.reshape(*values.shape[:-1], -1)
 
 
 def _each_solved(pencil: ComplexArray, right: ComplexArray) -> ComplexArray:

@@ -17,7 +17,7 @@ Array = NDArray[np.float64]
 
 #: Length of the table of candidates.
 CANDIDATES = 20
-#: Up to this order of the source the table has errors that nothing depends on: beyond they cost more than the reduction.
+#: Up to this order of the source the table has errors that choose nothing: beyond they cost more than the reduction.
 LISTED = 100
 
 

@@ -26,8 +26,8 @@ class Projected:
 class Candidate:
     """One order that could be chosen: bound on the largest gain of the difference, and the largest found (absolute).
 
-    None: the method has no bound; the error was not looked for, because the source is large and the order was not chosen
-    by errors.
+    None: the method has no bound; the error was not looked for, because the source is large and the order was not
+    chosen by errors.
     """
 
     order: int
