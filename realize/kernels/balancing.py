@@ -59,6 +59,8 @@ def _top(matrix: Array) -> int:
 
 
 def _power(matrix: Array, exponents: NDArray[np.int64] | int) -> Array:
+    if not np.any(exponents):
+        return np.array(matrix)
     return np.ldexp(matrix, np.clip(exponents, -5000, 5000).astype(np.int64) if np.ndim(exponents) else exponents)
 
 
@@ -70,6 +72,12 @@ def _size(A: Array, states: NDArray[np.int64]) -> int:
     """Return the exponent of the largest entry of A with its states in units 2^states."""
     mantissa, exponent = np.frexp(np.abs(A))
     return int(np.max((exponent + states[None, :] - states[:, None])[mantissa > 0], initial=-5000))
+
+
+def _size_of_loops(A: Array) -> int:
+    """Return an exponent that the largest entry of A has in any units of the states: that of its shortest loops."""
+    root = np.sqrt(np.abs(A))
+    return _top(root * root.T)
 
 
 def _scale_of_loops(pattern: Array, n: int) -> NDArray[np.int64] | None:
@@ -139,8 +147,10 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             # inputs have no row and outputs no column, so they are left alone
             pattern = np.abs(border)
             states = _exponents(balancing_scale(pattern)[:n])
-            by_loops = _scale_of_loops(pattern, n)
-            if by_loops is not None and _size(A, by_loops) + WORTH_IT < _size(A, states):
+            size = _size(A, states)
+            # where loops of one or two states are about as large already nothing could be gained
+            by_loops = _scale_of_loops(pattern, n) if _size_of_loops(A) - 1 + WORTH_IT < size else None
+            if by_loops is not None and _size(A, by_loops) + WORTH_IT < size:
                 states = by_loops
             between = states[None, :] - states[:, None]
             own = _power(A, between)

@@ -16,6 +16,8 @@ LARGE = 400
 BLOCK = 16
 #: Points treated together.
 POINTS = 48
+#: Values at so many points are kept: several claims look at the same ones.
+REMEMBERED = 4000
 #: Samples are no closer than this fraction of the distance to the nearest pole.
 SHARE = 0.2
 
@@ -53,15 +55,23 @@ class SchurResponse:
         self._b, self._c = self._Q.T @ b, c @ self._Q
         self._T = np.ascontiguousarray(self._T)
         self._blocks = _cuts(self._T)
+        self._known: dict[complex, ComplexArray] = {}
 
     def values(self, points: ComplexArray) -> ComplexArray:
         """Return C (sI - A)^-1 B at each point, [k][p][m]; infinite at a pole."""
-        parts = [
-            np.einsum("pn,kmn->kpm", self._c, self._solved(self._T, self._b, points[k : k + POINTS], self._blocks))
-            for k in range(0, points.size, POINTS)
-        ]
-        values = np.concatenate(parts) if parts else np.empty((0, self._c.shape[0], self._b.shape[1]), dtype=complex)
-        values[~np.isfinite(values).all(axis=(1, 2))] = np.inf
+        known = self._known
+        new = np.array([point for point in dict.fromkeys(points.tolist()) if point not in known], dtype=complex)
+        found: list[ComplexArray] = []
+        for k in range(0, new.size, POINTS):
+            part = np.einsum("pn,kmn->kpm", self._c, self._solved(self._T, self._b, new[k : k + POINTS], self._blocks))
+            part[~np.isfinite(part).all(axis=(1, 2))] = np.inf
+            found += list(part)
+        here = dict(zip(new.tolist(), found, strict=True))
+        if len(known) + len(here) <= REMEMBERED:
+            known.update(here)
+        values = np.empty((points.size, self._c.shape[0], self._b.shape[1]), dtype=complex)
+        for row, point in enumerate(points.tolist()):
+            values[row] = here[point] if point in here else known[point]
         return values
 
     def solutions(self, points: ComplexArray) -> tuple[ComplexArray, ComplexArray]:

@@ -231,5 +231,8 @@ def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: 
 
         poles = np.concatenate([one.rough_poles.s for one in (view, *others)])
         w = thinned(w, np.asarray(1j * w, dtype=complex), poles, SHARE)
-    value, where = largest(size, w, band)
+        # samples that close together leave little to one zoom
+        value, where = largest(size, w, band, rounds=1)
+    else:
+        value, where = largest(size, w, band)
     return Extreme(value, where, None)

@@ -255,7 +255,7 @@ def _of_large(pair: Pair, band: Band, w: Array, direct: Array | None) -> tuple[f
     difference = norms.gains(pair.result.response(w) - source)
     gain, _ = largest(lambda x: norms.gains(pair.source.response(x)), w, band, rounds=2, values=norms.gains(source))
     value, where = largest(
-        lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band, rounds=6, values=difference
+        lambda x: norms.gains(pair.result.response(x) - pair.source.response(x)), w, band, rounds=4, values=difference
     )
     end = 0.0 if direct is None else float(norms.gains(direct[None].astype(complex))[0])
     if pair.source.period is None and end > value:
