@@ -26,8 +26,8 @@ class SchurResponse:
     """(sI - A)^-1 B, C (sI - A)^-1 and their product C (sI - A)^-1 B at complex points.
 
     The states are scaled by powers of two first. With Q'A Q = T quasi-triangular the last half of the states is solved
-    for at all points, taken off the rows above in one product, and each half likewise: Golub & Van Loan, Matrix Computations, 4th ed.
-    (2013), section 3.1.
+    for at all points, taken off the rows above in one product, and each half likewise: Golub & Van Loan, Matrix
+    Computations, 4th ed. (2013), section 3.1.
 
     Parameters
     ----------
