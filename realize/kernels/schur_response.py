@@ -126,7 +126,7 @@ def _real_product(values: ComplexArray, matrix: Array) -> ComplexArray:
         product = np.vstack([flat.real, flat.imag]) @ matrix
     result = np.empty((flat.shape[0], matrix.shape[1]), dtype=complex)
     result.real, result.imag = product[: flat.shape[0]], product[flat.shape[0] :]
-    return result.reshape(*values.shape[:-1], -1)
+    return result.reshape(*values.shape[:-1], matrix.shape[1])
 
 
 def _each_solved(pencil: ComplexArray, right: ComplexArray) -> ComplexArray:

@@ -60,3 +60,16 @@ def test_thinned_keeps_what_a_close_pole_needs():
     gap = np.diff(kept)
     distance = np.min(np.abs(1j * kept[:-1, None] - poles), axis=1)
     assert np.all(gap <= 0.2 * distance + 0.0101)
+
+
+def test_points_that_were_seen_before_and_none_at_all():
+    rng = np.random.default_rng(3)
+    A, B, C = rng.standard_normal((40, 40)), rng.standard_normal((40, 3)), rng.standard_normal((2, 40))
+    response = SchurResponse(A, B, C)
+    points = np.array([0.5 + 1j, 2j, 0.5 + 1j, -3j])
+    exact = np.array([C @ np.linalg.solve(s * np.eye(40) - A, B) for s in points])
+    first, again = response.values(points), response.values(points[::-1])
+    assert np.abs(first - exact).max() < 1e-10 * np.abs(exact).max()
+    assert np.array_equal(first[::-1], again)
+    assert response.values(points[:0]).shape == (0, 2, 3)
+    assert [part.shape for part in response.solutions(points[:0])] == [(0, 3, 40), (0, 2, 40)]
