@@ -219,7 +219,7 @@ def extreme_claim(
     )
 
 
-def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: View) -> Extreme:
+def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: View, rounds: int = 3) -> Extreme:
     """Return the largest value of a function of frequency found in doubles; nothing is proved."""
     from realize.verification.bands import whole_band
     from realize.verification.search import largest, seeds
@@ -232,7 +232,7 @@ def sampled_peak(view: View, size: Callable[[np.ndarray], np.ndarray], *others: 
         poles = np.concatenate([one.rough_poles.s for one in (view, *others)])
         w = thinned(w, np.asarray(1j * w, dtype=complex), poles, SHARE)
         # samples that close together leave little to one zoom
-        value, where = largest(size, w, band, rounds=1)
+        value, where = largest(size, w, band, rounds=rounds)
     else:
         value, where = largest(size, w, band)
     return Extreme(value, where, None)

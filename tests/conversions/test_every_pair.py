@@ -362,7 +362,10 @@ def test_a_common_denominator() -> None:
 def test_every_row_of_the_table_is_reached() -> None:
     used = set()
     for model in PLANTS.values():
-        for to, form in [*TARGETS, *([("second-order", None)] if model.kind == "state-space" else [])]:
+        for to, form in [
+            *TARGETS,
+            *([("second-order", None)] if model.kind in ("state-space", "pole-residue") else []),
+        ]:
             used.update((row.source, row.target) for row in plan_route(Task(model, to, form)))
     assert used == {(row.source, row.target) for row in (*ROWS, *COORDINATE_ROWS, SMALLEST_DESCRIPTOR)}
 
