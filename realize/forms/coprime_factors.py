@@ -59,9 +59,9 @@ def coprime_factors(
 
     References
     ----------
-    [1] M. Vidyasagar, Control System Synthesis: A Factorization Approach, 1985 (from memory).
-    [2] D. McFarlane, K. Glover, Robust Controller Design Using Normalized Coprime Factor Plant Descriptions, 1990
-        (from memory).
+    .. [1] M. Vidyasagar, Control System Synthesis: A Factorization Approach, 1985 (from memory).
+    .. [2] D. McFarlane, K. Glover, Robust Controller Design Using Normalized Coprime Factor Plant Descriptions, 1990
+       (from memory).
     """
     if not isinstance(model, StateSpace) or not is_identity(model.E):
         raise Refused("coprime factors need a state model without E; convert to state-space first")
