@@ -36,7 +36,14 @@ CLEARED = (0.0, 1e-13, 1e-10, 1e-7)
 NO_NUMBER = 1e-30
 
 
-def nearest_mode(M: Array, s: complex, w: ComplexArray, enough: float) -> tuple[float, complex, ComplexArray]:
+def nearest_mode(
+    M: Array,
+    s: complex,
+    w: ComplexArray,
+    enough: float,
+    free: Array | None = None,
+    found: Array | None = None,
+) -> tuple[float, complex, ComplexArray]:
     """Return the smallest backward error found from a start, with its s and w.
 
     Parameters
@@ -47,18 +54,27 @@ def nearest_mode(M: Array, s: complex, w: ComplexArray, enough: float) -> tuple[
         Where to start; a real s stays real.
     enough : float
         An error this small ends the search.
+    free : (n, q) array, optional
+        Orthonormal basis of the space that w lies in; everything unless given.
+    found : (n, k) array, optional
+        Vectors found before, whose rows the residual may use.
     """
     n, sizes = M.shape[0], np.abs(M)
+    F = np.zeros((n, 0)) if found is None else found
     real = s.imag == 0
     w = w.real.astype(complex) if real and np.linalg.norm(w.real) > 0.5 * np.linalg.norm(w) else w
     best, best_s, best_w = math.inf, s, w
+    # a w that is orthogonal to these lies in the free space
+    outside = np.zeros((n, 0))
+    if free is not None and free.shape[1] < n:
+        outside = np.linalg.qr(free, mode="complete")[0][:, free.shape[1] :]
     unit = np.eye(n, M.shape[1])
     idle = 0
     for floor in FLOORS:
         before = best
         for small in CLEARED:
             trial = np.where(np.abs(w) > small * np.abs(w).max(), w, 0.0)
-            error, trial_s = _backward_error(M, sizes, trial, real)
+            error, trial_s = _backward_error(M, sizes, F, trial, real)
             if error < best:
                 best, best_s, best_w = error, trial_s, trial
         idle = idle + 1 if best > 0.5 * before else 0
@@ -68,8 +84,11 @@ def nearest_mode(M: Array, s: complex, w: ComplexArray, enough: float) -> tuple[
         D = np.abs(w) @ sizes
         D = np.maximum(D, floor * D.max())
         N, lean = (M - s * unit) / D, np.concatenate([w, np.zeros(M.shape[1] - n)]) / D
-        # Gauss & Newton for w and s together; w moves orthogonally to itself
-        N = np.hstack([N, w.conj()[:, None]])
+        if F.shape[1]:
+            span = _allowed_rows(F, D)
+            N, lean = N - (N @ span) @ span.T, lean - span @ (span.T @ lean)
+        # Gauss & Newton for w and s together; w moves orthogonally to itself and to what was found before
+        N = np.hstack([N, outside, w.conj()[:, None]])
         # entries that are zero stay zero; rows of like size, so that rounding of the large ones drowns no others
         live = w != 0
         size = np.abs(N).max(axis=1)[live]
@@ -88,7 +107,15 @@ def nearest_mode(M: Array, s: complex, w: ComplexArray, enough: float) -> tuple[
     return best, best_s, best_w.astype(complex)
 
 
-def _backward_error(M: Array, sizes: Array, w: ComplexArray, real: bool) -> tuple[float, complex]:
+def _allowed_rows(F: Array, D: Array) -> Array:
+    """Return an orthonormal basis of the weighted rows of F'[I, 0], which a residual may have a share of."""
+    rows = np.zeros((D.size, F.shape[1]))
+    rows[: F.shape[0]] = F
+    basis: Array = np.linalg.qr(rows / D[:, None])[0]
+    return basis
+
+
+def _backward_error(M: Array, sizes: Array, F: Array, w: ComplexArray, real: bool) -> tuple[float, complex]:
     """Return the elementwise backward error of a left vector, and the eigenvalue that fits it best."""
     n = M.shape[0]
     D = np.abs(w) @ sizes
@@ -99,6 +126,10 @@ def _backward_error(M: Array, sizes: Array, w: ComplexArray, real: bool) -> tupl
     weight = np.maximum(D, NO_NUMBER * top)
     a, b = w @ M, np.concatenate([w, np.zeros(M.shape[1] - n)])
     noise = 4 * np.finfo(float).eps * np.abs(b)
+    if F.shape[1]:
+        span = _allowed_rows(F, weight)
+        scaled = np.stack([a / weight, b / weight])
+        a, b = (scaled - (scaled @ span) @ span.T) * weight
     x, y = a / weight, b / weight
     below = np.vdot(y, y).real
     s = complex(np.vdot(y, x) / below) if below > 0 else 0j

@@ -1,23 +1,11 @@
 """Modes of a state model that an elementwise relative change of its own numbers makes unreachable or unobservable.
 
-A mode s with left vector w is unreachable after a change |dA| <= eta |A|, |dB| <= eta |B| (zeros stay zero) exactly if
-w' [A + dA - s I, B + dB] = 0. For given s and w the smallest such eta is the elementwise backward error ::
-
-    eta(s, w) = max_j |r_j| / (|w|' |[A, B]|)_j,    r = w' [A - s I, B],
-
-for complex changes (Oettli & Prager 1964, applied to one row); it does not depend on the units of states, inputs and
-time. It is made small over s and w from every eigenvalue on, by singular vectors of the columns weighted with the
-denominators [2]_ [3]_. Modes found are taken out one after the other: the next w is orthogonal to the span F of those
-before, and its residual may use their rows, so that clusters and chains of generalised vectors are no exception.
+Each mode is searched for from its eigenvalue on (`single_mode`: the elementwise backward error, made small). Modes
+found are taken out one after the other: the next w is orthogonal to the span F of those before, and its residual may
+use their rows, so that clusters and chains of generalised vectors are no exception.
 
 Of a vector nearly parallel to those before only what is orthogonal to them counts, so that one mode is not counted
 twice. Unobservable modes are those of the dual, within the reachable subspace.
-
-.. [1] W. Oettli, W. Prager, Compatibility of approximate solution of linear equations with given error bounds for
-       coefficients and right-hand sides, Numer. Math. 6 (1964) 405-409.
-.. [2] R. Eising, Between controllable and uncontrollable, Syst. Control Lett. 4 (1984) 263-264.
-.. [3] C. C. Paige, Properties of numerical algorithms related to computing controllability, IEEE Trans. Automat.
-       Control 26 (1981) 130-138.
 """
 
 from __future__ import annotations
@@ -29,15 +17,13 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
+from realize.kernels.single_mode import nearest_mode
+
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
-#: Smallest denominators, relative to the largest, in the steps of the search over s and w.
-FLOORS = (1e-6, 1e-6, 1e-9, 1e-9, 1e-12, 1e-12, 1e-15, 1e-15)
-#: Steps without gain that end the search.
-PATIENCE = 3
-#: Entries of w this small, relative to the largest, are tried as zeros: rounding leaves something where nothing is.
-CLEARED = (0.0, 1e-13, 1e-10, 1e-7)
+#: Entries of a new direction this small are rounding where nothing is.
+CLEARED = 1e-13
 #: Models of at most this order have every mode searched; larger ones those whose own vectors are nearest to hidden.
 ALL_MODES = 100
 SOME_MODES = 8
@@ -51,8 +37,6 @@ OTHER = 1e-3
 CLUSTER = 1e-2
 #: Singular vectors tried at the centre of a cluster.
 CENTRED = 2
-#: Denominators of zero columns, relative to the largest: what has no number cannot be changed.
-NO_NUMBER = 1e-30
 
 
 @dataclass(frozen=True)
@@ -125,7 +109,7 @@ def hidden_side(
             searched += 1
             starts = _starts(s, free @ vectors[:, k], poles, A, B, free)
             for at, w in starts:
-                error, at, w = _judged(M, sizes, space, F, at, w, threshold, modes)
+                error, at, w = _judged(M, space, F, at, w, threshold, modes)
                 wider = _orthonormal(F, _real_basis(at, w)) if error <= threshold else None
                 if wider is not None:
                     F, accepted = wider, True
@@ -167,7 +151,6 @@ def _real_basis(s: complex, w: ComplexArray) -> Array:
 
 def _judged(
     M: Array,
-    sizes: Array,
     space: Array,
     F: Array,
     s: complex,
@@ -177,7 +160,7 @@ def _judged(
 ) -> tuple[float, complex, ComplexArray]:
     """Return backward error, eigenvalue and vector from a start: by itself, or beside those found that are near."""
     first = w
-    error, at, w = _search(M, sizes, space, np.zeros((F.shape[0], 0)), s, w, threshold)
+    error, at, w = nearest_mode(M, s, w, threshold / 64, space)
     if not F.shape[1]:
         return error, at, w
     rest = _rest(F, w)
@@ -185,7 +168,7 @@ def _judged(
     if error > threshold or not (rest >= APART or (other and rest >= SAME)):
         # not far from those before: what is orthogonal to them decides
         again, at = (w, at) if rest > SAME else (first, s)
-        error, at, w = _search(M, sizes, _complement(space, F), F, at, again, threshold)
+        error, at, w = nearest_mode(M, at, again, threshold / 64, _complement(space, F), F)
     return error, at, w
 
 
@@ -231,90 +214,5 @@ def _orthonormal(F: Array, more: Array) -> Array | None:
         if not rest > SAME * size:
             return None
         column = column / rest
-        F = np.column_stack([F, np.where(np.abs(column) > CLEARED[1], column, 0.0)])
+        F = np.column_stack([F, np.where(np.abs(column) > CLEARED, column, 0.0)])
     return F
-
-
-def _search(
-    M: Array, sizes: Array, free: Array, F: Array, s: complex, w: ComplexArray, threshold: float
-) -> tuple[float, complex, ComplexArray]:
-    """Return the smallest backward error found from a start, with its s and w."""
-    n = M.shape[0]
-    real = s.imag == 0
-    w = w.real.astype(complex) if real and np.linalg.norm(w.real) > 0.5 * np.linalg.norm(w) else w
-    best, best_s, best_w = math.inf, s, w
-    # a w that is orthogonal to these lies in the free space
-    outside = np.linalg.qr(free, mode="complete")[0][:, free.shape[1] :] if free.shape[1] < n else np.zeros((n, 0))
-    unit = np.eye(n, M.shape[1])
-    idle = 0
-    for floor in FLOORS:
-        before = best
-        for small in CLEARED:
-            trial = np.where(np.abs(w) > small * np.abs(w).max(), w, 0.0)
-            error, trial_s = _backward_error(M, sizes, F, trial, real)
-            if error < best:
-                best, best_s, best_w = error, trial_s, trial
-        idle = idle + 1 if best > 0.5 * before else 0
-        if best <= threshold / 64 or idle == PATIENCE or not np.isfinite(best):
-            break
-        w, s = best_w, best_s
-        D = np.abs(w) @ sizes
-        D = np.maximum(D, floor * D.max())
-        N, lean = (M - s * unit) / D, np.concatenate([w, np.zeros(M.shape[1] - n)]) / D
-        if F.shape[1]:
-            span = _allowed_rows(F, D)
-            N, lean = N - (N @ span) @ span.T, lean - span @ (span.T @ lean)
-        # Gauss & Newton for w and s together; w moves orthogonally to itself and to what was found before
-        N = np.hstack([N, outside, w.conj()[:, None]])
-        # entries that are zero stay zero; rows of like size, so that rounding of the large ones drowns no others
-        live = w != 0
-        size = np.abs(N).max(axis=1)[live]
-        scale = 1 / np.where(size > 0, size, 1.0)
-        edge = float(np.abs(lean).max()) or 1.0
-        table = np.vstack([N[live] * scale[:, None], np.pad(-lean / edge, (0, N.shape[1] - lean.size))])
-        right = -(w @ N)
-        right[-1] = 0.0
-        if real:
-            table, right = table.real, right.real
-        move = scipy.linalg.lstsq(table.T, right, lapack_driver="gelsy", check_finite=False)[0]
-        w = w.astype(complex)
-        w[live] += move[:-1] * scale
-        w = w / np.linalg.norm(w)
-        s = s + move[-1] / edge
-    return best, best_s, best_w.astype(complex)
-
-
-def _allowed_rows(F: Array, D: Array) -> Array:
-    """Return an orthonormal basis of the weighted rows of F'[I, 0], which a residual may have a share of."""
-    rows = np.zeros((D.size, F.shape[1]))
-    rows[: F.shape[0]] = F
-    basis: Array = np.linalg.qr(rows / D[:, None])[0]
-    return basis
-
-
-def _backward_error(M: Array, sizes: Array, F: Array, w: ComplexArray, real: bool) -> tuple[float, complex]:
-    """Return the elementwise backward error of a left vector, and the eigenvalue that fits it best."""
-    n = M.shape[0]
-    D = np.abs(w) @ sizes
-    top = D.max(initial=0.0)
-    if top == 0:
-        # nothing there depends on this state, and it on nothing
-        return 0.0, 0j
-    weight = np.maximum(D, NO_NUMBER * top)
-    a, b = w @ M, np.concatenate([w, np.zeros(M.shape[1] - n)])
-    noise = 4 * np.finfo(float).eps * np.abs(b)
-    if F.shape[1]:
-        span = _allowed_rows(F, weight)
-        scaled = np.stack([a / weight, b / weight])
-        a, b = (scaled - (scaled @ span) @ span.T) * weight
-    x, y = a / weight, b / weight
-    below = np.vdot(y, y).real
-    s = complex(np.vdot(y, x) / below) if below > 0 else 0j
-    s = complex(s.real, 0.0) if real else s
-    r = np.abs(a - s * b)
-    # where there is no number to change, the residual has to be nothing but rounding
-    r = np.where((D == 0) & (r <= noise * abs(s)), 0.0, r)
-    if np.any((D == 0) & (r > 0)):
-        return math.inf, s
-    error = np.divide(r, D, out=np.zeros(r.shape), where=D > 0)
-    return float(error.max()), s
