@@ -39,6 +39,10 @@ class NotStable(ValueError):
     """A Gramian was asked of a matrix with an eigenvalue outside the stability region."""
 
 
+class SingularEquation(NotStable):
+    """Two matrices have an eigenvalue in common to working precision; a Gramian's is then on the boundary."""
+
+
 def _cut(T: Array, low: int, high: int) -> int:
     """Return a place near the middle of low..high that cuts no 2 x 2 block of T."""
     middle = (low + high) // 2
@@ -86,7 +90,7 @@ def _substitute(A: Array, B: Array, X: Array, transposed: bool, sign: int) -> No
     if max(m, n) <= LEAF or (m >= n and m <= 2) or (n > m and n <= 2):
         solution, scale, info = scipy.linalg.lapack.dtrsyl(A, B, X, trana="T" if transposed else "N", isgn=sign)
         if info != 0 or scale == 0.0:
-            raise ValueError("the Sylvester equation is singular to working precision")
+            raise SingularEquation("the Sylvester equation is singular to working precision")
         X[:] = solution if scale == 1.0 else solution / scale
         return
     if m >= n:

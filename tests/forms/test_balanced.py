@@ -179,3 +179,11 @@ def test_order_zero_is_a_model_too() -> None:
     for form in (*NORMAL, "linear-quadratic-balanced"):
         new = TABLE[form].apply(np.zeros((0, 0)), np.zeros((0, 2)), np.zeros((1, 0)), np.ones((1, 2)), Setting())
         assert new.A.shape == (0, 0) and new.B.shape == (0, 2) and new.condition == 1.0
+
+
+def test_a_coupling_beyond_precision_is_refused_in_words() -> None:
+    """-1 beside 1e300 is zero to working precision: no Gramian, and no traceback."""
+    plant = realize.StateSpace(A=[[-1.0, 1e300], [0.0, -1.0]], B=[[0.0], [1.0]], C=[[1.0, 0.0]])
+    for form in ("balanced", "input-normal", "output-normal"):
+        with pytest.raises(realize.Refused, match="Gramians do not exist"):
+            realize.convert(plant, "state-space", form=form)
