@@ -7,7 +7,7 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.kernels.balancing import product_svd, scale_model
-from realize.kernels.lyapunov import NotStable, schur_gramian_factors
+from realize.kernels.lyapunov import schur_gramian_factors
 
 Array = NDArray[np.float64]
 
@@ -78,10 +78,7 @@ def estimated_values(A: Array, B: Array, C: Array, *, sampled: bool) -> tuple[Ar
 
 def _values(A: Array, B: Array, C: Array, sampled: bool) -> Array:
     T, Q = scipy.linalg.schur(np.ascontiguousarray(A), output="real", check_finite=False)
-    try:
-        L, R = schur_gramian_factors(T, Q.T @ B, C @ Q, sampled=sampled)
-    except ValueError as error:
-        raise NotStable(str(error)) from None
+    L, R = schur_gramian_factors(T, Q.T @ B, C @ Q, sampled=sampled)
     return product_svd(R, L)[1]
 
 
