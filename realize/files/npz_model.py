@@ -5,8 +5,9 @@
 - Vectors of different lengths by channel (numerator, denominator, zeros, poles) are NAME_values, one channel after the
   other, output by output, and NAME_lengths [outputs][inputs]. One flat vector NAME, or [outputs][inputs][k], reads too.
 - ``sections`` is [k][2][3]: numerator and denominator of each section.
-- Everything else is JSON text in one array called ``model``: realize, kind, time, signals, dead time, offset, receipts,
-  and ``decimals``: for each field a list of [index, decimal string]. Each may also be a text array of its own name.
+- Everything else is JSON text in one array called ``model``: realize, kind, time, signals, dead time, offset, ports,
+  receipts, and ``decimals``: for each field a list of [index, decimal string]. Each may also be a text array of its
+  own name.
 - Without ``kind``, the arrays A, B, C (and D, E) are a continuous state-space model; B or C may be one-dimensional.
 - Arrays whose names start with ``published_`` are left alone; any other unknown array is refused.
 """

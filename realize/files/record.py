@@ -18,7 +18,7 @@ from realize.errors import InputError
 from realize.files import trees
 from realize.files.fields import READERS, Reading, as_object, nearest, signals, text
 from realize.files.json_text import Mark, Twice
-from realize.models import CONTINUOUS, MODEL_TYPES, DeadTime, Model, Offset, Signal, TimeBase
+from realize.models import CONTINUOUS, MODEL_TYPES, DeadTime, Model, Offset, Ports, Signal, TimeBase
 from realize.schema import COMMON_FIELDS, FORMAT_VERSION, KINDS, Receipt, receipt_from_record, receipt_to_record
 
 
@@ -87,6 +87,8 @@ def build(kind: str, values: dict[str, Any], record: dict[str, Any], reading: Re
             common[name] = signals(record[name], name, reading)
     if "offset" in record:
         common["offset"] = _offset(record["offset"])
+    if "ports" in record:
+        common["ports"] = _ports(record["ports"])
     if "receipts" in record:
         common["receipts"] = _receipts(record["receipts"])
     dead = _dead_time(record["dead_time"]) if "dead_time" in record else {}
@@ -140,6 +142,12 @@ def _dead_time(value: Any) -> dict[str, Any]:
 def _offset(value: Any) -> Offset | None:
     given = as_object(value, "offset", ("inputs", "outputs", "states"), says=COMMON_FIELDS["offset"])
     return Offset(**{name: _vector(given[name], f"offset.{name}") for name in given}) if given else None
+
+
+def _ports(value: Any) -> Ports:
+    given = as_object(value, "ports", ("parameter", "reference"), ("parameter",), says=COMMON_FIELDS["ports"])
+    reference = _vector(given["reference"], "ports.reference") if "reference" in given else None
+    return Ports(text(given["parameter"], "ports.parameter"), reference)
 
 
 def _sound(value: Any, place: str) -> None:
@@ -213,6 +221,10 @@ def common_to_record(model: Model) -> dict[str, Any]:
         offset = {name: [float(value) for value in values] for name, values in given.items() if values is not None}
         if offset:
             record["offset"] = offset
+    if model.ports is not None:
+        record["ports"] = {"parameter": model.ports.parameter}
+        if model.ports.reference is not None:
+            record["ports"]["reference"] = list(model.ports.reference)
     if model.receipts:
         record["receipts"] = [_finite(receipt_to_record(receipt)) for receipt in model.receipts]
     return record

@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 
 from realize.errors import InputError, Refused
-from realize.models import CONTINUOUS, Model, Offset, Signal, TimeBase
+from realize.models import CONTINUOUS, Model, Offset, Ports, Signal, TimeBase
 
 #: Name of the attribute on an object of another library.
 ATTRIBUTE = "realize_carried"
@@ -17,19 +17,20 @@ ATTRIBUTE = "realize_carried"
 
 @dataclass(frozen=True)
 class Carried:
-    """Signals, time base and operating point of the model that an object was made from."""
+    """Signals, time base, operating point and ports of the model that an object was made from."""
 
     inputs: tuple[Signal, ...]
     outputs: tuple[Signal, ...]
     states: tuple[Signal, ...]
     time: TimeBase
     offset: Offset | None
+    ports: Ports | None
 
 
 def attach(target: Any, model: Model) -> Any:
-    """Return the object with the model's signals, time base and operating point on it."""
+    """Return the object with the model's signals, time base, operating point and ports on it."""
     states = tuple(getattr(model, "states", ()) or ())
-    setattr(target, ATTRIBUTE, Carried(model.inputs, model.outputs, states, model.time, model.offset))
+    setattr(target, ATTRIBUTE, Carried(model.inputs, model.outputs, states, model.time, model.offset, model.ports))
     return target
 
 

@@ -57,6 +57,7 @@ def _from_control(value: Any) -> Model:
         "inputs": signals(value.input_labels, "u", kept.inputs if kept else None),
         "outputs": signals(value.output_labels, "y", kept.outputs if kept else None),
         "offset": kept.offset if kept else None,
+        "ports": kept.ports if kept else None,
     }
     if isinstance(value, control.StateSpace):
         states = signals(value.state_labels, "x", kept.states if kept else None)
@@ -79,7 +80,7 @@ def _from_scipy(value: Any) -> Model:
     kept = carried(value, shape, count)
     common: dict[str, Any] = {"time": time_of(value.dt, kept)}
     if kept is not None:
-        common |= {"inputs": kept.inputs, "outputs": kept.outputs, "offset": kept.offset}
+        common |= {"inputs": kept.inputs, "outputs": kept.outputs, "offset": kept.offset, "ports": kept.ports}
     if isinstance(value, signal.StateSpace):
         states = kept.states if kept is not None else ()
         return StateSpace(A=value.A, B=value.B, C=value.C, D=value.D, states=states, **common)
@@ -94,7 +95,7 @@ def to_library(model: Model | Conversion, library: str = "control") -> Any:
     """Return a model as an object of another library, every number as it is.
 
     Names become labels of `control`; what a library has no place for (units, names in `scipy.signal`, operating point,
-    an exact rate) rides along on the object for `from_library`. Receipts stay behind.
+    ports, an exact rate) rides along on the object for `from_library`. Receipts stay behind.
 
     Parameters
     ----------

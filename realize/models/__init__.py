@@ -1,6 +1,6 @@
 """The kinds of models, one file a kind."""
 
-from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Signal, TimeBase
+from realize.models.base import CONTINUOUS, DeadTime, Model, Offset, Ports, Signal, TimeBase
 from realize.models.digest import digest, mark
 from realize.models.frequency_response import FrequencyResponse
 from realize.models.impulse_response import ImpulseResponse, is_data
@@ -37,6 +37,7 @@ __all__ = [
     "Model",
     "Offset",
     "PoleResidue",
+    "Ports",
     "SecondOrder",
     "Sections",
     "Signal",

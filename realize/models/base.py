@@ -1,4 +1,4 @@
-"""What every model has: signals, time base, dead time, operating point, exact decimals, receipts."""
+"""What every model has: signals, time base, dead time, operating point, ports, exact decimals, receipts."""
 
 from __future__ import annotations
 
@@ -12,7 +12,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from realize.errors import InputError
 from realize.models import checks
-from realize.schema import KINDS, Receipt
+from realize.schema import KINDS, PORT_PARAMETERS, Receipt
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -123,6 +123,42 @@ class Offset:
     states: tuple[float, ...] | None = None
 
 
+@dataclass(frozen=True, slots=True)
+class Ports:
+    """The inputs and outputs are those of the ports of a network: which parameter the response is, and its reference.
+
+    Parameters
+    ----------
+    parameter : str
+        A name of ``realize.schema.PORT_PARAMETERS``: "scattering", "impedance", "admittance", "hybrid",
+        "inverse-hybrid".
+    reference : sequence of float, optional
+        Reference resistance of each port, ohm; a scattering matrix has one.
+    """
+
+    parameter: str
+    reference: tuple[float, ...] | None = None
+
+    def checked(self, p: int, m: int) -> Ports:
+        """Return the same with plain floats; raises InputError where it does not fit p outputs and m inputs."""
+        if self.parameter not in PORT_PARAMETERS:
+            raise InputError(f"{self.parameter!r}", "one of " + ", ".join(PORT_PARAMETERS), field="ports.parameter")
+        if p != m:
+            raise InputError(f"ports with {p} outputs and {m} inputs", "as many outputs as inputs", field="ports")
+        if "hybrid" in self.parameter and p != 2:
+            raise InputError(f"{self.parameter} parameters of {p} ports", "two ports", field="ports.parameter")
+        if self.reference is None:
+            if self.parameter == "scattering":
+                raise InputError("missing", "reference resistances, ohm", field="ports.reference")
+            return self
+        values = checks.array(list(self.reference), "ports.reference", 1)
+        if values.size != p:
+            raise InputError(f"{values.size} values", f"{p}, one for each port", field="ports.reference")
+        for k in np.flatnonzero(values <= 0):
+            raise InputError(f"{values[k]}", "a resistance greater than zero, ohm", field=f"ports.reference[{k}]")
+        return Ports(self.parameter, tuple(values.tolist()))
+
+
 def _freeze(value: Any) -> None:
     """Make the arrays of a copied model read-only again, also those in nested tuples."""
     if isinstance(value, np.ndarray):
@@ -143,6 +179,8 @@ class Model:
         Names and units; empty means unnamed.
     dead_time : DeadTime, optional
     offset : Offset, optional
+    ports : Ports, optional
+        Where inputs and outputs are those of the ports of a network: the parameter and its reference.
     receipts : sequence of Receipt
         The steps that led here, oldest first.
     decimals : mapping of field name to {index: decimal string}
@@ -156,6 +194,7 @@ class Model:
     outputs: tuple[Signal, ...] = ()
     dead_time: DeadTime | None = None
     offset: Offset | None = None
+    ports: Ports | None = None
     receipts: tuple[Receipt, ...] = ()
     decimals: Mapping[str, Mapping[Index, str]] = field(default_factory=dict)
 
@@ -169,6 +208,8 @@ class Model:
         put("decimals", {name: dict(rows) for name, rows in self.decimals.items() if rows})
         if self.dead_time is not None:
             put("dead_time", self._checked_dead_time(self.dead_time, p, m))
+        if self.ports is not None:
+            put("ports", self.ports.checked(p, m))
         if self.offset is not None:
             sizes = {"inputs": m, "outputs": p, "states": self.state_count}
             for name, size in sizes.items():
@@ -299,7 +340,7 @@ class Model:
         return replace(self, **changes)
 
     def common(self) -> dict[str, Any]:
-        """Return what every step hands on: time, signals, dead time, operating point of the signals, receipts."""
+        """Return what every step hands on: time, signals, dead time, operating point of signals, ports, receipts."""
         offset = self.offset
         if offset is not None and offset.states is not None:
             offset = Offset(offset.inputs, offset.outputs)
@@ -309,6 +350,7 @@ class Model:
             "outputs": self.outputs,
             "dead_time": self.dead_time,
             "offset": offset,
+            "ports": self.ports,
             "receipts": self.receipts,
         }
 

@@ -34,7 +34,7 @@ def _feed(parts: list[bytes], value: Any) -> None:
 
 
 def digest(model: Model) -> str:
-    """Return ``sha256:`` and 64 hexadecimal digits over kind, time, signals, dead time, operating point and numbers."""
+    """Return ``sha256:`` and 64 hexadecimal digits over everything but receipts."""
     return model.remembered("digest", lambda: _digest(model))  # type: ignore[no-any-return]
 
 
@@ -46,6 +46,8 @@ def _digest(model: Model) -> str:
     _feed(parts, None if dead is None else [dead.inputs, dead.outputs, dead.channels])
     offset = model.offset
     _feed(parts, None if offset is None else [offset.inputs, offset.outputs, offset.states])
+    if model.ports is not None:
+        _feed(parts, ["ports", model.ports.parameter, model.ports.reference])
     for name, value in model.parameters().items():
         if name != "states":
             _feed(parts, [name, value])

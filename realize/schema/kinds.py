@@ -160,6 +160,16 @@ KINDS: dict[str, Kind] = {
     )
 }
 
+#: What the response of a network with ports is: name, and what it relates, output by input.
+PORT_PARAMETERS: dict[str, str] = {
+    "scattering": "waves out of the ports by waves into them",
+    "impedance": "voltages by currents into the ports, ohm",
+    "admittance": "currents into the ports by voltages, siemens",
+    "hybrid": "two ports: voltage of the first and current of the second by current of the first and voltage of the "
+    "second",
+    "inverse-hybrid": "two ports: the inverse of hybrid",
+}
+
 PARAMETRIC_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric)
 #: Kinds that hold data: targets of a conversion, never sources.
 DATA_KINDS = tuple(name for name, kind in KINDS.items() if not kind.parametric)
@@ -176,5 +186,9 @@ COMMON_FIELDS: dict[str, str] = {
     "outputs": '[p] of {"name": text, "unit": text}',
     "dead_time": '{"inputs": [m], "outputs": [p], "channels": [p][m]} in seconds, all optional',
     "offset": '{"inputs": [m], "outputs": [p], "states": [n]}: the operating point, carried along, all optional',
+    "ports": '{"parameter": one of '
+    + ", ".join(PORT_PARAMETERS)
+    + ', "reference": [p] in ohm}, for inputs and outputs that are the ports of a network; carried along; '
+    "scattering needs the reference",
     "receipts": "receipts of the steps that led to this model, oldest first",
 }

@@ -49,6 +49,10 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
     }
     if model.dead_time is not None:
         record["dead_time"] = model.dead_time.total.tolist()
+    if model.ports is not None:
+        record["ports"] = {"parameter": model.ports.parameter} | (
+            {} if model.ports.reference is None else {"reference": list(model.ports.reference)}
+        )
     if isinstance(model, FrequencyResponse):
         return record | _data(model)
     if isinstance(model, ImpulseResponse):

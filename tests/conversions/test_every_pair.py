@@ -18,6 +18,7 @@ from realize.models import (
     Model,
     Offset,
     PoleResidue,
+    Ports,
     SecondOrder,
     Sections,
     Signal,
@@ -316,6 +317,7 @@ def test_everything_else_travels(to: str, form: str | None) -> None:
         "outputs": (Signal("angle", "rad"),),
         "dead_time": DeadTime((0.1,), (0.2,), ((0.3,),)),
         "offset": Offset((1.0,), (2.0,)),
+        "ports": Ports("scattering", (50.0,)),
     }
     made = convert(tf([1.0, 2.0], [1.0, 3.0, 5.0], **common), to, form=form)
     for name, value in common.items():

@@ -120,6 +120,9 @@ def records(draw, kind):
         record["outputs"] = [{"name": f"y{k}" + draw(SAFE)} for k in range(p)]
     if draw(st.booleans()):
         record["offset"] = {"inputs": draw(st.lists(REALS, min_size=m, max_size=m))}
+    if p == m and draw(st.booleans()):
+        record["ports"] = {"parameter": draw(st.sampled_from(["scattering", "impedance", "admittance"]))}
+        record["ports"]["reference"] = draw(st.lists(st.floats(1e-3, 1e9), min_size=p, max_size=p))
     if draw(st.booleans()) and "time" not in record:
         record["dead_time"] = {"channels": draw(matrix(p, m, st.floats(0, 1e9)))}
     return record
@@ -138,7 +141,7 @@ def assert_same(left, right):
     assert type(left) is type(right)
     for name, value in left.parameters().items():
         assert bits(getattr(right, name)) == bits(value), name
-    for name in ("time", "inputs", "outputs", "dead_time", "offset", "receipts"):
+    for name in ("time", "inputs", "outputs", "dead_time", "offset", "ports", "receipts"):
         assert repr(getattr(left, name)) == repr(getattr(right, name)), name
     assert left.decimals == right.decimals
     assert digest(left) == digest(right)

@@ -23,6 +23,7 @@ COMMON: dict[str, Any] = {
     "inputs": (Signal("torque", "N*m"),),
     "outputs": (Signal("", "rad"),),
     "offset": Offset(inputs=(1.0,), outputs=(2.0,)),
+    "ports": realize.Ports("admittance"),
 }
 STATES = realize.StateSpace(
     A=[[0.1, 0.2], [0.3, -0.4]], B=[[1], [2]], C=[[3, 1 / 3]], D=[[0.5]], states=(Signal("a", "m"), Signal()), **COMMON
@@ -48,6 +49,7 @@ def test_there_and_back(model: Any, library: str) -> None:
     back = realize.from_library(there)
     assert mark(back) == mark(model)
     assert back.time == model.time and back.inputs == model.inputs and back.offset == model.offset
+    assert back.ports == model.ports
     if isinstance(model, realize.StateSpace) and model.order:
         assert back.states == model.states
     again = realize.from_library(copy.deepcopy(there))
@@ -123,7 +125,8 @@ def test_what_cannot_be_held_is_refused() -> None:
 def test_arrays_out_and_in(model: Any) -> None:
     back = realize.from_library(realize.to_arrays(model))
     assert (
-        mark(back.with_(**{n: getattr(model, n) for n in ("time", "inputs", "outputs", "offset")})).order == model.order
+        mark(back.with_(**{n: getattr(model, n) for n in ("time", "inputs", "outputs", "offset", "ports")})).order
+        == model.order
     )
     for name, value in model.parameters().items():
         if name != "states" and value is not None:
