@@ -4,5 +4,17 @@ from realize.fitting import vector_fitting as _vector_fitting
 from realize.fitting.face import fit_response
 from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
 from realize.fitting.registry import METHODS, Method, choose_method
+from realize.fitting.structure import Structure
 
-__all__ = ["METHODS", "Candidate", "Fit", "Method", "Noise", "PoleRow", "Worst", "choose_method", "fit_response"]
+__all__ = [
+    "METHODS",
+    "Candidate",
+    "Fit",
+    "Method",
+    "Noise",
+    "PoleRow",
+    "Structure",
+    "Worst",
+    "choose_method",
+    "fit_response",
+]

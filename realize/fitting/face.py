@@ -7,7 +7,7 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from realize.errors import InputError, Refused
+from realize.errors import InputError, Refused, UsageError
 from realize.fitting import noise as noises
 from realize.fitting.order import HIGHEST_ORDER
 from realize.fitting.problem import Problem
@@ -15,6 +15,7 @@ from realize.fitting.records import Candidate, Fit
 from realize.fitting.registry import choose_method
 from realize.fitting.result import finish
 from realize.fitting.sampled import warped
+from realize.fitting.structure import Structure, check, inside
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -33,6 +34,7 @@ def fit_response(
     method: str = "auto",
     period: float | None = None,
     direct: bool | Literal["auto"] = True,
+    structure: Structure | None = None,
 ) -> Fit:
     """Fit a rational model with common stable poles to a measured frequency response.
 
@@ -63,7 +65,9 @@ def fit_response(
     period : float, optional
         Sampling period of a sampled response, s.
     direct : bool or "auto"
-        Constant real direct term: True, False, or as the criterion says.
+        Constant real direct term: True, False, or as the criterion says; a structure's relative degree comes first.
+    structure : Structure, optional
+        What the model must keep. Orders count fixed poles and integrators as well.
 
     Returns
     -------
@@ -88,12 +92,24 @@ def fit_response(
     if not (direct is True or direct is False or direct == "auto"):
         raise InputError(f"direct = {direct!r}", 'True, False or "auto"', field="direct")
     wanted = _order_range(order)
+    kept = structure if structure is not None else Structure()
+    check(kept, period)
+    if kept.relative_degree:
+        direct = False
     x, used = (w, np.ones(lines, bool)) if period is None else warped(w, period)
     cautions: list[str] = []
     if not np.all(used):
         cautions.append("the line at half the sampling rate (z = -1) is left out of the fit")
     if not np.any(used):
         raise InputError("only a line at half the sampling rate", "lines below it", field="frequency")
+    on_pole = _lines_at(fixed_poles_of(kept, period), w, period) & used
+    if np.any(on_pole):
+        cautions.append(f"{int(np.sum(on_pole))} line(s) at a fixed pole are left out of the fit")
+        used &= ~on_pole
+    if not np.any(used & (x > 0)):
+        raise InputError(
+            "no line above frequency 0 that could be used", "lines away from fixed poles", field="frequency"
+        )
     shift = _middle_exponent(x[used])
     points = 1j * np.ldexp(x[used], -shift)
     flat = H.reshape(lines, p * m)
@@ -104,10 +120,13 @@ def fit_response(
     weights, basis = _weights(points.imag, values, sigma, gamma, lift, used)
     if sigma is not None and basis != "given":
         cautions.append("a channel has no deviation above zero: the deviations given are not used")
-    problem = Problem(points, values, weights, basis == "given", basis == "estimated", direct is not False, vanish)
+    within = None if kept.plain else inside(kept, period, shift, lift)
+    problem = Problem(
+        points, values, weights, basis == "given", basis == "estimated", direct is not False, vanish, within
+    )
     chosen = choose_method(method, problem)
     exact = _exactly_constant(values)
-    if exact and (direct is not False or not np.any(values)):
+    if exact and within is None and (direct is not False or not np.any(values)):
         if wanted[0] > 0:
             cautions.append("the response is one real constant at all lines: order 0, whatever order was asked")
         trivial = (Candidate(0, 0.0, 0.0, 0.0, True),)
@@ -117,8 +136,10 @@ def fit_response(
     lowest, highest = _within_reach(problem, wanted, lines)
     outcome = chosen.fit(problem, lowest, highest, direct == "auto")
     cautions.extend(outcome.cautions)
-    if wanted == (0, None) and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
-        cautions.append(f"the order stopped at the highest one tried ({highest}), not because more brought nothing")
+    if order == "auto" and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
+        cautions.append(
+            f"the order stopped at the highest one tried ({highest + problem.given}), not because more brought nothing"
+        )
     return finish(
         w,
         H,
@@ -208,13 +229,34 @@ def _order_range(order: Any) -> tuple[int, int | None]:
     return low, high
 
 
+def fixed_poles_of(structure: Structure, period: float | None) -> ComplexArray:
+    """Return all fixed poles, integrators included."""
+    origin = 0j if period is None else 1 + 0j
+    return np.array([*structure.fixed_poles, *[origin] * structure.integrators], dtype=complex)
+
+
+def _lines_at(poles: ComplexArray, w: Array, period: float | None) -> NDArray[np.bool_]:
+    points = 1j * w if period is None else np.exp(1j * w * period)
+    return np.any(points[:, None] == poles[None, :], axis=1)
+
+
 def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) -> tuple[int, int]:
+    """Return the lowest and highest number of free poles for a range of orders."""
     largest = problem.largest_order
-    low, high = wanted
+    low, high = wanted[0] - problem.given, None if wanted[1] is None else wanted[1] - problem.given
+    if high is not None and high < problem.fewest:
+        kept = problem.structure
+        raise UsageError(
+            f"order {wanted[1]} has no room for {problem.given} fixed pole(s) and a relative degree plus fixed zeros "
+            f"of {0 if kept is None else kept.known.excess + kept.known.zeros.size}; an order of at least "
+            f"{problem.fewest + problem.given} has"
+        )
+    low = max(low, problem.fewest)
     if low > largest or problem.unknowns(low) > problem.numbers:
         raise InputError(
-            f"{problem.unknowns(low)} unknowns for order {low} and {problem.numbers} numbers in {lines} line(s)",
-            f"an order of at most {largest}, or more lines",
+            f"{problem.unknowns(low)} unknowns for order {low + problem.given} and {problem.numbers} numbers in "
+            f"{lines} line(s)",
+            f"an order of at most {largest + problem.given}, or more lines",
             field="order",
         )
     if high is None:

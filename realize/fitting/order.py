@@ -14,15 +14,7 @@ from numpy.typing import NDArray
 
 from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
-from realize.kernels.variable_projection import best_additions, polished
-from realize.kernels.vector_fitting import (
-    ordered_poles,
-    relocated,
-    separated_poles,
-    starting_poles,
-    vector_fit,
-    weighted_cost,
-)
+from realize.kernels.vector_fitting import ordered_poles, starting_poles, weighted_cost
 
 ComplexArray = NDArray[np.complex128]
 
@@ -69,20 +61,22 @@ def spacing_of(problem: Problem) -> str:
 
 def polish(problem: Problem, poles: ComplexArray, iterations: int, tolerance: float) -> Trial:
     """Return the poles after variable projection, set apart where they coincide."""
-    p = problem
-    better, cost = polished(p.points, poles, p.values, p.weights, p.direct, p.vanish, iterations, tolerance)
-    return Trial(better, cost)
+    return Trial(*problem.polished(poles, iterations, tolerance))
 
 
 def relocate(problem: Problem, poles: ComplexArray, iterations: int) -> Trial:
     """Return the best poles of vector fitting from a start."""
-    p = problem
-    return Trial(*vector_fit(p.points, poles, p.values, p.weights, p.direct, p.vanish, iterations))
+    return Trial(*problem.relocated(poles, iterations))
 
 
 def start(problem: Problem, order: int, spacing: str) -> ComplexArray:
     low, high = problem.band()
     return starting_poles(low, high if high > low else 2 * low, order, spacing)
+
+
+def joined(poles: ComplexArray, more: ComplexArray) -> ComplexArray:
+    """Return both lists as one, ordered; poles on the right stay there."""
+    return ordered_poles(np.concatenate([poles, more]), reflect=False)
 
 
 class Search:
@@ -96,10 +90,7 @@ class Search:
 
     def additions(self, order: int) -> tuple[ComplexArray, ComplexArray]:
         if order not in self._additions:
-            p = self.problem
-            self._additions[order] = best_additions(
-                p.points, self.best[order].poles, p.values, p.weights, p.direct, p.vanish
-            )
+            self._additions[order] = self.problem.additions(self.best[order].poles)
         return self._additions[order]
 
     def fit(self, order: int) -> Trial:
@@ -112,9 +103,9 @@ class Search:
         if order in self.known:
             starts.append(self.known[order])
         if order - 1 in self.best:
-            starts.append(ordered_poles(np.concatenate([self.best[order - 1].poles, self.additions(order - 1)[1]])))
+            starts.append(joined(self.best[order - 1].poles, self.additions(order - 1)[1]))
         if order - 2 in self.best:
-            starts.append(ordered_poles(np.concatenate([self.best[order - 2].poles, self.additions(order - 2)[0]])))
+            starts.append(joined(self.best[order - 2].poles, self.additions(order - 2)[0]))
         trials = [polish(problem, s, 12, 1e-3) for s in starts]
         spacings = [spacing_of(problem)] if starts else ["logarithmic", "linear", "real"]
         if order in self.known or (starts and order > FRESH_ORDER):
@@ -136,6 +127,7 @@ class Search:
         """Fit orders from 0 until, near the noise, the criterion has not improved for ``PATIENCE`` orders."""
         orders = list(range(min(highest, EVERY_ORDER) + 1))
         orders += [n for n in range(EVERY_ORDER + 1, highest + 1) if (n - highest) % 2 == 0]
+        orders = [n for n in orders if n >= self.problem.fewest]
         chosen = lowest
         for order in orders:
             self.fit(order)
@@ -161,7 +153,7 @@ class Search:
         trial, problem = self.best[order], self.problem
         if trial.cost > 1e-6**2 * problem.total:
             return False
-        return trial.cost <= problem.rounding(separated_poles(trial.poles))
+        return trial.cost <= problem.rounding(problem.apart(trial.poles))
 
     def noise_power(self) -> float:
         """Return the cost that noise alone would leave: given, or from what neighbouring misfits do not predict.
@@ -234,7 +226,9 @@ def single_line_poles(problem: Problem, poles: ComplexArray) -> list[int]:
     need it by the criterion, it stands for errors of these lines, not for a resonance.
     """
     x = problem.x
-    found = []
+    found: list[int] = []
+    if poles.size - 2 < problem.fewest:
+        return found
     for k in np.flatnonzero(poles.imag > 0):
         place = abs(poles[k])
         j = int(np.clip(np.searchsorted(x, place), 1, x.size - 1))
@@ -260,7 +254,7 @@ def unstable_image(problem: Problem, trial: Trial) -> int:
     few = start(p, min(max(trial.order, 1), 4), spacing_of(p))
     for poles in (trial.poles, few):
         for _ in range(6):
-            poles = relocated(p.points, poles, p.values, p.weights, p.direct, p.vanish, reflect=False)
+            poles = p.free_relocation(poles)
             right = int(np.sum(poles.real > 0))
             cost = weighted_cost(p.misfit(poles), p.weights)
             if right and cost < best:
@@ -271,4 +265,4 @@ def unstable_image(problem: Problem, trial: Trial) -> int:
 def finished(problem: Problem, trial: Trial) -> Trial:
     """Return the fit polished to convergence, its poles set apart."""
     best = trial if trial.cost <= problem.floor else polish(problem, trial.poles, 100, 1e-9)
-    return Trial(separated_poles(best.poles), best.cost)
+    return Trial(problem.apart(best.poles), best.cost)

@@ -7,7 +7,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.kernels.vector_fitting import residues_of, weighted_cost
+from realize.fitting.structure import Inside
+from realize.kernels.structured_fit import Task, structured_additions, structured_polish, structured_relocation
+from realize.kernels.structured_solution import Solution, structured_solution
+from realize.kernels.variable_projection import best_additions, polished
+from realize.kernels.vector_fitting import relocated, residues_of, separated_poles, vector_fit, weighted_cost
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -36,6 +40,9 @@ class Problem:
         Whether the model has a direct term.
     vanish : float
         Where a model without direct term is zero: infinity, or c for sampled data (z = infinity).
+    structure : Inside, optional
+        What the model must keep beyond that: poles of this problem are then the free ones, and ``direct`` and
+        ``vanish`` do not count.
     """
 
     points: ComplexArray
@@ -45,6 +52,7 @@ class Problem:
     estimated: bool
     direct: bool
     vanish: float
+    structure: Inside | None = None
 
     @property
     def x(self) -> Array:
@@ -58,19 +66,38 @@ class Problem:
     @property
     def numbers(self) -> int:
         """Real numbers in the data: two a line and channel that is not all zero, one at frequency 0."""
-        active = int(np.sum(np.any(self.values != 0, axis=0)))
-        return active * int(2 * self.points.size - np.sum(self.x == 0))
+        return self.active * int(2 * self.points.size - np.sum(self.x == 0))
+
+    @property
+    def active(self) -> int:
+        """Channels that are not all zero."""
+        return int(np.sum(np.any(self.values != 0, axis=0)))
+
+    @property
+    def given(self) -> int:
+        """Poles that are fixed, beside the free ones that orders of this problem count."""
+        return 0 if self.structure is None else self.structure.known.poles.size
+
+    @property
+    def fewest(self) -> int:
+        """Fewest free poles that leave room for the structure."""
+        return 0 if self.structure is None else self.structure.known.fewest
+
+    def coefficients(self, order: int) -> int:
+        """Real coefficients of a channel with so many free poles, those that equations fix left out."""
+        if self.structure is None:
+            return order + int(self.direct)
+        return self.structure.known.columns(order) - int(self.structure.gain is not None)
 
     def unknowns(self, order: int) -> int:
-        """Real unknowns of a model: poles, residues and direct terms of the channels that are not all zero."""
-        active = int(np.sum(np.any(self.values != 0, axis=0)))
-        return order + active * (order + int(self.direct))
+        """Real unknowns of a model: free poles, and coefficients of the channels that are not all zero."""
+        return order + self.active * self.coefficients(order)
 
     @property
     def largest_order(self) -> int:
-        """Largest order with no more unknowns than numbers in the data."""
-        active = int(np.sum(np.any(self.values != 0, axis=0)))
-        return max(0, (self.numbers - active * int(self.direct)) // (active + 1))
+        """Largest number of free poles with no more unknowns than numbers in the data."""
+        rest = self.numbers - self.active * self.coefficients(0)
+        return max(0, rest // (self.active + 1))
 
     @property
     def total(self) -> float:
@@ -87,9 +114,53 @@ class Problem:
         positive = self.x[self.x > 0]
         return float(positive[0]), float(positive[-1])
 
+    def task(self) -> Task:
+        """The problem as the kernels of structured fits take it."""
+        assert self.structure is not None
+        nothing = np.zeros((self.channels, 0))
+        kept = self.structure
+        return Task(self.points, self.values, self.weights, kept.known, kept.gain, nothing, kept.stable)
+
     def misfit(self, poles: ComplexArray) -> ComplexArray:
         """Fitted minus given values with the best residues for these poles."""
-        return residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)[2]
+        return self.solved(poles).misfit
+
+    def solved(self, poles: ComplexArray) -> Solution:
+        """Return the best function with these free poles, fixed ones put in."""
+        if self.structure is not None:
+            return structured_solution(self.task(), poles)
+        residues, direct, misfit = residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)
+        return Solution(poles, np.ones(poles.size, dtype=np.int64), residues, direct, misfit)
+
+    def polished(self, poles: ComplexArray, iterations: int, tolerance: float) -> tuple[ComplexArray, float]:
+        """Return free poles of no higher cost by variable projection, and that cost."""
+        if self.structure is not None:
+            better, _, cost = structured_polish(self.task(), poles, np.zeros(0), iterations, tolerance)
+            return better, cost
+        return polished(self.points, poles, self.values, self.weights, self.direct, self.vanish, iterations, tolerance)
+
+    def relocated(self, poles: ComplexArray, iterations: int) -> tuple[ComplexArray, float]:
+        """Return the best poles of vector fitting from a start, and their cost."""
+        if self.structure is not None:
+            return structured_relocation(self.task(), poles, iterations)
+        return vector_fit(self.points, poles, self.values, self.weights, self.direct, self.vanish, iterations)
+
+    def additions(self, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+        """Return the pair and the real pole that lower the cost most when they are added."""
+        if self.structure is not None:
+            return structured_additions(self.task(), poles)
+        return best_additions(self.points, poles, self.values, self.weights, self.direct, self.vanish)
+
+    def free_relocation(self, poles: ComplexArray) -> ComplexArray:
+        """Return the poles after one relocation that leaves those on the right where they are."""
+        beside = None if self.structure is None else self.task().beside
+        direct = self.direct if self.structure is None else self.structure.known.excess == 0
+        vanish = self.vanish if self.structure is None else np.inf
+        return relocated(self.points, poles, self.values, self.weights, direct, vanish, False, beside)
+
+    def apart(self, poles: ComplexArray) -> ComplexArray:
+        """Return the poles with members that nearly coincide set apart."""
+        return separated_poles(poles, self.structure is None or self.structure.stable)
 
     def rounding(self, poles: ComplexArray) -> float:
         """Return the cost that rounding alone may cause in the sum of partial fractions over these poles.
@@ -98,10 +169,12 @@ class Problem:
         large where residues cancel, as at nearly repeated poles, and where damping is light. A fit below it cannot be
         improved in this form.
         """
-        residues, direct, _ = residues_of(self.points, poles, self.values, self.weights, self.direct, self.vanish)
-        inverse = 1 / np.abs(self.points[:, None] - poles)
+        solved = self.solved(poles)
+        poles, residues, direct = solved.poles, solved.residues, solved.direct
+        inverse = (1 / np.abs(self.points[:, None] - poles)) ** solved.powers
         # 1/8: the rounding of the poles themselves, 2 eps |pole|, moves a fraction by 2 eps |pole| / |s - pole|
-        size = (inverse * (1 + 0.125 * np.abs(poles) * inverse)) @ np.abs(residues) + np.abs(direct)
+        spread = 1 + 0.125 * np.abs(poles) / np.abs(self.points[:, None] - poles)
+        size = (inverse * spread) @ np.abs(residues) + np.abs(direct)
         return max(self.floor, (16 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
 
     def criterion(self, order: int, cost: float) -> float:

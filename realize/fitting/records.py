@@ -79,13 +79,28 @@ class Worst:
 
 
 @dataclass(frozen=True, eq=False)
+class Factored:
+    """Channels as products, gain prod(s - zeros) / prod(s - poles): a structure that partial fractions cannot hold.
+
+    Parameters
+    ----------
+    zeros : tuple of [..] complex
+        One list a channel, row by row.
+    gain : [outputs][inputs] float
+    """
+
+    zeros: tuple[ComplexArray, ...]
+    gain: Array
+
+
+@dataclass(frozen=True, eq=False)
 class Fit:
-    """A rational model of a measured response: sum residues[j] / (s - poles[j]) + direct, sampled: z instead of s.
+    """A rational model of a measured response: sum residues[j] / (s - poles[j])^powers[j] + direct, sampled: in z.
 
     Parameters
     ----------
     poles : [n] complex
-        Stable; conjugate pairs exactly conjugate and adjacent, the positive imaginary part first.
+        Stable unless asked otherwise; pairs exactly conjugate and adjacent, the positive imaginary part first.
     residues : [n][outputs][inputs] complex
     direct : [outputs][inputs] float
     order : int
@@ -103,6 +118,11 @@ class Fit:
     pole_table : tuple of PoleRow
         By increasing frequency.
     cautions : tuple of str
+    powers : [n] int
+        1 but for fixed poles that repeat.
+    factors : Factored or None
+        With fixed zeros or a relative degree above 1: the model is this, and residues are its rounded partial
+        fractions.
     """
 
     poles: ComplexArray
@@ -118,3 +138,5 @@ class Fit:
     candidates: tuple[Candidate, ...]
     pole_table: tuple[PoleRow, ...]
     cautions: tuple[str, ...]
+    powers: NDArray[np.int64]
+    factors: Factored | None = None

@@ -10,9 +10,8 @@ from numpy.typing import NDArray
 from realize.errors import Refused
 from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
-from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
-from realize.fitting.sampled import mapped_back
-from realize.kernels.vector_fitting import residues_of
+from realize.fitting.records import Candidate, Factored, Fit, Noise, PoleRow, Worst
+from realize.fitting.restored import factors_in_units, in_z, values_of
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -53,28 +52,28 @@ def finish(
     """
     lines, p, m = H.shape
     solved = poles
-    residues, direct, _ = residues_of(
-        problem.points, poles, problem.values, problem.weights, problem.direct, problem.vanish
-    )
+    solution = problem.solved(poles)
     # a channel that is zero in all lines stays exactly zero
     if period is None:
         scale, points = shift, 1j * np.ldexp(w, -shift)
     else:
-        poles, residues, direct = mapped_back(poles, residues, direct, float(np.ldexp(1.0, -shift)))
-        if not problem.direct:
-            direct = np.zeros_like(direct)
+        solution = in_z(problem, solution, float(np.ldexp(1.0, -shift)))
         scale, points = 0, np.exp(1j * w * period)
-    model = np.broadcast_to(direct, (lines, p * m)).astype(complex)
-    contribution = [residues[j] / (points[:, None] - poles[j]) for j in range(poles.size)]
-    for part in contribution:
-        model = model + part
+    poles, powers, residues, direct = solution.poles, solution.powers, solution.residues, solution.direct
+    with np.errstate(divide="ignore", invalid="ignore"):
+        # a line at a fixed pole is not used
+        contribution = [residues[j] / (points[:, None] - poles[j]) ** powers[j] for j in range(poles.size)]
+        model = values_of(solution, points, contribution)
     lifted = _ldexp(H.reshape(lines, -1), -lift)
-    missed = model - lifted
+    missed = np.where(np.isfinite(model), model - lifted, 0.0)
     with np.errstate(over="ignore", under="ignore"):
         misfit = _ldexp(missed, lift).reshape(H.shape)
-        out_residues = _ldexp(residues, lift + scale).reshape(-1, p, m)
+        out_residues = _ldexp(residues, lift + scale * powers[:, None]).reshape(-1, p, m)
         out_direct = np.ldexp(direct, lift).reshape(p, m)
         out_poles = _ldexp(poles, np.int64(scale))
+    if problem.structure is not None:
+        out_poles[poles.size - problem.given :] = problem.structure.given_poles
+    factors = factors_in_units(problem, solution, scale, lift)
     if not all(np.all(np.isfinite(a)) for a in (out_residues, out_direct, out_poles)):
         raise Refused("a residue lies beyond the range of double precision; use other units of frequency or response")
     top = np.max(lift)
@@ -102,6 +101,8 @@ def finish(
         candidates=candidates,
         pole_table=table,
         cautions=tuple(cautions),
+        powers=_frozen(powers),
+        factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m))),
     )
 
 
@@ -155,7 +156,8 @@ def _pole_table(
     for j in np.flatnonzero(poles.imag >= 0):
         pair = bool(poles[j].imag > 0)
         part = contribution[j] + contribution[j + 1] if pair else contribution[j]
-        share = float(np.max(np.max(np.abs(part), axis=0) / np.where(peak > 0, peak, 1.0)))
+        size_there = np.where(np.isfinite(part), np.abs(part), 0.0)
+        share = float(np.max(np.max(size_there, axis=0) / np.where(peak > 0, peak, 1.0)))
         s = complex(poles[j]) if period is None else complex(np.log(poles[j])) / period
         size = abs(s)
         rows.append(PoleRow(float(np.ldexp(size, scale)), -s.real / size if size > 0 else 1.0, share, int(j), pair))
@@ -171,7 +173,7 @@ def _remarks(
 ) -> list[str]:
     remarks = []
     lowest = w[w > 0][0]
-    slow = [row for row in table if row.frequency < 0.1 * lowest and row.dominance > 0.1]
+    slow = [row for row in table if 0 < row.frequency < 0.1 * lowest and row.dominance > 0.1]
     if slow:
         remarks.append(
             f"{sum(2 if row.pair else 1 for row in slow)} pole(s) lie below a tenth of the lowest line: the data look "

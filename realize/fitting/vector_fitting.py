@@ -56,13 +56,17 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
 def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
     solved = search.problem
     remarks = []
-    enough = search.choose(0, noise)
+    enough = search.choose(solved.fewest, noise)
     if enough < trial.order:
-        remarks.append(f"order {enough} would do: the other {trial.order - enough} pole(s) bring nothing significant")
+        remarks.append(
+            f"order {enough + solved.given} would do: "
+            f"the other {trial.order - enough} pole(s) bring nothing significant"
+        )
     spikes = single_line_poles(solved, trial.poles) if 0 < trial.order <= LONGEST_LADDER else []
     if spikes:
         remarks.append(f"{len(spikes)} pair(s) of poles fit one or two lines only, not a resonance")
-    if trial.cost > 1e-12 * solved.total and solved.numbers > 2 * solved.unknowns(trial.order):
+    stable = solved.structure is None or solved.structure.stable
+    if stable and trial.cost > 1e-12 * solved.total and solved.numbers > 2 * solved.unknowns(trial.order):
         count = unstable_image(solved, trial)
         if count:
             remarks.append(
@@ -104,7 +108,7 @@ def _candidates(search: Search, kept: Trial) -> tuple[Candidate, ...]:
         trial = kept if n == kept.order else search.best[n]
         rows.append(
             Candidate(
-                order=n,
+                order=n + problem.given,
                 rms=float(np.sqrt(np.sum(np.abs(problem.misfit(trial.poles)) ** 2))) / size,
                 weighted=float(np.sqrt(2 * trial.cost / problem.numbers)),
                 criterion=problem.criterion(n, trial.cost),

@@ -57,9 +57,9 @@ def ordered_poles(poles: ComplexArray, reflect: bool = True) -> ComplexArray:
     return np.array(result, dtype=complex)
 
 
-def separated_poles(poles: ComplexArray) -> ComplexArray:
+def separated_poles(poles: ComplexArray, reflect: bool = True) -> ComplexArray:
     """Return ordered poles with members nearer than ``SMALLEST_DISTANCE`` (relative) moved apart about their middle."""
-    upper = ordered_poles(poles)
+    upper = ordered_poles(poles, reflect)
     upper = upper[upper.imag >= 0]
     for k in range(1, upper.size):
         distance = np.abs(upper[:k] - upper[k])
@@ -72,7 +72,7 @@ def separated_poles(poles: ComplexArray) -> ComplexArray:
     # a pair nearly on the real axis is a double real pole with residues that grow alike
     flat = (upper.imag > 0) & (upper.imag < SMALLEST_DISTANCE * np.abs(upper))
     upper[flat] = upper[flat].real + 1j * SMALLEST_DISTANCE * np.abs(upper[flat])
-    return ordered_poles(np.concatenate([upper, upper[upper.imag > 0].conj()]))
+    return ordered_poles(np.concatenate([upper, upper[upper.imag > 0].conj()]), reflect)
 
 
 def real_basis(points: ComplexArray, poles: ComplexArray, vanish: float = np.inf) -> ComplexArray:
@@ -171,13 +171,15 @@ def relocated(
     direct: bool,
     vanish: float = np.inf,
     reflect: bool = True,
+    beside: ComplexArray | None = None,
 ) -> ComplexArray:
     """Return the poles after one relocation: the zeros of sigma(s) in sigma H = (proper fraction over the old poles).
 
     sigma(s) = d + sum_j c_j phi_j(s) is found by relaxed least squares (reference 2): the sum of its real part over
     the points is fixed instead of d. Each channel is reduced by its own QR factorisation to the rows that hold sigma
     alone (reference 3). Zeros are eigenvalues of A - b c^T / d with A, b real (reference 1, appendix); those on the
-    right are reflected unless ``reflect`` is false. Parameters as in ``residues_of``.
+    right are reflected unless ``reflect`` is false. ``beside`` [k][columns] holds functions that the right side may
+    contain beside those of the old poles. Other parameters as in ``residues_of``.
     """
     n = poles.size
     if n == 0:
@@ -186,6 +188,8 @@ def relocated(
     own = real_basis(points, poles, np.inf if direct else vanish)
     if direct:
         own = np.hstack([own, np.ones((points.size, 1))])
+    if beside is not None:
+        own = np.hstack([own, beside])
     total = np.sqrt(np.sum(np.abs(weights * values) ** 2))
     strength = np.sqrt(np.sum(np.abs(weights * values) ** 2, axis=1))
     scale = np.linalg.norm(strength[:, None] * plain, axis=0)
