@@ -91,7 +91,7 @@ def fit_response(
     gamma = _like(coherence, "coherence", H)
     if not (direct is True or direct is False or direct == "auto"):
         raise InputError(f"direct = {direct!r}", 'True, False or "auto"', field="direct")
-    wanted = _order_range(order)
+    wanted = order_range(order)
     kept = structure if structure is not None else Structure()
     check(kept, period)
     if kept.relative_degree:
@@ -134,6 +134,7 @@ def fit_response(
             w, H, problem, np.zeros(0, complex), trivial, cautions, chosen.name, basis, period, shift, lift, used
         )
     lowest, highest = _within_reach(problem, wanted, lines)
+    assert chosen.fit is not None
     outcome = chosen.fit(problem, lowest, highest, direct == "auto")
     cautions.extend(outcome.cautions)
     if order == "auto" and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
@@ -214,7 +215,7 @@ def _like(value: ArrayLike | None, name: str, H: ComplexArray) -> Array | None:
     return array.reshape(H.shape[0], -1)
 
 
-def _order_range(order: Any) -> tuple[int, int | None]:
+def order_range(order: Any) -> tuple[int, int | None]:
     """Return lowest and highest order asked; highest None for ``auto``."""
     if isinstance(order, str):
         if order == "auto":

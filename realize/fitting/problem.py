@@ -8,9 +8,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.structure import Inside
+from realize.kernels.additions import best_additions
 from realize.kernels.structured_fit import Task, structured_additions, structured_polish, structured_relocation
 from realize.kernels.structured_solution import Solution, structured_solution
-from realize.kernels.variable_projection import best_additions, polished
+from realize.kernels.variable_projection import polished
 from realize.kernels.vector_fitting import relocated, residues_of, separated_poles, vector_fit, weighted_cost
 
 Array = NDArray[np.float64]

@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from realize.errors import UsageError
 from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate
+from realize.fitting.sample_problem import SampleProblem
 
 
 @dataclass(frozen=True, eq=False)
@@ -20,6 +21,20 @@ class Outcome:
     problem: Problem
     poles: NDArray[np.complex128]
     candidates: tuple[Candidate, ...]
+    cautions: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
+class SampleOutcome:
+    """The same for samples of an impulse response: poles inside of the circle.
+
+    ``gap`` holds the number of singular values above the noise and the ratio of the last of them to the next.
+    """
+
+    problem: SampleProblem
+    poles: NDArray[np.complex128]
+    candidates: tuple[Candidate, ...]
+    gap: tuple[int, float]
     cautions: tuple[str, ...] = ()
 
 
@@ -34,14 +49,17 @@ class Method:
         One sentence for people.
     source : str
         Where it is published.
-    fit : callable
-        (problem, lowest order, highest order, direct "auto"?) -> Outcome.
+    fit : callable, optional
+        (problem, lowest order, highest order, direct "auto"?) -> Outcome; None: not for frequency responses.
+    fit_samples : callable, optional
+        (sample problem, lowest order, highest order) -> SampleOutcome; None: not for impulse responses.
     """
 
     name: str
     says: str
     source: str
-    fit: Callable[[Problem, int, int, bool], Outcome]
+    fit: Callable[[Problem, int, int, bool], Outcome] | None = None
+    fit_samples: Callable[[SampleProblem, int, int], SampleOutcome] | None = None
 
 
 METHODS: dict[str, Method] = {}
@@ -59,6 +77,33 @@ def choose_method(name: str, problem: Problem) -> Method:
     """Return the method of that name; ``auto`` is vector fitting, the one method for every kind of response so far."""
     if name == "auto":
         return METHODS["vector-fitting"]
+    method = _known(name)
+    if method.fit is None:
+        raise UsageError(
+            f"method {name!r} takes an impulse response, and these data are a frequency response; "
+            f"choose one of {_listed(lambda m: m.fit)}"
+        )
+    return method
+
+
+def choose_sample_method(name: str) -> Method:
+    """Return the method of that name for samples of an impulse response; ``auto`` is Ho and Kalman's."""
+    if name == "auto":
+        return METHODS["ho-kalman"]
+    method = _known(name)
+    if method.fit_samples is None:
+        raise UsageError(
+            f"method {name!r} takes a frequency response, and these data are an impulse response; "
+            f"choose one of {_listed(lambda m: m.fit_samples)}"
+        )
+    return method
+
+
+def _known(name: str) -> Method:
     if name not in METHODS:
         raise UsageError(f"method {name!r} does not exist; choose one of {', '.join([*sorted(METHODS), 'auto'])}")
     return METHODS[name]
+
+
+def _listed(function: Callable[[Method], object]) -> str:
+    return ", ".join([*sorted(name for name, method in METHODS.items() if function(method) is not None), "auto"])

@@ -17,8 +17,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.kernels.additions import addition_candidates, gains_of
 from realize.kernels.structured_basis import Free, Known, StructuredBasis
-from realize.kernels.variable_projection import _addition_candidates, _bounds, _gains, poles_of, sections_of
+from realize.kernels.variable_projection import bounds, poles_of, sections_of
 from realize.kernels.vector_fitting import ordered_poles, relocated, stacked, weighted_cost
 
 Array = NDArray[np.float64]
@@ -198,7 +199,7 @@ def structured_polish(
     free, pairs = signed_sections(poles)
     theta = np.log(np.abs(np.concatenate([free.w, free.a, free.single])))
     signs = np.sign(np.concatenate([free.w, free.a, free.single]))
-    lower, upper = _bounds(task.points.imag, pairs, free.single.size)
+    lower, upper = bounds(task.points.imag, pairs, free.single.size)
     lower, upper = np.append(lower, np.zeros(delays.size)), np.append(upper, np.full(delays.size, np.inf))
     wanted = np.concatenate([theta, delays])
     unknowns = np.clip(wanted, lower, upper)
@@ -274,12 +275,12 @@ def structured_relocation(task: Task, poles: ComplexArray, iterations: int) -> t
 def structured_additions(task: Task, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
     """Return the stable pair and the stable real pole that lower the cost most when they are added to the free poles.
 
-    As ``variable_projection.best_additions``; the functions tried carry the factor H of the present basis.
+    As ``additions.best_additions``; the functions tried carry the factor H of the present basis.
     """
     x = task.points.imag
     base = StructuredProjection(task, signed_sections(poles)[0], np.zeros(task.groups.shape[1]))
     strength = np.sum([r[: x.size] ** 2 + r[x.size :] ** 2 for r in base.residual], axis=0)
-    w, a, real = _addition_candidates(x, strength)
+    w, a, real = addition_candidates(x, strength)
     nothing = Known(np.zeros(0, complex), np.zeros(0, complex), 1)
     # R without the constant: one pole more than the columns asked for stays out of H
     pair = StructuredBasis(task.points, Free(w, a, np.zeros(0)), nothing).rest(task.points)
@@ -290,7 +291,7 @@ def structured_additions(task: Task, poles: ComplexArray) -> tuple[ComplexArray,
         columns = stacked(task.weights[:, c, None] * trial)
         before = np.linalg.norm(columns, axis=0)
         columns -= q @ (q.T @ columns)
-        gains += _gains(columns, rest @ columns, before, w.size)
+        gains += gains_of(columns, (rest @ columns)[None], before, w.size)
     best = int(np.argmax(gains[: w.size]))
     added = poles_of(w[best : best + 1], a[best : best + 1], np.zeros(0))
     return added, np.array([complex(-real[int(np.argmax(gains[w.size :]))])])

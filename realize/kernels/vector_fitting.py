@@ -104,7 +104,8 @@ def least_squares(matrix: Array, right: Array) -> Array:
     """Solve one least squares problem with columns scaled to length 1; the smallest solution when it is not unique."""
     norm = np.linalg.norm(matrix, axis=0)
     norm = np.where(norm > 0, norm, 1.0)
-    return np.linalg.lstsq(matrix / norm, right, rcond=4 * np.finfo(float).eps)[0] / norm
+    result = np.linalg.lstsq(matrix / norm, right, rcond=4 * np.finfo(float).eps)[0]
+    return result / (norm if right.ndim == 1 else norm[:, None])
 
 
 def residues_of(
