@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import io
 import os
-import re
 import sys
 from collections.abc import Sequence
 from pathlib import Path
@@ -39,7 +38,6 @@ _LOOKS = (
     (b"<!DOCTYPE", "a web page"),
     (b"<html", "a web page"),
 )
-_TOUCHSTONE = re.compile(rb"^[ \t]*#[ \t]*[kmg]?hz[ \t]+[syzgh][ \t]+(ri|ma|db)\b", re.IGNORECASE | re.MULTILINE)
 
 
 def recognise(source: Source) -> Format:
@@ -50,11 +48,6 @@ def recognise(source: Source) -> Format:
     for start, looks in _LOOKS:
         if head.startswith(start):
             raise InputError(f"it looks like {looks}", _readable())
-    if _TOUCHSTONE.search(head):
-        raise InputError(
-            "it looks like a Touchstone file, which is not read",
-            "a table with a line of column names such as frequency_hz,real,imaginary",
-        )
     for row in FORMATS.values():
         if row.can_read and row.sniff(head):
             return row

@@ -16,7 +16,8 @@ from realize.schema import KINDS
 def sniff(head: bytes) -> bool:
     """True where the first character opens an object, or a list (which is then refused with the right words)."""
     text = head.removeprefix(b"\xef\xbb\xbf").lstrip(b" \t\r\n")
-    return text[:1] in (b"{", b"[")
+    # a Touchstone file of version 2 begins with a keyword in brackets
+    return text[:1] == b"{" or (text[:1] == b"[" and not text[1:20].lstrip().lower().startswith(b"version"))
 
 
 def read(source: Source, options: ReadOptions) -> Model:

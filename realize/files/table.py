@@ -25,13 +25,25 @@ from typing import Any, BinaryIO
 import numpy as np
 
 from realize.errors import InputError
-from realize.files import json_text
+from realize.files import json_text, touchstone
 from realize.files.fields import Reading, as_object
 from realize.files.record import build, common_to_record
 from realize.files.registry import Format, ReadOptions, register
 from realize.files.sources import HEAD, Source
 from realize.files.table_names import FREQUENCY_UNITS, Column, parse, split_label
-from realize.files.table_text import COMMENTS, Table, decimal_comma, decode, is_data, numbers, place, scan, split_names
+from realize.files.table_text import (
+    COMMENTS,
+    Table,
+    decimal_comma,
+    decode,
+    from_decibels,
+    is_data,
+    numbers,
+    place,
+    scan,
+    split_names,
+    turned,
+)
 from realize.models import FrequencyResponse, Model
 from realize.schema import COMMON_FIELDS
 
@@ -42,10 +54,12 @@ NAMING = (
 
 
 def sniff(head: bytes) -> bool:
-    """True where one of the first three lines that are no comments is a line of numbers."""
+    """True where one of the first three lines that are no comments is a line of numbers; not for Touchstone files."""
     if b"\0" in head and not head.startswith((b"\xff\xfe", b"\xfe\xff")):
         return False
     text = head.decode("utf-16" if head[:2] in (b"\xff\xfe", b"\xfe\xff") else "utf-8-sig", "replace")
+    if touchstone.sniff(head):
+        return False
     lines = text.splitlines()
     if len(head) >= HEAD and len(lines) > 1:
         lines.pop()
@@ -198,9 +212,8 @@ def _channel(table: Table, columns: list[Column], label: str, comma: bool) -> np
     magnitude = np.array(numbers(table, magnitude_at, columns[magnitude_at].name, comma))
     phase = np.array(numbers(table, phase_at, columns[phase_at].name, comma))
     if columns[magnitude_at].unit == "db":
-        with np.errstate(over="ignore", under="ignore"):
-            magnitude = 10.0 ** (magnitude / 20)
-        bad, expected = np.flatnonzero(~np.isfinite(magnitude)), "decibels within the doubles"
+        magnitude, beyond = from_decibels(magnitude)
+        bad, expected = np.flatnonzero(beyond), "decibels within the doubles"
     else:
         bad, expected = np.flatnonzero(magnitude < 0), "a magnitude that is not negative, or a name that says dB"
     if bad.size:
@@ -209,7 +222,7 @@ def _channel(table: Table, columns: list[Column], label: str, comma: bool) -> np
             f"{found[:40]!r}", expected, field=place(table.lines[bad[0]], magnitude_at, columns[magnitude_at].name)
         )
     if _degrees(columns[phase_at], columns[magnitude_at], phase, phase_at):
-        return magnitude * _turned(phase)
+        return magnitude * turned(phase)
     return magnitude * np.exp(1j * phase)
 
 
@@ -224,13 +237,6 @@ def _degrees(phase: Column, magnitude: Column, values: np.ndarray[Any, Any], at:
         "a name such as phase_deg or phase_rad",
         field=f"column {at + 1}",
     )
-
-
-def _turned(degrees: np.ndarray[Any, Any]) -> np.ndarray[Any, Any]:
-    """Return exp(j phase) of degrees, exact at multiples of 90: the argument is reduced before it becomes radians."""
-    quarter = np.rint(degrees / 90)
-    rest = np.exp(1j * np.deg2rad(degrees - 90 * quarter))
-    return rest * np.array([1, 1j, -1, -1j])[np.mod(quarter, 4).astype(int)]
 
 
 def _in_range(role: str, values: np.ndarray[Any, Any], table: Table, at: int, name: str) -> None:

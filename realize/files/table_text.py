@@ -13,6 +13,9 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import dataclass, field
+from typing import Any
+
+import numpy as np
 
 from realize.errors import InputError, Refused
 
@@ -251,3 +254,17 @@ def decimal_comma(table: Table) -> bool:
                 field=place(*comma[:2], ""),
             )
     return comma is not None
+
+
+def from_decibels(decibels: Any) -> tuple[Any, Any]:
+    """Return 10^(dB/20), and where that is no double: too large, or so small that it would become zero."""
+    with np.errstate(over="ignore", under="ignore"):
+        size = 10.0 ** (decibels / 20)
+    return size, ~np.isfinite(size) | (size == 0)
+
+
+def turned(degrees: Any) -> Any:
+    """Return exp(j phase) of degrees, exact at multiples of 90: the argument is reduced before it becomes radians."""
+    quarter = np.rint(degrees / 90)
+    rest = np.exp(1j * np.deg2rad(degrees - 90 * quarter))
+    return rest * np.array([1, 1j, -1, -1j])[np.mod(quarter, 4).astype(int)]

@@ -185,6 +185,9 @@ class Model:
         The steps that led here, oldest first.
     decimals : mapping of field name to {index: decimal string}
         Numbers that are given as exact decimals; the float arrays hold their nearest doubles.
+    remarks : sequence of str
+        What the reader of a file has to say about it; the next step takes them among its cautions. Not a part of the
+        model: no file, no digest and no other model has them.
     """
 
     kind: ClassVar[str]
@@ -197,6 +200,7 @@ class Model:
     ports: Ports | None = None
     receipts: tuple[Receipt, ...] = ()
     decimals: Mapping[str, Mapping[Index, str]] = field(default_factory=dict)
+    remarks: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         self._normalise()
@@ -205,6 +209,7 @@ class Model:
         put("inputs", checks.signals(self.inputs, m, "inputs", Signal))
         put("outputs", checks.signals(self.outputs, p, "outputs", Signal))
         put("receipts", tuple(self.receipts))
+        put("remarks", tuple(self.remarks))
         put("decimals", {name: dict(rows) for name, rows in self.decimals.items() if rows})
         if self.dead_time is not None:
             put("dead_time", self._checked_dead_time(self.dead_time, p, m))

@@ -340,6 +340,11 @@ def _numbers(model: Model, record: dict[str, Any], view: View) -> Iterator[Findi
         )
 
 
+def remarks_of(model: Model) -> list[Finding]:
+    """Return what the reader of the file had to say."""
+    return [Finding("file", f"{text[:1].upper()}{text[1:]}.") for text in model.remarks]
+
+
 def data_findings(model: FrequencyResponse) -> list[Finding]:
     """Return what is worth a word about measured data."""
     found = []

@@ -9,7 +9,7 @@ import numpy as np
 from realize.errors import Refused
 from realize.models import FrequencyResponse, ImpulseResponse, Model, mark
 from realize.steps.conversion import Conversion, model_of
-from realize.steps.findings import Finding, data_findings, findings_of
+from realize.steps.findings import Finding, data_findings, findings_of, remarks_of
 from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_poles import minimal_order_of, roots_of, stability_of
 from realize.steps.inspect_structure import damping_and_frequency, indices_of, relative_degrees, scaling_of
@@ -113,7 +113,7 @@ def _samples(model: ImpulseResponse) -> dict[str, Any]:
         "step_of_time": model.period,
         "samples": int(model.samples.shape[0]),
         "largest_value": float(np.abs(model.samples).max()),
-    } | _told([])
+    } | _told(remarks_of(model))
 
 
 def _data(model: FrequencyResponse) -> dict[str, Any]:
@@ -125,4 +125,4 @@ def _data(model: FrequencyResponse) -> dict[str, Any]:
         "has_deviation": model.deviation is not None,
         "has_coherence": model.coherence is not None,
         "largest_gain": float(np.abs(model.response).max()),
-    } | _told(data_findings(model))
+    } | _told([*remarks_of(model), *data_findings(model)])

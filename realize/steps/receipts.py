@@ -184,7 +184,11 @@ def finish(
     if digits is not None and values["result"] is not None:
         # half a unit of the last digit in place of half a unit of the last bit; numbers that are doubles stay doubles
         values["result"] *= 0.5 * 10.0 ** max(1 - digits, -300) / (np.finfo(float).eps / 2)
-    notes = list(cautions) + fragility_cautions(values, result)
+    notes = (
+        [f"{text[:1].upper()}{text[1:]}." for text in source.remarks]
+        + list(cautions)
+        + fragility_cautions(values, result)
+    )
     undecided = [
         claim.name for claim in claims if claim.holds is None and claim.limit is not None and claim.value is not None
     ]
