@@ -31,9 +31,9 @@ Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 #: Shifts of one group: at most so many solutions at a time.
-GROUP = 6
+GROUP = 8
 #: A shift joins a group only while the columns of R^-1 stay below this: digits are lost in proportion.
-LIKENESS = 30.0
+LIKENESS = 100.0
 #: Factors with more columns than this fraction of the order are left to the real Schur form.
 FRACTION = 0.35
 #: What is left may grow on the way by this factor at most: digits are lost in proportion.

@@ -59,8 +59,12 @@ def _top(matrix: Array) -> int:
 
 
 def _power(matrix: Array, exponents: NDArray[np.int64] | int) -> Array:
-    if not np.any(exponents):
+    least, most = (int(np.min(exponents)), int(np.max(exponents))) if np.size(exponents) else (0, 0)
+    if least == most == 0:
         return np.array(matrix)
+    if least >= -1000 and most <= 1000:
+        # a product with a power of two rounds as ldexp does, and is many times as quick
+        return np.asarray(matrix * np.ldexp(1.0, exponents), dtype=float)
     return np.ldexp(matrix, np.clip(exponents, -5000, 5000).astype(np.int64) if np.ndim(exponents) else exponents)
 
 
@@ -70,6 +74,8 @@ def _exponents(factors: Array) -> NDArray[np.int64]:
 
 def _size(A: Array, states: NDArray[np.int64]) -> int:
     """Return the exponent of the largest entry of A with its states in units 2^states."""
+    if not np.any(states):
+        return _top(A) if np.any(A) else -5000
     mantissa, exponent = np.frexp(np.abs(A))
     return int(np.max((exponent + states[None, :] - states[:, None])[mantissa > 0], initial=-5000))
 

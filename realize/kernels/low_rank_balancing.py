@@ -64,9 +64,10 @@ def low_rank_factors(A: Array, B: Array, C: Array, *, sampled: bool) -> HankelFa
     nearest = NEAREST * math.sqrt(float(np.abs(H).sum(axis=0).max()) * float(np.abs(H).sum(axis=1).max()))
     corners = H[:CORNER, :CORNER], H[-CORNER:, -CORNER:]
     start = np.concatenate([np.linalg.eigvals(corner) for corner in corners]).astype(complex)
+    reflections = np.asfortranarray(reduced[1:, :-1])
     found: list[LowRankFactor] = []
     for matrix, right in ((H, B), (np.ascontiguousarray(H.T[::-1, ::-1]), C.T)):
-        right = _turned(reduced, tau, right, back=True)
+        right = _turned(reflections, tau, right, back=True)
         right = right[::-1] if found else right
         try:
             one = low_rank_factor(
@@ -78,8 +79,8 @@ def low_rank_factors(A: Array, B: Array, C: Array, *, sampled: bool) -> HankelFa
             return None
         found.append(one)
     first, second = found
-    L = _turned(reduced, tau, first.L, back=False)
-    R = _turned(reduced, tau, second.L[::-1], back=False).T
+    L = _turned(reflections, tau, first.L, back=False)
+    R = _turned(reflections, tau, second.L[::-1], back=False).T
     left_out = float(np.linalg.norm(R)) * first.left_out + float(np.linalg.norm(L)) * second.left_out
     product = tolerance * float(np.linalg.norm(R)) * float(np.linalg.norm(L))
     N, inputs, M, outputs = first.N, first.F, second.N.T, second.F.T
@@ -108,10 +109,9 @@ def _mapped(A: Array, B: Array, C: Array) -> tuple[Array, Array, Array]:
     return np.ascontiguousarray(solved[:, :n]), solved[:, n:], left
 
 
-def _turned(reduced: Array, tau: Array, columns: Array, *, back: bool) -> Array:
+def _turned(reflections: Array, tau: Array, columns: Array, *, back: bool) -> Array:
     """Return Q'X (back) or Q X for the reflections of a Hessenberg form."""
     result = np.array(columns, order="F")
-    reflections = np.asfortranarray(reduced[1:, :-1])
     result[1:] = scipy.linalg.lapack.dormqr(
         "L", "T" if back else "N", reflections, tau, result[1:], lwork=64 * max(result.shape)
     )[0]

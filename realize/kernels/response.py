@@ -298,7 +298,8 @@ def balancing_scale(pattern: Array) -> Array:
         Not negative.
     """
     n = pattern.shape[0]
-    work = pattern - np.diag(np.diagonal(pattern))
+    work = np.array(pattern)
+    np.fill_diagonal(work, 0.0)
     if n > DIRECT_SIZE:
         import scipy.linalg
 

@@ -11,6 +11,7 @@ import scipy.linalg.lapack
 from numpy.typing import NDArray
 
 from realize.kernels.lyapunov import quasi_triangular_sylvester, schur_eigenvalues
+from realize.kernels.schur_response import triangular_solutions
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -117,24 +118,20 @@ def connected(A: Array, T: Array, Q: Array, pole: complex, point: complex) -> bo
 
 
 def _suspects(A: Array, T: Array, points: ComplexArray) -> NDArray[np.bool_]:
-    """Say at which points A - point I may be singular within rounding: all of them in one blocked substitution.
+    """Say at which points A - point I may be singular within rounding, by blocked substitution for many at a time.
 
-    |(T - point I)^-1 f| for a random f of length 1 is at least 1 / (sigma sqrt(2 n)) up to a factor that exceeds 1e3
-    with a probability below 1e-3; everything larger than 1e-3 of the tolerance's inverse stays under suspicion.
+    |(T - point I)^-1 f| for a random f of length 1 is about 1 / (sigma sqrt(n)) at least, up to a factor that exceeds
+    1e3 with a probability below 1e-3; everything larger than 1e-3 of the tolerance's inverse stays under suspicion.
     """
-    n, k = T.shape[0], points.size
-    shifts = np.zeros((2 * k, 2 * k))
-    even = np.arange(0, 2 * k, 2)
-    shifts[even, even] = shifts[even + 1, even + 1] = points.real
-    shifts[even, even + 1], shifts[even + 1, even] = points.imag, -points.imag
-    right = np.random.default_rng(n).standard_normal((n, 2 * k)) / np.sqrt(2 * n)
-    try:
-        solved = quasi_triangular_sylvester(T, shifts, right, transposed=False, sign=-1)
-    except ValueError:
-        return np.ones(k, dtype=bool)
-    size = np.hypot(np.linalg.norm(solved[:, 0::2], axis=0), np.linalg.norm(solved[:, 1::2], axis=0))
+    n = T.shape[0]
+    right = np.random.default_rng(n).standard_normal((n, 1)) / np.sqrt(n)
+    with np.errstate(over="ignore", invalid="ignore"):
+        size = np.concatenate(
+            [np.linalg.norm(found[:, 0], axis=1) for found in triangular_solutions(T, right, points)] or [np.zeros(0)]
+        )
+    hit = ~np.isfinite(size)
     tolerance = 4 * n * EPS * (matrix_norm(A) + np.abs(points)) * np.sqrt(2 * n)
-    return size * tolerance >= 1e-3
+    return hit | (np.where(hit, 0.0, size) * tolerance >= 1e-3)
 
 
 def _nearest_on_axis(pole: complex, sampled: bool) -> complex:

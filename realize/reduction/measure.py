@@ -89,7 +89,7 @@ class Meter:
             seeds = np.unique(np.concatenate([[low, high], inside, np.geomspace(start, high, SPREAD)]))
         most = MANY if self.order <= FULL else FEW
         if self.order:
-            seeds = thinned(seeds, self._points(seeds), poles, SHARE / 2)
+            seeds = thinned(seeds, self._points(seeds), poles, SHARE / 4)
         if seeds.size > most:
             seeds = seeds[np.unique(np.linspace(0, seeds.size - 1, most).astype(int))]
         return self._away_from_axis_poles(seeds) if self._whole else seeds

@@ -7,13 +7,23 @@ from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
+import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.errors import InputError, Refused
-from realize.kernels.balancing import HankelFactors, Scaled, equal_groups, hankel_factors, scale_model, tail_bounds
+from realize.kernels.balancing import (
+    HankelFactors,
+    Scaled,
+    balanced_part,
+    equal_groups,
+    hankel_factors,
+    scale_model,
+    tail_bounds,
+)
 from realize.kernels.hankel_estimates import estimated_values
 from realize.kernels.low_rank_balancing import low_rank_factors
 from realize.kernels.norms import Peak, peak_gain
+from realize.kernels.schur_response import Basis
 from realize.kernels.splitting import Split, split_stable, whole
 from realize.verification.views import tell
 
@@ -22,6 +32,8 @@ Array = NDArray[np.float64]
 EPS = float(np.finfo(float).eps)
 #: Up to this order the error of each value is measured by computing it several times, which costs about as often.
 DRAWN_ORDER = 200
+#: Blocks longer than this on the diagonal of a basis are made shorter by a real Schur form.
+LONGEST_BLOCK = 64
 
 
 @dataclass(frozen=True)
@@ -37,6 +49,8 @@ class Prepared:
     D : array
         Feed-through in the model's own unit.
     sampled : bool
+    low_rank : bool
+        The factors are narrow and came without a Schur form.
     """
 
     scaled: Scaled
@@ -44,6 +58,7 @@ class Prepared:
     factors: HankelFactors
     D: Array
     sampled: bool
+    low_rank: bool = False
 
     @property
     def kept_order(self) -> int:
@@ -79,6 +94,33 @@ class Prepared:
         """The group of equal values each value belongs to."""
         return equal_groups(self.factors.values)
 
+    def basis(self) -> Basis | None:
+        """Return invariant bases of the model, by which its response is quick to evaluate; None where none are at hand.
+
+        They are those that the Gramian factors span, or real Schur form; not where poles were put onto the axis.
+        """
+        scaled, split = self.scaled, self.split
+        if self.split.marginal.any() or scaled.A.shape[0] == 0:
+            return None
+        if self.low_rank:
+            part = balanced_part(self.factors, self.available)
+            poles = np.linalg.eigvals(part.A).astype(complex)
+            roots = self.factors.roots
+            L, N, F = _triangular(roots.L, roots.N, roots.input)
+            left = _triangular(roots.R.T, roots.M.T, roots.output.T)
+            R, M, H = (part.T for part in left)
+        else:
+            (T, B, C), (kept, more_b, more_c) = split.stable, split.kept
+            poles = np.concatenate([split.stable_poles, split.kept_poles])
+            N = M = scipy.linalg.block_diag(T, kept) if kept.size else T
+            L, F = split.right, np.vstack([B, more_b])
+            R, H = split.left, np.hstack([C, more_c])
+        with np.errstate(over="ignore", under="ignore"):
+            N, M = np.ldexp(N, scaled.time), np.ldexp(M, scaled.time)
+            F, H = np.ldexp(F, scaled.input), np.ldexp(H, scaled.output)
+            poles = np.ldexp(poles.real, scaled.time) + 1j * np.ldexp(poles.imag, scaled.time)
+        return Basis(scaled.states, (L, N, F), (R, M, H), poles)
+
     def in_gain(self, value: float) -> float:
         """Return a scaled gain in the model's own unit; refuses what a double cannot hold."""
         try:
@@ -98,6 +140,14 @@ class Prepared:
         upper = self.in_gain(found.upper) if math.isfinite(found.upper) else math.inf
         frequency = math.ldexp(found.frequency, self.scaled.time) if math.isfinite(found.frequency) else math.inf
         return Peak(self.in_gain(found.value), frequency, upper, found.basis)
+
+
+def _triangular(L: Array, N: Array, F: Array) -> tuple[Array, Array, Array]:
+    """Return L, N, F with A L = L N and B = L F in coordinates with N block triangular, blocks short."""
+    if min(np.count_nonzero(np.tril(N, -LONGEST_BLOCK)), np.count_nonzero(np.triu(N, LONGEST_BLOCK))) == 0:
+        return L, N, F
+    T, Z = scipy.linalg.schur(N, output="real", check_finite=False)
+    return L @ Z, T, Z.T @ F
 
 
 def _drawn(factors: HankelFactors, scaled: Scaled, split: Split, sampled: bool) -> HankelFactors:
@@ -152,7 +202,7 @@ def prepare(A: Array, B: Array, C: Array, D: Array, *, sampled: bool, triangular
         tell(f"{n} states: Gramians of low rank sought")
         found = low_rank_factors(scaled.A, scaled.B, scaled.C, sampled=sampled)
         if found is not None:
-            return Prepared(scaled, whole(scaled.A, scaled.B, scaled.C), found, D, sampled)
+            return Prepared(scaled, whole(scaled.A, scaled.B, scaled.C), found, D, sampled, low_rank=True)
     try:
         tell(f"{n} states: real Schur form")
         split = split_stable(scaled.A, scaled.B, scaled.C, sampled=sampled)

@@ -290,4 +290,5 @@ def _reduction(
         separation=split.separation,
         coupling=split.coupling,
         marginal=int(np.count_nonzero(split.marginal)),
+        basis=prepared.basis,
     )

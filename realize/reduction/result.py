@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+
+from realize.kernels.schur_response import Basis
 
 Array = NDArray[np.float64]
 
@@ -76,6 +79,8 @@ class Reduction:
         How it was computed, in words.
     reason : str
         Why this method.
+    basis : callable or None
+        Invariant bases of the source that were found on the way, for the evaluation of its response.
     """
 
     A: Array
@@ -102,3 +107,4 @@ class Reduction:
     marginal: int = 0
     algorithm: str = ""
     reason: str = ""
+    basis: Callable[[], Basis | None] | None = None

@@ -18,6 +18,8 @@ Errors = tuple[Array, Array, Array]
 EPS = float(np.finfo(float).eps)
 #: The sensitivity of a result with more states than this is sampled at fewer frequencies.
 SAMPLED_FREQUENCIES = 60
+#: Up to this order all frequencies are solved for together.
+DIRECT_SIZE = 64
 
 
 def effect(part: Projected, changes: tuple[Array, Array, Array], *, sampled: bool) -> float:
@@ -42,18 +44,29 @@ def effect(part: Projected, changes: tuple[Array, Array, Array], *, sampled: boo
     points = np.exp(1j * frequencies) if sampled else 1j * frequencies
     distance = np.min(np.abs(points[:, None] - poles[None, :]), axis=1)
     points = points[np.argsort(distance, kind="stable")[:SAMPLED_FREQUENCIES]]
+    if n <= DIRECT_SIZE:
+        pencil = points[:, None, None] * np.eye(n) - part.A
+        try:
+            states = np.linalg.solve(pencil, np.broadcast_to(part.B.astype(complex), (points.size, *part.B.shape)))
+            costates = np.linalg.solve(
+                pencil.transpose(0, 2, 1), np.broadcast_to(part.C.T.astype(complex), (points.size, *part.C.T.shape))
+            )
+        except np.linalg.LinAlgError:
+            # a pole of the result is on the boundary of stability: what rounding can do there has no bound
+            return math.inf
+        x, y = np.linalg.norm(states, axis=2), np.linalg.norm(costates, axis=2)
+        return float(np.max(np.einsum("ki,ki->k", y @ change_a, x) + y @ change_b + x @ change_c))
     triangle, basis = scipy.linalg.schur(part.A.astype(complex), output="complex")
     into, out = basis.conj().T @ part.B, part.C @ basis
     worst = 0.0
     for point in points:
         pencil = point * np.eye(n) - triangle
         if np.any(np.diagonal(pencil) == 0):
-            # a pole of the result is on the boundary of stability: what rounding can do there has no bound
             return math.inf
         state = basis @ scipy.linalg.solve_triangular(pencil, into, check_finite=False)
         costate = scipy.linalg.solve_triangular(pencil, out.T, trans=1, check_finite=False).T @ basis.conj().T
-        x, y = np.linalg.norm(state, axis=1), np.linalg.norm(costate, axis=0)
-        worst = max(worst, float(y @ change_a @ x + y @ change_b + change_c @ x))
+        size, other = np.linalg.norm(state, axis=1), np.linalg.norm(costate, axis=0)
+        worst = max(worst, float(other @ change_a @ size + other @ change_b + change_c @ size))
     return worst
 
 

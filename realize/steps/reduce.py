@@ -5,11 +5,13 @@ from __future__ import annotations
 import math
 import time
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import msgspec
 
 from realize.errors import Refused, UsageError
+from realize.kernels.schur_response import Basis, SchurResponse
 from realize.models import Model, Signal, StateSpace
 from realize.schema import REDUCTION_METHODS, Claim
 from realize.steps.conversion import Conversion, model_of
@@ -21,7 +23,7 @@ from realize.verification.difference import linf_error
 from realize.verification.licence import Licence, gap_of_reduction, licence, widened
 from realize.verification.reduction import band_claim, reduction_claims
 from realize.verification.stability import order_claim, stability_claim
-from realize.verification.views import whatever_it_costs
+from realize.verification.views import view_of, whatever_it_costs
 
 if TYPE_CHECKING:
     from realize.reduction import Reduction
@@ -112,6 +114,8 @@ def reduce(
     }
     weighted = weights.applied(plain)
     found = _reduced(weighted, method, asked, order=order, absolute_error=absolute_error, relative_error=error)
+    with whatever_it_costs(certify):
+        source, plain, weighted = with_bases(source, plain, weighted, found, weights)
     limit = absolute_error
     if error is not None and found.largest_gain is not None:
         limit = error * found.largest_gain
@@ -230,6 +234,36 @@ def _loop_of(loop: Around | None, weights: Weights, method: str) -> Any:
     return Loop(other.A, other.B, other.C, other.D, controller=loop.controller)
 
 
+def with_bases(
+    source: Model, plain: StateSpace, weighted: StateSpace, found: Reduction, weights: Weights
+) -> tuple[Model, StateSpace, StateSpace]:
+    """Return the models with the bases that the reduction found to evaluate responses by, where they are large.
+
+    The bases are tried against each model's own matrices first. The models handed back are copies: nobody else sees
+    poles and responses that come from here.
+    """
+    basis = None if found.basis is None or view_of(weighted).fractions is not None else found.basis()
+    if basis is None:
+        return source, plain, weighted
+
+    def seen(model: StateSpace, basis: Basis) -> StateSpace:
+        made = SchurResponse.of_basis(model.A, model.B, model.C, basis)
+        if made is None:
+            return model
+        copy = model.with_()
+        copy.remembered("large response", lambda: made)
+        return copy
+
+    other = seen(weighted, basis)
+    if plain is weighted:
+        own = other
+    else:
+        (L, N, F), (R, M, H) = basis.right, basis.left
+        F, H = F / weights.inputs, H / weights.outputs[:, None]
+        own = seen(plain, replace(basis, right=(L, N, F), left=(R, M, H)))
+    return (own if source is plain else source), own, other
+
+
 def _reduced(weighted: StateSpace, method: str, asked: dict[str, Any], **choice: Any) -> Reduction:
     from realize.reduction import reduce_states
 
@@ -240,8 +274,6 @@ def _reduced(weighted: StateSpace, method: str, asked: dict[str, Any], **choice:
 
 def _passed_over(larger: Reduction, asked: Reduction) -> Reduction:
     """Return the larger result with what was known of the request."""
-    from dataclasses import replace
-
     note = f"order {asked.order} was passed over: a closer look found a larger error there"
     return replace(
         larger, largest_gain=asked.largest_gain, reason=asked.reason, notes=(*asked.notes, note), method=asked.method

@@ -6,12 +6,15 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from realize.models import Model, StateSpace
 from realize.schema import Claim, judge
 from realize.verification.curves import minors_affordable, sampled_peak
 from realize.verification.feedback import UNITS, chordal_distance, gap_claim, same_outer_delays
 from realize.verification.views import view_of
+
+Array = NDArray[np.float64]
 
 #: Up to this order of the plant, and this many channels, the nu-gap itself is computed; else the error bounds it.
 EXACT_ORDER, EXACT_CHANNELS = 24, 4
@@ -64,7 +67,14 @@ def gap_of_reduction(
     one, two = (view_of(model) for model in single)
     # kappa at a frequency is never above the nu-gap
     # the bound covers what a coarser look misses
-    found = sampled_peak(one, lambda w: chordal_distance(one.response(w), two.response(w)), two, rounds=1)
+    large = isinstance(one.model, StateSpace) and one.model.large_response() is not None
+    other = single[1]
+
+    def small_response(w: Array) -> NDArray[np.complex128]:
+        # the response of a large plant has no more digits than doubles
+        return other.rational_part(other.time.points(w)) if large else two.response(w)
+
+    found = sampled_peak(one, lambda w: chordal_distance(one.response(w), small_response(w)), two, rounds=1)
     where = {"frequency": found.frequency if math.isfinite(found.frequency) else None}
     if reaches and marginal == 0 and outside == kept:
         reach = min(1.0, *reaches)

@@ -331,7 +331,9 @@ def _predicted_cost(model: Model) -> float:
     order = model.order or 0
     if isinstance(model, StateSpace):
         # each channel has its own numerator, whose roots are sought
-        return forming_cost(model) + (1 + p * m) * ROOT_COST * order**3
+        roots = (1 + p * m) * ROOT_COST * order**3
+        # beyond the budget already: entries need not be looked at
+        return roots if roots > EXACT_BUDGET else forming_cost(model) + roots
     if isinstance(model, SecondOrder):
         pencil = model.pencil
         largest = StateSpace(A=pencil.A, B=pencil.B, C=pencil.C, D=pencil.D, E=pencil.E)
