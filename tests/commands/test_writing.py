@@ -277,7 +277,9 @@ def test_interruption_leaves_nothing_half_written(plant: Path, tmp_path: Path) -
     Path("out.json").write_text("old")
     os.mkfifo("pipe.json")
     child = subprocess.Popen(
-        [sys.executable, "-m", "realize", "reduce", "pipe.json", "--order", "20", "-o", "out.json", "--log", "log.txt"],
+        # errors are measured order by order, so that the work is not over before the interruption
+        [sys.executable, "-m", "realize", "reduce", "pipe.json", "--error", "0.001", "--measured"]
+        + ["-o", "out.json", "--log", "log.txt"],
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         env={**os.environ, "OMP_NUM_THREADS": "1"},
