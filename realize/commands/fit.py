@@ -13,10 +13,11 @@ def execute(context: Context, data: str, columns: list[str] | None, **options: A
     conversion = fit(load(data, columns), limits=context.limits, second_opinion=context.second_opinion, **options)
     more = []
     if not context.json:
-        from realize.reports.root_lists import poles_table
+        from realize.reports.modes import channels_table, modes_table
         from realize.reports.tables import fit_table
 
         details = conversion.receipt.details
-        poles = [(complex(re, im), count) for re, im, count in details["poles"]]
-        more = [fit_table(details["candidates"]), poles_table(poles, details.get("period"))]
+        more = [fit_table(details["candidates"]), modes_table(details)]
+        if len(details["channels"]) > 1:
+            more.append(channels_table(details))
     return deliver(context, conversion, *more)

@@ -2,13 +2,22 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
+
+
+def _nothing() -> Array:
+    """Return what stands in a record without error bars."""
+    return np.zeros(0)
+
+
+def _no_shape() -> ComplexArray:
+    return np.zeros(0, dtype=complex)
 
 
 @dataclass(frozen=True)
@@ -50,6 +59,18 @@ class PoleRow:
     index : int
         Place of the pole, the first of a pair, in ``poles``.
     pair : bool
+    frequency_deviation, damping_deviation : float
+        One standard deviation; infinite where the data do not determine it, 0 for the damping of a real pole.
+    rank : int
+        Of the residue: how many states (pairs of states) the mode takes.
+    strength : float
+        Distance of the residue from zero in its own deviations, sqrt(r^T covariance^-1 r).
+    cancelling : bool
+        Whether the residue may be noise: pole and zeros cancel as far as the data tell.
+    output_shape, input_shape : [outputs], [inputs] complex
+        The residue's column at its largest entry, and its row there, each divided by that entry.
+    output_shape_deviation, input_shape_deviation : [outputs], [inputs] float
+        sqrt of the mean |error|^2.
     """
 
     frequency: float
@@ -57,6 +78,61 @@ class PoleRow:
     dominance: float
     index: int
     pair: bool
+    frequency_deviation: float = np.inf
+    damping_deviation: float = np.inf
+    rank: int = 0
+    strength: float = np.inf
+    cancelling: bool = False
+    output_shape: ComplexArray = field(default_factory=_no_shape)
+    output_shape_deviation: Array = field(default_factory=_nothing)
+    input_shape: ComplexArray = field(default_factory=_no_shape)
+    input_shape_deviation: Array = field(default_factory=_nothing)
+
+
+@dataclass(frozen=True)
+class Bars:
+    """What stands behind the error bars.
+
+    Parameters
+    ----------
+    level : float or None
+        Deviation of the errors in units of those that weighted the fit; None where no degree of freedom is left.
+    basis : str
+        "information" (inverse Fisher information) or "sandwich" (some variances are enlarged to what the misfit shows).
+    freedom : int
+        Numbers in the data less numbers fitted.
+    correlation : float
+        Of the weighted misfit between neighbouring lines.
+    white : bool
+        Whether the misfit is independent from line to line, as far as a dozen lags tell.
+    independent : bool
+        Whether it is independent between channels.
+    enlarged : bool
+        Whether the misfit is larger than the given deviations, and the bars are enlarged with it.
+    growth : float
+        Largest factor by which a sandwich enlarges a bar.
+    """
+
+    level: float | None
+    basis: str
+    freedom: int
+    correlation: float
+    white: bool
+    independent: bool
+    enlarged: bool
+    growth: float
+
+
+@dataclass(frozen=True)
+class ChannelRow:
+    """Misfit of one channel: RMS relative to its RMS response, in deviations, and its largest relative to its peak."""
+
+    output: int
+    input: int
+    rms: float
+    weighted: float
+    worst: float
+    frequency: float
 
 
 @dataclass(frozen=True)
@@ -123,6 +199,15 @@ class Fit:
     factors : Factored or None
         With fixed zeros or a relative degree above 1: the model is this, and residues are its rounded partial
         fractions.
+    bars : Bars or None
+        None: no error bars were made; the deviations below are empty then.
+    channels : tuple of ChannelRow
+    response_deviation : [k][outputs][inputs] float
+        Of the fitted response at the data's lines: sqrt of the mean |error|^2.
+    residue_deviation : [n][outputs][inputs] float
+    direct_deviation : [outputs][inputs] float
+    gain, gain_deviation : [outputs][inputs] float
+        Steady-state gain of the model (at frequency 0, z = 1).
     """
 
     poles: ComplexArray
@@ -140,3 +225,10 @@ class Fit:
     cautions: tuple[str, ...]
     powers: NDArray[np.int64]
     factors: Factored | None = None
+    bars: Bars | None = None
+    channels: tuple[ChannelRow, ...] = ()
+    response_deviation: Array = field(default_factory=_nothing)
+    residue_deviation: Array = field(default_factory=_nothing)
+    direct_deviation: Array = field(default_factory=_nothing)
+    gain: Array = field(default_factory=_nothing)
+    gain_deviation: Array = field(default_factory=_nothing)

@@ -8,16 +8,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.errors import Refused
+from realize.fitting.modes import Units, mode_table
 from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
-from realize.fitting.records import Candidate, Factored, Fit, Noise, PoleRow, Worst
+from realize.fitting.records import Candidate, ChannelRow, Factored, Fit, Noise, Worst
+from realize.fitting.remarks import remarks
 from realize.fitting.restored import factors_in_units, in_z, values_of
+from realize.fitting.solution import Estimate, solved, unknowns_of
+from realize.fitting.spread import deviations
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
-
-#: Misfit of this many times the noise is worth a caution.
-POOR = 1.5
 
 
 def finish(
@@ -51,8 +52,8 @@ def finish(
         Lines that took part.
     """
     lines, p, m = H.shape
-    solved = poles
-    solution = problem.solved(poles)
+    estimate = solved(problem, poles, lift.reshape(p, m), 1.0 if problem.known else None)
+    solution = estimate.solution
     # a channel that is zero in all lines stays exactly zero
     if period is None:
         scale, points = shift, 1j * np.ldexp(w, -shift)
@@ -84,9 +85,12 @@ def finish(
     relative = np.abs(missed) / np.where(peak > 0, peak, 1.0)
     line, channel = np.unravel_index(int(np.argmax(relative)), relative.shape)
     worst = Worst(float(relative[line, channel]), int(line), int(channel) // m, int(channel) % m, float(w[line]))
-    weighted, noise = _noise(problem, solved, missed[used], basis, common, size)
-    table = _pole_table(poles, contribution, peak, period, scale)
-    cautions = [*cautions, *_remarks(table, w, noise, weighted, worst)]
+    unknowns = unknowns_of(estimate, problem)
+    weighted, factor, noise = _noise(problem, estimate, unknowns, missed[used], basis, common, size)
+    units = Units(shift, lift, period)
+    table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(poles, contribution, peak))
+    cautions = [*cautions, *remarks(table, w, noise, weighted, worst)]
+    spread = deviations(problem, estimate, units, bars, growth, used)
     return Fit(
         poles=_frozen(out_poles),
         residues=_frozen(out_residues),
@@ -103,6 +107,13 @@ def finish(
         cautions=tuple(cautions),
         powers=_frozen(powers),
         factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m))),
+        bars=bars,
+        channels=_channel_rows(problem, w, missed, lifted, used, factor, m),
+        response_deviation=_frozen(spread.response.reshape(H.shape)),
+        residue_deviation=_frozen(spread.residues.reshape(-1, p, m)),
+        direct_deviation=_frozen(spread.direct.reshape(p, m)),
+        gain=_frozen(spread.gain.reshape(p, m)),
+        gain_deviation=_frozen(spread.gain_deviation.reshape(p, m)),
     )
 
 
@@ -121,88 +132,67 @@ def _ldexp(values: ComplexArray, exponents: Any) -> ComplexArray:
 
 
 def _noise(
-    problem: Problem, poles: ComplexArray, missed: ComplexArray, basis: str, common: Array, size: float
-) -> tuple[float, Noise]:
-    """Return RMS of misfit over deviation, and the deviations' size.
+    problem: Problem, fitted: Estimate, unknowns: int, missed: ComplexArray, basis: str, common: Array, size: float
+) -> tuple[float, float, Noise]:
+    """Return RMS of misfit over deviation, the deviations in units of 1/weights, and their size.
 
     Where only the shape of the deviations is known, their size is the median of what neighbouring misfits do not
     predict (``noise.noise_factor``); with fewer than eight lines the misfit itself over the degrees of freedom.
     """
     alive = np.any(problem.values != 0, axis=0)
     if not np.any(alive):
-        return 0.0, Noise(basis, 0.0)
+        return 0.0, 0.0, Noise(basis, 0.0)
     scaled = missed[:, alive] * problem.weights[:, alive]
     rms = float(np.sqrt(np.sum(np.abs(scaled) ** 2) * 2 / problem.numbers))
     factor = 1.0
     if not problem.known:
         factor = noise_factor(problem.x, missed[:, alive], problem.weights[:, alive])
-        free = problem.numbers - problem.unknowns(poles.size)
+        free = problem.numbers - unknowns
         if problem.points.size < 8:
             factor = rms * np.sqrt(problem.numbers / max(free, 1))
         elif free > 0:
             # neighbouring misfits are alike the more unknowns there are: the same correction for both
             factor *= np.sqrt(problem.numbers / free)
         # rounding is the least that any deviation can be
-        factor = max(factor, np.sqrt(2 * problem.rounding(poles) / problem.numbers))
+        factor = max(factor, np.sqrt(2 * problem.rounding(fitted.free_poles) / problem.numbers))
     deviation = (factor * common / problem.weights)[:, alive]
     level = float(np.sqrt(np.sum(deviation**2))) / size if size > 0 else 0.0
-    return (rms / factor if factor > 0 else 0.0), Noise(basis, level)
+    return (rms / factor if factor > 0 else 0.0), float(factor), Noise(basis, level)
 
 
-def _pole_table(
-    poles: ComplexArray, contribution: list[ComplexArray], peak: Array, period: float | None, scale: int
-) -> tuple[PoleRow, ...]:
-    rows = []
+def _dominance(poles: ComplexArray, contribution: list[ComplexArray], peak: Array) -> Array:
+    """Return the largest share of each pole, with its conjugate, in a channel: [n]."""
+    result = np.zeros(poles.size)
     for j in np.flatnonzero(poles.imag >= 0):
-        pair = bool(poles[j].imag > 0)
-        part = contribution[j] + contribution[j + 1] if pair else contribution[j]
-        size_there = np.where(np.isfinite(part), np.abs(part), 0.0)
-        share = float(np.max(np.max(size_there, axis=0) / np.where(peak > 0, peak, 1.0)))
-        s = complex(poles[j]) if period is None else complex(np.log(poles[j])) / period
-        size = abs(s)
-        rows.append(PoleRow(float(np.ldexp(size, scale)), -s.real / size if size > 0 else 1.0, share, int(j), pair))
-    return tuple(sorted(rows, key=lambda row: row.frequency))
+        part = contribution[j] + contribution[j + 1] if poles[j].imag > 0 else contribution[j]
+        size = np.where(np.isfinite(part), np.abs(part), 0.0)
+        result[j] = np.max(np.max(size, axis=0) / np.where(peak > 0, peak, 1.0))
+    return result
 
 
-def _remarks(
-    table: tuple[PoleRow, ...],
+def _channel_rows(
+    problem: Problem,
     w: Array,
-    noise: Noise,
-    weighted: float,
-    worst: Worst,
-) -> list[str]:
-    remarks = []
-    lowest = w[w > 0][0]
-    slow = [row for row in table if 0 < row.frequency < 0.1 * lowest and row.dominance > 0.1]
-    if slow:
-        remarks.append(
-            f"{sum(2 if row.pair else 1 for row in slow)} pole(s) lie below a tenth of the lowest line: the data look "
-            "like an integrator there, and the model is a stable stand-in for it below the band"
+    missed: ComplexArray,
+    lifted: ComplexArray,
+    used: NDArray[np.bool_],
+    factor: float,
+    inputs: int,
+) -> tuple[ChannelRow, ...]:
+    rows = []
+    for c in range(missed.shape[1]):
+        size, peak = float(np.linalg.norm(lifted[:, c])), float(np.max(np.abs(lifted[:, c])))
+        worst = int(np.argmax(np.abs(missed[:, c])))
+        alive = size > 0 and factor > 0
+        scaled = np.linalg.norm(missed[used, c] * problem.weights[:, c]) / np.sqrt(problem.points.size)
+        rows.append(
+            ChannelRow(
+                output=c // inputs,
+                input=c % inputs,
+                rms=float(np.linalg.norm(missed[:, c])) / size if size > 0 else 0.0,
+                weighted=float(scaled / factor) if alive else 0.0,
+                worst=float(np.abs(missed[worst, c])) / peak if peak > 0 else 0.0,
+                frequency=float(w[worst]),
+            )
         )
-    fast = [row for row in table if row.frequency > 10 * w[-1] and row.dominance > 1]
-    if fast:
-        remarks.append(
-            f"{sum(2 if row.pair else 1 for row in fast)} pole(s) lie far above the highest line: the response still "
-            "grows there, and the (proper) model levels off somewhere above the band"
-        )
-    narrow = [row for row in table if row.pair and _narrow(row, w)]
-    if narrow:
-        places = ", ".join(f"{row.frequency:.6g}" for row in narrow)
-        remarks.append(
-            "resonance(s) narrower than half the distance of the lines, whose damping hangs on a few lines: "
-            f"{places} rad/s"
-        )
-    if weighted > POOR and noise.level > 0 and worst.value > 1e-9:
-        source = "given" if noise.basis == "given" else "estimated"
-        remarks.append(
-            f"the misfit is {weighted:.3g} times the {source} noise: the data contain more than a model of this order, "
-            "or their errors are not independent from line to line"
-        )
-    return remarks
-
-
-def _narrow(row: PoleRow, w: Array) -> bool:
-    if w.size < 3 or not w[0] < row.frequency < w[-1]:
-        return False
-    k = int(np.clip(np.searchsorted(w, row.frequency), 1, w.size - 1))
-    return 2 * row.damping * row.frequency < 0.5 * (w[k] - w[k - 1])
+    return tuple(rows)

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import time
-from typing import Any
 
 import numpy as np
 
@@ -12,6 +11,7 @@ from realize.errors import InputError, UsageError
 from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue
 from realize.schema import FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
 from realize.steps.conversion import Conversion, model_of
+from realize.steps.fit_record import fit_details
 from realize.steps.receipts import finish
 from realize.steps.second_opinion import asking
 from realize.verification.misfit import misfit, rms_misfit, weighted_misfit, worst_misfit
@@ -51,7 +51,8 @@ def fit(
     Returns
     -------
     Conversion
-        ``receipt.details`` holds the candidates of the order, the poles with frequency and damping, and the noise.
+        ``receipt.details`` holds the candidates of the order, the modes with error bars, the misfit of each channel,
+        the confidence band of the response at some lines, and the noise.
 
     Raises
     ------
@@ -127,7 +128,7 @@ def fit(
             cautions=cautions,
             opinion=opinion,
             limits=limits,
-            details=_details(found, source, len(w)),
+            details=fit_details(found, source, w, chosen=not isinstance(order, int)),
         )
 
 
@@ -155,20 +156,3 @@ def _dead_time(source: FrequencyResponse, seconds: float | None) -> DeadTime | N
         raise UsageError("the data already state a dead time; leave --dead-time out")
     p, m = source.shape
     return DeadTime((0.0,) * m, (0.0,) * p, tuple((float(seconds),) * m for _ in range(p)))
-
-
-def _details(found: Any, source: FrequencyResponse, lines: int) -> dict[str, Any]:
-    return {
-        "lines": lines,
-        "noise": {"basis": found.noise.basis, "level": found.noise.level},
-        "candidates": [
-            {"order": c.order, "rms": c.rms, "weighted": c.weighted, "criterion": c.criterion, "kept": c.kept}
-            for c in found.candidates
-        ],
-        "poles": [[pole.real, pole.imag, 1] for pole in found.poles.tolist()],
-        "modes": [
-            {"frequency": row.frequency, "damping": row.damping, "dominance": row.dominance, "pair": row.pair}
-            for row in found.pole_table
-        ],
-        "period": source.time.seconds if source.time.sampled else None,
-    }
