@@ -278,7 +278,7 @@ def sections(factors: list[list[Factors]], task: Task) -> Sections:
 def state_model(task: Task, A: Any, B: Any, C: Any, D: Any, E: Any = None) -> StateSpace:
     """State model with the signals of the source, refused with entries beyond the doubles."""
     for name, value in zip("ABCD", (A, B, C, D), strict=True):
-        if not np.all(np.isfinite(value)):
+        if not np.isfinite(value).all():
             raise Refused(f"an entry of {name} lies beyond the range of doubles; scale time or gain first")
     return StateSpace(A=A, B=B, C=C, D=D, E=E, **task.model.common())
 
@@ -324,7 +324,7 @@ def cascade_channel(channel: Factors, task: Task) -> tuple[Any, ...]:
 def assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
     """Put the channels side by side, identically zero ones left out, the polynomial parts in one descriptor block."""
     p, m = len(grid), len(grid[0])
-    keep = [(i, j) for i in range(p) for j in range(m) if p * m == 1 or np.any(grid[i][j][2]) or np.any(grid[i][j][3])]
+    keep = [(i, j) for i in range(p) for j in range(m) if p * m == 1 or grid[i][j][2].any() or grid[i][j][3].any()]
     n = sum(grid[i][j][0].shape[0] for i, j in keep)
     A, B, C, D = np.zeros((n, n)), np.zeros((n, m)), np.zeros((p, n)), np.zeros((p, m))
     degree = max(
@@ -342,7 +342,7 @@ def assemble(task: Task, grid: list[list[tuple[Any, ...]]]) -> StateSpace:
             own = grid[i][j][4]
             if own is not None:
                 polynomial[degree + 1 - own.shape[0] :, i, j] = own[:, 0, 0]
-    if degree == 0 and not np.any(polynomial):
+    if degree == 0 and not polynomial.any():
         return state_model(task, A, B, C, D)
     return state_model(task, *append_polynomial_part(A, B, C, D, polynomial))
 

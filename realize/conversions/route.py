@@ -10,7 +10,7 @@ from __future__ import annotations
 import heapq
 from collections.abc import Callable
 from dataclasses import dataclass, field, replace
-from functools import partial
+from functools import cache, partial
 from typing import TYPE_CHECKING, Any
 
 from realize.conversions import builders
@@ -356,25 +356,9 @@ def plan_route(task: Task) -> list[Row]:
         return [SMALLEST_DESCRIPTOR]
     if start == goal and not task.common_denominator and task.digits is None and task.side is None:
         return []
-    rows = _rows(task)
-    if task.digits is not None:
-        # nothing that is computed in doubles has more digits than they have
-        rows = tuple(row for row in rows if row in ROWS)
-    queue: list[tuple[tuple[int, int], int, str, list[Row]]] = [((0, 0), 0, start, [])]
-    done: set[str] = set()
-    count = 0
-    while queue:
-        cost, _, node, path = heapq.heappop(queue)
-        if node == goal and path:
-            return path
-        if node in done:
-            continue
-        done.add(node)
-        for row in rows:
-            # the way back to the source's own kind goes through the fractions (a new common denominator)
-            if row.source == node and (row.target not in done or row.target == goal):
-                count += 1
-                heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, [*path, row]))
+    path = _path(_table(task), start, goal)
+    if path is not None:
+        return list(path)
     if task.to == "second-order":
         from realize.conversions.second_order import STRUCTURE_NEEDED
 
@@ -400,18 +384,48 @@ def coordinate_row(source: str, task: Task) -> Row:
     return next(row for row in COORDINATE_ROWS if (row.source, row.target) == (source, f"state-space:{task.form}"))
 
 
-def _rows(task: Task) -> tuple[Row, ...]:
-    """Return the table that the arithmetic of the task allows."""
+def _table(task: Task) -> str:
+    """Return the name of the table of rows that the arithmetic of the task allows."""
     if choose_arithmetic(task).arithmetic == "exact":
-        return ROWS
+        return "exact"
     if task.model.beyond_doubles:
         raise Refused(
             f"{task.model.beyond_doubles[0]} lies beyond the range of doubles, and the conversion is in doubles; "
             "use --arithmetic exact, or scale time and gain first"
         )
-    if task.arithmetic == "double":
-        return DOUBLE_ROWS
-    return tuple(row for row in DOUBLE_ROWS if row.source not in COEFFICIENTS and row.target not in COEFFICIENTS)
+    # nothing that is computed in doubles has more digits than they have
+    return "digits" if task.digits is not None else "double" if task.arithmetic == "double" else "careful"
+
+
+#: Rows by name of the table: a source beyond exact arithmetic keeps clear of coefficients unless doubles are asked for.
+TABLES = {
+    "exact": ROWS,
+    "double": DOUBLE_ROWS,
+    "careful": tuple(row for row in DOUBLE_ROWS if row.source not in COEFFICIENTS and row.target not in COEFFICIENTS),
+}
+TABLES["digits"] = tuple(row for row in TABLES["careful"] if row in ROWS)
+
+
+@cache
+def _path(table: str, start: str, goal: str) -> tuple[Row, ...] | None:
+    """Return the rows from one kind to another: fewest roundings first, then fewest rows; None without a way."""
+    rows = TABLES[table]
+    queue: list[tuple[tuple[int, int], int, str, tuple[Row, ...]]] = [((0, 0), 0, start, ())]
+    done: set[str] = set()
+    count = 0
+    while queue:
+        cost, _, node, path = heapq.heappop(queue)
+        if node == goal and path:
+            return path
+        if node in done:
+            continue
+        done.add(node)
+        for row in rows:
+            # the way back to the source's own kind goes through the fractions (a new common denominator)
+            if row.source == node and (row.target not in done or row.target == goal):
+                count += 1
+                heapq.heappush(queue, ((cost[0] + (not row.exact), cost[1] + 1), count, row.target, (*path, row)))
+    return None
 
 
 def convert_model(task: Task, route: list[Row]) -> Model:

@@ -31,7 +31,7 @@ import numpy as np
 from flint import fmpq
 from numpy.typing import NDArray
 
-from realize.kernels.exact.numbers import exact, power_of_two
+from realize.kernels.exact.numbers import exact, nearest, power_of_two
 
 Array = NDArray[np.float64]
 
@@ -282,7 +282,7 @@ def _graded(A: Array, B: Array, C: Array, sizes: list[int], sampled: bool) -> tu
         )
     for before, after in zip((A, B, C), made, strict=True):
         small = (np.abs(after) < _NORMAL) & (before != 0)
-        if not np.all(np.isfinite(after)) or np.any(small):
+        if not np.isfinite(after).all() or small.any():
             return A, B, C
     return made
 
@@ -359,14 +359,22 @@ def _block(section: Section, sampled: bool, circle: Collection[complex], precise
 
 #: From this amplification of rounding near a zero the coupling of the two states is tuned.
 TUNE_FROM = 4.0
-#: Couplings tried; each has an even chance to halve the smallest error so far.
-COUPLINGS = 1200
+#: Couplings tried, in 1024ths, from 1 away; each has an even chance to halve the smallest error so far.
+_TRIED = 1024.0 + np.where(np.arange(1200) % 2, np.arange(1200), -(np.arange(1200) // 2))
 
 
 def _near_end(section: Section, sampled: bool) -> bool:
     """True for zeros near z = -1 while the poles are not: what is left of the numerator there is a small difference."""
     zero = section.zeros[0]
     return sampled and abs(zero + 1) < 0.5
+
+
+def _product(a: Array | float, b: Array) -> tuple[Array, Array]:
+    """Return a * b as the sum of two doubles (Dekker 1971; b has at most 26 bits)."""
+    product = a * b
+    t = a * 134217729.0
+    high = t - (t - a)
+    return product, (high * b - product) + (a - high) * b
 
 
 def _tuned(k: fmpq, d0: fmpq, n0: fmpq) -> fmpq:
@@ -383,23 +391,28 @@ def _tuned(k: fmpq, d0: fmpq, n0: fmpq) -> fmpq:
     d0, n0 : fmpq
         Constant terms of denominator and numerator.
     """
-    # in units of n0's and d0's common denominator, with k T/1024 in place of k: whole numbers all along
-    unit = math.lcm(int(d0.q), int(n0.q))
-    D, N = int(d0 * unit), int(n0 * unit)
-    if max(D.bit_length(), N.bit_length()) > 900:
+    # k T/1024 in place of k, all T at once; n0 and d0 as sums of two doubles
+    try:
+        D, N = to_double(d0), to_double(n0)
+        low_D, low_N = nearest(d0 - exact(D)), nearest(n0 - exact(N))
+    except (BeyondDoubles, OverflowError):
         return k
-    target = abs(to_double(n0 - d0)) * 2.0**-53 / 1024
-    best, found = 1024, math.inf
-    for step in range(COUPLINGS):
-        T = 1024 + (step if step % 2 else -step // 2)
-        s, below = (D / T).as_integer_ratio()
-        c, under = ((N * below - s * T) / (T * below)).as_integer_ratio()
-        error = abs((T * (s * under + c * below) - N * below * under) / (unit * below * under))
-        if error < found:
-            best, found = T, error
-            if found <= target:
-                break
-    return k * best / 1024
+    if not 2.0**-400 < min(abs(D), abs(N)) <= max(abs(D), abs(N)) < 2.0**400:
+        return k
+    p, q = _product(D / _TRIED, _TRIED)
+    s = D / _TRIED + ((D - p) - q + low_D) / _TRIED
+    p, q = _product(s, _TRIED)
+    rest, low_rest = (N - p), low_N - q
+    # what the difference N - p lost
+    share = rest - N
+    low_rest = low_rest + ((N - (rest - share)) - (p + share))
+    c = rest / _TRIED
+    p, q = _product(c, _TRIED)
+    c = c + ((rest - p) - q + low_rest) / _TRIED
+    p, q = _product(c, _TRIED)
+    error = np.abs((rest - p) - q + low_rest)
+    near = np.flatnonzero(error <= abs(N - D) * 2.0**-53 / 1024)
+    return k * int(_TRIED[near[0] if near.size else error.argmin()]) / 1024
 
 
 def _first_order(section: Section, exact_zeros: bool) -> _Block:

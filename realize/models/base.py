@@ -17,6 +17,8 @@ from realize.schema import KINDS, PORT_PARAMETERS, Receipt
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 Index = tuple[int, ...]
+#: Arrays of up to this many numbers keep their integer ratios.
+EXACT_KEPT = 400
 
 
 @dataclass(frozen=True, slots=True)
@@ -325,7 +327,12 @@ class Model:
 
         Decimals count as typed, doubles as the binary fractions they are; a complex number is a pair of ratios.
         """
-        return checks.exact_tree(getattr(self, name), self.decimals.get(name, {}))
+        value = getattr(self, name)
+        if isinstance(value, np.ndarray) and value.size > EXACT_KEPT:
+            return checks.exact_tree(value, self.decimals.get(name, {}))
+        return self.remembered(
+            "exact " + name, lambda: checks.exact_tree(value, self.decimals.get(name, {}))
+        )
 
     @property
     def beyond_doubles(self) -> list[str]:
@@ -343,6 +350,13 @@ class Model:
     def with_(self, **changes: Any) -> Self:
         """Return a copy with some fields changed."""
         return replace(self, **changes)
+
+    def with_receipts(self, receipts: tuple[Receipt, ...]) -> Self:
+        """Return the same model with another chain of receipts; what is remembered of its numbers stays."""
+        self.__dict__.setdefault("_memory", {})
+        copy = object.__new__(type(self))
+        copy.__dict__.update(self.__dict__, receipts=receipts)
+        return copy
 
     def common(self) -> dict[str, Any]:
         """Return what every step hands on: time, signals, dead time, operating point of signals, ports, receipts."""

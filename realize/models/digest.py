@@ -12,6 +12,9 @@ from realize.models.base import Model, Signal
 from realize.schema import ModelMark
 
 
+_ZEROS = {kind: np.zeros((), dtype=kind) for kind in ("<f8", "<c16", "<i8")}
+
+
 def _feed(parts: list[bytes], value: Any) -> None:
     """Add a value to what is hashed with its type and shape, so that no two values share a byte stream."""
     if value is None:
@@ -19,9 +22,8 @@ def _feed(parts: list[bytes], value: Any) -> None:
     elif isinstance(value, np.ndarray):
         kind = {"f": "<f8", "c": "<c16", "i": "<i8"}[value.dtype.kind]
         # adding zero turns -0.0 into 0.0: the two are the same number
-        data = np.ascontiguousarray(value.astype(kind) + np.zeros((), dtype=kind))
         parts.append(f"a{value.dtype.kind}{value.shape};".encode())
-        parts.append(data.tobytes())
+        parts.append((value.astype(kind, copy=False) + _ZEROS[kind]).tobytes())
     elif isinstance(value, (tuple, list)):
         parts.append(f"l{len(value)};".encode())
         for entry in value:
@@ -50,11 +52,20 @@ def _digest(model: Model) -> str:
         _feed(parts, ["ports", model.ports.parameter, model.ports.reference])
     for name, value in model.parameters().items():
         if name != "states":
-            _feed(parts, [name, value])
+            parts.append(_label(name))
+            _feed(parts, value)
     for name in sorted(model.decimals):
         rows = model.decimals[name]
         _feed(parts, [name, [[list(index), rows[index]] for index in sorted(rows)]])
     return "sha256:" + hashlib.sha256(b"".join(parts)).hexdigest()
+
+
+@lru_cache(maxsize=256)
+def _label(name: str) -> bytes:
+    """Return how a pair of this name and something begins."""
+    parts: list[bytes] = []
+    _feed(parts, [name, None])
+    return b"".join(parts[:-1])
 
 
 @lru_cache(maxsize=64)

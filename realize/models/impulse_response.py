@@ -8,6 +8,7 @@ from typing import Any, ClassVar
 from realize.errors import InputError, Refused
 from realize.models import checks
 from realize.models.base import ComplexArray, Model
+from realize.schema import KINDS
 
 
 @dataclass(frozen=True, eq=False, kw_only=True, repr=False)
@@ -54,6 +55,4 @@ class ImpulseResponse(Model):
 
 def is_data(model: Model) -> bool:
     """True for kinds that hold data in place of parameters."""
-    from realize.schema import KINDS
-
     return not KINDS[model.kind].parametric

@@ -18,8 +18,7 @@ from realize.schema import CLAIMS, Claim, Receipt, SecondOpinion, judge
 from realize.steps.conversion import Conversion
 from realize.steps.second_opinion import Later, Opinion
 from realize.verification import fragility, view_of
-from realize.verification.bands import whole_band
-from realize.verification.search import few_seeds
+from realize.verification.bands import thin_grid, whole_band
 
 CLOSED_LOOP = (
     "Check the closed loop on the full plant model, and on the hardware with limits in place, "
@@ -68,11 +67,10 @@ def probe_frequencies(model: Model, count: int = 40) -> np.ndarray:
         w = model.radians[model.radians > 0]
     else:
         view = view_of(model)
-        band = whole_band(view, margin=1.0)
-        w = band.keep(few_seeds(band, view.poles))
+        w = whole_band(view, margin=1.0).keep(thin_grid(view))
         w = w[w > 0]
     if w.size > count:
-        w = w[np.unique(np.linspace(0, w.size - 1, count).astype(int))]
+        w = w[np.arange(count) * (w.size - 1) // (count - 1)]
     return w
 
 
@@ -133,9 +131,11 @@ def _plain_claim(claim: Claim) -> Claim:
     """Return the claim with Python's own numbers in place of numpy's."""
     changed = {
         field: plain(value)
-        for field in claim.__struct_fields__
-        if isinstance(value := getattr(claim, field), np.generic) or (type(value) is dict and value)
+        for field in ("value", "limit", "uncertainty", "holds", "relative")
+        if isinstance(value := getattr(claim, field), np.generic)
     }
+    if any(isinstance(value, (np.generic, dict, list, tuple)) for value in claim.where.values()):
+        changed["where"] = plain(claim.where)
     return msgspec.structs.replace(claim, **changed) if changed else claim
 
 
@@ -218,4 +218,4 @@ def finish(
         versions=versions(),
         seconds=round(time.perf_counter() - started, 6),
     )
-    return Conversion(result.with_(receipts=(*source.receipts, receipt)), receipt)
+    return Conversion(result.with_receipts((*source.receipts, receipt)), receipt)

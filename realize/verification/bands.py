@@ -6,7 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.verification.pair import Pair
-from realize.verification.search import LIGHT, Band, dynamic_band
+from realize.verification.search import LIGHT, Band, dynamic_band, few_seeds
 from realize.verification.views import NO_DYNAMICS, Dynamics, View
 
 #: Low end, high end (rad/s), and the gain to divide by; None: the source's own at each frequency.
@@ -20,7 +20,7 @@ ROUNDING = 1e-9
 def finite_at_zero(view: View) -> bool:
     """True where every channel is finite at zero frequency and some channel is not zero there."""
     poles = view.poles
-    if poles.s.size and np.any(poles.s == 0):
+    if 0 in poles.s.tolist():
         return False
     if view.fractions is None:
         return bool(np.any(_above_rounding(view)))
@@ -44,7 +44,7 @@ def _above_rounding(view: View) -> NDArray[np.bool_]:
 
 def channel_band(view: View, i: int, j: int) -> Band:
     zeros, poles = view.channel_roots[i][j]
-    at_origin = bool(np.any(poles.s == 0))
+    at_origin = 0 in poles.s.tolist()
     if view.fractions is not None:
         finite = not at_origin and view.fractions[i][j][0](0 if view.period is None else 1) != 0
     else:
@@ -132,11 +132,18 @@ def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Ba
     return _whole_band(view, margin, other)
 
 
+def thin_grid(view: View) -> NDArray[np.float64]:
+    """Return the thin grid over the widened band, beside all poles and zeros, made once for a model."""
+    return view.model.remembered(
+        "thin grid", lambda: few_seeds(whole_band(view), view.poles, *channel_zeros(view))
+    )  # type: ignore[no-any-return]
+
+
 def _whole_band(view: View, margin: float, other: View | None) -> Band:
     zeros, poles = NO_DYNAMICS, view.poles
     for part in channel_zeros(view):
         zeros = part if zeros is NO_DYNAMICS else zeros.merged(part)
-    at_origin = bool((poles.s == 0).any())
+    at_origin = 0 in poles.s.tolist()
     band = dynamic_band(zeros, poles, view.period, not at_origin)
     low, high = band.low, band.high
     if other is not None:

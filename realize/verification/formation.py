@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import random
+from functools import lru_cache
 from typing import Any
 
 from realize.models import (
@@ -24,12 +25,7 @@ class FormationFault(RuntimeError):
 
 def check_at_a_point(model: Model, fractions: list[list[tuple[Any, Any]]]) -> None:
     """Compare the fractions with the model's own structure at one random integer point, in exact arithmetic."""
-    from realize.kernels.exact.numbers import fraction
-
-    rng = random.Random(1000 * (model.order or 0) + 10 * model.shape[0] + model.shape[1])
-    # a point of 20 bits where the structure costs an exact solve per point, of 61 bits else
-    for _ in range(8):
-        x = fraction((rng.getrandbits(61) | 1, 1 << 20))
+    for x in _points(1000 * (model.order or 0) + 10 * model.shape[0] + model.shape[1]):
         values = _structural_value(model, x)
         if values is None:
             continue
@@ -41,6 +37,15 @@ def check_at_a_point(model: Model, fractions: list[list[tuple[Any, Any]]]) -> No
                 if n(x) != values[i][j] * below:
                     raise FormationFault(f"channel output {i}, input {j}: fraction and structure disagree at {x}")
         return
+
+
+@lru_cache(maxsize=64)
+def _points(seed: int) -> tuple[Any, ...]:
+    """Return random rational points of 61 bits, to be tried in turn until one is no pole."""
+    from realize.kernels.exact.numbers import fraction
+
+    rng = random.Random(seed)
+    return tuple(fraction((rng.getrandbits(61) | 1, 1 << 20)) for _ in range(8))
 
 
 def _structural_value(model: Model, x: Any) -> list[list[Any]] | None:

@@ -74,7 +74,7 @@ _PLAIN = 400
 def _plain_growth(coefficients: Array, points: ComplexArray) -> Array | None:
     """Return sum |c_k s^k| / |p(s)| by Horner's rule, or None where something could leave the range of doubles."""
     present = np.abs(coefficients[coefficients != 0])
-    if present.size == 0 or not np.all(np.isfinite(coefficients)):
+    if present.size == 0 or not np.isfinite(coefficients).all():
         return None
     sizes = np.abs(points)
     reach = max(abs(np.log2(sizes.max(initial=1e-300))), abs(np.log2(max(sizes.min(initial=1.0), 1e-300))))

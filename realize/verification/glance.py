@@ -15,8 +15,7 @@ from numpy.typing import NDArray
 
 from realize.verification.proof import Proof
 from realize.verification.quick import Squares
-from realize.verification.search import Band, few_seeds, summits
-from realize.verification.views import Dynamics
+from realize.verification.search import Band, summits
 
 Array = NDArray[np.float64]
 
@@ -36,8 +35,13 @@ class Found(NamedTuple):
 
 def short(frequency: float) -> float:
     """Return a frequency rounded to `PLACE_BITS` bits."""
-    mantissa, exponent = math.frexp(frequency)
-    return math.ldexp(round(math.ldexp(mantissa, PLACE_BITS)), exponent - PLACE_BITS)
+    return rounded(frequency, PLACE_BITS)
+
+
+def rounded(value: float, bits: int) -> float:
+    """Return a double rounded to so many bits."""
+    mantissa, exponent = math.frexp(value)
+    return math.ldexp(round(math.ldexp(mantissa, bits)), exponent - bits)
 
 
 class Glance:
@@ -46,23 +50,20 @@ class Glance:
     Parameters
     ----------
     proof : Proof
-    band : Band
-        The widest band of all claims.
-    dynamics : lists of Dynamics
-        Poles and zeros to look beside.
+    grid : [k] float
+        Frequencies to look at, rad/s, over the widest band of all claims.
     edges : list of float
-        More frequencies to look at, rad/s.
+        More of them.
     """
 
-    def __init__(self, proof: Proof, band: Band, dynamics: tuple[Dynamics, ...], edges: list[float]) -> None:
+    def __init__(self, proof: Proof, grid: Array, edges: list[float]) -> None:
         from realize.kernels.exact.numbers import nearest
 
         self.proof = proof
         self.period = None if proof.period is None else float(proof.period)
         self.unit = nearest(proof.unit) if proof.period is None else 1.0
         self.squares = Squares([proof.error_square, proof.source_square, proof.denominator_square, *proof.gain_squares])
-        w = few_seeds(band, *dynamics)
-        w = np.unique(np.concatenate([w, np.array(edges)])) if edges else w
+        w = np.unique(np.concatenate([grid, np.array(edges)])) if edges else grid
         self.w = w if self.period is None else w[w <= np.pi / self.period]
         self.usable = 1e-290 < self.unit < 1e290
         self.x = self._x(self.w) if self.usable else self.w

@@ -158,15 +158,14 @@ class Pair:
 
     def glance(self, channel: tuple[int, int] | None) -> Glance:
         """Return the quick look at all channels together, or at one, over `band` without the result's own poles."""
-        from realize.verification.bands import all_bands, channel_zeros, whole_band
+        from realize.verification.bands import all_bands, thin_grid
 
         if self.source.model.shape == (1, 1):
             channel = None
         key = ("glance", channel)
         if key not in self._proofs:
-            dynamics = (self.source.poles, *channel_zeros(self.source))
             edges = [edge for part in all_bands(self.source) for edge in part.edges]
-            self._proofs[key] = Glance(self.proof(channel), whole_band(self.source), dynamics, edges)
+            self._proofs[key] = Glance(self.proof(channel), thin_grid(self.source), edges)
         return self._proofs[key]
 
     def edge_gain(self, low: float, high: float, channel: tuple[int, int] | None) -> float:

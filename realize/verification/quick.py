@@ -33,12 +33,12 @@ def _doubles(polynomial: Any) -> tuple[list[float], float]:
     return np.ldexp(m, e - top).tolist(), top - float(np.log2(float(below >> shift)) + shift)
 
 
-def _against_largest(polynomial: Any) -> list[float]:
-    """Return coefficients (lowest power first) over a power of two above the largest.
+def against_largest(coefficients: Sequence[Any]) -> list[float]:
+    """Return whole numbers over a power of two above the largest.
 
     What is 2^-1000 of the largest counts as zero.
     """
-    whole = [int(c) for c in polynomial.numer().coeffs()] or [0]
+    whole = [int(c) for c in coefficients] or [0]
     top = max(abs(c) for c in whole).bit_length()
     shift = max(top - 1000, 0)
     return [math.ldexp(float(c >> shift), shift - top) for c in whole]
@@ -124,7 +124,7 @@ class Squares:
     """
 
     def __init__(self, polynomials: Sequence[Any]) -> None:
-        lists = [_against_largest(p) for p in polynomials]
+        lists = [against_largest(p.numer().coeffs()) for p in polynomials]
         self.degree = max(len(c) for c in lists) - 1
         self.columns = [np.array([[c[k] if k < len(c) else 0.0] for c in lists]) for k in range(self.degree, -1, -1)]
         self.count = len(lists)

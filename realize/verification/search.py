@@ -19,7 +19,9 @@ PER_DECADE = 12
 MOST_SEEDS = 2000
 #: The thinner grid of what a proof checks afterwards, and distances beside a root in units of its damping.
 FEW_PER_DECADE = 8
-_BESIDE = np.array([[0.0], [0.3], [1.0], [3.0]])
+_BESIDE = (0.3, 1.0, 3.0)
+#: Lists of roots up to this length are gone through one by one.
+FEW_ROOTS = 24
 
 
 @dataclass(frozen=True)
@@ -57,14 +59,13 @@ class Band:
 
 def dynamic_band(zeros: Dynamics, poles: Dynamics, period: float | None, finite_at_zero: bool) -> Band:
     """Return 1/10 of the smallest to 10 times the largest nonzero |pole| or |zero|; about 1 rad/s without any."""
-    sizes = np.concatenate([zeros.frequency, poles.frequency])
-    sizes = sizes[(sizes > 0) & np.isfinite(sizes)]
-    top = np.pi / period if period is not None else np.inf
-    if sizes.size == 0:
+    sizes = [size for roots in (zeros, poles) for size in roots.frequency.tolist() if 0 < size < math.inf]
+    top = math.pi / period if period is not None else math.inf
+    if not sizes:
         middle = 1.0 if period is None else 0.1 * top
         low, high = middle / 10, min(10 * middle, top)
     else:
-        low, high = float(sizes.min()) / 10, min(float(sizes.max()) * 10, top)
+        low, high = min(sizes) / 10, min(max(sizes) * 10, top)
         low = min(low, high / 10)
     return Band(max(low, 1e-300), min(high, 1e300), finite_at_zero, axis_intervals(poles))
 
@@ -101,16 +102,37 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
 
 def few_seeds(band: Band, *lists: Dynamics) -> Array:
     """Return a thinner grid than `seeds`, rising, with the ends of what is left out: for what a proof checks."""
-    count = max(int(FEW_PER_DECADE * (math.log10(band.high) - math.log10(band.low))), 12) if band.low else 12
-    ends = [band.low, band.high, *(end for pair in band.left_out for end in pair)]
-    parts = [np.exp(np.linspace(math.log(band.low), math.log(band.high), count)), np.array(ends)]
+    start = math.log(band.low)
+    decades = (math.log(band.high) - start) / math.log(10)
+    count = max(int(FEW_PER_DECADE * decades), 12)
+    ends = [0.0, band.low, band.high, *(end for pair in band.left_out for end in pair)]
+    parts = [np.exp(start + np.arange(1, count - 1) * (decades * math.log(10) / (count - 1)))]
     for roots in lists:
-        size = roots.frequency
-        if size.size:
-            spread = 1 + np.minimum(roots.damping, 0.3) * _BESIDE
-            parts += [(size * spread).reshape(-1), (size / spread).reshape(-1), np.abs(roots.s.imag)]
-    w = np.unique(np.concatenate([np.zeros(1), *parts]))
-    return w[np.isfinite(w)]
+        if 0 < roots.s.size <= FEW_ROOTS:
+            ends += _beside(roots)
+        elif roots.s.size:
+            size = roots.frequency
+            spread = 1 + np.minimum(roots.damping, 0.3) * np.array(_BESIDE)[:, None]
+            parts += [size, (size * spread).reshape(-1), (size / spread).reshape(-1), np.abs(roots.s.imag)]
+    w = np.concatenate([*parts, ends])
+    w.sort()
+    keep = np.isfinite(w)
+    keep[1:] &= w[1:] > w[:-1]
+    return w[keep]
+
+
+def _beside(roots: Dynamics) -> list[float]:
+    """Return the same places for a short list, each pair and each repeated root once."""
+    places = []
+    for root, size in dict(zip(roots.s.tolist(), roots.frequency.tolist(), strict=True)).items():
+        if root.imag < 0 or not size:
+            continue
+        spread = min(abs(root.real) / size, 0.3)
+        places += [size, root.imag]
+        if spread:
+            for step in _BESIDE:
+                places += [size * (1 + step * spread), size / (1 + step * spread)]
+    return places
 
 
 def summits(w: Array, values: Array, band: Band, most: int = 3) -> list[float]:

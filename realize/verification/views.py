@@ -135,7 +135,8 @@ def dynamics_of(values: ComplexArray, exact_axis: NDArray[np.bool_], period: flo
     """Return roots as continuous equivalents: ln(z)/T for a sampled model; roots at z = 0 have none."""
     values = np.asarray(values, dtype=complex)
     keep = np.isfinite(values)
-    values, exact_axis = values[keep], exact_axis[keep]
+    if not keep.all():
+        values, exact_axis = values[keep], exact_axis[keep]
     if period is None:
         return Dynamics(values, exact_axis)
     keep = values != 0
@@ -205,13 +206,13 @@ class View:
                 if values is not None:
                     return dynamics_of(values, np.zeros(values.size, dtype=bool), self.period)
         distinct = roots(polynomial)
-        flags = [root.on_axis for root in distinct] if self.period is None else unit_circle(polynomial, distinct)
+        if self.period is None:
+            each = [root for root in distinct for _ in range(root.multiplicity)]
+            values = np.array([root.value for root in each], dtype=complex)
+            return dynamics_of(values, np.array([root.on_axis for root in each], dtype=bool), None)
+        flags = unit_circle(polynomial, distinct)
         counts = [root.multiplicity for root in distinct]
         axis = np.repeat(np.array(flags, dtype=bool), counts)
-        if self.period is None:
-            return dynamics_of(
-                np.repeat(np.array([root.value for root in distinct], dtype=complex), counts), axis, None
-            )
         # a root at z = 0 has no continuous equivalent
         keep = np.repeat(np.array([root.value != 0 for root in distinct], dtype=bool), counts)
         s = np.repeat(np.array([logarithm(root) if root.value else 0j for root in distinct], dtype=complex), counts)
@@ -221,6 +222,8 @@ class View:
     @cached_property
     def poles(self) -> Dynamics:
         """The poles of all channels together, each as often as the channel with the most has it."""
+        if self.model.shape == (1, 1):
+            return self.channel_roots[0][0][1]
         seen: dict[complex, int] = {}
         axis: dict[complex, bool] = {}
         for row in self.channel_roots:

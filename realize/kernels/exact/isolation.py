@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
 from flint import acb, acb_poly, arb, arb_poly, fmpq, fmpq_poly, fmpz_poly, nmod_poly
 
 from realize.kernels.exact.numbers import conjugate, precision, prime, scaled_ball, simplest_in
@@ -13,7 +14,7 @@ from realize.kernels.exact.polynomials import even_odd, in_square, monic, quotie
 #: Relative accuracy (bits) of the balls that isolation returns.
 ISOLATION_BITS = 128
 #: Largest degree for which rough roots and this many steps of Newton's iteration are tried first.
-SIMPLE_DEGREE, NEWTON_STEPS = 12, 3
+SIMPLE_DEGREE, NEWTON_STEPS = 12, 2
 #: Rational roots are looked for completely up to this size (bits) of leading coefficient and root.
 RATIONAL_CAP = 20_000
 #: From this size on, primes are asked first whether a rational root is possible.
@@ -102,25 +103,25 @@ def _simple_roots(f: fmpz_poly) -> list[acb] | None:
     c = [int(value) for value in f.coeffs()]
     if not c[0]:
         return None
-    # in a unit in which the roots are about one, and monic up to a power of two: the rough roots are quicker then
+    # in a unit in which the roots are about one
     step = (abs(c[0]).bit_length() - abs(c[n]).bit_length()) // n
-    top = c[n].bit_length()
     real: list[acb] = []
     upper: list[acb] = []
     with precision(ISOLATION_BITS + 32):
-        scaled = arb_poly([arb(value) * arb(2) ** ((k - n) * step - top) for k, value in enumerate(c)])
-        complex_value, complex_rate = acb_poly(scaled), acb_poly(scaled.derivative())
-        try:
-            starts = complex_value.roots(maxprec=256)
-        except ValueError:
+        whole = [value << k * step if step >= 0 else value << (k - n) * step for k, value in enumerate(c)]
+        starts = _eigenvalues(whole)
+        if starts is None:
             return None
+        scaled = arb_poly(whole)
+        slope = scaled.derivative()
+        complex_value, complex_rate = acb_poly(scaled), acb_poly(slope)
         tiny = arb(2) ** (-ISOLATION_BITS - 16)
         for start in starts:
             if start.imag < 0:
                 continue
             on_line = not start.imag > 0
-            value, rate = (scaled, scaled.derivative()) if on_line else (complex_value, complex_rate)
-            x: Any = start.real.mid() if on_line else start.mid()
+            value, rate = (scaled, slope) if on_line else (complex_value, complex_rate)
+            x: Any = arb(start.real) if on_line else acb(start.real, start.imag)
             for _ in range(NEWTON_STEPS):
                 x = (x - value(x) / rate(x)).mid()
             disc = _disc(x, (n * (value(x) / rate(x))).abs_upper() + abs(x) * tiny, on_line)
@@ -135,6 +136,17 @@ def _simple_roots(f: fmpz_poly) -> list[acb] | None:
         return None
     # balls of the upper half-plane and their mirror images do not meet
     return real + [each for ball in upper for each in (ball, conjugate(ball))]
+
+
+def _eigenvalues(c: list[int]) -> list[complex] | None:
+    """Return the roots of a polynomial (lowest power first) of like coefficients in doubles, None without any."""
+    n = len(c) - 1
+    companion = np.eye(n, k=-1)
+    try:
+        companion[:, -1] = [-(value / c[n]) for value in c[:n]]
+        return np.linalg.eigvals(companion).tolist()  # type: ignore[no-any-return]
+    except (OverflowError, np.linalg.LinAlgError):
+        return None
 
 
 def _square_root(square: acb, signs: tuple[int, int]) -> acb:

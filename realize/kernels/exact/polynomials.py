@@ -88,6 +88,8 @@ def squarefree(p: fmpq_poly) -> list[tuple[fmpq_poly, int]]:
     if p.degree() < 1:
         return []
     _, factors = fmpz_poly(p.numer().coeffs()).factor_squarefree()
+    if len(factors) == 1:
+        return [(monic(fmpq_poly(factors[0][0])), factors[0][1])]
     found: dict[int, fmpq_poly] = {}
     for f, m in factors:
         found[m] = found.get(m, ONE) * monic(fmpq_poly(f))

@@ -16,6 +16,8 @@ from flint import fmpq, fmpq_poly, fmpz, fmpz_poly
 
 #: Intervals looked at before giving up: a proof needs a few for each nearby root.
 MOST_INTERVALS = 4000
+#: Up to this degree intervals are mapped by composing polynomials; past it the powers of denominators are kept.
+COMPOSED = 10
 
 
 def _integers(p: fmpq_poly) -> fmpz_poly:
@@ -48,6 +50,7 @@ class _OnIntervals:
     def __init__(self, p: fmpz_poly) -> None:
         self.coefficients = p.coeffs()
         self._known = {1: p}
+        self._rational = fmpq_poly(p) if p.degree() <= COMPOSED else None
 
     def _in_units(self, q: int) -> fmpz_poly:
         if q not in self._known:
@@ -68,6 +71,10 @@ class _OnIntervals:
         q = int(low.q)
         if high is None:
             return self._in_units(q)(fmpz_poly([low.p, 1]))
+        if self._rational is not None:
+            c = self._rational(fmpq_poly([low, high - low])).numer().coeffs()
+            c += [fmpz(0)] * (len(self.coefficients) - len(c))
+            return fmpz_poly(c[::-1])(_SHIFT)
         q = q * int(high.q) // gcd(q, int(high.q))
         start = low.p * (q // int(low.q))
         # y = start + width u, u in (0, 1); then reverse and shift: u = 1 / (1 + t) covers the same interval
@@ -103,6 +110,11 @@ def positive(p: fmpq_poly, low: fmpq, high: fmpq | None, near: Sequence[fmpq] = 
     return examined(p, low, high, near=near) is True
 
 
+def positive_whole(p: fmpz_poly, low: fmpq, high: fmpq | None, near: Sequence[fmpq] = ()) -> bool:
+    """Return True if p(x) > 0 is proved for a polynomial over the integers; as `positive`."""
+    return _examined(fmpq_poly(p), p, low, high, MOST_INTERVALS, near) is True
+
+
 def examined(
     p: fmpq_poly, low: fmpq, high: fmpq | None, most: int = MOST_INTERVALS, near: Sequence[fmpq] = ()
 ) -> Literal[True] | Counterexample | None:
@@ -115,9 +127,15 @@ def examined(
     most : int
         Intervals looked at before giving up.
     """
-    if not p:
+    return _examined(p, _integers(p) if p else fmpz_poly([]), low, high, most, near)
+
+
+def _examined(
+    p: fmpq_poly, f: fmpz_poly, low: fmpq, high: fmpq | None, most: int, near: Sequence[fmpq]
+) -> Literal[True] | Counterexample | None:
+    """Return the same for p and a positive multiple f of it over the integers."""
+    if not f:
         return Counterexample(low)
-    f = _integers(p)
     if f.degree() == 0:
         return True if f[0] > 0 else Counterexample(low)
     if high is None and f.leading_coefficient() <= 0:
