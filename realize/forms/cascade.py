@@ -211,79 +211,79 @@ def cascade_states(
     """
     gain = exact(gain)
     blocks = [_block(section, sampled, circle, precise) for section in sections]
-    n = sum(len(block.column) for block in blocks)
-    A = np.zeros((n, n))
-    start = 0
-    for block in blocks if gain == 0 else ():
-        part = slice(start, start + len(block.column))
-        A[part, part] = block.A
-        start = part.stop
     if gain == 0:
+        n = sum(len(block.column) for block in blocks)
+        A, start = np.zeros((n, n)), 0
+        for block in blocks:
+            part = slice(start, start + len(block.column))
+            A[part, part] = block.A
+            start = part.stop
         return A, np.zeros((n, 1)), np.zeros((1, n)), np.zeros((1, 1))
     if not blocks:
-        return A, np.zeros((0, 1)), np.zeros((1, 0)), np.array([[to_double(gain)]])
+        return np.zeros((0, 0)), np.zeros((0, 1)), np.zeros((1, 0)), np.array([[to_double(gain)]])
     fraction, exponent = split(gain)
     mantissa = to_double(fraction)
     # blocks whose input column is no power of two come first: their output rows are powers of two
     blocks.sort(key=lambda block: not block.first)
     shares = _spread_exponent(exponent - sum(block.gain_exponent for block in blocks), len(blocks))
     B: list[float] = []
+    rows: list[list[float]] = []  # of A, as far as its blocks reach
     row: list[float] = []  # the signal between sections as a function of the states so far
     through, entered = 1.0, False
     for block, share in zip(blocks, shares, strict=True):
         if not entered and not block.first:
             # here the mantissa meets powers of two on both sides: no second rounding, and what cancels still cancels
             row, through, entered = [_times(x, mantissa) for x in row], _times(through, mantissa), True
-        start = len(row)
-        part = slice(start, start + len(block.column))
-        A[part, part] = block.A
-        for k, entry in enumerate(block.column):
-            if entry:
-                A[start + k, :start] = [_times(entry, x) for x in row]
+        for entry, own in zip(block.column, block.A, strict=True):
+            rows.append([_times(entry, x) if entry and x else 0.0 for x in row] + own)
         B += [_times(entry, through) for entry in block.column]
-        row = [_times(x, 1.0, share) for x in row] if block.d else [0.0] * start
+        row = [_times(x, 1.0, share) if x else 0.0 for x in row] if block.d else [0.0] * len(row)
         row += [_times(x, 1.0, share) for x in block.row]
         through = _times(through, block.d, share)
     if not entered:
         row, through = [_times(x, mantissa) for x in row], _times(through, mantissa)
-    column, output = np.array(B)[:, None], np.array(row)[None, :]
-    return (*_graded(A, column, output, [len(block.column) for block in blocks], sampled), np.array([[through]]))
+    rows, B, row = _graded(rows, B, row, [len(block.column) for block in blocks], sampled)
+    A = np.zeros((len(rows), len(rows)))
+    for k, line in enumerate(rows):
+        A[k, : len(line)] = line
+    return A, np.array(B)[:, None], np.array(row)[None, :], np.array([[through]])
 
 
-def _graded(A: Array, B: Array, C: Array, sizes: list[int], sampled: bool) -> tuple[Array, Array, Array]:
+#: Matrix rows of a cascade as far as its blocks reach, input column, output row.
+Lists = tuple[list[list[float]], list[float], list[float]]
+
+
+def _graded(rows: list[list[float]], B: list[float], C: list[float], sizes: list[int], sampled: bool) -> Lists:
     """Return the states of each section scaled by a power of two so that no coupling exceeds the pole it comes from.
 
     Elimination with row exchanges, as any library solves (sI - A) x = B, then keeps to the order of the sections: time
     scales twelve decades apart do not mix.
     """
     ends = [0, *accumulate(sizes)]
-    rows = A.tolist()
     powers: list[int] = []
-    speed: list[float] = []
+    speed: list[int] = []
     for k, (start, stop) in enumerate(pairwise(ends)):
         # what counts is the distance from the axis: from z = 1 or -1 in sampled time
         shift = round(rows[start][start]) if sampled else 0
         own = [abs(rows[i][j] - shift * (i == j)) for i in range(start, stop) for j in range(start, stop)]
-        speed.append(max(own) or 1.0)
-        needed = [
-            math.frexp(coupling)[1] + powers[j] - math.frexp(speed[j])[1] + 1
-            for j in range(k)
-            if (coupling := max(abs(x) for row in rows[start:stop] for x in row[ends[j] : ends[j + 1]])) > 0
-        ]
-        powers.append(max(needed, default=0))
+        speed.append(math.frexp(max(own) or 1.0)[1])
+        power = 0
+        for j in range(k):
+            coupling = max(abs(x) for row in rows[start:stop] for x in row[ends[j] : ends[j + 1]])
+            if coupling:
+                power = max(power, math.frexp(coupling)[1] + powers[j] - speed[j] + 1)
+        powers.append(power)
     if not any(powers) or max(abs(power) for power in powers) > 400:
-        return A, B, C
-    scale = np.repeat(np.array(powers, dtype=np.int64), sizes)
-    with np.errstate(over="ignore", under="ignore"):
+        return rows, B, C
+    scale = [power for power, size in zip(powers, sizes, strict=True) for _ in range(size)]
+    try:
         made = (
-            np.ldexp(A, scale[None, :] - scale[:, None]),
-            np.ldexp(B, -scale[:, None]),
-            np.ldexp(C, scale[None, :]),
+            [[_times(x, 1.0, e - own) for x, e in zip(row, scale)] for row, own in zip(rows, scale, strict=True)],
+            [_times(x, 1.0, -own) for x, own in zip(B, scale, strict=True)],
+            [_times(x, 1.0, own) for x, own in zip(C, scale, strict=True)],
         )
-    for before, after in zip((A, B, C), made, strict=True):
-        small = (np.abs(after) < _NORMAL) & (before != 0)
-        if not np.isfinite(after).all() or small.any():
-            return A, B, C
+    except BeyondDoubles:
+        return rows, B, C
     return made
 
 

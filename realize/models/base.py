@@ -330,9 +330,7 @@ class Model:
         value = getattr(self, name)
         if isinstance(value, np.ndarray) and value.size > EXACT_KEPT:
             return checks.exact_tree(value, self.decimals.get(name, {}))
-        return self.remembered(
-            "exact " + name, lambda: checks.exact_tree(value, self.decimals.get(name, {}))
-        )
+        return self.remembered("exact " + name, lambda: checks.exact_tree(value, self.decimals.get(name, {})))
 
     @property
     def beyond_doubles(self) -> list[str]:

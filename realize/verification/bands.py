@@ -134,9 +134,7 @@ def whole_band(view: View, margin: float = 1e2, other: View | None = None) -> Ba
 
 def thin_grid(view: View) -> NDArray[np.float64]:
     """Return the thin grid over the widened band, beside all poles and zeros, made once for a model."""
-    return view.model.remembered(
-        "thin grid", lambda: few_seeds(whole_band(view), view.poles, *channel_zeros(view))
-    )  # type: ignore[no-any-return]
+    return view.model.remembered("thin grid", lambda: few_seeds(whole_band(view), view.poles, *channel_zeros(view)))  # type: ignore[no-any-return]
 
 
 def _whole_band(view: View, margin: float, other: View | None) -> Band:

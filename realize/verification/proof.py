@@ -276,8 +276,11 @@ def _root_at(above: Any, below: Any, x: Any) -> float | None:
 
 def square_root(square: Any) -> float:
     """Return the square root of an exact rational; infinite or zero past the range of doubles."""
-    from realize.kernels.exact.numbers import scaled
+    from realize.kernels.exact.numbers import nearest, scaled
 
+    value = nearest(square)
+    if 1e-290 < value < 1e290:
+        return math.sqrt(value)
     mantissa, exponent = scaled(square)
     odd = exponent % 2
     try:

@@ -74,6 +74,11 @@ def small_claims(pair: Pair, response_limit: float | None, peak_limit: float | N
     band, at_zero = all_bands(view)[0], finite_at_zero(view)
     grid = np.concatenate([thin_grid(view), [band.low, band.high]])
     grid.sort()
+    grid = grid[np.append(True, grid[1:] > grid[:-1])]
+    least = grid[1] if grid[0] == 0 else grid[0]
+    reach = max(abs(math.log2(w) - squares.unit) for w in (float(least), float(grid[-1])))
+    if 2 * reach * (d1.degree() + d2.degree()) > _RANGE:
+        return None
     look = squares.look(np.ldexp(grid, -squares.unit), band.low, band.high, at_zero)
     if look is None:
         return None
@@ -91,7 +96,9 @@ def small_claims(pair: Pair, response_limit: float | None, peak_limit: float | N
     low, high = (squares.end(w, up) for w, up in ((band.low, False), (band.high, True)))
     # the lower end is moved to zero where the source is finite there: one interval instead of two
     dips = [squares.dips(poles.s), squares.dips(zeros.s)]
-    first = _bound(squares.relative, squares.M, response, fmpq(0) if at_zero else low, high, relative, dips[0] + dips[1])
+    first = _bound(
+        squares.relative, squares.M, response, fmpq(0) if at_zero else low, high, relative, dips[0] + dips[1]
+    )
     if first is None:
         return None
     short_gain, exponent = _cut(gain)
@@ -150,12 +157,8 @@ class _Squares:
     def look(self, v: Array, low: float, high: float, at_zero: bool) -> list[list[float]] | None:
         """Return where error over source (within the band), error, and source are large, largest first, in units."""
         low, high = self.units(low), self.units(high)
-        x = v * v
         table = [against_largest(p.coeffs()) for p in (self.M, self.n1, self.d1, self.d2)]
         degree = max(len(c) for c in table) - 1
-        bottom = float(x[x > 0].min(initial=1.0))
-        if max(math.log2(max(float(x.max(initial=1.0)), 1.0)), -math.log2(bottom)) * degree > _RANGE:
-            return None
         columns = np.array([c + [0.0] * (degree + 1 - len(c)) for c in table]).T[::-1, :, None]
 
         def quotients(x: Array) -> Array:
@@ -166,21 +169,19 @@ class _Squares:
             return np.sqrt(np.abs((M / (N1 * D2), M / (D1 * D2), N1 / D1)))
 
         with np.errstate(all="ignore"):
-            sizes = quotients(x)
+            sizes = quotients(v * v)
             sizes[0, ~self._inside(v, low, high, at_zero)] = 0.0
             if not np.isfinite(sizes).all():
                 return None
             places = _summits(v, sizes)
-            low_high = ((low, high), (0.0, math.inf), (0.0, math.inf))
-            places = [
-                [place if a <= place <= b else min(max(place, a), b) for place in row] for (a, b), row in zip(low_high, places, strict=True)
-            ]
+            places[0] = [min(max(place, low), high) if place else place for place in places[0]]
             again = quotients(np.square([each for found in places for each in found]))
         result, start = [], 0
         for found, size in zip(places, again, strict=True):
             part = size[start : start + len(found)].tolist()
             start += len(found)
-            result.append([short(v) for _, v in sorted(zip(part, found, strict=True), reverse=True)])
+            ordered = [short(v) for _, v in sorted(zip(part, found, strict=True), reverse=True)]
+            result.append([v for k, v in enumerate(ordered) if all(abs(v - u) > APART * v for u in ordered[:k])])
         return result
 
     @staticmethod
@@ -215,13 +216,15 @@ def _summits(v: Array, values: Array) -> list[list[float]]:
     inner = values[:, 1:-1]
     rows, columns = ((inner > floor) & (inner >= values[:, :-2]) & (inner > values[:, 2:])).nonzero()
     found: list[list[float]] = [
-        [float(v[k]) for k in (0, -1) if row[k] > least] for row, least in zip(values, floor[:, 0].tolist(), strict=True)
+        [float(v[k]) for k in (0, -1) if row[k] > least]
+        for row, least in zip(values, floor[:, 0].tolist(), strict=True)
     ]
     for row, k in zip(rows.tolist(), columns.tolist(), strict=True):
         if len(found[row]) < _MOST:
             place = vertex(v[k : k + 3].tolist(), values[row, k : k + 3].tolist()) if v[k] > 0 else None
             found[row].append(float(v[k + 1]) if place is None else place)
-    return [one or [float(v[values[row].argmax()])] for row, one in enumerate(found)]
+    # the largest sample itself too: beside an end of the band there is no parabola
+    return [[*one, place] for one, place in zip(found, v[values.argmax(axis=1)].tolist(), strict=True)]
 
 
 def _at(p: fmpz_poly, v: float) -> Any:
@@ -248,7 +251,8 @@ def _cut(value: fmpq) -> tuple[int, int]:
     return (p // (q << e), e) if e >= 0 else ((p << -e) // q, e)
 
 
-def _bound(above: fmpz_poly, below: fmpz_poly, value: float, low: fmpq, high: fmpq | None, near: list[float], dips: list[float]
+def _bound(
+    above: fmpz_poly, below: fmpz_poly, value: float, low: fmpq, high: fmpq | None, near: list[float], dips: list[float]
 ) -> float | None:
     """Return the first bound above a value for which bound^2 above - below > 0 is proved on [low, high]."""
     start = max(value, SMALLEST)

@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from flint import fmpq
 
 from realize import reduction
 from realize.conversions import builders, route
@@ -26,7 +27,7 @@ from realize.models import (
 )
 from realize.schema import Claim
 from realize.steps import convert, fit, reduce
-from realize.verification import Pair, View, bands, conversion, conversion_claims, views
+from realize.verification import Pair, View, bands, conversion, conversion_claims, small, views
 
 Patch = pytest.MonkeyPatch
 Inject = Callable[[Patch], None]
@@ -269,6 +270,22 @@ def proof_of_less() -> list[Step]:
     return []
 
 
+def small_proof_of_less() -> list[Step]:
+    """A bound far below the truth is not proved in the short way for small plants either."""
+    pair = Pair(View(factored()), View(replace(factored(), gain=[[3.3]])))
+    assert pair.source.fractions is not None and pair.result.fractions is not None
+    squares = small._Squares(*pair.source.fractions[0][0], *pair.result.fractions[0][0])
+    if less_than(small._bound(squares.relative, squares.M, 0.01, fmpq(0), None, [], []), 0.1):
+        raise Inconsistent("a relative error of 0.1 is proved to be less")
+    return []
+
+
+def halved(make: Callable[..., None], squares: Any, *fractions: Any) -> None:
+    """Make the squares of a small plant, with half the error."""
+    make(squares, *fractions)
+    squares.relative, squares.absolute = 4 * squares.relative, 4 * squares.absolute
+
+
 def both_units() -> list[Step]:
     """The same data in Hz and in rad/s."""
     one, two = fitted(measured)[0], fitted(partial(measured, "Hz"))[0]
@@ -285,16 +302,25 @@ def row(target: str, change: Callable[[Any], Any]) -> Inject:
     """Change what every row of the table with this target makes."""
 
     def inject(patch: Patch) -> None:
-        patch.setattr(
-            route,
-            "ROWS",
-            tuple(
-                replace(r, apply=lambda value, task, r=r: change(r.apply(value, task))) if r.target == target else r
-                for r in route.ROWS
-            ),
+        changed = tuple(
+            replace(r, apply=lambda value, task, r=r: change(r.apply(value, task))) if r.target == target else r
+            for r in route.ROWS
         )
+        patch.setitem(route.TABLES, "exact", changed)
+        # the routes that are remembered hold the rows as they were
+        patch.setattr(route, "_path", route._path.__wrapped__)
 
     return inject
+
+
+def at_length(inject: Inject) -> Inject:
+    """Inject where the claims about small plants take the general way too."""
+
+    def both(patch: Patch) -> None:
+        patch.setattr(small, "LARGEST", 0)
+        inject(patch)
+
+    return both
 
 
 def wrapped(place: Any, name: str, change: Callable[..., Any]) -> Inject:

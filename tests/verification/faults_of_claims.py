@@ -13,6 +13,7 @@ from faults import (
     FIT,
     ZPK,
     Fault,
+    at_length,
     after,
     axis_pole,
     both_units,
@@ -27,6 +28,7 @@ from faults import (
     first_channel,
     fit_with,
     fitted,
+    halved,
     last_states,
     measured,
     method,
@@ -40,6 +42,7 @@ from faults import (
     reduced,
     reduced_with,
     scaled_time,
+    small_proof_of_less,
     state_model,
     tenfold,
     twice,
@@ -50,7 +53,7 @@ from realize.kernels.exact import polynomials, roots
 from realize.models import DeadTime, FrequencyResponse, TimeBase
 from realize.reduction import balanced_truncation
 from realize.reduction.prepare import Prepared
-from realize.verification import Pair, bands, conversion, difference, stability
+from realize.verification import Pair, bands, conversion, difference, small, stability
 from realize.verification.proof import Proof
 
 POINT = "point check"
@@ -245,7 +248,7 @@ VERIFICATION = [
         "the proof says identical",
         "verification.Proof.identical",
         differing,
-        method(Proof, "identical", property(lambda self: True)),
+        at_length(method(Proof, "identical", property(lambda self: True))),
         EXACT,
     ),
     Fault("point check left out, D dropped", "verification.views", on(state_model, ZPK), no_point_check, EXACT),
@@ -267,8 +270,26 @@ VERIFICATION = [
         "M with the wrong sign",
         "verification.Proof.difference",
         on(plant, ZPK),
-        method(Proof, "difference", property(lambda s: [b * s.d1 + a * s.d2 for a, b in zip(s.n1, s.n2, strict=True)])),
+        at_length(
+            method(
+                Proof, "difference", property(lambda s: [b * s.d1 + a * s.d2 for a, b in zip(s.n1, s.n2, strict=True)])
+            )
+        ),
         claim("response-error"),
+    ),
+    Fault(
+        "error of a small plant halved",
+        "verification.small._Squares",
+        differing,
+        wrapped_method(small._Squares, "__init__", halved),
+        EXACT,
+    ),
+    Fault(
+        "everything about small plants is positive",
+        "verification.small.positive_whole",
+        small_proof_of_less,
+        method(small, "positive_whole", lambda *a: True),
+        "consistency",
     ),
     Fault(
         "only the first channel summed",
@@ -337,7 +358,7 @@ VERIFICATION = [
         "every limit is kept",
         "schema.judge",
         twice,
-        after(conversion, "judge", lambda c: msgspec.structs.replace(c, holds=True)),
+        at_length(after(conversion, "judge", lambda c: msgspec.structs.replace(c, holds=True))),
         "worked example",
     ),
     Fault(
