@@ -278,7 +278,10 @@ def _graded(rows: list[list[float]], B: list[float], C: list[float], sizes: list
     scale = [power for power, size in zip(powers, sizes, strict=True) for _ in range(size)]
     try:
         made = (
-            [[_times(x, 1.0, e - own) for x, e in zip(row, scale)] for row, own in zip(rows, scale, strict=True)],
+            [
+                [_times(x, 1.0, e - own) for x, e in zip(row, scale, strict=False)]
+                for row, own in zip(rows, scale, strict=True)
+            ],
             [_times(x, 1.0, -own) for x, own in zip(B, scale, strict=True)],
             [_times(x, 1.0, own) for x, own in zip(C, scale, strict=True)],
         )

@@ -11,7 +11,6 @@ import numpy as np
 from realize.models.base import Model, Signal
 from realize.schema import ModelMark
 
-
 _ZEROS = {kind: np.zeros((), dtype=kind) for kind in ("<f8", "<c16", "<i8")}
 
 

@@ -198,7 +198,7 @@ def _whole(n: fmpq_poly, d: fmpq_poly, unit: int) -> tuple[fmpz_poly, fmpz_poly]
     parts = []
     for p, scale in ((n, d.denom()), (d, n.denom())):
         shifts = ((unit * k if unit >= 0 else -unit * (degree - k)) for k in range(degree + 1))
-        parts.append(fmpz_poly([(c * scale) << shift for c, shift in zip(p.numer().coeffs(), shifts)]))
+        parts.append(fmpz_poly([(c * scale) << shift for c, shift in zip(p.numer().coeffs(), shifts, strict=False)]))
     return parts[0], parts[1]
 
 
