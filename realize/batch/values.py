@@ -46,6 +46,8 @@ def value_of(takes: str, value: Any, choices: tuple[str, ...] = ()) -> Any:
         value = ",".join(str(entry) for entry in value)
     if takes == "band" and isinstance(value, list) and len(value) == 2:
         value = ",".join(str(entry) for entry in value)
+    if takes in ("roots", "matrix") and isinstance(value, list):
+        return _numbers(takes, value)
     if isinstance(value, bool) or not isinstance(value, (str, int, float)):
         raise ValueError(f"{value!r} is neither a text nor a number")
     if takes in ("text", "path") and not isinstance(value, str):
@@ -59,6 +61,23 @@ def value_of(takes: str, value: Any, choices: tuple[str, ...] = ()) -> Any:
     if parse is None:
         raise ValueError("this option is for the command line alone")
     return parse(repr(value) if isinstance(value, float) else str(value))
+
+
+def _numbers(takes: str, value: list[Any]) -> Any:
+    """Return roots, numbers or [re, im], or the rows of a matrix."""
+
+    def plain(entry: Any) -> bool:
+        return isinstance(entry, (int, float)) and not isinstance(entry, bool) and math.isfinite(entry)
+
+    if takes == "roots":
+        pairs = [[entry, 0] if plain(entry) else entry for entry in value]
+        if not all(isinstance(pair, list) and len(pair) == 2 and all(map(plain, pair)) for pair in pairs):
+            raise ValueError(f"{value!r} is no list of numbers or pairs [real, imaginary]")
+        return [[float(part) for part in pair] for pair in pairs]
+    rows = [value] if all(map(plain, value)) else value
+    if not all(isinstance(row, list) and row and all(map(plain, row)) for row in rows) or len(set(map(len, rows))) != 1:
+        raise ValueError(f"{value!r} is no list of rows of numbers, all of one length")
+    return [[float(entry) for entry in row] for row in rows]
 
 
 def _limits(value: Any) -> dict[str, float]:

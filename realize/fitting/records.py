@@ -169,6 +169,19 @@ class Factored:
     gain: Array
 
 
+@dataclass(frozen=True)
+class DeadTimeRow:
+    """One estimated dead time and its standard deviation (None where it is a whole number of periods), s.
+
+    ``output`` and ``input``: the channels that it acts on, None for all.
+    """
+
+    seconds: float
+    deviation: float | None
+    output: int | None = None
+    input: int | None = None
+
+
 @dataclass(frozen=True, eq=False)
 class Fit:
     """A rational model of a measured response: sum residues[j] / (s - poles[j])^powers[j] + direct, sampled: in z.
@@ -208,6 +221,10 @@ class Fit:
     direct_deviation : [outputs][inputs] float
     gain, gain_deviation : [outputs][inputs] float
         Steady-state gain of the model (at frequency 0, z = 1).
+    dead_time : [outputs][inputs] float or None
+        Estimated with the fit, s; the poles, residues and factors are those of the rest.
+    dead_times : tuple of DeadTimeRow
+        The estimates that it is made of.
     """
 
     poles: ComplexArray
@@ -232,3 +249,5 @@ class Fit:
     direct_deviation: Array = field(default_factory=_nothing)
     gain: Array = field(default_factory=_nothing)
     gain_deviation: Array = field(default_factory=_nothing)
+    dead_time: Array | None = None
+    dead_times: tuple[DeadTimeRow, ...] = ()

@@ -34,6 +34,10 @@ class Structure:
         Response at frequency 0, dead time aside.
     stable : bool
         False: free poles may be on the right; sampled: outside of the unit circle.
+    symmetric : bool
+        Reciprocal: the response is a symmetric matrix.
+    dead_time : str
+        Dead times to estimate, a name of ``realize.schema.ESTIMATED_DEAD_TIMES``; empty: none.
     """
 
     relative_degree: int = 0
@@ -42,17 +46,14 @@ class Structure:
     fixed_zeros: tuple[complex, ...] = ()
     steady_state_gain: Array | None = None
     stable: bool = True
+    symmetric: bool = False
+    dead_time: str = ""
 
     @property
     def plain(self) -> bool:
         """True where nothing is asked but a relative degree of 0 or 1, which needs no structured basis."""
         listed = self.integrators or self.fixed_poles or self.fixed_zeros
         return self.relative_degree < 2 and not listed and self.steady_state_gain is None and self.stable
-
-    @property
-    def poles(self) -> tuple[complex, ...]:
-        """Fixed poles, integrators aside."""
-        return self.fixed_poles
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,6 +99,10 @@ def check(structure: Structure, period: float | None) -> None:
             raise UsageError("a steady-state gain with an integrator: the gain at frequency 0 is infinite; drop one")
         if origin in map(complex, structure.fixed_zeros) and np.any(structure.steady_state_gain):
             raise UsageError("a steady-state gain other than 0 with a fixed zero at frequency 0; drop one")
+        if structure.symmetric and not np.array_equal(structure.steady_state_gain, structure.steady_state_gain.T):
+            raise UsageError("a symmetric response with a steady-state gain that is not symmetric")
+    if structure.symmetric and structure.dead_time not in ("", "auto"):
+        raise UsageError("a symmetric response has one dead time for all channels: estimate it by auto")
     if structure.stable:
         for pole in structure.fixed_poles:
             if pole.real > 0 if period is None else abs(pole) > 1:

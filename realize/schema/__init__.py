@@ -25,6 +25,7 @@ from realize.schema.records import (
 from realize.schema.verbs import (
     ARITHMETICS,
     COMMON_OPTIONS,
+    ESTIMATED_DEAD_TIMES,
     EXIT_STATUSES,
     FIT_METHODS,
     FORMS,
@@ -45,6 +46,7 @@ __all__ = [
     "COMMON_FIELDS",
     "COMMON_OPTIONS",
     "DATA_KINDS",
+    "ESTIMATED_DEAD_TIMES",
     "EXIT_STATUSES",
     "FIT_METHODS",
     "FORMAT_VERSION",

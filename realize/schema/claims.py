@@ -85,6 +85,34 @@ CLAIMS: dict[str, ClaimDefinition] = {
             "absolute",
             "L-infinity norm of the difference with the stated input and output weights, or the weights of a loop",
         ),
+        ClaimDefinition(
+            "relative-degree",
+            "1",
+            "by how much the smallest relative degree of a channel falls short of the one asked; 0 = kept",
+            {"fit": 0.0},
+        ),
+        ClaimDefinition(
+            "fixed-poles",
+            "relative",
+            "largest distance of a fixed pole or integrator from the poles of the result, multiplicities counted; an "
+            "integrator is exact or missing",
+            {"fit": 1e-12},
+        ),
+        ClaimDefinition(
+            "fixed-zeros",
+            "relative",
+            "largest distance of a fixed zero from the zeros of any channel, multiplicities counted",
+            {"fit": 1e-12},
+        ),
+        ClaimDefinition(
+            "steady-state-gain",
+            "relative",
+            "largest difference of the gain at frequency 0 from the one asked",
+            {"fit": 1e-12},
+        ),
+        ClaimDefinition(
+            "symmetry", "relative", "peak error of the result against its own transpose; 0 = reciprocal", {"fit": 1e-12}
+        ),
         ClaimDefinition("steady-state-error", "relative", "difference at zero frequency relative to the source there"),
         ClaimDefinition(
             "weighted-misfit", "1", "root mean square of misfit / standard deviation; 1 = as large as the noise"

@@ -8,6 +8,7 @@ from collections.abc import Callable
 from typing import Any
 
 from realize.schema.claims import CLAIMS
+from realize.schema.verbs import ESTIMATED_DEAD_TIMES
 
 _UNITS = {
     "hz": 2 * math.pi,
@@ -114,6 +115,36 @@ def seconds(text: str) -> float:
     return value
 
 
+def delay(text: str) -> float | str:
+    """Return a time in seconds, or which dead times a fit estimates."""
+    return text if text in ESTIMATED_DEAD_TIMES else seconds(text)
+
+
+def root(text: str) -> list[float]:
+    """Return real and imaginary part of a number such as -2, -2+3j, 5i, 1e3-2e2j."""
+    plain = text.strip().replace(" ", "").replace("i", "j")
+    try:
+        value = complex(plain)
+    except ValueError:
+        raise ValueError(f"{text!r} is not a number; write -2, or -2+3j and -2-3j for a pair") from None
+    if not (math.isfinite(value.real) and math.isfinite(value.imag)):
+        raise ValueError(f"{text!r} is not a finite number")
+    return [value.real, value.imag]
+
+
+def roots(text: str) -> list[list[float]]:
+    """Return a list of complex numbers [re, im]."""
+    return [root(part) for part in text.split(",")]
+
+
+def matrix(text: str) -> list[list[float]]:
+    """Return rows of numbers: semicolons between rows, commas within; one number is one row."""
+    rows = [[number(entry) for entry in row.split(",")] for row in text.split(";")]
+    if len({len(row) for row in rows}) > 1:
+        raise ValueError(f"{text!r} has rows of different lengths")
+    return rows
+
+
 def columns(text: str) -> list[str]:
     """Return a list of column names."""
     names = [name.strip() for name in text.split(",")]
@@ -150,6 +181,9 @@ PARSERS: dict[str, Callable[[Any], Any]] = {
     "frequencies": frequencies,
     "order": order,
     "time": seconds,
+    "delay": delay,
+    "roots": roots,
+    "matrix": matrix,
     "columns": columns,
     "weights": weights,
     "limit": limits,

@@ -33,6 +33,8 @@ FORMS = (
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "singular-perturbation", "modal", "frequency-weighted", "auto")
 FIT_METHODS = ("vector-fitting", "auto")
+#: Dead times that a fit can estimate: one for all channels, or one for each input, output or channel.
+ESTIMATED_DEAD_TIMES = ("auto", "auto-per-input", "auto-per-output", "auto-per-channel")
 SIDES = ("left", "right")
 ARITHMETICS = ("exact", "auto", "double")
 
@@ -43,7 +45,8 @@ class Option:
 
     ``takes`` is what the value is: ``flag``, ``choice``, ``text``, ``number``, ``integer``, ``error`` (0.01 or 1%),
     ``band`` (LOW,HIGH with unit suffixes), ``order`` (N, A..B or auto), ``time`` (seconds), ``columns`` (LIST),
-    ``frequencies`` (LIST with unit suffixes), ``weights`` (numbers above zero), ``path``,
+    ``frequencies`` (LIST with unit suffixes), ``weights`` (numbers above zero), ``roots`` (complex numbers),
+    ``matrix`` (rows with semicolons between them), ``delay`` (seconds, or one of `ESTIMATED_DEAD_TIMES`), ``path``,
     ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
     """
 
@@ -104,7 +107,40 @@ VERBS: dict[str, Verb] = {
                     "order", "order", "number of poles: N, a range A..B, or auto", default="auto", metavar="N|A..B|auto"
                 ),
                 Option("method", "choice", "method", FIT_METHODS, "auto"),
-                Option("dead-time", "time", "known dead time of every channel, seconds", metavar="X"),
+                Option(
+                    "dead-time",
+                    "delay",
+                    "known dead time of every channel, seconds; or estimated with the fit: "
+                    + ", ".join(ESTIMATED_DEAD_TIMES),
+                    metavar="X|auto",
+                ),
+                Option(
+                    "relative-degree",
+                    "integer",
+                    "every channel falls off at least like s^-N; 1: no feed-through",
+                    metavar="N",
+                ),
+                Option("integrators", "integer", "so many poles exactly at 0 (sampled: at z = 1)", metavar="N"),
+                Option(
+                    "fixed-poles",
+                    "roots",
+                    "poles that the model has exactly, rad/s (sampled: z): -1,-2+3j,-2-3j",
+                    metavar="LIST",
+                ),
+                Option(
+                    "fixed-zeros",
+                    "roots",
+                    "zeros that every channel has exactly, rad/s (sampled: z)",
+                    metavar="LIST",
+                ),
+                Option(
+                    "steady-state-gain",
+                    "matrix",
+                    "gain at frequency 0: a number, or rows of outputs such as '1,2;3,4'",
+                    metavar="X",
+                ),
+                Option("symmetric", "flag", "reciprocal: the response is a symmetric matrix, exactly"),
+                Option("allow-unstable", "flag", "poles may be unstable where the data ask for it"),
                 BAND,
                 COLUMNS,
             ),

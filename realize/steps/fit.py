@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import time
+from typing import Any
 
 import numpy as np
 
 from realize.conversions import Task, convert_model, plan_route
 from realize.errors import InputError, UsageError
-from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue
-from realize.schema import FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
+from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue, ZeroPoleGain
+from realize.schema import ESTIMATED_DEAD_TIMES, FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.fit_record import fit_details
 from realize.steps.receipts import finish
@@ -24,7 +25,14 @@ def fit(
     to: str = "state-space",
     order: int | tuple[int, int] | str = "auto",
     method: str = "auto",
-    dead_time: float | None = None,
+    dead_time: float | str | None = None,
+    relative_degree: int | None = None,
+    integrators: int | None = None,
+    fixed_poles: Any = None,
+    fixed_zeros: Any = None,
+    steady_state_gain: Any = None,
+    symmetric: bool = False,
+    allow_unstable: bool = False,
     band: tuple[float, float] | None = None,
     limits: dict[str, float] | None = None,
     second_opinion: bool | None = False,
@@ -40,8 +48,21 @@ def fit(
         Number of poles.
     method : str
         "vector-fitting" or "auto".
-    dead_time : float, optional
-        Known dead time of every channel, s; it is taken out of the data and put into the model.
+    dead_time : float or str, optional
+        Known dead time of every channel, s; it is taken out of the data and put into the model. "auto" estimates one
+        with the fit; "auto-per-input", "auto-per-output", "auto-per-channel" estimate several.
+    relative_degree : int, optional
+        Every channel falls off at least like s^-N; 1 stands for no feed-through.
+    integrators : int, optional
+        So many poles exactly at 0, sampled at z = 1; the order counts them.
+    fixed_poles, fixed_zeros : list of complex or [re, im], optional
+        Poles of the model, and zeros of every channel, rad/s (sampled: z); the order counts the poles.
+    steady_state_gain : float or [outputs][inputs], optional
+        Gain at frequency 0.
+    symmetric : bool
+        Reciprocal: the response is a symmetric matrix.
+    allow_unstable : bool
+        Poles may be unstable where the data ask for it.
     band : (low, high), optional
         Use only these frequencies, rad/s.
     limits : dict, optional
@@ -68,6 +89,19 @@ def fit(
         raise UsageError(f"no method {method!r}; there are: {', '.join(FIT_METHODS)}")
     given = limits or {}
     keep = _lines(source, band)
+    from realize.steps.constraints import constraint_claims, structure_of
+
+    structure = structure_of(
+        source,
+        relative_degree=relative_degree,
+        integrators=integrators,
+        fixed_poles=fixed_poles,
+        fixed_zeros=fixed_zeros,
+        steady_state_gain=steady_state_gain,
+        symmetric=symmetric,
+        allow_unstable=allow_unstable,
+        dead_time=dead_time,
+    )
     dead = _dead_time(source, dead_time)
 
     from realize.fitting import fit_response
@@ -84,10 +118,12 @@ def fit(
         order=order,
         method=method,
         period=source.time.seconds if source.time.sampled else None,
+        structure=structure,
     )
-    common = source.common() | {"dead_time": dead}
-    residue_model = PoleResidue(poles=found.poles, residues=found.residues, direct=found.direct, **common)
-    task = Task(residue_model, to)
+    if found.dead_time is not None:
+        dead = _estimated(found.dead_time)
+    fitted = _model(found, source.common() | {"dead_time": dead})
+    task = Task(fitted, to)
     route = plan_route(task)
     result = convert_model(task, route)
 
@@ -110,6 +146,7 @@ def fit(
         )
     claims += [weighted] if weighted is not None else []
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
+    claims += constraint_claims(structure, result, given)
     cautions = list(found.cautions)
     hertz = w / (2 * np.pi)
     cautions.append(
@@ -120,7 +157,7 @@ def fit(
         return finish(
             "fit",
             found.method,
-            ["pole-residue", *(row.target for row in route)],
+            [fitted.kind, *(row.target for row in route)],
             source,
             result,
             claims,
@@ -148,11 +185,33 @@ def _lines(source: FrequencyResponse, band: tuple[float, float] | None) -> np.nd
     return keep
 
 
-def _dead_time(source: FrequencyResponse, seconds: float | None) -> DeadTime | None:
-    """Return the dead time of the model: what the data file says, or the same for all channels."""
+def _model(found: Any, common: dict[str, Any]) -> Model:
+    """Return the fit as partial fractions, or as zeros, poles and gain where the structure needs that."""
+    if found.factors is None:
+        return PoleResidue(
+            poles=found.poles, residues=found.residues, powers=found.powers, direct=found.direct, **common
+        )
+    p, m = found.factors.gain.shape
+    zeros = [[found.factors.zeros[i * m + j] for j in range(m)] for i in range(p)]
+    none = np.zeros(0, dtype=complex)
+    poles = [[found.poles if found.factors.gain[i, j] else none for j in range(m)] for i in range(p)]
+    return ZeroPoleGain(zeros=zeros, poles=poles, gain=found.factors.gain, **common)
+
+
+def _estimated(total: np.ndarray) -> DeadTime:
+    p, m = total.shape
+    return DeadTime((0.0,) * m, (0.0,) * p, tuple(tuple(map(float, row)) for row in total))
+
+
+def _dead_time(source: FrequencyResponse, seconds: float | str | None) -> DeadTime | None:
+    """Return the dead time that is known: what the data file says, or the same for all channels."""
     if seconds is None:
         return source.dead_time
     if source.dead_time is not None:
         raise UsageError("the data already state a dead time; leave --dead-time out")
+    if seconds in ESTIMATED_DEAD_TIMES:
+        return None
+    if isinstance(seconds, str):
+        raise UsageError(f"no dead time {seconds!r}; write seconds, or one of {', '.join(ESTIMATED_DEAD_TIMES)}")
     p, m = source.shape
     return DeadTime((0.0,) * m, (0.0,) * p, tuple((float(seconds),) * m for _ in range(p)))

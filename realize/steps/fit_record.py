@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from typing import Any
 
 import numpy as np
@@ -39,7 +40,7 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
             {"order": c.order, "rms": c.rms, "weighted": c.weighted, "criterion": c.criterion, "kept": c.kept}
             for c in found.candidates
         ],
-        "poles": [[pole.real, pole.imag, 1] for pole in found.poles.tolist()],
+        "poles": [[pole.real, pole.imag, count] for pole, count in Counter(found.poles.tolist()).items()],
         "modes": [
             {
                 "frequency": row.frequency,
@@ -72,6 +73,10 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
         ],
         "gain": {"value": _listed(found.gain), "deviation": _listed(found.gain_deviation)},
         "band": _band(found, w),
+        "dead_times": [
+            {"seconds": row.seconds, "deviation": row.deviation, "output": row.output, "input": row.input}
+            for row in found.dead_times
+        ],
         "period": source.time.seconds if source.time.sampled else None,
     }
 
