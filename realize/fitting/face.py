@@ -2,20 +2,20 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from realize.errors import InputError, Refused, UsageError
-from realize.fitting import noise as noises
+from realize.errors import InputError, UsageError
 from realize.fitting.order import HIGHEST_ORDER
+from realize.fitting.prepare import Prepared, prepared
 from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate, Fit
-from realize.fitting.registry import choose_method
+from realize.fitting.registry import Outcome, choose_method
 from realize.fitting.result import finish
-from realize.fitting.sampled import warped
-from realize.fitting.structure import Structure, check, inside
+from realize.fitting.structure import Structure, check
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -86,7 +86,7 @@ def fit_response(
     dimension of a model", Annals of Statistics 6, 1978.
     """
     w, H = _checked(frequency, response, period)
-    lines, p, m = H.shape
+    lines = w.size
     sigma = _like(deviation, "deviation", H)
     gamma = _like(coherence, "coherence", H)
     if not (direct is True or direct is False or direct == "auto"):
@@ -96,65 +96,51 @@ def fit_response(
     check(kept, period)
     if kept.relative_degree:
         direct = False
-    x, used = (w, np.ones(lines, bool)) if period is None else warped(w, period)
-    cautions: list[str] = []
-    if not np.all(used):
-        cautions.append("the line at half the sampling rate (z = -1) is left out of the fit")
-    if not np.any(used):
-        raise InputError("only a line at half the sampling rate", "lines below it", field="frequency")
-    on_pole = _lines_at(fixed_poles_of(kept, period), w, period) & used
-    if np.any(on_pole):
-        cautions.append(f"{int(np.sum(on_pole))} line(s) at a fixed pole are left out of the fit")
-        used &= ~on_pole
-    if not np.any(used & (x > 0)):
-        raise InputError(
-            "no line above frequency 0 that could be used", "lines away from fixed poles", field="frequency"
-        )
-    shift = _middle_exponent(x[used])
-    points = 1j * np.ldexp(x[used], -shift)
-    flat = H.reshape(lines, p * m)
-    lift = _top_exponents(flat)
-    values = _scaled(flat, -lift)[used]
-    vanish = np.inf if period is None else float(np.ldexp(1.0, -shift))
+    if kept.symmetric:
+        from realize.fitting.symmetric import fit_symmetric
 
-    weights, basis = _weights(points.imag, values, sigma, gamma, lift, used)
-    if sigma is not None and basis != "given":
-        cautions.append("a channel has no deviation above zero: the deviations given are not used")
-    within = None if kept.plain else inside(kept, period, shift, lift)
-    problem = Problem(
-        points, values, weights, basis == "given", basis == "estimated", direct is not False, vanish, within
-    )
+        return fit_symmetric(w, H, sigma, gamma, order=order, method=method, period=period, direct=direct, kept=kept)
+
+    def prepare(values: ComplexArray) -> Prepared:
+        return prepared(w, values, sigma, gamma, direct is not False, kept, period)
+
+    def search(data: Prepared, problem: Problem) -> tuple[str, Outcome]:
+        return _searched(problem, method, wanted, direct, lines, order == "auto")
+
+    if kept.dead_time:
+        from realize.fitting.dead_time import fit_with_dead_time
+
+        return fit_with_dead_time(w, H, kept.dead_time, period, prepare, search, wanted)
+    data = prepare(H)
+    name, outcome = search(data, data.problem)
+    return finish(w, H, data, outcome, name, period)
+
+
+def _searched(
+    problem: Problem,
+    method: str,
+    wanted: tuple[int, int | None],
+    direct: bool | str,
+    lines: int,
+    automatic: bool,
+) -> tuple[str, Outcome]:
+    """Return the method's name and what it found; a real constant at all lines needs no method."""
     chosen = choose_method(method, problem)
-    exact = _exactly_constant(values)
-    if exact and within is None and (direct is not False or not np.any(values)):
-        if wanted[0] > 0:
-            cautions.append("the response is one real constant at all lines: order 0, whatever order was asked")
+    values = problem.values
+    constant = bool(np.all(values == values[:1]) and not np.any(values.imag))
+    if constant and problem.structure is None and (direct is not False or not np.any(values)):
+        remark = "the response is one real constant at all lines: order 0, whatever order was asked"
         trivial = (Candidate(0, 0.0, 0.0, 0.0, True),)
-        return finish(
-            w, H, problem, np.zeros(0, complex), trivial, cautions, chosen.name, basis, period, shift, lift, used
-        )
+        none = np.zeros(0, complex)
+        return chosen.name, Outcome(problem, none, trivial, (remark,) if wanted[0] > 0 else ())
     lowest, highest = _within_reach(problem, wanted, lines)
     assert chosen.fit is not None
     outcome = chosen.fit(problem, lowest, highest, direct == "auto")
-    cautions.extend(outcome.cautions)
-    if order == "auto" and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
-        cautions.append(
-            f"the order stopped at the highest one tried ({highest + problem.given}), not because more brought nothing"
-        )
-    return finish(
-        w,
-        H,
-        outcome.problem,
-        outcome.poles,
-        outcome.candidates,
-        cautions,
-        chosen.name,
-        basis,
-        period,
-        shift,
-        lift,
-        used,
-    )
+    if automatic and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
+        tried = highest + problem.given
+        remark = f"the order stopped at the highest one tried ({tried}), not because more brought nothing"
+        outcome = replace(outcome, cautions=(*outcome.cautions, remark))
+    return chosen.name, outcome
 
 
 def _checked(frequency: ArrayLike, response: ArrayLike, period: float | None) -> tuple[Array, ComplexArray]:
@@ -230,17 +216,6 @@ def order_range(order: Any) -> tuple[int, int | None]:
     return low, high
 
 
-def fixed_poles_of(structure: Structure, period: float | None) -> ComplexArray:
-    """Return all fixed poles, integrators included."""
-    origin = 0j if period is None else 1 + 0j
-    return np.array([*structure.fixed_poles, *[origin] * structure.integrators], dtype=complex)
-
-
-def _lines_at(poles: ComplexArray, w: Array, period: float | None) -> NDArray[np.bool_]:
-    points = 1j * w if period is None else np.exp(1j * w * period)
-    return np.any(points[:, None] == poles[None, :], axis=1)
-
-
 def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) -> tuple[int, int]:
     """Return the lowest and highest number of free poles for a range of orders."""
     largest = problem.largest_order
@@ -270,54 +245,3 @@ def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) 
         while high > 0 and problem.unknowns(high) * NUMBERS_PER_UNKNOWN > problem.numbers:
             high -= 1
     return low, min(high, largest)
-
-
-def _middle_exponent(x: Array) -> int:
-    positive = x[x > 0]
-    if positive.size == 0:
-        return 0
-    return round((np.log2(positive[0]) + np.log2(positive[-1])) / 2)
-
-
-def _top_exponents(flat: ComplexArray) -> NDArray[np.int64]:
-    size = np.max(np.maximum(np.abs(flat.real), np.abs(flat.imag)), axis=0)
-    return np.where(size > 0, np.frexp(size)[1], 0).astype(np.int64)
-
-
-def _scaled(flat: ComplexArray, exponents: NDArray[np.int64]) -> ComplexArray:
-    result = np.empty(flat.shape, dtype=complex)
-    with np.errstate(under="ignore"):
-        result.real = np.ldexp(flat.real, exponents)
-        result.imag = np.ldexp(flat.imag, exponents)
-    return result
-
-
-def _exactly_constant(values: ComplexArray) -> bool:
-    return bool(np.all(values == values[:1]) and not np.any(values.imag))
-
-
-def _weights(
-    x: Array,
-    values: ComplexArray,
-    sigma: Array | None,
-    gamma: Array | None,
-    lift: NDArray[np.int64],
-    used: NDArray[np.bool_],
-) -> tuple[Array, str]:
-    """Return weights of the scaled problem and how they were got."""
-    if sigma is not None:
-        with np.errstate(under="ignore", over="ignore"):
-            given = noises.floored(np.ldexp(sigma[used], -lift), values)
-        if given is not None and np.all(np.isfinite(given)):
-            return 1 / given, "given"
-    if gamma is not None:
-        shape = noises.from_coherence(values, gamma[used])
-        basis = "coherence"
-    else:
-        shape = noises.noise_shape(x, values, noises.smoothed_size(values, 2))
-        basis = "estimated"
-    dead = ~np.any(values != 0, axis=0)
-    shape[:, dead] = 1.0
-    if not np.all(np.isfinite(shape)) or np.any(shape <= 0):
-        raise Refused("no deviation can be estimated from these data; give a deviation for each line")
-    return 1 / shape, basis

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from realize.fitting.structure import Inside
 from realize.kernels.additions import best_additions
+from realize.kernels.structured_basis import Known
 from realize.kernels.structured_fit import Task, structured_additions, structured_polish, structured_relocation
 from realize.kernels.structured_solution import Solution, structured_solution
 from realize.kernels.variable_projection import polished
@@ -114,6 +115,15 @@ class Problem:
         """Lowest positive and highest frequency."""
         positive = self.x[self.x > 0]
         return float(positive[0]), float(positive[-1])
+
+    def structured(self) -> Problem:
+        """Return the same problem with its direct term, or the lack of one, as a structure."""
+        if self.structure is not None:
+            return self
+        nothing = np.zeros(0, complex)
+        zeros = np.array([complex(self.vanish)]) if np.isfinite(self.vanish) and not self.direct else nothing
+        excess = int(not self.direct and not np.isfinite(self.vanish))
+        return replace(self, structure=Inside(Known(nothing, zeros, excess)))
 
     def task(self) -> Task:
         """The problem as the kernels of structured fits take it."""

@@ -10,8 +10,10 @@ from numpy.typing import NDArray
 from realize.errors import Refused
 from realize.fitting.modes import Units, mode_table
 from realize.fitting.noise import noise_factor
+from realize.fitting.prepare import Prepared
 from realize.fitting.problem import Problem
-from realize.fitting.records import Candidate, ChannelRow, Factored, Fit, Noise, Worst
+from realize.fitting.records import ChannelRow, Factored, Fit, Noise, Worst
+from realize.fitting.registry import Outcome
 from realize.fitting.remarks import remarks
 from realize.fitting.restored import factors_in_units, in_z, values_of
 from realize.fitting.solution import Estimate, solved, unknowns_of
@@ -21,20 +23,7 @@ Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 
-def finish(
-    w: Array,
-    H: ComplexArray,
-    problem: Problem,
-    poles: ComplexArray,
-    candidates: tuple[Candidate, ...],
-    cautions: list[str],
-    method: str,
-    basis: str,
-    period: float | None,
-    shift: int,
-    lift: NDArray[np.int64],
-    used: NDArray[np.bool_],
-) -> Fit:
+def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: str, period: float | None) -> Fit:
     """Return the record of a fit: residues for the scaled poles, units put back, misfit of the values handed over.
 
     Parameters
@@ -42,15 +31,16 @@ def finish(
     w : [k] float
         rad/s.
     H : [k][outputs][inputs] complex
-    problem : Problem
-        As solved.
-    poles : [n] complex
-        Scaled, in the s plane.
-    shift, lift : int, [channels] int
-        Powers of two taken off the frequencies and the channels.
-    used : [k] bool
-        Lines that took part.
+    data : Prepared
+        What was taken off the data.
+    outcome : Outcome
+        The problem as solved, and its scaled poles in the s plane.
+    method : str
+    period : float or None
     """
+    problem, poles, candidates = outcome.problem, outcome.poles, outcome.candidates
+    basis, shift, lift, used = data.basis, data.shift, data.lift, data.used
+    cautions = [*data.cautions, *outcome.cautions]
     lines, p, m = H.shape
     estimate = solved(problem, poles, lift.reshape(p, m), 1.0 if problem.known else None)
     solution = estimate.solution

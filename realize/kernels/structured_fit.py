@@ -18,6 +18,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.kernels.additions import addition_candidates, gains_of
+from realize.kernels.separable import Projected, joined, minimised, triangular
 from realize.kernels.structured_basis import Free, Known, StructuredBasis
 from realize.kernels.variable_projection import bounds, poles_of, sections_of
 from realize.kernels.vector_fitting import ordered_poles, relocated, stacked, weighted_cost
@@ -130,13 +131,15 @@ class StructuredProjection:
         """Return the fitted values without dead time [k][channels]."""
         return self.basis.columns() @ np.array(self.coefficients).T
 
-    def normal_equations(self) -> tuple[Array, Array]:
-        """Return J^T J and J^T r by ln w, ln |a|, ln |single| and the dead times, in the approximation of Kaufman."""
+    def projected(self) -> Projected:
+        """Return residual and Jacobian by ln w, ln |a|, ln |single| and the dead times, Kaufman's approximation."""
         task = self.task
         free = self.basis.free
         size = 2 * free.w.size + free.single.size
         count = size + task.groups.shape[1]
-        square, right = np.zeros((count, count)), np.zeros(count)
+        if count == 0:
+            return Projected(self.cost, np.zeros((0, 0)), np.zeros(0))
+        parts = []
         for c, (q, rest, coefficient) in enumerate(
             zip(self.orthonormal, self.residual, self.coefficients, strict=True)
         ):
@@ -146,9 +149,10 @@ class StructuredProjection:
             turned = weight[:, 0] * task.points * self.values[:, c]
             slope[:, size:] = stacked(turned[:, None]) * task.groups[c]
             slope -= q @ (q.T @ slope)
-            square += slope.T @ slope
-            right += slope.T @ rest
-        return square, right
+            factor = triangular(np.hstack([slope, rest[:, None]]))[:count]
+            parts.append(Projected(0.0, factor[:, :count], factor[:, count]))
+        both = joined(parts)
+        return Projected(self.cost, both.jacobian, both.residual)
 
 
 def null_space(row: Array, value: float) -> tuple[Array, Array]:
@@ -208,44 +212,15 @@ def structured_polish(
         value = signs * np.exp(u[: theta.size])
         return Free(value[:pairs], value[pairs : 2 * pairs], value[2 * pairs :])
 
-    def at(u: Array) -> StructuredProjection:
-        return StructuredProjection(task, sections(u), u[theta.size :])
+    def at(u: Array) -> Projected:
+        return StructuredProjection(task, sections(u), u[theta.size :]).projected()
 
-    here = at(unknowns)
+    total = weighted_cost(task.values, task.weights)
     moved = bool(np.any(unknowns != wanted))
-    if unknowns.size == 0:
-        return poles, delays, here.cost
-    first = here.cost
-    floor = (4 * np.finfo(float).eps) ** 2 * weighted_cost(task.values, task.weights)
-    damping, growth, small = 1e-3, 2.0, 0
-    square, right = here.normal_equations()
-    for _ in range(iterations):
-        size = np.sqrt(np.diagonal(square))
-        size = np.where(size > 0, size, 1.0)
-        scaled, target = square / np.outer(size, size), right / size
-        step = np.linalg.solve(scaled + damping * np.eye(size.size), -target)
-        predicted = float(-2 * step @ target - step @ scaled @ step)
-        step = step / size
-        step *= min(1.0, 1.0 / max(np.max(np.abs(step[: theta.size]), initial=0.0), 1e-300))
-        trial = np.clip(unknowns + step, lower, upper)
-        there = at(trial)
-        gain = here.cost - there.cost
-        if gain > 0:
-            small = small + 1 if gain <= tolerance * here.cost else 0
-            unknowns, here = trial, there
-            if here.cost <= floor or small >= 2:
-                break
-            square, right = here.normal_equations()
-            damping = max(damping * max(1 / 3, 1 - (2 * gain / max(predicted, gain * 1e-3) - 1) ** 3), 1e-12)
-            growth = 2.0
-        else:
-            if predicted <= 0.01 * tolerance * here.cost or damping > 1e12:
-                break
-            damping *= growth
-            growth *= 2
-    if here.cost >= first and not moved:
+    unknowns, cost, first = minimised(unknowns, lower, upper, at, total, iterations, tolerance)
+    if unknowns.size == 0 or (cost >= first and not moved):
         return poles, delays, first
-    return poles_at(sections(unknowns)), unknowns[theta.size :], here.cost
+    return poles_at(sections(unknowns)), unknowns[theta.size :], cost
 
 
 def structured_relocation(task: Task, poles: ComplexArray, iterations: int) -> tuple[ComplexArray, float]:
@@ -295,3 +270,16 @@ def structured_additions(task: Task, poles: ComplexArray) -> tuple[ComplexArray,
     best = int(np.argmax(gains[: w.size]))
     added = poles_of(w[best : best + 1], a[best : best + 1], np.zeros(0))
     return added, np.array([complex(-real[int(np.argmax(gains[w.size :]))])])
+
+
+def delay_covariance(task: Task, poles: ComplexArray, delays: Array) -> Array:
+    """Return the covariance [delays][delays] of the dead times of a fit, poles and coefficients free as well.
+
+    Weights are 1/deviation of the complex values, half of the variance in each real part: (J^T J)^-1 / 2.
+    """
+    jacobian = StructuredProjection(task, signed_sections(poles)[0], delays).projected().jacobian
+    size = np.linalg.norm(jacobian, axis=0)
+    size = np.where(size > 0, size, 1.0)
+    factor = np.linalg.pinv(jacobian / size, rcond=jacobian.shape[1] * float(np.finfo(float).eps)) / size[:, None]
+    last = factor[factor.shape[0] - delays.size :]
+    return np.asarray(last @ last.T / 2)
