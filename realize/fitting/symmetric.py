@@ -14,6 +14,8 @@ from realize.fitting.structure import Structure
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
+_NO_SHAPE, _NONE = np.zeros(0, complex), np.zeros(0)
+
 
 def fit_symmetric(
     w: Array,
@@ -96,8 +98,32 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
     factors = fit.factors
     if factors is not None:
         factors = Factored(tuple(factors.zeros[k] for k in place.ravel()), _frozen(factors.gain[:, 0][place]))
+
+    def square(values: NDArray[Any]) -> NDArray[Any]:
+        """Return [..][channels of the triangle][1] as [..][ports][ports]."""
+        return values if values.size == 0 else _frozen(values[..., 0][..., place])
+
+    channels = tuple(
+        replace(fit.channels[place[i, j]], output=i, input=j)
+        for i in range(place.shape[0])
+        for j in range(place.shape[1])
+        if fit.channels
+    )
+    # shapes and ranks are those of the list of channels, not of the matrix
+    table = tuple(
+        replace(row, rank=0, output_shape=_NO_SHAPE, output_shape_deviation=_NONE, input_shape=_NO_SHAPE)
+        for row in fit.pole_table
+    )
+    table = tuple(replace(row, input_shape_deviation=_NONE) for row in table)
     return replace(
         fit,
+        pole_table=table,
+        channels=channels,
+        response_deviation=square(fit.response_deviation),
+        residue_deviation=square(fit.residue_deviation),
+        direct_deviation=square(fit.direct_deviation),
+        gain=square(fit.gain),
+        gain_deviation=square(fit.gain_deviation),
         residues=_frozen(fit.residues[:, :, 0][:, place]),
         direct=_frozen(fit.direct[:, 0][place]),
         misfit=_frozen(misfit),
