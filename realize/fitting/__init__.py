@@ -1,6 +1,9 @@
 """Measured responses to models: one method a file, one record for all of them."""
 
+from realize.fitting import barycentric as _barycentric
 from realize.fitting import ho_kalman as _ho_kalman
+from realize.fitting import loewner as _loewner
+from realize.fitting import subspace as _subspace
 from realize.fitting import vector_fitting as _vector_fitting
 from realize.fitting.face import fit_response
 from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst

@@ -140,7 +140,7 @@ def _searched(
         tried = highest + problem.given
         remark = f"the order stopped at the highest one tried ({tried}), not because more brought nothing"
         outcome = replace(outcome, cautions=(*outcome.cautions, remark))
-    return chosen.name, outcome
+    return outcome.method or chosen.name, outcome
 
 
 def _checked(frequency: ArrayLike, response: ArrayLike, period: float | None) -> tuple[Array, ComplexArray]:

@@ -22,6 +22,8 @@ class Outcome:
     poles: NDArray[np.complex128]
     candidates: tuple[Candidate, ...]
     cautions: tuple[str, ...] = ()
+    #: Name of the method whose start was the best one, where several were tried.
+    method: str = ""
 
 
 @dataclass(frozen=True, eq=False)
@@ -74,9 +76,11 @@ def register(method: Method) -> Method:
 
 
 def choose_method(name: str, problem: Problem) -> Method:
-    """Return the method of that name; ``auto`` is vector fitting, the one method for every kind of response so far."""
+    """Return the method of that name; ``auto`` is ``realize.fitting.automatic``."""
     if name == "auto":
-        return METHODS["vector-fitting"]
+        from realize.fitting.automatic import AUTOMATIC
+
+        return AUTOMATIC
     method = _known(name)
     if method.fit is None:
         raise UsageError(

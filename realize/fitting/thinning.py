@@ -20,9 +20,14 @@ def thinned(problem: Problem) -> Problem:
     Half of the lines left are evenly spread in place; the others are whole stretches between those where linear
     interpolation misses most (resonances), judged by the sum over the stretch so that single noisy lines do not count.
     """
+    keep = max(SEARCH_SIZE // problem.channels, FEWEST)
+    return thinned_to(problem, keep) if problem.points.size > 1.5 * keep else problem
+
+
+def thinned_to(problem: Problem, keep: int) -> Problem:
+    """Return the problem with at most so many of its lines (or a stretch more), chosen as ``thinned`` says."""
     lines, channels = problem.values.shape
-    keep = max(SEARCH_SIZE // channels, FEWEST)
-    if lines <= 1.5 * keep:
+    if lines <= keep:
         return problem
     spread = np.unique(np.rint(np.linspace(0, lines - 1, keep // 2)).astype(int))
     missed = np.zeros(lines)

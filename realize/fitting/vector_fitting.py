@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -20,7 +22,15 @@ MOVED = 1.5
 LONGEST_LADDER = 40
 
 
+Searched = Callable[[Problem, int, int, dict[int, ComplexArray] | None], Search]
+
+
 def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outcome:
+    """Return the best fit that vector fitting and additions of poles lead to, see ``fit_by``."""
+    return fit_by(_searched, problem, lowest, highest, direct_auto)
+
+
+def fit_by(searched: Searched, problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outcome:
     """Return the best fit with an order between ``lowest`` and ``highest``.
 
     Estimated noise: the search runs with deviations estimated from the data (local interpolation), then, where the
@@ -28,18 +38,20 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
 
     Parameters
     ----------
+    searched : callable
+        (problem, lowest, highest, poles known by order or None) -> fits of the orders.
     problem : Problem
     lowest, highest : int
         Range of orders; equal for a fixed order.
     direct_auto : bool
         Try without direct term as well, and keep it only where the criterion is better with it.
     """
-    search = _searched(problem, lowest, highest, None)
+    search = searched(problem, lowest, highest, None)
     if problem.estimated and min(t.cost for t in search.best.values()) > problem.floor:
         again = _weights_from_misfit(problem, search.best[max(search.best)])
         if again is not None:
             known = {n: t.poles for n, t in search.best.items()}
-            search = _searched(problem.with_weights(again), lowest, highest, known)
+            search = searched(problem.with_weights(again), lowest, highest, known)
     solved = search.problem
     noise = search.noise_power()
     chosen = search.choose(lowest, noise)
@@ -80,8 +92,7 @@ def _searched(problem: Problem, lowest: int, highest: int, known: dict[int, Comp
     few = thinned(problem)
     search = Search(few, known)
     if lowest == highest and highest > LONGEST_LADDER:
-        fresh = [relocate(few, start(few, highest, s), 20) for s in ("logarithmic", "linear", "real")]
-        search.best[highest] = min(fresh, key=lambda t: t.cost)
+        search.best[highest] = poles_by_relocation(few, highest)
     else:
         search.grow(lowest, highest)
     if few is problem:
@@ -90,6 +101,12 @@ def _searched(problem: Problem, lowest: int, highest: int, known: dict[int, Comp
     for order, trial in search.best.items():
         full.best[order] = polish(problem, trial.poles, 4, 1e-3)
     return full
+
+
+def poles_by_relocation(problem: Problem, order: int) -> Trial:
+    """Return the best of vector fitting from three spreads of starting poles."""
+    fresh = [relocate(problem, start(problem, order, s), 20) for s in ("logarithmic", "linear", "real")]
+    return min(fresh, key=lambda t: t.cost)
 
 
 def _weights_from_misfit(problem: Problem, trial: Trial) -> NDArray[np.float64] | None:

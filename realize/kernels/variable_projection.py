@@ -24,8 +24,9 @@ IntArray = NDArray[np.int64]
 #: Logarithms of damping terms stay above minus this: a damping of 1e-13 in a band near 1 is none.
 FARTHEST = 30.0
 #: Sections stay this far (natural logarithm) from the band at most. A double integrator 1/s^2 stood in for by a pair at
-#: a fraction d of the lowest frequency is d^2 off, and its residues cancel to eps/d: 2^-18 makes both alike.
-BELOW, BELOW_SINGLE, ABOVE = 18 * np.log(2.0), 40 * np.log(2.0), 26 * np.log(2.0)
+#: a fraction d of the lowest frequency is d^2 off, and its residues cancel to eps/d: 2^-18 makes both alike. One real
+#: pole for 1/s is d off, and nothing cancels: 2^-60 is less than a rounding.
+BELOW, BELOW_SINGLE, ABOVE = 18 * np.log(2.0), 60 * np.log(2.0), 26 * np.log(2.0)
 
 
 def sections_of(poles: ComplexArray) -> tuple[Array, Array, Array]:

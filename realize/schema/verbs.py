@@ -32,7 +32,7 @@ FORMS = (
 )
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "singular-perturbation", "modal", "frequency-weighted", "auto")
-FIT_METHODS = ("vector-fitting", "auto")
+FIT_METHODS = ("vector-fitting", "barycentric", "loewner", "subspace", "auto")
 #: Dead times that a fit can estimate: one for all channels, or one for each input, output or channel.
 ESTIMATED_DEAD_TIMES = ("auto", "auto-per-input", "auto-per-output", "auto-per-channel")
 SIDES = ("left", "right")

@@ -47,7 +47,7 @@ def fit(
     order : int, (low, high) or "auto"
         Number of poles.
     method : str
-        "vector-fitting" or "auto".
+        A name of ``realize.fitting.METHODS``, or "auto".
     dead_time : float or str, optional
         Known dead time of every channel, s; it is taken out of the data and put into the model. "auto" estimates one
         with the fit; "auto-per-input", "auto-per-output", "auto-per-channel" estimate several.

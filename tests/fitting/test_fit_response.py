@@ -219,7 +219,7 @@ def test_the_record(invented: Callable, complex_noise: Callable) -> None:
     assert fit.worst.value == pytest.approx(np.max(relative))
     assert relative[fit.worst.line, fit.worst.output, fit.worst.input] == np.max(relative)
     assert [c.order for c in fit.candidates if c.kept] == [fit.order]
-    assert fit.method == "vector-fitting"
+    assert fit.method in METHODS
     assert not fit.poles.flags.writeable
     for row in fit.pole_table:
         pole = fit.poles[row.index]
@@ -313,7 +313,7 @@ def test_methods() -> None:
         assert name == method.name
         assert method.source
         assert method.says
-    assert choose_method("auto", None).name in METHODS  # type: ignore[arg-type]
+    assert choose_method("auto", None).name == "auto"  # type: ignore[arg-type]
 
 
 @pytest.mark.parametrize("case", ["step", "spike", "signs", "imaginary", "two lines", "near lines"])
