@@ -39,7 +39,7 @@ def proposer(problem: Problem, highest: int) -> Callable[[int], list[ComplexArra
 BARYCENTRIC = register(
     Method(
         name="barycentric",
-        says="poles of the AAA algorithm with conjugate symmetry, spurious ones removed, polished to maximum likelihood",
+        says="poles of the AAA algorithm with conjugate symmetry, cleaned up and polished to maximum likelihood",
         source="Nakatsukasa, Sete & Trefethen 2018; Lietaert, Meerbergen, Perez & Vandereycken 2022",
         fit=partial(search_with, proposer),
     )

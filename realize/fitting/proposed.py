@@ -24,7 +24,7 @@ Proposer = Callable[[Problem, int], Propose]
 Known = dict[int, ComplexArray]
 #: An order that lowers the cost of the smaller ones by less than this share is started from their poles as well.
 LITTLE = 0.02
-#: A misfit power within this factor of the noise is at the noise: what is above it is left to the information criterion.
+#: A misfit power within this factor of the noise is at the noise: the information criterion decides on the rest.
 AT_NOISE = 1.15
 #: Most exchanges of the least useful pole for the one that brings most.
 EXCHANGES = 6
@@ -70,12 +70,10 @@ class ProposedSearch(Search):
     def look(self, lowest: int, highest: int) -> bool:
         """Fit every few orders, then those around the first at the noise; return whether there is one."""
         coarse = sorted({lowest, highest, *range(lowest, highest, STRIDE)})
-        for order in coarse:
-            if at_noise(self.problem, self.proposed(order)):
-                break
-        else:
+        first = next((n for n in coarse if at_noise(self.problem, self.proposed(n))), None)
+        if first is None:
             return False
-        for order in range(max(lowest, order - STRIDE - BELOW), min(highest, order + ABOVE) + 1):
+        for order in range(max(lowest, first - STRIDE - BELOW), min(highest, first + ABOVE) + 1):
             if order not in self.best:
                 self.proposed(order)
             if self.reproduced(order):

@@ -60,9 +60,9 @@ class Barycentric:
 def cauchy(points: ComplexArray, support: Array) -> tuple[ComplexArray, ComplexArray]:
     """Return 1/(s - jx) and 1/(s + jx) for every point and support frequency; the second is 0 for x = 0."""
     with np.errstate(divide="ignore", invalid="ignore"):
-        near = 1 / (points[:, None] - 1j * support)
+        near: ComplexArray = np.asarray(1 / (points[:, None] - 1j * support), dtype=complex)
         far = np.where(support > 0, 1 / (points[:, None] + 1j * support), 0.0)
-    return near, far
+    return near, np.asarray(far, dtype=complex)
 
 
 def evaluated(function: Barycentric, points: ComplexArray) -> ComplexArray:
@@ -94,7 +94,7 @@ def approximations(x: Array, values: ComplexArray, weights: Array, most: int) ->
     """
     lines, channels = values.shape
     left = np.ones(lines, dtype=bool)
-    points = 1j * x
+    points = np.asarray(1j * x, dtype=complex)
     total = np.sum(weights, axis=0)
     mean = np.sum(weights * values.real, axis=0) / np.where(total > 0, total, 1.0)
     current = np.broadcast_to(mean.astype(complex), values.shape)
