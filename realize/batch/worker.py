@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import math
 import os
 import sys
 from dataclasses import asdict
@@ -40,18 +39,12 @@ def job_from_record(record: dict[str, Any]) -> Any:
 
 def as_line(record: Any) -> bytes:
     """Return a record as one line of JSON, null in place of what JSON does not have."""
+    from realize.schema import finite
+
     try:
         return json.dumps(record, allow_nan=False).encode("ascii") + b"\n"
     except ValueError:
-        return json.dumps(_finite(record), allow_nan=False).encode("ascii") + b"\n"
-
-
-def _finite(value: Any) -> Any:
-    if isinstance(value, float):
-        return value if math.isfinite(value) else None
-    if isinstance(value, dict):
-        return {name: _finite(entry) for name, entry in value.items()}
-    return [_finite(entry) for entry in value] if isinstance(value, (list, tuple)) else value
+        return json.dumps(finite(record), allow_nan=False).encode("ascii") + b"\n"
 
 
 def limit_memory(size: int | None) -> None:

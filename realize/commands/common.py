@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import math
 import os
 import sys
 import time
@@ -14,7 +13,7 @@ from typing import Any
 
 from realize.errors import InputError, UsageError
 from realize.models import Model
-from realize.schema import receipt_to_record
+from realize.schema import finite, receipt_to_record
 from realize.steps import Conversion
 
 
@@ -45,15 +44,6 @@ def load(path: str, columns: list[str] | None = None, *, several: bool = False) 
     from realize.files import read
 
     return read(path, columns=columns, columns_for_tables=several)
-
-
-def finite(value: Any) -> Any:
-    """Return plain data with null for numbers that JSON does not have."""
-    if isinstance(value, float):
-        return value if math.isfinite(value) else None
-    if isinstance(value, dict):
-        return {name: finite(entry) for name, entry in value.items()}
-    return [finite(entry) for entry in value] if isinstance(value, (list, tuple)) else value
 
 
 def write_log(context: Context, record: dict[str, Any]) -> None:

@@ -12,12 +12,12 @@ from typing import Any, BinaryIO
 
 from realize import steps
 from realize.batch.trial import small_plant
-from realize.commands.common import Context, finite, load, say, write_log
+from realize.commands.common import Context, load, say, write_log
 from realize.errors import InputError, RealizeError, Refused, UsageError
 from realize.files import json_text, replacing
 from realize.files.record import model_from_record, model_to_record
 from realize.files.sources import TEXT_LIMIT, open_source, too_large
-from realize.schema import EXIT_STATUSES, VERBS, options_of, receipt_to_record
+from realize.schema import EXIT_STATUSES, VERBS, finite, options_of, receipt_to_record
 from realize.steps import Conversion
 from realize.steps.second_opinion import one_worker
 
@@ -110,7 +110,8 @@ def _serve(
             over += failed
             if failed and context.strict:
                 made.require(strict=True)
-            receipt = receipt_to_record(made.receipt)
+            wanted = records is not None or context.log is not None
+            receipt = receipt_to_record(made.receipt) if wanted else {}
             text = model_to_record(made.model)
         except InputError as error:
             bad += 1

@@ -7,7 +7,8 @@ import sys
 import time
 from typing import Any
 
-from realize.commands.common import Context, finite, say, write_log
+from realize.commands.common import Context, say, write_log
+from realize.schema import finite
 
 
 def execute(

@@ -109,9 +109,12 @@ def parse(data: bytes) -> Any:
         raise InputError("lists or objects nested too deeply", "at most five levels of lists") from None
 
 
+_ENCODER = json.JSONEncoder(ensure_ascii=False, allow_nan=False)
+
+
 def one_line(value: Any) -> str:
     """Return a plain value as JSON on one line."""
-    return json.dumps(value, ensure_ascii=False, allow_nan=False)
+    return _ENCODER.encode(value)
 
 
 def write(record: dict[str, Any], matrices: Collection[str] = ()) -> str:

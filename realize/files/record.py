@@ -226,17 +226,8 @@ def common_to_record(model: Model) -> dict[str, Any]:
         if model.ports.reference is not None:
             record["ports"]["reference"] = list(model.ports.reference)
     if model.receipts:
-        record["receipts"] = [_finite(receipt_to_record(receipt)) for receipt in model.receipts]
+        record["receipts"] = [receipt_to_record(receipt) for receipt in model.receipts]
     return record
-
-
-def _finite(value: Any) -> Any:
-    """Return plain data with null for numbers that JSON does not have."""
-    if isinstance(value, float):
-        return value if math.isfinite(value) else None
-    if isinstance(value, dict):
-        return {name: _finite(entry) for name, entry in value.items()}
-    return [_finite(entry) for entry in value] if isinstance(value, (list, tuple)) else value
 
 
 def _named(given: tuple[Signal, ...]) -> bool:

@@ -165,8 +165,14 @@ def available_memory() -> int | None:
     return None
 
 
+#: Bytes that are not worth a look at what is free.
+LITTLE = 16 << 20
+
+
 def require_memory(size: int, what: str) -> None:
-    """Raise Refused when ``size`` bytes cannot be had."""
+    """Raise Refused when ``size`` bytes cannot be had; little is always there."""
+    if size < LITTLE:
+        return
     available = available_memory()
     if available is not None and size > available:
         raise Refused(

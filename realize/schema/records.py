@@ -147,8 +147,21 @@ class Receipt(msgspec.Struct, frozen=True, forbid_unknown_fields=True):
 
 
 def receipt_to_record(receipt: Receipt) -> dict[str, Any]:
-    """Return the receipt as plain dictionaries and lists, ready for JSON."""
-    return msgspec.to_builtins(receipt)
+    """Return the receipt as plain dictionaries and lists, ready for JSON: null for numbers that JSON does not have."""
+    try:
+        return msgspec.json.decode(msgspec.json.encode(receipt))  # type: ignore[no-any-return]
+    except (ValueError, OverflowError):
+        # halves of surrogate pairs, and integers of more than 64 bits
+        return finite(msgspec.to_builtins(receipt))  # type: ignore[no-any-return]
+
+
+def finite(value: Any) -> Any:
+    """Return plain data with null for numbers that JSON does not have."""
+    if isinstance(value, float):
+        return value if math.isfinite(value) else None
+    if isinstance(value, dict):
+        return {name: finite(entry) for name, entry in value.items()}
+    return [finite(entry) for entry in value] if isinstance(value, (list, tuple)) else value
 
 
 def receipt_from_record(record: Any) -> Receipt:

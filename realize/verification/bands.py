@@ -138,11 +138,15 @@ def thin_grid(view: View) -> NDArray[np.float64]:
 
 
 def _whole_band(view: View, margin: float, other: View | None) -> Band:
-    zeros, poles = NO_DYNAMICS, view.poles
-    for part in channel_zeros(view):
-        zeros = part if zeros is NO_DYNAMICS else zeros.merged(part)
+    poles = view.poles
     at_origin = 0 in poles.s.tolist()
-    band = dynamic_band(zeros, poles, view.period, not at_origin)
+    if view.model.shape == (1, 1):
+        band = dynamic_band(view.channel_roots[0][0][0], poles, view.period, not at_origin)
+    else:
+        zeros = NO_DYNAMICS
+        for part in channel_zeros(view):
+            zeros = part if zeros is NO_DYNAMICS else zeros.merged(part)
+        band = dynamic_band(zeros, poles, view.period, not at_origin)
     low, high = band.low, band.high
     if other is not None:
         extra = dynamic_band(NO_DYNAMICS, other.rough_poles, view.period, True)

@@ -20,6 +20,8 @@ MOST_SEEDS = 2000
 #: The thinner grid of what a proof checks afterwards, and distances beside a root in units of its damping.
 FEW_PER_DECADE = 8
 _BESIDE = (0.3, 1.0, 3.0)
+#: Powers of ten in steps of that grid.
+_STEPS = 10.0 ** (np.arange(100 * FEW_PER_DECADE) / FEW_PER_DECADE)
 #: Lists of roots up to this length are gone through one by one.
 FEW_ROOTS = 24
 
@@ -102,11 +104,13 @@ def seeds(band: Band, *lists: Dynamics) -> Array:
 
 def few_seeds(band: Band, *lists: Dynamics) -> Array:
     """Return a thinner grid than `seeds`, rising, with the ends of what is left out: for what a proof checks."""
-    start = math.log(band.low)
-    decades = (math.log(band.high) - start) / math.log(10)
-    count = max(int(FEW_PER_DECADE * decades), 12)
+    decades = math.log10(band.high) - math.log10(band.low)
     ends = [0.0, band.low, band.high, *(end for pair in band.left_out for end in pair)]
-    parts = [np.exp(start + np.arange(1, count - 1) * (decades * math.log(10) / (count - 1)))]
+    count = math.ceil(FEW_PER_DECADE * decades)
+    if count <= _STEPS.size:
+        parts = [band.low * _STEPS[1:count]]
+    else:
+        parts = [np.exp(np.linspace(math.log(band.low), math.log(band.high), count)[1:-1])]
     for roots in lists:
         if 0 < roots.s.size <= FEW_ROOTS:
             ends += _beside(roots)
