@@ -30,6 +30,7 @@ if TYPE_CHECKING:
         Signal,
         StateSpace,
         TimeBase,
+        TimeRecord,
         TransferFunction,
         ZeroPoleGain,
     )
@@ -60,6 +61,7 @@ _HOMES = {
         "Signal",
         "StateSpace",
         "TimeBase",
+        "TimeRecord",
         "TransferFunction",
         "ZeroPoleGain",
     ),
@@ -95,6 +97,7 @@ __all__ = [
     "StateSpace",
     "Summary",
     "TimeBase",
+    "TimeRecord",
     "TransferFunction",
     "UsageError",
     "ZeroPoleGain",

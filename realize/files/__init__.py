@@ -1,6 +1,6 @@
 """Reading and writing models: JSON, numpy archives, Touchstone files, tables of frequency responses."""
 
-from realize.files import json_model, npz_model, table, touchstone
+from realize.files import json_model, npy_table, npz_model, table, touchstone
 from realize.files.access import format_for_writing, read, write
 from realize.files.json_model import dumps
 from realize.files.record import model_from_record, model_to_record

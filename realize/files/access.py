@@ -25,7 +25,6 @@ _LOOKS = (
     (b"\xff\xd8\xff", "a JPEG picture"),
     (b"GIF8", "a GIF picture"),
     (b"\x89HDF\r\n", "an HDF5 file"),
-    (b"\x93NUMPY", "a single numpy array; several with their names go into an .npz file"),
     (b"\x1f\x8b", "a gzip file; unpack it first"),
     (b"BZh", "a bzip2 file; unpack it first"),
     (b"\xfd7zXZ", "an xz file; unpack it first"),
@@ -67,10 +66,11 @@ def read(
     path: str | os.PathLike[str],
     *,
     columns: Sequence[str] | None = None,
+    rate: float | None = None,
     allow_outside: bool = False,
     columns_for_tables: bool = False,
 ) -> Model:
-    """Read a model or a table of a frequency response.
+    """Read a model, or a table of measured data.
 
     Parameters
     ----------
@@ -78,10 +78,12 @@ def read(
         ``-`` is standard input. The content says what format it is; the suffix counts only where it does not.
     columns : sequence of str, optional
         Names of the columns of a table, instead of its header; ``-`` leaves a column out.
+    rate : float, optional
+        Sampling rate of a table of data over time, Hz, where it has no column of times.
     allow_outside : bool
         Whether a model may name matrix files outside its own folder.
     columns_for_tables : bool
-        Ignore ``columns`` for an input that is no table, instead of refusing them.
+        Ignore ``columns`` and ``rate`` for an input that is no table, instead of refusing them.
 
     Raises
     ------
@@ -90,7 +92,7 @@ def read(
     Refused
         When the model cannot be held.
     """
-    return read_source(open_source(path), columns, allow_outside, columns_for_tables)
+    return read_source(open_source(path), columns, allow_outside, columns_for_tables, rate)
 
 
 def read_bytes(
@@ -99,6 +101,7 @@ def read_bytes(
     *,
     folder: str | os.PathLike[str] | None = None,
     columns: Sequence[str] | None = None,
+    rate: float | None = None,
     allow_outside: bool = False,
 ) -> Model:
     """Read a model or a table from the bytes of a file; ``folder`` is where matrix files beside it are looked for."""
@@ -111,19 +114,26 @@ def read_bytes(
         os.path.splitext(name)[1].lower(),
         len(data),
     )
-    return read_source(source, columns, allow_outside, True)
+    return read_source(source, columns, allow_outside, True, rate)
 
 
-def read_source(source: Source, columns: Sequence[str] | None, allow_outside: bool, columns_for_tables: bool) -> Model:
+def read_source(
+    source: Source,
+    columns: Sequence[str] | None,
+    allow_outside: bool,
+    columns_for_tables: bool,
+    rate: float | None = None,
+) -> Model:
     """Read a model or a table from an open source, and close it; see `read`."""
     try:
         row = recognise(source)
-        if columns_for_tables and row.name != "table":
-            columns = None
-        if columns is not None and row.name != "table":
-            raise UsageError(f"{source.name}: names of columns are for tables, and this is {row.says}")
+        if row.name not in ("table", "npy"):
+            for given, words in ((columns, "names of columns are"), (rate, "a sampling rate is")):
+                if given is not None and not columns_for_tables:
+                    raise UsageError(f"{source.name}: {words} for tables, and this is {row.says}")
+            columns = rate = None
         assert row.read is not None
-        return row.read(source, ReadOptions(None if columns is None else tuple(columns), allow_outside))
+        return row.read(source, ReadOptions(None if columns is None else tuple(columns), rate, allow_outside))
     except InputError as error:
         raise error.inside(file=source.name) from None
     except Refused as error:

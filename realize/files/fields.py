@@ -248,6 +248,7 @@ READERS: dict[str, Callable[[Any, str, Reading], Any]] = {
     "side": _word,
     "polynomial-matrix": _block(3, False, "polynomial-matrix"),
     "response": _block(3, True, "response"),
+    "record": _block(2, False, "record"),
     "samples": _block(3, False, "samples"),
     "real-response": _block(3, False, "real-response"),
 }

@@ -9,6 +9,8 @@
   receipts, and ``decimals``: for each field a list of [index, decimal string]. Each may also be a text array of its
   own name.
 - Without ``kind``, the arrays A, B, C (and D, E) are a continuous state-space model; B or C may be one-dimensional.
+  ``frequency`` and ``response`` are a frequency response, ``input`` and ``output`` a time record, ``samples`` an
+  impulse response; one channel may be one-dimensional.
 - Arrays whose names start with ``published_`` are left alone; any other unknown array is refused.
 """
 
@@ -30,6 +32,14 @@ from realize.models import Model
 from realize.schema import COMMON_FIELDS, FORMAT_VERSION, KINDS
 
 RAGGED = ("polynomials", "roots")
+#: Kinds that are known by their arrays, where no array model says the kind.
+BY_ARRAYS = {
+    "frequency-response": ("frequency", "response"),
+    "time-record": ("input", "output"),
+    "impulse-response": ("samples",),
+}
+#: What a field holds -> dimensions that one channel may leave out.
+CHANNELS = {"response": 2, "real-response": 2, "samples": 2, "record": 1}
 TEXTS = ("signal-list", "frequency-unit", "side")
 
 
@@ -43,8 +53,10 @@ def read(source: Source, options: ReadOptions) -> Model:
     arrays = Arrays(source.random_access())
     header = _header(arrays)
     if "kind" not in header:
-        header = {"realize": FORMAT_VERSION, **header, "kind": "state-space"}
-        _require_state_space(arrays)
+        kind = _by_arrays(arrays)
+        header = {"realize": FORMAT_VERSION, **header, "kind": kind}
+        if kind == "state-space":
+            _require_state_space(arrays)
     decimals = header.pop("decimals", None)
     kind = kind_of(header)
     fields = {f.name: f for f in KINDS[kind].fields}
@@ -64,10 +76,20 @@ def read(source: Source, options: ReadOptions) -> Model:
             array = _numeric(arrays, f.name, f.holds)
             if array is not None:
                 values[f.name] = array
+        if f.name == "frequency_unit" and f.name not in values:
+            raise InputError(
+                "missing: Hz and rad/s differ by 2 pi, and nothing in the numbers says which it is",
+                'a text array, such as numpy.savez(..., frequency_unit="Hz")',
+                field=f.name,
+            )
         if f.required and f.name not in values:
             raise InputError(f"missing in a {kind} model", f.says, field=f.name)
     if kind == "state-space":
         _stand_up(values)
+    for name, value in values.items():
+        # one channel or signal may be a plain list
+        if fields[name].holds in CHANNELS and value.ndim == 1:
+            values[name] = value.reshape((-1,) + (1,) * CHANNELS[fields[name].holds])
     if decimals is not None:
         _read_decimals(decimals, values, reading)
     for name in values:
@@ -97,7 +119,7 @@ def _header(arrays: Arrays) -> dict[str, Any]:
             header[name] = version.reshape(-1)[0].item() if version.size == 1 else version.tolist()
         else:
             header[name] = json_text.parse(arrays.text(name).encode("utf-8", "surrogatepass"))
-    kind = header.get("kind", "state-space")
+    kind = header.get("kind", _by_arrays(arrays))
     own = KINDS[kind].fields if isinstance(kind, str) and kind in KINDS else ()
     known = {"model", *texts}
     for f in own:
@@ -112,6 +134,11 @@ def _header(arrays: Arrays) -> dict[str, Any]:
                 field=name[:60],
             )
     return header
+
+
+def _by_arrays(arrays: Arrays) -> str:
+    """Return the kind that an archive has by the names of its arrays."""
+    return next((kind for kind, names in BY_ARRAYS.items() if all(name in arrays for name in names)), "state-space")
 
 
 def _require_state_space(arrays: Arrays) -> None:

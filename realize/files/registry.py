@@ -16,9 +16,13 @@ from realize.models import Model
 
 @dataclass(frozen=True, slots=True)
 class ReadOptions:
-    """What the caller may say about a file: names of table columns, and whether matrix files may lie elsewhere."""
+    """What the caller may say about a file.
+
+    Names of table columns, the sampling rate of data over time (Hz), and whether matrix files may lie elsewhere.
+    """
 
     columns: tuple[str, ...] | None = None
+    rate: float | None = None
     allow_outside: bool = False
 
 

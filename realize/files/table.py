@@ -24,13 +24,13 @@ from typing import Any, BinaryIO
 
 import numpy as np
 
-from realize.errors import InputError
+from realize.errors import InputError, UsageError
 from realize.files import json_text, touchstone
 from realize.files.fields import Reading, as_object
 from realize.files.record import build, common_to_record
 from realize.files.registry import Format, ReadOptions, register
 from realize.files.sources import HEAD, Source
-from realize.files.table_names import FREQUENCY_UNITS, Column, parse, split_label
+from realize.files.table_names import FREQUENCY_UNITS, TIME_ROLES, Column, parse, split_label
 from realize.files.table_text import (
     COMMENTS,
     Table,
@@ -44,17 +44,19 @@ from realize.files.table_text import (
     split_names,
     turned,
 )
+from realize.files.table_time import over_time
 from realize.models import FrequencyResponse, Model
 from realize.schema import COMMON_FIELDS
 
 REMARK = "# realize "
 NAMING = (
-    "names such as frequency_hz, real, imaginary, magnitude_db, phase_deg, deviation, coherence; - leaves a column out"
+    "names such as frequency_hz, real, imaginary, magnitude_db, phase_deg, deviation, coherence, or time, input, output"
+    "; - leaves a column out"
 )
 
 
 def sniff(head: bytes) -> bool:
-    """True where one of the first three lines that are no comments is a line of numbers; not for Touchstone files."""
+    """True where one of the first four lines that are no comments is a line of numbers; not for Touchstone files."""
     if b"\0" in head and not head.startswith((b"\xff\xfe", b"\xfe\xff")):
         return False
     text = head.decode("utf-16" if head[:2] in (b"\xff\xfe", b"\xfe\xff") else "utf-8-sig", "replace")
@@ -64,14 +66,22 @@ def sniff(head: bytes) -> bool:
     if len(head) >= HEAD and len(lines) > 1:
         lines.pop()
     kept = [line for line in lines if line.strip() and line.strip()[0] not in COMMENTS]
-    return any(is_data(line) for line in kept[:3])
+    return any(is_data(line) for line in kept[:4])
 
 
 def read(source: Source, options: ReadOptions) -> Model:
-    """Return the frequency response of a table; raises InputError naming line and column."""
-    table = scan(decode(source.everything()))
+    """Return the data of a table; raises InputError naming line and column."""
+    return interpret(scan(decode(source.everything())), options)
+
+
+def interpret(table: Table, options: ReadOptions) -> Model:
+    """Return the data of a table of numbers; raises InputError naming line and column."""
     columns = _columns(table, options.columns)
     comma = decimal_comma(table)
+    if any(c.role in TIME_ROLES for c in columns):
+        return over_time(table, columns, comma, None if options.rate is None else 1 / options.rate, _remark(table))
+    if options.rate is not None:
+        raise UsageError("a sampling rate goes with data over time, and this table has frequencies")
     frequency, unit = _frequency(table, columns, comma)
     order = _sorted(frequency, table)
     labels = list(dict.fromkeys(c.label for c in columns if c.role not in ("frequency", "skip")))
@@ -101,9 +111,10 @@ def read(source: Source, options: ReadOptions) -> Model:
         **{role: values[order] for role, values in extra.items()},
     }
     record = _remark(table)
-    for side, names in (("outputs", outputs), ("inputs", inputs)):
-        if side not in record and any(names):
-            record[side] = [{"name": name} for name in names]
+    units = _units(columns, grid, len(outputs), len(inputs))
+    for k, (side, names) in enumerate((("outputs", outputs), ("inputs", inputs))):
+        if side not in record and (any(names) or any(units[k])):
+            record[side] = [{"name": name, "unit": unit} for name, unit in zip(names, units[k], strict=True)]
     return build("frequency-response", arguments, record, Reading())
 
 
@@ -116,11 +127,19 @@ def _columns(table: Table, given: tuple[str, ...] | None) -> list[Column]:
         names, where = table.names, f"line {table.names_line}"
     else:
         if table.last_comment is not None:
-            columns = [parse(name) for name in split_names(table.last_comment[1], table.separator)]
-            if len(columns) == width and all(c.role for c in columns) and any(c.role == "frequency" for c in columns):
+            names = split_names(table.last_comment[1], table.separator)
+            columns = [parse(name) for name in names]
+            if not any(c.role == "frequency" for c in columns):
+                columns = [parse(name, over_time=True) for name in names]
+            known = any(c.role == "frequency" or c.role in TIME_ROLES for c in columns)
+            if len(columns) == width and all(c.role for c in columns) and known:
                 return columns
         if width < 3:
-            raise InputError(f"{width} columns", "three or more: frequency, real and imaginary part")
+            raise InputError(
+                f"{width} columns without names",
+                "their names: pass --columns input,output with --rate for data over time; a frequency response has "
+                "three or more: frequency, real and imaginary part",
+            )
         raise InputError(
             f"{width} columns without names",
             f"their names: pass --columns {_example(width)} (or write that line above the numbers)",
@@ -131,6 +150,8 @@ def _columns(table: Table, given: tuple[str, ...] | None) -> list[Column]:
             hint = "; with decimal commas, separate the columns by semicolons or tabulators"
         raise InputError(f"{len(names)} names for {width} columns", f"{width} names{hint}", field=where)
     columns = [parse(name) for name in names]
+    if not any(c.role == "frequency" for c in columns):
+        columns = [parse(name, over_time=True) for name in names]
     for k, column in enumerate(columns):
         if not column.role:
             raise InputError(f"the name {column.name[:60]!r}", NAMING, field=f"{where}, column {k + 1}")
@@ -263,6 +284,29 @@ def _grid(labels: list[str]) -> tuple[dict[str, tuple[int, int]], list[str], lis
     return {label: (outputs.index(o), inputs.index(s)) for label, (o, s) in places.items()}, outputs, inputs
 
 
+def _units(
+    columns: list[Column], grid: dict[str, tuple[int, int]], outputs: int, inputs: int
+) -> tuple[list[str], list[str]]:
+    """Return the units of outputs and inputs: of the quantity a/b, a and b; refuses two units for one signal."""
+    found: tuple[dict[int, Column], dict[int, Column]] = ({}, {})
+    units: tuple[list[str], list[str]] = ([""] * outputs, [""] * inputs)
+    for column in columns:
+        if column.label not in grid or not column.quantity:
+            continue
+        top, slash, bottom = column.quantity.partition("/")
+        parts = (top.strip(), bottom.strip()) if slash and "/" not in bottom else (column.quantity, "")
+        for k, (at, unit) in enumerate(zip(grid[column.label], parts, strict=True)):
+            if unit and units[k][at] and units[k][at] != unit:
+                raise InputError(
+                    f"the unit {unit!r} in {column.name!r}, and {units[k][at]!r} in {found[k][at].name!r}",
+                    "one unit for the parts of a signal; scale one of the columns first",
+                    field=f"column {columns.index(column) + 1}",
+                )
+            if unit:
+                units[k][at], found[k][at] = unit, column
+    return units
+
+
 def _remark(table: Table) -> dict[str, Any]:
     """Return the common fields that a table written by this program keeps in a comment."""
     for comment in table.comments:
@@ -346,7 +390,7 @@ def write(model: Model, stream: BinaryIO) -> None:
 TABLE = register(
     Format(
         "table",
-        "a table of a frequency response",
+        "a table of measured data",
         (".csv", ".txt", ".tsv", ".dat"),
         sniff,
         read,

@@ -8,6 +8,8 @@ A name is a role, a unit and the label of a channel, in any order and case, join
 - magnitude: ``magnitude``, ``mag``, ``abs``, ``amplitude``, ``gain`` (linear, or dB)
 - phase: ``phase``, ``arg``, ``angle`` (deg or rad)
 - ``deviation``, ``std``, ``sigma``: one standard deviation; ``coherence``, ``coh``
+- data over time: ``time`` or ``t`` (s unless said: ms, us, ns); ``input`` or ``u``, ``output`` or ``y`` with the name
+  of the signal before or behind; ``impulse`` and ``step`` with the label of a channel
 - ``-`` or ``skip``: a column to leave out
 
 The label of a channel is the name of an output, or ``output/input``; no label is the only channel.
@@ -16,7 +18,7 @@ The label of a channel is the name of an output, or ``output/input``; no label i
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 #: unit of frequency -> power of ten, unit that is kept
 FREQUENCY_UNITS = {
@@ -50,6 +52,17 @@ ROLES = {
     "deviation": ("standard deviation", "standard_deviation", "deviation", "std", "stdev", "stddev", "sigma"),
     "coherence": ("coherence", "coh"),
 }
+#: unit of time -> power of ten
+TIME_UNITS = {"s": 0, "ms": -3, "us": -6, "ns": -9}
+_TIME_SPELLINGS = {"sec": "s", "second": "s", "seconds": "s", "µs": "us", "μs": "us"}
+#: Roles of data over time -> the words for them; numbered ones such as y2 name a signal.
+TIME_ROLES = {
+    "time": ("time", "t"),
+    "input": ("input", "in", "u", "excitation"),
+    "output": ("output", "out", "y"),
+    "impulse": ("impulse response", "impulse_response", "impulse"),
+    "step": ("step response", "step_response", "step"),
+}
 #: Longest name of a column, characters.
 MAX_NAME = 300
 _ANGULAR = ("omega", "w", "ω", "angular frequency", "angular_frequency")
@@ -74,10 +87,15 @@ class Column:
     role: str
     unit: str = ""
     label: str = ""
+    #: Unit of the quantity itself, such as V or m/N, as it is written.
+    quantity: str = ""
 
 
-def parse(name: str) -> Column:
-    """Return what the name of a column says; the role is empty where it says nothing that is known."""
+def parse(name: str, over_time: bool = False) -> Column:
+    """Return what the name of a column says; the role is empty where it says nothing that is known.
+
+    ``over_time``: names of data over time count first, so that ``output_angle`` is an output and no phase.
+    """
     shown = name.strip()
     if len(shown) > MAX_NAME:
         return Column(shown, "")
@@ -103,15 +121,47 @@ def parse(name: str) -> Column:
     if not text and unit:
         role = "frequency" if unit in FREQUENCY_UNITS else {"db": "magnitude", "deg": "phase"}.get(unit, "")
         return Column(shown, role, unit)
+    if over_time:
+        found = _over_time(shown, text, brackets[2].strip() if brackets is not None else "")
+        if found is not None:
+            return found
     match = _LAST.fullmatch(text) or _FIRST.fullmatch(text) or _CAMEL.fullmatch(text)
     if match is None:
+        found = _over_time(shown, text, brackets[2].strip() if brackets is not None else "")
+        if found is not None:
+            return found
         if unit == "db":
             return Column(shown, "magnitude", unit, text)
         if unit == "deg":
             return Column(shown, "phase", unit, text)
         return Column(shown, "")
     word = match["role"].lower()
-    return _finished(shown, _ROLE_OF[word], unit, match["label"], word)
+    found = _finished(shown, _ROLE_OF[word], unit, match["label"], word)
+    if brackets is not None and not unit and found.role not in ("", "frequency", "phase", "coherence"):
+        return replace(found, quantity=brackets[2].strip())
+    return found
+
+
+def _over_time(shown: str, text: str, unit: str) -> Column | None:
+    """Return what the name of a column of data over time says; None where it is none."""
+    for role, words in TIME_ROLES.items():
+        spelled = "|".join(re.escape(word) for word in words)
+        if role == "time":
+            behind = re.fullmatch(rf"(?:{spelled})(?:[\s_/\-.:]+(\w+))?", text, re.IGNORECASE)
+            if behind is not None:
+                said = unit or behind[1] or "s"
+                said = _TIME_SPELLINGS.get(said, said)
+                return Column(shown, "time" if said in TIME_UNITS else "", said if said in TIME_UNITS else "")
+            continue
+        first = re.fullmatch(rf"(?:{spelled})(?:[\s_\-.:]+(.*))?", text, re.IGNORECASE | re.DOTALL)
+        last = re.fullmatch(rf"(.*)[\s_\-.:]+(?:{spelled})", text, re.IGNORECASE | re.DOTALL)
+        numbered = re.fullmatch(rf"(?:{spelled})_?\d+", text, re.IGNORECASE) if role in ("input", "output") else None
+        if numbered is not None:
+            return Column(shown, role, "", text, unit)
+        if first is not None or last is not None:
+            label = (first or last)[1] or ""  # type: ignore[index]
+            return Column(shown, role, "", label.strip(" \t_-.:"), unit)
+    return None
 
 
 def _unit(text: str) -> str:

@@ -27,6 +27,7 @@ MAX_LINE = 1 << 20
 #: Most numbers in one table.
 MAX_NUMBERS = 8_000_000
 NUMBER = re.compile(r"[+-]?(?:\d+[.,]?\d*|[.,]\d+)(?:[eEdD][+-]?\d+)?", re.ASCII)
+_SEPARATOR = re.compile(r'"?sep=(?:.|\\t)?"?', re.IGNORECASE)
 _NON_FINITE = re.compile(r"[+-]?(nan|inf|infinity|n/a|na|#.*|-+)?", re.IGNORECASE)
 
 
@@ -131,6 +132,8 @@ def scan(text: str) -> Table:
         bare = line.strip()
         if not bare:
             continue
+        if not table.rows and not names and _SEPARATOR.fullmatch(bare):
+            continue  # some programs say so what separates the fields, which the numbers say as well
         if bare[0] in COMMENTS:
             table.comments.append(bare)
             if not table.rows and not names:

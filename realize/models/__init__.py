@@ -9,6 +9,7 @@ from realize.models.pole_residue import PoleResidue
 from realize.models.second_order import SecondOrder
 from realize.models.sections import Sections
 from realize.models.state_space import StateSpace
+from realize.models.time_record import TimeRecord
 from realize.models.transfer_function import TransferFunction
 from realize.models.zero_pole_gain import ZeroPoleGain
 
@@ -24,6 +25,7 @@ MODEL_TYPES: dict[str, type[Model]] = {
         SecondOrder,
         FrequencyResponse,
         ImpulseResponse,
+        TimeRecord,
     )
 }
 
@@ -43,6 +45,7 @@ __all__ = [
     "Signal",
     "StateSpace",
     "TimeBase",
+    "TimeRecord",
     "TransferFunction",
     "ZeroPoleGain",
     "digest",

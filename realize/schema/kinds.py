@@ -29,6 +29,7 @@ HOLDS = {
     "frequency-unit": '"Hz" or "rad/s"',
     "response": "[k][outputs][inputs]; complex numbers [re, im]",
     "samples": "[k][outputs][inputs]; real",
+    "record": "[k][signals]; real",
     "real-response": "[k][outputs][inputs]; real, not negative",
 }
 
@@ -157,6 +158,16 @@ KINDS: dict[str, Kind] = {
             ),
             parametric=False,
         ),
+        Kind(
+            "time-record",
+            "Inputs and outputs recorded at equal steps of time; the time base is that of the plant.",
+            (
+                Field("period", "number", True, "sampling period of the record, s"),
+                Field("input", "record", True, "samples of the inputs"),
+                Field("output", "record", True, "samples of the outputs"),
+            ),
+            parametric=False,
+        ),
     )
 }
 
@@ -171,8 +182,10 @@ PORT_PARAMETERS: dict[str, str] = {
 }
 
 PARAMETRIC_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric)
-#: Kinds that hold data: targets of a conversion, never sources.
+#: Kinds that hold data.
 DATA_KINDS = tuple(name for name, kind in KINDS.items() if not kind.parametric)
+#: Kinds of data that a model can be converted to.
+TABULATED_KINDS = ("frequency-response", "impulse-response")
 #: Kinds that can hold every rational plant.
 UNIVERSAL_KINDS = tuple(name for name, kind in KINDS.items() if kind.parametric and kind.universal)
 

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from realize.schema.kinds import DATA_KINDS, PARAMETRIC_KINDS, UNIVERSAL_KINDS
+from realize.schema.kinds import PARAMETRIC_KINDS, TABULATED_KINDS, UNIVERSAL_KINDS
 
 FORMS = (
     "cascade",
@@ -77,7 +77,7 @@ class Verb:
     makes_receipt: bool = True
 
 
-TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS + DATA_KINDS, metavar="KIND")
+TO_KIND = Option("to", "choice", "kind of the result", choices=PARAMETRIC_KINDS + TABULATED_KINDS, metavar="KIND")
 BAND = Option("band", "band", "use only these frequencies (120Hz, 2.4kHz, plain numbers are rad/s)", metavar="LOW,HIGH")
 CERTIFY = Option("certify", "flag", "prove the claims whatever it costs; progress is shown, Ctrl-C ends it")
 COLUMNS = Option(

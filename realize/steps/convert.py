@@ -24,7 +24,7 @@ from realize.forms.coordinates import NoTransform
 from realize.forms.registry import TABLE
 from realize.models import Model, StateSpace, is_data
 from realize.models.checks import MAX_DIGITS
-from realize.schema import ARITHMETICS, CLAIMS, DATA_KINDS, FORMS, KINDS, ORDERINGS, SIDES, STRUCTURED, Claim
+from realize.schema import ARITHMETICS, CLAIMS, FORMS, KINDS, ORDERINGS, SIDES, STRUCTURED, TABULATED_KINDS, Claim
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.receipts import finish, refusing_singular
 from realize.steps.second_opinion import asking
@@ -58,7 +58,7 @@ def _task(
 ) -> Task:
     if to not in KINDS:
         raise UsageError(f"no kind {to!r} to convert to; there are: {', '.join(KINDS)}")
-    if to in DATA_KINDS and (form is not None or ordering is not None or arithmetic == "double"):
+    if to in TABULATED_KINDS and (form is not None or ordering is not None or arithmetic == "double"):
         raise UsageError(f"--to {to} takes no form, ordering or arithmetic double")
     if form is not None and form not in FORMS:
         raise UsageError(f"no form {form!r}; there are: {', '.join(FORMS)}")
@@ -99,7 +99,7 @@ def explain(
 ) -> list[str]:
     """Return the route of a conversion in words, one line a row, and last the arithmetic and why."""
     task = _task(model_of(model), to, form, common_denominator, digits, arithmetic, ordering)
-    if to in DATA_KINDS:
+    if to in TABULATED_KINDS:
         return [f"{task.model.kind} -> {to}: exact values where they are affordable, each rounded once"]
     route = plan_route(task)
     lines = [f"{row.source} -> {row.target} ({'exact' if row.exact else 'rounding'}): {row.says}" for row in route]
@@ -180,13 +180,13 @@ def convert(
     source = model_of(model)
     task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force, side)
     wanted: dict[str, Any] = {"frequencies": frequencies, "band": band, "count": count, "period": period}
-    if to in DATA_KINDS:
+    if to in TABULATED_KINDS:
         from realize.steps.tabulate import tabulated
 
         with whatever_it_costs(certify or arithmetic == "exact"):
             return tabulated(source, to, **wanted, limits=limits, second_opinion=second_opinion)
     if any(value is not None for value in wanted.values()):
-        raise UsageError("--frequencies, --band, --count and --period go with --to " + " or ".join(DATA_KINDS))
+        raise UsageError("--frequencies, --band, --count and --period go with --to " + " or ".join(TABULATED_KINDS))
     choice = choose_arithmetic(task)
     lifted = certify or arithmetic == "exact"
     with whatever_it_costs(lifted), asking("convert", source, {"to": to}, second_opinion) as opinion:

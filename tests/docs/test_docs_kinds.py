@@ -56,7 +56,7 @@ def test_the_plant_is_what_the_page_says(kind: str, tmp_path: Path) -> None:
     assert inspect(model)["kind"] == kind
 
 
-@pytest.mark.parametrize("kind", ["frequency-response", "impulse-response"])
+@pytest.mark.parametrize("kind", ["frequency-response", "impulse-response", "time-record"])
 def test_data_reads(kind: str, tmp_path: Path) -> None:
     model = model_of(kind, tmp_path)
-    assert model.kind == kind and model.shape == (1, 1)
+    assert model.kind == kind and model.shape == ((1, 2) if kind == "time-record" else (1, 1))
