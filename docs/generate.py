@@ -51,6 +51,8 @@ WRITTEN = {
     "matrix": "a number, or rows with semicolons between them: ``1,2;3,4``",
     "columns": "names with commas between them",
     "weights": "positive numbers with commas between them",
+    "rate": "samples a second, or with a suffix: ``1000``, ``44.1kHz``",
+    "share": "a number below one, or per cent: ``0.5`` or ``50%``",
     "path": "name of a file",
     "limit": "``NAME=VALUE``, a claim and a number; may be given several times",
 }

@@ -33,6 +33,7 @@ RANKS = {
     "conversions": 5,
     "reduction": 6,
     "fitting": 6,
+    "estimation": 6,
     "sampling": 6,
     "networks": 6,
     "steps": 7,

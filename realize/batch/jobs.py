@@ -112,7 +112,7 @@ def verbs_of_jobs() -> tuple[str, ...]:
     return tuple(
         name
         for name, verb in VERBS.items()
-        if verb.arguments in (("MODEL",), ("DATA",), ("MODEL...",), ("A", "B...")) and name != "run"
+        if verb.arguments in (("MODEL",), ("DATA...",), ("MODEL...",), ("A", "B...")) and name != "run"
     )
 
 

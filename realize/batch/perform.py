@@ -62,6 +62,7 @@ class Performer:
     def __init__(self, job: Job, root: str | None) -> None:
         self.job, self.root = job, root
         self.columns = next((s.options["columns"] for s in job.steps if "columns" in s.options), None)
+        self.rate = next((s.options["rate"] for s in job.steps if "rate" in s.options), None)
 
     def perform(self, task: dict[str, Any]) -> dict[str, Any]:
         """Return the reply for a task (``index``, ``item``, ``path``, ``outputs``, ``data``).
@@ -98,7 +99,12 @@ class _File:
     """The work on one file, and what came of it so far."""
 
     def __init__(self, performer: Performer, task: dict[str, Any]) -> None:
-        self.job, self.root, self.columns = performer.job, performer.root, performer.columns
+        self.job, self.root = performer.job, performer.root
+        self.reading: dict[str, Any] = {
+            "columns": performer.columns,
+            "rate": performer.rate,
+            "allow_outside": self.job.allow_outside,
+        }
         self.task = task
         self.records: list[dict[str, Any]] = []
         self.outputs: list[tuple[str, bytes]] = []
@@ -120,11 +126,10 @@ class _File:
         else:
             self.digest, data = keys.take_input(path)
         self.keys = keys.chain(self.job, self.digest)
-        outside = self.job.allow_outside
         if data is None:
-            source = read(path, columns=self.columns, allow_outside=outside, columns_for_tables=True)
+            source = read(path, **self.reading, columns_for_tables=True)
         else:
-            source = read_bytes(data, path, folder=os.path.dirname(path), columns=self.columns, allow_outside=outside)
+            source = read_bytes(data, path, folder=os.path.dirname(path), **self.reading)
         every = self.job.second_opinion_every
         chosen = every is None or int(self.digest[-12:], 16) % every == 0
         model: Any = source

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import TYPE_CHECKING, Any
 
 from realize.errors import RealizeError, UsageError
@@ -19,7 +20,7 @@ def contradiction(step: Step) -> str:
     if step.verb == "convert" and "to" not in step.options:
         return "convert needs to = KIND"
     try:
-        apply(step, small_plant(step.verb), step.options, second_opinion=False)
+        apply(step, small_plant(step.verb, step.options), step.options, second_opinion=False)
     except UsageError as error:
         return str(error)
     except (RealizeError, ArithmeticError):
@@ -27,10 +28,14 @@ def contradiction(step: Step) -> str:
     return ""
 
 
-def small_plant(verb: str) -> Any:
-    """Return the smallest model or data set that a verb takes."""
-    from realize.models import FrequencyResponse, TransferFunction
+def small_plant(verb: str, options: Mapping[str, Any]) -> Any:
+    """Return the smallest model or data set that a verb takes with such options."""
+    from realize.models import FrequencyResponse, TimeRecord, TransferFunction
+    from realize.schema import ESTIMATION
 
+    if any(options.get(option.keyword) for option in ESTIMATION):
+        u = [[float((17 * k * k) % 31 - 15)] for k in range(256)]
+        return TimeRecord(period=0.01, input=u, output=u)
     if verb != "fit":
         return TransferFunction(numerator=[1.0], denominator=[1.0, 1.0])
     w = [0.25 * 1.5**k for k in range(12)]

@@ -39,11 +39,11 @@ class Context:
             format_for_writing(self.output)
 
 
-def load(path: str, columns: list[str] | None = None, *, several: bool = False) -> Model:
-    """Read a model or data file; - is standard input. Among several inputs, names of columns are for the tables."""
+def load(path: str, columns: list[str] | None = None, *, rate: float | None = None, several: bool = False) -> Model:
+    """Read a model or data file; - is standard input. Among several inputs, columns and rate are for the tables."""
     from realize.files import read
 
-    return read(path, columns=columns, columns_for_tables=several)
+    return read(path, columns=columns, rate=rate, columns_for_tables=several)
 
 
 def write_log(context: Context, record: dict[str, Any]) -> None:

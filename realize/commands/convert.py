@@ -25,12 +25,14 @@ def execute(
     band: tuple[float, float] | None,
     count: int | None,
     period: float | None,
+    columns: list[str] | None,
+    rate: float | None,
     **rest: Any,
 ) -> int:
     """Convert a model file."""
     if to is None:
         raise UsageError("convert needs --to KIND")
-    source = load(model)
+    source = load(model, columns, rate=rate)
     if rest.pop("explain"):
         lines = explain(
             source,
@@ -66,5 +68,6 @@ def execute(
             certify=certify,
             limits=context.limits,
             second_opinion=context.second_opinion,
+            **rest,
         )
     return deliver(context, conversion)

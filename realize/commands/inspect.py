@@ -6,9 +6,9 @@ from realize.commands.common import Context, load, print_record, write_log
 from realize.steps import history, inspect
 
 
-def execute(context: Context, model: str, columns: list[str] | None, **options: bool) -> int:
+def execute(context: Context, model: str, columns: list[str] | None, rate: float | None, **options: bool) -> int:
     """Say what a model or data file holds, or how it came about."""
-    source = load(model, columns)
+    source = load(model, columns, rate=rate)
     history_only = options["history"]
     record = history(source) if history_only else inspect(source)
     write_log(context, record)

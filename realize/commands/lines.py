@@ -22,9 +22,9 @@ from realize.steps import Conversion
 from realize.steps.second_opinion import one_worker
 
 #: Verbs that take one model or data set.
-SINGLE = (("MODEL",), ("DATA",))
+SINGLE = (("MODEL",), ("DATA...",))
 #: Options that go with whole files.
-NOT_HERE = ("explain", "columns")
+NOT_HERE = ("explain", "columns", "rate")
 
 
 def execute(context: Context, options: dict[str, Any]) -> int:
@@ -35,7 +35,11 @@ def execute(context: Context, options: dict[str, Any]) -> int:
     for name in NOT_HERE:
         if options.get(name):
             raise UsageError(f"--lines and --{name} do not go together")
-    path = options.pop(verb.arguments[0].lower())
+    path = options.pop(verb.arguments[0].rstrip(".").lower())
+    if isinstance(path, tuple):
+        if len(path) > 1:
+            raise UsageError("--lines takes one file of lines, or - for standard input")
+        path = path[0]
     function = getattr(steps, verb.name)
     taken = inspect.signature(function).parameters
     for option in options_of(verb):
@@ -53,7 +57,7 @@ def execute(context: Context, options: dict[str, Any]) -> int:
     opinion: bool | None = False
 
     try:
-        step(small_plant(context.verb))
+        step(small_plant(context.verb, given))
     except UsageError:  # options that contradict each other, whatever the lines are
         raise
     except (RealizeError, ArithmeticError):

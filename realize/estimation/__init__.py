@@ -1,6 +1,6 @@
 """Time records to frequency responses: one way of averaging a file."""
 
-from realize.estimation.face import AVERAGINGS, ESTIMATORS, estimate_response
+from realize.estimation.face import estimate_response
 from realize.estimation.records import Estimate, Settings
 
-__all__ = ["AVERAGINGS", "ESTIMATORS", "Estimate", "Settings", "estimate_response"]
+__all__ = ["Estimate", "Settings", "estimate_response"]

@@ -11,10 +11,8 @@ from numpy.typing import ArrayLike
 from realize.errors import InputError, UsageError
 from realize.estimation import periodic, stepped_sine, welch
 from realize.estimation.records import Array, Estimate, Record, Settings
-from realize.kernels.spectra import COSINES
+from realize.schema import AVERAGINGS, ESTIMATORS, WINDOWS
 
-AVERAGINGS = ("welch", "periodic", "stepped-sine", "auto")
-ESTIMATORS = ("h1", "h2", "hv")
 #: A record with fewer samples tells nothing.
 FEWEST = 16
 
@@ -52,10 +50,11 @@ def estimate_response(
     if chosen.estimator == "h2" and m != p:
         raise UsageError(f"h2 needs as many outputs as inputs, and there are {p} and {m}; take h1 or hv")
     found = _averaged(runs, period, chosen)
-    scale = np.ldexp(1.0, np.clip(lift_out[:, None] - lift_in[None, :], -2100, 2100))
+    lift = lift_out[:, None] - lift_in[None, :]
     with np.errstate(over="ignore", under="ignore"):
-        response = found.response * scale
-        deviation = None if found.deviation is None else found.deviation * scale
+        response = np.empty_like(found.response)
+        response.real, response.imag = np.ldexp(found.response.real, lift), np.ldexp(found.response.imag, lift)
+        deviation = None if found.deviation is None else np.ldexp(found.deviation, lift)
     if not np.all(np.isfinite(response)) or (deviation is not None and not np.all(np.isfinite(deviation))):
         raise InputError("a response beyond the largest double", "other units of the inputs or outputs")
     return Estimate(found.frequency, response, deviation, found.coherence, found.method, found.cautions, found.details)
@@ -65,7 +64,7 @@ def _check(settings: Settings) -> None:
     for name, value, known in (
         ("averaging", settings.averaging, AVERAGINGS),
         ("estimator", settings.estimator, ESTIMATORS),
-        ("window", settings.window, tuple(COSINES)),
+        ("window", settings.window, WINDOWS),
     ):
         if value not in known:
             raise UsageError(f"no {name} {value!r}; there are: {', '.join(known)}")

@@ -222,8 +222,8 @@ def _from_neighbours(
     """Return deviations where each experiment has one period: what neighbouring lines do not predict.
 
     Over seven lines, H is a parabola in the number of the line, fitted to Y with the weight |U|^2; the power that is
-    left, by its four degrees of freedom, is noise. The median over 41 neighbours leaves sharp peaks of H out, where a
-    parabola is no model of it.
+    left, by its four degrees of freedom, is noise. The larger counts of what a line's own neighbourhood leaves and of
+    the median over 41 neighbours: near a sharp peak of H a parabola is no model, and the lines know less.
     """
     lines, experiments, p = out.shape
     m = x.shape[2]
@@ -244,5 +244,5 @@ def _from_neighbours(
     freedom = width * experiments - 3
     # median of chi^2(2f)/(2f)
     typical = (1 - 1 / (9 * freedom)) ** 3
-    noise = running_median(left, 20) / typical
+    noise = np.maximum(running_median(left, 20) / typical, left)
     return np.sqrt(noise[:, :, None] * np.sum(np.abs(back) ** 2, axis=2)[:, None, :])

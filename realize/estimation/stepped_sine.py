@@ -17,6 +17,10 @@ from realize.estimation.records import Array, ComplexArray, Estimate, Record, Se
 
 #: Cycles of two blocks side by side in a dwell differ by less than this share.
 SAME = 0.005
+#: Two dwells are of one frequency to this share.
+SAME_FREQUENCY = 1e-4
+#: A dwell is one where a sine has this share of the input's power.
+MOSTLY_SINE = 0.5
 FEWEST_CYCLES = 4
 MOST_BLOCKS = 8
 LEFT_OUT = 1 / 3
@@ -125,6 +129,8 @@ def _dwell(record: Record, start: int, stop: int) -> tuple[float, ComplexArray, 
     mean = np.mean(values, axis=0)
     if abs(mean[0]) == 0:
         return None
+    if abs(mean[0]) ** 2 / 2 < MOSTLY_SINE * float(np.var(u)):
+        return None
     response = mean[1:] / mean[0]
     errors = values[:, 1:] - values[:, :1] * response
     freedom = blocks - 1
@@ -158,12 +164,12 @@ def _frequency(u: Array) -> float | None:
 
 
 def _merged(rows: list[tuple[float, ComplexArray, Array]]) -> list[tuple[float, ComplexArray, Array]]:
-    """Return the dwells with those of the same frequency (to a part in 10^6) averaged."""
+    """Return the dwells with those of the same frequency averaged."""
     merged = [rows[0]]
     weight = 1
     for f, response, variance in rows[1:]:
         last = merged[-1]
-        if f - last[0] > 1e-6 * f:
+        if f - last[0] > SAME_FREQUENCY * f:
             merged.append((f, response, variance))
             weight = 1
             continue

@@ -78,8 +78,8 @@ def _response(
     for (k, c), (output, source) in zip(own, pairs, strict=True):
         samples[:, outputs.index(output), inputs.index(source)] = numbers(table, k, c.name, comma)
     for side, names in (("outputs", outputs), ("inputs", inputs)):
-        if side not in common and any(names):
-            units = [next((c.quantity for (_, c), p in zip(own, pairs, strict=True) if p[0] == n), "") for n in names]
+        units = [next((c.quantity for (_, c), p in zip(own, pairs, strict=True) if p[0] == n), "") for n in names]
+        if side not in common and (any(names) or any(units)):
             common[side] = [
                 {"name": name, "unit": unit if side == "outputs" else ""}
                 for name, unit in zip(names, units, strict=True)

@@ -26,8 +26,11 @@ from realize.schema.records import (
 )
 from realize.schema.verbs import (
     ARITHMETICS,
+    AVERAGINGS,
     COMMON_OPTIONS,
     ESTIMATED_DEAD_TIMES,
+    ESTIMATION,
+    ESTIMATORS,
     EXIT_STATUSES,
     FIT_METHODS,
     FORMS,
@@ -36,6 +39,7 @@ from realize.schema.verbs import (
     REDUCTION_METHODS,
     SIDES,
     VERBS,
+    WINDOWS,
     Option,
     Verb,
     options_of,
@@ -43,12 +47,15 @@ from realize.schema.verbs import (
 
 __all__ = [
     "ARITHMETICS",
+    "AVERAGINGS",
     "BASES",
     "CLAIMS",
     "COMMON_FIELDS",
     "COMMON_OPTIONS",
     "DATA_KINDS",
     "ESTIMATED_DEAD_TIMES",
+    "ESTIMATION",
+    "ESTIMATORS",
     "EXIT_STATUSES",
     "FIT_METHODS",
     "FORMAT_VERSION",
@@ -65,6 +72,7 @@ __all__ = [
     "TABULATED_KINDS",
     "UNIVERSAL_KINDS",
     "VERBS",
+    "WINDOWS",
     "Claim",
     "ClaimDefinition",
     "Field",

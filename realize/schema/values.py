@@ -153,6 +153,23 @@ def columns(text: str) -> list[str]:
     return names
 
 
+def rate(text: str) -> float:
+    """Return samples a second: a plain number, or with the suffix Hz, kHz, MHz or GHz."""
+    match = _QUANTITY.fullmatch(text)
+    factors = {"": 1.0, "hz": 1.0, "khz": 1e3, "mhz": 1e6, "ghz": 1e9}
+    if match is None or match.group(2).lower() not in factors:
+        raise ValueError(f"{text!r} is not a sampling rate; write 1000, 44.1kHz or 2MHz")
+    return positive(repr(float(match.group(1)) * factors[match.group(2).lower()]))
+
+
+def share(text: str) -> float:
+    """Return a share from 0.5 or 50%."""
+    value = number(text[:-1]) / 100 if text.endswith("%") else number(text)
+    if not 0 <= value < 1:
+        raise ValueError(f"{text!r} is not a share from 0 to 1")
+    return value
+
+
 def weights(text: str) -> list[float]:
     """Return a list of finite numbers greater than zero."""
     return [positive(entry) for entry in text.split(",")]
@@ -186,5 +203,7 @@ PARSERS: dict[str, Callable[[Any], Any]] = {
     "matrix": matrix,
     "columns": columns,
     "weights": weights,
+    "rate": rate,
+    "share": share,
     "limit": limits,
 }

@@ -35,6 +35,9 @@ REDUCTION_METHODS = ("balanced-truncation", "singular-perturbation", "modal", "f
 FIT_METHODS = ("vector-fitting", "barycentric", "loewner", "subspace", "auto")
 #: Dead times that a fit can estimate: one for all channels, or one for each input, output or channel.
 ESTIMATED_DEAD_TIMES = ("auto", "auto-per-input", "auto-per-output", "auto-per-channel")
+AVERAGINGS = ("welch", "periodic", "stepped-sine", "auto")
+ESTIMATORS = ("h1", "h2", "hv")
+WINDOWS = ("rectangular", "hann", "hamming", "blackman", "flat-top")
 SIDES = ("left", "right")
 ARITHMETICS = ("exact", "auto", "double")
 
@@ -46,7 +49,8 @@ class Option:
     ``takes`` is what the value is: ``flag``, ``choice``, ``text``, ``number``, ``integer``, ``error`` (0.01 or 1%),
     ``band`` (LOW,HIGH with unit suffixes), ``order`` (N, A..B or auto), ``time`` (seconds), ``columns`` (LIST),
     ``frequencies`` (LIST with unit suffixes), ``weights`` (numbers above zero), ``roots`` (complex numbers),
-    ``matrix`` (rows with semicolons between them), ``delay`` (seconds, or one of `ESTIMATED_DEAD_TIMES`), ``path``,
+    ``matrix`` (rows with semicolons between them), ``delay`` (seconds, or one of `ESTIMATED_DEAD_TIMES`),
+    ``rate`` (samples a second, with a suffix), ``share`` (0.5 or 50%, zero as well), ``path``,
     ``limit`` (NAME=VALUE, repeatable), or ``switch`` (NAME / no-NAME).
     """
 
@@ -86,6 +90,26 @@ COLUMNS = Option(
     "names of the columns of a table without a header, such as frequency_hz,real,imaginary",
     metavar="LIST",
 )
+RATE = Option("rate", "rate", "sampling rate of a table of data over time without a column of times", metavar="X")
+#: How a time record becomes a frequency response.
+ESTIMATION: tuple[Option, ...] = (
+    Option(
+        "averaging",
+        "choice",
+        "time data: over windowed segments (welch), whole periods of the inputs, or dwells of a stepped sine; auto: "
+        "periods where the inputs repeat, else welch",
+        AVERAGINGS,
+    ),
+    Option(
+        "estimator", "choice", "time data: noise on the outputs (h1), the inputs (h2) or both alike (hv)", ESTIMATORS
+    ),
+    Option("window", "choice", "time data: window of the segments", WINDOWS),
+    Option("segment", "integer", "time data: samples of a segment, or of a dwell", metavar="N"),
+    Option("overlap", "share", "time data: share of a segment that the next one repeats (0.5 or 50%)", metavar="X"),
+    Option("excitation-period", "integer", "time data: samples of one period of the inputs", metavar="N"),
+    Option("settling", "time", "time data: seconds at the start that are left out", metavar="X"),
+    Option("sampled", "flag", "time data: the inputs are held between the samples; the plant is sampled"),
+)
 ARITHMETIC = Option(
     "arithmetic",
     "choice",
@@ -99,8 +123,8 @@ VERBS: dict[str, Verb] = {
     for verb in (
         Verb(
             "fit",
-            "Turn a measured frequency response into a model.",
-            ("DATA",),
+            "Turn measured data into a model: a frequency response, a time record, or several runs of one.",
+            ("DATA...",),
             (
                 Option("to", "choice", "kind of the result", UNIVERSAL_KINDS, "state-space", "KIND"),
                 Option(
@@ -143,11 +167,13 @@ VERBS: dict[str, Verb] = {
                 Option("allow-unstable", "flag", "poles may be unstable where the data ask for it"),
                 BAND,
                 COLUMNS,
+                RATE,
+                *ESTIMATION,
             ),
         ),
         Verb(
             "convert",
-            "Write the same model as another kind, or in other coordinates.",
+            "Write the same model as another kind, or in other coordinates; or a time record as a frequency response.",
             ("MODEL",),
             (
                 TO_KIND,
@@ -176,6 +202,9 @@ VERBS: dict[str, Verb] = {
                 ARITHMETIC,
                 CERTIFY,
                 Option("explain", "flag", "print the route and why, and stop"),
+                COLUMNS,
+                RATE,
+                *ESTIMATION,
             ),
         ),
         Verb(
@@ -221,7 +250,7 @@ VERBS: dict[str, Verb] = {
             "inspect",
             "Say what the plant is and what is wrong with it.",
             ("MODEL",),
-            (Option("history", "flag", "show the steps that led to this model instead"), COLUMNS),
+            (Option("history", "flag", "show the steps that led to this model instead"), COLUMNS, RATE),
             False,
             False,
         ),

@@ -22,7 +22,7 @@ from realize.conversions import (
 from realize.errors import Refused, UsageError
 from realize.forms.coordinates import NoTransform
 from realize.forms.registry import TABLE
-from realize.models import Model, StateSpace, is_data
+from realize.models import Model, StateSpace, TimeRecord, is_data
 from realize.models.checks import MAX_DIGITS
 from realize.schema import ARITHMETICS, CLAIMS, FORMS, KINDS, ORDERINGS, SIDES, STRUCTURED, TABULATED_KINDS, Claim
 from realize.steps.conversion import Conversion, model_of
@@ -75,7 +75,11 @@ def _task(
     if is_data(model):
         raise Refused(
             f"the data of a model of kind {model.kind} have no exact conversion to a model; "
-            "fit takes frequency responses"
+            + (
+                "fit takes time records, and --to frequency-response estimates the response"
+                if isinstance(model, TimeRecord)
+                else "fit takes frequency responses"
+            )
         )
     if digits is not None:
         if to not in WITH_DIGITS:
@@ -123,6 +127,14 @@ def convert(
     digits: int | None = None,
     arithmetic: str = "auto",
     certify: bool = False,
+    averaging: str | None = None,
+    estimator: str | None = None,
+    window: str | None = None,
+    segment: int | None = None,
+    overlap: float | None = None,
+    excitation_period: int | None = None,
+    settling: float | None = None,
+    sampled: bool = False,
     limits: dict[str, float] | None = None,
     second_opinion: bool | None = False,
 ) -> Conversion:
@@ -163,6 +175,10 @@ def convert(
         doubles alone make the result, and the claims say what that cost.
     certify : bool
         Prove the claims whatever it costs.
+    averaging, estimator, window, segment, overlap, excitation_period, settling : optional
+        How a time record becomes a frequency response: see ``realize.estimation.Settings``.
+    sampled : bool
+        The inputs of a time record are held between the samples: the response is that of the sampled plant.
     limits : dict, optional
         Limits by claim name, instead of the defaults.
     second_opinion : bool or None
@@ -178,6 +194,22 @@ def convert(
     """
     started = time.perf_counter()
     source = model_of(model)
+    estimation: dict[str, Any] = {
+        "averaging": averaging,
+        "estimator": estimator,
+        "window": window,
+        "segment": segment,
+        "overlap": overlap,
+        "excitation_period": excitation_period,
+        "settling": settling,
+    }
+    given = sampled or any(value is not None for value in estimation.values())
+    if isinstance(source, TimeRecord) and to == "frequency-response":
+        from realize.steps.measured import estimated
+
+        return estimated([source], sampled=sampled, limits=limits, **estimation)
+    if given:
+        raise UsageError("options of time data go with a time record and --to frequency-response")
     task = _task(source, to, form, common_denominator, digits, arithmetic, ordering, force, side)
     wanted: dict[str, Any] = {"frequencies": frequencies, "band": band, "count": count, "period": period}
     if to in TABULATED_KINDS:

@@ -7,7 +7,7 @@ from typing import Any, NamedTuple
 
 import numpy as np
 
-from realize.models import FrequencyResponse, Model, StateSpace, TransferFunction
+from realize.models import FrequencyResponse, Model, StateSpace, TimeRecord, TransferFunction
 from realize.models.state_space import is_identity
 from realize.steps.receipts import FRAGILE, probe_frequencies
 from realize.verification import View
@@ -343,6 +343,28 @@ def _numbers(model: Model, record: dict[str, Any], view: View) -> Iterator[Findi
 def remarks_of(model: Model) -> list[Finding]:
     """Return what the reader of the file had to say."""
     return [Finding("file", f"{text[:1].upper()}{text[1:]}.") for text in model.remarks]
+
+
+def record_findings(model: TimeRecord) -> list[Finding]:
+    """Return what is worth a word about a time record."""
+    found = []
+    for side, values, signals in (("input", model.input, model.inputs), ("output", model.output, model.outputs)):
+        for k in np.flatnonzero(np.all(values == values[:1], axis=0)):
+            name = signals[k].name if signals and signals[k].name else str(k)
+            found.append(Finding("record", f"The {side} {name} is constant.", "Check the channel and its wiring."))
+        top = np.abs(values).max(axis=0)
+        for k in np.flatnonzero(top > 0):
+            at_the_end = np.sum(np.abs(values[:, k]) == top[k])
+            if at_the_end > max(4, 0.01 * values.shape[0]) and at_the_end < 0.3 * values.shape[0]:
+                name = signals[k].name if signals and signals[k].name else str(k)
+                found.append(
+                    Finding(
+                        "record",
+                        f"The {side} {name} is at {top[k]:.6g}, its largest value, in {at_the_end} samples: clipped?",
+                        "Check the range of the instrument.",
+                    )
+                )
+    return found
 
 
 def data_findings(model: FrequencyResponse) -> list[Finding]:

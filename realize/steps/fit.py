@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Sequence
 from typing import Any
 
 import numpy as np
@@ -11,8 +12,9 @@ from realize.conversions import Task, convert_model, plan_route
 from realize.errors import InputError, UsageError
 from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue, ZeroPoleGain
 from realize.schema import ESTIMATED_DEAD_TIMES, FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
-from realize.steps.conversion import Conversion, model_of
+from realize.steps.conversion import Conversion
 from realize.steps.fit_record import fit_details
+from realize.steps.measured import response_of
 from realize.steps.receipts import finish
 from realize.steps.second_opinion import asking
 from realize.verification.misfit import misfit, rms_misfit, weighted_misfit, worst_misfit
@@ -20,7 +22,7 @@ from realize.verification.stability import order_claim, stability_claim
 
 
 def fit(
-    data: Model | Conversion,
+    data: Model | Conversion | Sequence[Model | Conversion],
     *,
     to: str = "state-space",
     order: int | tuple[int, int] | str = "auto",
@@ -34,14 +36,25 @@ def fit(
     symmetric: bool = False,
     allow_unstable: bool = False,
     band: tuple[float, float] | None = None,
+    averaging: str | None = None,
+    estimator: str | None = None,
+    window: str | None = None,
+    segment: int | None = None,
+    overlap: float | None = None,
+    excitation_period: int | None = None,
+    settling: float | None = None,
+    sampled: bool = False,
+    names: Sequence[str] | None = None,
     limits: dict[str, float] | None = None,
     second_opinion: bool | None = False,
 ) -> Conversion:
-    """Turn a measured frequency response into a model.
+    """Turn measured data into a model.
 
     Parameters
     ----------
-    data : FrequencyResponse
+    data : FrequencyResponse, TimeRecord, or several runs of one
+        Runs of a frequency response are merged into their mean, with the deviation of the mean; time records are
+        averaged together into one frequency response.
     to : str
         Kind of the result.
     order : int, (low, high) or "auto"
@@ -65,6 +78,12 @@ def fit(
         Poles may be unstable where the data ask for it.
     band : (low, high), optional
         Use only these frequencies, rad/s.
+    averaging, estimator, window, segment, overlap, excitation_period, settling : optional
+        How time records become a frequency response: see ``realize.estimation.Settings``.
+    sampled : bool
+        The inputs of the time records are held between the samples: the model is that of the sampled plant.
+    names : sequence of str, optional
+        What to call the runs.
     limits : dict, optional
         Limits by claim name.
     second_opinion : bool
@@ -80,14 +99,21 @@ def fit(
     InputError, UsageError, Refused
     """
     started = time.perf_counter()
-    source = model_of(data)
-    if not isinstance(source, FrequencyResponse):
-        raise UsageError(f"fit takes a frequency response, and this is a {source.kind}; use convert or reduce")
     if to not in UNIVERSAL_KINDS:
         raise UsageError(f"no kind {to!r} to fit; there are: {', '.join(UNIVERSAL_KINDS)}")
     if method not in FIT_METHODS:
         raise UsageError(f"no method {method!r}; there are: {', '.join(FIT_METHODS)}")
     given = limits or {}
+    estimation = {
+        "averaging": averaging,
+        "estimator": estimator,
+        "window": window,
+        "segment": segment,
+        "overlap": overlap,
+        "excitation_period": excitation_period,
+        "settling": settling,
+    }
+    source, told, seen = response_of(data, names, sampled, estimation)
     keep = _lines(source, band)
     from realize.steps.constraints import constraint_claims, structure_of
 
@@ -147,7 +173,7 @@ def fit(
     claims += [weighted] if weighted is not None else []
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
     claims += constraint_claims(structure, result, given)
-    cautions = list(found.cautions)
+    cautions = [*told, *found.cautions]
     hertz = w / (2 * np.pi)
     cautions.append(
         f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({hertz[0]:.6g} to {hertz[-1]:.6g} Hz): "
@@ -165,7 +191,7 @@ def fit(
             cautions=cautions,
             opinion=opinion,
             limits=limits,
-            details=fit_details(found, source, w, chosen=not isinstance(order, int)),
+            details=fit_details(found, source, w, chosen=not isinstance(order, int)) | seen,
         )
 
 

@@ -7,9 +7,9 @@ from typing import Any
 import numpy as np
 
 from realize.errors import Refused
-from realize.models import FrequencyResponse, ImpulseResponse, Model, mark
+from realize.models import FrequencyResponse, ImpulseResponse, Model, TimeRecord, mark
 from realize.steps.conversion import Conversion, model_of
-from realize.steps.findings import Finding, data_findings, findings_of, remarks_of
+from realize.steps.findings import Finding, data_findings, findings_of, record_findings, remarks_of
 from realize.steps.hankel import hankel_singular_values
 from realize.steps.inspect_poles import minimal_order_of, roots_of, stability_of
 from realize.steps.inspect_structure import damping_and_frequency, indices_of, relative_degrees, scaling_of
@@ -57,6 +57,8 @@ def inspect(model: Model | Conversion) -> dict[str, Any]:
         return record | _data(model)
     if isinstance(model, ImpulseResponse):
         return record | _samples(model)
+    if isinstance(model, TimeRecord):
+        return record | _record(model)
     cautions: list[str] = []
     view = view_of(model)
     poles, zeros = roots_of(view, cautions)
@@ -114,6 +116,15 @@ def _samples(model: ImpulseResponse) -> dict[str, Any]:
         "samples": int(model.samples.shape[0]),
         "largest_value": float(np.abs(model.samples).max()),
     } | _told(remarks_of(model))
+
+
+def _record(model: TimeRecord) -> dict[str, Any]:
+    return {
+        "step_of_time": model.period,
+        "samples": int(model.input.shape[0]),
+        "largest_input": np.abs(model.input).max(axis=0).tolist(),
+        "largest_output": np.abs(model.output).max(axis=0).tolist(),
+    } | _told([*remarks_of(model), *record_findings(model)])
 
 
 def _data(model: FrequencyResponse) -> dict[str, Any]:

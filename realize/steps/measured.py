@@ -151,3 +151,25 @@ def merged(runs: Sequence[FrequencyResponse], names: Sequence[str] | None = None
     if not np.all(deviation > 0):
         remarks.append("the runs agree to the last digit at some lines: they look like copies of one run")
     return first.with_(response=mean, deviation=deviation, coherence=None, remarks=tuple(dict.fromkeys(remarks)))
+
+
+def response_of(
+    data: Any, names: Sequence[str] | None, sampled: bool, estimation: dict[str, Any]
+) -> tuple[FrequencyResponse, list[str], dict[str, Any]]:
+    """Return the frequency response that a fit takes, cautions about how it came about, and details for the receipt."""
+    runs = runs_of(data)
+    records = [run for run in runs if isinstance(run, TimeRecord)]
+    if records:
+        made = estimated(records, sampled=sampled, names=names, **estimation)
+        assert isinstance(made.model, FrequencyResponse)
+        told = [*records[0].remarks, *made.receipt.cautions[:-1]]
+        return made.model, list(dict.fromkeys(told)), made.receipt.details
+    if sampled or settings_of(estimation):
+        raise UsageError(f"options of time data go with a time record, and this is a {runs[0].kind}")
+    responses = [run for run in runs if isinstance(run, FrequencyResponse)]
+    if not responses:
+        raise UsageError(
+            f"fit takes a frequency response or a time record, and this is a {runs[0].kind}; use convert or reduce"
+        )
+    details = {} if len(runs) == 1 else {"runs": [mark(run).digest for run in runs]}
+    return merged(responses, names), [], details

@@ -273,8 +273,8 @@ def test_registry_refuses_duplicates():
         register(Format("other", "", (".json",), row.sniff))
     with pytest.raises(ValueError, match="dot"):
         register(Format("other", "", ("json",), row.sniff))
-    assert set(files.FORMATS) == {"json", "npz", "table", "touchstone"}
-    assert all(row.can_read and (row.can_write or row.name == "touchstone") for row in files.FORMATS.values())
+    assert set(files.FORMATS) == {"json", "npy", "npz", "table", "touchstone"}
+    assert all(row.can_read and (row.can_write or row.name in ("touchstone", "npy")) for row in files.FORMATS.values())
 
 
 MODEL = TransferFunction(numerator=[1], denominator=[1, 2])

@@ -163,7 +163,7 @@ def test_invalid_utf8_is_placed(tmp_path):
         (b"\x89HDF\r\n\x1a\n", "HDF5"),
         (b"PK\x03\x04rubbish", "damaged"),
         (b"\x1f\x8b123", "gzip"),
-        (b"\x93NUMPY\x01", "numpy"),
+        (b"\x93NUMPY\x01", "numpy.save"),
         (b"%%MatrixMarket matrix array real general\n1 1\n1\n", "Matrix Market"),
         (b"\x00" * 1000, "binary"),
         (b"hello world", "neither"),

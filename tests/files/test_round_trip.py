@@ -97,6 +97,11 @@ def records(draw, kind):
         record["period"] = draw(st.floats(1e-300, 1e300))
         record.pop("time", None)
         record["samples"] = draw(st.lists(matrix(p, m, REALS), min_size=1, max_size=4))
+    elif kind == "time-record":
+        record["period"] = draw(st.floats(1e-300, 1e300))
+        record.pop("time", None)
+        k = draw(st.integers(1, 4))
+        record["input"], record["output"] = draw(matrix(k, m)), draw(matrix(k, p))
     elif kind == "second-order":
         n = max(n, 1)
         record.update({name: draw(matrix(n, n)) for name in ("mass", "damping", "stiffness")}, input=draw(matrix(n, m)))

@@ -92,7 +92,7 @@ def test_defaults_are_those_of_the_schema(name: str) -> None:
 @pytest.mark.parametrize("name", ["convert", "minimal", "reduce", "fit", "inspect", "compare"])
 def test_python_functions_take_the_options_of_the_schema(name: str) -> None:
     given = set(inspect.signature(getattr(realize, name)).parameters)
-    shell_only = {"explain", "columns", "history"}  # explain and history are functions of their own
+    shell_only = {"explain", "columns", "rate", "history"}  # explain and history are functions of their own
     own = {option.keyword for option in VERBS[name].options} - shell_only
     assert own <= given, own - given
 
