@@ -150,10 +150,10 @@ def test_hostile_files_among_good_ones(folder: Make) -> None:
 
 
 def test_a_file_that_takes_too_long_or_too_much_is_set_aside(folder: Make) -> None:
-    text = HEAD.replace("plants/*.json", "plants/*") + 'time-limit = 8\nmemory-limit = "250MiB"\n'
+    text = HEAD.replace("plants/*.json", "plants/*") + 'time-limit = 12\nmemory-limit = "500MiB"\n'
     root = folder(6, text + CONVERT.replace('"state-space"', '"transfer-function"\narithmetic = "exact"'))
     rng = np.random.default_rng(1)
-    slow, large = 260, 4500
+    slow, large = 260, 6500
     for name, n in (("p0002-slow", slow), ("p0004-large", large)):
         A = rng.standard_normal((n, n)) if n == slow else np.zeros((n, n))
         np.savez_compressed(root / "plants" / f"{name}.npz", A=A, B=np.ones((n, 1)), C=np.ones((1, n)))
