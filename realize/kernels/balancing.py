@@ -26,6 +26,8 @@ EPS = float(np.finfo(float).eps)
 JACOBI_ORDER = 200
 #: Binary digits that A must lose in size before its loops alone scale the states.
 WORTH_IT = 3
+#: Binary digits that couplings must stand above the loops before chains are scaled by themselves, and how often.
+FAR, REPEATED = 40, 40
 #: How many frequencies, those of the poles nearest to the axis, tell what rounding in A does to the response.
 SENSITIVE_FREQUENCIES = 24
 
@@ -119,6 +121,40 @@ def _scale_of_loops(pattern: Array, n: int) -> NDArray[np.int64] | None:
     return states + _exponents(balancing_scale(outer)[:count])[label]
 
 
+def far_apart(A: Array) -> bool:
+    """Say whether couplings that are part of no loop stand far above everything that is part of one."""
+    return bool(np.any(A) and np.all(np.isfinite(A))) and _size_of_loops(A) + FAR < _top(A)
+
+
+def _scale_of_chains(A: Array, B: Array, C: Array, states: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Return exponents of states in whose units couplings that are part of no loop come near to the loops in size.
+
+    The border counts in units of the loops, inputs and outputs are brought to size 1 again and again: each time a
+    coupling gives a share of its size to them.
+    """
+    n, m, p = A.shape[0], B.shape[1], C.shape[0]
+    time, size = _size_of_loops(A) - 1, _size(A, states)
+    border = np.zeros((n + m + p, n + m + p))
+    for _ in range(REPEATED):
+        inner = _exponent_table(A, states[None, :] - states[:, None] - time)
+        first, last = _exponent_table(B, -states[:, None]), _exponent_table(C, states[None, :])
+        border[:n, :n] = np.exp2(np.clip(inner, -900, 900))
+        border[:n, n : n + m] = np.exp2(np.clip(first - first.max(), -900, 0))
+        border[n + m :, :n] = np.exp2(np.clip(last - last.max(), -900, 0))
+        more = _exponents(balancing_scale(border)[:n])
+        smaller = _size(A, states + more)
+        if smaller >= size:
+            break
+        states, size = states + more, smaller
+    return states
+
+
+def _exponent_table(matrix: Array, more: NDArray[np.int64]) -> Array:
+    """Return log2 of the sizes of the entries, rounded up, after a scaling; minus infinity for zeros."""
+    mantissa, exponent = np.frexp(np.abs(matrix))
+    return np.where(mantissa > 0, exponent + more, -np.inf)
+
+
 def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
     """Take units of time, inputs, outputs and states out of a model in powers of two.
 
@@ -158,6 +194,8 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             by_loops = _scale_of_loops(pattern, n) if _size_of_loops(A) - 1 + WORTH_IT < size else None
             if by_loops is not None and _size(A, by_loops) + WORTH_IT < size:
                 states = by_loops
+            elif _size_of_loops(A) + FAR < size:
+                states = _scale_of_chains(A, B, C, states)
             between = states[None, :] - states[:, None]
             own = _power(A, between)
             if not np.all(np.isfinite(own)):

@@ -15,6 +15,7 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
+from realize.kernels.balancing import far_apart, scale_model
 from realize.kernels.lyapunov import NotStable, observability_factor, schur_eigenvalues, schur_gramian_factors
 from realize.kernels.response import DIRECT_SIZE, balanced_states, state_response, triangular_blocks
 
@@ -160,11 +161,16 @@ def _units(A: Array, B: Array, C: Array, D: Array, sampled: bool) -> tuple[Array
         b, c = top(B), top(C)
         B, C = np.ldexp(B, -b), np.ldexp(C, -c)
         A, B, C, _ = balanced_states(A, B, C, None)
-        time = 0 if sampled else top(A)
-        gain = b + c - time
+        if far_apart(A):
+            # couplings that are part of no loop must not set the unit of time
+            scaled = scale_model(A, B, C, sampled=sampled)
+            A, B, C, time, gain = scaled.A, scaled.B, scaled.C, scaled.time, b + c + scaled.gain
+        else:
+            time = 0 if sampled else top(A)
+            A, gain = np.ldexp(A, -time), b + c - time
         extra_b, extra_c = top(B), top(C)
         gain += extra_b + extra_c
-        A, B, C = np.ldexp(A, -time), np.ldexp(B, -extra_b), np.ldexp(C, -extra_c)
+        B, C = np.ldexp(B, -extra_b), np.ldexp(C, -extra_c)
         if not np.any(B) or not np.any(C):
             gain = top(D)
         shift = gain - top(D) if np.any(D) else 0
@@ -381,11 +387,17 @@ def squared_norm(A: Array, B: Array, C: Array, D: Array, *, sampled: bool) -> fl
     if A.shape[0] == 0:
         return direct
     b, c = _exponent(B), _exponent(C)
-    time = 0 if sampled else _exponent(A)
-    time += time % 2
     with np.errstate(under="ignore"):
         B, C = np.ldexp(B, -b), np.ldexp(C, -c)
-        A, B, C, _ = balanced_states(np.ldexp(A, -time), B, C, None)
+        if far_apart(A):
+            scaled = scale_model(A, B, C, sampled=sampled)
+            A, B, C, time = scaled.A, scaled.B, scaled.C, scaled.time
+            b, c = b + scaled.input, c + scaled.output
+            A, time = np.ldexp(A, -(time % 2)), time + time % 2
+        else:
+            time = 0 if sampled else _exponent(A)
+            time += time % 2
+            A, B, C, _ = balanced_states(np.ldexp(A, -time), B, C, None)
     T, Q = scipy.linalg.schur(A, output="real", check_finite=False)
     if np.any(np.abs(schur_eigenvalues(T)) >= 1) if sampled else np.any(schur_eigenvalues(T).real >= 0):
         raise NotStable("a pole lies on or outside the boundary of the stability region")

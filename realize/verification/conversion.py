@@ -23,7 +23,7 @@ from realize.verification.bands import (
     zero_channel,
 )
 from realize.verification.glance import Found
-from realize.verification.pair import Pair, frobenius
+from realize.verification.pair import Pair, frobenius, of_channel
 from realize.verification.proof import SMALLEST
 from realize.verification.search import LIGHT, Band, axis_intervals, largest, seeds, sharpened, summits
 from realize.verification.views import view_of
@@ -45,12 +45,14 @@ def _quotient(
     channel: tuple[int, int] | None,
     divisor: float,
 ) -> Array:
-    """Return the error at w relative to the source, light zeros from the edges of their interval, or to a divisor."""
-    difference, size = sizes
-    above = frobenius(difference) if channel is None else difference[:, channel[0], channel[1]]
+    """Return the error at w relative to the source, light zeros from the edges of their interval, or to a divisor.
+
+    `sizes` are those of the channel, or of all of them.
+    """
+    above = frobenius(sizes[0])
     if divisor:
         return above / divisor
-    below = frobenius(size) if channel is None else size[:, channel[0], channel[1]]
+    below = frobenius(sizes[1])
     for line in lines:
         near = np.abs(w - line) <= LIGHT * line
         if near.any():
@@ -76,7 +78,8 @@ def largest_error(
     w, difference, size = pair.grid
     inside = band.contains(w)
     w = w[inside]
-    start = _quotient(pair, w, (difference[inside], size[inside]), lines, channel, divisor)
+    known = of_channel(difference[inside], channel), of_channel(size[inside], channel)
+    start = _quotient(pair, w, known, lines, channel, divisor)
     if w.size and pair.provable(channel) and np.isfinite(start).all():
         # the proof finds what the samples miss: near is near enough
         def error(x: float) -> float:
@@ -84,13 +87,17 @@ def largest_error(
 
         return sharpened(error, max((error(x), x) for x in summits(w, start, band)), band)
     found, where = largest(
-        lambda x: _quotient(pair, x, pair.quick_sizes(x), lines, channel, divisor), w, band, rounds=2, values=start
+        lambda x: _quotient(pair, x, pair.quick_sizes(x, channel), lines, channel, divisor),
+        w,
+        band,
+        rounds=2,
+        values=start,
     )
     if not pair.exact or not np.isfinite(found) or w.size == 0:
         return found, where
     if not pair.provable(channel):
         at = np.array([where])
-        return float(_quotient(pair, at, pair.sizes(at), lines, channel, divisor)[0]), where
+        return float(_quotient(pair, at, pair.sizes(at, channel), lines, channel, divisor)[0]), where
     return _exact_error(pair, where, lines, channel, divisor), where
 
 
@@ -173,13 +180,13 @@ def channel_error(pair: Pair, limit: float | None = None) -> Claim:
                 lines = light_zeros(view.channel_roots[i][j][0])
                 intervals = intervals_of(pair, band, lines, (i, j)) if pair.exact else []
 
-            def of_channel(
+            def claimed(
                 found: Found, channel: tuple[int, int] = (i, j), intervals: list[Interval] = intervals
             ) -> Claim:
                 place = {"frequency": found.where, "output": channel[0], "input": channel[1]}
                 return _claimed("channel-error", pair, found.value, place, limit, intervals, channel, found.near)
 
-            claim = _looked(of_channel, partial(_search_channel, pair, band, lines, (i, j), reference))
+            claim = _looked(claimed, partial(_search_channel, pair, band, lines, (i, j), reference))
             if worst is None or _total(claim) > _total(worst):
                 worst = claim
     assert worst is not None

@@ -36,6 +36,10 @@ class _Rows(NamedTuple):
     always: NDArray[np.int64]
 
 
+#: The rows of one channel by itself.
+_ONE = _Rows(np.array([0]), np.array([1]), np.array([2]), np.array([3]), np.zeros(1, dtype=bool), np.array([0, 2, 3]))
+
+
 @dataclass(frozen=True)
 class Pair:
     """Source and result, with their difference evaluated where needed."""
@@ -115,14 +119,16 @@ class Pair:
         )
         return first, second
 
-    def sizes(self, w: Array) -> tuple[Array, Array]:
-        """Return |dG| and |G_source| of each channel, in units of 2^exponent: two arrays [k][p][m]."""
-        p, m = self.source.model.shape
+    def sizes(self, w: Array, channel: tuple[int, int] | None = None) -> tuple[Array, Array]:
+        """Return |dG| and |G_source| of each channel, in units of 2^exponent: two arrays [k][p][m], or [k][1][1]."""
+        p, m = self.source.model.shape if channel is None else (1, 1)
         if self.exact:
             difference, size = np.empty((w.size, p, m)), np.empty((w.size, p, m))
             from realize.kernels.exact.evaluation import difference as exact_difference
 
             one, two = self.scaled
+            if channel is not None:
+                one, two = ([[grid[channel[0]][channel[1]]]] for grid in (one, two))
             for i in range(p):
                 for j in range(m):
                     (n1, d1), (n2, d2) = one[i][j], two[i][j]
@@ -135,7 +141,7 @@ class Pair:
                     difference[:, i, j], size[:, i, j] = value, reference
             return difference, size
         first, second = self.source.response(w), self.result.response(w)
-        return np.abs(first - second), np.abs(first)
+        return of_channel(np.abs(first - second), channel), of_channel(np.abs(first), channel)
 
     @cached_property
     def band(self) -> Band:
@@ -176,9 +182,7 @@ class Pair:
                 proof = self.proof(channel)
                 self._proofs[key] = max(proof.gain_at(low), proof.gain_at(high))
             else:
-                edges = self.sizes(np.array([low, high]))[1]
-                chosen = frobenius(edges) if channel is None else edges[:, channel[0], channel[1]]
-                self._proofs[key] = float(chosen.max())
+                self._proofs[key] = float(frobenius(self.sizes(np.array([low, high]), channel)[1]).max())
         return self._proofs[key]
 
     @cached_property
@@ -211,15 +215,21 @@ class Pair:
         unit = 1.0 if self.source.period is not None else float(2.0 ** np.rint(np.log2(float(self._unit))))
         return Moduli(images, unit), table
 
-    def quick_sizes(self, w: Array) -> tuple[Array, Array]:
+    def quick_sizes(self, w: Array, channel: tuple[int, int] | None = None) -> tuple[Array, Array]:
         """Return |dG| and |G_source| as `sizes` does, to about 1 %: in doubles where their rounding bound allows it."""
         if not self.exact:
-            return self.sizes(w)
+            return self.sizes(w, channel)
         moduli, table = self._quick
         p, m = self.source.model.shape
+        rows = None
+        if channel is not None:
+            place = channel[0] * m + channel[1]
+            p, m = 1, 1
+            rows = np.array([table.M[place], table.n1[place], table.d1[place], table.d2[place]])
+            table = _ONE._replace(zero=table.zero[place : place + 1])
         with np.errstate(over="ignore", invalid="ignore"):
             x = w / moduli.unit if self.source.period is None else np.abs(np.tan(w * self.source.period / 2))
-        logarithm, bound = moduli(x)
+        logarithm, bound = moduli(x, rows)
         with np.errstate(over="ignore", under="ignore", invalid="ignore"):
             above = np.exp2(logarithm[table.M] - logarithm[table.d1] - logarithm[table.d2])
             below = np.exp2(logarithm[table.n1] - logarithm[table.d1])
@@ -229,13 +239,21 @@ class Pair:
         doubtful |= (poor[table.n1] | (below < _LOW))[~table.zero].any(axis=0)
         difference, size = above.T.reshape(w.size, p, m), below.T.reshape(w.size, p, m)
         if doubtful.any():
-            difference[doubtful], size[doubtful] = self.sizes(w[doubtful])
+            difference[doubtful], size[doubtful] = self.sizes(w[doubtful], channel)
         return difference, size
 
     @property
     def identical(self) -> bool:
         """True where both are one model."""
         return self.source is self.result
+
+
+def of_channel(values: Array, channel: tuple[int, int] | None) -> Array:
+    """Return the values [k][1][1] of one channel, or all of them."""
+    if channel is None:
+        return values
+    i, j = channel
+    return values[:, i : i + 1, j : j + 1]
 
 
 def frobenius(values: Array) -> Array:

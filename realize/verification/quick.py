@@ -74,20 +74,29 @@ class Moduli:
         reverse = (table * sign)[:, ::-1]
         self._high = _halves(reverse)
 
-    def __call__(self, x: Array) -> tuple[Array, Array]:
-        """Return log2 |p| and a bound on its relative error, arrays [polynomial][k], at x = w / unit >= 0."""
-        logarithm = np.empty((self.exponent.size, x.size))
+    def __call__(self, x: Array, rows: NDArray[np.int64] | None = None) -> tuple[Array, Array]:
+        """Return log2 |p| and a bound on its relative error, arrays [polynomial][k], at x = w / unit >= 0.
+
+        Parameters
+        ----------
+        x : (k,) array
+        rows : int array, optional
+            Which polynomials, all unless given.
+        """
+        chosen = slice(None) if rows is None else rows
+        exponent = self.exponent[chosen]
+        logarithm = np.empty((exponent.size, x.size))
         bound = np.empty_like(logarithm)
         small = x <= 1
         with np.errstate(divide="ignore", invalid="ignore", over="ignore", under="ignore"):
-            for part, halves in ((small, self._low), (~small, self._high)):
-                if not part.any():
+            for here, halves in ((small, self._low), (~small, self._high)):
+                if not here.any():
                     continue
-                y = x[part] if halves is self._low else 1 / x[part]
-                value, total = _horner(halves, y)
-                logarithm[:, part] = np.log2(value)
-                bound[:, part] = total / value
-            logarithm += self.exponent[:, None]
+                y = x[here] if halves is self._low else 1 / x[here]
+                value, total = _horner(tuple(part[chosen] for part in halves), y)
+                logarithm[:, here] = np.log2(value)
+                bound[:, here] = total / value
+            logarithm += exponent[:, None]
             logarithm[:, ~small] += self.degree * np.log2(x[~small])
         bound *= 8 * (self.degree + 2) * np.finfo(float).eps
         return logarithm, np.where(np.isnan(bound), np.inf, bound)
@@ -98,7 +107,7 @@ def _halves(table: Array) -> tuple[Array, Array, Array, Array]:
     return even, odd, np.abs(even), np.abs(odd)
 
 
-def _horner(halves: tuple[Array, Array, Array, Array], y: Array) -> tuple[Array, Array]:
+def _horner(halves: tuple[Array, ...], y: Array) -> tuple[Array, Array]:
     """Return |even + j y odd| and the sum of the moduli of the terms."""
     square = y * y
     sums = []

@@ -14,6 +14,7 @@ from realize.schema.records import Basis
 from realize.verification.bands import whole_band
 from realize.verification.difference import linf_error
 from realize.verification.fragility import fragility_at
+from realize.verification.pair import frobenius
 from realize.verification.proof import square_root
 from realize.verification.search import Band, largest, seeds
 from realize.verification.views import view_of
@@ -163,7 +164,6 @@ def _steady_state(source: Model, result: StateSpace, limit: float | None) -> Cla
         here, there = source.rational_part(at)[0], result.rational_part(at)[0]
     if not np.all(np.isfinite(here)):
         return judge(name, None, limit=limit, note="the plant has a pole at zero frequency")
-    size = float(np.linalg.norm(here))
-    difference = float(np.linalg.norm(there - here))
+    size, difference = (float(frobenius(np.abs(part)[None])[0]) for part in (here, there - here))
     value = difference / size if size > 0 else (0.0 if difference == 0 else math.inf)
     return judge(name, value, limit=limit, where=place, note="evaluated in double arithmetic")

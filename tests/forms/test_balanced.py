@@ -182,8 +182,19 @@ def test_order_zero_is_a_model_too() -> None:
 
 
 def test_a_coupling_beyond_precision_is_refused_in_words() -> None:
-    """-1 beside 1e300 is zero to working precision: no Gramian, and no traceback."""
-    plant = realize.StateSpace(A=[[-1.0, 1e300], [0.0, -1.0]], B=[[0.0], [1.0]], C=[[1.0, 0.0]])
+    """-1 beside a loop of 1e300 is zero to working precision: no coordinates from Gramians, and no traceback."""
+    plant = realize.StateSpace(A=[[-1.0, 1e300], [-1e300, -1.0]], B=[[0.0], [1.0]], C=[[1.0, 0.0]])
     for form in ("balanced", "input-normal", "output-normal"):
-        with pytest.raises(realize.Refused, match="Gramians do not exist"):
+        with pytest.raises(realize.Refused, match="ruin this model"):
             realize.convert(plant, "state-space", form=form)
+
+
+@pytest.mark.parametrize("coupling", [1e300, 1e-300, 1e40])
+def test_a_coupling_in_no_loop_is_a_matter_of_units(coupling: float) -> None:
+    """Of 1 / (s + 1)^2 the Hankel singular values are (sqrt(2) + 1) / 4 and (sqrt(2) - 1) / 4."""
+    plant = realize.StateSpace(A=[[-1.0, coupling], [0.0, -1.0]], B=[[0.0], [1.0]], C=[[1.0, 0.0]])
+    made = realize.convert(plant, "state-space", form="balanced")
+    assert max(claim.value for claim in made.receipt.claims if claim.name == "peak-error") < 1e-14
+    small = realize.reduce(plant, order=1)
+    values = np.array(small.receipt.details["hankel_singular_values"])
+    assert values == pytest.approx(coupling * np.array([np.sqrt(2) + 1, np.sqrt(2) - 1]) / 4, rel=1e-13)
