@@ -76,7 +76,8 @@ def _orders(candidates: Any, weighted: bool, band: Any) -> Any:
 
 def _loops(loop: Mapping[str, Any]) -> list[Any]:
     full, reduced = loop["full"], loop["reduced"]
-    rows = [["stable (eigenvalues)", *("yes" if one["stable"] else "NO" for one in (full, reduced)), ""]]
+    said = {True: "yes", False: "NO", None: "not known"}
+    rows = [["stable", *(said[one["stable"]] for one in (full, reduced)), ""]]
     rows.append(["worst pole", *(_pole(one["worst_pole"]) for one in (full, reduced)), ""])
     for name, title in _LOOP_ROWS:
         if full.get(name) is None and reduced.get(name) is None:

@@ -153,9 +153,7 @@ def reduce(
                 row["error"] = _found_error(claims, weights)
         details["licence"] = {"given": permit.given, "margin": permit.margin, "sentence": permit.sentence}
         cautions = list(found.notes)
-        if loop is not None and loop.dead_time:
-            cautions.append("The loop was not looked at: a loop with dead time is not rational.")
-        elif loop is not None:
+        if loop is not None:
             details["closed_loop"] = loop_details(loop, plain, result, weights)
             cautions += loop_cautions(details["closed_loop"], permit.margin)
         return finish(

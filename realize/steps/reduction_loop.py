@@ -14,12 +14,19 @@ from realize.models import Model, StateSpace
 from realize.steps.conversion import Conversion, model_of
 from realize.steps.ordinary import states_of
 from realize.verification.closed_loop import checked_loop, loop_record
+from realize.verification.delayed_loop import delayed_record
 
 Array = NDArray[np.float64]
 
 MEASURED_LOOPS = (
     "Both loops were looked at themselves: stability by the eigenvalues of the whole loop, margins in double "
     "arithmetic where they are not marked as proved."
+)
+
+
+DELAYED_LOOPS = (
+    "Both loops were looked at themselves, dead time included, in double arithmetic: a sampled one with its registers "
+    "as states, a continuous one by the encirclements that its frequency response makes. Nothing of that is proved."
 )
 
 
@@ -125,7 +132,8 @@ def around(source: Model, controller: Model | Conversion | None, plant: Model | 
 
 def loop_details(loop: Around, full: StateSpace, reduced: StateSpace, weights: Weights) -> dict[str, Any]:
     """Return the loops with the full and with the reduced model, and what is lost between them."""
-    one, two = (loop_record(*loop.halves(model.with_(dead_time=None), weights)) for model in (full, reduced))
+    look = delayed_record if loop.dead_time else loop_record
+    one, two = (look(*loop.halves(model, weights)) for model in (full, reduced))
 
     def lost(name: str) -> float | None:
         before, after = one.get(name), two.get(name)
@@ -135,6 +143,7 @@ def loop_details(loop: Around, full: StateSpace, reduced: StateSpace, weights: W
 
     return {
         "of": "plant" if loop.controller else "controller",
+        "dead_time": loop.dead_time,
         "full": one,
         "reduced": two,
         "loss": {name: lost(name) for name in ("stability_margin", "gain_margin", "phase_margin")},
@@ -145,10 +154,11 @@ def loop_cautions(details: dict[str, Any], licensed: float | None) -> list[str]:
     """Return what has to be said about the loops."""
     full, reduced = details["full"], details["reduced"]
     notes = []
-    if not full["stable"]:
-        notes.append("The loop u = -K y with the full model is NOT stable.")
-    if not reduced["stable"]:
-        notes.append("The loop u = -K y with the reduced model is NOT stable.")
+    for name, one in (("full", full), ("reduced", reduced)):
+        if one["stable"] is None:
+            notes.append(f"Whether the loop u = -K y with the {name} model is stable is not known: {one['note']}.")
+        elif not one["stable"]:
+            notes.append(f"The loop u = -K y with the {name} model is NOT stable.")
     if full["stable"] and reduced["stable"]:
         before, after = full["stability_margin"], reduced["stability_margin"]
         if after < before / 2 or before < after / 2:
@@ -168,5 +178,5 @@ def loop_cautions(details: dict[str, Any], licensed: float | None) -> list[str]:
                     f"The licence does not cover this controller: its margin with the reduced model, {after:.3g}, "
                     f"was not shown to exceed {licensed:.3g}. The loop with the full model was looked at itself."
                 )
-    notes.append(MEASURED_LOOPS)
+    notes.append(DELAYED_LOOPS if details["dead_time"] else MEASURED_LOOPS)
     return notes

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 from typing import Any
 
 import numpy as np
@@ -128,6 +129,20 @@ def _sampled_margins(plant: StateSpace, controller: StateSpace) -> dict[str, Any
         points = plant.time.points(x)
         with np.errstate(all="ignore"):
             return np.asarray((plant.rational_part(points) * controller.rational_part(points))[:, 0, 0], dtype=complex)
+
+    return crossing_margins(loop, w)
+
+
+def crossing_margins(loop: Callable[[Array], NDArray[np.complex128]], w: Array) -> dict[str, Any]:
+    """Return gain and phase margin (degrees) from samples of the loop gain: crossings between neighbours are bisected.
+
+    Parameters
+    ----------
+    loop : callable
+        Frequencies (rad/s) to values of K P.
+    w : (k,) array
+        Rising, above zero.
+    """
 
     def zeros(size: Any) -> Array:
         values = size(loop(w))
