@@ -21,10 +21,27 @@ def main() -> int:
     try:
         from realize.commands.main import run
 
-        return run(sys.argv[1:])
+        status = run(sys.argv[1:])
     except KeyboardInterrupt:
         sys.stderr.write("realize: interrupted; nothing was half-written\n")
-        return 130
+        status = 130
+    return status if status != 130 else _ended(status)
+
+
+def _ended(status: int) -> int:
+    """End the process with this status.
+
+    The interpreter remembers an interruption that met code run from a string (some modules run such code while they
+    are imported), and would end by the signal in place of the status although the interruption was dealt with.
+    """
+    import atexit
+    import contextlib
+
+    atexit._run_exitfuncs()
+    for stream in (sys.stdout, sys.stderr):
+        with contextlib.suppress(OSError):
+            stream.flush()
+    os._exit(status)
 
 
 if __name__ == "__main__":

@@ -152,7 +152,7 @@ def take_units_out(A: Array, B: Array, C: Array, setting: Setting) -> Units:
     Refused
         If the range of doubles does not hold the scaled model.
     """
-    from realize.kernels.balancing import scale_model
+    from realize.kernels.unit_scaling import scale_model
 
     own = scale_model(A, B, C, sampled=setting.sampled)
     # what inputs and outputs have is shared out evenly, so that B and C are of like size in the end

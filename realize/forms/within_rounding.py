@@ -12,8 +12,8 @@ from numpy.typing import NDArray
 
 from realize.forms.minimal_states import BOTH, UNOBSERVABLE, UNREACHABLE, Matrices
 from realize.kernels import many_modes
-from realize.kernels.balancing import Scaled, scale_model
 from realize.kernels.hidden_modes import Part, Side, hidden_side, spectra
+from realize.kernels.unit_scaling import Scaled, scale_model
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]

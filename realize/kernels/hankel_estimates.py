@@ -6,8 +6,9 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
-from realize.kernels.balancing import product_svd, scale_model
+from realize.kernels.balancing import product_svd
 from realize.kernels.lyapunov import schur_gramian_factors
+from realize.kernels.unit_scaling import scale_model
 
 Array = NDArray[np.float64]
 

@@ -309,6 +309,38 @@ def _quasi_triangular(matrix: Array, pattern: Array) -> Array:
 
 
 @dataclass(frozen=True)
+class Companion:
+    """An upper quasi-triangular M with M + M' = -V'V, kept by its diagonal blocks and V alone.
+
+    Attributes
+    ----------
+    diagonals : (3, n) array
+        Main diagonal; what stands right of it, and below it, inside the 2 x 2 blocks (zero elsewhere).
+    V : (p, n) array
+    """
+
+    diagonals: Array
+    V: Array
+
+    @classmethod
+    def of(cls, M: Array, V: Array) -> Companion:
+        """Return what is kept of M."""
+        diagonals = np.zeros((3, M.shape[0]))
+        diagonals[0], diagonals[2, :-1] = np.diagonal(M), np.diagonal(M, -1)
+        diagonals[1, :-1] = np.where(diagonals[2, :-1] != 0, np.diagonal(M, 1), 0.0)
+        return cls(diagonals, V)
+
+    def full(self) -> Array:
+        """Return M."""
+        M = np.triu(-(self.V.T @ self.V), 1)
+        n = M.shape[0]
+        np.fill_diagonal(M, self.diagonals[0])
+        pairs = np.flatnonzero(self.diagonals[2, : n - 1])
+        M[pairs, pairs + 1], M[pairs + 1, pairs] = self.diagonals[1, pairs], self.diagonals[2, pairs]
+        return M
+
+
+@dataclass(frozen=True)
 class SquareRoots:
     """Square roots of both Gramians of a stable model T, B, C, and the model as they see it.
 
@@ -316,18 +348,30 @@ class SquareRoots:
     ----------
     L, R : (n, n) arrays
         Controllability Gramian L L', observability Gramian R'R.
-    N, input : (n, n) and (n, m) arrays
-        T L = L N and B = L input.
-    M, output : (n, n) and (p, n) arrays
-        R T = M R and C = output R.
+    of_left, of_right : (n, n) arrays, or what stands for them
+        N, or the companion of its transpose; M.
+    input : (n, m) array
+        B = L input.
+    output : (p, n) array
+        C = output R.
     """
 
     L: Array
     R: Array
-    N: Array
+    of_left: Array | Companion
     input: Array
-    M: Array
+    of_right: Array | Companion
     output: Array
+
+    @property
+    def N(self) -> Array:
+        """T L = L N."""
+        return self.of_left if isinstance(self.of_left, np.ndarray) else np.ascontiguousarray(self.of_left.full().T)
+
+    @property
+    def M(self) -> Array:
+        """R T = M R."""
+        return self.of_right if isinstance(self.of_right, np.ndarray) else self.of_right.full()
 
 
 def square_roots(T: Array, B: Array, C: Array, *, sampled: bool) -> SquareRoots:
@@ -361,13 +405,20 @@ def square_roots(T: Array, B: Array, C: Array, *, sampled: bool) -> SquareRoots:
             raise NotStable("an eigenvalue lies on or outside the unit circle")
         T, B, C, sign = bilinear_schur(T, B, C)
     R, output, M = observability_factor(T, C)
+    right: Array | Companion = M
+    if not sampled:
+        # two large matrices less while singular values are computed
+        right = Companion.of(M, output)
+        del M
     # the dual: reversed transpose of T is upper quasi-triangular again
     dual, inputs, K = observability_factor(np.ascontiguousarray(T.T[::-1, ::-1]), np.ascontiguousarray(B.T[:, ::-1]))
     if sampled:
         # back through the map: contractive because M + M' <= 0
-        M, output = cayley_back(M, output, sign, triangular=True)
+        right, output = cayley_back(M, output, sign, triangular=True)
         K, inputs = cayley_back(K, inputs, sign, triangular=True)
-    return SquareRoots(np.ascontiguousarray(dual.T[::-1]), R, K.T, inputs.T, M, output)
+    left = K.T if sampled else Companion.of(K, inputs)
+    del K
+    return SquareRoots(np.ascontiguousarray(dual.T[::-1]), R, left, inputs.T, right, output)
 
 
 def cayley_back(M: Array, V: Array, sign: float = 1.0, *, triangular: bool) -> tuple[Array, Array]:

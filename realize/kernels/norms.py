@@ -15,9 +15,9 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
-from realize.kernels.balancing import far_apart, scale_model
 from realize.kernels.lyapunov import NotStable, observability_factor, schur_eigenvalues, schur_gramian_factors
 from realize.kernels.response import DIRECT_SIZE, balanced_states, state_response, triangular_blocks
+from realize.kernels.unit_scaling import far_apart, scale_model
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]

@@ -9,9 +9,10 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.errors import Refused, UsageError
-from realize.kernels.balancing import equal_groups, scale_model
+from realize.kernels.balancing import equal_groups
 from realize.kernels.closed_loop import IllPosed, LoopStates, Matrices, loop_states
 from realize.kernels.lyapunov import NotStable, gramian_factors
+from realize.kernels.unit_scaling import scale_model
 from realize.reduction.plan import Loop, Plan, Request
 from realize.reduction.prepare import Prepared
 from realize.reduction.registry import Method, register

@@ -11,20 +11,13 @@ import scipy.linalg
 from numpy.typing import NDArray
 
 from realize.errors import InputError, Refused
-from realize.kernels.balancing import (
-    HankelFactors,
-    Scaled,
-    balanced_part,
-    equal_groups,
-    hankel_factors,
-    scale_model,
-    tail_bounds,
-)
+from realize.kernels.balancing import HankelFactors, balanced_part, equal_groups, hankel_factors, tail_bounds
 from realize.kernels.hankel_estimates import estimated_values
 from realize.kernels.low_rank_balancing import low_rank_factors
 from realize.kernels.norms import Peak, peak_gain
 from realize.kernels.schur_response import Basis
 from realize.kernels.splitting import Split, split_stable, whole
+from realize.kernels.unit_scaling import Scaled, scale_model
 from realize.verification.views import tell
 
 Array = NDArray[np.float64]

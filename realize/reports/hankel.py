@@ -24,8 +24,9 @@ def hankel_values(model: Model) -> NDArray[np.float64] | None:
         return None
     import scipy.linalg
 
-    from realize.kernels.balancing import hankel_factors, scale_model
+    from realize.kernels.balancing import hankel_factors
     from realize.kernels.lyapunov import NotStable
+    from realize.kernels.unit_scaling import scale_model
 
     sampled = model.time.sampled
     poles = np.linalg.eigvals(model.A)

@@ -167,7 +167,7 @@ def _weak_modes(model: Model, record: dict[str, Any], view: View) -> Iterator[Fi
     n = model.order or 0
     if not isinstance(model, StateSpace) or not 2 <= n <= MODES_ORDER or not is_identity(model.E):
         return
-    from realize.kernels.balancing import scale_model
+    from realize.kernels.unit_scaling import scale_model
 
     if not all(np.all(np.isfinite(matrix)) for matrix in (model.A, model.B, model.C)):
         return

@@ -131,7 +131,7 @@ def scaling_of(model: Model) -> dict[str, Any] | None:
     logarithm (base 2) of the largest over the smallest of a denominator. None for other kinds.
     """
     if isinstance(model, StateSpace) and model.order and is_identity(model.E):
-        from realize.kernels.balancing import scale_model
+        from realize.kernels.unit_scaling import scale_model
 
         if not all(np.all(np.isfinite(matrix)) for matrix in (model.A, model.B, model.C)):
             return None

@@ -9,10 +9,10 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import NDArray
 
-from realize.kernels.balancing import scale_model
 from realize.kernels.encirclements import Undecided, arc_radii, axis_grid, right_zeros
 from realize.kernels.norms import gains, refined_peak
 from realize.kernels.splitting import split_stable
+from realize.kernels.unit_scaling import scale_model
 from realize.models import StateSpace
 from realize.verification.closed_loop import crossing_margins, loop_record
 

@@ -234,8 +234,9 @@ def hankel_norm(model: Any) -> Claim:
 def _hankel_in_doubles(model: StateSpace, sampled: bool) -> Claim:
     import scipy.linalg
 
-    from realize.kernels.balancing import hankel_factors, scale_model
+    from realize.kernels.balancing import hankel_factors
     from realize.kernels.splitting import split_stable
+    from realize.kernels.unit_scaling import scale_model
 
     scaled = scale_model(model.A, model.B, model.C, sampled=sampled)
     A, B, C = scaled.A, scaled.B, scaled.C

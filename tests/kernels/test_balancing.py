@@ -15,10 +15,10 @@ from realize.kernels.balancing import (
     balancing_free_projection,
     equal_groups,
     hankel_factors,
-    scale_model,
     tail_bounds,
 )
 from realize.kernels.lyapunov import gramian_factors
+from realize.kernels.unit_scaling import scale_model
 
 
 def random_model(n, m, p, seed, sampled):
