@@ -131,9 +131,8 @@ def changed(name: str, plain: realize.StateSpace, error: float, made: realize.Co
         error, bound = found["reduction-error"].value, found["reduction-bound"].value
         wrong = same and (other.model.order != made.model.order or error is None or bound is None or error > bound)
         failures += wrong
-        words.append(
-            f"{way} {other.model.order}, {max(apart, default=np.nan):.0e} apart{' WRONG' if wrong else '' if same else ' (a pole on the axis)'}"
-        )
+        mark = " WRONG" if wrong else "" if same else " (a pole on the axis)"
+        words.append(f"{way} {other.model.order}, {max(apart, default=np.nan):.0e} apart{mark}")
     print(f"{'':12s} changed: {'; '.join(words)}", flush=True)
     return failures
 
