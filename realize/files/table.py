@@ -84,6 +84,7 @@ def interpret(table: Table, options: ReadOptions) -> Model:
         raise UsageError("a sampling rate goes with data over time, and this table has frequencies")
     frequency, unit = _frequency(table, columns, comma)
     order = _sorted(frequency, table)
+    remarks = ("the lines were not in increasing order of frequency, and are sorted",) if order != sorted(order) else ()
     labels = list(dict.fromkeys(c.label for c in columns if c.role not in ("frequency", "skip")))
     grid, outputs, inputs = _grid(labels)
     shape = (len(frequency), len(outputs), len(inputs))
@@ -115,7 +116,8 @@ def interpret(table: Table, options: ReadOptions) -> Model:
     for k, (side, names) in enumerate((("outputs", outputs), ("inputs", inputs))):
         if side not in record and (any(names) or any(units[k])):
             record[side] = [{"name": name, "unit": unit} for name, unit in zip(names, units[k], strict=True)]
-    return build("frequency-response", arguments, record, Reading())
+    made = build("frequency-response", arguments, record, Reading())
+    return made.with_(remarks=remarks) if remarks else made
 
 
 def _columns(table: Table, given: tuple[str, ...] | None) -> list[Column]:

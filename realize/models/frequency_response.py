@@ -72,9 +72,10 @@ class FrequencyResponse(Model):
                 raise InputError(f"{values[tuple(wrong[0])]}", expected, field=checks.place_of(name, wrong[0]))
             self._put(name, values)
         if self.time.sampled and self.radians[-1] > np.pi / self.time.seconds * (1 + 1e-12):
+            as_rad = self.frequency_unit == "Hz" and frequency[-1] <= np.pi / self.time.seconds * (1 + 1e-12)
             raise InputError(
                 f"{frequency[-1]} {self.frequency_unit}",
-                "frequencies up to half the sampling rate",
+                "frequencies up to half the sampling rate" + (" (in rad/s, they would fit)" if as_rad else ""),
                 field=f"frequency[{frequency.size - 1}]",
             )
 

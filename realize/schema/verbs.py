@@ -32,7 +32,7 @@ FORMS = (
 )
 ORDERINGS = ("speed", "damping", "stability")
 REDUCTION_METHODS = ("balanced-truncation", "singular-perturbation", "modal", "frequency-weighted", "auto")
-FIT_METHODS = ("vector-fitting", "barycentric", "loewner", "subspace", "auto")
+FIT_METHODS = ("vector-fitting", "barycentric", "loewner", "subspace", "ho-kalman", "auto")
 #: Dead times that a fit can estimate: one for all channels, or one for each input, output or channel.
 ESTIMATED_DEAD_TIMES = ("auto", "auto-per-input", "auto-per-output", "auto-per-channel")
 AVERAGINGS = ("welch", "periodic", "stepped-sine", "auto")
@@ -123,7 +123,7 @@ VERBS: dict[str, Verb] = {
     for verb in (
         Verb(
             "fit",
-            "Turn measured data into a model: a frequency response, a time record, or several runs of one.",
+            "Turn measured data into a model: a frequency or impulse response, a time record, or several runs of one.",
             ("DATA...",),
             (
                 Option("to", "choice", "kind of the result", UNIVERSAL_KINDS, "state-space", "KIND"),

@@ -171,6 +171,11 @@ def _both_data(
 ) -> list[Claim]:
     one, two = first.radians, second.radians
     if one.size != two.size or np.any(np.abs(one - two) > 1e-9 * np.abs(one)):
+        from realize.estimation.runs import ratio_of_units
+
+        hint = ratio_of_units(one, two)
+        if hint:
+            raise InputError(f"frequencies {hint}", f"the frequencies of {a}, in the same unit", file=b)
         raise Refused(f"{a} and {b} have different frequencies; fit a model to one of them and compare with that")
     keep = _selected(first, band)
     return _line_claims(first.response[keep], second.response[keep], one[keep], True)

@@ -9,6 +9,7 @@ import numpy as np
 
 from realize.models import FrequencyResponse, Model, StateSpace, TimeRecord, TransferFunction
 from realize.models.state_space import is_identity
+from realize.steps.data_cautions import data_cautions, unit_cautions
 from realize.steps.receipts import FRAGILE, probe_frequencies
 from realize.verification import View
 
@@ -378,17 +379,8 @@ def data_findings(model: FrequencyResponse) -> list[Finding]:
                 "Add a column with one standard deviation or the coherence, if the analyser gives one.",
             )
         )
-    ends = model.frequency[model.frequency > 0]
-    if model.frequency_unit == "rad/s" and ends.size > 1 and ends[-1] >= 10 * ends[0]:
-        low, high = float(ends[0]), float(ends[-1])
-        if _is_round(low) and _is_round(high) and high >= ROUND_FROM:
-            found.append(
-                Finding(
-                    "units",
-                    f"The sweep runs from {low:g} to {high:g} rad/s, round numbers: they look like Hz.",
-                    'If so, set "frequency_unit" to "Hz".',
-                )
-            )
+    units = unit_cautions(model)
+    found += [Finding("units" if text in units else "data", text) for text in data_cautions(model)]
     largest = float(np.abs(model.response).max())
     if largest > 0 and not SMALL_GAIN < largest < LARGE_GAIN:
         found.append(

@@ -10,11 +10,12 @@ import numpy as np
 
 from realize.conversions import Task, convert_model, plan_route
 from realize.errors import InputError, UsageError
-from realize.models import DeadTime, FrequencyResponse, Model, PoleResidue, ZeroPoleGain
+from realize.models import DeadTime, FrequencyResponse, ImpulseResponse, Model, PoleResidue, ZeroPoleGain
 from realize.schema import ESTIMATED_DEAD_TIMES, FIT_METHODS, UNIVERSAL_KINDS, Claim, judge
 from realize.steps.conversion import Conversion
+from realize.steps.data_cautions import data_cautions, dead_time_caution
 from realize.steps.fit_record import fit_details
-from realize.steps.measured import response_of
+from realize.steps.measured import response_of, runs_of
 from realize.steps.receipts import finish
 from realize.steps.second_opinion import asking
 from realize.verification.misfit import misfit, rms_misfit, weighted_misfit, worst_misfit
@@ -52,7 +53,7 @@ def fit(
 
     Parameters
     ----------
-    data : FrequencyResponse, TimeRecord, or several runs of one
+    data : FrequencyResponse, ImpulseResponse, TimeRecord, or several runs of one
         Runs of a frequency response are merged into their mean, with the deviation of the mean; time records are
         averaged together into one frequency response.
     to : str
@@ -81,7 +82,8 @@ def fit(
     averaging, estimator, window, segment, overlap, excitation_period, settling : optional
         How time records become a frequency response: see ``realize.estimation.Settings``.
     sampled : bool
-        The inputs of the time records are held between the samples: the model is that of the sampled plant.
+        The inputs of the time records are held between the samples: the model is that of the sampled plant. An impulse
+        response is that of a sampled plant, its Markov parameters.
     names : sequence of str, optional
         What to call the runs.
     limits : dict, optional
@@ -113,7 +115,35 @@ def fit(
         "excitation_period": excitation_period,
         "settling": settling,
     }
-    source, told, seen = response_of(data, names, sampled, estimation)
+    runs = runs_of(data)
+    if isinstance(runs[0], ImpulseResponse):
+        from realize.steps.fit_samples import fit_impulse
+
+        others = {
+            "--dead-time": dead_time,
+            "--relative-degree": relative_degree,
+            "--integrators": integrators,
+            "--fixed-poles": fixed_poles,
+            "--fixed-zeros": fixed_zeros,
+            "--steady-state-gain": steady_state_gain,
+            "--symmetric": symmetric or None,
+            "--allow-unstable": allow_unstable or None,
+            "--band": band,
+            **{f"--{name.replace('_', '-')}": value for name, value in estimation.items()},
+        }
+        return fit_impulse(
+            runs,
+            {name: value for name, value in others.items() if value is not None},
+            to=to,
+            order=order,
+            method=method,
+            sampled=sampled,
+            names=names,
+            limits=given,
+            second_opinion=second_opinion,
+            started=started,
+        )
+    source, told, seen = response_of(runs, names, sampled, estimation)
     keep = _lines(source, band)
     from realize.steps.constraints import constraint_claims, structure_of
 
@@ -173,7 +203,9 @@ def fit(
     claims += [weighted] if weighted is not None else []
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
     claims += constraint_claims(structure, result, given)
-    cautions = [*told, *found.cautions]
+    cautions = [*told, *data_cautions(source), *found.cautions]
+    if isinstance(dead_time, (int, float)) and (words := dead_time_caution(source, float(dead_time))):
+        cautions.append(words)
     hertz = w / (2 * np.pi)
     cautions.append(
         f"The model is fitted from {w[0]:.6g} to {w[-1]:.6g} rad/s ({hertz[0]:.6g} to {hertz[-1]:.6g} Hz): "

@@ -65,7 +65,7 @@ def estimated(
     first = runs[0]
     called = names_of(runs, names)
     for name, run in zip(called[1:], runs[1:], strict=True):
-        _agree(first, run, called[0], name)
+        agree(first, run, called[0], name)
         if run.period != first.period:
             raise InputError(
                 f"a period of {run.period:g} s", f"{first.period:g} s, as in {called[0]}", field="period", file=name
@@ -101,7 +101,7 @@ def estimated(
     )
 
 
-def _agree(first: Model, other: Model, name: str, called: str) -> None:
+def agree(first: Model, other: Model, name: str, called: str) -> None:
     """Raise InputError where two runs are not of the same signals; remark on units that differ."""
     if other.shape != first.shape:
         raise InputError(
@@ -140,7 +140,7 @@ def merged(runs: Sequence[FrequencyResponse], names: Sequence[str] | None = None
         return first
     called = names_of(runs, names)
     for name, run in zip(called[1:], runs[1:], strict=True):
-        _agree(first, run, called[0], name)
+        agree(first, run, called[0], name)
     same_lines([run.radians for run in runs], called)
     stated = [run.deviation for run in runs if run.deviation is not None]
     known = len(stated) == len(runs) and all(np.all(values > 0) for values in stated)

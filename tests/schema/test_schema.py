@@ -141,6 +141,9 @@ def test_every_fit_method_is_accepted(method: str, run: Callable[..., Any], tmp_
         "frequency_unit": "rad/s",
         "response": [[[[1 / (1 + x * x), -x / (1 + x * x)]]] for x in w],
     }
+    if method == "ho-kalman":
+        samples = [[[0.5**k]] for k in range(20)]
+        record = {"realize": 1, "kind": "impulse-response", "period": 0.1, "samples": samples}
     (tmp_path / "data.json").write_text(json.dumps(record))
     arguments = ["fit", tmp_path / "data.json", "--order", "1", "--method", method, "--no-second-opinion"]
     if method == "frequency-weighted":
