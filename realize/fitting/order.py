@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 
 from realize.fitting.noise import noise_factor
 from realize.fitting.problem import Problem
+from realize.fitting.thinning import thinned
 from realize.kernels.vector_fitting import ordered_poles, starting_poles, weighted_cost
 
 ComplexArray = NDArray[np.complex128]
@@ -249,8 +250,8 @@ def unstable_image(problem: Problem, trial: Trial) -> int:
 
     Relocation without reflection, from the poles of the fit and from a few poles spread over the band.
     """
-    p = problem
-    best, count = trial.cost / 100, 0
+    p = thinned(problem)
+    best, count = weighted_cost(p.misfit(trial.poles), p.weights) / 100, 0
     few = start(p, min(max(trial.order, 1), 4), spacing_of(p))
     for poles in (trial.poles, few):
         for _ in range(6):

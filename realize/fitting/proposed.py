@@ -12,7 +12,7 @@ from realize.fitting.order import FAR, Search, Trial, joined, polish
 from realize.fitting.problem import Problem
 from realize.fitting.registry import Outcome
 from realize.fitting.thinning import thinned_to
-from realize.fitting.vector_fitting import fit_by
+from realize.fitting.vector_fitting import LONGEST_LADDER, fit_by
 from realize.kernels.vector_fitting import ordered_poles, residues_of
 
 Array = NDArray[np.float64]
@@ -28,6 +28,8 @@ LITTLE = 0.02
 AT_NOISE = 1.15
 #: Most exchanges of the least useful pole for the one that brings most.
 EXCHANGES = 6
+#: Smaller orders that would do are looked for up to this many poles times channels.
+REMARKED = 160
 #: First look: every so many orders. Around the order where the misfit reaches the noise every one is tried.
 STRIDE, BELOW, ABOVE = 4, 4, 4
 #: Lines that the search works on, for each pole of the largest order and at least.
@@ -148,7 +150,8 @@ def search_by(
     search = ProposedSearch(few, None, proposer(few, highest))
     if lowest == highest:
         search.best[highest] = mended(few, search.fit(highest))
-        if at_noise(few, search.best[highest]) and search.best[highest].cost > few.floor:
+        affordable = highest <= LONGEST_LADDER and few.channels * highest <= REMARKED
+        if affordable and at_noise(few, search.best[highest]) and search.best[highest].cost > few.floor:
             # a smaller order that would do is remarked
             search.prune(highest, few.fewest, search.noise_power())
     elif not search.look(lowest, highest):
@@ -164,6 +167,9 @@ def on_all_lines(known: Known, problem: Problem, iterations: int) -> Search:
     Orders that miss the data by many times the misfit of the best one get one step only: they are not chosen.
     """
     full = Search(problem)
+    if len(known) == 1:
+        full.best = {order: polish(problem, poles, iterations, 1e-3) for order, poles in known.items()}
+        return full
     for order, poles in known.items():
         full.best[order] = polish(problem, poles, 1, 1e-3)
     lowest = min(t.cost for t in full.best.values())

@@ -40,12 +40,14 @@ class Shape:
     @property
     def others(self) -> NDArray[np.intp]:
         """Columns that are no pivots."""
-        return np.setdiff1d(np.arange(self.B.shape[1]), self.pivots)
+        left = np.ones(self.B.shape[1], dtype=bool)
+        left[self.pivots] = False
+        return np.flatnonzero(left)
 
     @property
     def size(self) -> int:
         """Real unknowns."""
-        count = self.C.size + self.rank * self.others.size
+        count = self.C.size + self.rank * (self.B.shape[1] - self.rank)
         return 2 * count if self.paired else count
 
     @property

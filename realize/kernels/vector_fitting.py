@@ -18,6 +18,8 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.kernels.separable import chunks, groups_of, triangular
+
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
@@ -149,10 +151,14 @@ def residues_of(
     if n == 0 and np.all(values == values[:1]):
         return np.zeros((0, channels), complex), values[0].real.copy(), values[0].real - values
     coefficient = np.empty((basis.shape[1], channels))
-    for c in range(channels):
-        coefficient[:, c] = least_squares(
-            stacked(weights[:, c, None] * basis), stacked((weights[:, c] * values[:, c])[:, None])[:, 0]
-        )
+    for members, common, factor in groups_of(weights):
+        triangle: Array | None = None
+        for part in chunks(points.size, 2 * (basis.shape[1] + members.size)):
+            whole = np.hstack([basis[part], values[part][:, members] * factor])
+            triangle = triangular(stacked(common[part, None] * whole), triangle)
+        assert triangle is not None
+        size = basis.shape[1]
+        coefficient[:, members] = least_squares(triangle[:size, :size], triangle[:size, size:]) / factor
     misfit = basis @ coefficient - values
     constant = coefficient[n] if direct else np.zeros(channels)
     if not direct and np.isfinite(vanish):
