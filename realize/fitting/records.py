@@ -221,6 +221,8 @@ class Fit:
     direct_deviation : [outputs][inputs] float
     gain, gain_deviation : [outputs][inputs] float
         Steady-state gain of the model (at frequency 0, z = 1).
+    deviation : [k][outputs][inputs] float
+        What weighted the misfit: given or estimated, infinite for lines left out.
     dead_time : [outputs][inputs] float or None
         Estimated with the fit, s; the poles, residues and factors are those of the rest.
     dead_times : tuple of DeadTimeRow
@@ -249,5 +251,6 @@ class Fit:
     direct_deviation: Array = field(default_factory=_nothing)
     gain: Array = field(default_factory=_nothing)
     gain_deviation: Array = field(default_factory=_nothing)
+    deviation: Array = field(default_factory=_nothing)
     dead_time: Array | None = None
     dead_times: tuple[DeadTimeRow, ...] = ()

@@ -81,6 +81,9 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
     table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(poles, contribution, peak))
     cautions = [*cautions, *remarks(table, w, noise, weighted, worst)]
     spread = deviations(problem, estimate, units, bars, growth, used)
+    weighting = np.full((lines, p * m), np.inf)
+    with np.errstate(over="ignore", under="ignore"):
+        weighting[used] = np.ldexp(factor / problem.weights, lift)
     return Fit(
         poles=_frozen(out_poles),
         residues=_frozen(out_residues),
@@ -104,6 +107,7 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
         direct_deviation=_frozen(spread.direct.reshape(p, m)),
         gain=_frozen(spread.gain.reshape(p, m)),
         gain_deviation=_frozen(spread.gain_deviation.reshape(p, m)),
+        deviation=_frozen(weighting.reshape(H.shape)),
     )
 
 

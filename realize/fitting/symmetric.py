@@ -123,6 +123,8 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
         residue_deviation=square(fit.residue_deviation),
         direct_deviation=square(fit.direct_deviation),
         gain=square(fit.gain),
+        # both of a pair together have the deviation of their mean
+        deviation=square(fit.deviation) * np.where(np.eye(place.shape[0], dtype=bool), 1.0, np.sqrt(2.0)),
         gain_deviation=square(fit.gain_deviation),
         residues=_frozen(fit.residues[:, :, 0][:, place]),
         direct=_frozen(fit.direct[:, 0][place]),

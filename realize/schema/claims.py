@@ -113,6 +113,13 @@ CLAIMS: dict[str, ClaimDefinition] = {
         ClaimDefinition(
             "symmetry", "relative", "peak error of the result against its own transpose; 0 = reciprocal", {"fit": 1e-12}
         ),
+        ClaimDefinition(
+            "passivity",
+            "relative",
+            "how far from passive: largest singular value less 1 (scattering), or the most negative eigenvalue of the "
+            "Hermitian part over the largest gain (impedance, admittance, hybrid); 0 = passive",
+            {"fit": 0.0},
+        ),
         ClaimDefinition("steady-state-error", "relative", "difference at zero frequency relative to the source there"),
         ClaimDefinition(
             "weighted-misfit", "1", "root mean square of misfit / standard deviation; 1 = as large as the noise"

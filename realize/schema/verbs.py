@@ -38,6 +38,8 @@ ESTIMATED_DEAD_TIMES = ("auto", "auto-per-input", "auto-per-output", "auto-per-c
 AVERAGINGS = ("welch", "periodic", "stepped-sine", "auto")
 ESTIMATORS = ("h1", "h2", "hv")
 WINDOWS = ("rectangular", "hann", "hamming", "blackman", "flat-top")
+#: What passive means: for impedance, admittance and hybrid parameters, and for scattering parameters.
+PASSIVE_KINDS = ("positive-real", "bounded-real")
 SIDES = ("left", "right")
 ARITHMETICS = ("exact", "auto", "double")
 
@@ -164,6 +166,13 @@ VERBS: dict[str, Verb] = {
                     metavar="X",
                 ),
                 Option("symmetric", "flag", "reciprocal: the response is a symmetric matrix, exactly"),
+                Option(
+                    "passive",
+                    "choice",
+                    "make the model passive: positive-real (impedance, admittance), bounded-real (scattering), or "
+                    "auto: as the ports of the data say",
+                    (*PASSIVE_KINDS, "auto"),
+                ),
                 Option("allow-unstable", "flag", "poles may be unstable where the data ask for it"),
                 BAND,
                 COLUMNS,

@@ -7,10 +7,11 @@ from typing import Any
 import numpy as np
 
 from realize.errors import InputError, UsageError
-from realize.fitting import Structure
+from realize.fitting import Fit, Structure
 from realize.models import FrequencyResponse, Model
-from realize.schema import ESTIMATED_DEAD_TIMES, Claim
+from realize.schema import ESTIMATED_DEAD_TIMES, PASSIVE_KINDS, Claim
 from realize.verification import constraints as verified
+from realize.verification.passivity import kind_of, passivity_claim
 
 
 def structure_of(
@@ -85,8 +86,60 @@ def _gain(value: Any, shape: tuple[int, int]) -> np.ndarray | None:
     return gain
 
 
-def constraint_claims(structure: Structure, result: Model, limits: dict[str, float]) -> list[Claim]:
-    """Return one claim for each constraint, checked on the returned model."""
+def passive_kind(source: FrequencyResponse, asked: str | None, dead_time: Any) -> str:
+    """Return what passive means for these data, '' where it is not asked.
+
+    Raises
+    ------
+    UsageError
+    """
+    if asked is None:
+        return ""
+    if asked not in (*PASSIVE_KINDS, "auto"):
+        raise UsageError(f"--passive {asked!r}; there are: {', '.join(PASSIVE_KINDS)}, auto")
+    own = kind_of(source) if source.ports is not None else ""
+    if asked == "auto" and not own:
+        raise UsageError(
+            "the data do not say what their ports are: --passive positive-real for impedance or admittance, "
+            "--passive bounded-real for scattering"
+        )
+    if asked != "auto" and own and asked != own:
+        parameter = "" if source.ports is None else source.ports.parameter
+        raise UsageError(f"--passive {asked} of {parameter} parameters; passive is {own} there")
+    kind = own if asked == "auto" else asked
+    if source.shape[0] != source.shape[1]:
+        raise UsageError("--passive needs as many outputs as inputs: a port has a voltage and a current")
+    if kind == "positive-real" and (dead_time is not None or source.dead_time is not None):
+        raise UsageError("a positive real response has no dead time; leave one of --passive and --dead-time out")
+    return kind
+
+
+def enforced(
+    found: Fit, structure: Structure, w: Any, kind: str, period: float | None, fixed_order: bool
+) -> tuple[Fit, dict[str, Any]]:
+    """Return the fit made passive, and what that took.
+
+    An order that is not fixed leaves room for poles outside of the band where they spare the response.
+    """
+    from dataclasses import asdict
+
+    from realize.fitting.passive import made_passive, passive_with_room
+
+    options: dict[str, Any] = {
+        "period": period,
+        "symmetric": structure.symmetric,
+        "pinned": structure.steady_state_gain is not None,
+    }
+    if fixed_order:
+        better, change = made_passive(found, w, kind, **options)
+        added = 0
+    else:
+        better, change, added = passive_with_room(found, w, kind, **options)
+    return better, asdict(change) | {"poles_added": added}
+
+
+def constraint_claims(structure: Structure, result: Model, limits: dict[str, float], passive: str = "") -> list[Claim]:
+    """Return one claim for each constraint, checked on the returned model; passivity for all that has ports too."""
     claims = []
 
     def limit(name: str) -> float | None:
@@ -104,4 +157,8 @@ def constraint_claims(structure: Structure, result: Model, limits: dict[str, flo
         claims.append(verified.steady_state_claim(result, structure.steady_state_gain, limit("steady-state-gain")))
     if structure.symmetric:
         claims.append(verified.symmetry_claim(result, limit("symmetry")))
+    if passive:
+        claims.append(passivity_claim(result, passive, limit("passivity")))
+    elif result.ports is not None and result.shape[0] == result.shape[1]:
+        claims.append(passivity_claim(result, kind_of(result), limits.get("passivity")))
     return claims

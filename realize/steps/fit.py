@@ -35,6 +35,7 @@ def fit(
     fixed_zeros: Any = None,
     steady_state_gain: Any = None,
     symmetric: bool = False,
+    passive: str | None = None,
     allow_unstable: bool = False,
     band: tuple[float, float] | None = None,
     averaging: str | None = None,
@@ -75,6 +76,9 @@ def fit(
         Gain at frequency 0.
     symmetric : bool
         Reciprocal: the response is a symmetric matrix.
+    passive : str, optional
+        "positive-real" (impedance, admittance), "bounded-real" (scattering), or "auto": as the ports of the data say.
+        The response is changed as little as that needs.
     allow_unstable : bool
         Poles may be unstable where the data ask for it.
     band : (low, high), optional
@@ -127,6 +131,7 @@ def fit(
             "--fixed-zeros": fixed_zeros,
             "--steady-state-gain": steady_state_gain,
             "--symmetric": symmetric or None,
+            "--passive": passive,
             "--allow-unstable": allow_unstable or None,
             "--band": band,
             **{f"--{name.replace('_', '-')}": value for name, value in estimation.items()},
@@ -145,7 +150,7 @@ def fit(
         )
     source, told, seen = response_of(runs, names, sampled, estimation)
     keep = _lines(source, band)
-    from realize.steps.constraints import constraint_claims, structure_of
+    from realize.steps.constraints import constraint_claims, enforced, passive_kind, structure_of
 
     structure = structure_of(
         source,
@@ -158,6 +163,7 @@ def fit(
         allow_unstable=allow_unstable,
         dead_time=dead_time,
     )
+    passive_as = passive_kind(source, passive, dead_time)
     dead = _dead_time(source, dead_time)
 
     from realize.fitting import fit_response
@@ -176,6 +182,10 @@ def fit(
         period=source.time.seconds if source.time.sampled else None,
         structure=structure,
     )
+    details: dict[str, Any] = {}
+    if passive_as:
+        period = source.time.seconds if source.time.sampled else None
+        found, details["passivity"] = enforced(found, structure, w, passive_as, period, isinstance(order, int))
     if found.dead_time is not None:
         dead = _estimated(found.dead_time)
     fitted = _model(found, source.common() | {"dead_time": dead})
@@ -183,7 +193,10 @@ def fit(
     route = plan_route(task)
     result = convert_model(task, route)
 
-    part = misfit(source, result, keep)
+    # a line at a fixed pole says nothing finite
+    counted = keep.copy()
+    counted[keep] = ~np.any(source.time.points(w)[:, None] == found.poles[None, :], axis=1)
+    part = misfit(source, result, counted)
     rms = rms_misfit(part, given.get("rms-misfit"))
     claims: list[Claim] = [rms, worst_misfit(part, given.get("worst-misfit"))]
     if source.deviation is not None:
@@ -202,8 +215,8 @@ def fit(
         )
     claims += [weighted] if weighted is not None else []
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
-    claims += constraint_claims(structure, result, given)
-    cautions = [*told, *data_cautions(source), *found.cautions]
+    claims += constraint_claims(structure, result, given, passive_as)
+    cautions = [*told, *data_cautions(source), *found.cautions, *_structure_cautions(found, to, details)]
     if isinstance(dead_time, (int, float)) and (words := dead_time_caution(source, float(dead_time))):
         cautions.append(words)
     hertz = w / (2 * np.pi)
@@ -223,7 +236,7 @@ def fit(
             cautions=cautions,
             opinion=opinion,
             limits=limits,
-            details=fit_details(found, source, w, chosen=not isinstance(order, int)) | seen,
+            details=fit_details(found, source, w, chosen=not isinstance(order, int)) | seen | details,
         )
 
 
@@ -254,6 +267,28 @@ def _model(found: Any, common: dict[str, Any]) -> Model:
     none = np.zeros(0, dtype=complex)
     poles = [[found.poles if found.factors.gain[i, j] else none for j in range(m)] for i in range(p)]
     return ZeroPoleGain(zeros=zeros, poles=poles, gain=found.factors.gain, **common)
+
+
+def _structure_cautions(found: Any, to: str, details: dict[str, Any]) -> list[str]:
+    """Return words about what the kind of the result cannot keep, and about what passivity cost."""
+    cautions = []
+    if found.factors is not None and to == "pole-residue":
+        cautions.append(
+            "rounded residues cannot cancel exactly: a pole-residue result loses a relative degree above 1 and moves "
+            "fixed zeros; zero-pole-gain and state-space keep them"
+        )
+    change = details.get("passivity")
+    if change is not None and change["rms"] > 0:
+        cautions.append(
+            f"made passive: the response changed by {change['rms']:.2g} (root mean square over the lines, relative), "
+            f"{change['largest']:.2g} of the largest gain at most; the error bars are those of the fit before"
+        )
+    if change is not None and change["poles_added"]:
+        cautions.append(
+            f"{change['poles_added']} poles outside of the measured band were added: the fit was not passive where "
+            "nothing was measured, and they leave the response within the band as it is"
+        )
+    return cautions
 
 
 def _estimated(total: np.ndarray) -> DeadTime:
