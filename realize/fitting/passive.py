@@ -146,6 +146,8 @@ def made_passive(
 OUTSIDE: tuple[tuple[float | None, float, float], ...] = ((None, 2.0, 0.5), (0.5, 2.0, 0.5), (0.7, 1.4, 0.3))
 #: Damping ratio that poles outside of the band get at least: the data say little of it, and passivity pays for a peak.
 CALM = 0.3
+#: Poles outside of the band stay this near to it then.
+FAR = 30.0
 #: A misfit this much larger than that of the fit makes poles outside of the band worth trying.
 SPOILT = 1.1
 
@@ -185,14 +187,21 @@ def passive_with_room(
 
 
 def _calmed(fit: Fit, w: Array) -> Fit:
-    """Return the fit with lightly damped poles outside of the band damped more, residues fitted to its response."""
+    """Return the fit with lightly damped or far poles outside of the band drawn in, residues fitted to its response."""
     size = np.abs(fit.poles)
     low, high = float(w[w > 0][0]), float(w[-1])
-    loud = ((size < low) | (size > high)) & (fit.poles.imag != 0) & (-fit.poles.real < CALM * size)
+    outside = ((size < low) | (size > high)) & (size > 0)
+    near = np.clip(size, low / FAR, high * FAR)
+    damping = -fit.poles.real / np.where(size > 0, size, 1.0)
+    paired = fit.poles.imag != 0
+    loud = outside & ((near != size) | (paired & (damping < CALM)))
     if not np.any(loud):
         return fit
-    turned = size * (-CALM + 1j * np.sign(fit.poles.imag) * np.sqrt(1 - CALM**2))
+    ratio = np.where(paired, np.maximum(damping, CALM), 1.0)
+    turned = near * (-ratio + 1j * np.sign(fit.poles.imag) * np.sqrt(np.maximum(1 - ratio**2, 0.0)))
     poles = np.where(loud, turned, fit.poles)
+    if np.unique(poles).size < poles.size:
+        return fit
     points = 1j * w
     keep = ~np.any(points[:, None] == fit.poles[None, :], axis=1)
     unit = max(float(np.max(size)), high)
@@ -218,7 +227,10 @@ def _calmed(fit: Fit, w: Array) -> Fit:
         residues=_frozen(residues.reshape(-1, *shape) * unit),
         direct=_frozen(direct.reshape(shape)),
         misfit=_frozen(misfit),
-        pole_table=tuple(replace(row, damping=CALM) if loud[row.index] else row for row in fit.pole_table),
+        pole_table=tuple(
+            replace(row, frequency=float(near[row.index]), damping=float(ratio[row.index])) if loud[row.index] else row
+            for row in fit.pole_table
+        ),
         **_figures(fit, misfit, w),
     )
 

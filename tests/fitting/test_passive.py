@@ -133,13 +133,14 @@ def test_poles_outside_the_band_spare_the_response() -> None:
     s = 1j * w
     data = 0.9 * np.exp(-0.6j * (w - 10)) * (1 - 0.5 / (s + 0.5 - 10j))
     fit = fit_response(w, data, order=3, deviation=np.full(w.size, 0.01))
-    plain, first = made_passive(fit, w, "bounded-real", period=None, symmetric=False, pinned=False)
-    better, second, added = passive_with_room(fit, w, "bounded-real", period=None, symmetric=False, pinned=False)
+    # an integrator stands in below the band, and the reflection is far above 1 there
+    assert claimed(fit, "bounded-real") > 10
+    better, change, added = passive_with_room(fit, w, "bounded-real", period=None, symmetric=False, pinned=False)
     assert claimed(better, "bounded-real") == 0
-    assert added in (0, 2, 4)
-    assert better.rms <= plain.rms
-    assert second.rms <= first.rms
-    assert better.order == fit.order + added == better.poles.size
+    assert added in (2, 4)
+    assert better.rms < 1.2 * fit.rms
+    assert change.rms < 1.2 * fit.rms
+    assert better.order == fit.order + added == better.poles.size == len(better.powers)
 
 
 def test_what_cannot_be_made_passive() -> None:
