@@ -174,13 +174,14 @@ class View:
         if self.fractions is not None:
             known: dict[Any, Dynamics] = {}
 
-            def of(polynomial: Any) -> Dynamics:
+            def of(polynomial: Any, channel: tuple[int, int] | None) -> Dynamics:
                 key = id(polynomial)
                 if key not in known:
-                    known[key] = self.dynamics(polynomial)
+                    known[key] = self.dynamics(polynomial, channel)
                 return known[key]
 
-            return [[(of(self.fractions[i][j][0]), of(self.fractions[i][j][1])) for j in range(m)] for i in range(p)]
+            grid = self.fractions
+            return [[(of(grid[i][j][0], (i, j)), of(grid[i][j][1], None)) for j in range(m)] for i in range(p)]
         poles = double_poles(self.model)
         size = np.abs(poles)
         axis = np.abs(poles.real) <= 4 * np.finfo(float).eps * size
@@ -189,8 +190,14 @@ class View:
         shared = dynamics_of(poles, axis, self.period)
         return [[(NO_DYNAMICS, shared) for _ in range(m)] for _ in range(p)]
 
-    def dynamics(self, polynomial: Any) -> Dynamics:
-        """Return the roots of an exact polynomial, axis membership decided exactly."""
+    def dynamics(self, polynomial: Any, channel: tuple[int, int] | None = None) -> Dynamics:
+        """Return the roots of an exact polynomial, axis membership decided exactly.
+
+        Parameters
+        ----------
+        channel : (output, input), optional
+            The channel whose zeros they are; poles without one.
+        """
         from realize.kernels.exact.polynomials import bilinear_image, even_odd
         from realize.kernels.exact.roots import roots, unit_circle
 
@@ -202,7 +209,7 @@ class View:
             common = even.gcd(odd) if odd else even
             if common.degree() < 1:
                 # nothing on the axis: approximate roots do
-                values = approximate_roots(polynomial)
+                values = self._near_roots(polynomial, channel)
                 if values is not None:
                     return dynamics_of(values, np.zeros(values.size, dtype=bool), self.period)
         distinct = roots(polynomial)
@@ -218,6 +225,24 @@ class View:
         s = np.repeat(np.array([logarithm(root) if root.value else 0j for root in distinct], dtype=complex), counts)
         s = s[keep] / self.period
         return Dynamics(np.where(axis[keep], 1j * s.imag, s), axis[keep])
+
+    def _near_roots(self, polynomial: Any, channel: tuple[int, int] | None) -> ComplexArray | None:
+        """Return approximate roots of a polynomial of a large model, none missing: from doubles where they do."""
+        from realize.kernels.exact.isolation import roots_near
+
+        model = self.model
+        if isinstance(model, StateSpace) and model.E is None and not model.beyond_doubles:
+            if channel is None:
+                starts = double_poles(model)
+            else:
+                from realize.kernels.zeros import zeros
+
+                i, j = channel
+                starts = zeros(model.A, model.B[:, j : j + 1], model.C[i : i + 1], model.D[i : i + 1, j : j + 1])
+            found = roots_near(polynomial, starts.tolist())
+            if found is not None:
+                return np.array(found, dtype=complex)
+        return approximate_roots(polynomial)
 
     @cached_property
     def poles(self) -> Dynamics:
@@ -324,8 +349,10 @@ def forming_cost(model: StateSpace) -> float:
     (p, m), order = model.shape, model.order
     if order <= SMALL and not model.decimals:
         bits = DOUBLE_BITS
+    elif order <= LARGEST_COUNTED:
+        bits = model.remembered("bits of A", lambda: cost.matrix_bits(model.exact("A")))
     else:
-        bits = cost.matrix_bits(model.exact("A")) if order <= LARGEST_COUNTED else _bits_of(model)
+        bits = _bits_of(model)
     return cost.transfer_operations(order, m, p, bits, descriptor=model.E is not None)
 
 

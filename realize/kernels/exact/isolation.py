@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -299,3 +301,47 @@ class RationalSearch:
                     self.possible = False
                     break
         return self.possible
+
+
+#: Bits beside those of the degree with which a polynomial is evaluated near approximate roots.
+NEAR_BITS = 128
+#: Largest radius of such a disc, relative to its root: what is found is the square of it off.
+NEAR = 1e-5
+
+
+def roots_near(p: fmpq_poly, starts: Sequence[complex]) -> list[complex] | None:
+    """Return all roots of a polynomial in doubles, one Newton step from approximate ones; None without a certificate.
+
+    A disc of radius n |p / p'| holds a root (Henrici 1974, theorem 6.4g), so n disjoint discs hold one each: none is
+    missing, and none is wrong by more than its disc.
+
+    Parameters
+    ----------
+    p : polynomial of degree n
+    starts : n complex
+        Closed under conjugation.
+    """
+    n = p.degree()
+    if len(starts) != n:
+        return None
+    centres, radii, found = [], [], []
+    with precision(NEAR_BITS + 2 * n):
+        value, slope = acb_poly(p), acb_poly(p.derivative())
+        for start in starts:
+            if start.imag < 0:
+                continue
+            x = acb(start.real, start.imag)
+            step = value(x) / slope(x)
+            radius = float((n * step).abs_upper()) * (1 + 1e-9) if step.is_finite() else math.inf
+            moved = complex(start.real - float(step.real), start.imag - float(step.imag) if start.imag else 0.0)
+            for sign in (1, -1) if start.imag else (1,):
+                centres.append(complex(start.real, sign * start.imag))
+                radii.append(radius)
+                found.append(complex(moved.real, sign * moved.imag))
+    if len(found) != n or not all(map(math.isfinite, radii)):
+        return None
+    centre, radius = np.array(centres), np.array(radii)
+    apart = np.abs(centre[:, None] - centre[None, :]) * (1 - 1e-9) > radius[:, None] + radius[None, :]
+    np.fill_diagonal(apart, True)
+    near = bool((radius <= NEAR * np.abs(centre)).all())
+    return found if near and apart.all() else None

@@ -59,10 +59,10 @@ def transfer_matrix(
         return pencil_transfer(A, B, C, direct, E)
     if n <= SMALL_ORDER:
         return _small_transfer(A, B, C, direct)
-    denominator = characteristic_polynomial(A)
     if p == 0 or m == 0:
-        return [[] for _ in range(p)], denominator
+        return [[] for _ in range(p)], characteristic_polynomial(A)
     integers = integer_states(A, B, C)
+    denominator = characteristic_polynomial(A, integers)
     markov = _markov(integers, n)
     # coefficient j of the numerator: sum over k of a_(j + 1 + k) h_k
     upper = fmpq_poly(denominator.coeffs()[1:][::-1])
@@ -116,8 +116,15 @@ def _small_transfer(
     return numerators, denominator
 
 
-def characteristic_polynomial(A: Ratios) -> fmpq_poly:
-    """Return det(sI - A) as the product over the strongly connected blocks of A."""
+def characteristic_polynomial(A: Ratios, known: Integers | None = None) -> fmpq_poly:
+    """Return det(sI - A) as the product over the strongly connected blocks of A.
+
+    Parameters
+    ----------
+    A : n x n
+    known : Integers, optional
+        The integers that stand for A: they serve where all states are in one block.
+    """
     n = len(A)
     factors: dict[tuple[int, ...], fmpq_poly] = {}
     for block in strong_blocks(A):
@@ -125,7 +132,7 @@ def characteristic_polynomial(A: Ratios) -> fmpq_poly:
             factors[block] = fmpq_poly([-fraction(A[block[0]][block[0]]), 1])
             continue
         part = [[A[i][j] for j in block] for i in block] if len(block) < n else A
-        integers = integer_states(part, None, None)
+        integers = known if known is not None and len(block) == n else integer_states(part, None, None)
         c = integers.A.charpoly().coeffs()
         factors[block] = _unscaled(c, integers.scale)
     return product([factors[block] for block in sorted(factors, key=lambda key: factors[key].degree())])
