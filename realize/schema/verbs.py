@@ -7,7 +7,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-from realize.schema.kinds import PARAMETRIC_KINDS, TABULATED_KINDS, UNIVERSAL_KINDS
+from realize.schema.kinds import PARAMETRIC_KINDS, PORT_PARAMETERS, TABULATED_KINDS, UNIVERSAL_KINDS
 
 FORMS = (
     "cascade",
@@ -177,6 +177,12 @@ VERBS: dict[str, Verb] = {
                 BAND,
                 COLUMNS,
                 RATE,
+                Option(
+                    "parameter",
+                    "choice",
+                    "data of ports: fit another parameter of the same network",
+                    tuple(PORT_PARAMETERS),
+                ),
                 *ESTIMATION,
             ),
         ),

@@ -38,6 +38,7 @@ def fit(
     passive: str | None = None,
     allow_unstable: bool = False,
     band: tuple[float, float] | None = None,
+    parameter: str | None = None,
     averaging: str | None = None,
     estimator: str | None = None,
     window: str | None = None,
@@ -83,6 +84,8 @@ def fit(
         Poles may be unstable where the data ask for it.
     band : (low, high), optional
         Use only these frequencies, rad/s.
+    parameter : str, optional
+        Of data with ports, such as scattering parameters: fit this other parameter of the same network.
     averaging, estimator, window, segment, overlap, excitation_period, settling : optional
         How time records become a frequency response: see ``realize.estimation.Settings``.
     sampled : bool
@@ -134,6 +137,7 @@ def fit(
             "--passive": passive,
             "--allow-unstable": allow_unstable or None,
             "--band": band,
+            "--parameter": parameter,
             **{f"--{name.replace('_', '-')}": value for name, value in estimation.items()},
         }
         return fit_impulse(
@@ -149,6 +153,10 @@ def fit(
             started=started,
         )
     source, told, seen = response_of(runs, names, sampled, estimation)
+    if parameter is not None:
+        from realize.steps.port_parameters import as_parameter
+
+        source = as_parameter(source, parameter)
     keep = _lines(source, band)
     from realize.steps.constraints import constraint_claims, enforced, passive_kind, structure_of
 

@@ -61,3 +61,29 @@ def test_inspect_shows_them(run: Callable[..., Any], tmp_path: Path, monkeypatch
     Path("data.json").write_text(json.dumps(record))
     done = run("inspect", "data.json")
     assert done.status == 3 and "ports.reference[1]" in done.err and "greater than zero" in done.err
+
+
+def test_another_parameter_of_the_same_network_is_fitted(tmp_path: Path, run: Callable[..., Any]) -> None:
+    """One coil with a loss, 2 ohm + s 3 mH, as scattering parameters: its impedance grows with s."""
+    w = np.linspace(1e3, 1e5, 50)
+    z = 2 + 3e-3j * w
+    gamma = (z - 50) / (z + 50)
+    data = realize.FrequencyResponse(
+        frequency=w,
+        frequency_unit="rad/s",
+        response=gamma[:, None, None],
+        deviation=np.full((50, 1, 1), 1e-4),
+        ports=Ports("scattering", (50.0,)),
+    )
+    made = realize.fit(data, order=1, parameter="admittance", to="pole-residue")
+    assert made.model.ports == Ports("admittance", (50.0,))
+    assert made.model.poles[0] == pytest.approx(-2 / 3e-3, rel=1e-9)
+    assert made.model.residues[0, 0, 0] == pytest.approx(1 / 3e-3, rel=1e-9)
+    realize.write(data, tmp_path / "coil.json")
+    assert run("fit", tmp_path / "coil.json", "--parameter", "hybrid").status == 2
+    plain = data.with_(ports=None)
+    with pytest.raises(realize.UsageError, match="data of ports"):
+        realize.fit(plain, parameter="impedance")
+    through = data.with_(response=np.ones((50, 1, 1)))
+    with pytest.raises(realize.InputError, match="without impedance parameters"):
+        realize.fit(through, parameter="impedance")
