@@ -77,7 +77,6 @@ class Truth:
         """Return the smallest deviations [pairs][2] that frequency (rad/s) and damping ratio can have."""
         J = (self.derivatives() / deviation).reshape(-1, deviation.size)
         A = np.sqrt(2) * np.hstack([J.real, J.imag])
-        A = A[:, :]
         size = np.linalg.norm(A, axis=1)
         # a shape c b^T is not changed by c z, b / z: as many singular values vanish as there are such z
         u, d, _ = np.linalg.svd(A / size[:, None], full_matrices=False)
@@ -152,6 +151,17 @@ def delayed(seed: int, shape: tuple[int, int]) -> Truth:
     """Return ten modes behind a dead time of 3.7 samples, sampling at twice the highest line."""
     one = spread(seed, shape, 10, 0.005)
     return Truth(one.pairs, one.singles, one.left, one.right, one.direct, one.w, 3.7 * np.pi / TOP)
+
+
+def uneven(seed: int, shape: tuple[int, int]) -> Truth:
+    """Return eight modes of 0.3 to 3 % damping whose shapes differ in size by a factor of up to twenty."""
+    rng = np.random.default_rng([seed, *shape, 8])
+    one = spread(seed, shape, 8, 0.01, 0.2)
+    zeta = np.exp(rng.uniform(np.log(0.003), np.log(0.03), 8))
+    size = np.abs(one.pairs)
+    pairs = size * (-zeta + 1j * np.sqrt(1 - zeta**2))
+    left = one.left * np.exp(rng.uniform(-np.log(20), 0, (8, 1)))
+    return Truth(pairs, one.singles, left, one.right, one.direct, one.w)
 
 
 def noisy(truth: Truth, level: float, kind: str, seed: int) -> tuple[np.ndarray, np.ndarray]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 
-from realize.fitting.order import Search, Trial
+from realize.fitting.order import LARGE_ORDER, Search, Trial
 from realize.fitting.problem import Problem
 from realize.fitting.proposed import Known, Propose, ProposedSearch, at_noise, on_all_lines, search_by
 from realize.fitting.registry import Method, Outcome
@@ -16,10 +16,13 @@ from realize.fitting.vector_fitting import LONGEST_LADDER, fit_by, poles_by_relo
 class EverySearch(ProposedSearch):
     """Best fits of increasing order from all starts: proposed poles, smaller orders and what they miss, fresh poles."""
 
+    #: highest order that the method proposes poles for
+    proposable = LARGE_ORDER
+
     def fit(self, order: int) -> Trial:
         """Fit one order from every start."""
         found = Search.fit(self, order)
-        if order and found.cost > self.problem.floor:
+        if 0 < order <= self.proposable and found.cost > self.problem.floor:
             found = min(found, self.proposed(order), key=lambda t: t.cost)
             self.best[order] = found
         return found
@@ -41,7 +44,7 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
     def searched(problem: Problem, lowest: int, highest: int, known: Known | None) -> Search:
         nonlocal thorough
         if known is None and not thorough:
-            quick = search_by(proposer, problem, lowest, highest, None, grow=False)
+            quick = search_by(proposer, problem, lowest, proposed_to(lowest, highest), None, grow=False)
             if quick is not None and any(at_noise(problem, quick.best[n]) for n in sorted(quick.best, reverse=True)):
                 return quick
             thorough = True
@@ -54,11 +57,17 @@ def fit(problem: Problem, lowest: int, highest: int, direct_auto: bool) -> Outco
     return replace(outcome, method="vector-fitting" if thorough else "subspace")
 
 
+def proposed_to(lowest: int, highest: int) -> int:
+    """Return the highest order that the subspace method is asked for: its cost grows with the cube of that."""
+    return max(lowest, min(highest, LARGE_ORDER))
+
+
 def climbed(problem: Problem, lowest: int, highest: int, known: Known | None, quick: Search | None) -> Search:
     """Return fits of all orders from every start; of one order beyond the longest ladder from fresh poles alone."""
     few = thinned(problem)
-    propose: Propose = proposer(few, highest) if known is None else lambda order: []
+    propose: Propose = proposer(few, proposed_to(lowest, highest)) if known is None else lambda order: []
     search = EverySearch(few, known, propose)
+    search.proposable = proposed_to(lowest, highest)
     if lowest == highest and highest > LONGEST_LADDER:
         search.best[highest] = min(poles_by_relocation(few, highest), search.proposed(highest), key=lambda t: t.cost)
     else:

@@ -9,7 +9,9 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from realize.errors import InputError, UsageError
-from realize.fitting.order import HIGHEST_ORDER
+from realize.fitting.evidence import judged_candidates
+from realize.fitting.order import HIGHEST_ORDER, LARGE_ORDER
+from realize.fitting.outliers import trusted, without_outliers
 from realize.fitting.prepare import Prepared, prepared
 from realize.fitting.problem import Problem
 from realize.fitting.records import Candidate, Fit
@@ -20,6 +22,8 @@ from realize.fitting.structure import Structure, check
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
+#: Methods that add poles to smaller orders, and so may go on to ``HIGHEST_ORDER``; the others stop at ``LARGE_ORDER``.
+CLIMBING = ("auto", "vector-fitting")
 #: ``auto`` leaves at least this many numbers of data to every unknown.
 NUMBERS_PER_UNKNOWN = 2.0
 
@@ -35,6 +39,7 @@ def fit_response(
     period: float | None = None,
     direct: bool | Literal["auto"] = True,
     structure: Structure | None = None,
+    robust: bool = True,
 ) -> Fit:
     """Fit a rational model with common stable poles to a measured frequency response.
 
@@ -45,7 +50,7 @@ def fit_response(
     then again from the misfit of the first fit. Floors: see ``realize.fitting.noise``.
 
     Order. ``auto``: increasing orders until the Bayesian information criterion has not improved for four orders in a
-    row; up to 40, and at least two numbers of data for each unknown. A range (lowest, highest) is searched alike.
+    row; up to 160, and at least two numbers of data for each unknown. A range (lowest, highest) is searched alike.
 
     Poles on the imaginary axis or at the origin are not represented: an integrator comes out as stable poles far below
     the lowest line. With a period the points are z = exp(jwT); a line at z = -1 is left out of the fit.
@@ -68,6 +73,8 @@ def fit_response(
         Constant real direct term: True, False, or as the criterion says; a structure's relative degree comes first.
     structure : Structure, optional
         What the model must keep. Orders count fixed poles and integrators as well.
+    robust : bool
+        Whether lines that misfit beyond chance get less weight (``realize.fitting.outliers``); they are listed then.
 
     Returns
     -------
@@ -99,13 +106,14 @@ def fit_response(
     if kept.symmetric:
         from realize.fitting.symmetric import fit_symmetric
 
-        return fit_symmetric(w, H, sigma, gamma, order=order, method=method, period=period, direct=direct, kept=kept)
+        options = {"order": order, "method": method, "period": period, "direct": direct, "robust": robust}
+        return fit_symmetric(w, H, sigma, gamma, kept, options)
 
     def prepare(values: ComplexArray) -> Prepared:
         return prepared(w, values, sigma, gamma, direct is not False, kept, period)
 
     def search(data: Prepared, problem: Problem) -> tuple[str, Outcome]:
-        return _searched(problem, method, wanted, direct, lines, order == "auto")
+        return _searched(problem, method, wanted, direct, lines, order == "auto", robust)
 
     if kept.dead_time:
         from realize.fitting.dead_time import fit_with_dead_time
@@ -123,6 +131,7 @@ def _searched(
     direct: bool | str,
     lines: int,
     automatic: bool,
+    robust: bool,
 ) -> tuple[str, Outcome]:
     """Return the method's name and what it found; a real constant at all lines needs no method."""
     chosen = choose_method(method, problem)
@@ -133,9 +142,14 @@ def _searched(
         trivial = (Candidate(0, 0.0, 0.0, 0.0, True),)
         none = np.zeros(0, complex)
         return chosen.name, Outcome(problem, none, trivial, (remark,) if wanted[0] > 0 else ())
-    lowest, highest = _within_reach(problem, wanted, lines)
+    ceiling = HIGHEST_ORDER if chosen.name in CLIMBING else LARGE_ORDER
+    lowest, highest = _within_reach(problem, wanted, lines, ceiling)
     assert chosen.fit is not None
-    outcome = chosen.fit(problem, lowest, highest, direct == "auto")
+    outcome = chosen.fit(trusted(problem) if robust else problem, lowest, highest, direct == "auto")
+    if robust:
+        outcome = without_outliers(outcome, lowest, highest)
+    candidates, doubts = judged_candidates(outcome, chosen_by_data=lowest < highest)
+    outcome = replace(outcome, candidates=candidates, cautions=(*outcome.cautions, *doubts))
     if automatic and outcome.poles.size >= highest > 0 and outcome.candidates[-1].rms > 1e-9:
         tried = highest + problem.given
         remark = f"the order stopped at the highest one tried ({tried}), not because more brought nothing"
@@ -216,7 +230,7 @@ def order_range(order: Any) -> tuple[int, int | None]:
     return low, high
 
 
-def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) -> tuple[int, int]:
+def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int, ceiling: int) -> tuple[int, int]:
     """Return the lowest and highest number of free poles for a range of orders."""
     largest = problem.largest_order
     low, high = wanted[0] - problem.given, None if wanted[1] is None else wanted[1] - problem.given
@@ -241,7 +255,7 @@ def _within_reach(problem: Problem, wanted: tuple[int, int | None], lines: int) 
             raise InputError(
                 "1 line", "at least 2 lines to fit a response that is not a real constant", field="frequency"
             )
-        high = HIGHEST_ORDER
+        high = ceiling
         while high > 0 and problem.unknowns(high) * NUMBERS_PER_UNKNOWN > problem.numbers:
             high -= 1
     return low, min(high, largest)

@@ -20,7 +20,9 @@ from realize.kernels.vector_fitting import ordered_poles, starting_poles, weight
 ComplexArray = NDArray[np.complex128]
 
 #: Highest order tried by ``auto``.
-HIGHEST_ORDER = 40
+HIGHEST_ORDER = 160
+#: Above this order two pairs are added at a time, and ``auto`` stops at once where the criterion no longer falls.
+LARGE_ORDER = 40
 #: ``auto`` stops after this many orders in a row without a better criterion (two pairs).
 PATIENCE = 4
 #: Above this many times the noise power, orders that bring nothing by themselves do not end the search: a structure
@@ -107,9 +109,13 @@ class Search:
             starts.append(joined(self.best[order - 1].poles, self.additions(order - 1)[1]))
         if order - 2 in self.best:
             starts.append(joined(self.best[order - 2].poles, self.additions(order - 2)[0]))
+        if order - 4 in self.best and order > LARGE_ORDER:
+            more = joined(self.best[order - 4].poles, self.additions(order - 4)[0])
+            starts.append(joined(more, problem.additions(more)[0]))
         trials = [polish(problem, s, 12, 1e-3) for s in starts]
         spacings = [spacing_of(problem)] if starts else ["logarithmic", "linear", "real"]
-        if order in self.known or (starts and order > FRESH_ORDER):
+        odd = order % 2 == 1 and order > 6
+        if order in self.known or (starts and (odd or order > FRESH_ORDER)):
             spacings = []
         fresh = [relocate(problem, start(problem, order, s), 8 if starts else 20) for s in spacings]
         lowest = min((t.cost for t in trials), default=np.inf)
@@ -127,7 +133,8 @@ class Search:
     def grow(self, lowest: int, highest: int) -> None:
         """Fit orders from 0 until, near the noise, the criterion has not improved for ``PATIENCE`` orders."""
         orders = list(range(min(highest, EVERY_ORDER) + 1))
-        orders += [n for n in range(EVERY_ORDER + 1, highest + 1) if (n - highest) % 2 == 0]
+        orders += [n for n in range(EVERY_ORDER + 1, min(highest, LARGE_ORDER) + 1) if (n - highest) % 2 == 0]
+        orders += [n for n in range(LARGE_ORDER + 1, highest + 1) if (n - highest) % 4 == 0]
         orders = [n for n in orders if n >= self.problem.fewest]
         chosen = lowest
         for order in orders:
@@ -138,7 +145,8 @@ class Search:
                 chosen = lowest = order
             if self.criterion(order) < self.criterion(chosen):
                 chosen = order
-            tired = order - chosen >= PATIENCE and self.best[chosen].cost <= FAR * self.noise_power()
+            near = order > LARGE_ORDER or self.best[chosen].cost <= FAR * self.noise_power()
+            tired = order - chosen >= PATIENCE and near
             if tired or self.reproduced(order) or self.flat(order, lowest):
                 break
 

@@ -89,7 +89,7 @@ def prepared(
     if sigma is not None and basis != "given":
         cautions.append("a channel has no deviation above zero: the deviations given are not used")
     within = None if kept.plain else inside(kept, period, shift, lift)
-    problem = Problem(points, values, weights, basis == "given", basis == "estimated", direct, vanish, within)
+    problem = Problem(points, values, weights, basis == "given", basis == "estimated", direct, vanish, within, p)
     return Prepared(problem, basis, shift, lift, used, tuple(cautions))
 
 

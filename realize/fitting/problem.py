@@ -45,6 +45,10 @@ class Problem:
     structure : Inside, optional
         What the model must keep beyond that: poles of this problem are then the free ones, and ``direct`` and
         ``vanish`` do not count.
+    outputs : int
+        Rows of the matrix that the channels are, row by row.
+    trust : [k][channels] float, optional
+        By what the weights of single lines were lowered, at most 1.
     """
 
     points: ComplexArray
@@ -55,6 +59,8 @@ class Problem:
     direct: bool
     vanish: float
     structure: Inside | None = None
+    outputs: int = 1
+    trust: Array | None = None
 
     @property
     def x(self) -> Array:
@@ -94,6 +100,13 @@ class Problem:
     def unknowns(self, order: int) -> int:
         """Real unknowns of a model: free poles, and coefficients of the channels that are not all zero."""
         return order + self.active * self.coefficients(order)
+
+    def lean_unknowns(self, order: int) -> int:
+        """Real unknowns where every residue has rank one: outputs + inputs numbers for each pole."""
+        inputs = self.channels // self.outputs
+        if min(self.outputs, inputs) == 1 or self.structure is not None:
+            return self.unknowns(order)
+        return min(self.unknowns(order), order * (self.outputs + inputs) + self.active * int(self.direct))
 
     @property
     def largest_order(self) -> int:
@@ -192,10 +205,12 @@ class Problem:
         """Bayesian information criterion of a fit (Schwarz 1978), complex data counted as two numbers a line.
 
         Known deviations: 2 sum |misfit/deviation|^2 + unknowns ln N. Unknown size of the noise: N ln(cost/N)
-        + unknowns ln N. A cost below rounding counts as rounding.
+        + unknowns ln N. A cost below rounding counts as rounding. Unknowns are those of residues of rank one; what full
+        residues have beyond them costs 2 each, the misfit that they take off by chance and as much again (Akaike 1974).
         """
         count = self.numbers
-        penalty = self.unknowns(order) * np.log(max(count, 2))
+        lean = self.lean_unknowns(order)
+        penalty = lean * np.log(max(count, 2)) + 2 * (self.unknowns(order) - lean)
         cost = max(cost, self.floor, np.finfo(float).tiny)
         return float(2 * cost + penalty) if self.known else float(count * np.log(cost / count) + penalty)
 

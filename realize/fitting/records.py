@@ -34,6 +34,14 @@ class Candidate:
     criterion : float
         Bayesian information criterion; the lowest wins, only differences within one fit have a meaning.
     kept : bool
+    held_out : float or None
+        RMS of misfit / deviation at each line when it is left out of the fit; None: not looked at.
+    correlation : float or None
+        Of the weighted misfit between neighbouring lines: far from 0 where modes are missing.
+    spread : float or None
+        Largest deviation of a pole relative to its distance from the axis.
+    cancelling : int or None
+        Modes whose residue may be noise.
     """
 
     order: int
@@ -41,6 +49,10 @@ class Candidate:
     weighted: float
     criterion: float
     kept: bool
+    held_out: float | None = None
+    correlation: float | None = None
+    spread: float | None = None
+    cancelling: int | None = None
 
 
 @dataclass(frozen=True)
@@ -121,6 +133,18 @@ class Bars:
     independent: bool
     enlarged: bool
     growth: float
+
+
+@dataclass(frozen=True)
+class Outlier:
+    """One line of one channel that misfits beyond chance: its misfit in deviations, and its weight (1: as others)."""
+
+    line: int
+    output: int
+    input: int
+    frequency: float
+    size: float
+    weight: float
 
 
 @dataclass(frozen=True)
@@ -215,6 +239,8 @@ class Fit:
     bars : Bars or None
         None: no error bars were made; the deviations below are empty then.
     channels : tuple of ChannelRow
+    outliers : tuple of Outlier
+        By decreasing size.
     response_deviation : [k][outputs][inputs] float
         Of the fitted response at the data's lines: sqrt of the mean |error|^2.
     residue_deviation : [n][outputs][inputs] float
@@ -246,6 +272,7 @@ class Fit:
     factors: Factored | None = None
     bars: Bars | None = None
     channels: tuple[ChannelRow, ...] = ()
+    outliers: tuple[Outlier, ...] = ()
     response_deviation: Array = field(default_factory=_nothing)
     residue_deviation: Array = field(default_factory=_nothing)
     direct_deviation: Array = field(default_factory=_nothing)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,7 +16,11 @@ from realize.fitting.sample_problem import SampleProblem
 
 @dataclass(frozen=True, eq=False)
 class Outcome:
-    """What a method hands back: the problem as it was solved (weights, direct term), stable poles, the orders tried."""
+    """What a method hands back: the problem as it was solved (weights, direct term), stable poles, the orders tried.
+
+    ``tried`` holds free poles by their number, for the candidates whose poles are worth judging; ``sizes`` the misfit
+    of outliers in deviations, 0 elsewhere: [k][channels].
+    """
 
     problem: Problem
     poles: NDArray[np.complex128]
@@ -24,6 +28,8 @@ class Outcome:
     cautions: tuple[str, ...] = ()
     #: Name of the method whose start was the best one, where several were tried.
     method: str = ""
+    tried: dict[int, NDArray[np.complex128]] = field(default_factory=dict)
+    sizes: NDArray[np.float64] | None = None
 
 
 @dataclass(frozen=True, eq=False)

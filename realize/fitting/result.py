@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 from realize.errors import Refused
 from realize.fitting.modes import Units, mode_table
 from realize.fitting.noise import noise_factor
+from realize.fitting.outliers import outlier_rows
 from realize.fitting.prepare import Prepared
 from realize.fitting.problem import Problem
 from realize.fitting.records import ChannelRow, Factored, Fit, Noise, Worst
@@ -79,7 +80,8 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
     weighted, factor, noise = _noise(problem, estimate, unknowns, missed[used], basis, common, size)
     units = Units(shift, lift, period)
     table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(poles, contribution, peak))
-    cautions = [*cautions, *remarks(table, w, noise, weighted, worst)]
+    outliers, words = outlier_rows(outcome.sizes, used, w, m)
+    cautions = [*cautions, *words, *remarks(table, w, noise, weighted, worst)]
     spread = deviations(problem, estimate, units, bars, growth, used)
     weighting = np.full((lines, p * m), np.inf)
     with np.errstate(over="ignore", under="ignore"):
@@ -102,6 +104,7 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
         factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m))),
         bars=bars,
         channels=_channel_rows(problem, w, missed, lifted, used, factor, m),
+        outliers=outliers,
         response_deviation=_frozen(spread.response.reshape(H.shape)),
         residue_deviation=_frozen(spread.residues.reshape(-1, p, m)),
         direct_deviation=_frozen(spread.direct.reshape(p, m)),

@@ -8,7 +8,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from realize.errors import InputError, Refused
-from realize.fitting.face import HIGHEST_ORDER, order_range
+from realize.fitting.face import order_range
+from realize.fitting.order import LARGE_ORDER as HIGHEST_ORDER
 from realize.fitting.records import Candidate, Fit, Noise, PoleRow, Worst
 from realize.fitting.registry import choose_sample_method
 from realize.fitting.sample_problem import SampleProblem

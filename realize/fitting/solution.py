@@ -87,7 +87,7 @@ def solved(problem: Problem, poles: ComplexArray, lift: NDArray[np.int64], facto
     solution = p.solved(poles)
     active = np.any(p.values != 0, axis=0)
     slopes = slopes_of(p, solution, poles.size)
-    factors = _factors(p, slopes, solution.misfit)
+    factors = factors_of(p, slopes, solution.misfit)
     full = np.full(solution.poles.size, min(shape), dtype=np.intp)
     whole = Estimate(solution, poles.size, full, free_covariance(factors, slopes, active))
     if min(shape) == 1 or poles.size == 0 or not np.all(active) or not _affordable(poles.size, shape):
@@ -133,7 +133,8 @@ def _affordable(order: int, shape: tuple[int, int]) -> bool:
     return channels * (2 * order + 1.0) * most**2 * 2 <= AFFORDABLE
 
 
-def _factors(p: Problem, slopes: Slopes, misfit: ComplexArray) -> list[ChannelFactor]:
+def factors_of(p: Problem, slopes: Slopes, misfit: ComplexArray) -> list[ChannelFactor]:
+    """Return the factors of all channels."""
     zero = p.points == 0
     return [
         channel_factor(slopes.at(p.points, c), p.weights[:, c], misfit[:, c], zero) for c in range(p.values.shape[1])
@@ -202,7 +203,7 @@ def _refitted(
         lowest = cost
         solution = Solution(poles, np.ones(n, dtype=np.int64), residues, direct, misfit)
         slopes = PlainSlopes(p, solution)
-        factors = _factors(p, slopes, misfit)
+        factors = factors_of(p, slopes, misfit)
         ranks = np.zeros(n, dtype=np.intp)
         for s in shapes:
             ranks[s.index : s.index + (2 if s.paired else 1)] = s.rank

@@ -22,12 +22,8 @@ def fit_symmetric(
     H: ComplexArray,
     sigma: Array | None,
     gamma: Array | None,
-    *,
-    order: Any,
-    method: str,
-    period: float | None,
-    direct: Any,
     kept: Structure,
+    options: dict[str, Any],
 ) -> Fit:
     """Fit the upper triangle, each pair of channels replaced by its weighted mean: the same least squares problem.
 
@@ -57,11 +53,8 @@ def fit_symmetric(
         mean[:, :, None],
         deviation=None if spread is None else spread[:, :, None],
         coherence=None if together is None or spread is not None else together[:, :, None],
-        order=order,
-        method=method,
-        period=period,
-        direct=direct,
         structure=whole,
+        **options,
     )
     place = np.zeros((p, p), dtype=int)
     place[rows, columns] = place[columns, rows] = np.arange(rows.size)
@@ -109,6 +102,9 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
         for j in range(place.shape[1])
         if fit.channels
     )
+    outliers = tuple(
+        replace(row, output=int(i), input=int(j)) for row in fit.outliers for i, j in np.argwhere(place == row.output)
+    )
     # shapes and ranks are those of the list of channels, not of the matrix
     table = tuple(
         replace(row, rank=0, output_shape=_NO_SHAPE, output_shape_deviation=_NONE, input_shape=_NO_SHAPE)
@@ -119,6 +115,7 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
         fit,
         pole_table=table,
         channels=channels,
+        outliers=outliers,
         response_deviation=square(fit.response_deviation),
         residue_deviation=square(fit.residue_deviation),
         direct_deviation=square(fit.direct_deviation),

@@ -48,6 +48,11 @@ def thinned_to(problem: Problem, keep: int) -> Problem:
             break
         chosen[stretch == k] = True
         left -= int(size[k])
+    trust = None if problem.trust is None else problem.trust[chosen]
     return replace(
-        problem, points=problem.points[chosen], values=problem.values[chosen], weights=problem.weights[chosen]
+        problem,
+        points=problem.points[chosen],
+        values=problem.values[chosen],
+        weights=problem.weights[chosen],
+        trust=trust,
     )

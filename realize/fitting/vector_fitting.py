@@ -62,7 +62,8 @@ def fit_by(searched: Searched, problem: Problem, lowest: int, highest: int, dire
         without = finished(plain, polish(plain, trial.poles, 30, 1e-5))
         if plain.criterion(without.order, without.cost) <= solved.criterion(trial.order, trial.cost):
             trial, solved = without, plain
-    return Outcome(solved, trial.poles, _candidates(search, trial), _remarks(search, trial, noise))
+    tried = {n: t.poles for n, t in search.best.items()}
+    return Outcome(solved, trial.poles, _candidates(search, trial), _remarks(search, trial, noise), tried=tried)
 
 
 def _remarks(search: Search, trial: Trial, noise: float) -> tuple[str, ...]:
@@ -112,6 +113,8 @@ def poles_by_relocation(problem: Problem, order: int) -> Trial:
 def _weights_from_misfit(problem: Problem, trial: Trial) -> NDArray[np.float64] | None:
     misfit = problem.misfit(trial.poles)
     weights = 1 / noise_shape(problem.x, misfit, smoothed_size(problem.values + misfit, 0))
+    if problem.trust is not None:
+        weights = weights * problem.trust
     change = weights / problem.weights
     change = change / np.median(change)
     return weights if np.max(change) > MOVED or np.min(change) < 1 / MOVED else None

@@ -198,7 +198,9 @@ def fit_table(candidates: Iterable[Mapping[str, Any]], *, page: Page = PLAIN) ->
     ----------
     candidates : iterable of mappings
         ``order``, and what there is of ``rms`` (relative misfit), ``weighted`` (1 = as large as the noise),
-        ``bound`` (of a reduction's error), ``criterion`` (smaller is better), ``kept``, ``note``.
+        ``bound`` (of a reduction's error), ``criterion`` (smaller is better), ``held_out`` (misfit/noise of lines left
+        out), ``correlation`` (of neighbouring misfits), ``spread`` (largest deviation of a pole relative to its
+        distance from the axis), ``cancelling`` (modes that may be noise), ``kept``, ``note``.
     """
     listed = [dict(candidate) for candidate in candidates]
     if not listed:
@@ -223,6 +225,10 @@ _CANDIDATE = (
     ("weighted", "misfit/noise", 3),
     ("bound", "error bound", 3),
     ("criterion", "criterion", 6),
+    ("held_out", "held out", 3),
+    ("correlation", "alike", 2),
+    ("spread", "poles ±", 2),
+    ("cancelling", "doubtful", 2),
 )
 
 

@@ -13,6 +13,8 @@ from realize.models import FrequencyResponse
 
 #: Lines of the confidence band that a receipt keeps; ``realize.fitting.Fit`` has all of them.
 BAND_LINES = 40
+#: Outliers that a receipt lists.
+MOST_OUTLIERS = 200
 #: What the bars of every fit leave out; docs/methods/error-bars.rst says more.
 EXCLUDES = (
     "errors of the model itself: modes outside the band, dynamics that are not linear, an order that is wrong, a dead "
@@ -37,7 +39,17 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
         "lines": int(w.size),
         "noise": {"basis": found.noise.basis, "level": found.noise.level},
         "candidates": [
-            {"order": c.order, "rms": c.rms, "weighted": c.weighted, "criterion": c.criterion, "kept": c.kept}
+            {
+                "order": c.order,
+                "rms": c.rms,
+                "weighted": c.weighted,
+                "criterion": c.criterion,
+                "kept": c.kept,
+                "held_out": c.held_out,
+                "correlation": c.correlation,
+                "spread": None if c.spread is None else _finite(c.spread),
+                "cancelling": c.cancelling,
+            }
             for c in found.candidates
         ],
         "poles": [[pole.real, pole.imag, count] for pole, count in Counter(found.poles.tolist()).items()],
@@ -70,6 +82,16 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
                 "frequency": row.frequency,
             }
             for row in found.channels
+        ],
+        "outliers": [
+            {
+                "frequency": row.frequency,
+                "output": row.output,
+                "input": row.input,
+                "size": row.size,
+                "weight": row.weight,
+            }
+            for row in found.outliers[:MOST_OUTLIERS]
         ],
         "gain": {"value": _listed(found.gain), "deviation": _listed(found.gain_deviation)},
         "band": _band(found, w),
