@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.kernels.structured_solution import Chain
+
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
@@ -187,10 +189,13 @@ class Factored:
     zeros : tuple of [..] complex
         One list a channel, row by row.
     gain : [outputs][inputs] float
+    chain : Chain or None
+        The same with what all channels have in common as one factor; channels row by row.
     """
 
     zeros: tuple[ComplexArray, ...]
     gain: Array
+    chain: Chain | None = None
 
 
 @dataclass(frozen=True)

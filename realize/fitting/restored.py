@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -10,7 +11,8 @@ from numpy.typing import NDArray
 from realize.errors import Refused
 from realize.fitting.problem import Problem
 from realize.fitting.sampled import factors_back, mapped_back
-from realize.kernels.structured_solution import Factors, Solution
+from realize.fitting.structure import Inside
+from realize.kernels.structured_solution import Chain, Factors, Solution
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -41,9 +43,50 @@ def in_z(problem: Problem, solution: Solution, c: float) -> Solution:
             listed[: kept.given_zeros.size] = kept.given_zeros
             zeros.append(listed)
             gains.append(lead)
-        factors = Factors(tuple(zeros), np.array(gains))
+        factors = Factors(tuple(zeros), np.array(gains), _chain_in_z(kept, factors.chain, c))
         direct = np.where([z.size == poles.size for z in factors.zeros], factors.gain, 0.0)
     return replace(solution, poles=poles, residues=residues, direct=direct, factors=factors)
+
+
+def _chain_in_z(kept: Inside, chain: Chain | None, c: float) -> Chain | None:
+    if chain is None:
+        return None
+    zeros, lead = factors_back(chain.zeros, chain.outer, 1.0, c)
+    zeros[: kept.given_zeros.size] = kept.given_zeros
+    outer = mapped_back(chain.outer, np.zeros((chain.outer.size, 1), complex), np.zeros(1), c)[0]
+    poles, residues, direct = mapped_back(chain.poles, chain.residues * lead, chain.direct * lead, c, chain.powers)
+    images = c * (kept.given_poles - 1) / (kept.given_poles + 1)
+    for given, image in zip(kept.given_poles, images, strict=True):
+        outer[chain.outer == image] = given
+        poles[chain.poles == image] = given
+    return Chain(zeros, outer, poles, chain.powers, residues, direct)
+
+
+def chain_in_units(problem: Problem, chain: Chain | None, scale: int, lift: NDArray[np.int64]) -> Chain | None:
+    """Return the chain in the units of the data, fixed zeros and poles as they were given; None beyond doubles."""
+    kept = problem.structure
+    if chain is None or kept is None:
+        return None
+    if scale == 0:
+        residues, direct = _lifted(chain.residues, lift), _lifted(chain.direct + 0j, lift).real
+        return replace(chain, residues=residues, direct=direct)
+    given = {complex(_lifted(p, -scale)): complex(p) for p in (*kept.given_poles, *kept.given_zeros)}
+
+    def out(roots: ComplexArray) -> ComplexArray:
+        back = [given.get(r, complex(_lifted(np.complex128(r), scale))) for r in roots.tolist()]
+        return np.array(back, dtype=complex)
+
+    excess = scale * (chain.outer.size - chain.zeros.size)
+    with np.errstate(over="ignore", under="ignore"):
+        residues = _lifted(chain.residues, lift + scale * chain.powers[:, None] + excess)
+        direct = _lifted(chain.direct + 0j, lift + excess).real
+    if not (np.all(np.isfinite(residues)) and np.all(np.isfinite(direct))):
+        return None
+    return Chain(out(chain.zeros), out(chain.outer), out(chain.poles), chain.powers, residues, direct)
+
+
+def _lifted(values: Any, exponent: Any) -> ComplexArray:
+    return np.asarray(np.ldexp(np.real(values), exponent) + 1j * np.ldexp(np.imag(values), exponent), dtype=complex)
 
 
 def values_of(solution: Solution, points: ComplexArray, contributions: list[ComplexArray]) -> ComplexArray:

@@ -16,7 +16,7 @@ from realize.fitting.problem import Problem
 from realize.fitting.records import ChannelRow, Factored, Fit, Noise, Worst
 from realize.fitting.registry import Outcome
 from realize.fitting.remarks import remarks
-from realize.fitting.restored import factors_in_units, in_z, values_of
+from realize.fitting.restored import chain_in_units, factors_in_units, in_z, values_of
 from realize.fitting.solution import Estimate, solved, unknowns_of
 from realize.fitting.spread import deviations
 
@@ -66,6 +66,7 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
     if problem.structure is not None:
         out_poles[poles.size - problem.given :] = problem.structure.given_poles
     factors = factors_in_units(problem, solution, scale, lift)
+    chain = None if solution.factors is None else chain_in_units(problem, solution.factors.chain, scale, lift)
     if not all(np.all(np.isfinite(a)) for a in (out_residues, out_direct, out_poles)):
         raise Refused("a residue lies beyond the range of double precision; use other units of frequency or response")
     top = np.max(lift)
@@ -101,7 +102,7 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
         pole_table=table,
         cautions=tuple(cautions),
         powers=_frozen(powers),
-        factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m))),
+        factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m)), chain),
         bars=bars,
         channels=_channel_rows(problem, w, missed, lifted, used, factor, m),
         outliers=outliers,

@@ -90,7 +90,11 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
     line, i, j = (int(n) for n in np.unravel_index(int(np.argmax(relative)), relative.shape))
     factors = fit.factors
     if factors is not None:
-        factors = Factored(tuple(factors.zeros[k] for k in place.ravel()), _frozen(factors.gain[:, 0][place]))
+        chain = factors.chain
+        if chain is not None:
+            chain = replace(chain, residues=chain.residues[:, place.ravel()], direct=chain.direct[place.ravel()])
+        gain = _frozen(factors.gain[:, 0][place])
+        factors = Factored(tuple(factors.zeros[k] for k in place.ravel()), gain, chain)
 
     def square(values: NDArray[Any]) -> NDArray[Any]:
         """Return [..][channels of the triangle][1] as [..][ports][ports]."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections import Counter
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -20,11 +21,30 @@ CIRCLE = 64
 
 
 @dataclass(frozen=True, eq=False)
+class Chain:
+    """All channels as prod(s - zeros) / prod(s - outer), times sum residues / (s - poles)^powers + direct.
+
+    The first factor is common to the channels and holds the structure: fixed zeros and relative degree.
+    """
+
+    zeros: ComplexArray
+    outer: ComplexArray
+    poles: ComplexArray
+    powers: NDArray[np.int64]
+    residues: ComplexArray
+    direct: Array
+
+
+@dataclass(frozen=True, eq=False)
 class Factors:
-    """Zeros and leading coefficients: channel c is gain[c] prod(s - zeros[c]) / prod(s - poles)."""
+    """Zeros and leading coefficients: channel c is gain[c] prod(s - zeros[c]) / prod(s - poles).
+
+    ``chain`` is the same with a common factor, None where that would be improper.
+    """
 
     zeros: tuple[ComplexArray, ...]
     gain: Array
+    chain: Chain | None = None
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,24 +78,7 @@ def structured_solution(task: Task, poles: ComplexArray) -> Solution:
     basis = projection.basis
     coefficients = np.array(projection.coefficients).T
     every = np.concatenate([poles, known.poles])
-    counted: Counter[complex] = Counter()
-    powers = []
-    for pole in every.tolist():
-        counted[pole] += 1
-        powers.append(counted[pole])
-    residues = np.zeros((every.size, task.values.shape[1]), dtype=complex)
-    distinct = np.array(list(counted), dtype=complex)
-    for pole in distinct[distinct.imag >= 0].tolist():
-        others = np.abs(distinct[distinct != pole] - pole)
-        radius = 0.5 * float(np.min(others)) if others.size else max(abs(pole), 1.0)
-        turn = radius * np.exp(2j * np.pi * (np.arange(CIRCLE) + 0.5) / CIRCLE)
-        around = basis.columns(pole + turn) @ coefficients
-        for k in np.flatnonzero(every == pole):
-            found = np.mean(around * turn[:, None] ** powers[k], axis=0)
-            residues[k] = found if pole.imag else found.real
-            if pole.imag:
-                mate = np.flatnonzero((every == complex(pole).conjugate()) & (np.array(powers) == powers[k]))[0]
-                residues[mate] = residues[k].conj()
+    powers, residues = _residues(lambda at: basis.columns(at) @ coefficients, every)
     direct = np.zeros(task.values.shape[1])
     factored = known.excess > 1 or known.zeros.size > 0
     if known.excess == 0 and not factored:
@@ -87,12 +90,38 @@ def structured_solution(task: Task, poles: ComplexArray) -> Solution:
     residues[:, dead], direct[dead] = 0.0, 0.0
     return Solution(
         every,
-        np.array(powers, dtype=np.int64),
+        powers,
         residues,
         direct,
         projection.response() - task.values,
         factors,
     )
+
+
+def _residues(
+    function: Callable[[ComplexArray], ComplexArray], every: ComplexArray
+) -> tuple[NDArray[np.int64], ComplexArray]:
+    """Return powers [n] and residues [n][channels] of a function with these poles, from circles around them."""
+    counted: Counter[complex] = Counter()
+    listed = []
+    for pole in every.tolist():
+        counted[pole] += 1
+        listed.append(counted[pole])
+    powers = np.array(listed, dtype=np.int64)
+    residues = np.zeros((every.size, function(np.ones(1, dtype=complex) * 1j).shape[1]), dtype=complex)
+    distinct = np.array(list(counted), dtype=complex)
+    for pole in distinct[distinct.imag >= 0].tolist():
+        others = np.abs(distinct[distinct != pole] - pole)
+        radius = 0.5 * float(np.min(others)) if others.size else max(abs(pole), 1.0)
+        turn = radius * np.exp(2j * np.pi * (np.arange(CIRCLE) + 0.5) / CIRCLE)
+        around = function(pole + turn)
+        for k in np.flatnonzero(every == pole):
+            found = np.mean(around * turn[:, None] ** powers[k], axis=0)
+            residues[k] = found if pole.imag else found.real
+            if pole.imag:
+                mate = np.flatnonzero((every == complex(pole).conjugate()) & (powers == powers[k]))[0]
+                residues[mate] = residues[k].conj()
+    return powers, residues
 
 
 def _factors(task: Task, projection: StructuredProjection, poles: ComplexArray) -> Factors:
@@ -120,7 +149,33 @@ def _factors(task: Task, projection: StructuredProjection, poles: ComplexArray) 
         gain = None if task.gain is None else float(task.gain[c])
         listed.append(zeros)
         gains.append(_leading(task, projection, c, zeros, poles, gain))
-    return Factors(tuple(listed), np.array(gains))
+    return Factors(tuple(listed), np.array(gains), _chain(task, projection, poles))
+
+
+def _chain(task: Task, projection: StructuredProjection, poles: ComplexArray) -> Chain | None:
+    """Return the solution with its common factor apart, whose leading coefficient goes to the residues."""
+    basis = projection.basis
+    outer: list[complex] = []
+    left = poles.tolist()
+    for unit in basis.outer:
+        members = [p for p in left if p.imag > 0] if unit.pair else [p for p in left if p.imag == 0]
+        size = [abs(abs(p) - unit.w) + abs((-2 * p.real if unit.pair else -p.real) - unit.a) for p in members]
+        chosen = members[int(np.argmin(size))]
+        for pole in [chosen, chosen.conjugate()] if unit.pair else [chosen]:
+            left.remove(pole)
+            outer.append(pole)
+    zeros = task.known.zeros
+    if zeros.size > len(outer):
+        return None
+    place = np.array([1j * float(np.exp(np.mean(np.log(np.abs(task.points[task.points != 0])))))])
+    mantissa, exponent = _product(place[0] - zeros, place[0] - np.array(outer, dtype=complex))
+    lead = float((basis.factor(place)[0] / np.ldexp(1.0, exponent) / mantissa).real)
+    every = np.array(left, dtype=complex)
+    powers, residues = _residues(lambda at: basis.rest(at) @ np.array(projection.coefficients).T, every)
+    direct = np.zeros(task.values.shape[1])
+    if not basis.strict:
+        direct = np.array([coefficient[-1] for coefficient in projection.coefficients])
+    return Chain(zeros, np.array(outer, dtype=complex), every, powers, residues * lead, direct * lead)
 
 
 def _leading(

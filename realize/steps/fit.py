@@ -196,7 +196,7 @@ def fit(
         found, details["passivity"] = enforced(found, structure, w, passive_as, period, isinstance(order, int))
     if found.dead_time is not None:
         dead = _estimated(found.dead_time)
-    fitted = _model(found, source.common() | {"dead_time": dead})
+    fitted = _model(found, source.common() | {"dead_time": dead}, to)
     task = Task(fitted, to)
     route = plan_route(task)
     result = convert_model(task, route)
@@ -264,13 +264,17 @@ def _lines(source: FrequencyResponse, band: tuple[float, float] | None) -> np.nd
     return keep
 
 
-def _model(found: Any, common: dict[str, Any]) -> Model:
+def _model(found: Any, common: dict[str, Any], to: str) -> Model:
     """Return the fit as partial fractions, or as zeros, poles and gain where the structure needs that."""
     if found.factors is None:
         return PoleResidue(
             poles=found.poles, residues=found.residues, powers=found.powers, direct=found.direct, **common
         )
     p, m = found.factors.gain.shape
+    if to == "state-space" and p * m > 1 and found.factors.chain is not None:
+        from realize.steps.chained import chained_states
+
+        return chained_states(found.factors.chain, (p, m), common)
     zeros = [[found.factors.zeros[i * m + j] for j in range(m)] for i in range(p)]
     none = np.zeros(0, dtype=complex)
     poles = [[found.poles if found.factors.gain[i, j] else none for j in range(m)] for i in range(p)]
