@@ -20,8 +20,10 @@ SAME = 0.005
 #: Two dwells are of one frequency to this share.
 SAME_FREQUENCY = 1e-4
 #: A dwell is one where a sine has this share of the input's power.
-MOSTLY_SINE = 0.5
+MOSTLY_SINE = 0.8
 FEWEST_CYCLES = 4
+#: Cycles at the start of a dwell that say how long one is.
+TYPICAL = 64
 MOST_BLOCKS = 8
 LEFT_OUT = 1 / 3
 
@@ -32,6 +34,8 @@ def average(records: list[Record], period: float, settings: Settings) -> Estimat
         raise InputError(
             f"{records[0].inputs.shape[1]} inputs", "one input at a time for a stepped sine", field="input"
         )
+    if settings.segment is not None and settings.segment < 16:
+        raise InputError(f"dwells of {settings.segment} samples", "at least 16", field="segment")
     rows = []
     for record in records:
         for start, stop in _dwells(record.inputs[:, 0], settings.segment):
@@ -68,9 +72,10 @@ def _dwells(u: Array, segment: int | None) -> list[tuple[int, int]]:
     # noise moves each crossing, by what neighbouring cycles differ at best
     jitter = float(np.median(np.abs(np.diff(length)))) if length.size > 2 else 0.0
     found: list[tuple[int, int]] = []
-    first = 0
+    first, typical = 0, 0.0
     for k in range(1, length.size + 1):
-        typical = float(np.median(length[first:k]))
+        if k - first <= TYPICAL:
+            typical = float(np.median(length[first:k]))
         same = k < length.size and abs(length[k] - typical) <= max(SAME * typical, 4 * jitter, 1e-6)
         if same:
             continue
@@ -83,24 +88,14 @@ def _dwells(u: Array, segment: int | None) -> list[tuple[int, int]]:
 def _rising(u: Array) -> Array:
     """Return the times (samples) at which a signal rises through zero, with a hysteresis of a tenth of its size."""
     level = 0.1 * float(np.sqrt(2) * np.std(u))
-    low = np.flatnonzero(u < -level)
-    crossings = []
-    k = 0
-    while True:
-        at = np.searchsorted(low, k)
-        if at == low.size:
-            break
-        above = np.flatnonzero(u[low[at] :] > level)
-        if above.size == 0:
-            break
-        top = int(low[at] + above[0])
-        below = top - 1
-        while u[below] > 0:
-            below -= 1
-        rise = float(u[below + 1] - u[below])
-        crossings.append(below - float(u[below]) / rise if rise > 0 else float(below))
-        k = top
-    return np.array(crossings)
+    beyond = np.flatnonzero(np.abs(u) > level)
+    side = u[beyond] > 0
+    tops = beyond[1:][side[1:] & ~side[:-1]]
+    # the last sample at or below zero before each of them
+    place = np.maximum.accumulate(np.where(u <= 0, np.arange(u.size), -1))
+    below = place[tops]
+    rise = u[below + 1] - u[below]
+    return below - u[below] / np.where(rise > 0, rise, 1.0)  # type: ignore[no-any-return]
 
 
 def _dwell(record: Record, start: int, stop: int) -> tuple[float, ComplexArray, Array] | None:

@@ -21,7 +21,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.errors import InputError
+from realize.errors import InputError, Refused
 from realize.estimation.noise import deviation_factor, pooled_noise
 from realize.estimation.records import Array, ComplexArray, Estimate, Record, Settings
 from realize.kernels.spectra import (
@@ -44,6 +44,8 @@ TOGETHER = 1e-6
 #: Fewest segments side by side for each input where the length is chosen here: a fit averages over lines, and what it
 #: cannot mend is resolution.
 SEGMENTS_PER_INPUT = 8
+#: Most numbers in all segments together.
+MOST = 200_000_000
 #: Shortest segment that is chosen here, samples.
 SHORTEST = 16
 #: Share of the lines at which the bias by resolution may exceed twice the random error without a caution.
@@ -65,13 +67,10 @@ class _Cut:
         for run in np.unique(self.runs):
             own = self.starts[self.runs == run]
             step = int(own[1] - own[0]) if own.size > 1 else self.window.size
-            count = own.size
-            total += count + 2 * sum(
-                (count - q) * window_correlation(self.window, q * step) ** 2
-                for q in range(1, count)
-                if q * step < self.window.size
-            )
-        return self.starts.size**2 / total
+            alike = range(1, min(own.size, -(-self.window.size // step)))
+            total += own.size
+            total += 2 * sum((own.size - q) * window_correlation(self.window, q * step) ** 2 for q in alike)
+        return self.starts.size**2 / total if total > 0 else 0.0
 
 
 def average(records: list[Record], period: float, settings: Settings) -> Estimate:
@@ -105,9 +104,14 @@ def _cut(records: list[Record], length: int, settings: Settings) -> _Cut:
 
 def _finished(records: list[Record], period: float, settings: Settings, length: int, *, chosen: bool) -> Estimate:
     m, p = records[0].inputs.shape[1], records[0].outputs.shape[1]
-    cut = _cut(records, length, settings)
     if length < 8:
         raise InputError(f"segments of {length} samples", "at least 8", field="segment")
+    cut = _cut(records, length, settings)
+    if cut.starts.size * length * (m + p) > MOST:
+        raise Refused(
+            f"{cut.starts.size:,} segments of {length:,} samples do not fit in memory: pass a smaller --overlap, or "
+            "thin the record out"
+        )
     if cut.averages < m + 1:
         raise InputError(
             f"{cut.starts.size} segment(s) of {length} samples, {cut.averages:.3g} independent ones",

@@ -138,6 +138,8 @@ BAD: list[tuple[Any, Any, Settings, str]] = [
     ([U[:100]], [Y[:100]], Settings(), "at least 128"),
     ([U], [Y[:-1]], Settings(), "4095 samples"),
     ([U], [Y], Settings(segment=3000), "independent"),
+    ([U], [Y], Settings(segment=5000), "0 segment"),
+    ([U], [Y], Settings(averaging="stepped-sine", segment=8), "at least 16"),
     ([U], [Y], Settings(segment=4), "at least 8"),
     ([U], [Y], Settings(averaging="periodic"), "do not repeat"),
     ([U], [Y], Settings(excitation_period=5000), "one period"),
