@@ -150,7 +150,23 @@ def _averaged(runs: list[Record], period: float, settings: Settings) -> Estimate
         length = _common_period(runs)
         if length is not None and len(runs) >= runs[0].inputs.shape[1]:
             return periodic.average(runs, period, length)
+    _refuse_single_steps(runs)
     return welch.average(runs, period, settings)
+
+
+def _refuse_single_steps(runs: list[Record]) -> None:
+    """Raise InputError where an input moves once or twice in the whole record: no average is in that."""
+    for record in runs:
+        change = np.abs(np.diff(record.inputs, axis=0))
+        moves = np.sum(change > 1e-6 * np.max(change, axis=0), axis=0)
+        if len(runs) == 1 and np.any(moves <= 2):
+            j = int(np.argmin(moves))
+            raise InputError(
+                f"an input that moves {int(moves[j])} time(s) in the whole record, a step or a pulse",
+                "an excitation that goes on; or the output from the step on, divided by its size, as a column `step` "
+                "(a pulse of one sample: `impulse`)",
+                field=f"input {j}",
+            )
 
 
 def _common_period(runs: list[Record]) -> int | None:

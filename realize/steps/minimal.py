@@ -70,7 +70,7 @@ def minimal(
     started = time.perf_counter()
     source = model_of(model)
     if is_data(source):
-        raise Refused("a frequency response is data and has no minimal realization; fit a model first")
+        raise Refused(f"a model of kind {source.kind} is data and has no minimal realization; fit a model first")
     asked = dict(limits or {})
     with whatever_it_costs(certify), asking("minimal", source, {}, second_opinion) as opinion:
         route: list[str] = []

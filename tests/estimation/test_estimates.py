@@ -139,6 +139,7 @@ BAD: list[tuple[Any, Any, Settings, str]] = [
     ([U], [Y[:-1]], Settings(), "4095 samples"),
     ([U], [Y], Settings(segment=3000), "independent"),
     ([U], [Y], Settings(segment=5000), "0 segment"),
+    ([np.arange(4096) > 500], [Y], Settings(), "a step or a pulse"),
     ([U], [Y], Settings(averaging="stepped-sine", segment=8), "at least 16"),
     ([U], [Y], Settings(segment=4), "at least 8"),
     ([U], [Y], Settings(averaging="periodic"), "do not repeat"),
