@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import cmath
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
@@ -171,7 +172,7 @@ def factors_from_fractions(grid: Grid, task: Task) -> list[list[Factors]]:
                 precise[root.value] = (exact_value(ball.real), exact_value(ball.imag))
         found = [root.value for root in distinct for _ in range(root.multiplicity)]
         for value in found:
-            if not (np.isfinite(value.real) and np.isfinite(value.imag)):
+            if not cmath.isfinite(value):
                 raise Refused("a pole or zero lies beyond the range of doubles; scale time first")
         return found
 

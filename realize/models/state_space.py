@@ -66,9 +66,9 @@ class StateSpace(Model):
             raise InputError(f"{D.shape[0]} x {D.shape[1]}", f"{p} x {m} (outputs x inputs)", field="D")
         if E is not None and E.shape != (n, n):
             raise InputError(f"{E.shape[0]} x {E.shape[1]}", f"{n} x {n}, as A", field="E")
-        for name, value in zip("ABCD", (A, B, C, D), strict=True):
-            self._put(name, checks.frozen(value))
-        self._put("E", None if E is None else checks.frozen(E))
+        for name, value in zip("ABCDE", (A, B, C, D, E), strict=True):
+            # those that were given are frozen copies already
+            self._put(name, checks.frozen(value) if value is not None and value.flags.writeable else value)
         self._put("states", checks.signals(self.states, n, "states", Signal))
 
     def _matrix(self, name: str) -> NDArray[Any]:

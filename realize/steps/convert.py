@@ -414,9 +414,8 @@ def _rival(source: Model, shape: str, claims: list[Claim]) -> str:
     if shape == "modal" and _worst(claims) > GOOD:
         return "cascade"
     if shape == "cascade" and source.shape == (1, 1):
-        poles = view_of(source).poles
-        oscillating = (poles.s.imag != 0) & (poles.damping < FLEXIBLE) & (poles.s.real < 0)
-        if poles.s.size and bool(np.all(oscillating)):
+        poles = view_of(source).poles.s.tolist()
+        if poles and all(s.imag and -FLEXIBLE * abs(s) < s.real < 0 for s in poles):
             return "modal"
     return ""
 

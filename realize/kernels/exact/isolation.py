@@ -340,8 +340,8 @@ def roots_near(p: fmpq_poly, starts: Sequence[complex]) -> list[complex] | None:
                 found.append(complex(moved.real, sign * moved.imag))
     if len(found) != n or not all(map(math.isfinite, radii)):
         return None
-    centre, radius = np.array(centres), np.array(radii)
-    apart = np.abs(centre[:, None] - centre[None, :]) * (1 - 1e-9) > radius[:, None] + radius[None, :]
+    centre, reach = np.array(centres), np.array(radii)
+    apart = np.abs(centre[:, None] - centre[None, :]) * (1 - 1e-9) > reach[:, None] + reach[None, :]
     np.fill_diagonal(apart, True)
-    near = bool((radius <= NEAR * np.abs(centre)).all())
+    near = bool((reach <= NEAR * np.abs(centre)).all())
     return found if near and apart.all() else None
