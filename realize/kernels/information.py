@@ -21,6 +21,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.kernels.separable import chunks, triangular
 from realize.kernels.vector_fitting import real_basis, stacked
 
 Array = NDArray[np.float64]
@@ -98,9 +99,11 @@ def channel_factor(
         Lines at frequency 0, which are real and have half the information.
     """
     own = np.where(zero, weights * np.sqrt(0.5), weights)
-    whole = stacked(own[:, None] * np.hstack([slopes, misfit[:, None]]))
-    triangle: Array = np.linalg.qr(whole, mode="r")  # type: ignore[assignment]
     size = slopes.shape[1]
+    triangle: Array = np.zeros((0, size + 1))
+    for part in chunks(misfit.size, 2 * (size + 1)):
+        whole = np.hstack([slopes[part], misfit[part, None]])
+        triangle = triangular(stacked(own[part, None] * whole), triangle)
     return ChannelFactor(triangle[:size, :size], triangle[:size, size], float(np.sum(triangle[size:, size] ** 2)))
 
 
