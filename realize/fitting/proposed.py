@@ -8,6 +8,7 @@ from typing import Literal, overload
 import numpy as np
 from numpy.typing import NDArray
 
+from realize.fitting.noise import unpredicted
 from realize.fitting.order import FAR, Search, Trial, joined, polish
 from realize.fitting.problem import Problem
 from realize.fitting.registry import Outcome
@@ -26,6 +27,9 @@ Known = dict[int, ComplexArray]
 LITTLE = 0.02
 #: A misfit power within this factor of the noise is at the noise: the information criterion decides on the rest.
 AT_NOISE = 1.15
+UNEVEN = 2.0
+#: Fewer lines than this tell nothing about noise by their neighbours.
+FEWEST_NEIGHBOURS = 24
 #: Most exchanges of the least useful pole for the one that brings most.
 EXCHANGES = 6
 #: Smaller orders that would do are looked for up to this many poles times channels.
@@ -86,12 +90,23 @@ class ProposedSearch(Search):
 
 
 def at_noise(problem: Problem, trial: Trial) -> bool:
-    """Return whether a fit misses the data by no more than their noise, or than rounding."""
+    """Return whether a fit misses the data by no more than their noise, or than rounding.
+
+    The noise is what neighbouring misfits do not predict: its median, or, up to ``UNEVEN`` times that, its mean. They
+    differ where the weights are not in proportion to the noise; the mean alone would take a narrow resonance for noise.
+    """
     if trial.cost <= problem.floor:
         return True
     alone = Search(problem)
     alone.best[trial.order] = trial
-    return trial.cost <= AT_NOISE * alone.noise_power() or alone.reproduced(trial.order)
+    noise = alone.noise_power()
+    if trial.cost <= AT_NOISE * noise or alone.reproduced(trial.order):
+        return True
+    if problem.known or trial.cost > UNEVEN * noise or problem.points.size < FEWEST_NEIGHBOURS:
+        return False
+    missed = unpredicted(problem.x, problem.misfit(trial.poles) * problem.weights)
+    share = problem.numbers / max(problem.numbers - problem.unknowns(trial.order), 1)
+    return trial.cost <= AT_NOISE * problem.numbers / 2 * float(np.mean(np.abs(missed) ** 2)) * share
 
 
 def mended(problem: Problem, trial: Trial) -> Trial:
