@@ -34,7 +34,10 @@ def floored(deviation: Array, values: ComplexArray) -> Array | None:
         positive = np.flatnonzero(result[:, c] > 0)
         if positive.size == 0:
             return None
-        nearest = positive[np.argmin(np.abs(lines[:, None] - positive[None, :]), axis=1)]
+        after = np.clip(np.searchsorted(positive, lines), 0, positive.size - 1)
+        before = np.maximum(after - 1, 0)
+        closer = np.abs(lines - positive[before]) <= np.abs(positive[after] - lines)
+        nearest = np.where(closer, positive[before], positive[after])
         result[:, c] = np.maximum(result[nearest, c], np.finfo(float).eps * np.abs(values[:, c]))
     return result
 
