@@ -305,6 +305,49 @@ def rows_of(estimate: Estimate, unit: float, places: list[tuple[int | None, int 
     )
 
 
+def widened(fit: Fit, other: Fit, change: ComplexArray) -> Fit:
+    """Return a fit whose error bars hold what one deviation of a dead time does to it as well.
+
+    var(x) = var(x with the dead time known) + (d x / d dead time)^2 var(dead time).
+
+    Parameters
+    ----------
+    fit, other : Fit
+        With the dead time as estimated, and with one deviation more.
+    change : [k][outputs][inputs] complex
+        Change of the response, dead time included.
+    """
+    if len(fit.pole_table) != len(other.pole_table) or fit.residues.shape != other.residues.shape:
+        return fit
+    rows, residues = [], fit.residue_deviation.copy()
+    for row, there in zip(fit.pole_table, other.pole_table, strict=True):
+        rows.append(
+            replace(
+                row,
+                frequency_deviation=float(np.hypot(row.frequency_deviation, there.frequency - row.frequency)),
+                damping_deviation=float(np.hypot(row.damping_deviation, there.damping - row.damping)),
+            )
+        )
+        if row.pair == there.pair:
+            size = np.abs(other.residues[there.index] - fit.residues[row.index])
+            residues[row.index : row.index + 1 + int(row.pair)] = np.hypot(residues[row.index], size)
+    with np.errstate(invalid="ignore"):
+        gain = np.nan_to_num(other.gain - fit.gain)
+    direct = np.hypot(fit.direct_deviation, other.direct - fit.direct)
+    steady = np.hypot(fit.gain_deviation, gain)
+    response = np.hypot(fit.response_deviation, np.abs(change))
+    for array in (residues, direct, steady, response):
+        array.setflags(write=False)
+    return replace(
+        fit,
+        pole_table=tuple(rows),
+        residue_deviation=residues,
+        direct_deviation=direct,
+        gain_deviation=steady,
+        response_deviation=response,
+    )
+
+
 def fit_with_dead_time(
     w: Array,
     H: ComplexArray,
@@ -349,6 +392,17 @@ def fit_with_dead_time(
     found = _continuous if period is None else _sampled
     name, outcome, estimate = found(data, phase, groups, begin, search, lowest)
     fit = finish(w, rotated(estimate.delays), data, outcome, name, period)
+    for g, spread in enumerate([] if estimate.deviations is None else estimate.deviations.tolist()):
+        step = np.where(np.arange(groups.shape[1]) == g, spread, 0.0)
+        if not 0 < spread < np.inf:
+            continue
+        problem = turned(outcome.problem, phase, groups @ step)
+        poles = problem.apart(problem.polished(outcome.poles, 20, 1e-7)[0])
+        moved = replace(outcome, problem=problem, poles=poles)
+        other = finish(w, rotated(estimate.delays + step), data, moved, name, period)
+        turn_back = np.exp(-1j * turn[:, None] * (groups @ step)).reshape(lines, p, m)
+        change = (other.misfit + rotated(estimate.delays + step)) * turn_back - fit.misfit - rotated(estimate.delays)
+        fit = widened(fit, other, change)
     total = (groups @ estimate.delays * unit).reshape(p, m)
     back = np.exp(-1j * turn[:, None] * (groups @ estimate.delays)).reshape(lines, p, m)
     misfit = fit.misfit * back

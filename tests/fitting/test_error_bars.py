@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from realize.fitting import Fit, Structure, fit_response
+from realize.fitting.dead_time import widened
 
 POLES = np.array([-0.05 + 2j, -0.15 + 5j])
 W = np.linspace(0.05, 8, 240)
@@ -234,3 +235,39 @@ def test_bars_of_fits_that_keep_a_structure(complex_noise: Callable, name: str) 
     assert abs(rms(np.array(response)) - 1) < 3 / np.sqrt(2 * 10)
     if residues:
         assert near_one(np.array(residues))
+
+
+def test_bars_hold_the_error_of_a_dead_time_that_is_estimated(complex_noise: Callable) -> None:
+    """A mode of 40 % damping: its damping and the dead time explain some of the same phase."""
+    pole = 3 * (-0.4 + 1j * np.sqrt(1 - 0.16))
+    s = 1j * W[:, None, None]
+    H = 9 / (s**2 - 2 * pole.real * s + 9) * np.exp(-0.1 * s)
+    size = 0.01 * np.sqrt(np.mean(np.abs(H) ** 2))
+    errors, grown, response = [], [], []
+    for seed in range(8):
+        data = H + size * complex_noise(H.shape, seed)
+        deviation = np.full(H.shape, size)
+        fit = fit_response(W, data, order=2, deviation=deviation, structure=Structure(dead_time="auto"))
+        known = fit_response(W, data * np.exp(0.1 * s), order=2, deviation=deviation)
+        row = fit.pole_table[0]
+        errors += [(row.frequency - 3) / row.frequency_deviation, (row.damping - 0.4) / row.damping_deviation]
+        grown.append(row.damping_deviation / known.pole_table[0].damping_deviation)
+        response.append((fit.misfit + data - H) / fit.response_deviation)
+    assert near_one(np.array(errors))
+    assert min(grown) > 1
+    assert abs(rms(np.array(response)) - 1) < 3 / np.sqrt(2 * 8)
+
+
+def test_what_a_dead_time_does_to_a_fit_is_added_in_squares(complex_noise: Callable) -> None:
+    _, H = modal((1, 1), 3)
+    one, two = (fit_response(W, H + 0.02 * complex_noise(H.shape, seed), order=4) for seed in (1, 2))
+    wide = widened(one, two, np.full(H.shape, 3.0 + 4.0j))
+    for row, there, after in zip(one.pole_table, two.pole_table, wide.pole_table, strict=True):
+        difference = there.damping - row.damping
+        assert after.damping_deviation == pytest.approx(np.hypot(row.damping_deviation, difference))
+        assert after.frequency_deviation > row.frequency_deviation
+        change = abs(two.residues[there.index, 0, 0] - one.residues[row.index, 0, 0])
+        expected = np.hypot(one.residue_deviation[row.index, 0, 0], change)
+        assert wide.residue_deviation[row.index, 0, 0] == pytest.approx(expected)
+    assert np.allclose(wide.response_deviation, np.hypot(one.response_deviation, 5))
+    assert np.allclose(wide.gain_deviation, np.hypot(one.gain_deviation, two.gain - one.gain))
