@@ -222,7 +222,7 @@ def fit_table(candidates: Iterable[Mapping[str, Any]], *, page: Page = PLAIN) ->
 
 _CANDIDATE = (
     ("rms", "misfit", 3),
-    ("weighted", "misfit/noise", 3),
+    ("weighted", "weighted", 3),
     ("bound", "error bound", 3),
     ("criterion", "criterion", 6),
     ("held_out", "held out", 3),
