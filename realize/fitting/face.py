@@ -103,6 +103,10 @@ def fit_response(
     check(kept, period)
     if kept.relative_degree:
         direct = False
+    if not kept.plain and not np.any(H):
+        raise InputError(
+            "a response that is zero at every line", "something to keep poles, zeros or a gain in", field="response"
+        )
     if kept.symmetric:
         from realize.fitting.symmetric import fit_symmetric
 

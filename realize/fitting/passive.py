@@ -288,7 +288,10 @@ def _violations(network: Network, coefficients: Array, grid: Array) -> tuple[lis
     """Return the frequencies of the peaks that violate, and the largest violation relative to the local gain."""
 
     def excess(w: Array) -> Array:
-        return violation(network.response(w, coefficients), network.kind) / np.maximum(network.size(w), 1e-300)
+        size = network.size(w)
+        found = violation(network.response(w, coefficients), network.kind)
+        # a network that is zero there is passive
+        return np.where((size > 0) | (found > 0), found / np.maximum(size, 1e-300), -1.0)
 
     values = excess(grid)
     padded = np.concatenate([[-np.inf], values, [-np.inf]])

@@ -161,3 +161,12 @@ def test_what_cannot_be_made_passive() -> None:
     wide = fit_response(W, two[:, :1], order=3)
     with pytest.raises(UsageError, match="square"):
         made_passive(wide, W, "positive-real", **options)
+
+
+@pytest.mark.parametrize("constant", [0.0, 2.0, -1.0])
+def test_constants_and_nothing(constant: float) -> None:
+    fit = fit_response(W, np.full((W.size, 1, 1), constant + 0j), order=0)
+    better, _ = made_passive(fit, W, "positive-real", period=None, symmetric=False, pinned=False)
+    assert claimed(better, "positive-real") == 0
+    # the nearest resistance that is not negative
+    assert better.direct[0, 0] == pytest.approx(max(constant, 0.0), abs=1e-6)

@@ -166,3 +166,11 @@ def test_small_orders_and_zero_models(order: int) -> None:
     done = fit(data(silent), order=2 + order, relative_degree=2, integrators=1)
     assert done.receipt.claim("relative-degree").holds is True
     assert done.receipt.claim("fixed-poles").holds is True
+
+
+def test_a_silent_response_has_nothing_to_constrain() -> None:
+    silent = data(np.zeros(W.size, dtype=complex))
+    for options in ({"integrators": 1}, {"steady_state_gain": 0.0}, {"relative_degree": 2}, {"fixed_zeros": [0.0]}):
+        with pytest.raises(InputError, match="zero at every line"):
+            fit(silent, **options)
+    assert fit(silent, order=0, passive="positive-real").receipt.claim("passivity").value == 0
