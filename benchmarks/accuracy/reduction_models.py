@@ -128,8 +128,8 @@ def changed(name: str, plain: realize.StateSpace, error: float, made: realize.Co
         apart = [abs(one / two - 1) for one, two in pairs if one is not None and two]
         # rounding may put a pole that is on the axis to working precision to either side
         same = other.receipt.details["kept_order"] == made.receipt.details["kept_order"]
-        error, bound = found["reduction-error"].value, found["reduction-bound"].value
-        wrong = same and (other.model.order != made.model.order or error is None or bound is None or error > bound)
+        value, bound = found["reduction-error"].value, found["reduction-bound"].value
+        wrong = same and (other.model.order != made.model.order or value is None or bound is None or value > bound)
         failures += wrong
         mark = " WRONG" if wrong else "" if same else " (a pole on the axis)"
         words.append(f"{way} {other.model.order}, {max(apart, default=np.nan):.0e} apart{mark}")

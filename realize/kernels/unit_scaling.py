@@ -15,6 +15,8 @@ Array = NDArray[np.float64]
 WORTH_IT = 3
 #: Matrices with more entries a row have no chains.
 MOST_PAIRS = 8
+#: Matrices with a larger share of entries that are not zero are one part.
+FULL = 0.6
 #: Binary digits that couplings must stand above the loops before chains are scaled by themselves, and how often.
 FAR, REPEATED = 40, 40
 
@@ -101,11 +103,36 @@ def _scale_of_loops(pattern: Array, n: int) -> NDArray[np.int64] | None:
     even = np.ldexp(pattern, whole[None, :] - whole[:, None])
     if not np.all(np.isfinite(even)):
         return None
-    # the parts, then inputs and outputs, each as one
-    parts = np.concatenate([label, count + np.arange(pattern.shape[0] - n)])
+    return states + _scale_of_parts(even, label, count)
+
+
+def _scale_of_parts(pattern: Array, label: NDArray[np.int32], count: int) -> NDArray[np.int64]:
+    """Return exponents of states, one for each part they are in, that balance the parts with inputs and outputs."""
+    parts = np.concatenate([label, count + np.arange(pattern.shape[0] - label.size)])
     outer = np.zeros((parts.max() + 1, parts.max() + 1))
-    np.maximum.at(outer, (parts[:, None], parts[None, :]), even)
-    return states + _exponents(balancing_scale(outer)[:count])[label]
+    np.maximum.at(outer, (parts[:, None], parts[None, :]), pattern)
+    return _exponents(balancing_scale(outer)[:count])[label]
+
+
+def _with_parts_moved(pattern: Array, states: NDArray[np.int64], n: int) -> NDArray[np.int64]:
+    """Return the exponents with whole strongly connected parts moved where inputs and outputs ask for it.
+
+    State by state no part moves: each of its states is held by the others.
+    """
+    from scipy.sparse.csgraph import connected_components
+
+    present = pattern[:n, :n] > 0
+    if np.count_nonzero(present) > FULL * n * n:
+        return states
+    count, label = connected_components(present, directed=True, connection="strong")
+    if count in (1, n):
+        return states
+    whole = np.concatenate([states, np.zeros(pattern.shape[0] - n, dtype=np.int64)])
+    even = np.ldexp(pattern, whole[None, :] - whole[:, None])
+    if not np.all(np.isfinite(even)):
+        return states
+    more = _scale_of_parts(even, label, count)
+    return states + more if np.abs(more).max() > WORTH_IT else states
 
 
 def far_apart(A: Array) -> bool:
@@ -175,7 +202,7 @@ def scale_model(A: Array, B: Array, C: Array, *, sampled: bool) -> Scaled:
             border[n + m :, :n] = np.ldexp(C, -outputs)
             # inputs have no row and outputs no column, so they are left alone
             pattern = np.abs(border)
-            states = _exponents(balancing_scale(pattern)[:n])
+            states = _with_parts_moved(pattern, _exponents(balancing_scale(pattern)[:n]), n)
             size = _size(A, states)
             # where loops of one or two states are about as large already nothing could be gained
             by_loops = _scale_of_loops(pattern, n) if _size_of_loops(A) - 1 + WORTH_IT < size else None

@@ -49,3 +49,18 @@ def test_a_companion_is_given_back_in_full():
     R, V, M = observability_factor(T, np.array([[1.0, 2.0, -1.0, 0.3], [0.5, 0.0, 1.0, 1.0]]))
     assert np.array_equal(Companion.of(M, V).full(), M)
     assert np.allclose(R @ T, Companion.of(M, V).full() @ R, rtol=0, atol=1e-13)
+
+
+def test_modes_that_stand_alone_are_moved_as_a_whole():
+    """Each mode in units of its own: what its input gains its output loses, and no state could move by itself."""
+    rng = np.random.default_rng(3)
+    k = 40
+    w = np.geomspace(1.0, 100.0, k)
+    A = np.zeros((2 * k, 2 * k))
+    A[:k, k:], A[k:, :k], A[k:, k:] = np.eye(k), -np.diag(w**2), -np.diag(0.02 * w)
+    B, C = np.zeros((2 * k, 1)), np.zeros((1, 2 * k))
+    B[k:], C[0, k:] = 1.0, 1.0
+    units = np.ldexp(1.0, rng.integers(-40, 41, 2 * k))
+    scaled = scale_model(units[:, None] * A / units, units[:, None] * B, C / units, sampled=False)
+    ratio = np.abs(scaled.B[k:, 0] / scaled.C[0, k:])
+    assert ratio.max() <= 64 * ratio.min()
