@@ -30,7 +30,7 @@ from realize.files.fields import Reading, as_object
 from realize.files.record import build, common_to_record
 from realize.files.registry import Format, ReadOptions, register
 from realize.files.sources import HEAD, Source
-from realize.files.table_names import FREQUENCY_UNITS, TIME_ROLES, Column, parse, split_label
+from realize.files.table_names import FREQUENCY_UNITS, TIME_ROLES, Column, parse, split_label, units_of
 from realize.files.table_text import (
     COMMENTS,
     Table,
@@ -112,7 +112,7 @@ def interpret(table: Table, options: ReadOptions) -> Model:
         **{role: values[order] for role, values in extra.items()},
     }
     record = _remark(table)
-    units = _units(columns, grid, len(outputs), len(inputs))
+    units = units_of(columns, grid, len(outputs), len(inputs))
     for k, (side, names) in enumerate((("outputs", outputs), ("inputs", inputs))):
         if side not in record and (any(names) or any(units[k])):
             record[side] = [{"name": name, "unit": unit} for name, unit in zip(names, units[k], strict=True)]
@@ -284,29 +284,6 @@ def _grid(labels: list[str]) -> tuple[dict[str, tuple[int, int]], list[str], lis
             if (output, source) not in places.values():
                 raise InputError(f"no column for output {output!r} and input {source!r}", "each output with each input")
     return {label: (outputs.index(o), inputs.index(s)) for label, (o, s) in places.items()}, outputs, inputs
-
-
-def _units(
-    columns: list[Column], grid: dict[str, tuple[int, int]], outputs: int, inputs: int
-) -> tuple[list[str], list[str]]:
-    """Return the units of outputs and inputs: of the quantity a/b, a and b; refuses two units for one signal."""
-    found: tuple[dict[int, Column], dict[int, Column]] = ({}, {})
-    units: tuple[list[str], list[str]] = ([""] * outputs, [""] * inputs)
-    for column in columns:
-        if column.label not in grid or not column.quantity:
-            continue
-        top, slash, bottom = column.quantity.partition("/")
-        parts = (top.strip(), bottom.strip()) if slash and "/" not in bottom else (column.quantity, "")
-        for k, (at, unit) in enumerate(zip(grid[column.label], parts, strict=True)):
-            if unit and units[k][at] and units[k][at] != unit:
-                raise InputError(
-                    f"the unit {unit!r} in {column.name!r}, and {units[k][at]!r} in {found[k][at].name!r}",
-                    "one unit for the parts of a signal; scale one of the columns first",
-                    field=f"column {columns.index(column) + 1}",
-                )
-            if unit:
-                units[k][at], found[k][at] = unit, column
-    return units
 
 
 def _remark(table: Table) -> dict[str, Any]:

@@ -20,6 +20,8 @@ from __future__ import annotations
 import re
 from dataclasses import dataclass, replace
 
+from realize.errors import InputError
+
 #: unit of frequency -> power of ten, unit that is kept
 FREQUENCY_UNITS = {
     "hz": (0, "Hz"),
@@ -196,3 +198,26 @@ def split_label(label: str) -> tuple[str, str] | None:
         return (output, source) if output and source else None
     match = re.fullmatch(r"((?:y|out|output)_?\d+)[\s_\-.:]*((?:u|in|input)_?\d+)", label, re.IGNORECASE)
     return (match[1], match[2]) if match else None
+
+
+def units_of(
+    columns: list[Column], grid: dict[str, tuple[int, int]], outputs: int, inputs: int
+) -> tuple[list[str], list[str]]:
+    """Return the units of outputs and inputs: of the quantity a/b, a and b; refuses two units for one signal."""
+    found: tuple[dict[int, Column], dict[int, Column]] = ({}, {})
+    units: tuple[list[str], list[str]] = ([""] * outputs, [""] * inputs)
+    for column in columns:
+        if column.label not in grid or not column.quantity:
+            continue
+        top, slash, bottom = column.quantity.partition("/")
+        parts = (top.strip(), bottom.strip()) if slash and "/" not in bottom else (column.quantity, "")
+        for k, (at, unit) in enumerate(zip(grid[column.label], parts, strict=True)):
+            if unit and units[k][at] and units[k][at] != unit:
+                raise InputError(
+                    f"the unit {unit!r} in {column.name!r}, and {units[k][at]!r} in {found[k][at].name!r}",
+                    "one unit for the parts of a signal; scale one of the columns first",
+                    field=f"column {columns.index(column) + 1}",
+                )
+            if unit:
+                units[k][at], found[k][at] = unit, column
+    return units

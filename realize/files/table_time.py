@@ -13,7 +13,7 @@ import numpy as np
 from realize.errors import InputError
 from realize.files.fields import Reading
 from realize.files.record import build
-from realize.files.table_names import TIME_UNITS, Column, split_label
+from realize.files.table_names import TIME_UNITS, Column, split_label, units_of
 from realize.files.table_text import Table, numbers, place
 from realize.models import Model
 
@@ -77,13 +77,14 @@ def _response(
     samples = np.empty((len(table.rows), len(outputs), len(inputs)))
     for (k, c), (output, source) in zip(own, pairs, strict=True):
         samples[:, outputs.index(output), inputs.index(source)] = numbers(table, k, c.name, comma)
-    for side, names in (("outputs", outputs), ("inputs", inputs)):
-        units = [next((c.quantity for (_, c), p in zip(own, pairs, strict=True) if p[0] == n), "") for n in names]
-        if side not in common and (any(names) or any(units)):
-            common[side] = [
-                {"name": name, "unit": unit if side == "outputs" else ""}
-                for name, unit in zip(names, units, strict=True)
-            ]
+    places = {
+        c.label: (outputs.index(output), inputs.index(source))
+        for (_, c), (output, source) in zip(own, pairs, strict=True)
+    }
+    units = units_of(columns, places, len(outputs), len(inputs))
+    for side, names, found in (("outputs", outputs, units[0]), ("inputs", inputs, units[1])):
+        if side not in common and (any(names) or any(found)):
+            common[side] = [{"name": name, "unit": unit} for name, unit in zip(names, found, strict=True)]
     if role == "step":
         samples = np.diff(samples, axis=0, prepend=0.0)
         common.setdefault("time", {"domain": "sampled", "period": step})

@@ -22,6 +22,8 @@ ComplexArray = NDArray[np.complex128]
 NUMBERS_PER_UNKNOWN = 2.0
 #: Misfit of this many times the noise is worth a caution.
 POOR = 1.5
+#: A misfit of this share of the samples leaves nothing explained.
+NOTHING = 0.5
 
 
 def fit_samples(
@@ -168,6 +170,10 @@ def _record(
             f"the misfit is {weighted:.3g} times the {source} noise: the data contain more than a model of this order, "
             "or their errors are not independent from sample to sample"
         )
+    if poles.size == 0 and rms > NOTHING:
+        cautions.append("nothing stands out of the noise of the samples: the model has no poles, and says nothing")
+    if size == 0:
+        cautions.append("all samples are zero: the model is zero")
     powers_of_poles = np.ones(poles.size, dtype=np.int64)
     for array in (out, residues, constant, misfit, powers_of_poles):
         array.setflags(write=False)

@@ -212,7 +212,22 @@ def _refitted(
         base = residues
         if done:
             break
-    return best if best is not None else whole
+    return best if best is not None and _bears(p, whole, best.shapes or [], lowest, level) else whole
+
+
+def _bears(p: Problem, whole: Estimate, shapes: list[Shape], cost: float, level: float) -> bool:
+    """Return whether the misfit grew by no more than chance when all residues were given their ranks together.
+
+    Ranks that are bearable one by one need not be so together: where poles, residues and direct terms trade off, far
+    above the lines, the steps may even end far away.
+    """
+    from scipy.special import chdtri
+
+    size = min(shapes[0].C.shape[0], shapes[0].B.shape[1])
+    most = max(shapes[0].C.shape[0], shapes[0].B.shape[1])
+    freedom = sum((2 if s.paired else 1) * (size - s.rank) * (most - s.rank) for s in shapes)
+    before = float(np.sum(np.abs(p.weights * whole.misfit) ** 2))
+    return 2 * (cost - before) <= level**2 * float(chdtri(freedom, FALSE_ALARM / len(shapes)))
 
 
 def _misfit(p: Problem, poles: ComplexArray, residues: ComplexArray, direct: Array) -> ComplexArray:

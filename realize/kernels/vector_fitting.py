@@ -25,6 +25,8 @@ ComplexArray = NDArray[np.complex128]
 
 #: Smallest damping ratio given to a relocated pole that lands on the imaginary axis: a few roundings of its size.
 SMALLEST_DAMPING = 8 * np.finfo(float).eps
+#: Relocated poles stay as far from 0, relative to the highest line: squares of 1/s have to stay numbers.
+NEAREST = 2.0**-200
 #: Smallest relative distance of two poles; nearer ones are set apart. A double pole moved apart by a relative
 #: distance d changes a response by d^2 (2^-36 here), while its residues grow by 1/d.
 SMALLEST_DISTANCE = 2.0**-18
@@ -104,7 +106,10 @@ def stacked(matrix: ComplexArray) -> Array:
 
 def least_squares(matrix: Array, right: Array) -> Array:
     """Solve one least squares problem with columns scaled to length 1; the smallest solution when it is not unique."""
-    norm = np.linalg.norm(matrix, axis=0)
+    # a pole next to a line gives entries whose squares would overflow
+    top = np.max(np.abs(matrix), axis=0, initial=0.0)
+    top = np.where(top > 0, top, 1.0)
+    norm = top * np.linalg.norm(matrix / top, axis=0)
     norm = np.where(norm > 0, norm, 1.0)
     result = np.linalg.lstsq(matrix / norm, right, rcond=4 * np.finfo(float).eps)[0]
     return result / (norm if right.ndim == 1 else norm[:, None])
@@ -219,6 +224,9 @@ def relocated(
     if not abs(sigma[n]) > 1e-8 * np.max(np.abs(plain[:, :n] * sigma[:n])):
         sigma = np.append(least_squares(reduced[:, :n], -reduced[:, n] / scale[n]) / scale[:n], 1.0)
     zeros = np.linalg.eigvals(_zeros_matrix(poles, sigma[:n] / sigma[n])).astype(complex)
+    # a line at 0 may draw poles in without end
+    near = np.abs(zeros) < NEAREST * np.max(np.abs(points))
+    zeros[near] = -NEAREST * np.max(np.abs(points))
     return ordered_poles(zeros, reflect)
 
 

@@ -12,11 +12,13 @@ FEWEST = 16
 UNRELATED = 0.6
 #: Frequencies at least this far apart, with ends that are round numbers, look as if they were typed in as Hz.
 ROUND_FROM, DECADES = 40.0, 10.0
+#: At frequency 0, an imaginary part of so many deviations, or of this share of the size without them, is worth a word.
+NOISE_REACHES, REAL_TO = 5.0, 0.01
 
 
 def data_cautions(data: FrequencyResponse) -> list[str]:
     """Return cautions about a frequency response, before any model is fitted to it."""
-    return [*_noise(data), *_constant(data), *unit_cautions(data)]
+    return [*_noise(data), *_constant(data), *_not_real(data), *unit_cautions(data)]
 
 
 def _noise(data: FrequencyResponse) -> list[str]:
@@ -54,6 +56,24 @@ def _constant(data: FrequencyResponse) -> list[str]:
     return [
         f"Output {i} from input {j} is the complex constant {complex(H[0, i, j]):.6g} at all lines, which no real "
         "plant is: look at the phase of the instrument, and at what the columns hold."
+    ]
+
+
+def _not_real(data: FrequencyResponse) -> list[str]:
+    """Return words where the response at frequency 0 has an imaginary part that its noise does not explain."""
+    at = np.flatnonzero(data.frequency == 0)
+    if not at.size:
+        return []
+    H = data.response[at[0]]
+    known = data.deviation is not None and bool(np.all(data.deviation[at[0]] > 0))
+    most = NOISE_REACHES * data.deviation[at[0]] if data.deviation is not None and known else REAL_TO * np.abs(H)
+    bad = np.argwhere(np.abs(H.imag) > most)
+    if not len(bad):
+        return []
+    i, j = (int(k) for k in bad[0])
+    return [
+        f"The response at frequency 0 is {complex(H[i, j]):.6g} (output {i}, input {j}), and that of a real plant is "
+        "real: the model can meet the real part alone. Look at what the instrument wrote in that line, or leave it out."
     ]
 
 

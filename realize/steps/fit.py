@@ -225,6 +225,7 @@ def fit(
     claims += [order_claim(result, given.get("order")), stability_claim(result)]
     claims += constraint_claims(structure, result, given, passive_as)
     cautions = [*told, *data_cautions(source), *found.cautions, *_structure_cautions(found, to, details)]
+    cautions += _far_gain(found, structure, w)
     if isinstance(dead_time, (int, float)) and (words := dead_time_caution(source, float(dead_time))):
         cautions.append(words)
     hertz = w / (2 * np.pi)
@@ -301,6 +302,22 @@ def _structure_cautions(found: Any, to: str, details: dict[str, Any]) -> list[st
             "nothing was measured, and they leave the response within the band as it is"
         )
     return cautions
+
+
+def _far_gain(found: Any, structure: Any, w: np.ndarray) -> list[str]:
+    """Return words where a pinned gain is met only by poles below the data, which ask for another one."""
+    if structure is None or structure.steady_state_gain is None:
+        return []
+    lowest = float(w[w > 0][0])
+    # a pole without deviation is one that was given
+    slow = [row for row in found.pole_table if row.frequency < 0.1 * lowest and row.frequency_deviation != 0]
+    if not slow:
+        return []
+    return [
+        f"the steady-state gain is met by {len(slow)} pole(s) or pair(s) below a tenth of the lowest line, at "
+        f"{min(row.frequency for row in slow):.3g} rad/s, where nothing was measured: within the lines the data ask "
+        "for another gain. Look at the number given, or fix the order."
+    ]
 
 
 def _estimated(total: np.ndarray) -> DeadTime:

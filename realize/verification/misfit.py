@@ -67,7 +67,8 @@ def _norm(values: NDArray[Any]) -> float:
     top = float(np.abs(values).max(initial=0.0))
     if not np.isfinite(top) or top == 0:
         return top
-    return float(np.sqrt(np.sum(np.abs(values / top) ** 2))) * top
+    # sizes first: a complex quotient by a subnormal number overflows
+    return float(np.sqrt(np.sum((np.abs(values) / top) ** 2))) * top
 
 
 def _ratio(value: float, size: float) -> float:

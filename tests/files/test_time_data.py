@@ -122,6 +122,14 @@ def test_impulse_and_step_responses(read: Callable[..., Any]) -> None:
     assert model.time.sampled and model.outputs[0].unit == "V"
 
 
+def test_units_of_an_impulse_response_go_to_output_and_input(read: Callable[..., Any]) -> None:
+    model = read("time [ms],impulse_x/force [m/N],impulse_y/force [rad/N]\n0,0,1\n1,4,5\n")
+    assert [(s.name, s.unit) for s in model.outputs] == [("x", "m"), ("y", "rad")]
+    assert [(s.name, s.unit) for s in model.inputs] == [("force", "N")]
+    with pytest.raises(InputError, match="one unit for the parts of a signal"):
+        read("time,impulse_x/force [m/N],impulse_y/force [m/lbf]\n0,0,1\n1,4,5\n")
+
+
 def test_one_array(tmp_path: Path) -> None:
     path = tmp_path / "record.npy"
     values = np.arange(12.0).reshape(6, 2)

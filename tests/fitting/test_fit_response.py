@@ -336,3 +336,20 @@ def test_strange_data_give_a_stable_answer(case: str) -> None:
     fit = fit_response(w, H)
     assert_consistent(fit)
     assert fit.rms <= 1.001
+
+
+@pytest.mark.parametrize("noise", [0.0, 0.01])
+@pytest.mark.parametrize("order", [2, 4, "auto"])
+def test_two_ports_that_grow_with_frequency_keep_their_misfit(
+    complex_noise: Callable, order: int | str, noise: float
+) -> None:
+    """Two coils and a capacitor: far above the lines, residues of rank 2 and the direct term nearly cancel."""
+    w = np.geomspace(1e2, 1e6, 200)
+    s = 1j * w
+    common = 1 / (1e-8 * s + 1e-4)
+    first, second = 5 + 1e-3 * s + common, 10 + 2e-3 * s + common
+    H = np.stack([np.stack([first, common], axis=-1), np.stack([common, second], axis=-1)], axis=-2)
+    H = H * (1 + noise * complex_noise(H.shape, 3))
+    fit = fit_response(w, H, order=order)
+    assert fit.rms < max(1.1 * noise, 1e-5)
+    assert np.max(np.abs(value(fit, s) - H - fit.misfit)) < 1e-7 * np.max(np.abs(H))

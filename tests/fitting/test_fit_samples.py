@@ -134,6 +134,15 @@ def test_repeated_poles_are_reproduced_as_far_as_separate_poles_can() -> None:
     assert np.max(np.abs(fit.poles - 0.9)) < 1e-4
 
 
+def test_samples_of_noise_alone_and_of_nothing_are_called_that() -> None:
+    noise = np.random.default_rng(5).standard_normal(400)
+    fit = fit_samples(noise, 1.0, sampled=False)
+    assert fit.order == 0 and any("nothing stands out" in text for text in fit.cautions)
+    assert any("all samples are zero" in text for text in fit_samples(np.zeros(50), 1.0).cautions)
+    rings = 0.9 ** np.arange(400.0)
+    assert fit_samples(rings + 0.01 * noise, 1.0).cautions == ()
+
+
 def test_words() -> None:
     with pytest.raises(InputError, match="finite"):
         fit_samples([1.0, np.nan], 1.0)

@@ -96,6 +96,25 @@ def test_symmetric_with_a_gain_and_a_repeated_pole() -> None:
     assert done.receipt.claim("fixed-poles").value == 0
 
 
+def test_a_gain_that_the_data_contradict_is_not_kept_in_silence() -> None:
+    w = np.linspace(6, 1200, 300)
+    values = 6e4 / (6e4 + 15j * w - w**2)
+    words = "the data ask for another gain"
+    wrong = fit(data(values, frequency=w), steady_state_gain=0.9)
+    assert wrong.receipt.claim("steady-state-gain").holds is not False
+    assert any(words in text for text in wrong.receipt.cautions), wrong.receipt.cautions
+    right = fit(data(values, frequency=w), steady_state_gain=1.0)
+    assert not any(words in text for text in right.receipt.cautions)
+
+
+def test_the_misfit_of_responses_at_the_edge_of_the_doubles() -> None:
+    """Misfits are subnormal numbers there."""
+    done = fit(data(1e-303 / (S**2 + 0.1 * S + 1)), order=2)
+    assert 0 < done.receipt.claim("rms-misfit").value < 0.02
+    exact = FrequencyResponse(frequency=W, frequency_unit="rad/s", response=(1e-301 / (S + 1))[:, None, None])
+    assert fit(exact, order=1).receipt.claim("rms-misfit").value < 1e-8
+
+
 def test_estimated_dead_time_travels_with_the_model() -> None:
     done = fit(data(2 / (S + 1) * np.exp(-0.3 * S)), order=1, relative_degree=1, dead_time="auto")
     (row,) = done.receipt.details["dead_times"]

@@ -187,6 +187,12 @@ def test_garbage_is_refused(text: str, words: str, run: Callable[..., Any], tmp_
         ),
         (np.full(100, 2 + 1j), "frequency_hz,real,imaginary", None, "complex constant"),
         (np.full(100, 2.0 + 0j), "frequency_hz,real,imaginary", None, "one real constant"),
+        (
+            np.concatenate([[abs(PLANT[0]) * (1 + 0.2j)], PLANT[1:]]),
+            "frequency_hz,real,imaginary",
+            np.concatenate([[0.0], F[1:]]),
+            "of a real plant is real",
+        ),
         (PLANT[::-1], "frequency_hz,real,imaginary", F[::-1], "sorted"),
         (PLANT, "frequency_rad/s,real,imaginary", None, "they look like Hz"),
         (PLANT, "frequency_hz,real,imaginary", F / (2 * np.pi), "they look like rad/s"),
