@@ -20,6 +20,8 @@ ComplexArray = NDArray[np.complex128]
 
 #: Chance that noise alone makes any of the ranks of a fit too large.
 FALSE_ALARM = 5e-3
+#: Poles beyond so many times the highest line are far above it.
+FAR = 10.0
 #: Ranks are looked at while the joint information of all modes takes no more operations than this (some seconds).
 AFFORDABLE = 2e10
 #: Channels scaled further apart than this, beside outputs and inputs, are no matrix whose rank could be told.
@@ -102,7 +104,20 @@ def solved(problem: Problem, poles: ComplexArray, lift: NDArray[np.int64], facto
     shapes = _lowest(whole, scale, level)
     if all(s.rank == min(shape) for s in shapes):
         return whole
-    return _refitted(p, whole, shapes, scale, factors, level)
+    found = _refitted(p, whole, shapes, scale, factors, level)
+    if found is not whole:
+        return found
+    # residues of poles far above the lines trade off with the direct term: those keep all ranks
+    far = np.abs(poles) > FAR * np.max(np.abs(p.points))
+    kept = [
+        shape_of(solution.residues[s.index].reshape(shape) / scale, min(shape), s.index, s.paired)
+        if far[s.index]
+        else s
+        for s in shapes
+    ]
+    if not np.any(far) or all(s.rank == min(shape) for s in kept):
+        return whole
+    return _refitted(p, whole, kept, scale, factors, level)
 
 
 def channel_scale(lift: NDArray[np.int64]) -> Array:

@@ -353,3 +353,18 @@ def test_two_ports_that_grow_with_frequency_keep_their_misfit(
     fit = fit_response(w, H, order=order)
     assert fit.rms < max(1.1 * noise, 1e-5)
     assert np.max(np.abs(value(fit, s) - H - fit.misfit)) < 1e-7 * np.max(np.abs(H))
+
+
+def test_modes_keep_rank_one_beside_a_response_that_grows(complex_noise: Callable) -> None:
+    """The far pole that stands for the growth has all ranks, the modes have one."""
+    w = np.geomspace(10, 1e4, 300)
+    s = 1j * w
+    rng = np.random.default_rng(0)
+    H = 1e-5 * s[:, None, None] * rng.normal(size=(3, 3)) + 0.1 * rng.normal(size=(3, 3))
+    for f in (50, 300, 2000):
+        shape = np.outer(rng.normal(size=3), rng.normal(size=3))
+        H = H + (f * f / (s**2 + 0.02 * f * s + f * f))[:, None, None] * shape
+    noise = 0.01 * np.sqrt(np.mean(np.abs(H) ** 2))
+    fit = fit_response(w, H + noise * complex_noise(H.shape, 4))
+    assert [row.rank for row in fit.pole_table if row.pair] == [1, 1, 1]
+    assert np.sqrt(np.mean(np.abs(value(fit, s) - H) ** 2)) < 0.3 * noise
