@@ -29,14 +29,7 @@ def execute(
         from realize.reports.tables import fit_table
 
         details = conversion.receipt.details
-        if "samples" in details:
-            from realize.reports.root_lists import poles_table
-
-            poles = [(complex(re, im), count) for re, im, count in details["poles"]]
-            modes = poles_table(poles, details["period"])
-        else:
-            modes = modes_table(details)
-        more = [fit_table(details["candidates"]), modes]
+        more = [fit_table(details["candidates"]), modes_table(details)]
         if len(details.get("channels", ())) > 1:
             more.append(channels_table(details))
     return deliver(context, conversion, *more)

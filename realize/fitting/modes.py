@@ -9,8 +9,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.bars import judged
-from realize.fitting.problem import Problem
 from realize.fitting.records import Bars, PoleRow
+from realize.fitting.sample_problem import Measured
 from realize.fitting.solution import Estimate
 from realize.kernels.information import length
 
@@ -19,6 +19,8 @@ ComplexArray = NDArray[np.complex128]
 
 #: A residue that noise alone would reach once in a thousand fits may be noise.
 CHANCE = 1e-3
+#: Poles of samples nearer to zero than this are gone after one sample.
+SMALLEST_POLE = 2.0**-200
 
 
 @dataclass(frozen=True)
@@ -38,15 +40,48 @@ class Units:
         """Return rad/s for a scaled frequency (sampled data: for one in radians a sample)."""
         return float(np.ldexp(value, self.shift)) if self.period is None else value / self.period
 
+    def in_time(self, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+        """Return continuous poles (scaled; sampled data: ln z) and their derivative by the fitted ones."""
+        if self.period is None:
+            return poles, np.ones_like(poles)
+        c = self.corner
+        z = (c + poles) / (c - poles)
+        return np.log(z), 2 * c / ((c - poles) * (c + poles))
+
+    def residue_change(
+        self, change: ComplexArray, moved: ComplexArray, pole: complex, residue: complex
+    ) -> ComplexArray:
+        """Return changes of a residue of the result, from those of the fitted residue and of its pole."""
+        if self.period is None:
+            return change
+        away = self.corner - pole
+        result: ComplexArray = 2 * self.corner * (change + 2 * residue * moved / away) / away**2
+        return result
+
+
+@dataclass(frozen=True)
+class SampleUnits(Units):
+    """Where the fitted poles are those of samples themselves, z."""
+
+    def in_time(self, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+        # a pole at z = 0 has no logarithm: it is as good as one so far inside, with bars that say nothing
+        z = np.where(np.abs(poles) < SMALLEST_POLE, SMALLEST_POLE, poles).astype(complex)
+        return np.log(z), np.asarray(1 / z, dtype=complex)
+
+    def residue_change(
+        self, change: ComplexArray, moved: ComplexArray, pole: complex, residue: complex
+    ) -> ComplexArray:
+        return change
+
 
 def mode_table(
-    problem: Problem, solution: Estimate, shape: tuple[int, int], units: Units, dominance: Array
+    problem: Measured, solution: Estimate, shape: tuple[int, int], units: Units, dominance: Array
 ) -> tuple[tuple[PoleRow, ...], Bars, Array]:
     """Return the rows by increasing frequency, what stands behind their bars, and the growth of bars by pole.
 
     Parameters
     ----------
-    problem : Problem
+    problem : Problem or SampleProblem
     solution : Estimate
     shape : (outputs, inputs)
     units : Units
@@ -55,7 +90,7 @@ def mode_table(
     """
     poles = solution.poles
     first = np.flatnonzero(poles.imag >= 0)
-    s, slope = _in_time(poles[first], units)
+    s, slope = units.in_time(poles[first])
     moving = first < solution.free
     wanted = np.zeros((2 * first.size, solution.free))
     a, b, size = s.real, s.imag, np.abs(s)
@@ -98,15 +133,6 @@ def mode_table(
         for i in order
     )
     return table, found.bars, by_pole
-
-
-def _in_time(poles: ComplexArray, units: Units) -> tuple[ComplexArray, ComplexArray]:
-    """Return continuous poles (scaled; sampled data: ln z) and their derivative by the fitted ones."""
-    if units.period is None:
-        return poles, np.ones_like(poles)
-    c = units.corner
-    z = (c + poles) / (c - poles)
-    return np.log(z), 2 * c / ((c - poles) * (c + poles))
 
 
 def _shapes(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,13 +14,22 @@ from realize.kernels.structured_basis import Known
 from realize.kernels.structured_fit import Task, structured_additions, structured_polish, structured_relocation
 from realize.kernels.structured_solution import Solution, structured_solution
 from realize.kernels.variable_projection import polished
-from realize.kernels.vector_fitting import relocated, residues_of, separated_poles, vector_fit, weighted_cost
+from realize.kernels.vector_fitting import (
+    real_basis,
+    relocated,
+    residues_of,
+    separated_poles,
+    vector_fit,
+    weighted_cost,
+)
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 #: Relative misfit below which a fit reproduces the data: rounding of basis, residues and sum (some hundred roundings).
 ROUNDING = 2.0**-44
+#: Poles beyond so many times the highest line are far above it.
+FAR = 10.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -75,6 +85,16 @@ class Problem:
     def numbers(self) -> int:
         """Real numbers in the data: two a line and channel that is not all zero, one at frequency 0."""
         return self.active * int(2 * self.points.size - np.sum(self.x == 0))
+
+    @property
+    def real(self) -> NDArray[np.bool_]:
+        """Lines that are real."""
+        return np.asarray(self.points == 0)
+
+    @property
+    def parts(self) -> int:
+        """Real numbers in one value."""
+        return 2
 
     @property
     def active(self) -> int:
@@ -200,6 +220,24 @@ class Problem:
         spread = 1 + 0.125 * np.abs(poles) / np.abs(self.points[:, None] - poles)
         size = (inverse * spread) @ np.abs(residues) + np.abs(direct)
         return max(self.floor, (16 * np.finfo(float).eps) ** 2 * float(np.sum((self.weights * size) ** 2)))
+
+    def unlikelihood(self, misfit: NDArray[Any]) -> float:
+        """Return sum |misfit weight|^2: minus the logarithm of the likelihood with circular complex errors 1/weight."""
+        return weighted_cost(misfit, self.weights)
+
+    def evaluated(self, poles: ComplexArray, coefficients: Array, direct: Array) -> ComplexArray:
+        """Return the misfit of given coefficients of the real basis [n][channels] and direct terms."""
+        basis = real_basis(self.points, poles, np.inf if self.direct else self.vanish)
+        misfit: ComplexArray = basis @ coefficients - self.values
+        return misfit + direct if self.direct else misfit
+
+    def margin(self, poles: ComplexArray) -> Array:
+        """Return the distance of poles from the border of stability, positive inside."""
+        return -poles.real
+
+    def far(self, poles: ComplexArray) -> NDArray[np.bool_]:
+        """Return which poles lie far above the lines, where residues trade off with the direct term."""
+        return np.asarray(np.abs(poles) > FAR * np.max(np.abs(self.points)))
 
     def criterion(self, order: int, cost: float) -> float:
         """Bayesian information criterion of a fit (Schwarz 1978), complex data counted as two numbers a line.

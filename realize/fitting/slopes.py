@@ -1,4 +1,4 @@
-"""Derivatives of the fitted channels by their unknowns: plain partial fractions, or functions that keep a structure."""
+"""Derivatives of the fitted channels by their unknowns: partial fractions, functions with a structure, exponentials."""
 
 from __future__ import annotations
 
@@ -8,6 +8,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.problem import Problem
+from realize.fitting.sample_problem import Measured, SampleProblem
+from realize.kernels.exponentials import real_columns, real_slopes
 from realize.kernels.information import channel_slopes
 from realize.kernels.structured_basis import StructuredBasis
 from realize.kernels.structured_fit import StructuredProjection, free_sections
@@ -24,7 +26,7 @@ class Slopes(Protocol):
     poles: ComplexArray
 
     def at(self, points: ComplexArray, channel: int) -> ComplexArray:
-        """Return the derivatives of the response at points [k][unknowns]."""
+        """Return the derivatives of the response at points, or of samples, [k][unknowns]."""
 
     def residue(self, index: int, channel: int) -> ComplexArray:
         """Return the derivatives of one pole's residue (any pole of the solution) [unknowns]."""
@@ -45,12 +47,7 @@ class PlainSlopes:
         return channel_slopes(points, self.poles, self.residues[:, channel], self.direct, self.vanish)
 
     def residue(self, index: int, channel: int) -> ComplexArray:
-        n = self.poles.size
-        row = np.zeros(2 * n + int(self.direct), dtype=complex)
-        row[n + index] = 1
-        if self.poles[index].imag > 0:
-            row[n + index + 1] = 1j
-        return row
+        return _own(self.poles, index, 2 * self.poles.size + int(self.direct))
 
     def infinity(self, channel: int) -> Array:
         row = np.zeros(2 * self.poles.size + int(self.direct))
@@ -117,9 +114,40 @@ class StructuredSlopes:
         return np.asarray(self.at(np.array([complex(self.top * 2.0**60)]), channel)[0].real)
 
 
-def slopes_of(problem: Problem, solution: Solution, free: int) -> Slopes:
+class SampleSlopes:
+    """Of samples sum residues poles^k with free residues; points are a run of k."""
+
+    def __init__(self, solution: Solution) -> None:
+        self.poles, self.residues = solution.poles, solution.residues
+
+    def at(self, points: ComplexArray, channel: int) -> ComplexArray:
+        first, count = int(points[0].real) if points.size else 0, points.size
+        by_poles = real_slopes(self.poles, self.residues[:, channel], first, count)
+        # real, whatever the type says
+        result: ComplexArray = np.hstack([by_poles, real_columns(self.poles, first, count)])
+        return result
+
+    def residue(self, index: int, channel: int) -> ComplexArray:
+        return _own(self.poles, index, 2 * self.poles.size)
+
+    def infinity(self, channel: int) -> Array:
+        return np.zeros(2 * self.poles.size)
+
+
+def slopes_of(problem: Measured, solution: Solution, free: int) -> Slopes:
     """Return the derivatives of a solution with so many free poles."""
+    if isinstance(problem, SampleProblem):
+        return SampleSlopes(solution)
     return PlainSlopes(problem, solution) if problem.structure is None else StructuredSlopes(problem, solution, free)
+
+
+def _own(poles: ComplexArray, index: int, unknowns: int) -> ComplexArray:
+    """Return the derivatives of one residue that is among the unknowns itself."""
+    row = np.zeros(unknowns, dtype=complex)
+    row[poles.size + index] = 1
+    if poles[index].imag > 0:
+        row[poles.size + index + 1] = 1j
+    return row
 
 
 def _tie(row: Array, poles: int) -> Array:

@@ -8,20 +8,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from realize.fitting.covariance import Covariance, free_covariance, shaped_covariance
-from realize.fitting.problem import Problem
-from realize.fitting.slopes import PlainSlopes, Slopes, slopes_of
+from realize.fitting.sample_problem import Measured
+from realize.fitting.slopes import Slopes, slopes_of
 from realize.kernels.information import ChannelFactor, channel_factor
 from realize.kernels.low_rank_residues import Shape, Unknowns, nearest_in_metric, shape_of
 from realize.kernels.structured_solution import Solution
-from realize.kernels.vector_fitting import real_basis
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
 
 #: Chance that noise alone makes any of the ranks of a fit too large.
 FALSE_ALARM = 5e-3
-#: Poles beyond so many times the highest line are far above it.
-FAR = 10.0
 #: Ranks are looked at while the joint information of all modes takes no more operations than this (some seconds).
 AFFORDABLE = 2e10
 #: Channels scaled further apart than this, beside outputs and inputs, are no matrix whose rank could be told.
@@ -69,7 +66,7 @@ class Estimate:
         return self.solution.poles[: self.free]
 
 
-def solved(problem: Problem, poles: ComplexArray, lift: NDArray[np.int64], factor: float | None) -> Estimate:
+def solved(problem: Measured, poles: ComplexArray, lift: NDArray[np.int64], factor: float | None) -> Estimate:
     """Return the fit of all residues, then the one with the lowest ranks that the data do not contradict.
 
     The rank of each residue is raised until the distance of the full residue to the nearest one of that rank, in the
@@ -78,7 +75,7 @@ def solved(problem: Problem, poles: ComplexArray, lift: NDArray[np.int64], facto
 
     Parameters
     ----------
-    problem : Problem
+    problem : Problem or SampleProblem
     poles : [n] complex
     lift : [outputs][inputs] int
         Powers of two taken off the channels.
@@ -108,7 +105,7 @@ def solved(problem: Problem, poles: ComplexArray, lift: NDArray[np.int64], facto
     if found is not whole:
         return found
     # residues of poles far above the lines trade off with the direct term: those keep all ranks
-    far = np.abs(poles) > FAR * np.max(np.abs(p.points))
+    far = p.far(poles)
     kept = [
         shape_of(solution.residues[s.index].reshape(shape) / scale, min(shape), s.index, s.paired)
         if far[s.index]
@@ -128,13 +125,13 @@ def channel_scale(lift: NDArray[np.int64]) -> Array:
         return np.asarray(np.exp2(outputs[:, None] + inputs - lift))
 
 
-def noise_level(problem: Problem, misfit: ComplexArray, unknowns: int) -> float:
-    """Return sqrt(2 sum |weights misfit|^2 / (numbers - unknowns)): the noise in units of 1/weights."""
-    cost = float(np.sum(np.abs(problem.weights * misfit) ** 2))
+def noise_level(problem: Measured, misfit: ComplexArray, unknowns: int) -> float:
+    """Return sqrt(2 sum |weights misfit|^2 / (numbers - unknowns)), real numbers half: the noise in 1/weights."""
+    cost = problem.unlikelihood(misfit)
     return float(np.sqrt(2 * cost / max(problem.numbers - unknowns, 1)))
 
 
-def unknowns_of(estimate: Estimate, problem: Problem) -> int:
+def unknowns_of(estimate: Estimate, problem: Measured) -> int:
     """Return how many real numbers were fitted."""
     if estimate.shapes is None:
         return problem.unknowns(estimate.free)
@@ -148,11 +145,10 @@ def _affordable(order: int, shape: tuple[int, int]) -> bool:
     return channels * (2 * order + 1.0) * most**2 * 2 <= AFFORDABLE
 
 
-def factors_of(p: Problem, slopes: Slopes, misfit: ComplexArray) -> list[ChannelFactor]:
+def factors_of(p: Measured, slopes: Slopes, misfit: ComplexArray) -> list[ChannelFactor]:
     """Return the factors of all channels."""
-    zero = p.points == 0
     return [
-        channel_factor(slopes.at(p.points, c), p.weights[:, c], misfit[:, c], zero) for c in range(p.values.shape[1])
+        channel_factor(slopes.at(p.points, c), p.weights[:, c], misfit[:, c], p.real) for c in range(p.values.shape[1])
     ]
 
 
@@ -193,7 +189,7 @@ def _assembled(shapes: list[Shape], order: int, scale: Array) -> ComplexArray:
 
 
 def _refitted(
-    p: Problem, whole: Estimate, shapes: list[Shape], scale: Array, factors: list[ChannelFactor], level: float
+    p: Measured, whole: Estimate, shapes: list[Shape], scale: Array, factors: list[ChannelFactor], level: float
 ) -> Estimate:
     """Return poles, shapes and direct terms fitted together by Gauss-Newton steps, from where each shape is best alone.
 
@@ -201,7 +197,7 @@ def _refitted(
     shapes enter as products. Poles that the data leave undetermined stay where they are.
     """
     n = whole.poles.size
-    held = whole.covariance.pole_deviation() * level > np.abs(whole.poles.real)
+    held = whole.covariance.pole_deviation() * level > np.abs(p.margin(whole.poles))
     poles, direct = whole.poles, whole.solution.direct
     base = whole.residues
     moves = np.concatenate([~held, np.ones(Unknowns(n, shapes, scale, p.direct).size - n, bool)])
@@ -210,14 +206,14 @@ def _refitted(
     for _ in range(ROUNDS):
         poles, shapes, direct = _compressed(factors, poles, base, direct, shapes, scale, moves, p.direct, level)
         residues = _assembled(shapes, n, scale)
-        misfit = _misfit(p, poles, residues, direct)
-        cost = float(np.sum(np.abs(p.weights * misfit) ** 2))
-        if not cost < lowest or np.any(poles.real >= 0):
+        misfit = p.evaluated(poles, _coefficients(poles, residues), direct)
+        cost = p.unlikelihood(misfit)
+        if not cost < lowest or np.any(p.margin(poles) <= 0):
             break
         done = lowest - cost <= 1e-3 * level**2
         lowest = cost
         solution = Solution(poles, np.ones(n, dtype=np.int64), residues, direct, misfit)
-        slopes = PlainSlopes(p, solution)
+        slopes = slopes_of(p, solution, n)
         factors = factors_of(p, slopes, misfit)
         ranks = np.zeros(n, dtype=np.intp)
         for s in shapes:
@@ -230,7 +226,7 @@ def _refitted(
     return best if best is not None and _bears(p, whole, best.shapes or [], lowest, level) else whole
 
 
-def _bears(p: Problem, whole: Estimate, shapes: list[Shape], cost: float, level: float) -> bool:
+def _bears(p: Measured, whole: Estimate, shapes: list[Shape], cost: float, level: float) -> bool:
     """Return whether the misfit grew by no more than chance when all residues were given their ranks together.
 
     Ranks that are bearable one by one need not be so together: where poles, residues and direct terms trade off, far
@@ -241,14 +237,8 @@ def _bears(p: Problem, whole: Estimate, shapes: list[Shape], cost: float, level:
     size = min(shapes[0].C.shape[0], shapes[0].B.shape[1])
     most = max(shapes[0].C.shape[0], shapes[0].B.shape[1])
     freedom = sum((2 if s.paired else 1) * (size - s.rank) * (most - s.rank) for s in shapes)
-    before = float(np.sum(np.abs(p.weights * whole.misfit) ** 2))
+    before = p.unlikelihood(whole.misfit)
     return 2 * (cost - before) <= level**2 * float(chdtri(freedom, FALSE_ALARM / len(shapes)))
-
-
-def _misfit(p: Problem, poles: ComplexArray, residues: ComplexArray, direct: Array) -> ComplexArray:
-    basis = real_basis(p.points, poles, np.inf if p.direct else p.vanish)
-    misfit: ComplexArray = basis @ _coefficients(poles, residues) - p.values
-    return misfit + direct if p.direct else misfit
 
 
 def _coefficients(poles: ComplexArray, residues: ComplexArray) -> Array:

@@ -45,23 +45,10 @@ def deviations(
     channels, poles = problem.values.shape[1], solution.poles
     loose = bool(np.any(covariance.free))
     at_infinity = np.zeros(channels)
-    residues = np.zeros((poles.size, channels))
     for c in np.flatnonzero(covariance.active):
         root = covariance.channel_root(int(c))
         at_infinity[c] = length((covariance.slopes.infinity(int(c)) @ root)[None])[0]
-        for k in np.flatnonzero(poles.imag >= 0):
-            paired = bool(poles[k].imag > 0)
-            change = covariance.slopes.residue(int(k), int(c)) @ root
-            if units.period is not None:
-                moved = np.zeros(root.shape[1], dtype=complex)
-                if k < solution.free:
-                    moved = root[k] + 1j * root[k + 1] if paired else root[k].astype(complex)
-                away = units.corner - poles[k]
-                change = 2 * units.corner * (change + 2 * solution.residues[k, c] * moved / away) / away**2
-            bar = length(np.abs(change)[None])[0] * growth[k]
-            if np.any(covariance.free[k : k + 1 + int(paired)]):
-                bar = np.inf
-            residues[k : k + 1 + int(paired), c] = bar
+    residues = residue_deviations(solution, units, growth)
     if units.period is not None:
         # in z a repeated pole mixes the coefficients of its powers
         residues[np.isin(poles, poles[solution.solution.powers > 1])] = np.inf
@@ -75,12 +62,32 @@ def deviations(
     scale = units.shift if units.period is None else 0
     with np.errstate(over="ignore", under="ignore", invalid="ignore"):
         return Spread(
-            response=_sized(lines, most, units.lift, False),
-            residues=_sized(residues, level, units.lift + scale, False),
-            direct=_sized(direct, most, units.lift, False),
+            response=sized(lines, most, units.lift, False),
+            residues=sized(residues, level, units.lift + scale, False),
+            direct=sized(direct, most, units.lift, False),
             gain=np.ldexp(gain, units.lift),
-            gain_deviation=_sized(gain_deviation, most, units.lift, loose),
+            gain_deviation=sized(gain_deviation, most, units.lift, loose),
         )
+
+
+def residue_deviations(solution: Estimate, units: Units, growth: Array) -> Array:
+    """Return the deviations of all residues, each grown with its pole's, in units of the noise level: [n][channels]."""
+    covariance, poles = solution.covariance, solution.poles
+    result = np.zeros((poles.size, covariance.active.size))
+    for c in np.flatnonzero(covariance.active):
+        root = covariance.channel_root(int(c))
+        for k in np.flatnonzero(poles.imag >= 0):
+            paired = bool(poles[k].imag > 0)
+            moved = np.zeros(root.shape[1], dtype=complex)
+            if k < solution.free:
+                moved = root[k] + 1j * root[k + 1] if paired else root[k].astype(complex)
+            change = covariance.slopes.residue(int(k), int(c)) @ root
+            change = units.residue_change(change, moved, poles[k], solution.residues[k, c])
+            bar = length(np.abs(change)[None])[0] * growth[k]
+            if np.any(covariance.free[k : k + 1 + int(paired)]):
+                bar = np.inf
+            result[k : k + 1 + int(paired), c] = bar
+    return result
 
 
 def _steady_gain(solution: Estimate) -> tuple[Array, Array]:
@@ -95,7 +102,7 @@ def _steady_gain(solution: Estimate) -> tuple[Array, Array]:
     return value, solution.covariance.response_deviation(zero)[0]
 
 
-def _sized(values: Array, level: float, exponents: NDArray[np.int64], loose: bool) -> Array:
+def sized(values: Array, level: float, exponents: NDArray[np.int64], loose: bool) -> Array:
     """Return values times level in the units of the data; a zero (nothing was fitted) stays zero."""
     if loose:
         return np.where(values == 0, 0.0, np.inf)

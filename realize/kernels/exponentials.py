@@ -74,6 +74,30 @@ def real_columns(z: ComplexArray, first: int, count: int) -> Array:
     return result
 
 
+def real_slopes(z: ComplexArray, coefficients: ComplexArray, first: int, count: int) -> Array:
+    """Return the derivatives of sum c_j z_j^k by the poles: [count][n], a pair by its real and its imaginary part.
+
+    c k z^(k - 1); for a pair 2 Re(c k z^(k - 1)) and 2 Re(i c k z^(k - 1)).
+
+    Parameters
+    ----------
+    z, coefficients : [n] complex
+        Pairs adjacent, positive imaginary part first.
+    first, count : int
+        k from first to first + count - 1.
+    """
+    upper = np.flatnonzero(z.imag >= 0)
+    pair = z[upper].imag > 0
+    lowered = powers(z[upper], max(first - 1, 0), count if first > 0 else max(count - 1, 0))
+    if first == 0:
+        lowered = np.concatenate([np.zeros((1, upper.size)), lowered])
+    values = np.arange(first, first + count)[:, None] * lowered * coefficients[upper]
+    result = np.empty((count, z.size))
+    result[:, upper] = np.where(pair, 2.0, 1.0) * values.real
+    result[:, upper[pair] + 1] = -2.0 * values[:, pair].imag
+    return result
+
+
 def coefficients_of(z: ComplexArray, samples: Array, weights: Array) -> tuple[ComplexArray, Array]:
     """Return the coefficients [n][channels] that fit samples best with the given poles, and the misfit.
 

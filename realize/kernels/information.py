@@ -17,6 +17,7 @@ Sources
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -84,26 +85,27 @@ class ChannelFactor:
 
 
 def channel_factor(
-    slopes: ComplexArray, weights: Array, misfit: ComplexArray, zero: NDArray[np.bool_]
+    slopes: ComplexArray | Array, weights: Array, misfit: ComplexArray | Array, zero: NDArray[np.bool_]
 ) -> ChannelFactor:
     """Return the factor of one channel.
 
     Parameters
     ----------
-    slopes : [k][u] complex
+    slopes : [k][u] complex or float
         Derivatives of the channel by its unknowns.
     weights : [k] float
         1/deviation.
-    misfit : [k] complex
+    misfit : [k] complex or float
     zero : [k] bool
-        Lines at frequency 0, which are real and have half the information.
+        Lines that are real, at frequency 0 or samples of time: they have half the information.
     """
     own = np.where(zero, weights * np.sqrt(0.5), weights)
     size = slopes.shape[1]
     triangle: Array = np.zeros((0, size + 1))
     for part in chunks(misfit.size, 2 * (size + 1)):
         whole = np.hstack([slopes[part], misfit[part, None]])
-        triangle = triangular(stacked(own[part, None] * whole), triangle)
+        lines: NDArray[Any] = own[part, None] * whole
+        triangle = triangular(stacked(lines) if np.iscomplexobj(lines) else lines, triangle)
     return ChannelFactor(triangle[:size, :size], triangle[:size, size], float(np.sum(triangle[size:, size] ** 2)))
 
 

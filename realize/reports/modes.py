@@ -65,7 +65,7 @@ def channels_table(details: Mapping[str, Any], *, page: Page = PLAIN) -> str:
             short(row["rms"]),
             short(row["weighted"]),
             short(row["worst"]),
-            prefixed(row["frequency"] / (2 * math.pi), "Hz", 4),
+            prefixed(row["time"], "s", 4) if "time" in row else prefixed(row["frequency"] / (2 * math.pi), "Hz", 4),
         ]
         for row in details["channels"][:MOST_ROWS]
     ]

@@ -9,6 +9,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from realize.fitting import Fit
+from realize.fitting.records import ChannelRow
 from realize.models import FrequencyResponse
 
 #: Lines of the confidence band that a receipt keeps; ``realize.fitting.Fit`` has all of them.
@@ -37,6 +38,40 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
     """
     return {
         "lines": int(w.size),
+        **found_details(found, chosen),
+        "channels": [_channel(row) | {"frequency": row.frequency} for row in found.channels],
+        "outliers": [
+            {
+                "frequency": row.frequency,
+                "output": row.output,
+                "input": row.input,
+                "size": row.size,
+                "weight": row.weight,
+            }
+            for row in found.outliers[:MOST_OUTLIERS]
+        ],
+        "band": _band(found, w),
+        "dead_times": [
+            {"seconds": row.seconds, "deviation": row.deviation, "output": row.output, "input": row.input}
+            for row in found.dead_times
+        ],
+        "period": source.time.seconds if source.time.sampled else None,
+    }
+
+
+def sample_details(found: Fit, count: int, period: float | None, chosen: bool) -> dict[str, Any]:
+    """Return the details of the receipt of a fit to an impulse response of so many samples."""
+    return {
+        "samples": count,
+        **found_details(found, chosen),
+        "channels": [_channel(row) | {"time": row.frequency} for row in found.channels],
+        "period": period,
+    }
+
+
+def found_details(found: Fit, chosen: bool) -> dict[str, Any]:
+    """Return what fits of all kinds of data tell."""
+    return {
         "noise": {"basis": found.noise.basis, "level": found.noise.level},
         "candidates": [
             {
@@ -72,35 +107,12 @@ def fit_details(found: Fit, source: FrequencyResponse, w: NDArray[np.float64], c
             for row in found.pole_table
         ],
         "bars": _bars(found, chosen),
-        "channels": [
-            {
-                "output": row.output,
-                "input": row.input,
-                "rms": row.rms,
-                "weighted": row.weighted,
-                "worst": row.worst,
-                "frequency": row.frequency,
-            }
-            for row in found.channels
-        ],
-        "outliers": [
-            {
-                "frequency": row.frequency,
-                "output": row.output,
-                "input": row.input,
-                "size": row.size,
-                "weight": row.weight,
-            }
-            for row in found.outliers[:MOST_OUTLIERS]
-        ],
         "gain": {"value": _listed(found.gain), "deviation": _listed(found.gain_deviation)},
-        "band": _band(found, w),
-        "dead_times": [
-            {"seconds": row.seconds, "deviation": row.deviation, "output": row.output, "input": row.input}
-            for row in found.dead_times
-        ],
-        "period": source.time.seconds if source.time.sampled else None,
     }
+
+
+def _channel(row: ChannelRow) -> dict[str, Any]:
+    return {"output": row.output, "input": row.input, "rms": row.rms, "weighted": row.weighted, "worst": row.worst}
 
 
 def _bars(found: Fit, chosen: bool) -> dict[str, Any] | None:

@@ -13,6 +13,7 @@ from realize.errors import InputError, Refused, UsageError
 from realize.models import ImpulseResponse, Model, PoleResidue, TimeBase, mark
 from realize.schema import Claim, judge
 from realize.steps.conversion import Conversion
+from realize.steps.fit_record import sample_details
 from realize.steps.measured import agree, names_of
 from realize.steps.ordinary import states_of
 from realize.steps.receipts import finish
@@ -69,24 +70,11 @@ def fit_impulse(
         *found.cautions,
         f"The model is fitted to samples from 0 to {span:.6g} s: what rings for longer is not seen.",
     ]
+    details = sample_details(
+        found, int(source.samples.shape[0]), source.period if base.sampled else None, chosen=not isinstance(order, int)
+    )
     if len(runs) > 1:
-        details: dict[str, Any] = {"runs": [mark(run).digest for run in runs]}
-    else:
-        details = {}
-    details |= {
-        "samples": int(source.samples.shape[0]),
-        "noise": {"basis": found.noise.basis, "level": found.noise.level},
-        "candidates": [
-            {"order": c.order, "rms": c.rms, "weighted": c.weighted, "criterion": c.criterion, "kept": c.kept}
-            for c in found.candidates
-        ],
-        "poles": [[pole.real, pole.imag, 1] for pole in found.poles.tolist()],
-        "modes": [
-            {"frequency": row.frequency, "damping": row.damping, "dominance": row.dominance, "pair": row.pair}
-            for row in found.pole_table
-        ],
-        "period": source.period if base.sampled else None,
-    }
+        details["runs"] = [mark(run).digest for run in runs]
     with asking("fit", source, {}, second_opinion) as opinion:
         return finish(
             "fit",

@@ -158,3 +158,26 @@ def test_words() -> None:
         fit_samples([1.0, 0.5, 0.3], 1.0, method="vector-fitting")
     with pytest.raises(UsageError, match="does not exist"):
         fit_samples([1.0, 0.5, 0.3], 1.0, method="guess")
+
+
+@pytest.mark.parametrize("shape", [(2, 2), (3, 2)])
+@pytest.mark.parametrize("true", [1, 2])
+def test_exact_samples_get_the_ranks_of_their_residues(shape: tuple[int, int], true: int) -> None:
+    _, h = modal(10, shape, 1200, true, 5)
+    fit = fit_samples(h, 1.0)
+    assert [row.rank for row in fit.pole_table] == [true] * 10
+    assert fit.worst.value < 1e-13
+    assert np.all(np.linalg.svd(fit.residues, compute_uv=False)[:, true:] < 1e-14 * np.max(np.abs(fit.residues)))
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_noise_does_not_raise_ranks(seed: int) -> None:
+    _, h = modal(10, (2, 2), 1000, 1, seed)
+    noise = 0.01 * float(np.sqrt(np.mean(h[1:] ** 2))) * np.random.default_rng(seed + 50).normal(size=h.shape)
+    fit = fit_samples(h + noise, 1.0, order=20)
+    assert [row.rank for row in fit.pole_table] == [1] * 10
+    # the refitted model is what the misfit is of
+    model = np.einsum("kn,npm->kpm", powers(fit.poles, 0, 999), fit.residues).real
+    assert np.max(np.abs(model - (h + noise)[1:] - fit.misfit[1:])) < 1e-12 * np.max(np.abs(h))
+    # rank 1: 20 poles' coordinates, and 6 numbers for each pair
+    assert fit.bars is not None and fit.bars.freedom == 4 * 999 - 80
