@@ -316,6 +316,8 @@ def balancing_scale(pattern: Array) -> Array:
             if not (row > 0 and column > 0):
                 # what stood there has left the range of doubles meanwhile
                 continue
+            if not math.isfinite(row + column):
+                return np.ones(n)
             # row / f and column * f meet at f = sqrt(row / column); logarithms first: the quotient may overflow
             step = round((math.log2(row) - math.log2(column)) / 2)
             if step:

@@ -182,6 +182,15 @@ def _weak_modes(model: Model, record: dict[str, Any], view: View) -> Iterator[Fi
         inner = np.abs(np.sum(left.conj() * right, axis=0))
         reach = np.linalg.norm(left.conj().T @ scaled.B, axis=1) / np.linalg.norm(scaled.B)
         sight = np.linalg.norm(scaled.C @ right, axis=0) / np.linalg.norm(scaled.C)
+        # which side is to blame is a matter of the states' own units: scaled ones share the weakness
+        reached, seen = (
+            np.linalg.norm(vectors.conj().T @ matrix, axis=1)
+            / (np.linalg.norm(vectors, axis=0) * np.linalg.norm(matrix))
+            for vectors, matrix in (
+                (left * np.exp2(-scaled.states)[:, None], model.B),
+                (right.conj() * np.exp2(scaled.states)[:, None], model.C.T),
+            )
+        )
         width = np.abs(1 - np.abs(poles) ** 2) if model.time.sampled else 2 * np.abs(poles.real)
         unit = float(np.ldexp(1.0, scaled.time))
         s = poles * unit if view.period is None else np.log(poles + 0j) / view.period
@@ -205,9 +214,9 @@ def _weak_modes(model: Model, record: dict[str, Any], view: View) -> Iterator[Fi
     texts = []
     for k in weak[:NAMED]:
         side = "from inputs to outputs"
-        if reach[k] < 1e-3 * sight[k]:
+        if reached[k] < 1e-3 * seen[k]:
             side = "the inputs hardly reach it"
-        elif sight[k] < 1e-3 * reach[k]:
+        elif seen[k] < 1e-3 * reached[k]:
             side = "the outputs hardly see it"
         texts.append(f"{frequency_text(float(w[k]))} at {share[k]:.1e} ({side})")
     more = f", and {len(weak) - NAMED} more" if len(weak) > NAMED else ""
