@@ -20,7 +20,8 @@ from realize.forms import (
     modal_states,
     observable_companion,
 )
-from realize.forms.cascade import BeyondDoubles, Section, monic
+from realize.forms.cascade import Section, monic
+from realize.forms.tuned_coupling import BeyondDoubles
 from realize.models import (
     MatrixFraction,
     Model,

@@ -7,7 +7,7 @@ from fractions import Fraction
 import numpy as np
 from numpy.typing import NDArray
 
-from realize.forms.cascade import to_double
+from realize.forms.tuned_coupling import to_double
 
 Array = NDArray[np.float64]
 
