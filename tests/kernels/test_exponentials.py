@@ -55,7 +55,8 @@ def test_coefficients_are_recovered() -> None:
     h = samples()
     found, misfit = ex.coefficients_of(POLES, h, np.ones_like(h))
     assert np.max(np.abs(found - COEFFICIENTS)) < 1e-12
-    assert np.max(np.abs(misfit)) < 1e-14
+    # some roundings of the largest sample, which sums of four terms and a least squares solution leave
+    assert np.max(np.abs(misfit)) < 64 * np.finfo(float).eps * np.max(np.abs(h))
     none, rest = ex.coefficients_of(np.zeros(0, complex), h, np.ones_like(h))
     assert none.shape == (0, 1) and np.array_equal(rest, -h)
 
