@@ -27,6 +27,10 @@ from realize.models import (
     ZeroPoleGain,
 )
 
+# worker processes inherit this: two of them with two threads of linear algebra each wait for each other on two cores
+for _name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+    os.environ.setdefault(_name, "1")
+
 Gaussian = tuple[Fraction, Fraction]
 ZERO: Gaussian = (Fraction(0), Fraction(0))
 ONE: Gaussian = (Fraction(1), Fraction(0))
