@@ -389,8 +389,6 @@ def dead_time_difference(source: Model, result: Model) -> float:
 
 def _small(pair: Pair, response_limit: float | None, peak_limit: float | None) -> list[Claim]:
     """Return response and peak error where the short way for small plants serves, nothing elsewhere."""
-    if pair.source.model.shape != (1, 1) or pair.source.period is not None or not pair.exact:
-        return []
     from realize.verification.small import small_claims
 
     return list(small_claims(pair, response_limit, peak_limit) or ())

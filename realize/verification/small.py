@@ -21,12 +21,12 @@ from flint import fmpq, fmpq_poly, fmpz_poly
 from numpy.typing import NDArray
 
 from realize.kernels.exact.numbers import binary_exponent, power_of_two
-from realize.kernels.exact.positivity import positive_whole
+from realize.kernels.exact.positivity import positive_whole, square_modulus
 from realize.schema import Claim, judge
 from realize.verification.bands import all_bands, finite_at_zero, thin_grid
 from realize.verification.glance import rounded, short
 from realize.verification.pair import Pair
-from realize.verification.proof import SMALLEST, shortened, square_root
+from realize.verification.proof import SMALLEST, STEPS, shortened, square_root
 from realize.verification.quick import against_largest
 from realize.verification.search import LIGHT, vertex
 
@@ -35,8 +35,8 @@ ComplexArray = NDArray[np.complex128]
 
 #: Poles of source and result together, at most.
 LARGEST = 16
-#: Factors by which the value found is raised until the inequality is proved; past them the general way does better.
-STEPS = (1 + 2.0**-9, 1.008, 1.02, 1.1)
+#: So many of the proof's factors are tried; past them the general way does better.
+_TRIED = 4
 #: Binary exponents of values and powers of x beyond which no doubles are used.
 _RANGE = 900
 #: Bits of the ends of a band, and of places where it is split: short numbers make short proofs.
@@ -126,8 +126,8 @@ class _Squares:
         self.unit = (binary_exponent(c[0]) - binary_exponent(c[-1])) // d1.degree()
         N1, D1 = _whole(n1, d1, self.unit)
         N2, D2 = _whole(n2, d2, self.unit)
-        self.M = _square(N2 * D1 - N1 * D2)
-        self.n1, self.d1, self.d2 = _square(N1), _square(D1), _square(D2)
+        self.M = square_modulus(N2 * D1 - N1 * D2)
+        self.n1, self.d1, self.d2 = square_modulus(N1), square_modulus(D1), square_modulus(D2)
         self.relative, self.absolute = self.n1 * self.d2, self.d1 * self.d2
 
     def units(self, w: float) -> float:
@@ -202,14 +202,6 @@ def _whole(n: fmpq_poly, d: fmpq_poly, unit: int) -> tuple[fmpz_poly, fmpz_poly]
     return parts[0], parts[1]
 
 
-def _square(p: fmpz_poly) -> fmpz_poly:
-    """Return |p(jw)|^2 in x = w^2: even part squared plus x times odd part squared."""
-    c = p.coeffs()
-    c[2::4], c[3::4] = [-value for value in c[2::4]], [-value for value in c[3::4]]
-    even, odd = fmpz_poly(c[0::2]), fmpz_poly(c[1::2])
-    return even * even + (odd * odd).left_shift(1)
-
-
 def _summits(v: Array, values: Array) -> list[list[float]]:
     """Return places near the highest maxima of each row of samples: vertices of parabolas through three of them."""
     floor = _HIGH * values.max(axis=1, keepdims=True)
@@ -259,7 +251,7 @@ def _bound(
     places = [v * v for v in near if v > 0]
     places += [x for x in dips if all(abs(x - other) > APART * x for other in places)]
     squares = sorted({fmpq(*rounded(x, _SPLIT_BITS).as_integer_ratio()) for x in places})
-    for factor in STEPS:
+    for factor in STEPS[:_TRIED]:
         bound = math.nextafter(start * factor, math.inf)
         p, q = shortened(bound, up=False).as_integer_ratio()
         if positive_whole(above * (p * p) - below * (q * q), low, high, squares):

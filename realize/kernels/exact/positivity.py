@@ -10,9 +10,11 @@ from __future__ import annotations
 from collections.abc import Sequence
 from itertools import pairwise
 from math import gcd
-from typing import Literal, NamedTuple
+from typing import Literal, NamedTuple, TypeVar
 
 from flint import fmpq, fmpq_poly, fmpz, fmpz_poly
+
+Poly = TypeVar("Poly", fmpq_poly, fmpz_poly)
 
 #: Intervals looked at before giving up: a proof needs a few for each nearby root.
 MOST_INTERVALS = 4000
@@ -190,9 +192,10 @@ def _exponent(value: fmpq) -> int:
     return int(value.p).bit_length() - int(value.q).bit_length()
 
 
-def square_modulus(p: fmpq_poly) -> fmpq_poly:
-    """Return |p(jw)|^2 as a polynomial in x = w^2: even part squared plus x times odd part squared."""
+def square_modulus(p: Poly) -> Poly:
+    """Return |p(jw)|^2 as a polynomial in x = w^2 of the same kind: even part squared plus x times odd part squared."""
+    kind = type(p)
     c = p.coeffs()
-    even = fmpq_poly([value if k % 2 == 0 else -value for k, value in enumerate(c[0::2])])
-    odd = fmpq_poly([value if k % 2 == 0 else -value for k, value in enumerate(c[1::2])])
-    return even * even + fmpq_poly([0, 1]) * odd * odd
+    c[2::4], c[3::4] = [-value for value in c[2::4]], [-value for value in c[3::4]]
+    even, odd = kind(c[0::2]), kind(c[1::2])
+    return even * even + (odd * odd).left_shift(1)
