@@ -21,7 +21,7 @@ from realize.kernels.additions import addition_candidates, gains_of
 from realize.kernels.separable import Projected, joined, minimised, triangular
 from realize.kernels.structured_basis import Free, Known, StructuredBasis
 from realize.kernels.variable_projection import bounds, poles_of, sections_of
-from realize.kernels.vector_fitting import ordered_poles, relocated, stacked, weighted_cost
+from realize.kernels.vector_fitting import ordered_poles, relocated, relocating, stacked, weighted_cost
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -232,19 +232,15 @@ def structured_relocation(task: Task, poles: ComplexArray, iterations: int) -> t
     """
     beside = task.beside
     nothing = np.zeros(task.groups.shape[1])
-    best, lowest = poles, np.inf
-    size = weighted_cost(task.values, task.weights)
     direct = task.known.excess == 0
-    for _ in range(iterations):
-        moved = relocated(task.points, poles, task.values, task.weights, direct, np.inf, task.stable, beside)
-        cost = StructuredProjection(task, signed_sections(moved)[0], nothing).cost
-        if cost < lowest:
-            best, lowest = moved, cost
-        still = moved.size == poles.size and np.all(np.abs(moved - poles) <= 1e-6 * np.abs(moved.real))
-        poles = moved
-        if still or cost <= (4 * np.finfo(float).eps) ** 2 * size:
-            break
-    return best, lowest
+
+    def cost(moved: ComplexArray) -> float:
+        return StructuredProjection(task, signed_sections(moved)[0], nothing).cost
+
+    def move(old: ComplexArray) -> ComplexArray:
+        return relocated(task.points, old, task.values, task.weights, direct, np.inf, task.stable, beside)
+
+    return relocating(poles, move, cost, weighted_cost(task.values, task.weights), iterations)
 
 
 def structured_additions(task: Task, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:

@@ -15,6 +15,8 @@ Sources
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -287,11 +289,40 @@ def vector_fit(
 
     Parameters as in ``residues_of``; ``iterations`` is the largest number of relocations.
     """
+
+    def cost(moved: ComplexArray) -> float:
+        return weighted_cost(residues_of(points, moved, values, weights, direct, vanish)[2], weights)
+
+    def move(old: ComplexArray) -> ComplexArray:
+        return relocated(points, old, values, weights, direct, vanish)
+
+    return relocating(poles, move, cost, weighted_cost(values, weights), iterations)
+
+
+def relocating(
+    poles: ComplexArray,
+    move: Callable[[ComplexArray], ComplexArray],
+    cost_of: Callable[[ComplexArray], float],
+    size: float,
+    iterations: int,
+) -> tuple[ComplexArray, float]:
+    """Return the best poles met while moving them, and their cost; stops when they rest, or at a cost of rounding.
+
+    Parameters
+    ----------
+    poles : [n] complex
+    move : callable
+        Returns the next poles.
+    cost_of : callable
+    size : float
+        Cost of no model at all.
+    iterations : int
+        Largest number of moves.
+    """
     best, lowest = poles, np.inf
-    size = weighted_cost(values, weights)
     for _ in range(iterations):
-        moved = relocated(points, poles, values, weights, direct, vanish)
-        cost = weighted_cost(residues_of(points, moved, values, weights, direct, vanish)[2], weights)
+        moved = move(poles)
+        cost = cost_of(moved)
         if cost < lowest:
             best, lowest = moved, cost
         still = moved.size == poles.size and np.all(np.abs(moved - poles) <= 1e-6 * np.abs(moved.real))
