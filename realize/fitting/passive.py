@@ -33,6 +33,7 @@ from realize.fitting.records import Fit, PoleRow, Worst
 from realize.kernels.least_distance import shortest
 from realize.kernels.passive_frequencies import between, violation
 from realize.kernels.vector_fitting import residues_of
+from realize.models.checks import frozen
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -225,10 +226,10 @@ def _calmed(fit: Fit, w: Array) -> Fit:
     misfit[keep] += missed.reshape(values.shape)
     return replace(
         fit,
-        poles=_frozen(poles),
-        residues=_frozen(residues.reshape(-1, *shape) * unit),
-        direct=_frozen(direct.reshape(shape)),
-        misfit=_frozen(misfit),
+        poles=frozen(poles),
+        residues=frozen(residues.reshape(-1, *shape) * unit),
+        direct=frozen(direct.reshape(shape)),
+        misfit=frozen(misfit),
         pole_table=tuple(
             replace(row, frequency=float(near[row.index]), damping=float(ratio[row.index])) if loud[row.index] else row
             for row in fit.pole_table
@@ -417,9 +418,9 @@ def _changed(fit: Fit, network: Network, coefficients: Array, w: Array) -> Fit:
     per_second = float(np.ldexp(1.0, network.shift)) if network.period is None else 1.0
     return replace(
         fit,
-        residues=_frozen(full * scale * per_second),
-        direct=_frozen(constant * scale),
-        misfit=_frozen(misfit),
+        residues=frozen(full * scale * per_second),
+        direct=frozen(constant * scale),
+        misfit=frozen(misfit),
         **_figures(fit, misfit, w),
     )
 
@@ -460,9 +461,3 @@ def _report(
         float(np.linalg.norm(new)) / max(float(np.linalg.norm(old)), 1e-300),
         largest / gain,
     )
-
-
-def _frozen(array: NDArray) -> NDArray:
-    array = np.ascontiguousarray(array)
-    array.setflags(write=False)
-    return array

@@ -13,12 +13,14 @@ from realize.fitting.noise import noise_factor
 from realize.fitting.outliers import outlier_rows
 from realize.fitting.prepare import Prepared
 from realize.fitting.problem import Problem
-from realize.fitting.records import ChannelRow, Factored, Fit, Noise, Worst
+from realize.fitting.records import Factored, Fit, Noise
 from realize.fitting.registry import Outcome
 from realize.fitting.remarks import remarks
 from realize.fitting.restored import chain_in_units, factors_in_units, in_z, values_of
+from realize.fitting.sizes import Sizes, channel_rows, sizes_of, spread_fields
 from realize.fitting.solution import Estimate, solved, unknowns_of
 from realize.fitting.spread import deviations
+from realize.models.checks import frozen
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -69,56 +71,39 @@ def finish(w: Array, H: ComplexArray, data: Prepared, outcome: Outcome, method: 
     chain = None if solution.factors is None else chain_in_units(problem, solution.factors.chain, scale, lift)
     if not all(np.all(np.isfinite(a)) for a in (out_residues, out_direct, out_poles)):
         raise Refused("a residue lies beyond the range of double precision; use other units of frequency or response")
-    top = np.max(lift)
-    common = _ldexp(np.ones((1, lift.size), complex), np.maximum(lift - top, -500)).real
-    size = float(np.sqrt(np.sum(np.abs(lifted * common) ** 2)))
-    rms = float(np.sqrt(np.sum(np.abs(missed * common) ** 2))) / size if size > 0 else 0.0
-    peak = np.max(np.abs(lifted), axis=0)
-    relative = np.abs(missed) / np.where(peak > 0, peak, 1.0)
-    line, channel = np.unravel_index(int(np.argmax(relative)), relative.shape)
-    worst = Worst(float(relative[line, channel]), int(line), int(channel) // m, int(channel) % m, float(w[line]))
+    sizes = sizes_of(missed, lifted, lift, w, m)
     unknowns = unknowns_of(estimate, problem)
-    weighted, factor, noise = _noise(problem, estimate, unknowns, missed[used], basis, common, size)
+    weighted, factor, noise = _noise(problem, estimate, unknowns, missed[used], basis, sizes)
     units = Units(shift, lift, period)
-    table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(poles, contribution, peak))
+    table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(poles, contribution, sizes.peak))
     outliers, words = outlier_rows(outcome.sizes, used, w, m)
-    cautions = [*cautions, *words, *remarks(table, w, noise, weighted, worst)]
+    cautions = [*cautions, *words, *remarks(table, w, noise, weighted, sizes.worst)]
     spread = deviations(problem, estimate, units, bars, growth, used)
     weighting = np.full((lines, p * m), np.inf)
     with np.errstate(over="ignore", under="ignore"):
         weighting[used] = np.ldexp(factor / problem.weights, lift)
     return Fit(
-        poles=_frozen(out_poles),
-        residues=_frozen(out_residues),
-        direct=_frozen(out_direct),
+        poles=frozen(out_poles),
+        residues=frozen(out_residues),
+        direct=frozen(out_direct),
         order=int(out_poles.size),
         method=method,
-        misfit=_frozen(misfit),
-        rms=rms,
-        worst=worst,
+        misfit=frozen(misfit),
+        rms=sizes.rms,
+        worst=sizes.worst,
         weighted=weighted,
         noise=noise,
         candidates=candidates,
         pole_table=table,
         cautions=tuple(cautions),
-        powers=_frozen(powers),
-        factors=None if factors is None else Factored(factors[0], _frozen(factors[1].reshape(p, m)), chain),
+        powers=frozen(powers),
+        factors=None if factors is None else Factored(factors[0], frozen(factors[1].reshape(p, m)), chain),
         bars=bars,
-        channels=_channel_rows(problem, w, missed, lifted, used, factor, m),
+        channels=channel_rows(missed, lifted, missed[used] * problem.weights, factor, w, m),
         outliers=outliers,
-        response_deviation=_frozen(spread.response.reshape(H.shape)),
-        residue_deviation=_frozen(spread.residues.reshape(-1, p, m)),
-        direct_deviation=_frozen(spread.direct.reshape(p, m)),
-        gain=_frozen(spread.gain.reshape(p, m)),
-        gain_deviation=_frozen(spread.gain_deviation.reshape(p, m)),
-        deviation=_frozen(weighting.reshape(H.shape)),
+        **spread_fields(spread, H.shape),
+        deviation=frozen(weighting.reshape(H.shape)),
     )
-
-
-def _frozen(array: NDArray) -> NDArray:
-    array = np.ascontiguousarray(array)
-    array.setflags(write=False)
-    return array
 
 
 def _ldexp(values: ComplexArray, exponents: Any) -> ComplexArray:
@@ -130,7 +115,7 @@ def _ldexp(values: ComplexArray, exponents: Any) -> ComplexArray:
 
 
 def _noise(
-    problem: Problem, fitted: Estimate, unknowns: int, missed: ComplexArray, basis: str, common: Array, size: float
+    problem: Problem, fitted: Estimate, unknowns: int, missed: ComplexArray, basis: str, sizes: Sizes
 ) -> tuple[float, float, Noise]:
     """Return RMS of misfit over deviation, the deviations in units of 1/weights, and their size.
 
@@ -153,8 +138,8 @@ def _noise(
             factor *= np.sqrt(problem.numbers / free)
         # rounding is the least that any deviation can be
         factor = max(factor, np.sqrt(2 * problem.rounding(fitted.free_poles) / problem.numbers))
-    deviation = (factor * common / problem.weights)[:, alive]
-    level = float(np.sqrt(np.sum(deviation**2))) / size if size > 0 else 0.0
+    deviation = (factor * sizes.common / problem.weights)[:, alive]
+    level = float(np.sqrt(np.sum(deviation**2))) / sizes.size if sizes.size > 0 else 0.0
     return (rms / factor if factor > 0 else 0.0), float(factor), Noise(basis, level)
 
 
@@ -166,31 +151,3 @@ def _dominance(poles: ComplexArray, contribution: list[ComplexArray], peak: Arra
         size = np.where(np.isfinite(part), np.abs(part), 0.0)
         result[j] = np.max(np.max(size, axis=0) / np.where(peak > 0, peak, 1.0))
     return result
-
-
-def _channel_rows(
-    problem: Problem,
-    w: Array,
-    missed: ComplexArray,
-    lifted: ComplexArray,
-    used: NDArray[np.bool_],
-    factor: float,
-    inputs: int,
-) -> tuple[ChannelRow, ...]:
-    rows = []
-    for c in range(missed.shape[1]):
-        size, peak = float(np.linalg.norm(lifted[:, c])), float(np.max(np.abs(lifted[:, c])))
-        worst = int(np.argmax(np.abs(missed[:, c])))
-        alive = size > 0 and factor > 0
-        scaled = np.linalg.norm(missed[used, c] * problem.weights[:, c]) / np.sqrt(problem.points.size)
-        rows.append(
-            ChannelRow(
-                output=c // inputs,
-                input=c % inputs,
-                rms=float(np.linalg.norm(missed[:, c])) / size if size > 0 else 0.0,
-                weighted=float(scaled / factor) if alive else 0.0,
-                worst=float(np.abs(missed[worst, c])) / peak if peak > 0 else 0.0,
-                frequency=float(w[worst]),
-            )
-        )
-    return tuple(rows)

@@ -9,13 +9,15 @@ from numpy.typing import NDArray
 
 from realize.errors import Refused
 from realize.fitting.modes import SampleUnits, mode_table
-from realize.fitting.records import Bars, Candidate, ChannelRow, Fit, Noise, Worst
+from realize.fitting.records import Bars, Candidate, Fit, Noise
 from realize.fitting.remarks import POOR
 from realize.fitting.sample_problem import SampleProblem
+from realize.fitting.sizes import Sizes, channel_rows, sizes_of, spread_fields
 from realize.fitting.solution import Estimate, solved, unknowns_of
 from realize.fitting.spread import Spread, residue_deviations, sized
 from realize.kernels.exponentials import powers
 from realize.kernels.information import length
+from realize.models.checks import frozen
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -96,25 +98,20 @@ def record_of(
         out_direct = np.ldexp(constant, lift).reshape(p, m)
     if not all(np.all(np.isfinite(a)) for a in (residues, out_direct, out)):
         raise Refused("a pole or residue lies beyond the range of double precision; use other units")
-    common = np.ldexp(1.0, np.maximum(lift - np.max(lift), -500))
-    size = float(np.sqrt(np.sum((scaled * common) ** 2)))
-    rms = float(np.sqrt(np.sum((missed * common) ** 2))) / size if size > 0 else 0.0
-    peak = np.max(np.abs(scaled), axis=0)
-    relative = np.abs(missed) / np.where(peak > 0, peak, 1.0)
-    line, channel = np.unravel_index(int(np.argmax(relative)), relative.shape)
-    worst = Worst(float(relative[line, channel]), int(line), int(channel) // m, int(channel) % m, float(line * period))
-    weighted, factor, noise = _noise(problem, estimate, fitted, common, size)
+    places = np.asarray(np.arange(missed.shape[0]) * period, dtype=float)
+    sizes = sizes_of(missed, scaled, lift, places, m)
+    weighted, factor, noise = _noise(problem, estimate, fitted, sizes)
     units = SampleUnits(0, lift, period)
-    table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(estimate, problem, peak))
-    if weighted > POOR and noise.level > 0 and worst.value > 1e-9:
+    table, bars, growth = mode_table(problem, estimate, (p, m), units, _dominance(estimate, problem, sizes.peak))
+    if weighted > POOR and noise.level > 0 and sizes.worst.value > 1e-9:
         source = "given" if noise.basis == "given" else "estimated"
         cautions.append(
             f"the misfit is {weighted:.3g} times the {source} noise: the data contain more than a model of this order, "
             "or their errors are not independent from sample to sample"
         )
-    if poles.size == 0 and rms > NOTHING:
+    if poles.size == 0 and sizes.rms > NOTHING:
         cautions.append("nothing stands out of the noise of the samples: the model has no poles, and says nothing")
-    if size == 0:
+    if sizes.size == 0:
         cautions.append("all samples are zero: the model is zero")
     start = given.start if problem.known or not problem.samples.size else problem.weights[0]
     spread = _deviations(given, problem, estimate, constant, start, units, bars, growth)
@@ -122,35 +119,25 @@ def record_of(
     with np.errstate(over="ignore", under="ignore"):
         deviation = np.ldexp(weighting, lift).reshape(given.samples.shape)
     return Fit(
-        poles=_frozen(out),
-        residues=_frozen(residues),
-        direct=_frozen(out_direct),
+        poles=frozen(out),
+        residues=frozen(residues),
+        direct=frozen(out_direct),
         order=int(out.size),
         method=method,
-        misfit=_frozen(misfit),
-        rms=rms,
-        worst=worst,
+        misfit=frozen(misfit),
+        rms=sizes.rms,
+        worst=sizes.worst,
         weighted=weighted,
         noise=noise,
         candidates=candidates,
         pole_table=table,
         cautions=tuple(cautions),
-        powers=_frozen(np.ones(out.size, dtype=np.int64)),
+        powers=frozen(np.ones(out.size, dtype=np.int64)),
         bars=bars,
-        channels=_channel_rows(given, problem, missed, fitted, factor),
-        response_deviation=_frozen(spread.response.reshape(given.samples.shape)),
-        residue_deviation=_frozen(spread.residues.reshape(-1, p, m)),
-        direct_deviation=_frozen(spread.direct.reshape(p, m)),
-        gain=_frozen(spread.gain.reshape(p, m)),
-        gain_deviation=_frozen(spread.gain_deviation.reshape(p, m)),
-        deviation=_frozen(deviation),
+        channels=channel_rows(missed, scaled, fitted * problem.weights, factor, places, m),
+        **spread_fields(spread, given.samples.shape),
+        deviation=frozen(deviation),
     )
-
-
-def _frozen(array: NDArray) -> NDArray:
-    array = np.ascontiguousarray(array)
-    array.setflags(write=False)
-    return array
 
 
 def _stands_out(start: Array, problem: SampleProblem, missed: Array) -> bool:
@@ -166,9 +153,7 @@ def _stands_out(start: Array, problem: SampleProblem, missed: Array) -> bool:
     return bool(gain > np.sum(alive) * np.log(max(problem.numbers, 2)))
 
 
-def _noise(
-    problem: SampleProblem, estimate: Estimate, missed: Array, common: Array, size: float
-) -> tuple[float, float, Noise]:
+def _noise(problem: SampleProblem, estimate: Estimate, missed: Array, sizes: Sizes) -> tuple[float, float, Noise]:
     """Return RMS of misfit over deviation, the deviations in units of 1/weights, and their size."""
     basis = "given" if problem.known else "estimated"
     alive = np.any(problem.flat != 0, axis=0)
@@ -184,8 +169,8 @@ def _noise(
         # rounding is the least that any deviation can be
         least = max(16 * problem.floor, 2 * problem.rounding(estimate.poles))
         factor = max(factor, float(np.sqrt(least / problem.numbers)))
-    deviation = (factor * common / problem.weights)[:, alive]
-    level = float(np.sqrt(np.sum(deviation**2))) / size if size > 0 else 0.0
+    deviation = (factor * sizes.common / problem.weights)[:, alive]
+    level = float(np.sqrt(np.sum(deviation**2))) / sizes.size if sizes.size > 0 else 0.0
     return (rms / factor if factor > 0 else 0.0), factor, Noise(basis, level)
 
 
@@ -263,26 +248,3 @@ def _steady_gain(estimate: Estimate, sampled: bool) -> tuple[Array, Array]:
             row[at + first[paired] + 1] = -2.0 * part[first[paired]].imag
         deviation[c] = length((row @ covariance.channel_root(int(c)))[None])[0]
     return gain, deviation
-
-
-def _channel_rows(
-    given: Given, problem: SampleProblem, missed: Array, fitted: Array, factor: float
-) -> tuple[ChannelRow, ...]:
-    inputs = given.samples.shape[2]
-    rows = []
-    for c in range(missed.shape[1]):
-        size, peak = float(np.linalg.norm(given.scaled[:, c])), float(np.max(np.abs(given.scaled[:, c])))
-        worst = int(np.argmax(np.abs(missed[:, c])))
-        alive = size > 0 and factor > 0 and fitted.size > 0
-        scaled = np.linalg.norm(fitted[:, c] * problem.weights[:, c]) / np.sqrt(max(fitted.shape[0], 1))
-        rows.append(
-            ChannelRow(
-                output=c // inputs,
-                input=c % inputs,
-                rms=float(np.linalg.norm(missed[:, c])) / size if size > 0 else 0.0,
-                weighted=float(scaled / factor) if alive else 0.0,
-                worst=float(np.abs(missed[worst, c])) / peak if peak > 0 else 0.0,
-                frequency=worst * given.period,
-            )
-        )
-    return tuple(rows)

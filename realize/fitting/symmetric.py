@@ -10,6 +10,7 @@ from numpy.typing import NDArray
 
 from realize.fitting.records import Factored, Fit, Worst
 from realize.fitting.structure import Structure
+from realize.models.checks import frozen
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complex128]
@@ -93,12 +94,12 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
         chain = factors.chain
         if chain is not None:
             chain = replace(chain, residues=chain.residues[:, place.ravel()], direct=chain.direct[place.ravel()])
-        gain = _frozen(factors.gain[:, 0][place])
+        gain = frozen(factors.gain[:, 0][place])
         factors = Factored(tuple(factors.zeros[k] for k in place.ravel()), gain, chain)
 
     def square(values: NDArray[Any]) -> NDArray[Any]:
         """Return [..][channels of the triangle][1] as [..][ports][ports]."""
-        return values if values.size == 0 else _frozen(values[..., 0][..., place])
+        return values if values.size == 0 else frozen(values[..., 0][..., place])
 
     channels = tuple(
         replace(fit.channels[place[i, j]], output=i, input=j)
@@ -127,17 +128,11 @@ def _spread_out(fit: Fit, misfit: ComplexArray, H: ComplexArray, w: Array, place
         # both of a pair together have the deviation of their mean
         deviation=square(fit.deviation) * np.where(np.eye(place.shape[0], dtype=bool), 1.0, np.sqrt(2.0)),
         gain_deviation=square(fit.gain_deviation),
-        residues=_frozen(fit.residues[:, :, 0][:, place]),
-        direct=_frozen(fit.direct[:, 0][place]),
-        misfit=_frozen(misfit),
+        residues=frozen(fit.residues[:, :, 0][:, place]),
+        direct=frozen(fit.direct[:, 0][place]),
+        misfit=frozen(misfit),
         rms=rms,
         worst=Worst(float(relative[line, i, j]), line, i, j, float(w[line])),
         factors=factors,
-        dead_time=None if fit.dead_time is None else _frozen(fit.dead_time[:, 0][place]),
+        dead_time=None if fit.dead_time is None else frozen(fit.dead_time[:, 0][place]),
     )
-
-
-def _frozen(array: NDArray[Any]) -> NDArray[Any]:
-    array = np.ascontiguousarray(array)
-    array.setflags(write=False)
-    return array
