@@ -8,7 +8,7 @@ import numpy as np
 
 from realize.errors import Refused
 from realize.forms.inversion import Verdict
-from realize.forms.second_order import NoStructure, second_order_parts, states_of_pencil
+from realize.forms.second_order import NoStructure, SecondOrderParts, second_order_parts, states_of_pencil
 from realize.models import Model, PoleResidue, SecondOrder, Signal, StateSpace
 
 if TYPE_CHECKING:
@@ -76,16 +76,7 @@ def second_order_from_states(model: Model, task: Task) -> SecondOrder:
         ) from None
     labels = [model.states[k].name or f"state {k}" for k in parts.positions]
     task.details["positions"] = labels
-    return SecondOrder(
-        mass=parts.mass,
-        damping=parts.damping,
-        stiffness=parts.stiffness,
-        input=parts.input,
-        position_output=parts.outputs[0],
-        velocity_output=parts.outputs[1],
-        direct=parts.direct,
-        **task.model.common(),
-    )
+    return _model_of(parts, task)
 
 
 def second_order_from_residues(model: Model, task: Task) -> SecondOrder:
@@ -116,6 +107,10 @@ def second_order_from_residues(model: Model, task: Task) -> SecondOrder:
             f"{n} coordinates stand for {distinct} pairs of poles: a pair whose mode shape is not real, or whose "
             "residue has a rank above one, takes a coordinate for each."
         )
+    return _model_of(parts, task)
+
+
+def _model_of(parts: SecondOrderParts, task: Task) -> SecondOrder:
     return SecondOrder(
         mass=parts.mass,
         damping=parts.damping,

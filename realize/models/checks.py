@@ -97,6 +97,16 @@ def array(
     return frozen(values)
 
 
+def step_of_time(value: Any, sampling: float | None) -> float:
+    """Return the step of samples, s: a positive number, the sampling period itself where there is one."""
+    period = float(array([value], "period", 1)[0])
+    if not period > 0:
+        raise InputError(f"{period}", "a number of seconds greater than zero", field="period")
+    if sampling is not None and period != sampling:
+        raise InputError(f"{period} s", f"the sampling period, {sampling} s", field="period")
+    return period
+
+
 Channels = tuple[tuple[NDArray[Any], ...], ...]
 
 

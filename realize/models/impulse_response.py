@@ -27,15 +27,10 @@ class ImpulseResponse(Model):
     samples: Any
 
     def _normalise(self) -> None:
-        period = checks.array([self.period], "period", 1)[0]
-        if not period > 0:
-            raise InputError(f"{period}", "a number of seconds greater than zero", field="period")
-        if self.time.sampled and float(period) != self.time.seconds:
-            raise InputError(f"{period} s", f"the sampling period, {self.time.seconds} s", field="period")
         samples = checks.array(self.samples, "samples", 3)
         if 0 in samples.shape:
             raise InputError("no samples", "at least one, of at least one input and output", field="samples")
-        self._put("period", float(period))
+        self._put("period", checks.step_of_time(self.period, self.time.seconds if self.time.sampled else None))
         self._put("samples", samples)
 
     @property

@@ -31,12 +31,7 @@ class TimeRecord(Model):
     output: Any
 
     def _normalise(self) -> None:
-        period = checks.array([self.period], "period", 1)[0]
-        if not period > 0:
-            raise InputError(f"{period}", "a number of seconds greater than zero", field="period")
-        if self.time.sampled and float(period) != self.time.seconds:
-            raise InputError(f"{period} s", f"the sampling period, {self.time.seconds} s", field="period")
-        self._put("period", float(period))
+        self._put("period", checks.step_of_time(self.period, self.time.seconds if self.time.sampled else None))
         for name in ("input", "output"):
             values = checks.array(getattr(self, name), name, 2)
             if 0 in values.shape:
